@@ -1,0 +1,88 @@
+"""The arm as data: joints, limits, links, tools, payloads. Everything SI, arrays read-only.
+
+The kinematic model is a tree of fixed transforms and joint axes. DH rows and other files are ways to load it;
+structure is recognised from the axes, never from a name.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Kind = Literal["revolute", "prismatic"]
+
+
+@dataclass(frozen=True)
+class Joint:
+    """One joint and its data-sheet limits (rad or m, s). A joint without position limits has (-inf, inf)."""
+
+    name: str
+    kind: Kind
+    position: tuple[float, float]
+    velocity: float
+    acceleration: float
+    jerk: float
+    torque: float | None = None  # peak, N m or N
+    continuous_torque: float | None = None
+
+
+@dataclass(frozen=True)
+class Link:
+    """The body moved by one joint, in that joint's moving frame, and the drive that moves it."""
+
+    mass: float  # kg
+    com: Array  # (3,) m
+    inertia: Array  # (3, 3) kg m^2 about the centre of mass
+    viscous: float = 0.0  # joint side, N m s/rad or N s/m
+    coulomb: tuple[float, float] = (0.0, 0.0)  # joint side: (friction when moving positive, when negative), both >= 0
+    gear_ratio: float = 1.0
+    rotor_inertia: float = 0.0  # motor side, kg m^2
+    encoder_counts: int | None = None
+
+
+@dataclass(frozen=True)
+class Tool:
+    """A named tool: where its tool centre point lies and what it weighs. `com` and `inertia` in the tool frame."""
+
+    name: str
+    flange_from_tool: Array  # (4, 4)
+    mass: float = 0.0
+    com: Array = field(default_factory=lambda: np.zeros(3))
+    inertia: Array = field(default_factory=lambda: np.zeros((3, 3)))
+    speed: float | None = None  # cap on the tool speed while it is carried, m/s
+    acceleration: float | None = None  # m/s^2
+
+
+@dataclass(frozen=True)
+class Payload:
+    """A named payload held by the tool; `com` and `inertia` (about the com) in the tool frame."""
+
+    name: str
+    mass: float
+    com: Array
+    inertia: Array
+
+
+@dataclass(frozen=True)
+class Limits:
+    """Named two-sided rows over joint coordinates: low <= matrix @ x <= high for position and its derivatives.
+
+    The plain per-joint limits are identity rows named like the joints. A row that has no limit of some kind
+    carries -inf and inf there. All arrays (R, 2) hold low, high.
+    """
+
+    names: tuple[str, ...]
+    matrix: Array  # (R, n)
+    position: Array  # (R, 2)
+    velocity: Array
+    acceleration: Array
+    jerk: Array
+    torque: Array
+
+
+PoseNames = Mapping[str, Array]  # named joint vectors of an arm, such as "home"
