@@ -1,0 +1,1 @@
+"""Task to Cartesian path to joint path q(s)."""
