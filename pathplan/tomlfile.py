@@ -22,7 +22,7 @@ import hashlib
 import math
 import re
 import tomllib
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -33,11 +33,24 @@ from numpy.typing import NDArray
 from pathplan.errors import InputError
 from pathplan.units import DIMENSIONS, parse_quantity, toml_text
 
-__all__ = ["MAX_BYTES", "Problems", "Table", "read_toml", "rotation_from_quaternion", "rotation_from_rpy"]
+__all__ = [
+    "FARTHEST",
+    "MAX_BYTES",
+    "Problems",
+    "Table",
+    "listed",
+    "nearest",
+    "read_toml",
+    "rotation_from_quaternion",
+    "rotation_from_rpy",
+]
 
 Array = NDArray[np.float64]
 MAX_BYTES = 20_000_000
 """A larger file is refused: long point lists belong into CSV."""
+
+FARTHEST = 1000.0
+"""Coordinates beyond this (m) are refused: they are a slip, and their squares spoil what comes after."""
 
 QUATERNION_TOLERANCE = 1e-6
 _REQUIRED: Any = object()
@@ -93,7 +106,7 @@ class Problems:
     """Input errors gathered while reading goes on, to be raised together."""
 
     def __init__(self) -> None:
-        self.found: list[str] = []
+        self.found: list[InputError] = []
 
     @contextmanager
     def gather(self) -> Iterator[None]:
@@ -101,18 +114,17 @@ class Problems:
         try:
             yield
         except InputError as error:
-            self.found.extend(error.problems)
-
-    def add(self, where: str, complaint: str) -> None:
-        self.found.append(f"{where}: {complaint}")
+            self.found.append(error)
 
     def check(self) -> None:
         """Raise what was gathered as one `InputError`: the first problem in its line, all in `problems`."""
-        if not self.found:
-            return
-        more = len(self.found) - 1
-        tail = f" (and {more} more problem{'s' if more > 1 else ''})" if more else ""
-        raise InputError(self.found[0] + tail, problems=self.found)
+        if len(self.found) == 1:
+            raise self.found[0]
+        if self.found:
+            lines = [line for error in self.found for line in error.problems]
+            more = len(lines) - 1
+            tail = f" (and {more} more problem{'s' if more > 1 else ''})"
+            raise InputError(lines[0] + tail, problems=lines, data=self.found[0].data)
 
 
 class Table:
@@ -178,8 +190,11 @@ class Table:
             return value
         result = parse_quantity(value, dimension, self.at(key))
         if (positive and result <= 0.0) or (not_negative and result < 0.0):
+            known = DIMENSIONS[dimension]
             bound = "above zero" if positive else "of zero or more"
-            raise self.error(key, f"expected {_phrase(dimension)} {bound}, got {toml_text(value)}")
+            raise self.error(
+                key, f'expected {known.phrase} {bound} such as "{known.example}", got {toml_text(value)}'
+            )
         return result
 
     def text(self, key: str, default: Any = _REQUIRED) -> Any:
@@ -208,7 +223,7 @@ class Table:
         value = self.take(key, default)
         if key in self.data and value not in options:
             raise self.error(
-                key, f"expected {_listed(options)}, got {toml_text(value)}{_near(value, options)}"
+                key, f"expected {listed(options)}, got {toml_text(value)}{nearest(value, options)}"
             )
         return value
 
@@ -219,12 +234,23 @@ class Table:
             return value
         return self._vector(key, value, [dimension] * size)
 
-    def mixed_vector(self, key: str, dimensions: Sequence[str], default: Any = _REQUIRED) -> Any:
-        """A list of quantities, one for each of `dimensions` (a joint vector): like `vector`."""
+    def mixed_vector(
+        self, key: str, dimensions: Sequence[str], default: Any = _REQUIRED, *, noun: str = "quantities"
+    ) -> Any:
+        """A list of quantities, one for each of `dimensions` (`noun` "joint positions"): like `vector`."""
         value = self.take(key, default)
         if key not in self.data:
             return value
-        return self._vector(key, value, dimensions)
+        return self._vector(key, value, dimensions, noun)
+
+    def position(self, key: str, default: Any = _REQUIRED) -> Any:
+        """A list of three lengths within `FARTHEST`: (3,) array, m, read-only; or `default`."""
+        value = self.vector(key, 3, "length", default)
+        if key in self.data and np.max(np.abs(value)) > FARTHEST:
+            raise self.error(
+                key, f"expected coordinates within {FARTHEST:g} m, got {toml_text(self.data[key])}"
+            )
+        return value
 
     def table(self, key: str, default: Any = _REQUIRED) -> Any:
         """The table under a key as a `Table`, or `default`."""
@@ -276,7 +302,7 @@ class Table:
 
         `position=False` lets `xyz` be left out (zero).
         """
-        xyz = self.vector("xyz", 3, "length", *(() if position else (np.zeros(3),)))
+        xyz = self.position("xyz", *(() if position else (np.zeros(3),)))
         rotation = self.rotation()
         pose = np.eye(4)
         pose[:3, 3] = xyz
@@ -290,18 +316,18 @@ class Table:
         known = list(self._known)
         for key in self.data:
             if key not in self._known:
-                near = _near(key, known) or (f", expected {_listed(known)}" if known else "")
-                unknown.add(self.at(key), f"unknown key{near}")
+                near = nearest(key, known) or (f", expected {listed(known)}" if known else "")
+                unknown.found.append(self.error(key, f"unknown key{near}"))
         if self.problems is not None:
             self.problems.found.extend(unknown.found)
         else:
             unknown.check()
 
-    def _vector(self, key: str, value: Any, dimensions: Sequence[str]) -> Array:
+    def _vector(self, key: str, value: Any, dimensions: Sequence[str], noun: str = "quantities") -> Array:
         size = len(dimensions)
         if not isinstance(value, list) or len(value) != size:
             got = f"{len(value)} of them" if isinstance(value, list) else toml_text(value)
-            raise self.error(key, f"expected a list of {size} quantities, got {got}")
+            raise self.error(key, f"expected a list of {size} {noun}, got {got}")
         where = self.at(key)
         entries = enumerate(zip(value, dimensions, strict=True), start=1)
         return _read_only(
@@ -347,15 +373,13 @@ def _printable(text: str) -> str:
     return "".join(char if char.isprintable() else "?" for char in text)
 
 
-def _phrase(dimension: str) -> str:
-    return DIMENSIONS[dimension].expected
-
-
-def _listed(words: Sequence[str]) -> str:
+def listed(words: Sequence[str]) -> str:
+    """'"up", "down" or "left"', for messages."""
     quoted = [f'"{word}"' for word in words]
     return quoted[0] if len(quoted) == 1 else ", ".join(quoted[:-1]) + " or " + quoted[-1]
 
 
-def _near(word: Any, words: Sequence[str]) -> str:
-    near = difflib.get_close_matches(word, words, n=1) if isinstance(word, str) else []
+def nearest(word: Any, words: Iterable[str]) -> str:
+    """', did you mean "..."?' with the nearest of the words, "" where none is near: to end a message with."""
+    near = difflib.get_close_matches(word, list(words), n=1) if isinstance(word, str) else []
     return f', did you mean "{near[0]}"?' if near else ""

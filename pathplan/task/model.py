@@ -19,17 +19,22 @@ Motion = Literal["joint", "line", "arc", "wait"]
 
 @dataclass(frozen=True)
 class Frame:
-    """A workpiece frame: fixed in its parent ("base" is the root), or carried by a joint of the arm's tree."""
+    """A workpiece frame: fixed in its parent ("base" is the root), or carried by a joint of the arm."""
 
     name: str
     parent: str
     parent_from_frame: Array  # (4, 4)
-    joint: str | None = None  # carried by this joint (a turntable): the parent is then that joint's moving frame
+    joint: str | None = (
+        None  # carried by this joint (a turntable): the parent is then that joint's moving frame
+    )
 
 
 @dataclass(frozen=True)
 class Target:
-    """Where a step ends: a joint vector, or a tool pose in a frame (offsets already applied)."""
+    """Where a step ends: a joint vector, or a tool pose in a frame (offsets already applied).
+
+    A line or arc to a joint vector has both: the joints, and the pose (in the base frame) that they mean.
+    """
 
     joints: Array | None = None  # (n,)
     frame: str = "base"
@@ -38,7 +43,7 @@ class Target:
 
 @dataclass(frozen=True)
 class Blend:
-    """The size of a corner region as asked: metres, radians, or a share (0..0.5) of the neighbouring steps."""
+    """The size of a corner region as asked: metres, radians, or a share (0..0.5) of the steps beside it."""
 
     kind: Literal["length", "angle", "share"]
     value: float
@@ -58,13 +63,17 @@ class Step:
     centre: Array | None = None  # (3,) in the base frame
     axis: Array | None = None  # (3,) unit, in the base frame
     angle: float | None = None  # rad, signed, about axis
-    along: bool = False  # centre-and-angle arc: the tool turns with the arc (True) or keeps its orientation (False)
+    along: bool = (
+        False  # centre-and-angle arc: the tool turns with the arc (True) or keeps its orientation (False)
+    )
     blend: Blend | None = None  # corner at the end of this step; None: stop point
-    speed: float | None = None  # tool-speed cap, m/s
-    acceleration: float | None = None  # tool-acceleration cap, m/s^2
+    speed: float | None = None  # tool-speed cap, m/s: the lower of the step's own and the task's
+    acceleration: float | None = None  # tool-acceleration cap, m/s^2, likewise
     wait: float = 0.0  # s, motion == "wait"
     mark: str | None = None  # named instant: when this step ends
-    configuration: Mapping[str, str] = field(default_factory=dict)  # {"elbow": "up"}: asked at this step's target
+    configuration: Mapping[str, str] = field(
+        default_factory=dict
+    )  # {"elbow": "up"}: asked at this step's target
     tool: str = ""  # carried during this step
     payload: str | None = None
 
@@ -80,7 +89,7 @@ class Task:
     steps: tuple[Step, ...]
     cycle: float  # s
     frames: Mapping[str, Frame] = field(default_factory=dict)
-    speed: float | None = None  # task-wide tool-speed cap, m/s
+    speed: float | None = None  # task-wide tool-speed cap, m/s; the file's own is in every step's cap already
     pace: float = 1.0  # 0 < pace <= 1
     sources: Mapping[str, str] = field(default_factory=dict)  # file name -> sha256 of what was read
 

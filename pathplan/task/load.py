@@ -1,0 +1,124 @@
+"""From a task file to a `Task`: everything resolved, checked and in SI."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm import Arm, load_arm
+from pathplan.task.model import Motion, Task
+from pathplan.task.places import Places, check_positions, joint_vector, read_places
+from pathplan.task.steps import read_caps, read_steps, step_to_start
+from pathplan.tomlfile import Problems, Table, nearest, read_toml
+from pathplan.units import toml_text
+
+__all__ = ["CYCLES", "load_task"]
+
+Array = NDArray[np.float64]
+CYCLES = (50e-6, 1.0)
+"""Shortest and longest cycle that a controller is taken to have, s."""
+
+
+def load_task(file: str | Path, *, arm: Arm | None = None) -> Task:
+    """Load a task file and the arm file it names.
+
+    Args:
+        file: a TOML file; its `arm` is a path relative to the file's own folder.
+        arm: taken in place of the arm file (the key `arm` is then not read from disk).
+
+    Returns:
+        The task in SI: offsets applied, via points, centres and axes in the base frame, the arm carrying the
+        task's tool and payload. `return` has become a last step. `sources` holds the SHA-256 of what was read.
+
+    Raises:
+        InputError: the file or a key is not what it must be; one line names file, key and what was expected.
+            `problems` lists all that was found.
+    """
+    file = Path(file)
+    data, digest = read_toml(file)
+    problems = Problems()
+    root = Table(data, file.name, problems=problems)
+    title = root.text("title", file.stem)
+    arm = _equipped(root, _arm(root, file) if arm is None else arm)
+    cycle = _cycle(root)
+    caps = read_caps(root)
+    motion_back = _return(root)
+    places = read_places(root, arm, problems)
+    with problems.gather():
+        start = _start(root, arm, places)
+    root.has("step")
+    root.finish()
+    problems.check()  # a step that names a spoilt pose would only repeat the complaint
+    steps = read_steps(root, places, caps, problems, returns=motion_back is not None)
+    problems.check()
+    if motion_back is not None:
+        steps += (step_to_start(motion_back, len(steps), root.file, start, places, caps),)
+    return Task(
+        title=title,
+        file=file,
+        arm=arm,
+        start=start,
+        steps=steps,
+        cycle=cycle,
+        frames=places.frames,
+        speed=caps.speed,
+        sources={**arm.sources, file.name: digest},
+    )
+
+
+def _arm(root: Table, file: Path) -> Arm:
+    name = root.text("arm")
+    path = file.parent / name
+    if path.is_dir():
+        raise root.error("arm", f"{toml_text(name)} is a directory, expected an arm file")
+    if not path.exists():
+        raise root.error("arm", f"no such file {toml_text(name)}")
+    return load_arm(path)
+
+
+def _equipped(root: Table, arm: Arm) -> Arm:
+    """The arm with the tool and payload that the task names."""
+    root.has("arm")
+    chosen: dict[str, str] = {}
+    for key, known in (("tool", arm.tools), ("payload", arm.payloads)):
+        name = root.text(key, None)
+        if name is None:
+            continue
+        if name not in known:
+            raise root.error(key, f"arm {arm.name} has no {key} {toml_text(name)}{nearest(name, known)}")
+        chosen[key] = name
+    return arm.equipped(tool=chosen.get("tool"), payload=chosen.get("payload")) if chosen else arm
+
+
+def _cycle(root: Table) -> float:
+    cycle: float = root.quantity("cycle", "time")
+    if not CYCLES[0] <= cycle <= CYCLES[1]:
+        raise root.error("cycle", f"expected a time from 50 us to 1 s, got {toml_text(root.data['cycle'])}")
+    return cycle
+
+
+def _start(root: Table, arm: Arm, places: Places) -> Array:
+    """The joint vector the task starts from: a list, or the name of an arm position or joint pose."""
+    value: Any = root.take("start")
+    if not isinstance(value, str):
+        return joint_vector(root, "start", arm)
+    target = places.target(root, "start")
+    if target.joints is None:
+        raise root.error(
+            "start", f"{toml_text(value)} is a tool pose, expected joint positions or their name"
+        )
+    check_positions(target.joints, arm, root.at("start"))
+    return target.joints
+
+
+def _return(root: Table) -> Motion | None:
+    """The motion back to the start, None if the task ends where its last step does."""
+    value = root.take("return", False)
+    if isinstance(value, bool):
+        return "joint" if value else None
+    if value in ("joint", "line"):
+        return "joint" if value == "joint" else "line"
+    raise root.error("return", f'expected true, false, "joint" or "line", got {toml_text(value)}')
