@@ -31,7 +31,7 @@ def load_task(file: str | Path, *, arm: Arm | None = None) -> Task:
 
     Returns:
         The task in SI: offsets applied, via points, centres and axes in the base frame, the arm carrying the
-        task's tool and payload. `return` has become a last step. `sources` holds the SHA-256 of what was read.
+        task's tool and payload. `return` has become a last step. `sources` has the SHA-256 of what was read.
 
     Raises:
         InputError: the file or a key is not what it must be; one line names file, key and what was expected.
