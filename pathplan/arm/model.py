@@ -39,7 +39,10 @@ class Link:
     com: Array  # (3,) m
     inertia: Array  # (3, 3) kg m^2 about the centre of mass
     viscous: float = 0.0  # joint side, N m s/rad or N s/m
-    coulomb: tuple[float, float] = (0.0, 0.0)  # joint side: (friction when moving positive, when negative), both >= 0
+    coulomb: tuple[float, float] = (
+        0.0,
+        0.0,
+    )  # joint side: (friction when moving positive, when negative), both >= 0
     gear_ratio: float = 1.0
     rotor_inertia: float = 0.0  # motor side, kg m^2
     encoder_counts: int | None = None

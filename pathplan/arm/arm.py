@@ -1,0 +1,284 @@
+"""The arm: what can move, how far and how fast, and where its tool then is."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from pathlib import Path
+from types import MappingProxyType
+from typing import TYPE_CHECKING, Any, Literal
+
+import numpy as np
+
+from pathplan.arm import kinematics
+from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool
+from pathplan.errors import InputError
+
+if TYPE_CHECKING:
+    from pathplan.arm.inverse import Branches
+    from pathplan.arm.structure import ClosedForm
+
+__all__ = ["Arm", "Structure", "joint_rows"]
+
+Structure = Literal["gantry", "scara", "spherical wrist", "general"]
+BARE = Tool("none", np.eye(4))
+GRAVITY = (0.0, 0.0, -9.80665)  # m/s^2, standard gravity (ISO 80000-3)
+# Built from libraries, cheap to build again, and not picklable.
+CACHED_LIBRARY_OBJECTS = ("_rigid_body", "_ets")
+
+
+def read_only(value: Any) -> Array:
+    """A float copy that can't be written to."""
+    array = np.array(value, dtype=float)
+    array.flags.writeable = False
+    return array
+
+
+def joint_rows(joints: Sequence[Joint]) -> Limits:
+    """The plain per-joint limits as identity rows."""
+
+    def symmetric(values: Sequence[float | None]) -> Array:
+        high = np.array([np.inf if value is None else value for value in values])
+        return read_only(np.column_stack([-high, high]))
+
+    return Limits(
+        names=tuple(joint.name for joint in joints),
+        matrix=read_only(np.eye(len(joints))),
+        position=read_only([joint.position for joint in joints]),
+        velocity=symmetric([joint.velocity for joint in joints]),
+        acceleration=symmetric([joint.acceleration for joint in joints]),
+        jerk=symmetric([joint.jerk for joint in joints]),
+        torque=symmetric([joint.torque for joint in joints]),
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class Arm:
+    """An arm with the tool and payload it carries now. Everything SI; arrays are read-only; the base frame is the cell's.
+
+    `parent_from_joint` (n, 4, 4) are the fixed transforms from the parent's moving frame (or the base) to each joint's
+    frame at q = 0; a joint moves about or along `axes[i]` ((n, 3), unit, in its own frame). `tip` is the joint that
+    carries the mechanical interface at `tip_from_flange` (4, 4). `links` None means that the arm has no dynamics.
+    Raises InputError where the parts don't fit together.
+    """
+
+    name: str
+    joints: tuple[Joint, ...]
+    parent_from_joint: Array
+    axes: Array
+    tip_from_flange: Array = field(default_factory=lambda: np.eye(4))
+    title: str = ""
+    file: Path | None = None
+    sources: Mapping[str, str] = field(default_factory=dict)  # file name -> sha256
+    parents: tuple[int, ...] = ()  # -1 is the base; empty: one chain
+    tip: int = -1
+    links: tuple[Link, ...] | None = None
+    gravity: Array = field(default_factory=lambda: np.array(GRAVITY))
+    tools: Mapping[str, Tool] = field(default_factory=dict)
+    payloads: Mapping[str, Payload] = field(default_factory=dict)
+    tool: Tool = BARE
+    payload: Payload | None = None
+    positions: Mapping[str, Array] = field(default_factory=dict)  # "home" is always there: zero if not given
+    limits: Limits = None  # type: ignore[assignment]  # default: identity rows of the joints
+
+    def __post_init__(self) -> None:
+        n = len(self.joints)
+        if n == 0:
+            raise InputError(f"{self.name}: an arm needs at least one joint")
+
+        def put(name: str, value: Any) -> None:
+            object.__setattr__(self, name, value)
+
+        put("joints", tuple(self.joints))
+        put("parents", tuple(self.parents) or tuple(range(-1, n - 1)))
+        put("tip", self.tip if self.tip >= 0 else n - 1)
+        shapes = {"parent_from_joint": (n, 4, 4), "axes": (n, 3), "tip_from_flange": (4, 4), "gravity": (3,)}
+        for name, shape in shapes.items():
+            put(name, read_only(getattr(self, name)))
+            if getattr(self, name).shape != shape:
+                raise InputError(
+                    f"{self.name}: {name}: expected shape {shape}, got {getattr(self, name).shape}"
+                )
+            if not np.isfinite(getattr(self, name)).all():
+                raise InputError(f"{self.name}: {name}: expected finite numbers")
+        if np.abs(np.linalg.norm(self.axes, axis=1) - 1.0).max() > 1e-9:
+            raise InputError(f"{self.name}: axes: expected unit vectors")
+        if len(self.parents) != n or any(not -1 <= parent < i for i, parent in enumerate(self.parents)):
+            raise InputError(f"{self.name}: parents: expected {n} indices, each of an earlier joint or -1")
+        if self.links is not None and len(self.links) != n:
+            raise InputError(f"{self.name}: links: expected {n}, got {len(self.links)}")
+        if len({joint.name for joint in self.joints}) != n:
+            raise InputError(f"{self.name}: joints: names must differ")
+        positions = {"home": np.zeros(n), **self.positions}
+        put("positions", MappingProxyType({key: read_only(value) for key, value in positions.items()}))
+        for key, value in self.positions.items():
+            if np.shape(value) != (n,):
+                raise InputError(
+                    f"{self.name}: positions.{key}: expected {n} joint values, got {np.size(value)}"
+                )
+        for name in ("tools", "payloads", "sources"):
+            put(name, MappingProxyType(dict(getattr(self, name))))
+        if self.limits is None:
+            put("limits", joint_rows(self.joints))
+
+    @classmethod
+    def from_axes(
+        cls,
+        name: str,
+        joints: Sequence[Joint],
+        origins: Any,
+        axes: Any,
+        base_from_flange: Any,
+        **rest: Any,
+    ) -> Arm:
+        """A single chain from points on the axes (n, 3) and axis directions (n, 3) in the base frame at q = 0.
+
+        `base_from_flange` (4, 4) is the mechanical interface at q = 0; `rest` are the other fields of `Arm`. Joint frames
+        are parallel to the base at q = 0.
+        """
+        from pathplan.arm.chain import chain_from_axes
+
+        parent_from_joint, unit_axes, tip_from_flange = chain_from_axes(origins, axes, base_from_flange)
+        return cls(name, tuple(joints), parent_from_joint, unit_axes, tip_from_flange, **rest)
+
+    @property
+    def n(self) -> int:
+        """Number of joints."""
+        return len(self.joints)
+
+    @property
+    def joint_names(self) -> tuple[str, ...]:
+        return tuple(joint.name for joint in self.joints)
+
+    def equipped(self, *, tool: Tool | str | None = None, payload: Payload | str | None = None) -> Arm:
+        """The same arm carrying another tool and payload. None: the bare mechanical interface, no payload.
+
+        Raises InputError, naming those there are, for a name that the arm does not know.
+        """
+        if isinstance(tool, str):
+            tool = self._known("tool", self.tools, tool)
+        if isinstance(payload, str):
+            payload = self._known("payload", self.payloads, payload)
+        return replace(self, tool=tool or BARE, payload=payload)
+
+    def _known(self, kind: str, things: Mapping[str, Any], name: str) -> Any:
+        if name not in things:
+            there = ", ".join(f'"{key}"' for key in things) or "none"
+            raise InputError(f'{self.name}: unknown {kind} "{name}", there is {there}')
+        return things[name]
+
+    def forward(self, q: Any) -> Array:
+        """Tool pose base_from_tool (..., 4, 4) of joint positions q (..., n) in rad and m."""
+        return kinematics.forward(self, q)
+
+    def jacobian(self, q: Any) -> Array:
+        """Jacobian (..., 6, n) at the tool centre point: rows linear x y z, angular x y z, in the base frame."""
+        return kinematics.jacobian(self, q)
+
+    def base_from_joint(self, name: str, q: Any) -> Array:
+        """(4, 4) moving frame of the named joint at one configuration q (n,)."""
+        if name not in self.joint_names:
+            raise InputError(f'{self.name}: unknown joint "{name}", there is {", ".join(self.joint_names)}')
+        return kinematics.joint_frame(self, self.joint_names.index(name), q)
+
+    def inverse(self, pose: Any) -> Array:
+        """Every joint vector (k, n) that puts the tool at `pose`, within the position limits, turn equivalents included.
+
+        `pose`: base_from_tool, a 4x4 rigid transform or a spatialmath SE3. Ordered by branch (see `inverse_batch`), then
+        by joint values. Every answer is verified through `forward` to 1e-9 m and 1e-9 rad; on an arm with fewer than six
+        axes the components it does not serve are judged against 0.001 deg. A joint without limits answers in (-pi, pi].
+        Raises InputError for what is no rigid transform, and UnreachableError, saying how far off the best answer is,
+        which component the arm does not serve, or which joint limit excludes every branch.
+        """
+        from pathplan.arm.inverse import inverse
+
+        return inverse(self, pose)
+
+    def inverse_batch(self, poses: Any) -> Branches:
+        """All branches for poses (N, 4, 4), position limits left aside: see `pathplan.arm.inverse.inverse_batch`."""
+        from pathplan.arm.inverse import inverse_batch
+
+        return inverse_batch(self, poses)
+
+    def torque(self, q: Any, qd: Any, qdd: Any) -> Array:
+        """Joint torques (N, n), N m or N, with gravity, friction, drives, the tool and the payload.
+
+        q, qd, qdd (N, n). Raises InputError if the arm file gives no link masses.
+        """
+        from pathplan.arm.dynamics import torque
+
+        return torque(self, q, qd, qdd)
+
+    def toolbox(self) -> Any:
+        """The same arm, tool included, as a new roboticstoolbox DHRobot, for notebooks. Slow to import (seconds)."""
+        from pathplan.arm.dynamics import toolbox
+
+        return toolbox(self)
+
+    @cached_property
+    def chain(self) -> kinematics.Chain:
+        """Constants of the kinematic walk, tool included."""
+        tip_from_tool = self.tip_from_flange @ self.tool.flange_from_tool
+        return kinematics.Chain.build(
+            self.joints, self.parents, self.parent_from_joint, self.axes, self.tip, tip_from_tool
+        )
+
+    @cached_property
+    def closed_form(self) -> ClosedForm | None:
+        """The closed-form inverse recognised from the axes, None for a general arm."""
+        from pathplan.arm.structure import recognise
+
+        return recognise(self)
+
+    @property
+    def structure(self) -> Structure:
+        """What the axes make of the arm, recognised from their geometry."""
+        return self.closed_form.structure if self.closed_form else "general"
+
+    @cached_property
+    def serves(self) -> frozenset[str]:
+        """Components of a pose change that the arm can follow in general position.
+
+        Names from "x", "y", "z", "rotation about x", "rotation about y", "rotation about z" (base frame); all six for an
+        arm with six or more independent axes.
+        """
+        from pathplan.arm.structure import served_components
+
+        return served_components(self)
+
+    @cached_property
+    def length(self) -> float:
+        """Characteristic length, m, always above 0: it makes angles and distances comparable.
+
+        Half of the largest span: of an arm with revolute joints before the last, half the length of the stretched-out
+        chain from the first joint to the mechanical interface, travels of prismatic joints included; of a gantry, half
+        the diagonal of its travel. 1 m where neither gives a length.
+        """
+        travel = np.array(
+            [
+                joint.position[1] - joint.position[0]
+                for joint in self.joints
+                if joint.kind == "prismatic" and np.isfinite(joint.position).all()
+            ]
+        )
+        if self.structure == "gantry":
+            span = float(np.sqrt(np.sum(travel**2)))
+        else:
+            fixed = [*self.parent_from_joint[1:, :3, 3], self.tip_from_flange[:3, 3]]
+            span = float(np.sum(np.linalg.norm(fixed, axis=1)) + np.sum(travel))
+        return span / 2.0 if span > 1e-6 else 1.0
+
+    def __getstate__(self) -> dict[str, Any]:
+        state = {key: value for key, value in self.__dict__.items() if key not in CACHED_LIBRARY_OBJECTS}
+        for name in ("tools", "payloads", "sources", "positions"):
+            state[name] = dict(state[name])
+        return state
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        for name, value in state.items():
+            mapping = name in ("tools", "payloads", "sources", "positions")
+            object.__setattr__(self, name, MappingProxyType(value) if mapping else value)
+
+    def __repr__(self) -> str:
+        return f"<Arm {self.name}: {self.n} joints, {self.structure}, tool {self.tool.name}>"

@@ -1,0 +1,278 @@
+"""Inverse kinematics: all branches of a batch of poses, and all answers of one pose within the position limits."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from itertools import product
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from pathplan.arm.closed_form import branch_labels, solve_closed_form
+from pathplan.arm.kinematics import forward
+from pathplan.arm.model import Array
+from pathplan.errors import InputError, UnreachableError
+
+if TYPE_CHECKING:
+    from pathplan.arm.arm import Arm
+
+__all__ = [
+    "ANGLE_TOLERANCE",
+    "POSITION_TOLERANCE",
+    "TILT_TOLERANCE",
+    "Branches",
+    "inverse",
+    "inverse_batch",
+    "rigid_pose",
+]
+
+POSITION_TOLERANCE = 1e-9  # m
+ANGLE_TOLERANCE = 1e-9  # rad
+TILT_TOLERANCE = np.deg2rad(
+    0.001
+)  # rad: of the components that an arm with fewer than six axes does not serve
+LIMIT_TOLERANCE = 1e-10  # rad or m: an answer this far beyond a position limit is the limit, rounded
+SAME = 1e-7  # rad or m: answers closer than this are one (where two branches meet they differ by sqrt(eps))
+CHUNK = 512  # poses solved at a time, so that the working arrays stay in cache
+
+
+@dataclass(frozen=True)
+class Branches:
+    """Every branch of a batch of N poses. The branch index follows a path continuously away from singularities."""
+
+    q: Array  # (N, B, n) rad and m, revolute joints in (-pi, pi]; the nearest answer where not valid
+    valid: Any  # (N, B) bool: the tool stands at the pose, position limits left aside
+    labels: tuple[
+        Mapping[str, str], ...
+    ]  # of length B: {"shoulder": "left", "elbow": "up", "wrist": "positive"}
+    position_error: Array  # (N, B) m, measured through the forward kinematics
+    angle_error: Array  # (N, B) rad
+
+
+def inverse_batch(arm: Arm, poses: Any) -> Branches:
+    """All branches for tool poses base_from_tool (N, 4, 4), rigid transforms; position limits are left aside.
+
+    Closed form for a gantry (one branch), a SCARA (2) and a spherical wrist (8); other arms by seeded numeric search,
+    one pose at a time, where the branch index has no meaning beyond one pose. What the labels mean ("up" is the side of
+    axis 1 that opposes gravity):
+    - shoulder left or right: facing from axis 1 to the wrist centre, the side on which axis 2 carries the arm; where
+      it is not set off, the side to which axis 2 points (a right-handed axis 2 that lowers the arm points left);
+    - elbow up or down: axis 3 above or below the line from axis 2 to the wrist centre;
+    - wrist positive or negative: sign of sin q5, q5 counted from the straight wrist nearest to its zero;
+    - SCARA, elbow left or right: facing from axis 1 to the last revolute axis.
+    Where a pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at 0. Raises InputError for a wrong shape.
+    """
+    poses = np.asarray(poses, dtype=float)
+    if poses.ndim != 3 or poses.shape[1:] != (4, 4):
+        raise InputError(f"expected poses of shape (N, 4, 4), got {poses.shape}")
+    form = arm.closed_form
+    if form is None:
+        from pathplan.arm.numeric import all_branches
+
+        q, found = all_branches(arm, poses)
+        labels: tuple[Mapping[str, str], ...] = tuple({} for _ in range(q.shape[1]))
+    else:
+        labels = branch_labels(form.structure)
+        q, found = np.empty((len(poses), len(labels), arm.n)), np.ones((len(poses), len(labels)), dtype=bool)
+        for start in range(0, len(poses), CHUNK):
+            part = slice(start, start + CHUNK)
+            rotation = np.ascontiguousarray(poses[part, :3, :3].transpose(1, 2, 0))
+            q[part] = solve_closed_form(form, rotation, poses[part, :3, 3].T).transpose(2, 1, 0)
+    position_error, angle_error = pose_errors(forward(arm, q), poses[:, None])
+    angle_tolerance = ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE
+    valid = found & (position_error <= POSITION_TOLERANCE) & (angle_error <= angle_tolerance)
+    return Branches(q, valid, labels, position_error, angle_error)
+
+
+def pose_errors(reached: Array, asked: Array) -> tuple[Array, Array]:
+    """Distance (m) and angle (rad) between poses (..., 4, 4)."""
+    apart = reached[..., :3, :] - asked[..., :3, :]
+    squares = apart * apart
+    distance = np.sqrt(squares[..., 3].sum(axis=-1))
+    # |R1 - R2| (Frobenius) = 2 sqrt 2 sin(angle / 2): as exact for small angles as the rotations are.
+    half = np.sqrt(squares[..., :3].sum(axis=(-2, -1))) / (2.0 * np.sqrt(2.0))
+    return distance, 2.0 * np.arcsin(np.minimum(half, 1.0))
+
+
+def rigid_pose(pose: Any) -> Array:
+    """A 4x4 rigid transform from an array or a spatialmath SE3, its rotation made exactly orthonormal.
+
+    Raises InputError for another shape, numbers that are not finite, or what is more than 1e-6 off a rigid transform.
+    """
+    matrix = np.array(getattr(pose, "A", pose), dtype=float)
+    if matrix.shape != (4, 4):
+        raise InputError(f"pose: expected a 4x4 rigid transform, got shape {matrix.shape}")
+    if not np.isfinite(matrix).all():
+        raise InputError("pose: expected finite numbers, got NaN or infinity")
+    if np.abs(matrix[3] - (0, 0, 0, 1)).max() > 1e-12:
+        raise InputError(f"pose: expected the last row 0 0 0 1, got {' '.join(f'{x:g}' for x in matrix[3])}")
+    left, size, right = np.linalg.svd(matrix[:3, :3])
+    if np.abs(size - 1.0).max() > 1e-6:
+        raise InputError(
+            "pose: expected a rotation, its columns are not unit length and square to each other"
+        )
+    if np.linalg.det(left @ right) < 0:
+        raise InputError("pose: expected a right-handed rotation, got a mirror image")
+    matrix[:3, :3] = left @ right
+    return matrix
+
+
+def inverse(arm: Arm, pose: Any) -> Array:
+    """See `Arm.inverse`."""
+    matrix = rigid_pose(pose)
+    branches = inverse_batch(arm, matrix[None])
+    if not branches.valid.any():
+        raise _out_of_reach(arm, matrix, branches)
+    answers: list[Array] = []
+    for q, valid in zip(branches.q[0], branches.valid[0], strict=True):
+        if valid:
+            answers += sorted(_turns(arm, q), key=tuple)
+    distinct: list[Array] = []
+    for q in _verified(arm, answers, matrix):
+        if all(np.abs(q - other).max() > SAME for other in distinct):
+            distinct.append(q)
+    if not distinct:
+        raise _excluded(arm, matrix, branches)
+    return np.array(distinct)
+
+
+def _turns(arm: Arm, q: Array) -> list[Array]:
+    """The turn equivalents of one answer that lie within the position limits."""
+    choices = []
+    for value, joint in zip(q, arm.joints, strict=True):
+        low, high = joint.position
+        if joint.kind == "prismatic" or (low == -np.inf and high == np.inf):
+            turns = [value]
+        elif np.isfinite([low, high]).all():
+            first = np.ceil((low - LIMIT_TOLERANCE - value) / (2 * np.pi))
+            last = np.floor((high + LIMIT_TOLERANCE - value) / (2 * np.pi))
+            turns = [value + 2 * np.pi * k for k in np.arange(first, last + 1)]
+        else:  # limited on one side only: the turn nearest to the limit, or the answer itself
+            k = (
+                np.ceil((low - value) / (2 * np.pi))
+                if low > value
+                else np.floor((high - value) / (2 * np.pi))
+            )
+            turns = [value if low <= value <= high else value + 2 * np.pi * k]
+        choices.append(
+            [
+                float(np.clip(t, low, high))
+                for t in turns
+                if low - LIMIT_TOLERANCE <= t <= high + LIMIT_TOLERANCE
+            ]
+        )
+    rows = arm.limits
+    answers = [np.array(choice) for choice in product(*choices)]
+    return [
+        answer
+        for answer in answers
+        if (rows.matrix @ answer >= rows.position[:, 0] - LIMIT_TOLERANCE).all()
+        and (rows.matrix @ answer <= rows.position[:, 1] + LIMIT_TOLERANCE).all()
+    ]
+
+
+def _verified(arm: Arm, answers: list[Array], pose: Array) -> list[Array]:
+    """The answers that put the tool at the pose."""
+    if not answers:
+        return []
+    distance, angle = pose_errors(forward(arm, np.array(answers)), pose)
+    good = (distance <= POSITION_TOLERANCE) & (angle <= (ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE))
+    return [q for q, is_good in zip(answers, good, strict=True) if is_good]
+
+
+def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
+    """Why no branch stands at a pose: a component that the arm does not serve, or how far off the best one is."""
+    best = int(np.argmin(np.hypot(branches.position_error[0], arm.length * branches.angle_error[0])))
+    q = branches.q[0, best]
+    data = {
+        "pose": pose,
+        "best": q,
+        "configuration": dict(branches.labels[best]),
+        "position_error": float(branches.position_error[0, best]),
+        "angle_error": float(branches.angle_error[0, best]),
+    }
+    tilt = _tilt(arm, q, pose) if arm.n < 6 and data["angle_error"] > TILT_TOLERANCE else ""
+    if tilt:
+        return UnreachableError(
+            f"{arm.name}: the pose is tilted {tilt}; {arm.name} serves {_served(arm)}; tolerance 0.001 deg",
+            data=data,
+        )
+    off = []
+    if data["position_error"] > POSITION_TOLERANCE:
+        off.append(f"{data['position_error'] * 1e3:.4g} mm")
+    if data["angle_error"] > (ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE):
+        off.append(f"{np.rad2deg(data['angle_error']):.4g} deg")
+    return UnreachableError(
+        f"{arm.name}: the pose is out of reach, the best answer is off by {' and '.join(off)}", data=data
+    )
+
+
+def _tilt(arm: Arm, q: Array, pose: Array) -> str:
+    """The part of the angle error about base axes that the arm does not serve, in words."""
+    relative = pose[:3, :3] @ forward(arm, q)[:3, :3].T
+    skew = np.array(
+        [relative[2, 1] - relative[1, 2], relative[0, 2] - relative[2, 0], relative[1, 0] - relative[0, 1]]
+    )
+    sine, cosine = np.linalg.norm(skew) / 2.0, (np.trace(relative) - 1.0) / 2.0
+    if sine > 1e-9:
+        vector = skew / (2.0 * sine) * np.arctan2(sine, cosine)
+    else:  # a half turn: its axis is a column of (R + 1) / 2
+        columns = (relative + np.eye(3)) / 2.0
+        vector = np.pi * columns[:, np.argmax(np.diag(columns))]
+        vector /= max(np.linalg.norm(vector) / np.pi, 1e-12)
+    parts = [
+        (abs(value), f"{np.rad2deg(abs(value)):.4g} deg about {name}")
+        for name, value in zip("xyz", vector, strict=True)
+        if f"rotation about {name}" not in arm.serves and abs(value) > TILT_TOLERANCE / 2.0
+    ]
+    return " and ".join(text for _, text in sorted(parts, reverse=True))
+
+
+def _served(arm: Arm) -> str:
+    """The served components in words."""
+    from pathplan.arm.structure import COMPONENTS
+
+    names = [name for name in COMPONENTS if name in arm.serves]
+    if not names:
+        return "no component by itself"
+    return names[0] if len(names) == 1 else ", ".join(names[:-1]) + " and " + names[-1]
+
+
+def _excluded(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
+    """Which position limit excludes each branch; the nearest miss is named first and in `data`."""
+    misses = []
+    for q, valid, label in zip(branches.q[0], branches.valid[0], branches.labels, strict=True):
+        if valid:
+            misses.append(
+                _worst_miss(arm, q) + (", ".join(f"{key} {word}" for key, word in label.items()), q)
+            )
+    misses.sort(key=lambda miss: miss[0])
+    beyond, joint, text, _, q = misses[0]
+    if len(misses) == 1:
+        message = f"{arm.name}: the pose needs {text}"
+    else:
+        listed = "; ".join(f"{words}: {miss}" if words else miss for _, _, miss, words, _ in misses)
+        message = f"{arm.name}: every branch that reaches the pose breaks a position limit: {listed}"
+    return UnreachableError(message, data={"pose": pose, "best": q, "joint": joint, "beyond": beyond})
+
+
+def _worst_miss(arm: Arm, q: Array) -> tuple[float, str, str]:
+    """(how far beyond, joint or limit name, words) of the limit that an answer breaks most, nearest turn taken."""
+    worst = (-1.0, "", "")
+    nearest = q.copy()
+    for i, joint in enumerate(arm.joints):
+        low, high = joint.position
+        values = [q[i]] if joint.kind == "prismatic" else [q[i] - 2 * np.pi, q[i], q[i] + 2 * np.pi]
+        nearest[i] = min(values, key=lambda value: max(low - value, value - high))
+    values = arm.limits.matrix @ nearest
+    for name, row, value, (low, high) in zip(
+        arm.limits.names, arm.limits.matrix, values, arm.limits.position, strict=True
+    ):
+        beyond = float(max(low - value, value - high))
+        if beyond > worst[0]:
+            slides = all(joint.kind == "prismatic" for joint, c in zip(arm.joints, row, strict=True) if c)
+            unit, size = ("mm", 1e3) if slides else ("deg", np.rad2deg(1.0))
+            limit = low if value < low else high
+            worst = (beyond, name, f"{name} at {value * size:.4g} {unit}, limit {limit * size:.4g} {unit}")
+    return worst
