@@ -29,6 +29,8 @@ class Joint:
     jerk: float
     torque: float | None = None  # peak, N m or N
     continuous_torque: float | None = None
+    gear_ratio: float = 1.0  # motor turns per joint turn; rad of the motor per m of a prismatic joint
+    encoder_counts: int | None = None  # counts per turn of the motor
 
 
 @dataclass(frozen=True)
@@ -43,9 +45,7 @@ class Link:
         0.0,
         0.0,
     )  # joint side: (friction when moving positive, when negative), both >= 0
-    gear_ratio: float = 1.0
-    rotor_inertia: float = 0.0  # motor side, kg m^2
-    encoder_counts: int | None = None
+    rotor_inertia: float = 0.0  # motor side, kg m^2; the joint feels gear_ratio^2 times as much
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,441 @@
+"""Arm files: TOML in mm, deg and seconds, checked key by key.
+
+    name = "sorter4"
+    title = "SCARA over the sorting belt"
+    dh = "modified"                    # or "standard"; left out where the joints give origin and axis
+    gravity = [0, 0, -9.80665]         # m/s^2 in the base frame (this is the default)
+    [base]                             # where the arm stands in the cell's base frame; default: there
+    xyz = [0, 0, 300]
+    [mechanical_interface]             # from the last DH frame; with axes: in the arm's own base at zero
+    xyz = [0, 0, -20]
+    [[joint]]
+    name = "arm"
+    kind = "revolute"                  # or "prismatic"
+    dh = { a = 0, alpha = 0, d = 0, theta = 0 }      # or: origin = [0, 0, 0], axis = [0, 0, 1]
+    position = [-130, 130]             # or "unlimited"
+    velocity = 400                     # deg/s or mm/s, symmetric; then deg/s^2, deg/s^3
+    acceleration = 1500
+    jerk = 15000
+    # where known: torque, continuous_torque, gear_ratio, encoder_counts, and for all joints or none: mass (of the
+    # link that the joint moves), com, inertia, viscous_friction, coulomb_friction, rotor_inertia
+    [tools.cup]                        # xyz and rpy or quat of the tool centre point in the mechanical interface
+    xyz = [0, 0, 60]
+    mass = "0.4 kg"                    # com and inertia in the tool frame; speed and acceleration: caps of the tool
+    [payloads.tile]
+    mass = "1.2 kg"
+    [positions]
+    home = [0, 0, 0, 0]                # joint values in deg or mm; home is required
+    [[limit]]                          # a coupled drive: limits on a sum of joint positions
+    name = "screw nut"
+    row = [0, 0, 18, 1]                # deg (or mm) of the row per deg or mm of each joint
+    velocity = 2000
+
+Link data (com, inertia about the com) are stated in the DH frame of the row or, with axes, in a frame at the joint's
+origin that is parallel to the arm's own base at zero.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from pathplan.arm.arm import GRAVITY, Arm, joint_rows, read_only
+from pathplan.arm.chain import DHRow, chain_from_axes, chain_from_dh
+from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool
+from pathplan.errors import InputError
+from pathplan.tomlfile import FARTHEST, Problems, Table, read_toml
+from pathplan.units import DIMENSIONS, format_quantity, joint_dimension, parse_quantity, toml_text
+
+__all__ = ["load_arm"]
+
+MOST_JOINTS = 32
+SMALLEST, LARGEST = 1e-6, 1e9  # SI: limits above zero beyond these are slips, and would spoil what comes after
+HEAVIEST = 1e6  # kg, and kg m^2
+LINK_KEYS = ("mass", "com", "inertia", "viscous_friction", "coulomb_friction", "rotor_inertia")
+
+
+def load_arm(file: str | Path) -> Arm:
+    """Read an arm file (TOML, see the head of this module); the arm carries no tool and no payload.
+
+    Raises:
+        InputError: missing file, directory, not TOML, an unknown or missing key, a wrong unit, limits with low
+            above high or not above zero, a quaternion not of length 1, a negative mass, an inertia that no body
+            has. Several problems are gathered: the first is the message, all are in `problems`.
+    """
+    path = Path(file)
+    data, digest = read_toml(path)
+    problems = Problems()
+    top = Table(data, path.name, problems=problems)
+    with problems.gather():
+        name, title = top.text("name"), top.text("title", "")
+    with problems.gather():
+        gravity = top.vector("gravity", 3, "linear_acceleration", np.array(GRAVITY))
+        if np.abs(gravity).max() > 1e3:
+            raise top.error("gravity", f"expected at most 1000 m/s^2, got {toml_text(data['gravity'])}")
+    with problems.gather():
+        base, interface = _pose(top, "base"), _pose(top, "mechanical_interface")
+    with problems.gather():
+        convention = top.choice("dh", ("standard", "modified"), None)
+    rows: list[_JointRow] = []
+    with problems.gather():
+        for table in _joint_tables(top):
+            with problems.gather():
+                rows.append(_joint_row(table, has_dh=top.has("dh")))
+    tools: dict[str, Tool] = {}
+    payloads: dict[str, Payload] = {}
+    with problems.gather():
+        for key, table in top.named_tables("tools").items():
+            with problems.gather():
+                tools[key] = _tool(key, table)
+    with problems.gather():
+        for key, table in top.named_tables("payloads").items():
+            with problems.gather():
+                payloads[key] = _payload(key, table)
+    problems.check()
+
+    joints = tuple(row.joint for row in rows)
+    with problems.gather():
+        _check_names(top, joints)
+    with problems.gather():
+        links = _links(top, rows)
+    with problems.gather():
+        positions = _positions(top, joints, problems)
+    with problems.gather():
+        limits = _limits(top, joints, problems)
+    top.finish()
+    problems.check()
+
+    if convention is None:
+        origins, axes = [row.origin for row in rows], [row.axis for row in rows]
+        fixed, unit_axes, tip_from_flange = chain_from_axes(origins, axes, interface)
+    else:
+        dh_rows = [row.dh for row in rows if row.dh is not None]
+        fixed, unit_axes, tip_from_last, joint_from_link = chain_from_dh(dh_rows, convention)
+        tip_from_flange = tip_from_last @ interface
+        if links is not None:
+            links = [_moved(link, frame) for link, frame in zip(links, joint_from_link, strict=True)]
+    fixed[0] = base @ fixed[0]
+    return Arm(
+        name,
+        joints,
+        fixed,
+        unit_axes,
+        tip_from_flange,
+        title=title,
+        file=path,
+        sources={path.name: digest},
+        links=None if links is None else tuple(links),
+        gravity=gravity,
+        tools=tools,
+        payloads=payloads,
+        positions=positions,
+        limits=limits,
+    )
+
+
+@dataclass(frozen=True)
+class _JointRow:
+    """One [[joint]] table as read."""
+
+    table: Table
+    joint: Joint
+    dh: DHRow | None
+    origin: Array
+    axis: Array
+    link: Link | None  # as stated: in the DH frame of the row
+    link_keys: tuple[str, ...]  # those of LINK_KEYS that are there
+
+
+def _joint_tables(top: Table) -> list[Table]:
+    if not top.has("joint"):
+        top.take("joint")  # raises, with the key that may be meant
+    tables = top.tables("joint")
+    if not 1 <= len(tables) <= MOST_JOINTS:
+        raise top.error("joint", f"expected 1 to {MOST_JOINTS} tables [[joint]], got {len(tables)}")
+    return tables
+
+
+def _pose(top: Table, key: str) -> Array:
+    table = top.table(key, None)
+    if table is None:
+        return np.eye(4)
+    pose: Array = table.pose(position=False)
+    table.finish()
+    return pose
+
+
+def _joint_row(table: Table, *, has_dh: bool) -> _JointRow:
+    """One [[joint]] table, its unknown keys reported."""
+    name = table.text("name")
+    kind = table.choice("kind", ("revolute", "prismatic"))
+    dh, origin, axis = None, np.zeros(3), np.array([0.0, 0.0, 1.0])
+    if has_dh:
+        if table.has("axis") or table.has("origin"):
+            raise table.error("axis", 'given in a file of DH rows, expected "dh" instead')
+        dh = _dh_row(table.table("dh"))
+    else:
+        if table.has("dh"):
+            raise table.error("dh", 'given without dh = "standard" or "modified" at the top of the file')
+        origin, axis = table.position("origin"), table.vector("axis", 3, "number")
+        if not 1e-6 < float(np.abs(axis).max()) < 1e6:
+            raise table.error("axis", f"expected a direction [x, y, z], got {toml_text(table.data['axis'])}")
+    values: dict[str, Any] = {
+        quantity: _limit(table, quantity, joint_dimension(kind, quantity))
+        for quantity in ("velocity", "acceleration", "jerk")
+    }
+    force = joint_dimension(kind, "torque")
+    values["torque"] = _limit(table, "torque", force, None)
+    values["continuous_torque"] = _limit(table, "continuous_torque", force, None)
+    peak, lasting = values["torque"], values["continuous_torque"]
+    if peak is not None and lasting is not None and lasting > peak:
+        raise table.error(
+            "continuous_torque",
+            f"{format_quantity(lasting, force)} is above torque (its peak) {format_quantity(peak, force)}",
+        )
+    values["gear_ratio"] = _gear_ratio(table)
+    values["encoder_counts"] = table.integer("encoder_counts", None, low=1, high=2**40)
+    joint = Joint(name, kind, _position(table, joint_dimension(kind, "position")), **values)
+    present = tuple(key for key in LINK_KEYS if table.has(key))
+    link = _link(table, kind) if "mass" in present else None
+    table.finish()
+    return _JointRow(table, joint, dh, origin, axis, link, present)
+
+
+def _dh_row(table: Table) -> DHRow:
+    row = DHRow(
+        a=table.quantity("a", "length", 0.0),
+        alpha=table.quantity("alpha", "angle", 0.0),
+        d=table.quantity("d", "length", 0.0),
+        theta=table.quantity("theta", "angle", 0.0),
+    )
+    for key, value in (("a", row.a), ("d", row.d), ("alpha", row.alpha), ("theta", row.theta)):
+        if abs(value) > FARTHEST:
+            raise table.error(key, f"expected at most {FARTHEST:g} m or rad, got {toml_text(table.data[key])}")
+    table.finish()
+    return row
+
+
+def _limit(table: Table, key: str, dimension: str, *default: None) -> float | None:
+    """A limit above zero, of a size that a machine can have."""
+    value: float | None = table.quantity(key, dimension, *default, positive=True)
+    if value is not None and not SMALLEST <= value <= LARGEST:
+        raise table.error(
+            key, f"expected {DIMENSIONS[dimension].expected}, got {toml_text(table.data[key])}, no machine has that"
+        )
+    return value
+
+
+def _gear_ratio(table: Table) -> float:
+    ratio: float = table.quantity("gear_ratio", "number", 1.0)
+    if not 1e-3 <= abs(ratio) <= 1e6:
+        raise table.error("gear_ratio", f"expected a ratio such as 100, got {toml_text(table.data['gear_ratio'])}")
+    return ratio
+
+
+def _position(table: Table, dimension: str) -> tuple[float, float]:
+    if table.take("position") == "unlimited":
+        return (-np.inf, np.inf)
+    if not isinstance(table.data["position"], list):
+        raise table.error(
+            "position", f'expected [low, high] or "unlimited", got {toml_text(table.data["position"])}'
+        )
+    return _ordered(table, "position", dimension)
+
+
+def _ordered(table: Table, key: str, dimension: str) -> tuple[float, float]:
+    """[low, high] with low below high."""
+    low, high = table.vector(key, 2, dimension)
+    if not low < high:
+        raise table.error(
+            key,
+            f"low {format_quantity(low, dimension)} is not below high {format_quantity(high, dimension)}",
+        )
+    if max(abs(low), abs(high)) > FARTHEST:
+        raise table.error(key, f"expected at most {FARTHEST:g} m or rad, got {toml_text(table.data[key])}")
+    return float(low), float(high)
+
+
+def _link(table: Table, kind: str) -> Link:
+    mass, com, inertia = _body(table)
+    viscous = table.quantity(
+        "viscous_friction", "angular_friction" if kind == "revolute" else "linear_friction", 0.0, not_negative=True
+    )
+    rotor = table.quantity("rotor_inertia", "inertia", 0.0, not_negative=True)
+    for key, value in (("viscous_friction", viscous), ("rotor_inertia", rotor)):
+        if value > HEAVIEST:
+            raise table.error(key, f"expected less, got {toml_text(table.data[key])}")
+    return Link(mass, com, inertia, viscous, _coulomb(table, joint_dimension(kind, "torque")), rotor)  # type: ignore[arg-type]
+
+
+def _coulomb(table: Table, dimension: str) -> tuple[float, float]:
+    """One value, or [moving positive, moving negative]."""
+    value = table.take("coulomb_friction", 0.0)
+    pair = value if isinstance(value, list) else [value, value]
+    if len(pair) != 2:
+        raise table.error("coulomb_friction", f"expected one value or [positive, negative], got {toml_text(value)}")
+    result = tuple(parse_quantity(item, dimension, table.at("coulomb_friction")) for item in pair)
+    if not 0.0 <= min(result) <= max(result) <= LARGEST:
+        raise table.error("coulomb_friction", f"expected values of zero or more, got {toml_text(value)}")
+    return result[0], result[1]
+
+
+def _body(table: Table, *, mass_required: bool = True) -> tuple[float, Array, Array]:
+    """mass, com (3,) and inertia (3, 3) about the com, checked to be a body's."""
+    mass: float = table.quantity("mass", "mass", *(() if mass_required else (0.0,)), not_negative=True)
+    if mass > HEAVIEST:
+        raise table.error("mass", f"expected at most {HEAVIEST:g} kg, got {toml_text(table.data['mass'])}")
+    com: Array = table.position("com", read_only(np.zeros(3)))
+    return mass, com, _inertia(table)
+
+
+def _inertia(table: Table) -> Array:
+    """[xx, yy, zz] or [xx, yy, zz, xy, xz, yz] about the centre of mass, as a read-only (3, 3)."""
+    raw = table.take("inertia", [0.0, 0.0, 0.0])
+    if not isinstance(raw, list) or len(raw) not in (3, 6):
+        raise table.error(
+            "inertia", f"expected [xx, yy, zz] or [xx, yy, zz, xy, xz, yz] in kg m^2, got {toml_text(raw)}"
+        )
+    values = [parse_quantity(value, "inertia", table.at("inertia")) for value in raw]
+    xx, yy, zz, xy, xz, yz = (values + [0.0] * 3)[:6]
+    matrix = np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]])
+    if np.abs(matrix).max() > HEAVIEST:
+        raise table.error("inertia", f"expected at most {HEAVIEST:g} kg m^2, got {toml_text(raw)}")
+    moments = np.linalg.eigvalsh(matrix)
+    slack = 1e-9 + 1e-6 * moments[2]
+    if moments[0] < -slack or moments[0] + moments[1] < moments[2] - slack:
+        principal = ", ".join(f"{moment:.4g}" for moment in moments)
+        raise table.error(
+            "inertia",
+            f"no body has principal moments {principal} kg m^2: each must be at most the sum of the other two",
+        )
+    return read_only(matrix)
+
+
+def _tool(name: str, table: Table) -> Tool:
+    pose = read_only(table.pose(position=False))
+    mass, com, inertia = _body(table, mass_required=False)
+    speed = _limit(table, "speed", "speed", None)
+    acceleration = _limit(table, "acceleration", "acceleration", None)
+    table.finish()
+    return Tool(name, pose, mass, com, inertia, speed, acceleration)
+
+
+def _payload(name: str, table: Table) -> Payload:
+    payload = Payload(name, *_body(table))
+    table.finish()
+    return payload
+
+
+def _check_names(top: Table, joints: Sequence[Joint]) -> None:
+    names = [joint.name for joint in joints]
+    for i, name in enumerate(names):
+        if name in names[:i]:
+            raise InputError.at(top.file, f"joint[{i + 1}].name", f'"{name}" is taken already')
+
+
+def _links(top: Table, rows: Sequence[_JointRow]) -> list[Link] | None:
+    """Links of an arm whose joints all state a mass; None where none has any link data."""
+    links = [row.link for row in rows if row.link is not None]
+    if len(links) == len(rows):
+        return links
+    for row in rows:
+        if row.link is None and (links or row.link_keys):
+            reason = "other joints have one" if links else f'"{row.link_keys[0]}" needs it'
+            raise InputError.at(row.table.where, f'missing key "mass": {reason}')
+    return None
+
+
+def _positions(top: Table, joints: Sequence[Joint], problems: Problems) -> dict[str, Array]:
+    """[positions]: named joint vectors inside the position limits."""
+    table = top.table("positions")
+    dimensions = [joint_dimension(joint.kind, "position") for joint in joints]
+    positions: dict[str, Array] = {}
+    table.take("home")
+    for key in table.data:
+        with problems.gather():
+            q = table.mixed_vector(key, dimensions, noun="joint positions")
+            for value, joint, dimension in zip(q, joints, dimensions, strict=True):
+                low, high = joint.position
+                if not low <= value <= high:
+                    raise table.error(
+                        key,
+                        f"{joint.name} at {format_quantity(value, dimension)} is outside its limits, "
+                        f"{format_quantity(low, dimension)} to {format_quantity(high, dimension)}",
+                    )
+            positions[key] = q
+    return positions
+
+
+def _limits(top: Table, joints: Sequence[Joint], problems: Problems) -> Limits:
+    """Identity rows of the joints, then the [[limit]] rows."""
+    plain = joint_rows(joints)
+    names = list(plain.names)
+    rows, bounds = [plain.matrix], {key: [getattr(plain, key)] for key in _BOUNDS}
+    for table in top.tables("limit"):
+        with problems.gather():
+            name = table.text("name")
+            if name in names:
+                raise table.error("name", f'"{name}" is taken already')
+            kind = _row_kind(table, joints)
+            row = _row(table, kind, joints)
+            given = {key: _row_bound(table, key, kind) for key in _BOUNDS}
+            table.finish()
+            if all(np.isinf(bound).all() for bound in given.values()):
+                raise InputError.at(table.where, "limits nothing, expected position, velocity, acceleration or jerk")
+            names.append(name)
+            rows.append(row[None])
+            for key, bound in given.items():
+                bounds[key].append(bound)
+    torque = np.vstack([plain.torque, np.tile([-np.inf, np.inf], (len(names) - len(joints), 1))])
+    stacked = {key: read_only(np.vstack(parts)) for key, parts in bounds.items()}
+    return Limits(tuple(names), read_only(np.vstack(rows)), torque=read_only(torque), **stacked)
+
+
+_BOUNDS = ("position", "velocity", "acceleration", "jerk")
+
+
+def _row_kind(table: Table, joints: Sequence[Joint]) -> str:
+    """Whether a row counts in deg or in mm: as its joints, or as it says."""
+    coefficients = table.vector("row", len(joints), "number")
+    kinds = {joint.kind for joint, c in zip(joints, coefficients, strict=True) if c != 0.0}
+    if not kinds or np.abs(coefficients).max() > 1e6:
+        raise table.error("row", f"expected a coefficient for each joint, not all zero, got {toml_text(table.data['row'])}")
+    if table.has("kind") or len(kinds) > 1:
+        kind: str = table.choice("kind", ("revolute", "prismatic"))
+        return kind
+    return kinds.pop()
+
+
+def _row(table: Table, kind: str, joints: Sequence[Joint]) -> Array:
+    """Coefficients in SI: a file states them in deg or mm of the row per deg or mm of the joint."""
+    size = {"revolute": np.deg2rad(1.0), "prismatic": 1e-3}
+    coefficients: Array = table.vector("row", len(joints), "number")
+    return coefficients * size[kind] / np.array([size[joint.kind] for joint in joints])
+
+
+def _row_bound(table: Table, key: Any, kind: str) -> Array:
+    """(1, 2) low, high of one quantity: infinite where not given, one number is symmetric."""
+    if not table.has(key):
+        return np.array([[-np.inf, np.inf]])
+    dimension = joint_dimension(kind, key)
+    if key == "position":
+        return np.array([_ordered(table, key, dimension)])
+    if isinstance(table.data[key], list):
+        low, high = table.vector(key, 2, dimension)
+        if not (-LARGEST <= low <= -SMALLEST and SMALLEST <= high <= LARGEST):
+            raise table.error(key, f"expected [low below zero, high above zero], got {toml_text(table.data[key])}")
+        return np.array([[low, high]])
+    limit = _limit(table, key, dimension)
+    return np.array([[-1.0, 1.0]]) * np.array(limit)
+
+
+def _moved(link: Link, joint_from_link: Array) -> Link:
+    """A link stated in another frame, in the joint's moving frame."""
+    rotation = joint_from_link[:3, :3]
+    com = joint_from_link[:3, :3] @ link.com + joint_from_link[:3, 3]
+    inertia = rotation @ link.inertia @ rotation.T
+    return Link(link.mass, read_only(com), read_only(inertia), link.viscous, link.coulomb, link.rotor_inertia)
