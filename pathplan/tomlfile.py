@@ -40,6 +40,7 @@ __all__ = [
     "Table",
     "listed",
     "nearest",
+    "read_only",
     "read_toml",
     "rotation_from_quaternion",
     "rotation_from_rpy",
@@ -292,9 +293,9 @@ class Table:
                 raise self.error(
                     "quat", f"expected a quaternion [w, x, y, z] of length 1, got length {length:.9g}"
                 )
-            return _read_only(rotation_from_quaternion(quaternion / length))
+            return read_only(rotation_from_quaternion(quaternion / length))
         if self.has("rpy"):
-            return _read_only(rotation_from_rpy(self.vector("rpy", 3, "angle")))
+            return read_only(rotation_from_rpy(self.vector("rpy", 3, "angle")))
         return None
 
     def pose(self, *, position: bool = True) -> Array:
@@ -308,7 +309,7 @@ class Table:
         pose[:3, 3] = xyz
         if rotation is not None:
             pose[:3, :3] = rotation
-        return _read_only(pose)
+        return read_only(pose)
 
     def finish(self) -> None:
         """Refuse every key that was not asked for, suggesting the nearest of those that were."""
@@ -330,9 +331,7 @@ class Table:
             raise self.error(key, f"expected a list of {size} {noun}, got {got}")
         where = self.at(key)
         entries = enumerate(zip(value, dimensions, strict=True), start=1)
-        return _read_only(
-            np.array([parse_quantity(v, d, f"{where}[{number}]") for number, (v, d) in entries])
-        )
+        return read_only(np.array([parse_quantity(v, d, f"{where}[{number}]") for number, (v, d) in entries]))
 
     def _key_path(self, key: str) -> str:
         shown = key if _BARE_KEY.fullmatch(key) else toml_text(key)
@@ -363,7 +362,8 @@ def rotation_from_quaternion(quaternion: Array) -> Array:
     )
 
 
-def _read_only(array: Array) -> Array:
+def read_only(array: Array) -> Array:
+    """The same array, no longer to be written to."""
     array.flags.writeable = False
     return array
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -82,15 +83,19 @@ def _arm(root: Table, file: Path) -> Arm:
 def _equipped(root: Table, arm: Arm) -> Arm:
     """The arm with the tool and payload that the task names."""
     root.has("arm")
-    chosen: dict[str, str] = {}
-    for key, known in (("tool", arm.tools), ("payload", arm.payloads)):
-        name = root.text(key, None)
-        if name is None:
-            continue
-        if name not in known:
-            raise root.error(key, f"arm {arm.name} has no {key} {toml_text(name)}{nearest(name, known)}")
-        chosen[key] = name
-    return arm.equipped(tool=chosen.get("tool"), payload=chosen.get("payload")) if chosen else arm
+    tool = _known(root, "tool", arm, arm.tools)
+    payload = _known(root, "payload", arm, arm.payloads)
+    if tool is None and payload is None:
+        return arm
+    # What the task does not name stays as the arm file has it; None would take it off.
+    return arm.equipped(tool=tool or arm.tool, payload=payload or arm.payload)
+
+
+def _known(root: Table, key: str, arm: Arm, things: Mapping[str, Any]) -> str | None:
+    name: str | None = root.text(key, None)
+    if name is not None and name not in things:
+        raise root.error(key, f"arm {arm.name} has no {key} {toml_text(name)}{nearest(name, things)}")
+    return name
 
 
 def _cycle(root: Table) -> float:

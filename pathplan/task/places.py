@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from pathplan.arm import Arm
 from pathplan.errors import InputError
 from pathplan.task.model import Frame, Target
-from pathplan.tomlfile import Problems, Table, nearest
+from pathplan.tomlfile import Problems, Table, nearest, read_only
 from pathplan.units import format_quantity, joint_dimension, toml_text
 
 __all__ = ["Places", "check_positions", "joint_vector", "read_places"]
@@ -61,7 +61,7 @@ class Places:
         value = table.take(key)
         if isinstance(value, str):
             target = self._named(table, key, value)
-            return self.base_from_tool(target)[:3, 3], target.frame
+            return read_only(self.base_from_tool(target)[:3, 3]), target.frame
         if not isinstance(value, dict):
             raise table.error(key, f"expected the name of a pose or a table with xyz, got {toml_text(value)}")
         inline = table.table(key)
@@ -73,14 +73,14 @@ class Places:
                     raise inline.error(orientation, ORIENTATION_OF_AN_ARC)
         inline.finish()
         base_from_frame = self.base_from_frame[frame]
-        return base_from_frame[:3, :3] @ xyz + base_from_frame[:3, 3], frame
+        return read_only(base_from_frame[:3, :3] @ xyz + base_from_frame[:3, 3]), frame
 
     def base_from_tool(self, target: Target) -> Array:
         """(4, 4) of a target at rest; of a joint vector through forward kinematics."""
         if target.joints is not None:
-            return self.arm.forward(target.joints)
+            return read_only(self.arm.forward(target.joints))
         assert target.frame_from_tool is not None
-        return self.base_from_frame[target.frame] @ target.frame_from_tool
+        return read_only(self.base_from_frame[target.frame] @ target.frame_from_tool)
 
     def _named(self, table: Table, key: str, name: str) -> Target:
         if name in self.poses:
@@ -97,9 +97,8 @@ def read_places(root: Table, arm: Arm, problems: Problems) -> Places:
     for name, table in root.named_tables("frames").items():
         with problems.gather():
             if name == "base":
-                raise root.error(
-                    "frames.base", "base is the name of the arm's own frame, expected another name"
-                )
+                complaint = "base is the name of the arm's own frame, expected another name"
+                raise InputError.at(table.where, complaint)
             parent = table.text("parent", "base")
             frames[name] = Frame(name, parent, table.pose(position=False))
             table.finish()
@@ -109,10 +108,8 @@ def read_places(root: Table, arm: Arm, problems: Problems) -> Places:
     for name, table in root.named_tables("poses").items():
         with problems.gather():
             if name in arm.positions:
-                where = f"poses.{toml_text(name)}" if not name.isidentifier() else f"poses.{name}"
-                raise InputError.at(
-                    root.file, where, f"arm {arm.name} has a position of that name, expected another name"
-                )
+                complaint = f"arm {arm.name} has a position of that name, expected another name"
+                raise InputError.at(table.where, complaint)
             poses[name] = read_target(table, arm, base_from_frame)
             table.finish()
     return Places(arm, frames, poses, base_from_frame)

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from pathplan.errors import InputError
 from pathplan.task.model import Blend, Motion, Step, Target
 from pathplan.task.places import Places
-from pathplan.tomlfile import Problems, Table, listed, nearest
+from pathplan.tomlfile import Problems, Table, listed, nearest, read_only
 from pathplan.units import DIMENSIONS, format_quantity, toml_text
 
 __all__ = ["MAX_STEPS", "MAX_WAIT", "MOTIONS", "Caps", "read_caps", "read_steps", "step_to_start"]
@@ -214,8 +214,7 @@ def _centre_arc(table: Table, places: Places) -> dict[str, Any]:
     if not _LEAST["angle"] <= abs(angle) <= _MOST_ANGLE:
         got = toml_text(table.data["angle"])
         raise table.error("angle", f"expected an angle other than zero up to 3600 deg either way, got {got}")
-    axis = axis / np.linalg.norm(axis)
-    axis.flags.writeable = False
+    axis = read_only(axis / np.linalg.norm(axis))
     return {"centre": centre, "axis": axis, "angle": angle, "along": table.flag("tool_along", False)}
 
 
@@ -235,9 +234,7 @@ def _shifted(table: Table, key: str, target: Target) -> Target:
     if not offset.data:
         raise table.error(key, 'expected "frame", "tool" or "rpy", got an empty table')
     offset.finish()
-    frame_from_tool = in_frame @ target.frame_from_tool @ in_tool
-    frame_from_tool.flags.writeable = False
-    return replace(target, frame_from_tool=frame_from_tool)
+    return replace(target, frame_from_tool=read_only(in_frame @ target.frame_from_tool @ in_tool))
 
 
 def _check_stop(table: Table, following: list[Table], *, returns: bool) -> None:
