@@ -57,11 +57,11 @@ def read_steps(
     if len(tables) > MAX_STEPS:
         raise root.error("step", f"expected at most {MAX_STEPS} steps, got {len(tables)}")
     steps = []
-    for index, table in enumerate(tables):
+    for index, (table, following) in enumerate(zip(tables, [*tables[1:], None], strict=True)):
         with problems.gather():
             steps.append(read_step(table, index, places, caps))
             table.finish()
-            _check_stop(table, tables[index + 1 :][:1], returns=returns)
+            _check_stop(table, following, returns=returns)
     if not problems.found and all(step.motion == "wait" for step in steps):
         raise root.error("step", "expected at least one step that moves, got only waits")
     return tuple(steps)
@@ -237,13 +237,13 @@ def _shifted(table: Table, key: str, target: Target) -> Target:
     return replace(target, frame_from_tool=read_only(in_frame @ target.frame_from_tool @ in_tool))
 
 
-def _check_stop(table: Table, following: list[Table], *, returns: bool) -> None:
+def _check_stop(table: Table, following: Table | None, *, returns: bool) -> None:
     """Refuse a blend where the arm must stop."""
     if "blend" not in table.data:
         return
-    if following and "wait" in following[0].data:
-        raise table.error("blend", f"{following[0].path} is a wait, so this step ends at a stop point")
-    if not following and not returns:
+    if following is not None and "wait" in following.data:
+        raise table.error("blend", f"{following.path} is a wait, so this step ends at a stop point")
+    if following is None and not returns:
         raise table.error("blend", "the last step ends at a stop point")
 
 

@@ -50,8 +50,8 @@ PIECES = [
     ),
 ]
 KEYS = (
-    "title arm cycle tool payload start return speed acceleration frames poses step parent xyz rpy quat joints "
-    "frame motion to offset via centre axis angle tool_along blend configuration mark wait name"
+    "title arm cycle tool payload start return speed acceleration frames poses step parent xyz rpy quat "
+    "joints frame motion to offset via centre axis angle tool_along blend configuration mark wait name"
 ).split()
 
 
