@@ -25,7 +25,7 @@ Structure = Literal["gantry", "scara", "spherical wrist", "general"]
 BARE = Tool("none", np.eye(4))
 GRAVITY = (0.0, 0.0, -9.80665)  # m/s^2, standard gravity (ISO 80000-3)
 # Built from libraries, cheap to build again, and not picklable.
-CACHED_LIBRARY_OBJECTS = ("_rigid_body", "_ets")
+LIBRARY_OBJECTS = ("rigid_body", "numeric_chain")
 
 
 def read_only(value: Any) -> Array:
@@ -225,6 +225,20 @@ class Arm:
         )
 
     @cached_property
+    def rigid_body(self) -> tuple[Any, bool]:
+        """The toolbox robot behind `torque`, built once: see `pathplan.arm.dynamics.build_rigid_body`."""
+        from pathplan.arm.dynamics import build_rigid_body
+
+        return build_rigid_body(self)
+
+    @cached_property
+    def numeric_chain(self) -> Any:
+        """The toolbox's elementary transforms behind the numeric inverse, built once."""
+        from pathplan.arm.dynamics import toolbox
+
+        return toolbox(self).ets()
+
+    @cached_property
     def closed_form(self) -> ClosedForm | None:
         """The closed-form inverse recognised from the axes, None for a general arm."""
         from pathplan.arm.structure import recognise
@@ -270,7 +284,7 @@ class Arm:
         return span / 2.0 if span > 1e-6 else 1.0
 
     def __getstate__(self) -> dict[str, Any]:
-        state = {key: value for key, value in self.__dict__.items() if key not in CACHED_LIBRARY_OBJECTS}
+        state = {key: value for key, value in self.__dict__.items() if key not in LIBRARY_OBJECTS}
         for name in ("tools", "payloads", "sources", "positions"):
             state[name] = dict(state[name])
         return state

@@ -1,0 +1,146 @@
+"""Joint torque through roboticstoolbox, and the toolbox's own robot for notebooks.
+
+The toolbox takes seconds to import: only these functions do.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from pathplan.arm.mdh import ModifiedChain, modified_chain
+from pathplan.arm.model import Array, Link, Payload, Tool
+from pathplan.errors import InputError
+
+if TYPE_CHECKING:
+    from pathplan.arm.arm import Arm
+
+__all__ = ["combined_link", "toolbox", "torque"]
+
+
+def torque(arm: Arm, q: Any, qd: Any, qdd: Any) -> Array:
+    """Joint torques (N, n), N m or N: see `Arm.torque`.
+
+    Rigid bodies with tool and payload on the last link, gravity, rotors (gear_ratio^2 rotor_inertia qdd), viscous
+    friction (viscous qd) and Coulomb friction by the sign of qd, zero at rest (recursive Newton-Euler, Luh, Walker &
+    Paul 1980, by roboticstoolbox).
+    """
+    if arm.links is None:
+        raise InputError(f"{arm.name}: no dynamics: the arm file gives no link masses")
+    arrays = [np.ascontiguousarray(value, dtype=float) for value in (q, qd, qdd)]
+    rows = np.shape(arrays[0])[0] if arrays[0].ndim == 2 else -1
+    for name, value in zip(("q", "qd", "qdd"), arrays, strict=True):
+        if value.shape != (rows, arm.n):
+            raise InputError(f"{name}: expected shape (N, {arm.n}), the same N for q, qd and qdd, got {value.shape}")
+        if not np.isfinite(value).all():
+            raise InputError(f"{name}: expected finite numbers, got NaN or infinity")
+    if rows == 0:
+        return np.zeros((0, arm.n))
+    robot, fixed_front = arm.rigid_body
+    if fixed_front:
+        arrays = [np.column_stack([np.zeros(rows), value]) for value in arrays]
+    # One row alone comes back flat.
+    result = np.asarray(robot.rne(*arrays), dtype=float).reshape(rows, arm.n + fixed_front)
+    return result[:, 1:] if fixed_front else result
+
+
+def build_rigid_body(arm: Arm) -> tuple[Any, bool]:
+    """The toolbox robot that torque is computed with, and whether a joint held at zero stands in front.
+
+    rne of the toolbox (1.5.0) is wrong where the first joint is prismatic; a massless revolute joint held at zero in
+    front of it is the remedy.
+    """
+    from roboticstoolbox import RevoluteMDH
+
+    front = arm.joints[0].kind == "prismatic"
+    lead = [RevoluteMDH(m=0.0, r=np.zeros(3), I=np.zeros(6), Jm=0.0, B=0.0, Tc=[0.0, 0.0], G=1.0)] if front else []
+    return _robot(arm, lead), front
+
+
+def toolbox(arm: Arm) -> Any:
+    """The arm as a new roboticstoolbox DHRobot (modified DH rows found from the axes): see `Arm.toolbox`.
+
+    Base, tool, position limits and, where the arm has them, link data and friction are in it; tool and payload masses
+    are part of the last link. For an arm whose first joint is prismatic use `Arm.torque`, not the robot's own `rne`.
+    """
+    return _robot(arm, [])
+
+
+def _robot(arm: Arm, lead: list[Any]) -> Any:
+    from roboticstoolbox import DHRobot, PrismaticMDH, RevoluteMDH
+    from spatialmath import SE3
+
+    chain = modified_chain(arm)
+    links = _links_in(arm, chain)
+    for i, (row, joint) in enumerate(zip(chain.rows, arm.joints, strict=True)):
+        shared: dict[str, Any] = {"alpha": row.alpha, "a": row.a}
+        if np.isfinite(joint.position).all():
+            shared["qlim"] = np.array(joint.position)
+        if links is not None:
+            shared |= _dynamic_parameters(links[i], joint.gear_ratio)
+        if joint.kind == "revolute":
+            lead.append(RevoluteMDH(d=row.d, offset=row.theta, **shared))
+        else:
+            lead.append(PrismaticMDH(theta=row.theta, offset=row.d, **shared))
+    return DHRobot(
+        lead,
+        name=arm.name,
+        base=SE3(chain.base, check=False),
+        tool=SE3(chain.tool, check=False),
+        gravity=arm.gravity,
+    )
+
+
+def _dynamic_parameters(link: Link, gear_ratio: float) -> dict[str, Any]:
+    """Friction moved to the motor side, as the toolbox wants it: it adds G^2 B qd + |G| Tc."""
+    return {
+        "m": link.mass,
+        "r": link.com,
+        "I": link.inertia,
+        "Jm": link.rotor_inertia,
+        "B": link.viscous / gear_ratio**2,
+        "Tc": [link.coulomb[0] / abs(gear_ratio), -link.coulomb[1] / abs(gear_ratio)],
+        "G": gear_ratio,
+    }
+
+
+def _links_in(arm: Arm, chain: ModifiedChain) -> list[Link] | None:
+    """Link data in the modified DH frames, tool and payload joined to the last link."""
+    if arm.links is None:
+        return None
+    links, base_from_joint = [], np.eye(4)
+    for i, link in enumerate(arm.links):
+        base_from_joint = base_from_joint @ arm.parent_from_joint[i]
+        if i == arm.n - 1:
+            link = combined_link(link, arm.tip_from_flange @ arm.tool.flange_from_tool, arm.tool, arm.payload)
+        frame_from_joint = np.linalg.inv(chain.base_from_frames[i]) @ base_from_joint
+        rotation = frame_from_joint[:3, :3]
+        com = rotation @ link.com + frame_from_joint[:3, 3]
+        inertia = rotation @ link.inertia @ rotation.T
+        links.append(Link(link.mass, com, inertia, link.viscous, link.coulomb, link.rotor_inertia))
+    return links
+
+
+def combined_link(link: Link, joint_from_tool: Array, tool: Tool, payload: Payload | None) -> Link:
+    """The last link with tool and payload fixed to it, in the joint's moving frame (parallel-axis theorem)."""
+    rotation = joint_from_tool[:3, :3]
+    bodies: list[tuple[float, Array, Array]] = [(link.mass, link.com, link.inertia)]
+    for thing in (tool, payload) if payload is not None else (tool,):
+        com = rotation @ thing.com + joint_from_tool[:3, 3]
+        bodies.append((thing.mass, com, rotation @ thing.inertia @ rotation.T))
+    mass = sum(body[0] for body in bodies)
+    if mass == 0.0:
+        return link
+    com = sum((body[0] * body[1] for body in bodies), np.zeros(3)) / mass
+    return Link(mass, com, _about(com, bodies), link.viscous, link.coulomb, link.rotor_inertia)
+
+
+def _about(point: Array, bodies: Sequence[tuple[float, Array, Array]]) -> Array:
+    """Inertia (3, 3) of bodies (mass, com, inertia about the com) about a point."""
+    total = np.zeros((3, 3))
+    for mass, com, inertia in bodies:
+        off = com - point
+        total += inertia + mass * (float(off @ off) * np.eye(3) - np.outer(off, off))
+    return total
