@@ -1,0 +1,104 @@
+"""The example tasks: they load, and every pose and line of them can be reached well away from limits and singularities."""
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+from scipy.spatial.transform import Rotation, Slerp
+
+from pathplan.arm.kinematics import smallest_singular_value
+from pathplan.task import load_task
+
+FOLDER = Path(__file__).parents[2] / "examples"
+EXAMPLES = sorted(FOLDER.glob("*.toml"))
+
+
+def moves(task):
+    """(step, start pose, end pose) of every step with a pose to go to; None where an arc goes its own way."""
+    pose = task.arm.forward(task.start)
+    for step in task.steps:
+        if step.motion == "wait":
+            continue
+        start = pose
+        if step.target is None:
+            turn = Rotation.from_rotvec(step.axis * step.angle).as_matrix()
+            pose = pose.copy()
+            pose[:3, 3] = step.centre + turn @ (start[:3, 3] - step.centre)
+            assert not step.along, "the test below keeps the orientation on an arc"
+        elif step.target.joints is not None:
+            pose = task.arm.forward(step.target.joints)
+        else:
+            pose = task.pose(step.target)
+        yield step, start, pose
+
+
+def samples(step, start, end, count=60):
+    """(count, 4, 4) poses along a line or an arc about a centre; only the end of anything else."""
+    share = np.linspace(0.0, 1.0, count)
+    poses = np.tile(end, (count, 1, 1))
+    if step.motion == "line":
+        poses[:, :3, 3] = start[:3, 3] + share[:, None] * (end - start)[:3, 3]
+        ends = Rotation.from_matrix([start[:3, :3], end[:3, :3]])
+        poses[:, :3, :3] = Slerp([0.0, 1.0], ends)(share).as_matrix()
+    elif step.target is None:
+        turns = Rotation.from_rotvec(step.axis * (step.angle * share)[:, None])
+        poses[:, :3, 3] = step.centre + turns.apply(start[:3, 3] - step.centre)
+    else:
+        poses = poses[-1:]
+    return poses
+
+
+def test_there_is_one_of_each_kind():
+    assert [path.name for path in EXAMPLES] == [
+        "glazer6-bead.toml",
+        "glazer6-one-line.toml",
+        "glazer6-pick-and-place.toml",
+        "loader4-belt-to-car.toml",
+        "sorter4-sort-tiles.toml",
+    ]
+
+
+@pytest.mark.parametrize("path", EXAMPLES, ids=lambda path: path.stem)
+def test_every_step_has_a_branch_with_room_to_spare(path):
+    task = load_task(path)
+    arm = task.arm
+    assert set(task.sources) == {path.name, arm.file.name}
+    low, high = np.array([joint.position for joint in arm.joints]).T
+    spare = np.array([np.deg2rad(10) if joint.kind == "revolute" else 0.02 for joint in arm.joints])
+    for step, start, end in moves(task):
+        if step.target is not None and step.target.joints is not None:
+            continue
+        branches = arm.inverse_batch(samples(step, start, end))
+        good = []
+        for k, label in enumerate(branches.labels):
+            if not branches.valid[:, k].all() or not step.configuration.items() <= label.items():
+                continue
+            q = np.unwrap(branches.q[:, k], axis=0) if len(branches.q) > 1 else branches.q[:, k]
+            inside = np.all((q > low + spare) & (q < high - spare))
+            if inside and smallest_singular_value(arm, q).min() > 0.2:
+                good.append(label)
+        assert good, f"{step.where} ({step.name})"
+
+
+@pytest.mark.parametrize("path", EXAMPLES, ids=lambda path: path.stem)
+def test_the_bead_and_the_rest_name_their_steps_and_marks(path):
+    task = load_task(path)
+    marks = [step.mark for step in task.steps if step.mark]
+    if path.name != "glazer6-one-line.toml":
+        assert len(marks) >= 2
+    assert len(set(marks)) == len(marks)
+
+
+def test_the_bead_ends_where_it_begins_and_keeps_its_speed():
+    task = load_task(FOLDER / "glazer6-bead.toml")
+    bead = [(step, end) for step, _, end in moves(task) if step.speed == pytest.approx(0.12)]
+    begin = task.pose(task.steps[1].target)
+    assert len(bead) == 9
+    assert bead[-1][1] == pytest.approx(begin, abs=1e-12)
+    for (step, start), (arc, end) in zip(
+        bead[:-1:2], bead[1::2], strict=True
+    ):  # side and corner meet tangentially
+        assert (step.motion, arc.motion) == ("line", "arc")
+        radius = start[:3, 3] - arc.centre
+        assert np.linalg.norm(radius) == pytest.approx(0.03)
+        assert np.linalg.norm(end[:3, 3] - arc.centre) == pytest.approx(0.03)
