@@ -1,4 +1,29 @@
-"""From a task file to a `Task`: everything resolved, checked and in SI."""
+"""From a task file to a `Task`: everything resolved, checked and in SI.
+
+A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) says:
+
+    title    what the task is                        arm      the arm file, relative to this file
+    cycle    of the controller, "4 ms"               tool, payload    names of the arm's, carried throughout
+    start    joint positions, or the name of an arm position or joint pose
+    return   false; true or "joint", "line": the motion back to the start at the end
+    speed, acceleration      caps on the tool for the whole task; of a step's own and these the lower holds
+
+    [frames.NAME]   parent (default "base"), xyz, rpy or quat: a workpiece frame in its parent
+    [poses.NAME]    frame (default "base"), xyz, rpy or quat: a tool pose; or joints
+    [[step]]        one line of the task, in order:
+        motion      "joint", "line" or "arc"
+        to          the name of a pose or arm position, or a table like one of [poses]
+        offset      { frame = [x, y, z], tool = [x, y, z], rpy or quat }: moves the target along the axes of
+                    its frame, then along those of the tool, then turns it about those of the tool
+        via         arc: a point on the way to `to`, the name of a pose or { frame, xyz }
+        centre, axis, angle   arc in place of via and to: about a point (like via) and a direction in its
+                    frame, by a signed angle up to ten turns; tool_along = true: the tool turns with it
+        blend       size of the corner region at the end: "20 mm", "10 deg", "15 %"; without it a stop point
+        speed, acceleration   caps on the tool
+        configuration         { shoulder, elbow, wrist }: words for the branch at the target
+        name, mark            for people: the step, and the instant at which it ends
+        wait        in a step of its own (mark and name beside it): rest for this time
+"""
 
 from __future__ import annotations
 

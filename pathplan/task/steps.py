@@ -149,8 +149,9 @@ def read_blend(table: Table) -> Blend | None:
     if kind == "ratio" and size > 0.5:
         raise table.error("blend", f"expected a share of at most 50 %, got {toml_text(value)}")
     if kind == "ratio":
-        return Blend("share", size, str(value))
-    return Blend("angle" if kind == "angle" else "length", size, _blend_text(value))
+        return Blend("share", size, value.strip())
+    text = value.strip() if isinstance(value, str) else f"{value:g} mm"
+    return Blend("angle" if kind == "angle" else "length", size, text)
 
 
 def read_configuration(table: Table, places: Places) -> dict[str, str]:
@@ -256,10 +257,6 @@ def _blend_kind(value: Any) -> str | None:
             if any(value.rstrip().endswith(unit) for unit in DIMENSIONS[kind].units):
                 return kind
     return None
-
-
-def _blend_text(value: Any) -> str:
-    return value.strip() if isinstance(value, str) else f"{value:g} mm"
 
 
 def _at_least(table: Table, key: str, dimension: str) -> float | None:

@@ -1,5 +1,8 @@
 """Bad task files: the exact line that is said of each."""
 
+from dataclasses import replace
+
+import numpy as np
 import pytest
 
 from pathplan.errors import InputError
@@ -356,6 +359,23 @@ def test_a_start_outside_its_limits_carries_the_numbers(load, text):
         load(text.replace("start = [0, -30, 60,", "start = [0, -30, -130,"))
     assert caught.value.data["joint"] == "bend"
     assert caught.value.data["value"] == pytest.approx(-2.2689, abs=1e-4)
+
+
+def test_a_start_outside_a_coupled_limit_names_the_row(load, text, bench6):
+    plain = bench6.limits
+    coupled = replace(
+        plain,
+        names=(*plain.names, "wrist sum"),
+        matrix=np.vstack([plain.matrix, [0, 0, 0, 1, 1, 0]]),
+        **{
+            kind: np.vstack([getattr(plain, kind), np.deg2rad([-50, 50])])
+            for kind in ("position", "velocity", "acceleration", "jerk", "torque")
+        },
+    )
+    with pytest.raises(InputError) as caught:
+        load(text, replace(bench6, limits=coupled))
+    line = "pick.toml: start: joint wrist sum at 60 deg, expected from -50 deg to 50 deg"
+    assert caught.value.problems[-1] == line
 
 
 def test_files_that_are_none(tmp_path):

@@ -54,6 +54,17 @@ def test_nested_frames_in_the_base_frame(task):
     assert task.base_from_frame("car") == close(CAR)
 
 
+def test_frames_nest_as_deep_as_one_likes(load, text):
+    nest = "".join(
+        f'[frames.f{k}]\nparent = "{f"f{k - 1}" if k else "car"}"\nxyz = [0.1, 0, 0]\n' for k in range(3000)
+    )
+    task = load(
+        text.replace("[poses.belt]", nest + "[poses.belt]").replace('frame = "car"', 'frame = "f2999"')
+    )
+    assert task.base_from_frame("f2999") == close(CAR * SE3(0.3, 0, 0), 1e-9)
+    assert task.pose(task.steps[4].target) == close(CAR * SE3(0.3, 0, 0) * CAR.inv() * SHELF, 1e-9)
+
+
 def test_offsets_run_along_the_axes_of_the_frame_or_of_the_tool(task):
     above_in_frame, at, away_in_tool = (task.pose(task.steps[k].target) for k in (0, 1, 3))
     assert at == close(BELT)
