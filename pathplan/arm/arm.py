@@ -55,12 +55,13 @@ def joint_rows(joints: Sequence[Joint]) -> Limits:
 
 @dataclass(frozen=True, eq=False)
 class Arm:
-    """An arm with the tool and payload it carries now. Everything SI; arrays are read-only; the base frame is the cell's.
+    """An arm with the tool and payload it carries now. Everything SI; arrays are read-only; the base frame
+    is the cell's.
 
-    `parent_from_joint` (n, 4, 4) are the fixed transforms from the parent's moving frame (or the base) to each joint's
-    frame at q = 0; a joint moves about or along `axes[i]` ((n, 3), unit, in its own frame). `tip` is the joint that
-    carries the mechanical interface at `tip_from_flange` (4, 4). `links` None means that the arm has no dynamics.
-    Raises InputError where the parts don't fit together.
+    `parent_from_joint` (n, 4, 4) are the fixed transforms from the parent's moving frame (or the base) to
+    each joint's frame at q = 0; a joint moves about or along `axes[i]` ((n, 3), unit, in its own frame).
+    `tip` is the joint that carries the mechanical interface at `tip_from_flange` (4, 4). `links` None means
+    that the arm has no dynamics. Raises InputError where the parts don't fit together.
     """
 
     name: str
@@ -132,10 +133,11 @@ class Arm:
         base_from_flange: Any,
         **rest: Any,
     ) -> Arm:
-        """A single chain from points on the axes (n, 3) and axis directions (n, 3) in the base frame at q = 0.
+        """A single chain from points on the axes (n, 3) and axis directions (n, 3) in the base frame at q =
+        0.
 
-        `base_from_flange` (4, 4) is the mechanical interface at q = 0; `rest` are the other fields of `Arm`. Joint frames
-        are parallel to the base at q = 0.
+        `base_from_flange` (4, 4) is the mechanical interface at q = 0; `rest` are the other fields of
+        `Arm`. Joint frames are parallel to the base at q = 0.
         """
         from pathplan.arm.chain import chain_from_axes
 
@@ -156,11 +158,9 @@ class Arm:
 
         Raises InputError, naming those there are, for a name that the arm does not know.
         """
-        if isinstance(tool, str):
-            tool = self._known("tool", self.tools, tool)
-        if isinstance(payload, str):
-            payload = self._known("payload", self.payloads, payload)
-        return replace(self, tool=tool or BARE, payload=payload)
+        carried = self._known("tool", self.tools, tool) if isinstance(tool, str) else tool
+        held = self._known("payload", self.payloads, payload) if isinstance(payload, str) else payload
+        return replace(self, tool=carried or BARE, payload=held)
 
     def _known(self, kind: str, things: Mapping[str, Any], name: str) -> Any:
         if name not in things:
@@ -173,7 +173,8 @@ class Arm:
         return kinematics.forward(self, q)
 
     def jacobian(self, q: Any) -> Array:
-        """Jacobian (..., 6, n) at the tool centre point: rows linear x y z, angular x y z, in the base frame."""
+        """Jacobian (..., 6, n) at the tool centre point: rows linear x y z, angular x y z, in the base
+        frame."""
         return kinematics.jacobian(self, q)
 
     def base_from_joint(self, name: str, q: Any) -> Array:
@@ -183,20 +184,23 @@ class Arm:
         return kinematics.joint_frame(self, self.joint_names.index(name), q)
 
     def inverse(self, pose: Any) -> Array:
-        """Every joint vector (k, n) that puts the tool at `pose`, within the position limits, turn equivalents included.
+        """Every joint vector (k, n) that puts the tool at `pose`, within the position limits, turn
+        equivalents included.
 
-        `pose`: base_from_tool, a 4x4 rigid transform or a spatialmath SE3. Ordered by branch (see `inverse_batch`), then
-        by joint values. Every answer is verified through `forward` to 1e-9 m and 1e-9 rad; on an arm with fewer than six
-        axes the components it does not serve are judged against 0.001 deg. A joint without limits answers in (-pi, pi].
-        Raises InputError for what is no rigid transform, and UnreachableError, saying how far off the best answer is,
-        which component the arm does not serve, or which joint limit excludes every branch.
+        `pose`: base_from_tool, a 4x4 rigid transform or a spatialmath SE3. Ordered by branch (see
+        `inverse_batch`), then by joint values. Every answer is verified through `forward` to 1e-9 m and
+        1e-9 rad; on an arm with fewer than six axes the components it does not serve are judged against
+        0.001 deg. A joint without limits answers in (-pi, pi]. Raises InputError for what is no rigid
+        transform, and UnreachableError, saying how far off the best answer is, which component the arm does
+        not serve, or which joint limit excludes every branch.
         """
         from pathplan.arm.inverse import inverse
 
         return inverse(self, pose)
 
     def inverse_batch(self, poses: Any) -> Branches:
-        """All branches for poses (N, 4, 4), position limits left aside: see `pathplan.arm.inverse.inverse_batch`."""
+        """All branches for poses (N, 4, 4), position limits left aside: see
+        `pathplan.arm.inverse.inverse_batch`."""
         from pathplan.arm.inverse import inverse_batch
 
         return inverse_batch(self, poses)
@@ -211,7 +215,8 @@ class Arm:
         return torque(self, q, qd, qdd)
 
     def toolbox(self) -> Any:
-        """The same arm, tool included, as a new roboticstoolbox DHRobot, for notebooks. Slow to import (seconds)."""
+        """The same arm, tool included, as a new roboticstoolbox DHRobot, for notebooks. Slow to import
+        (seconds)."""
         from pathplan.arm.dynamics import toolbox
 
         return toolbox(self)
@@ -234,9 +239,9 @@ class Arm:
     @cached_property
     def numeric_chain(self) -> Any:
         """The toolbox's elementary transforms behind the numeric inverse, built once."""
-        from pathplan.arm.dynamics import toolbox
+        from pathplan.arm.dynamics import elementary_transforms
 
-        return toolbox(self).ets()
+        return elementary_transforms(self)
 
     @cached_property
     def closed_form(self) -> ClosedForm | None:
@@ -254,8 +259,8 @@ class Arm:
     def serves(self) -> frozenset[str]:
         """Components of a pose change that the arm can follow in general position.
 
-        Names from "x", "y", "z", "rotation about x", "rotation about y", "rotation about z" (base frame); all six for an
-        arm with six or more independent axes.
+        Names from "x", "y", "z", "rotation about x", "rotation about y", "rotation about z" (base frame);
+        all six for an arm with six or more independent axes.
         """
         from pathplan.arm.structure import served_components
 
@@ -265,9 +270,9 @@ class Arm:
     def length(self) -> float:
         """Characteristic length, m, always above 0: it makes angles and distances comparable.
 
-        Half of the largest span: of an arm with revolute joints before the last, half the length of the stretched-out
-        chain from the first joint to the mechanical interface, travels of prismatic joints included; of a gantry, half
-        the diagonal of its travel. 1 m where neither gives a length.
+        Half of the largest span: of an arm with revolute joints before the last, half the length of the
+        stretched-out chain from the first joint to the mechanical interface, travels of prismatic joints
+        included; of a gantry, half the diagonal of its travel. 1 m where neither gives a length.
         """
         travel = np.array(
             [

@@ -1,6 +1,7 @@
 """Ways to write a chain of joints: DH rows (standard or modified) and axes in the base frame.
 
-Denavit & Hartenberg 1955 (standard rows, as in Spong) and Craig, "Introduction to Robotics", ch. 3 (modified rows):
+Denavit & Hartenberg 1955 (standard rows, as in Spong) and Craig, "Introduction to Robotics", ch. 3
+(modified rows):
     standard   A_i = Rz(theta_i) Tz(d_i) Tx(a_i) Rx(alpha_i)
     modified   A_i = Rx(alpha_i) Tx(a_i) Rz(theta_i) Tz(d_i)      (alpha and a of the row's own joint)
 The joint value adds to theta (revolute) or d (prismatic).
@@ -14,10 +15,10 @@ from typing import Any, Literal
 
 import numpy as np
 
-from pathplan.arm.model import Array
+from pathplan.arm.model import Array, Link
 from pathplan.errors import InputError
 
-__all__ = ["DHRow", "chain_from_axes", "chain_from_dh", "rot_x", "rot_z", "translation"]
+__all__ = ["DHRow", "chain_from_axes", "chain_from_dh", "moved_link", "rot_x", "rot_z", "translation"]
 
 
 @dataclass(frozen=True)
@@ -63,8 +64,9 @@ def chain_from_dh(
 ) -> tuple[Array, Array, Array, Array]:
     """parent_from_joint (n, 4, 4), axes (n, 3), tip_from_last (4, 4), joint_from_link (n, 4, 4).
 
-    Every joint moves about or along its own z. `tip_from_last` leads to the last DH frame; `joint_from_link` from a
-    joint's moving frame to the DH frame of the same row, in which link data are stated.
+    Every joint moves about or along its own z. `tip_from_last` leads to the last DH frame;
+    `joint_from_link` from a joint's moving frame to the DH frame of the same row, in which link data are
+    stated.
     """
     n = len(rows)
     fixed, joint_from_link = np.empty((n, 4, 4)), np.empty((n, 4, 4))
@@ -86,7 +88,8 @@ def chain_from_dh(
 
 
 def chain_from_axes(origins: Any, axes: Any, base_from_flange: Any) -> tuple[Array, Array, Array]:
-    """parent_from_joint (n, 4, 4), axes (n, 3), tip_from_flange (4, 4) from axes in the base frame at q = 0."""
+    """parent_from_joint (n, 4, 4), axes (n, 3), tip_from_flange (4, 4) from axes in the base frame at q =
+    0."""
     origins, axes = np.asarray(origins, dtype=float), np.asarray(axes, dtype=float)
     if axes.ndim != 2 or axes.shape[1] != 3 or origins.shape != axes.shape:
         raise InputError(
@@ -100,3 +103,11 @@ def chain_from_axes(origins: Any, axes: Any, base_from_flange: Any) -> tuple[Arr
     tip_from_flange = np.array(base_from_flange, dtype=float)
     tip_from_flange[:3, 3] -= origins[-1]
     return fixed, axes / lengths[:, None], tip_from_flange
+
+
+def moved_link(link: Link, joint_from_link: Array) -> Link:
+    """A link stated in another frame, in the joint's moving frame."""
+    rotation = joint_from_link[:3, :3]
+    com = rotation @ link.com + joint_from_link[:3, 3]
+    inertia = rotation @ link.inertia @ rotation.T
+    return Link(link.mass, com, inertia, link.viscous, link.coulomb, link.rotor_inertia)

@@ -1,8 +1,9 @@
 """Closed-form inverses of a gantry, a SCARA and a spherical wrist, vectorised over poses.
 
-Each takes the poses base_from_tool as rotations (3, 3, N) and points (3, N) and returns joint values (n, B, N). The axes,
-not DH rows, are what they work on, after Elias & Wen 2022 (canonical subproblems). A pose out of reach gets the nearest
-answer; how far off it is, `pathplan.arm.inverse` measures through the forward kinematics.
+Each takes the poses base_from_tool as rotations (3, 3, N) and points (3, N) and returns joint values (n, B,
+N). The axes, not DH rows, are what they work on, after Elias & Wen 2022 (canonical subproblems). A pose out
+of reach gets the nearest answer; how far off it is, `pathplan.arm.inverse` measures through the forward
+kinematics.
 """
 
 from __future__ import annotations
@@ -76,7 +77,8 @@ def gantry(form: ClosedForm, rotation: Array, point: Array) -> Array:
 
 
 def scara(form: ClosedForm, rotation: Array, point: Array) -> Array:
-    """Three parallel revolute joints and a prismatic one along them, in any order: elbow left, elbow right."""
+    """Three parallel revolute joints and a prismatic one along them, in any order: elbow left, elbow
+    right."""
     r1, r2, r3, slide = form.order
     axis = form.axes[r1]
     signs = [np.sign(axis @ form.axes[i]) for i in form.order]
@@ -158,8 +160,8 @@ def _bend_of_wrist(form: ClosedForm, pointing: Array) -> tuple[float, Array]:
 def _planar(axis: Array, first: Array, second: Array, target: Array, sign: Array) -> tuple[Array, Array]:
     """Two links `first` and `second` (3,), square to `axis`, that end at `target` (3, ...).
 
-    `sign` says which way the second link is bent about the axis. Returns the turn of the first link and of the second
-    against it, both about `axis` and from where they stand at q = 0.
+    `sign` says which way the second link is bent about the axis. Returns the turn of the first link and of
+    the second against it, both about `axis` and from where they stand at q = 0.
     """
     across = target - np.einsum("i,...->i...", axis, dot(axis, target))
     reach = np.sqrt(np.sum(across * across, axis=0))

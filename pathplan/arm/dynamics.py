@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from pathplan.arm.chain import moved_link
 from pathplan.arm.mdh import ModifiedChain, modified_chain
 from pathplan.arm.model import Array, Link, Payload, Tool
 from pathplan.errors import InputError
@@ -23,9 +24,9 @@ __all__ = ["combined_link", "toolbox", "torque"]
 def torque(arm: Arm, q: Any, qd: Any, qdd: Any) -> Array:
     """Joint torques (N, n), N m or N: see `Arm.torque`.
 
-    Rigid bodies with tool and payload on the last link, gravity, rotors (gear_ratio^2 rotor_inertia qdd), viscous
-    friction (viscous qd) and Coulomb friction by the sign of qd, zero at rest (recursive Newton-Euler, Luh, Walker &
-    Paul 1980, by roboticstoolbox).
+    Rigid bodies with tool and payload on the last link, gravity, rotors (gear_ratio^2 rotor_inertia qdd),
+    viscous friction (viscous qd) and Coulomb friction by the sign of qd, zero at rest (recursive
+    Newton-Euler, Luh, Walker & Paul 1980, by roboticstoolbox).
     """
     if arm.links is None:
         raise InputError(f"{arm.name}: no dynamics: the arm file gives no link masses")
@@ -33,7 +34,9 @@ def torque(arm: Arm, q: Any, qd: Any, qdd: Any) -> Array:
     rows = np.shape(arrays[0])[0] if arrays[0].ndim == 2 else -1
     for name, value in zip(("q", "qd", "qdd"), arrays, strict=True):
         if value.shape != (rows, arm.n):
-            raise InputError(f"{name}: expected shape (N, {arm.n}), the same N for q, qd and qdd, got {value.shape}")
+            raise InputError(
+                f"{name}: expected shape (N, {arm.n}), the same N for q, qd and qdd, got {value.shape}"
+            )
         if not np.isfinite(value).all():
             raise InputError(f"{name}: expected finite numbers, got NaN or infinity")
     if rows == 0:
@@ -49,23 +52,37 @@ def torque(arm: Arm, q: Any, qd: Any, qdd: Any) -> Array:
 def build_rigid_body(arm: Arm) -> tuple[Any, bool]:
     """The toolbox robot that torque is computed with, and whether a joint held at zero stands in front.
 
-    rne of the toolbox (1.5.0) is wrong where the first joint is prismatic; a massless revolute joint held at zero in
-    front of it is the remedy.
+    rne of the toolbox (1.5.0) is wrong where the first joint is prismatic; a massless revolute joint held
+    at zero in front of it is the remedy.
     """
     from roboticstoolbox import RevoluteMDH
 
     front = arm.joints[0].kind == "prismatic"
-    lead = [RevoluteMDH(m=0.0, r=np.zeros(3), I=np.zeros(6), Jm=0.0, B=0.0, Tc=[0.0, 0.0], G=1.0)] if front else []
+    lead = (
+        [RevoluteMDH(m=0.0, r=np.zeros(3), I=np.zeros(6), Jm=0.0, B=0.0, Tc=[0.0, 0.0], G=1.0)]
+        if front
+        else []
+    )
     return _robot(arm, lead), front
 
 
 def toolbox(arm: Arm) -> Any:
     """The arm as a new roboticstoolbox DHRobot (modified DH rows found from the axes): see `Arm.toolbox`.
 
-    Base, tool, position limits and, where the arm has them, link data and friction are in it; tool and payload masses
-    are part of the last link. For an arm whose first joint is prismatic use `Arm.torque`, not the robot's own `rne`.
+    Base, tool, position limits and, where the arm has them, link data and friction are in it; tool and
+    payload masses are part of the last link. For an arm whose first joint is prismatic use `Arm.torque`,
+    not the robot's own `rne`.
     """
     return _robot(arm, [])
+
+
+def elementary_transforms(arm: Arm) -> Any:
+    """The arm as the toolbox's ETS, its joints without limits: `ik_LM` shifts joints outside them by whole
+    turns."""
+    robot = _robot(arm, [])
+    for link in robot.links:
+        link.qlim = np.array([-1e6, 1e6])
+    return robot.ets()
 
 
 def _robot(arm: Arm, lead: list[Any]) -> Any:
@@ -116,15 +133,13 @@ def _links_in(arm: Arm, chain: ModifiedChain) -> list[Link] | None:
         if i == arm.n - 1:
             link = combined_link(link, arm.tip_from_flange @ arm.tool.flange_from_tool, arm.tool, arm.payload)
         frame_from_joint = np.linalg.inv(chain.base_from_frames[i]) @ base_from_joint
-        rotation = frame_from_joint[:3, :3]
-        com = rotation @ link.com + frame_from_joint[:3, 3]
-        inertia = rotation @ link.inertia @ rotation.T
-        links.append(Link(link.mass, com, inertia, link.viscous, link.coulomb, link.rotor_inertia))
+        links.append(moved_link(link, frame_from_joint))
     return links
 
 
 def combined_link(link: Link, joint_from_tool: Array, tool: Tool, payload: Payload | None) -> Link:
-    """The last link with tool and payload fixed to it, in the joint's moving frame (parallel-axis theorem)."""
+    """The last link with tool and payload fixed to it, in the joint's moving frame (parallel-axis
+    theorem)."""
     rotation = joint_from_tool[:3, :3]
     bodies: list[tuple[float, Array, Array]] = [(link.mass, link.com, link.inertia)]
     for thing in (tool, payload) if payload is not None else (tool,):

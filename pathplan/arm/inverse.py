@@ -1,4 +1,5 @@
-"""Inverse kinematics: all branches of a batch of poses, and all answers of one pose within the position limits."""
+"""Inverse kinematics: all branches of a batch of poses, and all answers of one pose within the position
+limits."""
 
 from __future__ import annotations
 
@@ -12,7 +13,9 @@ import numpy as np
 from pathplan.arm.closed_form import branch_labels, solve_closed_form
 from pathplan.arm.kinematics import forward
 from pathplan.arm.model import Array
+from pathplan.arm.structure import COMPONENTS
 from pathplan.errors import InputError, UnreachableError
+from pathplan.units import format_quantity
 
 if TYPE_CHECKING:
     from pathplan.arm.arm import Arm
@@ -39,7 +42,8 @@ CHUNK = 512  # poses solved at a time, so that the working arrays stay in cache
 
 @dataclass(frozen=True)
 class Branches:
-    """Every branch of a batch of N poses. The branch index follows a path continuously away from singularities."""
+    """Every branch of a batch of N poses. The branch index follows a path continuously away from
+    singularities."""
 
     q: Array  # (N, B, n) rad and m, revolute joints in (-pi, pi]; the nearest answer where not valid
     valid: Any  # (N, B) bool: the tool stands at the pose, position limits left aside
@@ -53,15 +57,18 @@ class Branches:
 def inverse_batch(arm: Arm, poses: Any) -> Branches:
     """All branches for tool poses base_from_tool (N, 4, 4), rigid transforms; position limits are left aside.
 
-    Closed form for a gantry (one branch), a SCARA (2) and a spherical wrist (8); other arms by seeded numeric search,
-    one pose at a time, where the branch index has no meaning beyond one pose. What the labels mean ("up" is the side of
-    axis 1 that opposes gravity):
-    - shoulder left or right: facing from axis 1 to the wrist centre, the side on which axis 2 carries the arm; where
-      it is not set off, the side to which axis 2 points (a right-handed axis 2 that lowers the arm points left);
+    Closed form for a gantry (one branch), a SCARA (2) and a spherical wrist (8); other arms by seeded
+    numeric search (16 slots without labels, some tens of milliseconds a pose; a slot without an answer has
+    infinite errors). What the labels mean ("up" is the side of axis 1 that opposes gravity):
+    - shoulder left or right: facing from axis 1 to the wrist centre, the side on which axis 2 carries the
+    arm; where
+      it is not set off, the side to which axis 2 points (a right-handed axis 2 that lowers the arm points
+      left);
     - elbow up or down: axis 3 above or below the line from axis 2 to the wrist centre;
     - wrist positive or negative: sign of sin q5, q5 counted from the straight wrist nearest to its zero;
     - SCARA, elbow left or right: facing from axis 1 to the last revolute axis.
-    Where a pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at 0. Raises InputError for a wrong shape.
+    Where a pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at 0. Raises InputError for a
+    wrong shape.
     """
     poses = np.asarray(poses, dtype=float)
     if poses.ndim != 3 or poses.shape[1:] != (4, 4):
@@ -70,18 +77,21 @@ def inverse_batch(arm: Arm, poses: Any) -> Branches:
     if form is None:
         from pathplan.arm.numeric import all_branches
 
-        q, found = all_branches(arm, poses)
+        q, kind = all_branches(arm, poses)
         labels: tuple[Mapping[str, str], ...] = tuple({} for _ in range(q.shape[1]))
     else:
         labels = branch_labels(form.structure)
-        q, found = np.empty((len(poses), len(labels), arm.n)), np.ones((len(poses), len(labels)), dtype=bool)
+        q, kind = np.empty((len(poses), len(labels), arm.n)), np.ones((len(poses), len(labels)))
         for start in range(0, len(poses), CHUNK):
             part = slice(start, start + CHUNK)
             rotation = np.ascontiguousarray(poses[part, :3, :3].transpose(1, 2, 0))
             q[part] = solve_closed_form(form, rotation, poses[part, :3, 3].T).transpose(2, 1, 0)
     position_error, angle_error = pose_errors(forward(arm, q), poses[:, None])
+    position_error[kind < 0] = angle_error[kind < 0] = np.inf
     angle_tolerance = ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE
-    valid = found & (position_error <= POSITION_TOLERANCE) & (angle_error <= angle_tolerance)
+    valid = (position_error <= POSITION_TOLERANCE) & (angle_error <= angle_tolerance)
+    for array in (q, valid, position_error, angle_error):
+        array.flags.writeable = False
     return Branches(q, valid, labels, position_error, angle_error)
 
 
@@ -98,7 +108,8 @@ def pose_errors(reached: Array, asked: Array) -> tuple[Array, Array]:
 def rigid_pose(pose: Any) -> Array:
     """A 4x4 rigid transform from an array or a spatialmath SE3, its rotation made exactly orthonormal.
 
-    Raises InputError for another shape, numbers that are not finite, or what is more than 1e-6 off a rigid transform.
+    Raises InputError for another shape, numbers that are not finite, or what is more than 1e-6 off a rigid
+    transform.
     """
     matrix = np.array(getattr(pose, "A", pose), dtype=float)
     if matrix.shape != (4, 4):
@@ -143,7 +154,7 @@ def _turns(arm: Arm, q: Array) -> list[Array]:
     for value, joint in zip(q, arm.joints, strict=True):
         low, high = joint.position
         if joint.kind == "prismatic" or (low == -np.inf and high == np.inf):
-            turns = [value]
+            turns = [float(value)]
         elif np.isfinite([low, high]).all():
             first = np.ceil((low - LIMIT_TOLERANCE - value) / (2 * np.pi))
             last = np.floor((high + LIMIT_TOLERANCE - value) / (2 * np.pi))
@@ -182,7 +193,8 @@ def _verified(arm: Arm, answers: list[Array], pose: Array) -> list[Array]:
 
 
 def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
-    """Why no branch stands at a pose: a component that the arm does not serve, or how far off the best one is."""
+    """Why no branch stands at a pose: a component that the arm does not serve, or how far off the best one
+    is."""
     best = int(np.argmin(np.hypot(branches.position_error[0], arm.length * branches.angle_error[0])))
     q = branches.q[0, best]
     data = {
@@ -192,19 +204,23 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
         "position_error": float(branches.position_error[0, best]),
         "angle_error": float(branches.angle_error[0, best]),
     }
-    tilt = _tilt(arm, q, pose) if arm.n < 6 and data["angle_error"] > TILT_TOLERANCE else ""
-    if tilt:
+    # A closed form with four axes serves position and turn exactly: what is left of the angle is tilt.
+    if arm.n < 6 and arm.closed_form is not None and (tilt := _tilt(arm, q, pose)):
         return UnreachableError(
             f"{arm.name}: the pose is tilted {tilt}; {arm.name} serves {_served(arm)}; tolerance 0.001 deg",
             data=data,
         )
     off = []
     if data["position_error"] > POSITION_TOLERANCE:
-        off.append(f"{data['position_error'] * 1e3:.4g} mm")
+        off.append(format_quantity(data["position_error"], "length"))
     if data["angle_error"] > (ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE):
-        off.append(f"{np.rad2deg(data['angle_error']):.4g} deg")
+        off.append(format_quantity(data["angle_error"], "angle"))
+    why = (
+        f" (an arm with {arm.n} axes can't serve every pose)" if arm.n < 6 and arm.closed_form is None else ""
+    )
     return UnreachableError(
-        f"{arm.name}: the pose is out of reach, the best answer is off by {' and '.join(off)}", data=data
+        f"{arm.name}: the pose is out of reach{why}: the nearest answer is off by {' and '.join(off)}",
+        data=data,
     )
 
 
@@ -220,9 +236,9 @@ def _tilt(arm: Arm, q: Array, pose: Array) -> str:
     else:  # a half turn: its axis is a column of (R + 1) / 2
         columns = (relative + np.eye(3)) / 2.0
         vector = np.pi * columns[:, np.argmax(np.diag(columns))]
-        vector /= max(np.linalg.norm(vector) / np.pi, 1e-12)
+        vector = vector * (np.pi / max(float(np.linalg.norm(vector)), 1e-12))
     parts = [
-        (abs(value), f"{np.rad2deg(abs(value)):.4g} deg about {name}")
+        (abs(value), f"{format_quantity(abs(value), 'angle')} about {name}")
         for name, value in zip("xyz", vector, strict=True)
         if f"rotation about {name}" not in arm.serves and abs(value) > TILT_TOLERANCE / 2.0
     ]
@@ -231,12 +247,10 @@ def _tilt(arm: Arm, q: Array, pose: Array) -> str:
 
 def _served(arm: Arm) -> str:
     """The served components in words."""
-    from pathplan.arm.structure import COMPONENTS
-
     names = [name for name in COMPONENTS if name in arm.serves]
-    if not names:
-        return "no component by itself"
-    return names[0] if len(names) == 1 else ", ".join(names[:-1]) + " and " + names[-1]
+    turning = arm.closed_form is not None and not any(name.startswith("rotation") for name in names)
+    names += ["rotation about its turning axis"] * turning
+    return ", ".join(names[:-1]) + " and " + names[-1]
 
 
 def _excluded(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
@@ -245,7 +259,7 @@ def _excluded(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
     for q, valid, label in zip(branches.q[0], branches.valid[0], branches.labels, strict=True):
         if valid:
             misses.append(
-                _worst_miss(arm, q) + (", ".join(f"{key} {word}" for key, word in label.items()), q)
+                (*_worst_miss(arm, q), ", ".join(f"{key} {word}" for key, word in label.items()), q)
             )
     misses.sort(key=lambda miss: miss[0])
     beyond, joint, text, _, q = misses[0]
@@ -258,13 +272,13 @@ def _excluded(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
 
 
 def _worst_miss(arm: Arm, q: Array) -> tuple[float, str, str]:
-    """(how far beyond, joint or limit name, words) of the limit that an answer breaks most, nearest turn taken."""
+    """(how far beyond, joint or limit name, words) of the limit that an answer breaks most, nearest turn."""
     worst = (-1.0, "", "")
     nearest = q.copy()
     for i, joint in enumerate(arm.joints):
         low, high = joint.position
-        values = [q[i]] if joint.kind == "prismatic" else [q[i] - 2 * np.pi, q[i], q[i] + 2 * np.pi]
-        nearest[i] = min(values, key=lambda value: max(low - value, value - high))
+        if joint.kind == "revolute" and np.isfinite(low) and np.isfinite(high):
+            nearest[i] += 2 * np.pi * np.round(((low + high) / 2 - q[i]) / (2 * np.pi))
     values = arm.limits.matrix @ nearest
     for name, row, value, (low, high) in zip(
         arm.limits.names, arm.limits.matrix, values, arm.limits.position, strict=True
@@ -272,7 +286,7 @@ def _worst_miss(arm: Arm, q: Array) -> tuple[float, str, str]:
         beyond = float(max(low - value, value - high))
         if beyond > worst[0]:
             slides = all(joint.kind == "prismatic" for joint, c in zip(arm.joints, row, strict=True) if c)
-            unit, size = ("mm", 1e3) if slides else ("deg", np.rad2deg(1.0))
-            limit = low if value < low else high
-            worst = (beyond, name, f"{name} at {value * size:.4g} {unit}, limit {limit * size:.4g} {unit}")
+            dimension = "length" if slides else "angle"
+            limit = format_quantity(low if value < low else high, dimension)
+            worst = (beyond, name, f"{name} at {format_quantity(value, dimension)}, limit {limit}")
     return worst

@@ -1,10 +1,12 @@
 """Forward kinematics, Jacobian and joint derivatives over a batch of configurations.
 
-The chain is walked once for the whole batch. Every joint frame is turned by a constant rotation so that its axis is
-its own z: a fixed transform is then one small matrix product over the batch and a joint motion only mixes two columns.
-Internally the batch is the last, contiguous index: rotations are (3 columns, 3 rows, N), points (3, N).
+The chain is walked once for the whole batch. Every joint frame is turned by a constant rotation so that its
+axis is its own z: a fixed transform is then one small matrix product over the batch and a joint motion only
+mixes two columns. Internally the batch is the last, contiguous index: rotations are (3 columns, 3 rows, N),
+points (3, N).
 
-Source of the derivative formulas: Murray, Li & Sastry 1994, ch. 3 (product of exponentials, spatial Jacobian, adjoint).
+Source of the derivative formulas: Murray, Li & Sastry 1994, ch. 3 (product of exponentials, spatial
+Jacobian, adjoint).
 """
 
 from __future__ import annotations
@@ -197,7 +199,8 @@ def _cross(a: Array, b: Array) -> Array:
 def spatial_axes(arm: Arm, q: Array) -> tuple[Array, Array]:
     """Spatial Jacobian columns (n, 6, N) and tool position (3, N) for q (N, n).
 
-    A column holds (v_o, w): the velocity of the point of the moving body at the base origin, and the turning rate.
+    A column holds (v_o, w): the velocity of the point of the moving body at the base origin, and the
+    turning rate.
     """
     columns = np.zeros((arm.n, 6, q.shape[0]))
     axes_at: list[tuple[Array, Array]] = []
@@ -221,15 +224,17 @@ def _ad(twist: Array, column: Array) -> Array:
 def joint_derivatives(arm: Arm, q: Array, twists: Array) -> tuple[Array, Array]:
     """Joint derivatives q', q'', q''' that follow a tool path, and what they can't follow.
 
-    Parameters: q (N, n) on the path; twists (N, 3, 6) the spatial twist of the tool in the base frame and its first two
-    derivatives with respect to the path parameter: (v_o, w), v_o = p' - w x p.
-    Returns: derivatives (N, 3, n); residual (N, 3), the norm of what is left of the k-th equation, taken at the tool
-    centre point, angular rows scaled by `arm.length` (m per parameter^k). Fewer than six axes: least squares in that
-    norm; more than six: least joint norm in which prismatic joints count by `arm.length`. At a singularity the answer is
-    the least-squares one of least norm, and the residual tells.
+    Parameters: q (N, n) on the path; twists (N, 3, 6) the spatial twist of the tool in the base frame and
+    its first two derivatives with respect to the path parameter: (v_o, w), v_o = p' - w x p.
+    Returns: derivatives (N, 3, n); residual (N, 3), the norm of what is left of the k-th equation, taken at
+    the tool centre point, angular rows scaled by `arm.length` (m per parameter^k). Fewer than six axes:
+    least squares in that norm; more than six: least joint norm in which prismatic joints count by
+    `arm.length`. At a singularity the answer is the least-squares one of least norm, and the residual
+    tells.
 
-    With S the spatial Jacobian, V = S q', V' = S q'' + S' q', V'' = S q''' + 2 S' q'' + S'' q', where a column changes as
-    S_i' = ad(V_{i-1}) S_i and V_{i-1} is the partial sum of S_j q'_j over the joints before i.
+    With S the spatial Jacobian, V = S q', V' = S q'' + S' q', V'' = S q''' + 2 S' q'' + S'' q', where a
+    column changes as S_i' = ad(V_{i-1}) S_i and V_{i-1} is the partial sum of S_j q'_j over the joints
+    before i.
     """
     q, _ = checked(q, arm.n)
     twists = np.asarray(twists, dtype=float)
@@ -295,15 +300,16 @@ class _solver:
         if matrix.shape[-1] == 6:
             try:
                 inverse = np.linalg.inv(matrix)
-                # A nearly singular matrix inverts to rounding noise: there the pseudo-inverse is the honest answer.
+                # A nearly singular matrix inverts to rounding noise: there the pseudo-inverse is the honest
+                # answer.
                 size = np.abs(inverse).max(axis=(1, 2)) * np.abs(matrix).max(axis=(1, 2))
                 poor = ~(size < 1e12)
                 if poor.any():
                     inverse[poor] = np.linalg.pinv(matrix[poor], rcond=1e-12)
-                return inverse
+                return np.asarray(inverse)
             except np.linalg.LinAlgError:
                 pass  # one matrix of the batch is exactly singular
-        return np.linalg.pinv(matrix, rcond=1e-12)
+        return np.asarray(np.linalg.pinv(matrix, rcond=1e-12))
 
     def __call__(self, rhs: Array) -> Array:
         return np.einsum("mij,mj->mi", self.inverse, rhs) * self.scale
@@ -312,11 +318,11 @@ class _solver:
 def smallest_singular_value(arm: Arm, q: Array) -> Array:
     """Distance from singularity (N,), dimensionless, for q (N, n).
 
-    The smallest singular value (the n-th for fewer than six axes) of the Jacobian at the tool centre point, its linear
-    rows divided by `arm.length` and its prismatic columns multiplied by it.
+    The smallest singular value (the n-th for fewer than six axes) of the Jacobian at the tool centre point,
+    its linear rows divided by `arm.length` and its prismatic columns multiplied by it.
     """
     matrix = jacobian(arm, checked(q, arm.n)[0])
     matrix[:, :3] /= arm.length
     prismatic = [i for i, joint in enumerate(arm.joints) if joint.kind == "prismatic"]
     matrix[:, :, prismatic] *= arm.length
-    return np.linalg.svd(matrix, compute_uv=False)[:, min(arm.n, 6) - 1]
+    return np.asarray(np.linalg.svd(matrix, compute_uv=False)[:, min(arm.n, 6) - 1])

@@ -16,22 +16,18 @@
     velocity = 400                     # deg/s or mm/s, symmetric; then deg/s^2, deg/s^3
     acceleration = 1500
     jerk = 15000
-    # where known: torque, continuous_torque, gear_ratio, encoder_counts, and for all joints or none: mass (of the
+    # where known: torque, continuous_torque, gear_ratio, encoder_counts, and for all joints or none: mass
+    # (of the
     # link that the joint moves), com, inertia, viscous_friction, coulomb_friction, rotor_inertia
-    [tools.cup]                        # xyz and rpy or quat of the tool centre point in the mechanical interface
-    xyz = [0, 0, 60]
-    mass = "0.4 kg"                    # com and inertia in the tool frame; speed and acceleration: caps of the tool
-    [payloads.tile]
-    mass = "1.2 kg"
-    [positions]
-    home = [0, 0, 0, 0]                # joint values in deg or mm; home is required
-    [[limit]]                          # a coupled drive: limits on a sum of joint positions
-    name = "screw nut"
-    row = [0, 0, 18, 1]                # deg (or mm) of the row per deg or mm of each joint
-    velocity = 2000
+    [tools.cup]                        # xyz and rpy or quat of the tool centre point in the mechanical
+    interface xyz = [0, 0, 60] mass = "0.4 kg"                    # com and inertia in the tool frame; speed
+    and acceleration: caps of the tool [payloads.tile] mass = "1.2 kg" [positions] home = [0, 0, 0, 0]
+    # joint values in deg or mm; home is required [[limit]]                          # a coupled drive:
+    limits on a sum of joint positions name = "screw nut" row = [0, 0, 18, 1]                # deg (or mm)
+    of the row per deg or mm of each joint velocity = 2000
 
-Link data (com, inertia about the com) are stated in the DH frame of the row or, with axes, in a frame at the joint's
-origin that is parallel to the arm's own base at zero.
+Link data (com, inertia about the com) are stated in the DH frame of the row or, with axes, in a frame at
+the joint's origin that is parallel to the arm's own base at zero.
 """
 
 from __future__ import annotations
@@ -44,7 +40,7 @@ from typing import Any
 import numpy as np
 
 from pathplan.arm.arm import GRAVITY, Arm, joint_rows, read_only
-from pathplan.arm.chain import DHRow, chain_from_axes, chain_from_dh
+from pathplan.arm.chain import DHRow, chain_from_axes, chain_from_dh, moved_link
 from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool
 from pathplan.errors import InputError
 from pathplan.tomlfile import FARTHEST, Problems, Table, read_toml
@@ -53,7 +49,11 @@ from pathplan.units import DIMENSIONS, format_quantity, joint_dimension, parse_q
 __all__ = ["load_arm"]
 
 MOST_JOINTS = 32
-SMALLEST, LARGEST = 1e-6, 1e9  # SI: limits above zero beyond these are slips, and would spoil what comes after
+MOST_TURNS = 20_000  # every answer of the inverse comes in all its turn equivalents
+SMALLEST, LARGEST = (
+    1e-6,
+    1e9,
+)  # SI: limits above zero beyond these are slips, and would spoil what comes after
 HEAVIEST = 1e6  # kg, and kg m^2
 LINK_KEYS = ("mass", "com", "inertia", "viscous_friction", "coulomb_friction", "rotor_inertia")
 
@@ -62,9 +62,10 @@ def load_arm(file: str | Path) -> Arm:
     """Read an arm file (TOML, see the head of this module); the arm carries no tool and no payload.
 
     Raises:
-        InputError: missing file, directory, not TOML, an unknown or missing key, a wrong unit, limits with low
-            above high or not above zero, a quaternion not of length 1, a negative mass, an inertia that no body
-            has. Several problems are gathered: the first is the message, all are in `problems`.
+        InputError: missing file, directory, not TOML, an unknown or missing key, a wrong unit, limits with
+        low
+            above high or not above zero, a quaternion not of length 1, a negative mass, an inertia that no
+            body has. Several problems are gathered: the first is the message, all are in `problems`.
     """
     path = Path(file)
     data, digest = read_toml(path)
@@ -99,7 +100,7 @@ def load_arm(file: str | Path) -> Arm:
 
     joints = tuple(row.joint for row in rows)
     with problems.gather():
-        _check_names(top, joints)
+        _check_joints(top, joints)
     with problems.gather():
         links = _links(top, rows)
     with problems.gather():
@@ -117,7 +118,7 @@ def load_arm(file: str | Path) -> Arm:
         fixed, unit_axes, tip_from_last, joint_from_link = chain_from_dh(dh_rows, convention)
         tip_from_flange = tip_from_last @ interface
         if links is not None:
-            links = [_moved(link, frame) for link, frame in zip(links, joint_from_link, strict=True)]
+            links = [moved_link(link, frame) for link, frame in zip(links, joint_from_link, strict=True)]
     fixed[0] = base @ fixed[0]
     return Arm(
         name,
@@ -214,7 +215,9 @@ def _dh_row(table: Table) -> DHRow:
     )
     for key, value in (("a", row.a), ("d", row.d), ("alpha", row.alpha), ("theta", row.theta)):
         if abs(value) > FARTHEST:
-            raise table.error(key, f"expected at most {FARTHEST:g} m or rad, got {toml_text(table.data[key])}")
+            raise table.error(
+                key, f"expected at most {FARTHEST:g} m or rad, got {toml_text(table.data[key])}"
+            )
     table.finish()
     return row
 
@@ -224,7 +227,8 @@ def _limit(table: Table, key: str, dimension: str, *default: None) -> float | No
     value: float | None = table.quantity(key, dimension, *default, positive=True)
     if value is not None and not SMALLEST <= value <= LARGEST:
         raise table.error(
-            key, f"expected {DIMENSIONS[dimension].expected}, got {toml_text(table.data[key])}, no machine has that"
+            key,
+            f"expected {DIMENSIONS[dimension].expected}, got {toml_text(table.data[key])}: no machine has it",
         )
     return value
 
@@ -232,7 +236,9 @@ def _limit(table: Table, key: str, dimension: str, *default: None) -> float | No
 def _gear_ratio(table: Table) -> float:
     ratio: float = table.quantity("gear_ratio", "number", 1.0)
     if not 1e-3 <= abs(ratio) <= 1e6:
-        raise table.error("gear_ratio", f"expected a ratio such as 100, got {toml_text(table.data['gear_ratio'])}")
+        raise table.error(
+            "gear_ratio", f"expected a ratio such as 100, got {toml_text(table.data['gear_ratio'])}"
+        )
     return ratio
 
 
@@ -262,13 +268,16 @@ def _ordered(table: Table, key: str, dimension: str) -> tuple[float, float]:
 def _link(table: Table, kind: str) -> Link:
     mass, com, inertia = _body(table)
     viscous = table.quantity(
-        "viscous_friction", "angular_friction" if kind == "revolute" else "linear_friction", 0.0, not_negative=True
+        "viscous_friction",
+        "angular_friction" if kind == "revolute" else "linear_friction",
+        0.0,
+        not_negative=True,
     )
     rotor = table.quantity("rotor_inertia", "inertia", 0.0, not_negative=True)
     for key, value in (("viscous_friction", viscous), ("rotor_inertia", rotor)):
         if value > HEAVIEST:
             raise table.error(key, f"expected less, got {toml_text(table.data[key])}")
-    return Link(mass, com, inertia, viscous, _coulomb(table, joint_dimension(kind, "torque")), rotor)  # type: ignore[arg-type]
+    return Link(mass, com, inertia, viscous, _coulomb(table, joint_dimension(kind, "torque")), rotor)
 
 
 def _coulomb(table: Table, dimension: str) -> tuple[float, float]:
@@ -276,7 +285,9 @@ def _coulomb(table: Table, dimension: str) -> tuple[float, float]:
     value = table.take("coulomb_friction", 0.0)
     pair = value if isinstance(value, list) else [value, value]
     if len(pair) != 2:
-        raise table.error("coulomb_friction", f"expected one value or [positive, negative], got {toml_text(value)}")
+        raise table.error(
+            "coulomb_friction", f"expected one value or [positive, negative], got {toml_text(value)}"
+        )
     result = tuple(parse_quantity(item, dimension, table.at("coulomb_friction")) for item in pair)
     if not 0.0 <= min(result) <= max(result) <= LARGEST:
         raise table.error("coulomb_friction", f"expected values of zero or more, got {toml_text(value)}")
@@ -310,7 +321,7 @@ def _inertia(table: Table) -> Array:
         principal = ", ".join(f"{moment:.4g}" for moment in moments)
         raise table.error(
             "inertia",
-            f"no body has principal moments {principal} kg m^2: each must be at most the sum of the other two",
+            f"no body has principal moments {principal} kg m^2, one is above the sum of the other two",
         )
     return read_only(matrix)
 
@@ -330,11 +341,23 @@ def _payload(name: str, table: Table) -> Payload:
     return payload
 
 
-def _check_names(top: Table, joints: Sequence[Joint]) -> None:
+def _check_joints(top: Table, joints: Sequence[Joint]) -> None:
     names = [joint.name for joint in joints]
     for i, name in enumerate(names):
         if name in names[:i]:
             raise InputError.at(top.file, f"joint[{i + 1}].name", f'"{name}" is taken already')
+    turns = [
+        max(1.0, (joint.position[1] - joint.position[0]) / (2.0 * np.pi))
+        for joint in joints
+        if joint.kind == "revolute" and np.isfinite(joint.position[0])
+    ]
+    if np.prod(turns) > MOST_TURNS:
+        raise InputError.at(
+            top.file,
+            "joint",
+            f"position limits allow {np.prod(turns):.3g} combinations of whole turns, at most {MOST_TURNS}; "
+            'a joint that turns freely has position = "unlimited"',
+        )
 
 
 def _links(top: Table, rows: Sequence[_JointRow]) -> list[Link] | None:
@@ -385,7 +408,9 @@ def _limits(top: Table, joints: Sequence[Joint], problems: Problems) -> Limits:
             given = {key: _row_bound(table, key, kind) for key in _BOUNDS}
             table.finish()
             if all(np.isinf(bound).all() for bound in given.values()):
-                raise InputError.at(table.where, "limits nothing, expected position, velocity, acceleration or jerk")
+                raise InputError.at(
+                    table.where, "limits nothing, expected position, velocity, acceleration or jerk"
+                )
             names.append(name)
             rows.append(row[None])
             for key, bound in given.items():
@@ -403,7 +428,9 @@ def _row_kind(table: Table, joints: Sequence[Joint]) -> str:
     coefficients = table.vector("row", len(joints), "number")
     kinds = {joint.kind for joint, c in zip(joints, coefficients, strict=True) if c != 0.0}
     if not kinds or np.abs(coefficients).max() > 1e6:
-        raise table.error("row", f"expected a coefficient for each joint, not all zero, got {toml_text(table.data['row'])}")
+        raise table.error(
+            "row", f"expected a coefficient for each joint, not all zero, got {toml_text(table.data['row'])}"
+        )
     if table.has("kind") or len(kinds) > 1:
         kind: str = table.choice("kind", ("revolute", "prismatic"))
         return kind
@@ -427,15 +454,9 @@ def _row_bound(table: Table, key: Any, kind: str) -> Array:
     if isinstance(table.data[key], list):
         low, high = table.vector(key, 2, dimension)
         if not (-LARGEST <= low <= -SMALLEST and SMALLEST <= high <= LARGEST):
-            raise table.error(key, f"expected [low below zero, high above zero], got {toml_text(table.data[key])}")
+            raise table.error(
+                key, f"expected [low below zero, high above zero], got {toml_text(table.data[key])}"
+            )
         return np.array([[low, high]])
     limit = _limit(table, key, dimension)
     return np.array([[-1.0, 1.0]]) * np.array(limit)
-
-
-def _moved(link: Link, joint_from_link: Array) -> Link:
-    """A link stated in another frame, in the joint's moving frame."""
-    rotation = joint_from_link[:3, :3]
-    com = joint_from_link[:3, :3] @ link.com + joint_from_link[:3, 3]
-    inertia = rotation @ link.inertia @ rotation.T
-    return Link(link.mass, read_only(com), read_only(inertia), link.viscous, link.coulomb, link.rotor_inertia)

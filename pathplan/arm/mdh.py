@@ -1,11 +1,13 @@
 """Modified DH rows of any chain, found from its axes at q = 0, so that one way leads to the toolbox.
 
-Frames after Craig, "Introduction to Robotics", ch. 3: z along the axis, x along the common normal to the next axis.
+Frames after Craig, "Introduction to Robotics", ch. 3: z along the axis, x along the common normal to the
+next axis.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -53,7 +55,7 @@ def modified_chain(arm: Arm) -> ModifiedChain:
         frames[i, :3, 0], frames[i, :3, 1], frames[i, :3, 2] = x, np.cross(axis, x), axis
         frames[i, :3, 3] = origin
     rows = [DHRow()]
-    for before, after in zip(frames[:-1], frames[1:], strict=True):
+    for before, after in pairwise(frames):
         rows.append(_row(np.linalg.inv(before) @ after))
     return ModifiedChain(tuple(rows), frames[0], np.linalg.inv(frames[-1]) @ zero_pose, frames)
 
@@ -64,8 +66,11 @@ def _any_normal(axis: Array) -> Array:
     return np.asarray(normal / np.linalg.norm(normal))
 
 
-def _common_normal(origin: Array, axis: Array, point: Array, next_axis: Array, x: Array) -> tuple[Array, Array]:
-    """Foot on this axis and unit direction of the common normal to the next axis; `x` where the two are one line."""
+def _common_normal(
+    origin: Array, axis: Array, point: Array, next_axis: Array, x: Array
+) -> tuple[Array, Array]:
+    """Foot on this axis and unit direction of the common normal to the next axis; `x` where the two are one
+    line."""
     across = np.cross(axis, next_axis)
     sine = float(np.linalg.norm(across))
     apart = point - origin

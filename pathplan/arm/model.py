@@ -50,7 +50,8 @@ class Link:
 
 @dataclass(frozen=True)
 class Tool:
-    """A named tool: where its tool centre point lies and what it weighs. `com` and `inertia` in the tool frame."""
+    """A named tool: where its tool centre point lies and what it weighs. `com` and `inertia` in the tool
+    frame."""
 
     name: str
     flange_from_tool: Array  # (4, 4)
@@ -73,7 +74,8 @@ class Payload:
 
 @dataclass(frozen=True)
 class Limits:
-    """Named two-sided rows over joint coordinates: low <= matrix @ x <= high for position and its derivatives.
+    """Named two-sided rows over joint coordinates: low <= matrix @ x <= high for position and its
+    derivatives.
 
     The plain per-joint limits are identity rows named like the joints. A row that has no limit of some kind
     carries -inf and inf there. All arrays (R, 2) hold low, high.

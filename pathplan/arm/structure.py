@@ -1,8 +1,10 @@
-"""What structure the axes make, judged from their geometry at q = 0 and never from a name or the form of a file."""
+"""What structure the axes make, judged from their geometry at q = 0 and never from a name or the form of a
+file."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -60,9 +62,7 @@ def recognise(arm: Arm) -> ClosedForm | None:
     if len(prismatic) == 3 and len(revolute) == 1 and abs(np.linalg.det(axes[prismatic])) > 1e-3:
         structure, order, main = "gantry", (*prismatic, *revolute), revolute[0]
     elif len(revolute) == 3 and len(prismatic) == 1 and all(_parallel(axes[0], axis) for axis in axes[1:]):
-        links = [
-            _across(points[j] - points[i], axes[0]) for i, j in zip(revolute[:-1], revolute[1:], strict=True)
-        ]
+        links = [_across(points[j] - points[i], axes[0]) for i, j in pairwise(revolute)]
         if min(np.linalg.norm(link) for link in links) < SHORT:
             return None
         structure, order, main = "scara", (*revolute, *prismatic), revolute[0]
@@ -80,7 +80,8 @@ def recognise(arm: Arm) -> ClosedForm | None:
 
 
 def _wrist_centre(points: Array, axes: Array) -> Array | None:
-    """Where the last three of six revolute axes meet if the arm also has parallel second and third axes, else None."""
+    """Where the last three of six revolute axes meet if the arm also has parallel second and third axes,
+    else None."""
     meets = meeting_point(points[3:], axes[3:])
     if meets is None or not _parallel(axes[1], axes[2]) or _parallel(axes[0], axes[1]):
         return None
@@ -91,7 +92,8 @@ def _wrist_centre(points: Array, axes: Array) -> Array | None:
 
 
 def meeting_point(points: Array, axes: Array) -> Array | None:
-    """(3,) the point nearest to all axes (k, 3) through points (k, 3), None if it does not lie on each of them."""
+    """(3,) the point nearest to all axes (k, 3) through points (k, 3), None if it does not lie on each of
+    them."""
     across = np.eye(3) - axes[:, :, None] * axes[:, None, :]
     moment = np.einsum("kij,kj->i", across, points)
     total = across.sum(axis=0)
@@ -112,7 +114,8 @@ def _across(vector: Array, axis: Array) -> Array:
 
 
 def served_components(arm: Arm) -> frozenset[str]:
-    """See `Arm.serves`: the twist components that lie in the range of the Jacobian at configurations in general position."""
+    """See `Arm.serves`: the twist components that lie in the range of the Jacobian at configurations in
+    general position."""
     generator = np.random.default_rng(7)
     served = set(COMPONENTS)
     for jac in jacobian(arm, generator.uniform(-1.0, 1.0, (4, arm.n))):

@@ -1,8 +1,9 @@
 """Canonical subproblems of inverse kinematics, least-squares forms, over a batch.
 
-Paden 1986 and Kahan stated them; the least-squares forms and the names SP1, SP4 are those of Elias & Wen, "Canonical
-Subproblems for Robot Inverse Kinematics", arXiv 2211.05737 (2022). Where there is no exact answer each gives the one that
-comes nearest. Vectors are (3, ...) with the batch behind; axes are constant unit vectors (3,).
+Paden 1986 and Kahan stated them; the least-squares forms and the names SP1, SP4 are those of Elias & Wen,
+"Canonical Subproblems for Robot Inverse Kinematics", arXiv 2211.05737 (2022). Where there is no exact
+answer each gives the one that comes nearest. Vectors are (3, ...) with the batch behind; axes are constant
+unit vectors (3,).
 """
 
 from __future__ import annotations
@@ -42,8 +43,8 @@ def rotate(axis: Array, angle: Array, vector: Array) -> Array:
 def rotation_about(axis: Array, rotation: Array) -> Array:
     """Angle (...) about a constant axis that comes nearest to rotations (3, 3, ...) (rows, columns first).
 
-    Maximises the trace of rotation^T Rot(axis, angle): exact where the rotation is about that axis. 0 where every angle
-    comes equally near (a half turn about a line square to the axis).
+    Maximises the trace of rotation^T Rot(axis, angle): exact where the rotation is about that axis. 0 where
+    every angle comes equally near (a half turn about a line square to the axis).
     """
     skew = np.stack(
         [rotation[2, 1] - rotation[1, 2], rotation[0, 2] - rotation[2, 0], rotation[1, 0] - rotation[0, 1]]
@@ -54,7 +55,8 @@ def rotation_about(axis: Array, rotation: Array) -> Array:
 
 
 def angle_about(axis: Array, start: Array, end: Array) -> Array:
-    """SP1: angle (...) about `axis` that brings vectors `start` nearest to `end`; 0 where either lies along the axis."""
+    """SP1: angle (...) about `axis` that brings vectors `start` nearest to `end`; 0 where either lies along
+    the axis."""
     turned = cross(axis, start)
     sine = turned[0] * end[0] + turned[1] * end[1] + turned[2] * end[2]
     cosine = start[0] * end[0] + start[1] * end[1] + start[2] * end[2] - dot(axis, start) * dot(axis, end)
@@ -64,8 +66,9 @@ def angle_about(axis: Array, start: Array, end: Array) -> Array:
 def two_angles(axis: Array, direction: Array, vector: Array, distance: Array) -> tuple[Array, Array]:
     """SP4: angles about `axis` after which direction . Rot(axis, angle) vector = distance.
 
-    `direction` is a constant vector that is not along the axis, `vector` (3, ...), `distance` (...). Returns (middle, half): the
-    two answers are middle + half and middle - half, half in [0, pi]. Nearest answer (half 0 or pi) where none is exact.
+    `direction` is a constant vector that is not along the axis, `vector` (3, ...), `distance` (...).
+    Returns (middle, half): the two answers are middle + half and middle - half, half in [0, pi]. Nearest
+    answer (half 0 or pi) where none is exact.
     """
     across = direction - axis * float(axis @ direction)
     length = float(np.linalg.norm(across))
@@ -78,7 +81,8 @@ def two_angles(axis: Array, direction: Array, vector: Array, distance: Array) ->
 
 
 def two_link(first: float, second: float, reach: Array) -> Array:
-    """Angle (...) in [0, pi] between two links, straight at 0, whose ends are `reach` apart; nearest if out of reach."""
+    """Angle (...) in [0, pi] between two links, straight at 0, whose ends are `reach` apart; nearest if out
+    of reach."""
     inner, outer = abs(first - second), first + second
     sine = np.sqrt(np.maximum((outer - reach) * (reach - inner), 0.0) * (outer + reach) * (reach + inner))
     return np.arctan2(sine, reach * reach - first * first - second * second)
