@@ -1,0 +1,240 @@
+"""Which branch the arm takes where, over the whole task: the shortest in time by the velocity limits.
+
+Dynamic programming over the targets (Bellman 1957). A line or arc leads from each state to the one it arrives in by
+following it; a joint step from any state to any. The cost of a motion is the time its fastest-asked joint needs at
+its velocity limit, summed along lines and arcs, so it does not count accelerating and stopping.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Set
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm import Arm
+from pathplan.errors import PathplanError
+from pathplan.path.cartesian import CartesianPath
+from pathplan.path.geometry import Index
+from pathplan.path.joint import Array
+from pathplan.path.refusals import no_branch_follows, no_state_asked
+from pathplan.path.states import LIMIT_SLACK, States, endless_joints, expand, judged_rows, matching
+from pathplan.path.tracking import Tracks, turns_between
+
+__all__ = ["Choice", "Routes", "candidate_states", "choose", "routes"]
+
+SAME_STATE = 1e-6  # rad or m: a track that ends nearer than this to a state ends in it
+
+
+@dataclass(frozen=True, eq=False)
+class Routes:
+    """Where each state gets to along the line or arc that leaves it; rows only for states with such a leg.
+
+    `row` (S,): the row of a state, -1 if a joint step leaves it. Rows: `slot`, the track followed (-1: none starts
+    there); `turns` (n,) to add to the track; `end` (n,) where it arrives; `free`: it follows to the end within the limits; `time`.
+    """
+
+    row: Index
+    slot: Index
+    turns: Array
+    end: Array
+    free: NDArray[np.bool_]
+    time: Array
+
+
+@dataclass(frozen=True, eq=False)
+class Choice:
+    """The joint vectors at the targets and the tracks between them; m legs."""
+
+    q: Array  # (m + 1, n), turns of endless joints resolved
+    state: Index  # (m + 1,) rows of the candidate states
+    slot: Index  # (m,) track of a cartesian leg, else -1
+    time: float  # s, by the velocity limits
+
+
+def candidate_states(path: CartesianPath, tool_from_own: Array) -> States:
+    """All states at the start and after each leg. `tool_from_own` (m, 4, 4) of each leg's tool.
+
+    Raises UnreachableError, naming the step, for a target out of reach, outside the limits, or not to be had in the
+    configuration asked.
+    """
+    arm, legs = path.task.arm, path.legs
+    posed = np.array([i for i, leg in enumerate(legs) if _given_joints(path, i) is None], dtype=np.intp)
+    poses = np.array([leg.end for leg in legs])[posed] @ tool_from_own[posed]
+    target, branch, q = np.zeros(0, dtype=np.intp), np.zeros(0, dtype=np.intp), np.zeros((0, arm.n))
+    if len(posed):
+        branches = arm.inverse_batch(poses)
+        wanted = np.array(branches.valid)
+        row, branch = np.nonzero(wanted)
+        target, branch, q = expand(arm, posed[row] + 1, branch, branches.q[row, branch])
+        for i, leg_index in enumerate(posed):
+            asked = legs[leg_index].step.configuration
+            reaching = target == leg_index + 1
+            if not reaching.any():
+                raise _refused(path, int(leg_index), poses[i])
+            if asked:
+                keep = ~reaching | matching(branches.labels, asked)[branch]
+                if not (keep & reaching).any():
+                    there = [branches.labels[b] for b in dict.fromkeys(branch[reaching].tolist())]
+                    raise no_state_asked(legs[leg_index], there)
+                target, branch, q = target[keep], branch[keep], q[keep]
+    given = [i for i in range(len(legs)) if _given_joints(path, i) is not None]
+    vectors = [path.task.start, *(_given_joints(path, i) for i in given)]
+    target = np.concatenate([target, [0], np.array(given, dtype=np.intp) + 1])
+    branch = np.concatenate([branch, np.full(len(vectors), -1)])
+    q = np.concatenate([q, np.array(vectors, dtype=float)])
+    order = np.argsort(target, kind="stable")
+    target = target[order].astype(np.intp)
+    first = np.searchsorted(target, np.arange(len(legs) + 2)).astype(np.intp)
+    return States(target, branch[order].astype(np.intp), q[order], first)
+
+
+def _given_joints(path: CartesianPath, leg: int) -> Array | None:
+    target = path.legs[leg].step.target
+    return None if target is None else target.joints
+
+
+def _refused(path: CartesianPath, leg: int, pose: Array) -> PathplanError:
+    """What the arm says of a pose it can't take, with the step in front."""
+    step = path.legs[leg].step
+    try:
+        path.task.arm.inverse(pose)
+    except PathplanError as refusal:
+        return type(refusal)(f"{step.where}: {refusal}", data={**refusal.data, "step": step.index})
+    raise AssertionError(f"{step.where}: no state at the target, yet the arm's inverse has answers")
+
+
+def travel_time(arm: Arm, change: Array) -> Array:
+    """Time (...) that joint changes (..., n) take at the velocity limits, every row of the limits kept."""
+    rows = change @ arm.limits.matrix.T
+    low, high = arm.limits.velocity.T
+    return np.asarray(np.maximum(rows / high, rows / low).max(axis=-1))
+
+
+def routes(path: CartesianPath, states: States, tracks: Tracks) -> Routes:
+    """Where every state gets to along the line or arc that leaves its target."""
+    arm = path.task.arm
+    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    segment_of_leg = np.array([leg.segment for leg in path.legs] + [-1], dtype=np.intp)
+    segment = segment_of_leg[states.target]
+    leaving = np.flatnonzero(segment >= 0)
+    row = np.full(len(segment), -1, dtype=np.intp)
+    row[leaving] = np.arange(len(leaving))
+    k = segment[leaving]
+    begin = tracks.q[tracks.first[k]] if len(k) else np.zeros((0, 1, arm.n))
+    change = states.q[leaving][:, None] - begin
+    turns = turns_between(change, revolute)
+    starts = (np.abs(change - turns) < SAME_STATE).all(axis=2) & tracks.reached[tracks.first[k]]
+    follows = starts & tracks.follows[k]
+    slot = np.where(follows.any(axis=1), follows.argmax(axis=1), starts.argmax(axis=1))
+    slot = np.where(starts.any(axis=1), slot, -1).astype(np.intp)
+    every = np.arange(len(leaving))
+    turns = turns[every, slot]
+    judged = judged_rows(arm)
+    matrix, (low, high) = arm.limits.matrix[judged], arm.limits.position[judged].T
+    lowest, highest, time = _extremes(arm, tracks, matrix)
+    shift = turns @ matrix.T
+    inside = ((lowest[k, slot] + shift >= low - LIMIT_SLACK) & (highest[k, slot] + shift <= high + LIMIT_SLACK)).all(axis=1)
+    return Routes(
+        row=row,
+        slot=slot,
+        turns=turns,
+        end=tracks.q[tracks.last[k], slot] + turns,
+        free=(slot >= 0) & follows[every, slot] & inside,
+        time=time[k, slot],
+    )
+
+
+def _extremes(arm: Arm, tracks: Tracks, matrix: Array) -> tuple[Array, Array, Array]:
+    """Lowest and highest value of each row (K, B, R) along each track, and its time (K, B)."""
+    if not len(tracks.first):
+        empty = np.zeros((0, tracks.q.shape[1], len(matrix)))
+        return empty, empty, empty[:, :, 0] if len(matrix) else np.zeros((0, tracks.q.shape[1]))
+    rows = tracks.q @ matrix.T
+    time = np.zeros(tracks.q.shape[:2])
+    time[1:] = travel_time(arm, np.diff(tracks.q, axis=0))
+    time[tracks.first] = 0.0
+    return (
+        np.minimum.reduceat(rows, tracks.first, axis=0),
+        np.maximum.reduceat(rows, tracks.first, axis=0),
+        np.add.reduceat(time, tracks.first, axis=0),
+    )
+
+
+def choose(
+    path: CartesianPath,
+    states: States,
+    tracks: Tracks,
+    ways: Routes,
+    *,
+    barred_legs: Set[tuple[int, int]] = frozenset(),
+    barred_states: Set[int] = frozenset(),
+) -> Choice:
+    """The states that make the task shortest in time by the velocity limits.
+
+    `barred_legs`: (leg, state it starts from) and `barred_states`: found unusable on the finished path.
+    Raises UnreachableError, naming step, share, pose and reason, where no state is left that can follow a step.
+    """
+    arm = path.task.arm
+    endless = endless_joints(arm)
+    cost = np.zeros(states.first[1])
+    parents: list[Index] = []
+    for i, leg in enumerate(path.legs):
+        here, there = states.of(i), states.of(i + 1)
+        if leg.kind == "cartesian":
+            rows = ways.row[here]
+            reach, spent, free = ways.end[rows], ways.time[rows], ways.free[rows]
+        else:
+            reach, spent, free = states.q[here], np.zeros(len(cost)), np.ones(len(cost), dtype=bool)
+        change = states.q[there] - reach[:, None]
+        if endless.any():
+            change -= turns_between(change, endless)
+        if leg.kind == "joint":
+            step = travel_time(arm, change)
+        else:
+            arrives = (np.abs(change) < SAME_STATE).all(axis=2)
+            step = np.where(arrives & free[:, None], spent[:, None], np.inf)
+        for barred_leg, state in barred_legs:
+            if barred_leg == i:
+                step[state - here.start] = np.inf
+        for state in barred_states:
+            if there.start <= state < there.stop:
+                step[:, state - there.start] = np.inf
+        total = cost[:, None] + step
+        parent = total.argmin(axis=0)
+        reached = total[parent, np.arange(len(parent))]
+        if not np.isfinite(reached).any():
+            alive = np.flatnonzero(np.isfinite(cost)) + here.start
+            raise no_branch_follows(path, i, states, tracks, ways, alive)
+        parents.append(parent.astype(np.intp))
+        cost = reached
+    return _trace(path, states, tracks, ways, parents, cost)
+
+
+def _trace(
+    path: CartesianPath, states: States, tracks: Tracks, ways: Routes, parents: list[Index], cost: Array
+) -> Choice:
+    """Back from the cheapest last state, then forward again to resolve turns of endless joints."""
+    arm, m = path.task.arm, len(path.legs)
+    local = int(np.argmin(cost))
+    state = np.empty(m + 1, dtype=np.intp)
+    state[m] = states.first[m] + local
+    for i in range(m - 1, -1, -1):
+        local = int(parents[i][local])
+        state[i] = states.first[i] + local
+    q = states.q[state].copy()
+    slot = np.full(m, -1, dtype=np.intp)
+    endless = endless_joints(arm)
+    for i, leg in enumerate(path.legs):
+        given = _given_joints(path, i) is not None
+        if leg.kind == "cartesian":
+            row = ways.row[state[i]]
+            slot[i] = ways.slot[row]
+            near = q[i] + ways.end[row] - states.q[state[i]]
+        elif given:
+            continue  # a joint step to a joint vector goes to that very vector, however many turns
+        else:
+            near = q[i]
+        q[i + 1] -= turns_between(q[i + 1] - near, endless)
+    return Choice(q, state, slot, float(cost.min()))

@@ -1,0 +1,153 @@
+"""Following spans: joint positions as polynomial pieces that keep to the path and to its derivatives.
+
+Exact values and derivatives at the ends of a piece come from Newton's method on the pose and from the Jacobian's own
+derivatives (`pathplan.arm.kinematics.joint_derivatives`). Between them the septic piece is compared with the exact path at three
+points, among them where each of its errors is largest; pieces that miss are halved, all of a level in one batch.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm.kinematics import joint_derivatives, smallest_singular_value
+from pathplan.path.geometry import Index, poses_of, spatial_twists
+from pathplan.path.hermite import derivatives_at, hermite_coefficients
+from pathplan.path.joint import Array
+from pathplan.path.newton import joint_weights, pose_error, solve_near
+from pathplan.path.spans import Spans
+from pathplan.path.tracking import SINGULAR
+
+__all__ = ["Pieces", "Trouble", "fit"]
+
+POSITION = 2e-7  # m a piece may lie off the path at the tool centre point
+ANGLE = 2e-7  # rad
+DERIVATIVE = (1e-5, 1e-4, 1e-3)  # share of the largest q', q'', q''' on the piece by which it may miss the exact one
+FIRST_WIDTH = 0.5  # path parameter of a piece to start with
+_HALVINGS = 14
+# Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second) and near 0.32 and 0.68 (first, third).
+_CHECKED = np.array([0.32, 0.5, 0.68])
+# Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over h^k.
+_ROUNDING = np.array([1e-13, 1e-12, 1e-11])
+
+
+@dataclass(frozen=True)
+class Trouble(Exception):
+    """A place where a span can't be followed with the branches chosen: span, position in it, joint vector, and why."""
+
+    span: int
+    at: float
+    q: Array
+    kind: str  # "singular" | "reach"
+
+
+@dataclass(frozen=True, eq=False)
+class Pieces:
+    """m polynomial pieces in order of span and position: (8, m, n) coefficients, highest power first."""
+
+    span: Index  # (m,)
+    start: Array  # (m,) position in the span
+    width: Array  # (m,)
+    coefficients: Array
+
+
+def fit(spans: Spans) -> Pieces:
+    """Pieces of all spans. Raises Trouble where a span can't be followed to tolerance."""
+    done = [_exact(spans, np.flatnonzero(~spans.inverted()))]
+    todo = np.flatnonzero(spans.inverted())
+    count = np.maximum(1, np.ceil(spans.length[todo] / FIRST_WIDTH - 1e-9)).astype(int)
+    span = np.repeat(todo, count + 1)
+    number = np.arange(len(span)) - np.repeat(np.cumsum(count + 1) - (count + 1), count + 1)
+    at = spans.length[span] * number / np.repeat(count, count + 1)
+    jets = _nodes(spans, span, at, spans.guess(span, at)) if len(span) else np.zeros((4, 0, spans.motions.arm.n))
+    opening = np.flatnonzero(number < np.repeat(count, count + 1))
+    span, start, width = span[opening], at[opening], (at[1:] - at[:-1])[opening] if len(at) else at
+    begin, end = jets[:, opening], jets[:, opening + 1]
+    for _ in range(_HALVINGS):
+        if not len(span):
+            break
+        coefficients = hermite_coefficients(begin, end, width)
+        good = _keeps(spans, span, start, width, coefficients, begin, end)
+        done.append(Pieces(span[good], start[good], width[good], coefficients[:, good]))
+        bad = ~good
+        span, start, width, begin, end = span[bad], start[bad], width[bad], begin[:, bad], end[:, bad]
+        if not len(span):
+            break
+        half = width / 2
+        guess = derivatives_at(coefficients[:, bad], half)[0] - spans.joint_jets(span, start + half)[0]
+        middle = _nodes(spans, span, start + half, guess)
+        span, start, width = np.tile(span, 2), np.concatenate([start, start + half]), np.tile(half, 2)
+        begin, end = np.concatenate([begin, middle], axis=1), np.concatenate([middle, end], axis=1)
+    else:
+        worst = int(np.argmin(smallest_singular_value(spans.motions.arm, begin[0])))
+        raise Trouble(int(span[worst]), float(start[worst]), begin[0, worst], "singular")
+    return _joined(done)
+
+
+def _joined(parts: list[Pieces]) -> Pieces:
+    span = np.concatenate([part.span for part in parts])
+    start = np.concatenate([part.start for part in parts])
+    order = np.lexsort((start, span))
+    return Pieces(
+        span[order],
+        start[order],
+        np.concatenate([part.width for part in parts])[order],
+        np.concatenate([part.coefficients for part in parts], axis=1)[:, order],
+    )
+
+
+def _exact(spans: Spans, i: Index) -> Pieces:
+    """Spans straight in joint space, and corners between two of them, are polynomials of degree one and four."""
+    width = spans.length[i]
+    jets = [spans.joint_jets(i, at) for at in (np.zeros(len(i)), width)]
+    return Pieces(i, np.zeros(len(i)), width, hermite_coefficients(jets[0], jets[1], width))
+
+
+def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
+    """(4, N, n) exact q and derivatives at positions in spans. Raises Trouble at singularities and out of reach."""
+    arm = spans.motions.arm
+    jets = spans.tool_jets(i, at)
+    poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(i)
+    q, met = solve_near(arm, poses, guess)
+    value = smallest_singular_value(arm, q)
+    poor = ~met | (value < SINGULAR)
+    if poor.any():
+        row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
+        raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach")
+    derivatives, _ = joint_derivatives(arm, q, spatial_twists(jets))
+    return np.concatenate([q[None], derivatives.transpose(1, 0, 2)]) + spans.joint_jets(i, at)
+
+
+def _keeps(
+    spans: Spans, span: Index, start: Array, width: Array, coefficients: Array, begin: Array, end: Array
+) -> NDArray[np.bool_]:
+    """(m,) which pieces keep to the path and its derivatives."""
+    arm, m = spans.motions.arm, len(span)
+    points = len(_CHECKED)
+    i = np.repeat(span, points)
+    local = (width[:, None] * _CHECKED).ravel()
+    at = np.repeat(start, points) + local
+    fitted = derivatives_at(np.repeat(coefficients, points, axis=1), local)
+    straight = spans.joint_jets(i, at)
+    q = fitted[0] - straight[0]
+    jets = spans.tool_jets(i, at)
+    own_from_tool = np.linalg.inv(spans.tool_from_own(i))
+    missing = pose_error(arm.forward(q) @ own_from_tool, poses_of(jets.position[0], jets.rotation))
+    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
+    good = near.reshape(m, points).all(axis=1)
+    exact = joint_derivatives(arm, q, spatial_twists(jets))[0].transpose(1, 0, 2) + straight[1:]
+    weights = joint_weights(arm)
+
+    def largest(values: Array) -> Array:
+        return np.abs(values * weights).max(axis=2).reshape(len(values), m, -1).max(axis=2)
+
+    error = largest(fitted[1:] - exact)
+    ends = np.maximum(np.abs(begin[1:] * weights).max(axis=2), np.abs(end[1:] * weights).max(axis=2))
+    scale = np.maximum(largest(exact), ends)
+    # The path parameter counts radians or arm lengths: a bend is measured at least against one that turns once a radian.
+    scale[1:] = np.maximum(scale[1:], scale[0])
+    powers = width ** np.arange(1, 4)[:, None]
+    allowed = np.array(DERIVATIVE)[:, None] * scale + _ROUNDING[:, None] / powers
+    return np.asarray(good & (error <= allowed).all(axis=0))

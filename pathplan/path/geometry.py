@@ -1,0 +1,266 @@
+"""Lines, arcs and reorientations with exact derivatives: the pieces a Cartesian path is programmed of.
+
+Every such motion is uniform in its own path parameter s (dimensionless, from 0 to `length`): a point moving straight at
+a constant rate, or round a circle at a constant rate, while the tool turns about a fixed axis at a constant rate:
+
+    p(s) = base + velocity s + cos(rate s) x + sin(rate s) y          R(s) = exp(turn s) R(0)
+
+with `length` = sqrt((path length / arm length)^2 + (rotation angle)^2), so a pure reorientation counts by its angle.
+A step is therefore a row of numbers, and all steps of a task are evaluated in one go.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, fields
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.path.joint import Array
+from pathplan.path.rotations import cross, exponential, rotate, rotation_vector
+
+__all__ = [
+    "AMBIGUOUS",
+    "NO_MOTION",
+    "DegenerateArc",
+    "HalfTurn",
+    "Jets",
+    "Segments",
+    "arc_about",
+    "arc_through",
+    "line",
+    "poses_of",
+    "spatial_twists",
+    "superpose",
+]
+
+Index = NDArray[np.intp]
+
+AMBIGUOUS = 1e-6  # rad: nearer to a half turn than this, no rotation is the shortest
+NO_MOTION = 1e-9  # path parameter: shorter motions are none (a nanometre on a metre)
+_ON_CHORD = 1e-6  # sine of the angle at the via point below which three points make no circle
+_IN_PLANE = 1e-5  # m a start may lie off the plane of the circle, and is then carried along: rounding of a file
+
+
+class DegenerateArc(ValueError):
+    """Three points, or a centre and an axis, that make no circle; the message says why and what was expected."""
+
+
+class HalfTurn(ValueError):
+    """Start and target orientation lie half a turn apart: no shortest rotation; the message says what helps."""
+
+
+@dataclass(frozen=True, eq=False)
+class Jets:
+    """Tool motions by path parameter: value and derivatives to third order, N at a time.
+
+    position (4, N, 3): p, p', p'', p''' in m; rotation (N, 3, 3) base_from_tool; turning (3, N, 3): w, w', w'' in rad,
+    the turning rate in the base frame, R' = [w] R.
+    """
+
+    position: Array
+    rotation: Array
+    turning: Array
+
+
+@dataclass(frozen=True, eq=False)
+class Segments:
+    """K uniform motions as arrays; see the module's formula. All in the base frame, SI, over s in [0, length]."""
+
+    base: Array  # (K, 3)
+    velocity: Array  # (K, 3)
+    x: Array  # (K, 3) centre to start of an arc; zero for a line
+    y: Array  # (K, 3)
+    rate: Array  # (K,)
+    turn: Array  # (K, 3)
+    rotation: Array  # (K, 3, 3) at s = 0
+    length: Array  # (K,) of the path parameter
+    path_length: Array  # (K,) m
+    angle: Array  # (K,) rad the tool turns
+
+    def __len__(self) -> int:
+        return len(self.length)
+
+    @classmethod
+    def join(cls, parts: Sequence[Segments]) -> Segments:
+        """One batch of all rows; an empty batch of none."""
+        if not parts:
+            return cls(*(np.zeros((0, *shape)) for shape in ((3,), (3,), (3,), (3,), (), (3,), (3, 3), (), (), ())))
+        return cls(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)))
+
+    def poses(self, k: Index, s: Array) -> Array:
+        """(N, 4, 4) base_from_tool at s (N,) of segments k (N,)."""
+        angle = self.rate[k] * s
+        position = self.base[k] + self.velocity[k] * s[:, None]
+        position += np.cos(angle)[:, None] * self.x[k] + np.sin(angle)[:, None] * self.y[k]
+        return poses_of(position, exponential(self.turn[k] * s[:, None]) @ self.rotation[k])
+
+    def jets(self, k: Index, s: Array, rates: Array | None = None) -> Jets:
+        """Exact derivatives at s (N,) of segments k (N,).
+
+        `rates` (3, N): s', s'', s''' where s itself is a function of another parameter; derivatives are then by that
+        one (chain rule). Without: s' = 1.
+        """
+        rate = self.rate[k][:, None]
+        angle = rate[:, 0] * s
+        cos, sin = np.cos(angle)[:, None], np.sin(angle)[:, None]
+        x, y, velocity, turn = self.x[k], self.y[k], self.velocity[k], self.turn[k]
+        along, across = cos * x + sin * y, cos * y - sin * x
+        position = np.empty((4, len(s), 3))
+        position[0] = self.base[k] + velocity * s[:, None] + along
+        first, second, third = velocity + rate * across, -(rate**2) * along, -(rate**3) * across
+        turning = np.zeros((3, len(s), 3))
+        if rates is None:
+            position[1:] = first, second, third
+            turning[0] = turn
+        else:
+            s1, s2, s3 = rates[:, :, None]
+            position[1] = first * s1
+            position[2] = second * s1**2 + first * s2
+            position[3] = third * s1**3 + 3.0 * second * s1 * s2 + first * s3
+            turning[:] = turn * s1, turn * s2, turn * s3
+        return Jets(position, exponential(turn * s[:, None]) @ self.rotation[k], turning)
+
+
+def poses_of(position: Array, rotation: Array) -> Array:
+    """(N, 4, 4) transforms of positions (N, 3) and rotations (N, 3, 3)."""
+    poses = np.zeros((len(position), 4, 4))
+    poses[:, :3, :3] = rotation
+    poses[:, :3, 3] = position
+    poses[:, 3, 3] = 1.0
+    return poses
+
+
+def spatial_twists(jets: Jets) -> Array:
+    """(N, 3, 6) spatial twist (v_o, w) and its two derivatives: v_o = p' - w x p, differentiated twice more."""
+    p, p1, p2, p3 = jets.position
+    w, w1, w2 = jets.turning
+    twists = np.empty((len(p), 3, 6))
+    twists[:, 0, :3] = p1 - cross(w, p)
+    twists[:, 1, :3] = p2 - cross(w1, p) - cross(w, p1)
+    twists[:, 2, :3] = p3 - cross(w2, p) - 2.0 * cross(w1, p1) - cross(w, p2)
+    twists[:, 0, 3:], twists[:, 1, 3:], twists[:, 2, 3:] = w, w1, w2
+    return twists
+
+
+def superpose(first: Jets, second: Jets, corner: Array) -> Jets:
+    """Both motions at once about a common pose, corner (N, 4, 4): p = p1 + p2 - p_c, R = R1 R_c^T R2."""
+    position = first.position + second.position
+    position[0] -= corner[:, :3, 3]
+    lead = first.rotation @ corner[:, :3, :3].transpose(0, 2, 1)
+    a, a1, a2 = first.turning
+    b, b1, b2 = (rotate(lead, w) for w in second.turning)  # as seen from the base, turned along with the first
+    carried = cross(a, b)
+    turning = np.stack(
+        [
+            a + b,
+            a1 + b1 + carried,
+            a2 + b2 + cross(a1, b) + cross(a, carried) + 2.0 * cross(a, b1),
+        ]
+    )
+    return Jets(position, lead @ second.rotation, turning)
+
+
+def line(start: Array, end: Array, arm_length: float) -> Segments:
+    """Straight from pose `start` to pose `end` (4, 4), the tool on the shortest rotation; K = 1.
+
+    Also a pure reorientation. Raises HalfTurn where the orientations lie half a turn apart.
+    """
+    turn = _shortest(start, end)
+    chord = end[:3, 3] - start[:3, 3]
+    distance = float(np.linalg.norm(chord))
+    return _segment(start, start[:3, 3], chord, np.zeros(3), np.zeros(3), 0.0, turn, distance, arm_length)
+
+
+def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segments:
+    """Circular arc from pose `start` through point `via` (3,) to pose `end`, the tool on the shortest rotation; K = 1.
+
+    Raises DegenerateArc for points that coincide or lie on one line, HalfTurn as `line` does.
+    """
+    a, b = start[:3, 3] - via, end[:3, 3] - via
+    chord = end[:3, 3] - start[:3, 3]
+    sizes = [float(np.linalg.norm(v)) for v in (a, b, chord)]
+    names = ("via and start", "via and target", "start and target")
+    for size, names_ in zip(sizes, names, strict=True):
+        if size < NO_MOTION * arm_length:
+            extra = "; a full circle is given by centre, axis and angle" if names_ == "start and target" else ""
+            raise DegenerateArc(f"{names_} of the arc coincide{extra}")
+    normal = np.cross(a, b)
+    if np.linalg.norm(normal) < _ON_CHORD * sizes[0] * sizes[1]:
+        raise DegenerateArc("start, via and target of the arc lie on one line, expected three points of a circle")
+    turn = _shortest(start, end)
+    # Circumcentre seen from via: (|a|^2 b - |b|^2 a) x (a x b) / (2 |a x b|^2).
+    centre = via + np.cross(sizes[0] ** 2 * b - sizes[1] ** 2 * a, normal) / (2.0 * float(normal @ normal))
+    axis = -normal / np.linalg.norm(normal)  # start -> via -> target turns positively about it
+    x = start[:3, 3] - centre
+    y = np.cross(axis, x)
+    to_end = end[:3, 3] - centre
+    angle = float(np.arctan2(to_end @ y, to_end @ x)) % (2.0 * np.pi)
+    distance = float(np.linalg.norm(x)) * angle
+    return _segment(start, centre, np.zeros(3), x, y, angle, turn, distance, arm_length)
+
+
+def arc_about(
+    start: Array, centre: Array, axis: Array, angle: float, arm_length: float, *, along: bool
+) -> Segments:
+    """Arc from pose `start` about `axis` (3,) through `centre` (3,) by a signed angle, full circles and more; K = 1.
+
+    `along`: the tool turns with the arc; else it keeps its orientation. Raises DegenerateArc.
+    """
+    size = float(np.linalg.norm(axis))
+    if not size > 1e-12:
+        raise DegenerateArc("axis of the arc is zero, expected a direction")
+    axis = axis / size
+    x = start[:3, 3] - centre
+    off = float(axis @ x)
+    if abs(off) > _IN_PLANE:
+        raise DegenerateArc(
+            f"start lies {abs(off) * 1e3:.4g} mm off the plane of the circle (through centre, square to axis)"
+        )
+    centre = centre + off * axis
+    x = x - off * axis
+    radius = float(np.linalg.norm(x))
+    if radius < NO_MOTION * arm_length:
+        raise DegenerateArc("centre of the arc is where it starts, expected a radius")
+    turn = angle * axis if along else np.zeros(3)
+    return _segment(
+        start, centre, np.zeros(3), x, np.cross(axis, x), angle, turn, radius * abs(angle), arm_length
+    )
+
+
+def _shortest(start: Array, end: Array) -> Array:
+    """Rotation vector in the base frame that turns the orientation of `start` into that of `end`."""
+    turn = rotation_vector((end[:3, :3] @ start[:3, :3].T)[None])[0]
+    if np.linalg.norm(turn) > np.pi - AMBIGUOUS:
+        raise HalfTurn("the tool would turn by 180 deg, which has no shortest way: give a pose between")
+    return np.asarray(turn)
+
+
+def _segment(
+    start: Array,
+    base: Array,
+    chord: Array,
+    x: Array,
+    y: Array,
+    sweep: float,
+    turn: Array,
+    distance: float,
+    arm_length: float,
+) -> Segments:
+    angle = float(np.linalg.norm(turn))
+    length = float(np.hypot(distance / arm_length, angle))
+    per = 1.0 / length if length > 0 else 0.0
+    return Segments(
+        base=base[None],
+        velocity=chord[None] * per,
+        x=x[None],
+        y=y[None],
+        rate=np.array([sweep * per]),
+        turn=turn[None] * per,
+        rotation=start[None, :3, :3],
+        length=np.array([length]),
+        path_length=np.array([distance]),
+        angle=np.array([angle]),
+    )
+

@@ -1,0 +1,121 @@
+"""A path as spans, each one formula: a stretch of one step, or a corner between two, with exact derivatives.
+
+Every span is the same sum, of which parts may be missing: the joint positions that put the tool at a Cartesian
+motion (of one segment, or of two superposed), plus a straight joint motion or two. What eases in or out, and over which
+length, is as in `pathplan.path.corners`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from pathplan.path.corners import incoming, outgoing
+from pathplan.path.geometry import Index, Jets, superpose
+from pathplan.path.joint import Array
+from pathplan.path.motions import Motions
+
+__all__ = ["Spans"]
+
+
+@dataclass(frozen=True, eq=False)
+class Spans:
+    """S spans. Positions inside a span run from 0 to its `length` (path parameter)."""
+
+    motions: Motions
+    before: Index  # (S,) the motion a span belongs to, or the incoming one of a corner
+    after: Index  # (S,) the outgoing motion of a corner, else -1
+    offset: Array  # (S,) where on its motion a plain span begins
+    delta: Array  # (S,) corner size, 0 for a plain span
+    length: Array  # (S,)
+
+    def __len__(self) -> int:
+        return len(self.length)
+
+    @property
+    def corner(self) -> Array:
+        """(S,) bool."""
+        return self.after >= 0
+
+    def inverted(self) -> Array:
+        """(S,) bool: the span has a Cartesian part, so joint positions come from poses."""
+        segment = self.motions.segment
+        return (segment[self.before] >= 0) | (self.corner & (segment[self.after] >= 0))
+
+    def programmed(self) -> Array:
+        """(S,) bool: the tool path is known from the geometry alone."""
+        segment = self.motions.segment
+        return (segment[self.before] >= 0) & (~self.corner | (segment[self.after] >= 0))
+
+    def sides(self, i: Index, at: Array) -> tuple[Array, Array, Array, Array]:
+        """Where span i stands at `at` (N,): s on the motion before, its rates (3, N), s on the one after, its rates."""
+        corner = self.corner[i]
+        first, first_rates = self.offset[i] + at, np.zeros((3, len(at)))
+        first_rates[0] = 1.0
+        second, second_rates = np.zeros(len(at)), np.zeros((3, len(at)))
+        if corner.any():
+            delta = self.delta[i[corner]]
+            u = at[corner] / delta - 1.0
+            back, first_rates[:, corner] = incoming(u, delta)
+            first[corner] = self.motions.length[self.before[i[corner]]] + back
+            second[corner], second_rates[:, corner] = outgoing(u, delta)
+        return first, first_rates, second, second_rates
+
+    def tool_jets(self, i: Index, at: Array) -> Jets:
+        """Exact Cartesian part at `at` (N,) of spans i, which must have one, with the tool of the step."""
+        first, first_rates, second, second_rates = self.sides(i, at)
+        segment = self.motions.segment
+        one = segment[self.before[i]]
+        two = np.where(self.corner[i], segment[self.after[i]], -1)
+        segments = self.motions.segments
+        if (two < 0).all():
+            return segments.jets(one, first, first_rates)
+        jets = Jets(np.empty((4, len(at), 3)), np.empty((len(at), 3, 3)), np.empty((3, len(at), 3)))
+        for rows in ((one >= 0) & (two < 0), (one < 0), (one >= 0) & (two >= 0)):
+            if not rows.any():
+                continue
+            if (one[rows] < 0).all():
+                part = segments.jets(two[rows], second[rows], second_rates[:, rows])
+            else:
+                part = segments.jets(one[rows], first[rows], first_rates[:, rows])
+                if (two[rows] >= 0).all():
+                    joined = segments.jets(two[rows], second[rows], second_rates[:, rows])
+                    part = superpose(part, joined, segments.poses(two[rows], np.zeros(int(rows.sum()))))
+            jets.position[:, rows], jets.rotation[rows], jets.turning[:, rows] = part.position, part.rotation, part.turning
+        return jets
+
+    def joint_jets(self, i: Index, at: Array) -> Array:
+        """(4, N, n) the straight joint motions' part of q and its derivatives, counted from the corner or the span's start.
+
+        For a span without Cartesian part this is q itself.
+        """
+        first, first_rates, second, second_rates = self.sides(i, at)
+        motions, corner = self.motions, self.corner[i]
+        d1 = motions.direction[self.before[i]]
+        d2 = np.where(corner[:, None], motions.direction[self.after[i]], 0.0)
+        jets = np.empty((4, len(at), motions.arm.n))
+        back = np.where(corner, first - motions.length[self.before[i]], first)
+        jets[0] = d1 * back[:, None] + d2 * second[:, None]
+        jets[1:] = d1 * first_rates[:, :, None] + d2 * second_rates[:, :, None]
+        alone = ~self.inverted()[i]
+        base = np.where(corner[:, None], motions.end[self.before[i]], motions.start[self.before[i]])
+        jets[0, alone] += base[alone]
+        return jets
+
+    def guess(self, i: Index, at: Array) -> Array:
+        """(N, n) near guesses of the joint positions of the Cartesian part."""
+        first, _, second, _ = self.sides(i, at)
+        motions, segment = self.motions, self.motions.segment
+        one = segment[self.before[i]]
+        two = np.where(self.corner[i], segment[self.after[i]], -1)
+        corner = motions.end[self.before[i]]
+        q = np.where((one < 0)[:, None], corner, 0.0)
+        rows = one >= 0
+        q[rows] = motions.reference(one[rows], first[rows])
+        rows = two >= 0
+        q[rows] += motions.reference(two[rows], second[rows]) - corner[rows]
+        return q
+
+    def tool_from_own(self, i: Index) -> Array:
+        return self.motions.tool_from_own[self.before[i]]

@@ -1,0 +1,164 @@
+"""Following every branch of the inverse along every line and arc of a task at once.
+
+Each segment is sampled, all samples of all segments go through the inverse in one batch, and each branch is unwrapped
+from sample to sample by nearest turn. Where a joint moves too far between two samples to tell, samples are put in
+between; a joint that still jumps when they lie a few ten-thousandths apart is at a singularity.
+
+A branch follows a segment if at every sample the pose is reached, the smallest singular value of the Jacobian
+(dimensionless, see `pathplan.arm.kinematics`) is at least `SINGULAR`, and no jump remains. Position limits depend on the
+turns a motion starts with, so they are judged by start state in `pathplan.path.choice`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm import Arm
+from pathplan.arm.kinematics import smallest_singular_value
+from pathplan.path.geometry import Index, Segments
+from pathplan.path.joint import Array
+from pathplan.path.newton import solve_near
+
+__all__ = ["SINGULAR", "Obstacle", "Tracks", "track", "turns_between"]
+
+Mask = NDArray[np.bool_]
+
+SINGULAR = 1e-4  # smallest singular value below which a pose counts as singular
+SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
+FEWEST = 6  # intervals of a segment
+JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
+_HALVINGS = 12
+Obstacle = Literal["reach", "singular"]
+
+
+def turns_between(change: Array, revolute: Mask) -> Array:
+    """Whole turns (in rad) in joint changes (..., n): subtract them for the shortest change."""
+    return np.where(revolute, 2.0 * np.pi * np.round(change / (2.0 * np.pi)), 0.0)
+
+
+@dataclass(frozen=True, eq=False)
+class Tracks:
+    """B branches along K segments, T samples in all, in order of segment and path parameter.
+
+    `q` (T, B, n) is continuous along each segment, counted from the branch's answer in (-pi, pi] at its start;
+    meaningless from the first sample on where `ok` (T, B) is False, and `reached` tells why: False there means that the
+    pose is not reached, True that it is singular.
+    """
+
+    segment: Index  # (T,)
+    s: Array  # (T,)
+    q: Array
+    ok: Mask
+    reached: Mask
+    first: Index  # (K,) first sample of each segment
+    last: Index  # (K,)
+
+    @cached_property
+    def follows(self) -> Mask:
+        """(K, B): the branch follows the whole segment."""
+        return np.logical_and.reduceat(self.ok, self.first, axis=0) if len(self.first) else self.ok[:0]
+
+
+def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
+    """Every branch along every segment. `tool_from_own` (K, 4, 4): base_from_tool @ this is the pose of the arm's own tool."""
+    count = np.maximum(np.ceil(segments.length / SPACING).astype(int), FEWEST)
+    segment = np.repeat(np.arange(len(segments)), count + 1)
+    first = np.concatenate([[0], np.cumsum(count + 1)[:-1]]).astype(np.intp)
+    step = np.arange(len(segment)) - first[segment]
+    s = segments.length[segment] * (step / count[segment])
+
+    def poses(k: Index, at: Array) -> Array:
+        return segments.poses(k, at) @ tool_from_own[k]
+
+    if arm.structure == "general":
+        return _continued(arm, poses, segment, s, first)
+    branches = arm.inverse_batch(poses(segment, s))
+    q, valid = branches.q, np.asarray(branches.valid)
+    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    looked_at = np.zeros(len(s), dtype=bool)
+    for halving in range(_HALVINGS + 1):
+        jumps = _jumps(q, valid, segment, revolute)
+        # A branch that fails elsewhere on the segment anyway is not worth more samples.
+        lives = np.logical_and.reduceat(valid, first, axis=0)[segment[:-1]] if len(first) else valid[:0]
+        split = np.flatnonzero((jumps & lives).any(axis=1))
+        if not len(split) or halving == _HALVINGS:
+            break
+        new_s = (s[split] + s[split + 1]) / 2
+        new = arm.inverse_batch(poses(segment[split], new_s))
+        at = split + 1
+        looked_at[split] = looked_at[split + 1] = True
+        segment, s = np.insert(segment, at, segment[split]), np.insert(s, at, new_s)
+        q, valid = np.insert(q, at, new.q, axis=0), np.insert(valid, at, new.valid, axis=0)
+        looked_at = np.insert(looked_at, at, True)
+        first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
+    last = np.append(first[1:], len(s)).astype(np.intp) - 1
+    looked_at[first] = looked_at[last] = True
+    regular = _regular(arm, q, valid, looked_at)
+    jumped = np.zeros_like(valid)
+    jumped[1:] = jumps
+    return Tracks(segment, s, _unwrapped(q, first, segment, revolute), valid & regular & ~jumped, valid, first, last)
+
+
+def _jumps(q: Array, valid: Mask, segment: Index, revolute: Mask) -> Mask:
+    """(T-1, B): a joint moves too far from one sample to the next to tell which way."""
+    change = np.diff(q[:, :, revolute], axis=0)
+    change -= 2.0 * np.pi * np.round(change / (2.0 * np.pi))
+    far = (np.abs(change) > JUMP).any(axis=2)
+    return far & valid[1:] & valid[:-1] & (segment[1:] == segment[:-1])[:, None]
+
+
+def _regular(arm: Arm, q: Array, valid: Mask, looked_at: Mask) -> Mask:
+    """(T, B): not singular, judged at the samples `looked_at`: the ends and wherever a joint moves fast.
+
+    Between them no singularity is passed unseen: passing one makes a joint jump.
+    """
+    regular = np.ones_like(valid)
+    ask = valid & looked_at[:, None]
+    if ask.any():
+        regular[ask] = smallest_singular_value(arm, q[ask]) >= SINGULAR
+    return regular
+
+
+def _unwrapped(q: Array, first: Index, segment: Index, revolute: Mask) -> Array:
+    """q made continuous along each segment by nearest turn, starting from the segment's first sample."""
+    if not len(q):
+        return q
+    turns = np.zeros_like(q)
+    turns[1:] = turns_between(np.diff(q, axis=0), revolute)
+    turns[first] = 0.0
+    total = np.cumsum(turns, axis=0)
+    return np.asarray(q - (total - total[first][segment]))
+
+
+def _continued(arm: Arm, poses, segment: Index, s: Array, first: Index) -> Tracks:  # type: ignore[no-untyped-def]
+    """As `track` for an arm without closed form: all answers at the start of a segment, continued by Newton steps."""
+    count = np.diff(np.append(first, len(s)))
+    last = first + count - 1
+    start = arm.inverse_batch(poses(segment[first], s[first]))
+    slots = start.q.shape[1]
+    q = np.zeros((len(s), slots, arm.n))
+    valid = np.zeros((len(s), slots), dtype=bool)
+    jumped = np.zeros_like(valid)
+    q[first], valid[first] = start.q, start.valid
+    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    for step in range(1, int(count.max(initial=0))):
+        rows = first[count > step] + step
+        q[rows] = q[rows - 1]
+        k, b = np.nonzero(valid[rows - 1])
+        if not len(k):
+            continue
+        target = poses(segment[rows], s[rows])[k]
+        guess = q[rows - 1][k, b]
+        two_back = rows[k] - 2 >= first[segment[rows[k]]]
+        guess[two_back] += guess[two_back] - q[rows[k] - 2, b][two_back]
+        answer, met = solve_near(arm, target, guess)
+        jump = (np.abs(answer - q[rows[k] - 1, b])[:, revolute] > 2 * JUMP).any(axis=1)
+        q[rows[k], b], valid[rows[k], b], jumped[rows[k], b] = answer, met, jump
+    looked_at = np.ones(len(s), dtype=bool)
+    regular = _regular(arm, q, valid, looked_at)
+    return Tracks(segment, s, q, valid & regular & ~jumped, valid, first, last)
