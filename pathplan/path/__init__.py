@@ -1,1 +1,23 @@
 """Task to Cartesian path to joint path q(s)."""
+
+from pathplan.path.cartesian import CartesianPath, Finding, Leg, cartesian_path
+from pathplan.path.follow import follow_task
+from pathplan.path.joint import JointPath
+from pathplan.path.taskpath import Cap, Corner, StepPart, Stretch, TaskPath, Wait
+from pathplan.path.tool_motion import tool_derivatives
+
+__all__ = [
+    "Cap",
+    "CartesianPath",
+    "Corner",
+    "Finding",
+    "JointPath",
+    "Leg",
+    "StepPart",
+    "Stretch",
+    "TaskPath",
+    "Wait",
+    "cartesian_path",
+    "follow_task",
+    "tool_derivatives",
+]

@@ -99,10 +99,28 @@ def _joined(parts: list[Pieces]) -> Pieces:
 
 
 def _exact(spans: Spans, i: Index) -> Pieces:
-    """Spans straight in joint space, and corners between two of them, are polynomials of degree one and four."""
-    width = spans.length[i]
-    jets = [spans.joint_jets(i, at) for at in (np.zeros(len(i)), width)]
-    return Pieces(i, np.zeros(len(i)), width, hermite_coefficients(jets[0], jets[1], width))
+    """Spans straight in joint space, and corners between two of them, as the polynomials they are: degree one and four.
+
+    With x = at / delta the ramps of a corner are x^3/4 - x^4/16 coming in and x - 1 minus that going out.
+    """
+    motions, n = spans.motions, spans.motions.arm.n
+    coefficients = np.zeros((8, len(i), n))
+    before = spans.before[i]
+    corner = spans.corner[i]
+    d1 = motions.direction[before]
+    change = np.where(corner[:, None], motions.direction[spans.after[i]] - d1, 0.0)
+    delta = np.where(corner, spans.delta[i], 1.0)[:, None]
+    begin = np.where(corner, motions.length[before] - spans.delta[i], spans.offset[i])
+    # Counted from the nearer end: an arm that stops at a target stops on it exactly.
+    coefficients[7] = np.where(
+        corner[:, None],
+        motions.end[before] - d1 * spans.delta[i][:, None],
+        motions.start[before] + d1 * begin[:, None],
+    )
+    coefficients[6] = d1
+    coefficients[4] = change / (4.0 * delta**2)
+    coefficients[3] = -change / (16.0 * delta**3)
+    return Pieces(i, np.zeros(len(i)), spans.length[i], coefficients)
 
 
 def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:

@@ -1,0 +1,123 @@
+"""From a task to its joint path: geometry, branches, corners, pieces, stretches."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from pathplan.errors import PathplanError, UnreachableError
+from pathplan.path.assembly import assemble
+from pathplan.path.bounds import Crossing, first_crossing
+from pathplan.path.cartesian import CartesianPath, cartesian_path
+from pathplan.path.choice import Choice, candidate_states, choose, routes
+from pathplan.path.fit import Pieces, Trouble, fit
+from pathplan.path.geometry import poses_of
+from pathplan.path.hermite import derivatives_at
+from pathplan.path.layout import Layout, lay_out
+from pathplan.path.motions import motions_of, tool_frames
+from pathplan.path.refusals import limit_text, place_text, singularity
+from pathplan.path.taskpath import TaskPath
+from pathplan.path.tracking import track
+from pathplan.task.model import Task
+
+__all__ = ["follow_task"]
+
+_CHOICES = 40  # of branches, each found unusable only on the finished path
+
+
+def follow_task(task: Task) -> TaskPath:
+    """The joint path of a task: lines and arcs followed to 1 um and 1 urad, corners within their regions, limits kept.
+
+    The branches are those that make the task shortest by the velocity limits. A choice that turns out unusable on the finished
+    path (a limit passed between samples, a corner that runs into a singularity) is barred and the next best taken.
+
+    Raises
+    ------
+    InputError
+        A step makes no line or arc, turns the tool by a half turn, or has a blend that can't be kept.
+    UnreachableError
+        A target is out of reach, or no branch can follow a step; the message names step, share, pose and reason, and `data`
+        holds step, share, pose, joint, limit, singular, best.
+    """
+    path = cartesian_path(task)
+    frames = tool_frames(path)
+    states = candidate_states(path, frames)
+    rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
+    tracks = track(task.arm, path.segments, frames[rows])
+    ways = routes(path, states, tracks)
+    barred_legs: set[tuple[int, int]] = set()
+    barred_states: set[int] = set()
+    refusal: PathplanError | None = None
+    for _ in range(_CHOICES):
+        try:
+            choice = choose(path, states, tracks, ways, barred_legs=barred_legs, barred_states=barred_states)
+        except UnreachableError:
+            if refusal is not None:
+                break
+            raise
+        layout = lay_out(path, motions_of(path, choice, tracks, ways, frames))
+        try:
+            pieces = fit(layout.spans)
+            crossing = first_crossing(pieces, task.arm.limits)
+        except Trouble as trouble:
+            found = _trouble_words(path, layout, trouble)
+            span = trouble.span
+        else:
+            if crossing is None:
+                return assemble(path, choice, layout, pieces)
+            found = _crossing_words(path, layout, pieces, crossing)
+            span = int(pieces.span[crossing.piece])
+        refusal = refusal or found
+        _bar(layout, choice, span, barred_legs, barred_states)
+    assert refusal is not None
+    raise refusal
+
+
+def _bar(
+    layout: Layout, choice: Choice, span: int, barred_legs: set[tuple[int, int]], barred_states: set[int]
+) -> None:
+    """Bar what led to a span: the state its step starts from, or the state in the middle of its corner."""
+    leg = int(layout.spans.motions.leg[layout.spans.before[span]])
+    if layout.spans.corner[span]:
+        barred_states.add(int(choice.state[leg + 1]))
+    else:
+        barred_legs.add((leg, int(choice.state[leg])))
+
+
+def _trouble_words(path: CartesianPath, layout: Layout, trouble: Trouble) -> UnreachableError:
+    arm = path.task.arm
+    text, singular = singularity(arm, trouble.q)
+    reason = f"it meets {text}" if trouble.kind == "singular" else "it leaves the reach of the arm"
+    data = {"singular": singular} if trouble.kind == "singular" else {}
+    return _refusal(path, layout, trouble.span, trouble.at, trouble.q, reason, data)
+
+
+def _crossing_words(path: CartesianPath, layout: Layout, pieces: Pieces, crossing: Crossing) -> UnreachableError:
+    arm, piece = path.task.arm, crossing.piece
+    q = derivatives_at(pieces.coefficients[:, piece : piece + 1], np.array([crossing.local]))[0, 0]
+    limit = float(arm.limits.position[crossing.row, crossing.side])
+    data = {"joint": arm.limits.names[crossing.row], "limit": limit}
+    at = float(pieces.start[piece]) + crossing.local
+    return _refusal(path, layout, int(pieces.span[piece]), at, q, limit_text(arm, crossing.row, crossing.side), data)
+
+
+def _refusal(
+    path: CartesianPath, layout: Layout, span: int, at: float, q: np.ndarray, reason: str, data: dict[str, object]
+) -> UnreachableError:
+    spans = layout.spans
+    i, where = np.array([span]), np.array([at])
+    motion = int(spans.before[span])
+    step = path.legs[spans.motions.leg[motion]].step
+    if spans.programmed()[span]:
+        jets = spans.tool_jets(i, where)
+        pose = poses_of(jets.position[0], jets.rotation)[0]
+    else:
+        pose = path.task.arm.forward(q)
+    share = float(np.clip(spans.sides(i, where)[0][0] / spans.motions.length[motion], 0.0, 1.0))
+    if spans.corner[span]:
+        text = f"{step.where}: the corner after this step can't be followed: at {place_text(pose)} {reason}; a smaller blend may help"
+    else:
+        text = (
+            f"{step.where}: no branch can follow this {step.motion}: the best gets to {share * 100:.1f} % of it, "
+            f"{place_text(pose)}, where {reason}"
+        )
+    return UnreachableError(text, data={"step": step.index, "share": share, "pose": pose, "best": q, **data})
