@@ -39,7 +39,9 @@ class JointPath:
     __slots__ = ("_breaks", "_coefficients")
 
     def __init__(self, spline: BSpline) -> None:
-        from scipy.interpolate import BSpline, PPoly
+        from math import factorial
+
+        from scipy.interpolate import BSpline
 
         if not isinstance(spline, BSpline):
             raise InputError(f"joint path: expected a scipy BSpline, got {type(spline).__name__}")
@@ -49,11 +51,9 @@ class JointPath:
             raise InputError(f"joint path: expected a spline of degree 3 or more, got degree {spline.k}")
         if not np.all(np.isfinite(spline.c)):
             raise InputError("joint path: expected finite spline coefficients, got NaN or infinity")
-        pieces = PPoly.from_spline(spline, extrapolate=False)
-        first, last = spline.t[spline.k], spline.t[-spline.k - 1]
-        keep = (np.diff(pieces.x) > 0) & (pieces.x[:-1] >= first) & (pieces.x[1:] <= last)
-        breaks = np.append(pieces.x[:-1][keep], last) - first
-        self._set(breaks, pieces.c[:, keep, :])
+        knots = np.unique(spline.t[spline.k : len(spline.t) - spline.k])
+        taylor = [spline(knots[:-1], nu=order) / factorial(order) for order in range(spline.k, -1, -1)]
+        self._set(knots - knots[0], np.stack(taylor))
 
     def _set(self, breaks: Array, coefficients: Array) -> None:
         _check_pieces(breaks, coefficients)
@@ -130,7 +130,7 @@ class JointPath:
         """
         s = np.atleast_1d(np.asarray(s, dtype=float))
         piece, local = self.locate(s, side)
-        return self._evaluate(piece, local, derivative)
+        return self.at(piece, local, derivative)
 
     def locate(self, s: Array, side: Literal["left", "right"] = "right") -> tuple[NDArray[np.intp], Array]:
         """Piece index and local offset of each s (N,)."""
@@ -141,9 +141,10 @@ class JointPath:
     def derivatives(self, s: Array, highest: int = 3, side: Literal["left", "right"] = "right") -> list[Array]:
         """q and its derivatives up to `highest` at s (N,): a list of (N, n)."""
         piece, local = self.locate(s, side)
-        return [self._evaluate(piece, local, order) for order in range(highest + 1)]
+        return [self.at(piece, local, order) for order in range(highest + 1)]
 
-    def _evaluate(self, piece: NDArray[np.intp], local: Array, derivative: int) -> Array:
+    def at(self, piece: NDArray[np.intp], local: Array, derivative: int = 0) -> Array:
+        """(N, n) from piece indices (N,) and local offsets (N,): no search, so the caller decides the side."""
         degree = len(self._coefficients) - 1
         value = np.zeros((len(piece), self.joints))
         x = local[:, None]

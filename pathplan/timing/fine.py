@@ -1,0 +1,234 @@
+"""The fine timing as a barrier problem: the least time under velocity, acceleration, jerk and tool limits.
+
+On the clock tau, p(tau) = q(s(tau)) and b(tau) = (dtau/dt)^2. Velocity p' sqrt(b) and acceleration p' b'/2 + p'' b
+are linear limits on b (Verscheure et al., IEEE TAC 2009); jerk is sqrt(b) (p' b''/2 + 1.5 p'' b' + p''' b), so its
+limit reads |p' b''/2 + 1.5 p'' b' + p''' b| <= J / sqrt(b). The right side is convex, so its tangent at any b gives a
+safe linear limit (convex-concave procedure: Debrouwere et al., IEEE T-RO 2013). The tangent is renewed at every
+Newton step: each step lowers a bound of the true barrier function, hence the true one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.timing.mesh import GAUSS_LOBATTO, LOBATTO_WEIGHTS, Mesh, Rows, hermite, joined, rows_at
+
+Array = NDArray[np.float64]
+
+_CURVATURE_KEPT = 0.1  # at least this share of the cost's own curvature stays in the Newton matrix
+_PAIRS = ((0, 0), (0, 1), (0, 2), (1, 1), (1, 2), (2, 2))  # of b, b_u, b_uu
+_CELL_PAIRS = tuple((i, j) for i in range(4) for j in range(i, 4))  # of a cell's four unknowns
+
+
+@dataclass(frozen=True)
+class _State:
+    b: Array  # (3, K, cells): b, b_u, b_uu
+    root: Array  # (K, cells) 1/sqrt(b)
+    acceleration: Array  # (R, K, cells)
+    jerk: Array  # divided by sqrt(b)
+    tool: Array | None  # (3, K, cells)
+
+
+class FineProblem:
+    """Unknowns: value and slope of b at every node, stretches end to end; see `barrier.BarrierProblem`."""
+
+    def __init__(self, meshes: Sequence[Mesh], rows: Rows | None = None) -> None:
+        """Rows at the collocation points of the meshes are computed unless given (tightened ones)."""
+        self.meshes = tuple(meshes)
+        self.count = len(meshes)
+        self.cells = np.array([len(mesh.tau) - 1 for mesh in meshes])
+        self.cell_owner = np.repeat(np.arange(self.count), self.cells)
+        self.owner = np.repeat(np.arange(self.count), 2 * (self.cells + 1))
+        self.first = 2 * (np.arange(len(self.cell_owner)) + self.cell_owner)  # each cell's first unknown
+        self.width = np.concatenate([mesh.width for mesh in meshes])
+        self.stretch = self.width / np.repeat([mesh.unit for mesh in meshes], self.cells)  # slope unknown -> b_u
+        self.duration = np.array([mesh.clock.duration for mesh in meshes])
+        self.weights = LOBATTO_WEIGHTS[:, None] * self.width
+        self.share = self.weights / self.duration[self.cell_owner]
+        self.rows = joined([rows_at(mesh, GAUSS_LOBATTO) for mesh in meshes]) if rows is None else rows
+        self.gap = 4.0 * self.rows.acceleration.shape[1] + 2.0  # barrier terms per unit of time
+        basis = hermite(GAUSS_LOBATTO)
+        self._basis = basis
+        self._to_gradient = basis.reshape(-1, 4).T.copy()
+        self._to_matrix = np.stack([_pair_products(basis, i, j) for i, j in _CELL_PAIRS])
+
+    def per_stretch(self, values: Array) -> Array:
+        """Sum of (cells,) by stretch."""
+        return np.bincount(self.cell_owner, values, self.count)
+
+    def durations(self, x: Array) -> Array:
+        """(S,) duration of every stretch by the collocation quadrature."""
+        return self.per_stretch((self.weights / np.sqrt(self.evaluate(x, self._basis)[0])).sum(axis=0))
+
+    def corners(self, x: Array) -> Array:
+        """(4, cells) value and slope by u at the left and right end of every cell."""
+        corner = x[self.first + np.arange(4)[:, None]]
+        corner[1::2] *= self.stretch
+        return corner
+
+    def evaluate(self, x: Array, basis: Array) -> Array:
+        """b, b_u, b_uu (3, K, cells) at the points of a Hermite basis (3, K, 4)."""
+        return (basis.reshape(-1, 4) @ self.corners(x)).reshape(3, basis.shape[1], -1)
+
+    def state(self, x: Array) -> _State:
+        b = self.evaluate(x, self._basis)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            root = 1.0 / np.sqrt(b[0])
+        tool = self.rows.tool
+        return _State(b, root, *apply_rows(self.rows, b), None if tool is None else tool[0] * b[0] + tool[1] * b[1])
+
+    def shares(self, state: _State) -> tuple[Array, Array, Array, Array]:
+        """Shares used (1 = at the limit): velocity squared (K, cells), acceleration, jerk (R, K, cells), tool."""
+        return limit_shares(self.rows, state.b)
+
+    def feasible_start(self, share: float) -> Array:
+        """b constant on every stretch, so slow that no limit is used beyond about `share`."""
+        x = np.zeros(len(self.owner))
+        x[::2] = 1.0
+        return self.slowed(x, share)
+
+    def slowed(self, x: Array, share: float, only_down: bool = False) -> Array:
+        """x scaled, stretch by stretch, so that at the collocation points no limit is used beyond `share` of b."""
+        speed, acceleration, jerk, tool = self.shares(self.state(x))
+        worst = np.zeros(self.count)
+        need = np.max([speed, acceleration.max(axis=0), jerk.max(axis=0) ** (2 / 3), tool], axis=(0, 1))
+        np.maximum.at(worst, self.cell_owner, need)
+        factor = share / worst
+        return x * (np.minimum(factor, 1.0) if only_down else factor)[self.owner]
+
+    def value(self, state: _State, mu: Array) -> Array:
+        a_low, a_high = self.rows.acceleration_range
+        j_low, j_high = self.rows.jerk_range
+        root = state.root
+        under = 1.0 - state.b[0] / self.rows.wall
+        slack = (
+            (a_high - state.acceleration) * (state.acceleration - a_low),
+            (j_high * root - state.jerk) * (state.jerk - j_low * root),
+        )
+        # each product of two slacks is negative where exactly one wall is crossed; both can't be
+        lowest = np.minimum(under, np.minimum(slack[0].min(axis=0), slack[1].min(axis=0)))
+        product = under * slack[0].prod(axis=0) * slack[1].prod(axis=0)
+        if state.tool is not None:
+            room = 1.0 - (state.tool**2).sum(axis=0)
+            lowest, product = np.minimum(lowest, room), product * room
+        bad = ~((lowest > 0) & (state.b[0] > 0)).all(axis=0)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            cost = (self.weights * root - mu[self.cell_owner] * self.share * np.log(product)).sum(axis=0)
+        total = self.per_stretch(np.where(bad, 0.0, cost))
+        total[self.cell_owner[bad]] = np.inf
+        return total
+
+    def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
+        from scipy.linalg import solveh_banded
+
+        gradient, matrix = self._local(state, mu[self.cell_owner] * self.share)
+        cells = len(self.cell_owner)
+        local = self._to_gradient @ gradient.reshape(-1, cells)
+        local[1::2] *= self.stretch
+        cell = self._to_matrix @ matrix.reshape(-1, cells)
+        size = len(self.owner)
+        total, band = np.zeros(size), np.zeros((4, size))
+        for i in range(4):
+            total[self.first + i] += local[i]
+        for entry, (i, j) in zip(cell, _CELL_PAIRS, strict=True):
+            power = i % 2 + j % 2
+            band[3 - (j - i), self.first + j] += entry if power == 0 else entry * self.stretch**power
+        step = -solveh_banded(band, total, check_finite=False)
+        return step, -np.bincount(self.owner, total * step, self.count)
+
+    def _local(self, state: _State, m: Array) -> tuple[Array, Array]:
+        """Gradient (3, K, cells) by b, b_u, b_uu and the six second derivatives (6, K, cells) at every point."""
+        rows, b, root = self.rows, state.b[0], state.root
+        a_low, a_high = rows.acceleration_range
+        j_low, j_high = rows.jerk_range
+        above, below = 1 / (a_high - state.acceleration), 1 / (state.acceleration - a_low)
+        slope, bend = above - below, above * above + below * below
+        above, below = 1 / (j_high * root - state.jerk), 1 / (state.jerk - j_low * root)
+        # slack of the jerk limit: range x root(b) -+ row; `pull` is -d log(slack) / d root(b) with its sign turned
+        up, down = above * j_high, below * j_low
+        pull = (up - down).sum(axis=0)
+        spread = (up * up + down * down).sum(axis=0)
+        jerk_slope, jerk_bend = above - below, above * above + below * below
+        cross = -(below * down + above * up)
+        droot = -0.5 * root / b
+        under = 1 / (rows.wall - b)
+
+        a, j = rows.acceleration, rows.jerk
+        gradient = np.empty((3, *b.shape))
+        gradient[0] = m * ((slope * a[0]).sum(axis=0) + (jerk_slope * j[0]).sum(axis=0) - pull * droot + under)
+        gradient[0] += self.weights * droot
+        gradient[1] = m * ((slope * a[1]).sum(axis=0) + (jerk_slope * j[1]).sum(axis=0))
+        gradient[2] = m * (jerk_slope * j[2]).sum(axis=0)
+
+        ba0, bj0, bj1 = bend * a[0], jerk_bend * j[0], jerk_bend * j[1]
+        matrix = np.empty((6, *b.shape))
+        matrix[0] = (ba0 * a[0]).sum(axis=0) + (bj0 * j[0]).sum(axis=0) + under * under
+        matrix[0] += droot * (spread * droot + 2 * (cross * j[0]).sum(axis=0))
+        matrix[1] = (ba0 * a[1]).sum(axis=0) + (bj0 * j[1]).sum(axis=0) + droot * (cross * j[1]).sum(axis=0)
+        matrix[2] = (bj0 * j[2]).sum(axis=0) + droot * (cross * j[2]).sum(axis=0)
+        matrix[3] = (bend * a[1] * a[1]).sum(axis=0) + (bj1 * j[1]).sum(axis=0)
+        matrix[4] = (bj1 * j[2]).sum(axis=0)
+        matrix[5] = (jerk_bend * j[2] * j[2]).sum(axis=0)
+        if rows.tool is not None and state.tool is not None:
+            _add_tool(rows.tool, state.tool, gradient, matrix, m)
+        matrix *= m
+        matrix[0] += np.maximum(self.weights - m * pull, _CURVATURE_KEPT * self.weights) * 0.75 * root / (b * b)
+        return gradient, matrix
+
+    def reach(self, state: _State, step: Array) -> Array:
+        b = self.evaluate(step, self._basis)
+        a_low, a_high = self.rows.acceleration_range
+        along = self.rows.acceleration[0] * b[0] + self.rows.acceleration[1] * b[1]
+        ratio = np.maximum(along / (a_high - state.acceleration), along / (a_low - state.acceleration))
+        # root(b) is convex: the tangent says when the jerk wall could be met at the earliest
+        j_low, j_high = self.rows.jerk_range
+        root, fall = state.root, -0.5 * state.root / state.b[0] * b[0]
+        along = self.rows.jerk[0] * b[0] + self.rows.jerk[1] * b[1] + self.rows.jerk[2] * b[2]
+        above = (along - j_high * fall) / (j_high * root - state.jerk)
+        below = (j_low * fall - along) / (state.jerk - j_low * root)
+        ratio = np.maximum(ratio, np.maximum(above, below))
+        walls = np.maximum(b[0] / (self.rows.wall - state.b[0]), -b[0] / state.b[0])
+        worst = np.full(self.count, 1e-9)
+        np.maximum.at(worst, self.cell_owner, np.maximum(ratio.max(axis=0), walls).max(axis=0))
+        return 1.0 / worst
+
+
+def _pair_products(basis: Array, i: int, j: int) -> Array:
+    """(6 K,) what each second derivative at each point adds to entry i, j of a cell's matrix."""
+    parts = []
+    for d, e in _PAIRS:
+        product = basis[d, :, i] * basis[e, :, j]
+        parts.append(product if d == e else product + basis[e, :, i] * basis[d, :, j])
+    return np.concatenate(parts)
+
+
+def _add_tool(rows: Array, tool: Array, gradient: Array, matrix: Array, m: Array) -> None:
+    """Barrier of the cone |tool| <= 1: -log(1 - |tool|^2), |tool|^2 convex in b and b_u."""
+    room = 2 / (1 - (tool**2).sum(axis=0))
+    inner = [(tool * rows[k]).sum(axis=0) * room for k in range(2)]
+    for entry, (k, other) in ((0, (0, 0)), (1, (0, 1)), (3, (1, 1))):
+        matrix[entry] += inner[k] * inner[other] + room * (rows[k] * rows[other]).sum(axis=0)
+    for k in range(2):
+        gradient[k] += m * inner[k]
+
+
+def apply_rows(rows: Rows, b: Array) -> tuple[Array, Array]:
+    """Acceleration, and jerk / sqrt(b), in half ranges (R, K, cells) for b, b_u, b_uu (3, K, cells)."""
+    acceleration = rows.acceleration[0] * b[0] + rows.acceleration[1] * b[1]
+    return acceleration, rows.jerk[0] * b[0] + rows.jerk[1] * b[1] + rows.jerk[2] * b[2]
+
+
+def limit_shares(rows: Rows, b: Array) -> tuple[Array, Array, Array, Array]:
+    """Shares used (1 = at the limit): velocity squared (K, cells), acceleration, jerk (R, K, cells), tool (K, cells)."""
+    acceleration, jerk = apply_rows(rows, b)
+    acceleration = np.maximum(acceleration / rows.acceleration_range[0], acceleration / rows.acceleration_range[1])
+    jerk = np.maximum(jerk / rows.jerk_range[0], jerk / rows.jerk_range[1]) * np.sqrt(b[0])
+    if rows.tool is None:
+        tool = np.zeros_like(b[0])
+    else:
+        tool = np.sqrt(((rows.tool[0] * b[0] + rows.tool[1] * b[1]) ** 2).sum(axis=0))
+    return b[0] / rows.wall, acceleration, jerk, tool

@@ -1,0 +1,165 @@
+"""The fine timing's unknowns and points: b(tau) as a cubic Hermite spline, and the limited rows on the clock."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.timing.clock import Clock
+from pathplan.timing.coarse import speed_wall, tool_wall
+from pathplan.timing.motion import Motion
+
+Array = NDArray[np.float64]
+
+GAUSS_LOBATTO = np.array([0.0, 0.5 - np.sqrt(0.05), 0.5 + np.sqrt(0.05), 1.0])  # on [0, 1]
+LOBATTO_WEIGHTS = np.array([1.0, 5.0, 5.0, 1.0]) / 12.0
+_FAR = 1e12  # a wall that is no wall
+
+
+def hermite(u: Array) -> Array:
+    """Cubic Hermite basis at u (K,) in [0, 1] of a cell: (3, K, 4).
+
+    First axis: value, first and second derivative by u. Last: value and slope at the left end, then at the right.
+    """
+    value = [(1 + 2 * u) * (1 - u) ** 2, u * (1 - u) ** 2, u * u * (3 - 2 * u), u * u * (u - 1)]
+    first = [6 * u * u - 6 * u, 3 * u * u - 4 * u + 1, 6 * u - 6 * u * u, 3 * u * u - 2 * u]
+    second = [12 * u - 6, 6 * u - 4, 6 - 12 * u, 6 * u - 2]
+    return np.stack([np.stack(value, -1), np.stack(first, -1), np.stack(second, -1)])
+
+
+@dataclass(frozen=True)
+class Mesh:
+    """Cells of one stretch on its clock; breaks of the path are cell borders, so each cell is smooth inside."""
+
+    motion: Motion
+    clock: Clock
+    tau: Array  # (N+1,)
+    unit: float  # of tau, that slopes of b are expressed in
+
+    @property
+    def width(self) -> Array:
+        """(N,) cell widths."""
+        return np.diff(self.tau)
+
+
+@dataclass(frozen=True)
+class Rows:
+    """Limited rows at K points of every cell, points before cells so that sums run over whole arrays.
+
+    Coefficients are on b and its derivatives by u, the place in the cell (0..1), in shares of each row's half range.
+    velocity: b <= wall.   acceleration: low <= a[0] b + a[1] b_u <= high.
+    jerk: low / sqrt(b) <= j[0] b + j[1] b_u + j[2] b_uu <= high / sqrt(b).
+    tool: |t[0] b + t[1] b_u| <= 1 (a norm over three axes), zero rows where there is no cap.
+    """
+
+    wall: Array  # (K, cells)
+    acceleration: Array  # (2, R, K, cells)
+    acceleration_range: Array  # (2, R, 1, cells or 1): low, high
+    jerk: Array  # (3, R, K, cells)
+    jerk_range: Array
+    tool: Array | None  # (2, 3, K, cells)
+
+    def tightened(self, wall: Array, acceleration: Array, jerk: Array, tool: Array) -> Rows:
+        """Rows multiplied by factors >= 1 for each cell: wall and tool (cells,), acceleration and jerk (R, cells)."""
+        return Rows(
+            self.wall / wall,
+            self.acceleration * acceleration[:, None],
+            self.acceleration_range,
+            self.jerk * jerk[:, None],
+            self.jerk_range,
+            None if self.tool is None else self.tool * tool,
+        )
+
+
+def make_mesh(motion: Motion, clock: Clock, cells: int, cells_per_piece: int) -> Mesh:
+    """About `cells` equal cells, at least `cells_per_piece` in every piece of the path."""
+    inner = motion.path.breaks[1:-1]
+    borders = np.concatenate([[0.0], clock.inverse(inner) if len(inner) else [], [clock.duration]])
+    width = np.diff(borders)
+    count = np.maximum(cells_per_piece, np.round(cells * width / clock.duration)).astype(int)
+    start = np.repeat(borders[:-1], count)
+    share = np.arange(count.sum()) - np.repeat(np.cumsum(count) - count, count)
+    tau = np.append(start + np.repeat(width / count, count) * share, clock.duration)
+    return Mesh(motion, clock, tau, clock.duration / cells)
+
+
+def refined(mesh: Mesh, split: NDArray[np.bool_]) -> Mesh:
+    """Every cell marked in `split` (N,) halved."""
+    middle = 0.5 * (mesh.tau[:-1] + mesh.tau[1:])[split]
+    return Mesh(mesh.motion, mesh.clock, np.sort(np.concatenate([mesh.tau, middle])), mesh.unit)
+
+
+def rows_at(mesh: Mesh, u: Array) -> Rows:
+    """The limited rows of a mesh at the points u (K,) in [0, 1] of every cell, one-sided at cell ends."""
+    motion, h = mesh.motion, mesh.width
+    shape = (len(u), len(h))
+    tau = (mesh.tau[:-1] + h * u[:, None]).ravel()
+    centre = mesh.clock.derivatives(0.5 * (mesh.tau[:-1] + mesh.tau[1:]), 0)[0]
+    piece = np.tile(motion.path.locate(centre)[0], len(u))
+    s, s1, s2, s3 = mesh.clock.derivatives(tau)
+    q1, q2, q3 = motion.rows(piece, s)
+    wall = np.minimum(speed_wall(q1, motion.velocity), tool_wall(motion, piece, s))
+    q1, q2, q3 = q1.T, q2.T, q3.T
+    p1 = q1 * s1
+    p2 = q2 * s1**2 + q1 * s2
+    p3 = q3 * s1**3 + 3 * q2 * s1 * s2 + q1 * s3
+    with np.errstate(divide="ignore"):
+        wall = wall / s1**2
+    half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
+    half_jerk = 0.5 * (motion.jerk[:, 1] - motion.jerk[:, 0])
+    p1, p2, p3 = (p.reshape(len(half), *shape) for p in (p1, p2, p3))
+    a, j = 1 / half[:, None, None], 1 / half_jerk[:, None, None]
+    return Rows(
+        wall=np.minimum(wall, _FAR).reshape(shape),
+        acceleration=np.stack([p2 * a, p1 * (0.5 * a / h)]),
+        acceleration_range=(motion.acceleration / half[:, None]).T[:, :, None, None],
+        jerk=np.stack([p3 * j, p2 * (1.5 * j / h), p1 * (0.5 * j / h**2)]),
+        jerk_range=(motion.jerk / half_jerk[:, None]).T[:, :, None, None],
+        tool=_tool_rows(motion, piece, s, s1, s2, h, len(u)),
+    )
+
+
+def _tool_rows(
+    motion: Motion, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array, h: Array, points: int
+) -> Array | None:
+    cap = motion.tool_acceleration_cap(s)
+    capped = np.isfinite(cap)
+    if not capped.any():
+        return None
+    rows = np.zeros((2, 3, len(s)))
+    x1, x2 = motion.tool_derivatives(piece[capped], s[capped])
+    c1, c2, top = s1[capped], s2[capped], cap[capped]
+    rows[0][:, capped] = (x2.T * c1**2 + x1.T * c2) / top
+    rows[1][:, capped] = x1.T * c1 / (2 * top)
+    rows = rows.reshape(2, 3, points, len(h))
+    rows[1] /= h
+    return rows
+
+
+def joined(parts: Sequence[Rows]) -> Rows:
+    """Rows of several stretches end to end; stretches with fewer rows are padded with rows that never bind."""
+    widest = max(p.acceleration.shape[1] for p in parts)
+
+    def pad(values: Array) -> Array:
+        extra = widest - values.shape[1]
+        return np.pad(values, [(0, 0), (0, extra), (0, 0), (0, 0)]) if extra else values
+
+    def spread(values: Array, cells: int) -> Array:
+        extra = np.tile(np.array([-1.0, 1.0])[:, None, None, None], (1, widest - values.shape[1], 1, values.shape[3]))
+        full = np.concatenate([values, extra], axis=1)
+        return np.broadcast_to(full, (2, widest, 1, cells))
+
+    tool = None
+    if any(p.tool is not None for p in parts):
+        tool = np.concatenate([np.zeros((2, 3, *p.wall.shape)) if p.tool is None else p.tool for p in parts], axis=3)
+    return Rows(
+        np.concatenate([p.wall for p in parts], axis=1),
+        np.concatenate([pad(p.acceleration) for p in parts], axis=3),
+        np.concatenate([spread(p.acceleration_range, p.wall.shape[1]) for p in parts], axis=3),
+        np.concatenate([pad(p.jerk) for p in parts], axis=3),
+        np.concatenate([spread(p.jerk_range, p.wall.shape[1]) for p in parts], axis=3),
+        tool,
+    )

@@ -1,0 +1,98 @@
+"""One motion from stop to stop: a joint path and everything that limits how fast it may be followed."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from pathplan.errors import InputError
+from pathplan.path.joint import JointPath
+
+Array = NDArray[np.float64]
+ToolDerivatives = Callable[[Array, Array, Array], tuple[Array, Array]]
+
+
+@dataclass(frozen=True)
+class Cap:
+    """A cap on the tool on part of the path: speed in m/s, acceleration (as a norm) in m/s^2, None for no cap."""
+
+    begin: float
+    end: float
+    speed: float | None = None
+    acceleration: float | None = None
+
+
+@dataclass(frozen=True)
+class Motion:
+    """A joint path, the rows that are limited (low, high apart), and the caps on the tool.
+
+    The limited quantities are `matrix @ q`: with the identity each joint by itself, with a coupling matrix the
+    motors. Every row has finite limits of velocity, acceleration and jerk, low < 0 < high.
+    """
+
+    path: JointPath
+    matrix: Array  # (R, n)
+    velocity: Array  # (R, 2)
+    acceleration: Array
+    jerk: Array
+    caps: tuple[Cap, ...] = ()
+    tool: ToolDerivatives | None = None  # (q, q', q'') each (N, n) -> tool position x', x'' each (N, 3)
+
+    def rows(self, piece: NDArray[np.intp], s: Array, highest: int = 3) -> list[Array]:
+        """Derivatives 1..highest of the limited rows by s, each (N, R); `piece` says which side of a break."""
+        local = s - self.path.breaks[piece]
+        return [self.path.at(piece, local, order) @ self.matrix.T for order in range(1, highest + 1)]
+
+    def tool_speed_cap(self, s: Array) -> Array:
+        """(N,) the lowest speed cap at each s, inf where there is none."""
+        return _lowest(s, [(c.begin, c.end, c.speed) for c in self.caps])
+
+    def tool_acceleration_cap(self, s: Array) -> Array:
+        """(N,) the lowest acceleration cap at each s, inf where there is none."""
+        return _lowest(s, [(c.begin, c.end, c.acceleration) for c in self.caps])
+
+    def tool_derivatives(self, piece: NDArray[np.intp], s: Array) -> tuple[Array, Array]:
+        """First and second derivative of the tool position by s, each (N, 3), m."""
+        if self.tool is None:
+            raise ValueError("motion has caps on the tool but no way to compute the tool's motion")
+        local = s - self.path.breaks[piece]
+        return self.tool(*(self.path.at(piece, local, order) for order in range(3)))
+
+    @property
+    def capped(self) -> bool:
+        """Whether any cap on the tool applies."""
+        return any(c.speed is not None or c.acceleration is not None for c in self.caps)
+
+
+def _lowest(s: Array, caps: list[tuple[float, float, float | None]]) -> Array:
+    lowest = np.full(s.shape, np.inf)
+    for begin, end, cap in caps:
+        if cap is not None:
+            inside = (s >= begin - 1e-12) & (s <= end + 1e-12)
+            lowest = np.where(inside, np.minimum(lowest, cap), lowest)
+    return lowest
+
+
+def two_sided(limit: ArrayLike, count: int, name: str) -> Array:
+    """A limit given as one number, one a joint or low and high a joint, as (count, 2) low, high.
+
+    Raises InputError unless every low is finite and negative and every high finite and positive.
+    """
+    given = np.asarray(limit, dtype=float)
+    if given.ndim == 0:
+        given = np.full(count, float(given))
+    if given.shape == (count,):
+        given = np.stack([-given, given], axis=1)
+    if given.shape != (count, 2):
+        raise InputError(
+            f"{name}: expected one number, {count} numbers or {count} pairs low, high, got shape {given.shape}"
+        )
+    if not np.all(np.isfinite(given)) or np.any(given[:, 0] >= 0) or np.any(given[:, 1] <= 0):
+        row = int(np.flatnonzero(~(np.isfinite(given).all(axis=1) & (given[:, 0] < 0) & (given[:, 1] > 0)))[0])
+        raise InputError(
+            f"{name}: joint {row + 1}: expected finite limits on both sides of zero, got {given[row].tolist()}"
+        )
+    return given

@@ -1,0 +1,183 @@
+"""Near time-optimal timing of many stretches: coarse timing, clock, fine problem, refinement, exact limits.
+
+What makes a timing optimal is that some limit is in use at every instant. So after every solve the share of time
+without a limit in use tells where the cells are too wide, and they are halved there until what could be gained is
+below `_LOSS` of the duration. Between the collocation points limits may be overstepped by a little: cells where that
+happens get tighter limits, and what is left at the end slows the whole stretch by a hair.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.errors import PathplanError
+from pathplan.timing.barrier import follow_central_path
+from pathplan.timing.clock import make_clock
+from pathplan.timing.coarse import CoarseTiming, coarse_timing
+from pathplan.timing.fine import FineProblem, limit_shares
+from pathplan.timing.mesh import Mesh, Rows, hermite, joined, make_mesh, refined, rows_at
+from pathplan.timing.motion import Motion
+from pathplan.timing.stretch import StretchTiming
+
+Array = NDArray[np.float64]
+Progress = Callable[[int], None]
+
+_LOSS = 2.5e-3  # a stretch is refined while more than this share of its time leaves every limit unused
+_ROUNDS = 8
+_SPLIT_SHARE = 0.85  # the cells that together hold this share of the loss are halved
+_OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
+_COARSE_GAP, _FINAL_GAP = 5e-3, 2e-4  # duality gap aimed at, relative to the duration
+_TIGHTENINGS = 5
+_TIGHT = 2e-4  # overstepping left to slowing the whole stretch
+_CHECK_POINTS = 33  # per cell, ends included; peaks between them by parabolas
+_MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of tables
+_FEWEST_CELLS = 12
+_CELLS_PER_WINDOW = 3.0
+_SHORTEST_WINDOW = 1 / 30  # of the coarse duration: a finer clock only copies the noise of the coarse timing
+_BATCH = 64  # stretches solved together
+
+
+def time_motions(motions: Sequence[Motion], *, progress: Progress | None = None) -> list[StretchTiming]:
+    """Near time-optimal timings, one for each motion, in order. `progress` is told how many were finished.
+
+    Raises PathplanError when a problem does not converge: no unfinished timing is returned.
+    """
+    out: list[StretchTiming] = []
+    for begin in range(0, len(motions), _BATCH):
+        batch = motions[begin : begin + _BATCH]
+        out.extend(_time_batch(batch))
+        if progress is not None:
+            progress(len(batch))
+    return out
+
+
+def _time_batch(motions: Sequence[Motion]) -> list[StretchTiming]:
+    windows, meshes = [], []
+    for motion, coarse in zip(motions, coarse_timing(motions), strict=True):
+        window = _jerk_window(motion, coarse)
+        clock = make_clock(coarse, window)
+        cells = max(_FEWEST_CELLS, int(np.ceil(_CELLS_PER_WINDOW * clock.duration / window)))
+        windows.append(window)
+        meshes.append(make_mesh(motion, clock, cells, 1))
+    problem = FineProblem(meshes)
+    x = problem.feasible_start(0.7)
+    finished: dict[int, tuple[Mesh, Array]] = {}
+    active = list(range(len(motions)))
+    start = 0.05 * problem.durations(x)
+    for round_ in range(_ROUNDS):
+        scale = problem.durations(x) / problem.gap
+        x, _ = follow_central_path(problem, x, start=start, final=_COARSE_GAP * scale)
+        split, good = _where_to_split(problem, x)
+        parts = np.split(x, np.cumsum(2 * (problem.cells + 1))[:-1])
+        last = round_ == _ROUNDS - 1
+        for k in np.flatnonzero(good | last):
+            finished[active[k]] = (problem.meshes[k], parts[k])
+        go_on = np.flatnonzero(~good & ~last)
+        if not len(go_on):
+            break
+        active = [active[k] for k in go_on]
+        pairs = [_halved(problem.meshes[k], parts[k], split[k]) for k in go_on]
+        problem = FineProblem([mesh for mesh, _ in pairs])
+        x = problem.slowed(np.concatenate([values for _, values in pairs]), 0.97, only_down=True)
+        start = 2.5 * _COARSE_GAP * problem.durations(x) / problem.gap
+    ordered = [finished[k] for k in range(len(motions))]
+    return _within_limits([mesh for mesh, _ in ordered], np.concatenate([values for _, values in ordered]))
+
+
+def _jerk_window(motion: Motion, coarse: CoarseTiming) -> float:
+    """How long the rows that set the pace take to build up their acceleration, s, at most the whole motion."""
+    acceleration = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
+    jerk = 0.5 * (motion.jerk[:, 1] - motion.jerk[:, 0])
+    middle = 0.5 * (coarse.s[1:] + coarse.s[:-1])
+    speed = 0.5 * (coarse.speed[1:] + coarse.speed[:-1])
+    q1, q2 = motion.rows(coarse.piece, middle, 2)
+    used = np.abs(q1 * coarse.acceleration[:, None] + q2 * speed[:, None] ** 2) / acceleration
+    active = used.max(axis=0) >= 0.5 * used.max()
+    window = np.max(acceleration[active] / jerk[active])
+    return float(np.clip(window, _SHORTEST_WINDOW * coarse.time[-1], coarse.time[-1]))
+
+
+def _where_to_split(problem: FineProblem, x: Array) -> tuple[list[NDArray[np.bool_]], NDArray[np.bool_]]:
+    """For every stretch which cells to halve, and which stretches are good enough already."""
+    u = (np.arange(6) + 0.5) / 6
+    rows = joined([rows_at(mesh, u) for mesh in problem.meshes])
+    speed, acceleration, jerk, tool = limit_shares(rows, problem.evaluate(x, hermite(u)))
+    used = np.max([np.sqrt(speed), acceleration.max(axis=0), jerk.max(axis=0), tool], axis=0)
+    loss = problem.width * (1.0 - np.minimum(used, 1.0)).mean(axis=0) / problem.duration[problem.cell_owner]
+    over = used.max(axis=0) > 1.0 + _OVERSTEP
+    borders = np.cumsum(problem.cells)[:-1]
+    split, good = [], []
+    for lost, overstepped in zip(np.split(loss, borders), np.split(over, borders), strict=True):
+        good.append(lost.sum() <= _LOSS and not overstepped.any())
+        split.append(overstepped | _largest(lost, _SPLIT_SHARE * lost.sum() if lost.sum() > _LOSS else 0.0))
+    return split, np.array(good)
+
+
+def _largest(values: Array, total: float) -> NDArray[np.bool_]:
+    """The fewest largest values that together make up `total`."""
+    order = np.argsort(-values)
+    count = int(np.searchsorted(np.cumsum(values[order]), total)) + 1 if total > 0 else 0
+    chosen = np.zeros(len(values), dtype=bool)
+    chosen[order[:count]] = True
+    return chosen
+
+
+def _halved(mesh: Mesh, x: Array, split: NDArray[np.bool_]) -> tuple[Mesh, Array]:
+    """The mesh with the marked cells halved, and the same spline on it."""
+    nodes = x.reshape(-1, 2)
+    corner = np.stack([nodes[:-1, 0], nodes[:-1, 1], nodes[1:, 0], nodes[1:, 1]])[:, split]
+    ratio = mesh.width[split] / mesh.unit
+    corner[1::2] *= ratio
+    value, slope, _ = hermite(np.array([0.5]))[:, 0] @ corner
+    middle = np.stack([value, slope / ratio], axis=1)
+    return refined(mesh, split), np.insert(nodes, np.flatnonzero(split) + 1, middle, axis=0).ravel()
+
+
+def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
+    """Solve to the final accuracy with limits kept everywhere, not only at the collocation points."""
+    problem = FineProblem(meshes)
+    u = np.linspace(0.0, 1.0, _CHECK_POINTS)
+    checked, basis = joined([rows_at(mesh, u) for mesh in meshes]), hermite(u)
+    start = 3.0 * _COARSE_GAP
+    for round_ in range(_TIGHTENINGS):
+        scale = problem.durations(x) / problem.gap
+        x, _ = follow_central_path(problem, x, start=start * scale, final=_FINAL_GAP * scale)
+        peaks = _peaks(checked, problem.evaluate(x, basis))
+        speed, acceleration, jerk, tool = peaks
+        need = np.max([speed, acceleration.max(axis=0), jerk.max(axis=0) ** (2 / 3), tool], axis=0)
+        worst = np.zeros(problem.count)
+        np.maximum.at(worst, problem.cell_owner, need)
+        if worst.max() <= 1.0 + _TIGHT or round_ == _TIGHTENINGS - 1:
+            break
+        factors = [1.0 + 1.7 * np.maximum(peak - 1.0, 0.0) for peak in peaks]
+        problem = FineProblem(meshes, problem.rows.tightened(*factors))
+        x = problem.slowed(x, 0.999, only_down=True)
+        start = 3.0 * _FINAL_GAP
+    if not np.all(np.isfinite(worst)):
+        raise PathplanError("timing: the limits could not be evaluated along the path (not a number)")
+    x = x * ((1.0 - _MARGIN) / worst)[problem.owner]
+    out = []
+    for mesh, values in zip(meshes, np.split(x, np.cumsum(2 * (problem.cells + 1))[:-1]), strict=True):
+        b, slope = values[::2].copy(), values[1::2] / mesh.unit
+        out.append(StretchTiming(mesh.motion, mesh.clock, mesh.tau, b, slope))
+    return out
+
+
+def _peaks(rows: Rows, b: Array) -> tuple[Array, Array, Array, Array]:
+    """Largest share in every cell: velocity squared (cells,), acceleration, jerk (R, cells), tool (cells,)."""
+    speed, acceleration, jerk, tool = limit_shares(rows, b)
+    return _top(speed), _top(acceleration), _top(jerk), _top(tool)
+
+
+def _top(values: Array) -> Array:
+    """Maximum over the points (second axis from the end), peaks between points by the parabola through three."""
+    before, here, after = values[..., :-2, :], values[..., 1:-1, :], values[..., 2:, :]
+    bend = 2 * here - before - after
+    with np.errstate(divide="ignore", invalid="ignore"):
+        rise = (after - before) ** 2 / (8 * bend)
+    inside = (here >= before) & (here >= after) & (bend > 0)
+    peak = np.where(inside, here + np.where(inside, rise, 0.0), -np.inf).max(axis=-2)
+    return np.maximum(values.max(axis=-2), peak)
