@@ -48,7 +48,9 @@ def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces
                 joint_path = _joint_path(pieces, part, start)
                 caps = _caps(path, spans, span, start)
                 arm = arms.carrying(step)
-                sequence.append(Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span]))
+                sequence.append(
+                    Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span])
+                )
         elif step.motion == "wait" or step.index not in parts.flown_by:
             sequence.append(Wait(step.index, step.wait))
     corners = _corners(path, layout, start, stretch_of_motion)
@@ -141,7 +143,11 @@ def _lower(*values: float | None) -> float | None:
 def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple[Cap, ...]:
     caps: list[Cap] = []
     for i in span:
-        own = [_step_caps(path.task, path.legs[spans.motions.leg[m]].step) for m in (spans.before[i], spans.after[i]) if m >= 0]
+        own = [
+            _step_caps(path.task, path.legs[spans.motions.leg[m]].step)
+            for m in (spans.before[i], spans.after[i])
+            if m >= 0
+        ]
         speed, acceleration = (_lower(*values) for values in zip(*own, strict=True))
         end = float(start[i] + spans.length[i])
         if caps and (caps[-1].speed, caps[-1].acceleration) == (speed, acceleration):
@@ -151,7 +157,9 @@ def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple
     return tuple(caps)
 
 
-def _corners(path: CartesianPath, layout: Layout, start: Array, stretch_of_motion: Index) -> tuple[Corner, ...]:
+def _corners(
+    path: CartesianPath, layout: Layout, start: Array, stretch_of_motion: Index
+) -> tuple[Corner, ...]:
     spans = layout.spans
     span_of = {int(spans.before[i]): i for i in np.flatnonzero(spans.corner)}
     ends = np.zeros(int(layout.stretch.max(initial=0)) + 1)

@@ -1,7 +1,8 @@
 """The programmed geometry of a task: which lines and arcs its steps are, before any joint is asked.
 
-A `CartesianPath` follows from the task's poses alone. Only an arm with fewer than six axes has a say: a pose that it
-serves within its tolerance is replaced by the pose it truly takes, so that the path in between can be followed exactly.
+A `CartesianPath` follows from the task's poses alone. Only an arm with fewer than six axes has a say: a
+pose that it serves within its tolerance is replaced by the pose it truly takes, so that the path in
+between can be followed exactly.
 """
 
 from __future__ import annotations
@@ -47,8 +48,8 @@ class Leg:
 class CartesianPath:
     """What the steps of a task ask of the tool: lines, arcs and reorientations with exact evaluators.
 
-    `legs`: the moving steps in order; waits have none. `segments`: one row per cartesian leg. Corners are not part of
-    it: where a joint step takes part in one, they depend on the joints.
+    `legs`: the moving steps in order; waits have none. `segments`: one row per cartesian leg. Corners are
+    not part of it: where a joint step takes part in one, they depend on the joints.
     """
 
     task: Task
@@ -65,7 +66,9 @@ class CartesianPath:
 
 
 def tool_of(arm: Arm, name: str) -> Tool:
-    """The tool a step names; the arm's own where it names none. Raises InputError for one the arm does not know."""
+    """The tool a step names; the arm's own where it names none. Raises InputError for one the arm does
+    not know.
+    """
     if name in ("", arm.tool.name):
         return arm.tool
     if name not in arm.tools:
@@ -76,8 +79,8 @@ def tool_of(arm: Arm, name: str) -> Tool:
 def cartesian_path(task: Task) -> CartesianPath:
     """The programmed geometry of a task.
 
-    Raises InputError, with every problem found in `problems`, for arcs that make no circle and reorientations by a
-    half turn, naming the step.
+    Raises InputError, with every problem found in `problems`, for arcs that make no circle and
+    reorientations by a half turn, naming the step.
     """
     legs: list[Leg] = []
     parts: list[Segments] = []
@@ -142,7 +145,9 @@ def _target_pose(task: Task, step: Step, tool: Array) -> Array:
         return task.arm.forward(target.joints) @ np.linalg.solve(task.arm.tool.flange_from_tool, tool)
     carried = _carried_by(task, target)
     if carried:
-        raise InputError(f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest")
+        raise InputError(
+            f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest"
+        )
     pose = task.pose(target)
     if task.arm.n >= 6:
         return pose

@@ -1,8 +1,9 @@
 """Which branch the arm takes where, over the whole task: the shortest in time by the velocity limits.
 
-Dynamic programming over the targets (Bellman 1957). A line or arc leads from each state to the one it arrives in by
-following it; a joint step from any state to any. The cost of a motion is the time its fastest-asked joint needs at
-its velocity limit, summed along lines and arcs, so it does not count accelerating and stopping.
+Dynamic programming over the targets (Bellman 1957). A line or arc leads from each state to the one it
+arrives in by following it; a joint step from any state to any. The cost of a motion is the time its
+fastest-asked joint needs at its velocity limit, summed along lines and arcs, so it does not count
+accelerating and stopping.
 """
 
 from __future__ import annotations
@@ -31,8 +32,9 @@ SAME_STATE = 1e-6  # rad or m: a track that ends nearer than this to a state end
 class Routes:
     """Where each state gets to along the line or arc that leaves it; rows only for states with such a leg.
 
-    `row` (S,): the row of a state, -1 if a joint step leaves it. Rows: `slot`, the track followed (-1: none starts
-    there); `turns` (n,) to add to the track; `end` (n,) where it arrives; `free`: it follows to the end within the limits; `time`.
+    `row` (S,): the row of a state, -1 if a joint step leaves it. Rows: `slot`, the track followed (-1:
+    none starts there); `turns` (n,) to add to the track; `end` (n,) where it arrives; `free`: it follows
+    to the end within the limits; `time`.
     """
 
     row: Index
@@ -56,8 +58,8 @@ class Choice:
 def candidate_states(path: CartesianPath, tool_from_own: Array) -> States:
     """All states at the start and after each leg. `tool_from_own` (m, 4, 4) of each leg's tool.
 
-    Raises UnreachableError, naming the step, for a target out of reach, outside the limits, or not to be had in the
-    configuration asked.
+    Raises UnreachableError, naming the step, for a target out of reach, outside the limits, or not to be
+    had in the configuration asked.
     """
     arm, legs = path.task.arm, path.legs
     posed = np.array([i for i, leg in enumerate(legs) if _given_joints(path, i) is None], dtype=np.intp)
@@ -68,17 +70,20 @@ def candidate_states(path: CartesianPath, tool_from_own: Array) -> States:
         wanted = np.array(branches.valid)
         row, branch = np.nonzero(wanted)
         target, branch, q = expand(arm, posed[row] + 1, branch, branches.q[row, branch])
-        for i, leg_index in enumerate(posed):
-            asked = legs[leg_index].step.configuration
-            reaching = target == leg_index + 1
-            if not reaching.any():
-                raise _refused(path, int(leg_index), poses[i])
-            if asked:
-                keep = ~reaching | matching(branches.labels, asked)[branch]
-                if not (keep & reaching).any():
-                    there = [branches.labels[b] for b in dict.fromkeys(branch[reaching].tolist())]
-                    raise no_state_asked(legs[leg_index], there)
-                target, branch, q = target[keep], branch[keep], q[keep]
+        without = np.flatnonzero(np.bincount(target, minlength=len(legs) + 1)[posed + 1] == 0)
+        if len(without):
+            raise _refused(path, int(posed[without[0]]), poses[without[0]])
+        allowed = np.ones((len(legs) + 1, len(branches.labels)), dtype=bool)
+        for i in posed:
+            if legs[i].step.configuration:
+                allowed[i + 1] = matching(branches.labels, legs[i].step.configuration)
+        keep = allowed[target, branch]
+        without = np.flatnonzero(np.bincount(target[keep], minlength=len(legs) + 1)[posed + 1] == 0)
+        if len(without):
+            i = int(posed[without[0]])
+            there = [branches.labels[b] for b in dict.fromkeys(branch[target == i + 1].tolist())]
+            raise no_state_asked(legs[i], there)
+        target, branch, q = target[keep], branch[keep], q[keep]
     given = [i for i in range(len(legs)) if _given_joints(path, i) is not None]
     vectors = [path.task.start, *(_given_joints(path, i) for i in given)]
     target = np.concatenate([target, [0], np.array(given, dtype=np.intp) + 1])
@@ -135,7 +140,9 @@ def routes(path: CartesianPath, states: States, tracks: Tracks) -> Routes:
     matrix, (low, high) = arm.limits.matrix[judged], arm.limits.position[judged].T
     lowest, highest, time = _extremes(arm, tracks, matrix)
     shift = turns @ matrix.T
-    inside = ((lowest[k, slot] + shift >= low - LIMIT_SLACK) & (highest[k, slot] + shift <= high + LIMIT_SLACK)).all(axis=1)
+    inside = (
+        (lowest[k, slot] + shift >= low - LIMIT_SLACK) & (highest[k, slot] + shift <= high + LIMIT_SLACK)
+    ).all(axis=1)
     return Routes(
         row=row,
         slot=slot,
@@ -174,7 +181,8 @@ def choose(
     """The states that make the task shortest in time by the velocity limits.
 
     `barred_legs`: (leg, state it starts from) and `barred_states`: found unusable on the finished path.
-    Raises UnreachableError, naming step, share, pose and reason, where no state is left that can follow a step.
+    Raises UnreachableError, naming step, share, pose and reason, where no state is left that can follow a
+    step.
     """
     arm = path.task.arm
     endless = endless_joints(arm)

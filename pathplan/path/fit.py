@@ -1,8 +1,9 @@
 """Following spans: joint positions as polynomial pieces that keep to the path and to its derivatives.
 
-Exact values and derivatives at the ends of a piece come from Newton's method on the pose and from the Jacobian's own
-derivatives (`pathplan.arm.kinematics.joint_derivatives`). Between them the septic piece is compared with the exact path at three
-points, among them where each of its errors is largest; pieces that miss are halved, all of a level in one batch.
+Exact values and derivatives at the ends of a piece come from Newton's method on the pose and from the
+Jacobian's own derivatives (`pathplan.arm.kinematics.joint_derivatives`). Between them the septic piece is
+compared with the exact path at three points, among them where each of its errors is largest; pieces that
+miss are halved, all of a level in one batch.
 """
 
 from __future__ import annotations
@@ -24,18 +25,23 @@ __all__ = ["Pieces", "Trouble", "fit"]
 
 POSITION = 2e-7  # m a piece may lie off the path at the tool centre point
 ANGLE = 2e-7  # rad
-DERIVATIVE = (1e-5, 1e-4, 1e-3)  # share of the largest q', q'', q''' on the piece by which it may miss the exact one
+# Share of the largest q', q'', q''' on a piece by which it may miss the exact one.
+DERIVATIVE = (1e-5, 1e-4, 1e-3)
 FIRST_WIDTH = 0.5  # path parameter of a piece to start with
 _HALVINGS = 14
-# Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second) and near 0.32 and 0.68 (first, third).
+# Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second) and near 0.32 and 0.68
+# (first, third).
 _CHECKED = np.array([0.32, 0.5, 0.68])
-# Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over h^k.
+# Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over
+# h^k.
 _ROUNDING = np.array([1e-13, 1e-12, 1e-11])
 
 
 @dataclass(frozen=True)
 class Trouble(Exception):
-    """A place where a span can't be followed with the branches chosen: span, position in it, joint vector, and why."""
+    """A place where a span can't be followed with the branches chosen: span, position in it, joint
+    vector, and why.
+    """
 
     span: int
     at: float
@@ -61,7 +67,9 @@ def fit(spans: Spans) -> Pieces:
     span = np.repeat(todo, count + 1)
     number = np.arange(len(span)) - np.repeat(np.cumsum(count + 1) - (count + 1), count + 1)
     at = spans.length[span] * number / np.repeat(count, count + 1)
-    jets = _nodes(spans, span, at, spans.guess(span, at)) if len(span) else np.zeros((4, 0, spans.motions.arm.n))
+    jets = (
+        _nodes(spans, span, at, spans.guess(span, at)) if len(span) else np.zeros((4, 0, spans.motions.arm.n))
+    )
     opening = np.flatnonzero(number < np.repeat(count, count + 1))
     span, start, width = span[opening], at[opening], (at[1:] - at[:-1])[opening] if len(at) else at
     begin, end = jets[:, opening], jets[:, opening + 1]
@@ -99,7 +107,8 @@ def _joined(parts: list[Pieces]) -> Pieces:
 
 
 def _exact(spans: Spans, i: Index) -> Pieces:
-    """Spans straight in joint space, and corners between two of them, as the polynomials they are: degree one and four.
+    """Spans straight in joint space, and corners between two of them, as the polynomials they are: degree
+    one and four.
 
     With x = at / delta the ramps of a corner are x^3/4 - x^4/16 coming in and x - 1 minus that going out.
     """
@@ -124,7 +133,9 @@ def _exact(spans: Spans, i: Index) -> Pieces:
 
 
 def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
-    """(4, N, n) exact q and derivatives at positions in spans. Raises Trouble at singularities and out of reach."""
+    """(4, N, n) exact q and derivatives at positions in spans. Raises Trouble at singularities and out
+    of reach.
+    """
     arm = spans.motions.arm
     jets = spans.tool_jets(i, at)
     poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(i)
@@ -133,7 +144,9 @@ def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
     poor = ~met | (value < SINGULAR)
     if poor.any():
         row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
-        raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach")
+        raise Trouble(
+            int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach"
+        )
     derivatives, _ = joint_derivatives(arm, q, spatial_twists(jets))
     return np.concatenate([q[None], derivatives.transpose(1, 0, 2)]) + spans.joint_jets(i, at)
 
@@ -153,7 +166,9 @@ def _keeps(
     jets = spans.tool_jets(i, at)
     own_from_tool = np.linalg.inv(spans.tool_from_own(i))
     missing = pose_error(arm.forward(q) @ own_from_tool, poses_of(jets.position[0], jets.rotation))
-    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
+    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (
+        np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE
+    )
     good = near.reshape(m, points).all(axis=1)
     exact = joint_derivatives(arm, q, spatial_twists(jets))[0].transpose(1, 0, 2) + straight[1:]
     weights = joint_weights(arm)
@@ -164,7 +179,8 @@ def _keeps(
     error = largest(fitted[1:] - exact)
     ends = np.maximum(np.abs(begin[1:] * weights).max(axis=2), np.abs(end[1:] * weights).max(axis=2))
     scale = np.maximum(largest(exact), ends)
-    # The path parameter counts radians or arm lengths: a bend is measured at least against one that turns once a radian.
+    # The path parameter counts radians or arm lengths: a bend is measured at least against one that turns
+    # once a radian.
     scale[1:] = np.maximum(scale[1:], scale[0])
     powers = width ** np.arange(1, 4)[:, None]
     allowed = np.array(DERIVATIVE)[:, None] * scale + _ROUNDING[:, None] / powers

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 
 from pathplan.errors import PathplanError, UnreachableError
@@ -25,18 +27,20 @@ _CHOICES = 40  # of branches, each found unusable only on the finished path
 
 
 def follow_task(task: Task) -> TaskPath:
-    """The joint path of a task: lines and arcs followed to 1 um and 1 urad, corners within their regions, limits kept.
+    """The joint path of a task: lines and arcs followed to 1 um and 1 urad, corners within their regions,
+    limits kept.
 
-    The branches are those that make the task shortest by the velocity limits. A choice that turns out unusable on the finished
-    path (a limit passed between samples, a corner that runs into a singularity) is barred and the next best taken.
+    The branches are those that make the task shortest by the velocity limits. A choice that turns out
+    unusable on the finished path (a limit passed between samples, a corner that runs into a singularity)
+    is barred and the next best taken.
 
     Raises
     ------
     InputError
         A step makes no line or arc, turns the tool by a half turn, or has a blend that can't be kept.
     UnreachableError
-        A target is out of reach, or no branch can follow a step; the message names step, share, pose and reason, and `data`
-        holds step, share, pose, joint, limit, singular, best.
+        A target is out of reach, or no branch can follow a step; the message names step, share, pose and
+        reason, and `data` holds step, share, pose, joint, limit, singular, best.
     """
     path = cartesian_path(task)
     frames = tool_frames(path)
@@ -91,17 +95,27 @@ def _trouble_words(path: CartesianPath, layout: Layout, trouble: Trouble) -> Unr
     return _refusal(path, layout, trouble.span, trouble.at, trouble.q, reason, data)
 
 
-def _crossing_words(path: CartesianPath, layout: Layout, pieces: Pieces, crossing: Crossing) -> UnreachableError:
+def _crossing_words(
+    path: CartesianPath, layout: Layout, pieces: Pieces, crossing: Crossing
+) -> UnreachableError:
     arm, piece = path.task.arm, crossing.piece
     q = derivatives_at(pieces.coefficients[:, piece : piece + 1], np.array([crossing.local]))[0, 0]
     limit = float(arm.limits.position[crossing.row, crossing.side])
     data = {"joint": arm.limits.names[crossing.row], "limit": limit}
     at = float(pieces.start[piece]) + crossing.local
-    return _refusal(path, layout, int(pieces.span[piece]), at, q, limit_text(arm, crossing.row, crossing.side), data)
+    return _refusal(
+        path, layout, int(pieces.span[piece]), at, q, limit_text(arm, crossing.row, crossing.side), data
+    )
 
 
 def _refusal(
-    path: CartesianPath, layout: Layout, span: int, at: float, q: np.ndarray, reason: str, data: dict[str, object]
+    path: CartesianPath,
+    layout: Layout,
+    span: int,
+    at: float,
+    q: np.ndarray,
+    reason: str,
+    data: Mapping[str, object],
 ) -> UnreachableError:
     spans = layout.spans
     i, where = np.array([span]), np.array([at])
@@ -114,10 +128,13 @@ def _refusal(
         pose = path.task.arm.forward(q)
     share = float(np.clip(spans.sides(i, where)[0][0] / spans.motions.length[motion], 0.0, 1.0))
     if spans.corner[span]:
-        text = f"{step.where}: the corner after this step can't be followed: at {place_text(pose)} {reason}; a smaller blend may help"
+        text = (
+            f"{step.where}: the corner after this step can't be followed: at {place_text(pose)} {reason}; "
+            "a smaller blend may help"
+        )
     else:
         text = (
-            f"{step.where}: no branch can follow this {step.motion}: the best gets to {share * 100:.1f} % of it, "
-            f"{place_text(pose)}, where {reason}"
+            f"{step.where}: no branch can follow this {step.motion}: "
+            f"the best gets to {share * 100:.1f} % of it, {place_text(pose)}, where {reason}"
         )
     return UnreachableError(text, data={"step": step.index, "share": share, "pose": pose, "best": q, **data})

@@ -1,12 +1,13 @@
 """Lines, arcs and reorientations with exact derivatives: the pieces a Cartesian path is programmed of.
 
-Every such motion is uniform in its own path parameter s (dimensionless, from 0 to `length`): a point moving straight at
-a constant rate, or round a circle at a constant rate, while the tool turns about a fixed axis at a constant rate:
+Every such motion is uniform in its own path parameter s (dimensionless, from 0 to `length`): a point
+moving straight at a constant rate, or round a circle at a constant rate, while the tool turns about a
+fixed axis at a constant rate:
 
     p(s) = base + velocity s + cos(rate s) x + sin(rate s) y          R(s) = exp(turn s) R(0)
 
-with `length` = sqrt((path length / arm length)^2 + (rotation angle)^2), so a pure reorientation counts by its angle.
-A step is therefore a row of numbers, and all steps of a task are evaluated in one go.
+with `length` = sqrt((path length / arm length)^2 + (rotation angle)^2), so a pure reorientation counts by
+its angle. A step is therefore a row of numbers, and all steps of a task are evaluated in one go.
 """
 
 from __future__ import annotations
@@ -36,27 +37,33 @@ __all__ = [
 ]
 
 Index = NDArray[np.intp]
+Mask = NDArray[np.bool_]
 
 AMBIGUOUS = 1e-6  # rad: nearer to a half turn than this, no rotation is the shortest
 NO_MOTION = 1e-9  # path parameter: shorter motions are none (a nanometre on a metre)
 _ON_CHORD = 1e-6  # sine of the angle at the via point below which three points make no circle
-_IN_PLANE = 1e-5  # m a start may lie off the plane of the circle, and is then carried along: rounding of a file
+# m that a start may lie off the plane of its circle, and is then carried along: rounding of a file.
+_IN_PLANE = 1e-5
 
 
 class DegenerateArc(ValueError):
-    """Three points, or a centre and an axis, that make no circle; the message says why and what was expected."""
+    """Three points, or a centre and an axis, that make no circle; the message says why and what was
+    expected.
+    """
 
 
 class HalfTurn(ValueError):
-    """Start and target orientation lie half a turn apart: no shortest rotation; the message says what helps."""
+    """Start and target orientation lie half a turn apart: no shortest rotation; the message says what
+    helps.
+    """
 
 
 @dataclass(frozen=True, eq=False)
 class Jets:
     """Tool motions by path parameter: value and derivatives to third order, N at a time.
 
-    position (4, N, 3): p, p', p'', p''' in m; rotation (N, 3, 3) base_from_tool; turning (3, N, 3): w, w', w'' in rad,
-    the turning rate in the base frame, R' = [w] R.
+    position (4, N, 3): p, p', p'', p''' in m; rotation (N, 3, 3) base_from_tool; turning (3, N, 3): w, w',
+    w'' in rad, the turning rate in the base frame, R' = [w] R.
     """
 
     position: Array
@@ -66,7 +73,9 @@ class Jets:
 
 @dataclass(frozen=True, eq=False)
 class Segments:
-    """K uniform motions as arrays; see the module's formula. All in the base frame, SI, over s in [0, length]."""
+    """K uniform motions as arrays; see the module's formula. All in the base frame, SI, over s in [0,
+    length].
+    """
 
     base: Array  # (K, 3)
     velocity: Array  # (K, 3)
@@ -86,7 +95,9 @@ class Segments:
     def join(cls, parts: Sequence[Segments]) -> Segments:
         """One batch of all rows; an empty batch of none."""
         if not parts:
-            return cls(*(np.zeros((0, *shape)) for shape in ((3,), (3,), (3,), (3,), (), (3,), (3, 3), (), (), ())))
+            return cls(
+                *(np.zeros((0, *shape)) for shape in ((3,), (3,), (3,), (3,), (), (3,), (3, 3), (), (), ()))
+            )
         return cls(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)))
 
     def poses(self, k: Index, s: Array) -> Array:
@@ -99,8 +110,8 @@ class Segments:
     def jets(self, k: Index, s: Array, rates: Array | None = None) -> Jets:
         """Exact derivatives at s (N,) of segments k (N,).
 
-        `rates` (3, N): s', s'', s''' where s itself is a function of another parameter; derivatives are then by that
-        one (chain rule). Without: s' = 1.
+        `rates` (3, N): s', s'', s''' where s itself is a function of another parameter; derivatives are
+        then by that one (chain rule). Without: s' = 1.
         """
         rate = self.rate[k][:, None]
         angle = rate[:, 0] * s
@@ -133,7 +144,9 @@ def poses_of(position: Array, rotation: Array) -> Array:
 
 
 def spatial_twists(jets: Jets) -> Array:
-    """(N, 3, 6) spatial twist (v_o, w) and its two derivatives: v_o = p' - w x p, differentiated twice more."""
+    """(N, 3, 6) spatial twist (v_o, w) and its two derivatives: v_o = p' - w x p, differentiated twice
+    more.
+    """
     p, p1, p2, p3 = jets.position
     w, w1, w2 = jets.turning
     twists = np.empty((len(p), 3, 6))
@@ -150,7 +163,9 @@ def superpose(first: Jets, second: Jets, corner: Array) -> Jets:
     position[0] -= corner[:, :3, 3]
     lead = first.rotation @ corner[:, :3, :3].transpose(0, 2, 1)
     a, a1, a2 = first.turning
-    b, b1, b2 = (rotate(lead, w) for w in second.turning)  # as seen from the base, turned along with the first
+    b, b1, b2 = (
+        rotate(lead, w) for w in second.turning
+    )  # as seen from the base, turned along with the first
     carried = cross(a, b)
     turning = np.stack(
         [
@@ -174,7 +189,8 @@ def line(start: Array, end: Array, arm_length: float) -> Segments:
 
 
 def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segments:
-    """Circular arc from pose `start` through point `via` (3,) to pose `end`, the tool on the shortest rotation; K = 1.
+    """Circular arc from pose `start` through point `via` (3,) to pose `end`, the tool on the shortest
+    rotation; K = 1.
 
     Raises DegenerateArc for points that coincide or lie on one line, HalfTurn as `line` does.
     """
@@ -184,11 +200,15 @@ def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segm
     names = ("via and start", "via and target", "start and target")
     for size, names_ in zip(sizes, names, strict=True):
         if size < NO_MOTION * arm_length:
-            extra = "; a full circle is given by centre, axis and angle" if names_ == "start and target" else ""
+            extra = (
+                "; a full circle is given by centre, axis and angle" if names_ == "start and target" else ""
+            )
             raise DegenerateArc(f"{names_} of the arc coincide{extra}")
     normal = np.cross(a, b)
     if np.linalg.norm(normal) < _ON_CHORD * sizes[0] * sizes[1]:
-        raise DegenerateArc("start, via and target of the arc lie on one line, expected three points of a circle")
+        raise DegenerateArc(
+            "start, via and target of the arc lie on one line, expected three points of a circle"
+        )
     turn = _shortest(start, end)
     # Circumcentre seen from via: (|a|^2 b - |b|^2 a) x (a x b) / (2 |a x b|^2).
     centre = via + np.cross(sizes[0] ** 2 * b - sizes[1] ** 2 * a, normal) / (2.0 * float(normal @ normal))
@@ -204,7 +224,8 @@ def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segm
 def arc_about(
     start: Array, centre: Array, axis: Array, angle: float, arm_length: float, *, along: bool
 ) -> Segments:
-    """Arc from pose `start` about `axis` (3,) through `centre` (3,) by a signed angle, full circles and more; K = 1.
+    """Arc from pose `start` about `axis` (3,) through `centre` (3,) by a signed angle, full circles and
+    more; K = 1.
 
     `along`: the tool turns with the arc; else it keeps its orientation. Raises DegenerateArc.
     """
@@ -263,4 +284,3 @@ def _segment(
         path_length=np.array([distance]),
         angle=np.array([angle]),
     )
-

@@ -1,4 +1,6 @@
-"""Septic Hermite pieces: the polynomial of degree seven that takes value and three derivatives at both ends."""
+"""Septic Hermite pieces: the polynomial of degree seven that takes value and three derivatives at both
+ends.
+"""
 
 from __future__ import annotations
 
@@ -21,7 +23,9 @@ def _solution() -> Array:
 
 
 _UPPER = _solution()
-_FALLING = np.array([[factorial(p) / factorial(p - k) if p >= k else 0.0 for p in range(8)] for k in range(4)])
+_FALLING = np.array(
+    [[factorial(p) / factorial(p - k) if p >= k else 0.0 for p in range(8)] for k in range(4)]
+)
 
 
 def hermite_coefficients(begin: Array, end: Array, width: Array) -> Array:

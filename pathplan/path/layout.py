@@ -1,8 +1,9 @@
-"""Where the arm flies by and where it stops: corner sizes from what is asked, room on the steps, and what the region holds."""
+"""Where the arm flies by and where it stops: corner sizes from what is asked, room on the steps, and
+what the region holds.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -10,6 +11,7 @@ from numpy.typing import NDArray
 
 from pathplan.arm.kinematics import joint_derivatives
 from pathplan.errors import InputError
+from pathplan.path.blends import asked_sizes, revolute_joints, used_sizes
 from pathplan.path.cartesian import CartesianPath, Finding
 from pathplan.path.corners import REVERSAL, fit_into_steps
 from pathplan.path.geometry import Index, poses_of, spatial_twists
@@ -48,12 +50,14 @@ class Junction:
 
 @dataclass(frozen=True)
 class Layout:
-    """The spans of a whole task in order, and its junctions. `stretch` (S,): number of the stop-to-stop stretch of each span."""
+    """The spans of a whole task in order, and its junctions. `stretch` (S,): number of the stop-to-stop
+    stretch of each span.
+    """
 
     spans: Spans
     stretch: Index
     junctions: tuple[Junction, ...]
-    used: Array  # (M - 1,) the sizes of the corners in the unit they were asked in (m, rad, share); 0 for a stop
+    used: Array  # (M - 1,) reach of the corners in the unit each was asked in (m, rad, share); 0 for a stop
     findings: tuple[Finding, ...]
 
 
@@ -62,7 +66,9 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
     junctions = [_junction(path, motions, j) for j in range(len(motions) - 1)]
     _stop_at_reversals(motions, junctions)
     _note_stops_that_a_blend_would_save(motions, junctions)
-    asked = _asked_sizes(motions, junctions)
+    asked = asked_sizes(
+        motions, [junction.blend for junction in junctions], [junction.step for junction in junctions]
+    )
     for _ in range(_ROUNDS):
         delta = fit_into_steps(asked, motions.length) if len(asked) else asked
         spans, _ = _spans(motions, delta)
@@ -70,8 +76,10 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
             break
     else:
         worst = next(j for j, junction in enumerate(junctions) if junction.blend is not None)
-        raise InputError(f"{junctions[worst].step.where}: blend: the corner does not come to lie within its region")
-    used = _used_sizes(motions, junctions, delta)
+        raise InputError(
+            f"{junctions[worst].step.where}: blend: the corner does not come to lie within its region"
+        )
+    used = used_sizes(motions, [junction.blend for junction in junctions], delta)
     findings = []
     for j, junction in enumerate(junctions):
         junction.size = float(delta[j])
@@ -106,13 +114,19 @@ def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
         reason = "the step without motion that follows has no blend"
     else:
         return junction
-    note = "" if step.blend is None else f"the arm stops here ({reason}), so the blend {step.blend.text} has no effect"
+    note = (
+        ""
+        if step.blend is None
+        else f"the arm stops here ({reason}), so the blend {step.blend.text} has no effect"
+    )
     junction.stop(reason, note)
     return junction
 
 
 def _tangents(motions: Motions, m: Index, at_end: NDArray[np.bool_], joint_space: NDArray[np.bool_]) -> Array:
-    """(N, max(6, n)) tangents of motions m at their end or start, in the space they are blended in, scaled without unit."""
+    """(N, max(6, n)) tangents of motions m at their end or start, in the space they are blended in,
+    scaled without unit.
+    """
     n = motions.arm.n
     tangents = np.zeros((len(m), max(6, n)))
     weights = joint_weights(motions.arm)
@@ -126,7 +140,11 @@ def _tangents(motions: Motions, m: Index, at_end: NDArray[np.bool_], joint_space
         in_joints = joint_space[rows]
         tangents[rows[~in_joints], :6] = tool[~in_joints]
         if in_joints.any():
-            q = np.where(at_end[rows[in_joints], None], motions.end[m[rows[in_joints]]], motions.start[m[rows[in_joints]]])
+            q = np.where(
+                at_end[rows[in_joints], None],
+                motions.end[m[rows[in_joints]]],
+                motions.start[m[rows[in_joints]]],
+            )
             derivatives, _ = joint_derivatives(motions.arm, q, spatial_twists(jets)[in_joints])
             tangents[rows[in_joints], :n] = derivatives[:, 0] * weights
     return tangents
@@ -139,7 +157,9 @@ def _turn_angles(motions: Motions, j: Index) -> Array:
     after = _tangents(motions, j + 1, np.zeros(len(j), dtype=bool), joint_space)
     before /= np.linalg.norm(before, axis=1, keepdims=True)
     after /= np.linalg.norm(after, axis=1, keepdims=True)
-    return np.asarray(2.0 * np.arctan2(np.linalg.norm(after - before, axis=1), np.linalg.norm(after + before, axis=1)))
+    return np.asarray(
+        2.0 * np.arctan2(np.linalg.norm(after - before, axis=1), np.linalg.norm(after + before, axis=1))
+    )
 
 
 def _stop_at_reversals(motions: Motions, junctions: list[Junction]) -> None:
@@ -152,18 +172,26 @@ def _stop_at_reversals(motions: Motions, junctions: list[Junction]) -> None:
 
 
 def _reverse(junction: Junction) -> None:
-    junction.stop("reversal", f"the path turns back on itself, so the arm stops here and the blend {junction.asked} is dropped")
+    junction.stop(
+        "reversal",
+        f"the path turns back on itself, so the arm stops here and the blend {junction.asked} is dropped",
+    )
 
 
 def _note_stops_that_a_blend_would_save(motions: Motions, junctions: list[Junction]) -> None:
-    """A stop point where the path runs straight on: the engineer should know that only the missing blend stops the arm."""
+    """A stop point where the path runs straight on: the engineer should know that only the missing blend
+    stops the arm.
+    """
     idle = [j for j, junction in enumerate(junctions) if junction.reason == "no blend asked"]
     cartesian = [j for j in idle if motions.segment[j] >= 0 and motions.segment[j + 1] >= 0]
     if not cartesian:
         return
     one, two = motions.segment[cartesian], motions.segment[np.array(cartesian) + 1]
     segments = motions.segments
-    bend = segments.jets(two, np.zeros(len(two))).position[2] - segments.jets(one, segments.length[one]).position[2]
+    bend = (
+        segments.jets(two, np.zeros(len(two))).position[2]
+        - segments.jets(one, segments.length[one]).position[2]
+    )
     bends = np.linalg.norm(bend, axis=1) > 1e-9 * motions.arm.length
     for row, (j, angle) in enumerate(zip(cartesian, _turn_angles(motions, np.array(cartesian)), strict=True)):
         if angle > _STRAIGHT:
@@ -173,106 +201,6 @@ def _note_stops_that_a_blend_would_save(motions: Motions, junctions: list[Juncti
             junctions[j].reason = "curvature jumps"
             why = "the path runs on tangentially but its curvature jumps, so the arm stops here"
         junctions[j].notes.append(f"{why}; a blend would let it fly by")
-
-
-def _asked_sizes(motions: Motions, junctions: list[Junction]) -> Array:
-    """(M - 1,) delta asked by each blend, before room on the steps is looked at; 0 for stop points."""
-    asked = np.zeros(len(junctions))
-    sampled: list[tuple[int, int, str, float]] = []  # junction, side (0 incoming), what is measured, value
-    for j, junction in enumerate(junctions):
-        blend = junction.blend
-        if blend is None:
-            continue
-        if blend.kind == "share":
-            asked[j] = blend.value * min(motions.length[j], motions.length[j + 1])
-            continue
-        _check_length(motions, junction)
-        sides = [_size_on_side(motions, j, side, blend) for side in (0, 1)]
-        if sides == [np.inf, np.inf]:
-            what, hint = ("moves the tool centre point", "an angle") if blend.kind == "length" else ("turns anything", "a length")
-            raise InputError(f"{junction.step.where}: blend {blend.text}: neither step here {what}, expected {hint}")
-        asked[j] = min(size for size in sides if size is not None) if sides != [None, None] else np.inf
-        sampled += [(j, side, blend.kind, blend.value) for side in (0, 1) if sides[side] is None]
-    for (j, *_), size in zip(sampled, _sampled_sizes(motions, sampled), strict=True):
-        asked[j] = min(asked[j], size)
-    return asked
-
-
-def _check_length(motions: Motions, junction: Junction) -> None:
-    blend, segment = junction.blend, motions.segment[junction.motion]
-    if blend is None or blend.kind != "length" or segment < 0:
-        return
-    own = float(motions.segments.path_length[segment])
-    if 0.0 < own * (1 + 1e-9) < blend.value:
-        raise InputError(
-            f"{junction.step.where}: blend {blend.text} is longer than its {junction.step.motion} "
-            f"of {format_quantity(own, 'length')}",
-            data={"step": junction.step.index, "blend": blend.value, "length": own},
-        )
-
-
-def _size_on_side(motions: Motions, j: int, side: int, blend: Blend) -> float | None:
-    """delta at which one side reaches a length or an angle; inf if it has none of it, None if it must be sampled."""
-    m = j + side
-    segment = motions.segment[m]
-    pair = motions.segment[j] >= 0 and motions.segment[j + 1] >= 0
-    if segment >= 0:
-        if blend.kind == "angle" and not pair:
-            return None
-        extent = motions.segments.path_length[segment] if blend.kind == "length" else motions.segments.angle[segment]
-        return float(blend.value / extent * motions.length[m]) if extent > 1e-12 else np.inf
-    if blend.kind == "length":
-        return None
-    revolute = [i for i, joint in enumerate(motions.arm.joints) if joint.kind == "revolute"]
-    rate = float(np.abs(motions.direction[m, revolute]).max(initial=0.0))
-    return blend.value / rate if rate > 1e-12 else np.inf
-
-
-def _sampled_sizes(motions: Motions, wanted: list[tuple[int, int, str, float]]) -> Array:
-    """(N,) path parameter from the corner at which a measured distance first reaches its value; inf if it never does."""
-    if not wanted:
-        return np.zeros(0)
-    j = np.array([entry[0] for entry in wanted])
-    side = np.array([entry[1] for entry in wanted])
-    value = np.array([entry[3] for entry in wanted])
-    m = j + side
-    corner = motions.end[j]
-    length = motions.length[m]
-
-    def measure(rows: Index, x: Array) -> Array:
-        s = np.where(side[rows] == 0, length[rows] - x, x)
-        q = motions.joint_points(m[rows], s)
-        out = np.abs((q - corner[rows])[:, _revolute(motions)]).max(axis=1, initial=0.0)
-        by_length = np.array([wanted[r][2] == "length" for r in rows])
-        if by_length.any():
-            at = m[rows[by_length]]
-            apart = motions.tool_points(at, q[by_length]) - motions.tool_points(at, corner[rows[by_length]])
-            out[by_length] = np.linalg.norm(apart, axis=1)
-        return out
-
-    return _first_reach(measure, length, value)
-
-
-def _revolute(motions: Motions) -> list[int]:
-    return [i for i, joint in enumerate(motions.arm.joints) if joint.kind == "revolute"]
-
-
-def _first_reach(measure: Callable[[Index, Array], Array], length: Array, value: Array) -> Array:
-    """First x in [0, length] (N,) at which measure(rows, x) reaches `value`: sampled, then sampled again between two samples."""
-    low, high = np.zeros(len(length)), length.copy()
-    rows = np.arange(len(length))
-    never = np.zeros(len(length), dtype=bool)
-    for round_ in range(3):
-        share = np.linspace(0.0, 1.0, _SAMPLES)
-        x = low[:, None] + share * (high - low)[:, None]
-        values = measure(np.repeat(rows, _SAMPLES), x.ravel()).reshape(x.shape)
-        over = values >= value[:, None]
-        first = np.maximum(over.argmax(axis=1), 1)
-        if round_ == 0:
-            never = ~over.any(axis=1)
-        low, high = x[rows, first - 1], x[rows, first]
-    # The lower bound: the corner leaves at most that far.
-    return np.where(never, np.inf, low)
 
 
 def _spans(motions: Motions, delta: Array) -> tuple[Spans, Index]:
@@ -297,7 +225,9 @@ def _spans(motions: Motions, delta: Array) -> tuple[Spans, Index]:
 
 
 def _adjust(spans: Spans, junctions: list[Junction], delta: Array, asked: Array) -> bool:
-    """Drop corners that nearly stand still, shrink those that leave their region; True if anything changed in `asked`."""
+    """Drop corners that nearly stand still, shrink those that leave their region; True if anything
+    changed in `asked`.
+    """
     corners = np.flatnonzero(spans.corner)
     if not len(corners):
         return False
@@ -324,7 +254,8 @@ def _slowest(spans: Spans, i: Index, at: Array) -> Array:
     if known.any():
         jets = spans.tool_jets(i[known], at[known])
         size[known] = np.hypot(
-            np.linalg.norm(jets.position[1], axis=1) / spans.motions.arm.length, np.linalg.norm(jets.turning[0], axis=1)
+            np.linalg.norm(jets.position[1], axis=1) / spans.motions.arm.length,
+            np.linalg.norm(jets.turning[0], axis=1),
         )
     if (~known).any():
         rows, where = i[~known], at[~known]
@@ -346,12 +277,18 @@ def _cartesian_part(spans: Spans, i: Index, at: Array) -> Array:
 
 
 def _excess(spans: Spans, junctions: list[Junction], i: Index, at: Array) -> Array:
-    """(N,) distance from the corner over what its region allows, of corners in which a joint step takes part; else 0."""
+    """(N,) distance from the corner over what its region allows, of corners in which a joint step takes
+    part; else 0.
+    """
     out = np.zeros(len(i))
     motions = spans.motions
-    blends = [junctions[int(j)].blend for j in spans.before[i]]
-    rows = np.flatnonzero(~spans.programmed()[i])
-    rows = rows[[blends[r] is not None and blends[r].kind != "share" for r in rows]]  # type: ignore[union-attr]
+    kind = np.array([junction.blend.kind if junction.blend else "" for junction in junctions])[
+        spans.before[i]
+    ]
+    value = np.array([junction.blend.value if junction.blend else 1.0 for junction in junctions])[
+        spans.before[i]
+    ]
+    rows = np.flatnonzero(~spans.programmed()[i] & (kind != "share"))
     if not len(rows):
         return out
     k, where = i[rows], at[rows]
@@ -360,41 +297,8 @@ def _excess(spans: Spans, junctions: list[Junction], i: Index, at: Array) -> Arr
     if mixed.any():
         q[mixed] += _cartesian_part(spans, k[mixed], where[mixed])
     corner = motions.end[spans.before[k]]
-    size = np.array([blends[r].value for r in rows])  # type: ignore[union-attr]
-    by_length = np.array([blends[r].kind == "length" for r in rows])  # type: ignore[union-attr]
-    turned = np.abs((q - corner)[:, _revolute(motions)]).max(axis=1, initial=0.0)
+    turned = np.abs((q - corner)[:, revolute_joints(motions)]).max(axis=1, initial=0.0)
     m = spans.before[k]
     moved = np.linalg.norm(motions.tool_points(m, q) - motions.tool_points(m, corner), axis=1)
-    out[rows] = np.where(by_length, moved, turned) / size
+    out[rows] = np.where(kind[rows] == "length", moved, turned) / value[rows]
     return out
-
-
-def _used_sizes(motions: Motions, junctions: list[Junction], delta: Array) -> Array:
-    """(M - 1,) how far the corners reach, in the unit they were asked in: the larger of both sides."""
-    used = np.zeros(len(junctions))
-    for j, junction in enumerate(junctions):
-        blend = junction.blend
-        if blend is None:
-            continue
-        if blend.kind == "share":
-            used[j] = delta[j] / min(motions.length[j], motions.length[j + 1])
-            continue
-        reach = 0.0
-        for side in (0, 1):
-            m = j + side
-            segment = motions.segment[m]
-            pair = motions.segment[j] >= 0 and motions.segment[j + 1] >= 0
-            if segment >= 0 and (pair or blend.kind == "length"):
-                extents = motions.segments.path_length if blend.kind == "length" else motions.segments.angle
-                reach = max(reach, float(extents[segment] * delta[j] / motions.length[m]))
-                continue
-            x = np.linspace(0.0, delta[j], _SAMPLES)
-            q = motions.joint_points(np.full(_SAMPLES, m), motions.length[m] - x if side == 0 else x)
-            if blend.kind == "length":
-                points = motions.tool_points(np.full(_SAMPLES, m), q)
-                corner = motions.tool_points(np.array([m]), motions.end[j][None])
-                reach = max(reach, float(np.linalg.norm(points - corner, axis=1).max()))
-            else:
-                reach = max(reach, float(np.abs((q - motions.end[j])[:, _revolute(motions)]).max(initial=0.0)))
-        used[j] = min(reach, blend.value)
-    return used

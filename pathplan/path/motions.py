@@ -1,4 +1,6 @@
-"""The moving steps of a task once the branches are chosen: where each runs in joint space, and what `blend` means on it."""
+"""The moving steps of a task once the branches are chosen: where each runs in joint space, and what
+`blend` means on it.
+"""
 
 from __future__ import annotations
 
@@ -18,9 +20,11 @@ __all__ = ["Motions", "Reference", "motions_of", "tool_frames"]
 
 
 def tool_frames(path: CartesianPath) -> Array:
-    """(m, 4, 4) tool_from_own of each leg: from the leg's tool to the tool that the task's arm itself carries.
+    """(m, 4, 4) tool_from_own of each leg: from the leg's tool to the tool that the task's arm itself
+    carries.
 
-    The whole path is followed with one arm; a pose of another tool is first turned into the pose its own tool then has.
+    The whole path is followed with one arm; a pose of another tool is first turned into the pose its own
+    tool then has.
     """
     own = path.task.arm.tool.flange_from_tool
     frames: dict[str, Array] = {}
@@ -37,7 +41,9 @@ def tool_frames(path: CartesianPath) -> Array:
 
 @dataclass(frozen=True, eq=False)
 class Reference:
-    """The tracks of the chosen branches, joined: a guess (good to the square of the sample spacing) anywhere on a segment."""
+    """The tracks of the chosen branches, joined: a guess (good to the square of the sample spacing)
+    anywhere on a segment.
+    """
 
     at: Array  # (T,) twice the segment index plus the share of the segment: increasing
     q: Array  # (T, n)
@@ -72,7 +78,7 @@ class Motions:
 
     def joint_points(self, m: Index, s: Array) -> Array:
         """(N, n) exact positions on joint motions, near guesses on others."""
-        q = self.start[m] + self.direction[m] * s[:, None]
+        q = np.array(self.start[m] + self.direction[m] * s[:, None])
         cartesian = self.segment[m] >= 0
         if cartesian.any():
             q[cartesian] = self.reference(self.segment[m[cartesian]], s[cartesian])
@@ -115,7 +121,9 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
     )
 
 
-def _reference(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes, segment: Index) -> Reference:
+def _reference(
+    path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes, segment: Index
+) -> Reference:
     legs = np.flatnonzero(segment >= 0)
     if not len(legs):
         return Reference(np.array([0.0, 1.0]), np.zeros((2, path.task.arm.n)), np.ones(1))

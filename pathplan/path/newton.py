@@ -1,7 +1,7 @@
 """Joint positions at poses from a near guess: Newton steps over a batch, for any arm.
 
-The closed forms choose the branch; from there on every point of a path has a good guess (its neighbours), and Newton's
-method lands on the same branch to rounding, whatever the structure of the arm.
+The closed forms choose the branch; from there on every point of a path has a good guess (its neighbours),
+and Newton's method lands on the same branch to rounding, whatever the structure of the arm.
 """
 
 from __future__ import annotations
@@ -17,7 +17,8 @@ __all__ = ["CONVERGED", "joint_weights", "pose_error", "solve_near"]
 
 CONVERGED = 1e-12  # of position error over arm length, and rad
 _ROUNDS = 12
-_STRIDE = 0.5  # largest joint change of one round (rad, or arm lengths): further, the linear model means nothing
+# Largest joint change of one round (rad, or arm lengths): further, the linear model means nothing.
+_STRIDE = 0.5
 _RANK = 1e-9
 
 
@@ -27,7 +28,9 @@ def joint_weights(arm: Arm) -> Array:
 
 
 def pose_error(reached: Array, asked: Array) -> Array:
-    """(N, 6) what is missing from `reached` to `asked` (N, 4, 4): metres and rotation vector in the base frame."""
+    """(N, 6) what is missing from `reached` to `asked` (N, 4, 4): metres and rotation vector in the base
+    frame.
+    """
     missing = np.empty((len(asked), 6))
     missing[:, :3] = asked[:, :3, 3] - reached[:, :3, 3]
     missing[:, 3:] = rotation_vector(asked[:, :3, :3] @ reached[:, :3, :3].transpose(0, 2, 1))
@@ -35,7 +38,8 @@ def pose_error(reached: Array, asked: Array) -> Array:
 
 
 def solve_near(arm: Arm, poses: Array, guess: Array) -> tuple[Array, NDArray[np.bool_]]:
-    """Joint positions (N, n) near guesses (N, n) that put the arm's tool at poses (N, 4, 4), and which of them converged.
+    """Joint positions (N, n) near guesses (N, n) that put the arm's tool at poses (N, 4, 4), and which of
+    them converged.
 
     Least squares where the arm has fewer than six axes, the nearest answer where it has more. A row counts as
     converged when the pose is met to `CONVERGED`, or as near to it as rounding lets a step come.
@@ -72,7 +76,7 @@ def _least_squares(matrix: Array, rhs: Array) -> Array:
     """Solutions (N, n) of matrix (N, 6, n) x = rhs (N, 6), least squares and least norm."""
     if matrix.shape[2] == 6:
         try:
-            return np.linalg.solve(matrix, rhs[:, :, None])[:, :, 0]
+            return np.asarray(np.linalg.solve(matrix, rhs[:, :, None])[:, :, 0], dtype=float)
         except np.linalg.LinAlgError:
             pass  # exactly singular somewhere
     return np.einsum("mij,mj->mi", np.linalg.pinv(matrix, rcond=_RANK), rhs)

@@ -1,4 +1,6 @@
-"""Why a step can't be followed, in words and numbers: step, share, pose, joint and limit or singularity, best branch."""
+"""Why a step can't be followed, in words and numbers: step, share, pose, joint and limit or singularity,
+best branch.
+"""
 
 from __future__ import annotations
 
@@ -42,11 +44,14 @@ def limit_text(arm: Arm, row: int, side: int) -> str:
     limits = arm.limits
     kinds = {arm.joints[i].kind for i in np.flatnonzero(limits.matrix[row])}
     dimension = joint_dimension(kinds.pop(), "position") if len(kinds) == 1 else "number"
-    return f"joint {limits.names[row]} meets its limit {format_quantity(float(limits.position[row, side]), dimension)}"
+    limit = format_quantity(float(limits.position[row, side]), dimension)
+    return f"joint {limits.names[row]} meets its limit {limit}"
 
 
 def singular_kind(arm: Arm, q: Array) -> str:
-    """Which singularity is nearest at q (n,): "wrist", "elbow" or "shoulder"; "singular" where the structure has no such names."""
+    """Which singularity is nearest at q (n,): "wrist", "elbow" or "shoulder"; "singular" where the
+    structure has no such names.
+    """
     if arm.structure == "scara":
         return "elbow"
     if arm.structure != "spherical wrist":
@@ -97,7 +102,9 @@ def _words(label: Mapping[str, str]) -> str:
 def no_branch_follows(
     path: CartesianPath, leg: int, states: States, tracks: Tracks, ways: Routes, alive: Index
 ) -> UnreachableError:
-    """The refusal of a leg that none of the states `alive` at its start can follow; the best of them is described."""
+    """The refusal of a leg that none of the states `alive` at its start can follow; the best of them is
+    described.
+    """
     best: tuple[float, str, dict[str, Any]] | None = None
     for state in alive:
         found = _obstacle(path, leg, states, tracks, ways, int(state))
@@ -155,9 +162,17 @@ def _obstacle(
     before = max(stop - 1, 0)
     if reached[stop]:
         text, singular = singularity(arm, q[stop if stop == 0 else _nearer(arm, q, before, stop)])
-        return float(s[stop]) / length, f"it meets {text}", placed(float(s[stop]), q[before], singular=singular)
+        return (
+            float(s[stop]) / length,
+            f"it meets {text}",
+            placed(float(s[stop]), q[before], singular=singular),
+        )
     at = _last_reached(path, k, slot, float(s[before]), float(s[stop]))
-    return at / length, "the line leaves the reach of the arm".replace("line", entry.step.motion), placed(at, q[before])
+    return (
+        at / length,
+        "the line leaves the reach of the arm".replace("line", entry.step.motion),
+        placed(at, q[before]),
+    )
 
 
 def _nearer(arm: Arm, q: Array, one: int, other: int) -> int:
@@ -167,7 +182,9 @@ def _nearer(arm: Arm, q: Array, one: int, other: int) -> int:
 
 
 def _first_crossing(arm: Arm, s: Array, q: Array) -> tuple[float, int, int, Array] | None:
-    """Where a track first leaves a position limit: s (linear between samples), row of the limits, side, joint vector."""
+    """Where a track first leaves a position limit: s (linear between samples), row of the limits, side,
+    joint vector.
+    """
     judged = judged_rows(arm)
     low, high = arm.limits.position[judged].T
     values = q @ arm.limits.matrix[judged].T
@@ -180,7 +197,9 @@ def _first_crossing(arm: Arm, s: Array, q: Array) -> tuple[float, int, int, Arra
     where = int(judged[row])
     if t == 0:
         return float(s[0]), where, int(side), q[0]
-    part = float(np.clip(-beyond[t - 1, row, side] / (beyond[t, row, side] - beyond[t - 1, row, side]), 0.0, 1.0))
+    part = float(
+        np.clip(-beyond[t - 1, row, side] / (beyond[t, row, side] - beyond[t - 1, row, side]), 0.0, 1.0)
+    )
     return float(s[t - 1] + part * (s[t] - s[t - 1])), where, int(side), q[t - 1] + part * (q[t] - q[t - 1])
 
 
@@ -201,5 +220,3 @@ def _last_reached(path: CartesianPath, k: int, slot: int, inside: float, outside
         else:
             outside = middle
     return inside
-
-

@@ -1,7 +1,7 @@
 """Rotations over a batch: matrix to rotation vector and back, by the shortest way.
 
-Rotation vectors are axis times angle, angle in [0, pi]. The matrix is turned into a unit quaternion by its largest
-component (Shepperd 1978), which is accurate at every angle; the trace formula is not near 0 and pi.
+Rotation vectors are axis times angle, angle in [0, pi]. The matrix is turned into a unit quaternion by its
+largest component (Shepperd 1978), which is accurate at every angle; the trace formula is not near 0 and pi.
 """
 
 from __future__ import annotations
@@ -18,7 +18,8 @@ def rotation_vector(rotation: Array) -> Array:
     r = rotation
     diagonal = np.einsum("nii->ni", r)
     trace = diagonal.sum(axis=1)
-    # Four times the products of quaternion components: row and column i hold q_i q_0 ... q_i q_3 (w, x, y, z).
+    # Four times the products of quaternion components: row and column i hold q_i q_0 ... q_i q_3 (w, x, y,
+    # z).
     products = np.empty((len(r), 4, 4))
     products[:, 0, 0] = 1.0 + trace
     for i in range(3):
@@ -42,7 +43,11 @@ def turn_about(axis: Array, angle: Array) -> Array:
     zero = np.zeros_like(x)
     cross = np.stack([zero, -z, y, z, zero, -x, -y, x, zero], axis=1).reshape(-1, 3, 3)
     half = np.sin(angle / 2.0)
-    return np.eye(3) + np.sin(angle)[:, None, None] * cross + 2.0 * (half * half)[:, None, None] * (cross @ cross)
+    return (
+        np.eye(3)
+        + np.sin(angle)[:, None, None] * cross
+        + 2.0 * (half * half)[:, None, None] * (cross @ cross)
+    )
 
 
 def exponential(vector: Array) -> Array:

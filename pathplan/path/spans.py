@@ -1,8 +1,8 @@
 """A path as spans, each one formula: a stretch of one step, or a corner between two, with exact derivatives.
 
-Every span is the same sum, of which parts may be missing: the joint positions that put the tool at a Cartesian
-motion (of one segment, or of two superposed), plus a straight joint motion or two. What eases in or out, and over which
-length, is as in `pathplan.path.corners`.
+Every span is the same sum, of which parts may be missing: the joint positions that put the tool at a
+Cartesian motion (of one segment, or of two superposed), plus a straight joint motion or two. What eases in
+or out, and over which length, is as in `pathplan.path.corners`.
 """
 
 from __future__ import annotations
@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from pathplan.path.corners import incoming, outgoing
-from pathplan.path.geometry import Index, Jets, superpose
+from pathplan.path.geometry import Index, Jets, Mask, superpose
 from pathplan.path.joint import Array
 from pathplan.path.motions import Motions
 
@@ -34,22 +34,24 @@ class Spans:
         return len(self.length)
 
     @property
-    def corner(self) -> Array:
+    def corner(self) -> Mask:
         """(S,) bool."""
         return self.after >= 0
 
-    def inverted(self) -> Array:
+    def inverted(self) -> Mask:
         """(S,) bool: the span has a Cartesian part, so joint positions come from poses."""
         segment = self.motions.segment
         return (segment[self.before] >= 0) | (self.corner & (segment[self.after] >= 0))
 
-    def programmed(self) -> Array:
+    def programmed(self) -> Mask:
         """(S,) bool: the tool path is known from the geometry alone."""
         segment = self.motions.segment
         return (segment[self.before] >= 0) & (~self.corner | (segment[self.after] >= 0))
 
     def sides(self, i: Index, at: Array) -> tuple[Array, Array, Array, Array]:
-        """Where span i stands at `at` (N,): s on the motion before, its rates (3, N), s on the one after, its rates."""
+        """Where span i stands at `at` (N,): s on the motion before, its rates (3, N), s on the one
+        after, its rates.
+        """
         corner = self.corner[i]
         first, first_rates = self.offset[i] + at, np.zeros((3, len(at)))
         first_rates[0] = 1.0
@@ -82,11 +84,16 @@ class Spans:
                 if (two[rows] >= 0).all():
                     joined = segments.jets(two[rows], second[rows], second_rates[:, rows])
                     part = superpose(part, joined, segments.poses(two[rows], np.zeros(int(rows.sum()))))
-            jets.position[:, rows], jets.rotation[rows], jets.turning[:, rows] = part.position, part.rotation, part.turning
+            jets.position[:, rows], jets.rotation[rows], jets.turning[:, rows] = (
+                part.position,
+                part.rotation,
+                part.turning,
+            )
         return jets
 
     def joint_jets(self, i: Index, at: Array) -> Array:
-        """(4, N, n) the straight joint motions' part of q and its derivatives, counted from the corner or the span's start.
+        """(4, N, n) the straight joint motions' part of q and its derivatives, counted from the corner or
+        the span's start.
 
         For a span without Cartesian part this is q itself.
         """

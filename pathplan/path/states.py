@@ -1,4 +1,6 @@
-"""Where the arm may be at each target: every branch of the inverse with its turn equivalents inside the limits."""
+"""Where the arm may be at each target: every branch of the inverse with its turn equivalents inside the
+limits.
+"""
 
 from __future__ import annotations
 
@@ -32,19 +34,25 @@ class States:
 
 
 def endless_joints(arm: Arm) -> NDArray[np.bool_]:
-    """(n,) revolute joints that may turn without end on one side or both: their turns are counted by nearest turn."""
+    """(n,) revolute joints that may turn without end on one side or both: their turns are counted by
+    nearest turn.
+    """
     return np.array(
-        [joint.kind == "revolute" and not np.isfinite(joint.position).all() for joint in arm.joints], dtype=bool
+        [joint.kind == "revolute" and not np.isfinite(joint.position).all() for joint in arm.joints],
+        dtype=bool,
     )
 
 
 def judged_rows(arm: Arm) -> Index:
     """Rows of the arm's limits whose position can be judged before turns are known.
 
-    Rows without any limit, and rows with an endless joint in them, are left out: the latter are verified on the finished path.
+    Rows without any limit, and rows with an endless joint in them, are left out: the latter are verified
+    on the finished path.
     """
     limits = arm.limits
-    judged = ~(limits.matrix[:, endless_joints(arm)] != 0).any(axis=1) & np.isfinite(limits.position).any(axis=1)
+    judged = ~(limits.matrix[:, endless_joints(arm)] != 0).any(axis=1) & np.isfinite(limits.position).any(
+        axis=1
+    )
     return np.flatnonzero(judged)
 
 
@@ -57,7 +65,9 @@ def within_limits(arm: Arm, q: Array) -> NDArray[np.bool_]:
 
 
 def expand(arm: Arm, target: Index, branch: Index, q: Array) -> tuple[Index, Index, Array]:
-    """All turn equivalents inside the position limits of answers q (N, n) in (-pi, pi], with their target and branch."""
+    """All turn equivalents inside the position limits of answers q (N, n) in (-pi, pi], with their
+    target and branch.
+    """
     endless = endless_joints(arm)
     for j, joint in enumerate(arm.joints):
         if joint.kind != "revolute" or endless[j]:
@@ -76,4 +86,6 @@ def expand(arm: Arm, target: Index, branch: Index, q: Array) -> tuple[Index, Ind
 
 def matching(labels: tuple[Mapping[str, str], ...], asked: Mapping[str, str]) -> NDArray[np.bool_]:
     """(B,) branches whose labels have everything asked."""
-    return np.array([all(label.get(key) == word for key, word in asked.items()) for label in labels], dtype=bool)
+    return np.array(
+        [all(label.get(key) == word for key, word in asked.items()) for label in labels], dtype=bool
+    )

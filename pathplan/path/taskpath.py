@@ -1,4 +1,6 @@
-"""What a task has become once it is a path: stretches of joint motion between stop points, waits, corners, findings."""
+"""What a task has become once it is a path: stretches of joint motion between stop points, waits,
+corners, findings.
+"""
 
 from __future__ import annotations
 
@@ -16,11 +18,13 @@ from pathplan.path.spans import Spans
 from pathplan.path.tool_motion import tool_derivatives
 from pathplan.task.model import Task
 
-__all__ = ["Cap", "Corner", "Stretch", "StepPart", "TaskPath", "Wait"]
+__all__ = ["Cap", "Corner", "StepPart", "Stretch", "TaskPath", "Wait"]
 
 
 class StepPart(NamedTuple):
-    """A step's part of a stretch, from corner middle to corner middle. A step without motion has s_from = s_to."""
+    """A step's part of a stretch, from corner middle to corner middle. A step without motion has s_from
+    = s_to.
+    """
 
     step: int  # 0-based index in the task
     s_from: float
@@ -54,21 +58,26 @@ class Stretch:
     def programmed(self, s: ArrayLike) -> tuple[Array, NDArray[np.bool_]]:
         """Programmed tool poses (N, 4, 4) at s (N,), and where there is one (N,).
 
-        None is programmed (NaN, False) where the motion is straight in joint space, and in a corner with such a step.
+        None is programmed (NaN, False) where the motion is straight in joint space, and in a corner with
+        such a step.
         """
-        s = np.clip(np.atleast_1d(np.asarray(s, dtype=float)), 0.0, self.path.length)
-        place = np.clip(np.searchsorted(self.span_start, s, side="right") - 1, 0, len(self.span) - 1)
+        at = np.clip(np.atleast_1d(np.asarray(s, dtype=float)), 0.0, self.path.length)
+        place = np.clip(np.searchsorted(self.span_start, at, side="right") - 1, 0, len(self.span) - 1)
         i = self.span[place]
         known = self.spans.programmed()[i]
-        poses = np.full((len(s), 4, 4), np.nan)
+        poses = np.full((len(at), 4, 4), np.nan)
         if known.any():
             rows = i[known]
-            jets = self.spans.tool_jets(rows, np.minimum(s - self.span_start[place], self.spans.length[i])[known])
+            jets = self.spans.tool_jets(
+                rows, np.minimum(at - self.span_start[place], self.spans.length[i])[known]
+            )
             poses[known] = poses_of(jets.position[0], jets.rotation)
         return poses, known
 
     def tool_derivatives(self, s: ArrayLike) -> tuple[Array, Array]:
-        """dx/ds and d2x/ds2 (N, 3) of the tool centre point along the joint path, m per path parameter (squared)."""
+        """dx/ds and d2x/ds2 (N, 3) of the tool centre point along the joint path, m per path parameter
+        (squared).
+        """
         q, q1, q2 = self.path.derivatives(np.atleast_1d(np.asarray(s, dtype=float)), 2)
         return tool_derivatives(self.arm, q, q1, q2)
 
@@ -85,8 +94,9 @@ class Wait:
 class Corner:
     """What happens between two moving steps.
 
-    `used` is the size in use in the unit `asked` has (m, rad, share): how far before the corner the path is left or after it
-    joined. `region` names that unit. A stop has used 0 and lies at the end of its stretch.
+    `used` is the size in use in the unit `asked` has (m, rad, share): how far before the corner the path
+    is left or after it joined. `region` names that unit. A stop has used 0 and lies at the end of its
+    stretch.
     """
 
     after_step: int

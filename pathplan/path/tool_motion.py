@@ -12,10 +12,11 @@ __all__ = ["tool_derivatives"]
 
 
 def tool_derivatives(arm: Arm, q: Array, q1: Array, q2: Array) -> tuple[Array, Array]:
-    """First and second derivative (N, 3) of the tool centre point, from q, q', q'' (N, n), by the same parameter.
+    """First and second derivative (N, 3) of the tool centre point, from q, q', q'' (N, n), by the same
+    parameter.
 
-    With spatial axes S_i of the joints, V = S q' and V' = S q'' + sum ad(V_{i-1}) S_i q'_i (Murray, Li & Sastry 1994, ch. 3);
-    then x' = v + w x p and x'' = v' + w' x p + w x x'.
+    With spatial axes S_i of the joints, V = S q' and V' = S q'' + sum ad(V_{i-1}) S_i q'_i (Murray, Li &
+    Sastry 1994, ch. 3); then x' = v + w x p and x'' = v' + w' x p + w x x'.
     """
     axes, point = spatial_axes(arm, q)
     v, w = np.zeros((3, len(q))), np.zeros((3, len(q)))

@@ -1,12 +1,13 @@
 """Following every branch of the inverse along every line and arc of a task at once.
 
-Each segment is sampled, all samples of all segments go through the inverse in one batch, and each branch is unwrapped
-from sample to sample by nearest turn. Where a joint moves too far between two samples to tell, samples are put in
-between; a joint that still jumps when they lie a few ten-thousandths apart is at a singularity.
+Each segment is sampled, all samples of all segments go through the inverse in one batch, and each branch
+is unwrapped from sample to sample by nearest turn. Where a joint moves too far between two samples to
+tell, samples are put in between; a joint that still jumps when they lie a few ten-thousandths apart is at
+a singularity.
 
 A branch follows a segment if at every sample the pose is reached, the smallest singular value of the Jacobian
-(dimensionless, see `pathplan.arm.kinematics`) is at least `SINGULAR`, and no jump remains. Position limits depend on the
-turns a motion starts with, so they are judged by start state in `pathplan.path.choice`.
+(dimensionless, see `pathplan.arm.kinematics`) is at least `SINGULAR`, and no jump remains. Position limits
+depend on the turns a motion starts with, so they are judged by start state in `pathplan.path.choice`.
 """
 
 from __future__ import annotations
@@ -23,6 +24,7 @@ from pathplan.arm.kinematics import smallest_singular_value
 from pathplan.path.geometry import Index, Segments
 from pathplan.path.joint import Array
 from pathplan.path.newton import solve_near
+from pathplan.path.states import LIMIT_SLACK
 
 __all__ = ["SINGULAR", "Obstacle", "Tracks", "track", "turns_between"]
 
@@ -32,7 +34,8 @@ SINGULAR = 1e-4  # smallest singular value below which a pose counts as singular
 SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
 FEWEST = 6  # intervals of a segment
 JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
-_HALVINGS = 12
+_BETWEEN = 3  # samples put between two
+_ROUNDS = 6  # of putting them: 2e-5 apart in the end, where a joint that moves by JUMP is as good as singular
 Obstacle = Literal["reach", "singular"]
 
 
@@ -45,9 +48,9 @@ def turns_between(change: Array, revolute: Mask) -> Array:
 class Tracks:
     """B branches along K segments, T samples in all, in order of segment and path parameter.
 
-    `q` (T, B, n) is continuous along each segment, counted from the branch's answer in (-pi, pi] at its start;
-    meaningless from the first sample on where `ok` (T, B) is False, and `reached` tells why: False there means that the
-    pose is not reached, True that it is singular.
+    `q` (T, B, n) is continuous along each segment, counted from the branch's answer in (-pi, pi] at its
+    start; meaningless from the first sample on where `ok` (T, B) is False, and `reached` tells why: False
+    there means that the pose is not reached, True that it is singular.
     """
 
     segment: Index  # (T,)
@@ -65,7 +68,9 @@ class Tracks:
 
 
 def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
-    """Every branch along every segment. `tool_from_own` (K, 4, 4): base_from_tool @ this is the pose of the arm's own tool."""
+    """Every branch along every segment. `tool_from_own` (K, 4, 4): base_from_tool @ this is the pose of
+    the arm's own tool.
+    """
     count = np.maximum(np.ceil(segments.length / SPACING).astype(int), FEWEST)
     segment = np.repeat(np.arange(len(segments)), count + 1)
     first = np.concatenate([[0], np.cumsum(count + 1)[:-1]]).astype(np.intp)
@@ -81,19 +86,22 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
     q, valid = branches.q, np.asarray(branches.valid)
     revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
     looked_at = np.zeros(len(s), dtype=bool)
-    for halving in range(_HALVINGS + 1):
+    useful = valid & _has_turn_inside(arm, q)
+    for round_ in range(_ROUNDS + 1):
         jumps = _jumps(q, valid, segment, revolute)
         # A branch that fails elsewhere on the segment anyway is not worth more samples.
-        lives = np.logical_and.reduceat(valid, first, axis=0)[segment[:-1]] if len(first) else valid[:0]
+        lives = np.logical_and.reduceat(useful, first, axis=0)[segment[:-1]] if len(first) else valid[:0]
         split = np.flatnonzero((jumps & lives).any(axis=1))
-        if not len(split) or halving == _HALVINGS:
+        if not len(split) or round_ == _ROUNDS:
             break
-        new_s = (s[split] + s[split + 1]) / 2
-        new = arm.inverse_batch(poses(segment[split], new_s))
-        at = split + 1
+        at = np.repeat(split + 1, _BETWEEN)
+        part = np.tile(np.arange(1, _BETWEEN + 1) / (_BETWEEN + 1), len(split))
+        new_segment, new_s = segment[at], s[at - 1] + part * (s[at] - s[at - 1])
+        new = arm.inverse_batch(poses(new_segment, new_s))
         looked_at[split] = looked_at[split + 1] = True
-        segment, s = np.insert(segment, at, segment[split]), np.insert(s, at, new_s)
+        segment, s = np.insert(segment, at, new_segment), np.insert(s, at, new_s)
         q, valid = np.insert(q, at, new.q, axis=0), np.insert(valid, at, new.valid, axis=0)
+        useful = np.insert(useful, at, new.valid & _has_turn_inside(arm, new.q), axis=0)
         looked_at = np.insert(looked_at, at, True)
         first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
     last = np.append(first[1:], len(s)).astype(np.intp) - 1
@@ -101,7 +109,9 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
     regular = _regular(arm, q, valid, looked_at)
     jumped = np.zeros_like(valid)
     jumped[1:] = jumps
-    return Tracks(segment, s, _unwrapped(q, first, segment, revolute), valid & regular & ~jumped, valid, first, last)
+    return Tracks(
+        segment, s, _unwrapped(q, first, segment, revolute), valid & regular & ~jumped, valid, first, last
+    )
 
 
 def _jumps(q: Array, valid: Mask, segment: Index, revolute: Mask) -> Mask:
@@ -110,6 +120,19 @@ def _jumps(q: Array, valid: Mask, segment: Index, revolute: Mask) -> Mask:
     change -= 2.0 * np.pi * np.round(change / (2.0 * np.pi))
     far = (np.abs(change) > JUMP).any(axis=2)
     return far & valid[1:] & valid[:-1] & (segment[1:] == segment[:-1])[:, None]
+
+
+def _has_turn_inside(arm: Arm, q: Array) -> Mask:
+    """(T, B): every joint has a turn equivalent within its own position limits."""
+    inside = np.ones(q.shape[:2], dtype=bool)
+    for j, joint in enumerate(arm.joints):
+        low, high = joint.position[0] - LIMIT_SLACK, joint.position[1] + LIMIT_SLACK
+        if joint.kind == "prismatic":
+            inside &= (q[:, :, j] >= low) & (q[:, :, j] <= high)
+        elif np.isfinite([low, high]).all():
+            turn = 2.0 * np.pi
+            inside &= np.floor((high - q[:, :, j]) / turn) >= np.ceil((low - q[:, :, j]) / turn)
+    return inside
 
 
 def _regular(arm: Arm, q: Array, valid: Mask, looked_at: Mask) -> Mask:
@@ -136,7 +159,9 @@ def _unwrapped(q: Array, first: Index, segment: Index, revolute: Mask) -> Array:
 
 
 def _continued(arm: Arm, poses, segment: Index, s: Array, first: Index) -> Tracks:  # type: ignore[no-untyped-def]
-    """As `track` for an arm without closed form: all answers at the start of a segment, continued by Newton steps."""
+    """As `track` for an arm without closed form: all answers at the start of a segment, continued by
+    Newton steps.
+    """
     count = np.diff(np.append(first, len(s)))
     last = first + count - 1
     start = arm.inverse_batch(poses(segment[first], s[first]))
