@@ -1,0 +1,35 @@
+"""The audit: what a joint table uses of every limit, where, and whether it may be run."""
+
+from pathplan.audit.judge import audit
+from pathplan.audit.model import Audit, Finding, JointAudit, Pacing, Peak, Singularity, StepPacing
+from pathplan.audit.planned import (
+    CornerUse,
+    Deviation,
+    Evidence,
+    StepSpeed,
+    joint_peaks,
+    path_deviation,
+    tool_speed_by_step,
+    worse_deviation,
+    worse_peaks,
+)
+
+__all__ = [
+    "Audit",
+    "CornerUse",
+    "Deviation",
+    "Evidence",
+    "Finding",
+    "JointAudit",
+    "Pacing",
+    "Peak",
+    "Singularity",
+    "StepPacing",
+    "StepSpeed",
+    "audit",
+    "joint_peaks",
+    "path_deviation",
+    "tool_speed_by_step",
+    "worse_deviation",
+    "worse_peaks",
+]

@@ -1,0 +1,340 @@
+"""The audit itself: goes over a table once, piece by piece, and puts together what the other files find."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator
+from dataclasses import replace
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm import Arm
+from pathplan.audit.differences import ORDERS, Differences
+from pathplan.audit.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
+from pathplan.audit.model import QUANTITIES, TOLERANCE, Audit, Finding, JointAudit, Peak, Singularity
+from pathplan.audit.pacing import StepClock
+from pathplan.audit.planned import (
+    Evidence,
+    Planned,
+    corners_of,
+    joint_peaks,
+    step_speeds,
+    tool_speed_by_step,
+    worse_peaks,
+)
+from pathplan.audit.shares import (
+    Array,
+    Rows,
+    larger,
+    limit_rows,
+    peaks_of,
+    position_shares,
+    row_kinds,
+    rows_of,
+    shares_of,
+)
+from pathplan.audit.stamps import Stamps, finite_rows, found_cycle
+from pathplan.audit.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
+from pathplan.audit.words import dimension_of, shown
+from pathplan.errors import InputError
+from pathplan.export.columns import DEGREES, MILLIMETRES
+from pathplan.table import JointTable
+
+__all__ = ["audit"]
+
+PIECE = 16384  # rows judged at once: bounds memory on long tables
+DERIVED = ("velocity", "acceleration", "jerk")
+TOOL = ("tool speed", "tool acceleration")
+
+
+def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned | None = None) -> Audit:
+    """Judge a joint table, whole or in chunks, against the limits of an arm.
+
+    Judged are: position, velocity, acceleration, jerk and torque of every joint and of every row that
+    limits a sum of joints; tool speed and acceleration against their caps; the finite differences of
+    the written positions, which are what the drive sees (rule: `pathplan.audit.differences`); rest in
+    the first and last row; times that repeat, go back or leave the grid of the cycle; values that are
+    not finite. A value may pass its limit by 1e-6 of it, a position by 1e-9 rad or m. Without columns
+    of velocity, acceleration and jerk the differences stand for them, and `measured` says so. Reported
+    besides: distance to singularity and what paces each step; and with the plan, speeds asked and
+    reached, times, corners, path deviation and the peaks of the trajectory between the rows.
+
+    `arm` carries the tool meant; with a plan each step's own tool counts for its caps. Raises
+    InputError if the table has another number or other kinds of joints than the arm.
+    """
+    chunks = iter([table] if isinstance(table, JointTable) else table)
+    first = next(chunks, None)
+    if first is None:
+        raise InputError("table: there are no rows to judge")
+    judge = _Judge(first, arm, plan)
+    if isinstance(table, JointTable):
+        judge.differences.expect(table.position)
+    for piece in _pieces(first, chunks):
+        judge.add(piece)
+    return judge.verdict()
+
+
+def _pieces(first: JointTable, rest: Iterator[JointTable]) -> Iterator[JointTable]:
+    yield from first.chunks(PIECE)
+    for chunk in rest:
+        yield from chunk.chunks(PIECE)
+
+
+class _Judge:
+    """What is known after the rows so far."""
+
+    def __init__(self, first: JointTable, arm: Arm, plan: Planned | None) -> None:
+        self.arm, self.plan = arm, plan
+        self.names, self.matrix = limit_rows(arm)
+        self.kinds = row_kinds(arm)
+        self.notes = _same_joints(first, arm)
+        self.meta = first.meta
+        self.cycle = first.cycle if first.cycle is not None else found_cycle(first.time)
+        self.derived = [name for name in DERIVED if getattr(first, name) is not None]
+        self.measured: Literal["columns", "differences"] = "columns" if self._all_derived() else "differences"
+        if first.torque is None and np.isfinite(arm.limits.torque).any():
+            self.notes.append(Finding("note", "torque is not judged: the table has no torque columns"))
+        limits = {name: getattr(arm.limits, name) for name, _ in ORDERS}
+        factors = [DEGREES if joint.kind == "revolute" else MILLIMETRES for joint in arm.joints]
+        self.differences = Differences(self.matrix, limits, np.array(factors), self.cycle)
+        self.stamps = Stamps(self.cycle, stated=first.cycle is not None)
+        self.speed_caps, self.acceleration_caps = step_caps(arm, plan.task if plan else None)
+        joints = [(name, q) for q in (*DERIVED, "torque") for name in self.names]
+        self.clock = StepClock([*joints, (None, TOOL[0]), (None, TOOL[1])])
+        self.rows = 0
+        self.joints: tuple[JointAudit, ...] = ()
+        self.found: dict[Key, Exceedance] = {}
+        self.not_finite: dict[str, tuple[int, str, int]] = {}
+        self.tool_peaks: dict[str, list[Peak | None]] = {name: [None] for name in TOOL}
+        self.singularity: Singularity | None = None
+        self.speeds: dict[int, tuple[float, float, float]] = {}
+        self.ends: list[JointTable] = []
+
+    def _all_derived(self) -> bool:
+        return len(self.derived) == len(DERIVED)
+
+    def add(self, table: JointTable) -> None:
+        """The next rows."""
+        if not self.ends:
+            self.ends = [table.part(0, 1)]
+        self.ends[1:] = [table.part(len(table) - 1, len(table))]
+        self.stamps.add(table.time)
+        self.differences.add(table.time, table.position, table.step)
+        good, bad = finite_rows(table)
+        for name, row, joint in bad:
+            before = self.not_finite.get(name, (self.rows + row, joint, 0))
+            self.not_finite[name] = (*before[:2], before[2] + 1)
+        with np.errstate(invalid="ignore", over="ignore"):
+            self._judge_rows(table, good)
+        self.rows += len(table)
+
+    def _judge_rows(self, table: JointTable, good: NDArray[np.bool_]) -> None:
+        rows = Rows(table.time, table.step, self.rows)
+        columns = {q: getattr(table, q) for q in QUANTITIES if getattr(table, q) is not None}
+        peaks = joint_peaks(self.arm, table.time, table.step, self.rows, **columns)
+        self.joints = worse_peaks(self.joints, peaks)
+        shares = []
+        for quantity in (*DERIVED, "torque"):
+            shares.append(self._share(quantity, columns.get(quantity), rows))
+        self._share("position", columns["position"], rows)
+        shares += self._tool(table, good, rows)
+        seconds = self._seconds(table.time)
+        self.clock.add(np.hstack(shares), table.step, seconds)
+        if good.any():
+            at = Rows(table.time[good], table.step[good], 0)
+            numbers = self.rows + np.flatnonzero(good)
+            before = self.singularity
+            self.singularity = nearest_singularity(self.arm, table.position[good], at, numbers, before)
+
+    def _share(self, quantity: str, values: Array | None, rows: Rows) -> Array:
+        """Shares (N, R) of one quantity, zero without data; what exceeds is kept."""
+        if values is None:
+            return np.zeros((len(rows.time), len(self.names)))
+        limits = getattr(self.arm.limits, quantity)
+        if quantity == "torque":  # of the joints alone: a torque is not summed as positions are
+            shares = shares_of(values, limits[: self.arm.n])
+            gather(self.found, exceedances(quantity, values, limits[: self.arm.n], shares, rows))
+            return np.hstack([shares, np.zeros((len(shares), len(self.names) - self.arm.n))])
+        values = rows_of(values, self.matrix)
+        shares = position_shares(values, limits)[0] if quantity == "position" else shares_of(values, limits)
+        gather(self.found, exceedances(quantity, values, limits, shares, rows))
+        return shares
+
+    def _tool(self, table: JointTable, good: NDArray[np.bool_], rows: Rows) -> list[Array]:
+        """Shares (N, 1) of the caps on tool speed and tool acceleration."""
+        speed = table.tool_speed
+        if speed is None and table.velocity is not None:
+            speed = np.zeros(len(table))
+            speed[good] = tool_speed(self.arm, table.position[good], table.velocity[good])
+        if speed is not None:
+            seconds = self._seconds(table.time)
+            for step, mine in tool_speed_by_step(speed, self.speed_caps, table.step, seconds).items():
+                was = self.speeds.get(step, (0.0, 0.0, 0.0))
+                self.speeds[step] = (max(was[0], mine[0]), was[1] + mine[1], was[2] + mine[2])
+        shares = [self._tool_share(TOOL[0], speed, self.speed_caps, rows)]
+        acceleration = self._acceleration(table, good)
+        return [*shares, self._tool_share(TOOL[1], acceleration, self.acceleration_caps, rows)]
+
+    def _acceleration(self, table: JointTable, good: NDArray[np.bool_]) -> Array | None:
+        """Tool acceleration (N,), only where something caps it."""
+        if table.velocity is None or table.acceleration is None:
+            return None
+        cap = self.acceleration_caps[np.minimum(table.step, len(self.acceleration_caps) - 1)]
+        at = np.flatnonzero(good & np.isfinite(cap))
+        if not len(at):
+            return None
+        found = np.zeros(len(table))
+        found[at] = tool_acceleration(
+            self.arm, table.position[at], table.velocity[at], table.acceleration[at]
+        )
+        return found
+
+    def _tool_share(self, quantity: str, values: Array | None, caps: Array, rows: Rows) -> Array:
+        if values is None:
+            return np.zeros((len(rows.time), 1))
+        cap = caps[np.minimum(rows.step, len(caps) - 1)]
+        shares = (values / cap)[:, None]
+        for limit in np.unique(cap[np.isfinite(cap)]):  # one pass for each cap, since a peak has one limit
+            mine = np.flatnonzero(cap == limit)
+            at = Rows(rows.time[mine], rows.step[mine], 0)
+            limits = np.array([[-np.inf, limit]])
+            peaks, own = peaks_of(values[mine, None], limits, at)
+            peaks = [peak and replace(peak, row=rows.first + int(mine[peak.row])) for peak in peaks]
+            self.tool_peaks[quantity] = larger(self.tool_peaks[quantity], peaks)
+            gather(self.found, exceedances(quantity, values[mine, None], limits, own, at))
+        return shares
+
+    def _seconds(self, time: Array) -> Array:
+        """Time (N,) that each row stands for."""
+        if self.cycle is not None:
+            return np.full(len(time), self.cycle)
+        return np.maximum(np.diff(time, append=time[-1]), 0.0)
+
+    def verdict(self) -> Audit:
+        """All of it together."""
+        self.differences.finish()
+        plan = self.plan
+        names = {step.index: step.name for step in plan.task.steps} if plan else {}
+        evidence = plan.evidence() if plan else Evidence()
+        moving, waiting = self._times()
+        joints = self._with_differences()
+        start, end = self.ends
+        return Audit(
+            arm=self.arm.name,
+            task=str(self.meta.get("task", "")),
+            count=self.rows,
+            cycle=self.cycle,
+            duration=float(end.time[0] - start.time[0]),
+            measured=self.measured,
+            joints=joints[: self.arm.n],
+            rows=joints[self.arm.n :],
+            findings=tuple(self._findings(evidence)),
+            tool_speed=self.tool_peaks[TOOL[0]][0],
+            tool_acceleration=self.tool_peaks[TOOL[1]][0],
+            singularity=self.singularity,
+            pacing=self.clock.pacing(names) if self.measured == "columns" else (),
+            speeds=step_speeds(self.speeds, self.speed_caps, names) if plan else (),
+            motion_time=moving,
+            waiting_time=waiting,
+            deviation_rows=evidence.deviation_rows,
+            deviation_midway=evidence.deviation_midway,
+            corners=corners_of(plan.path) if plan else (),
+            continuous=evidence.continuous,
+            bound=plan.bound if plan else None,
+        )
+
+    def _times(self) -> tuple[float | None, float | None]:
+        """Motion and waiting time; the first row is an instant and stands for no time."""
+        if self.plan is None:
+            return None, None
+        waits = {step.index for step in self.plan.task.steps if step.motion == "wait"}
+        waiting = sum(seconds for step, seconds in self.clock.seconds().items() if step in waits)
+        total = float(self.ends[1].time[0] - self.ends[0].time[0])
+        return max(total - waiting, 0.0), waiting
+
+    def _with_differences(self) -> tuple[JointAudit, ...]:
+        """The peaks with those of the differences, which stand in for columns that are missing."""
+        joined = []
+        for r, joint in enumerate(self.joints):
+            seen = {name: peaks[r] for name, peaks in self.differences.peaks.items()}
+            known = {name: peak for name, peak in seen.items() if peak is not None}
+            missing: dict[str, Any] = {q: known.get(q) for q in DERIVED if q not in self.derived}
+            joined.append(replace(joint, differences=known, **missing))
+        return tuple(joined)
+
+    def _findings(self, evidence: Evidence) -> Iterator[Finding]:
+        """Exceedances first, then warnings and notes."""
+        for name, (row, joint, pieces) in self.not_finite.items():
+            more = ", and further rows" if pieces > 1 else ""
+            whose = f" of {joint}" if joint else ""
+            text = f"row {row + 1}: {name}{whose} is not a finite number{more}"
+            yield Finding("exceedance", text, joint=joint or None, quantity=name)
+        yield from self.stamps.findings()
+        for key, found in sorted(self.found.items(), key=lambda item: item[1].first):
+            yield finding_of(key, found, self.names, self.kinds)
+        yield from self._seen_by_the_drive()
+        yield from _rest(self.arm, *self.ends)
+        yield from self._between_rows(evidence)
+        if self.measured == "differences":
+            missing = " and ".join(name for name in DERIVED if name not in self.derived)
+            text = f"the table has no columns of {missing}: judged by finite differences of the positions"
+            yield Finding("note", text)
+        if self.cycle is None:
+            text = "the times lie on no regular grid: differences use the times of the rows"
+            yield Finding("warning", text)
+        elif self.stamps.stated is False:
+            text = f"the table states no cycle: {self.cycle * 1e3:.6g} ms found from its times"
+            yield Finding("note", text)
+        yield from self.notes
+        if self.plan is not None:
+            for note in self.plan.path.findings:
+                yield Finding("note", str(note), step=note.step)
+
+    def _seen_by_the_drive(self) -> Iterator[Finding]:
+        """What only the differences show: the columns of that step keep the limit, or are not there."""
+        how = "" if self.measured == "differences" else " (difference of the written positions)"
+        for key, found in sorted(self.differences.found.items(), key=lambda item: item[1].first):
+            if key not in self.found:
+                yield finding_of(key, found, self.names, self.kinds, how=how)
+
+    def _between_rows(self, evidence: Evidence) -> Iterator[Finding]:
+        """Limits that the trajectory passes between rows and not in them."""
+        for r, joint in enumerate(evidence.continuous):
+            for quantity, peak in joint.peaks().items():
+                over = peak.share > 1 + TOLERANCE and quantity != "position"
+                beyond = quantity == "position" and (peak.margin or 0.0) < -1e-9
+                if (over or beyond) and (quantity, r, peak.step) not in self.found:
+                    key = (quantity, r, peak.step)
+                    found = Exceedance(peak, 1, peak.time, peak.time)
+                    yield finding_of(key, found, self.names, self.kinds, how=" (between rows)")
+
+
+def _same_joints(table: JointTable, arm: Arm) -> list[Finding]:
+    """Raises InputError for a table that can't be of this arm; notes names that differ."""
+    if table.n != arm.n:
+        raise InputError(f"table: has {table.n} joints, {arm.name} has {arm.n}")
+    for name, kind, joint in zip(table.joint_names, table.joint_kinds, arm.joints, strict=False):
+        if kind != joint.kind:
+            raise InputError(f"table: joint {name} is {kind}, {joint.name} of {arm.name} is {joint.kind}")
+    plain = tuple(f"joint{i + 1}" for i in range(arm.n))
+    if table.joint_names in (tuple(joint.name for joint in arm.joints), plain):
+        return []
+    names = ", ".join(table.joint_names)
+    return [Finding("warning", f"the table's joints have other names, taken in their order: {names}")]
+
+
+def _rest(arm: Arm, start: JointTable, end: JointTable) -> Iterator[Finding]:
+    """The first and last row must be at rest: velocity and acceleration zero to 1e-6 of their limits."""
+    for place, row in (("first", start), ("last", end)):
+        for quantity in ("velocity", "acceleration"):
+            values = getattr(row, quantity)
+            if values is None:
+                continue
+            for joint, value in zip(arm.joints, values[0].tolist(), strict=True):
+                if abs(value) <= TOLERANCE * min(getattr(joint, quantity), 1e6):
+                    continue
+                got = shown(value, dimension_of(joint.kind, quantity))
+                time, step = float(row.time[0]), int(row.step[0])
+                text = f"{joint.name}: the {place} row is not at rest, {quantity} {got} at {clock(time)}"
+                yield Finding("exceedance", text, time, step, joint.name, quantity, value=value, limit=0.0)

@@ -1,0 +1,157 @@
+"""An audit as plain types, for JSON: mm and deg, shares in percent, steps and rows counted from 1."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import asdict
+from typing import Any
+
+from pathplan.audit.model import Audit, Finding, JointAudit, Peak
+from pathplan.audit.planned import CornerUse, Deviation
+from pathplan.audit.words import dimension_of
+from pathplan.units import DIMENSIONS, to_screen
+
+__all__ = ["audit_as_dict"]
+
+UNITS = "mm, deg, s, N m, N, percent; steps and rows count from 1"
+_REGIONS = {"length": "length", "angle": "angle", "share": "ratio"}
+
+
+def audit_as_dict(audit: Audit) -> dict[str, Any]:
+    """All of an audit. Every number is finite or None; a value's unit stands beside it."""
+    singularity = audit.singularity
+    return {
+        "passed": audit.passed,
+        "units": UNITS,
+        "arm": audit.arm,
+        "task": audit.task,
+        "rows": audit.count,
+        "cycle_s": audit.cycle,
+        "duration_s": audit.duration,
+        "motion_time_s": audit.motion_time,
+        "waiting_time_s": audit.waiting_time,
+        "bound_s": audit.bound,
+        "measured": audit.measured,
+        "joints": [_joint(joint) for joint in audit.joints],
+        "coupled": [_joint(row) for row in audit.rows],
+        "tool_speed": _peak(audit.tool_speed, "speed"),
+        "tool_acceleration": _peak(audit.tool_acceleration, "acceleration"),
+        "singularity": singularity
+        and {"smallest_singular_value": singularity.value, **_place(singularity.time, singularity.step)},
+        "pacing": [
+            {
+                "step": step.step + 1,
+                "name": step.name,
+                "duration_s": step.duration,
+                "parts": [
+                    {"joint": part.joint, "quantity": part.quantity, "percent": 100 * part.part}
+                    for part in step.parts
+                ],
+            }
+            for step in audit.pacing
+        ],
+        "speeds": [
+            {
+                "step": speed.step + 1,
+                "name": speed.name,
+                "asked_mm_s": None if speed.asked is None else 1000 * speed.asked,
+                "reached_mm_s": 1000 * speed.reached,
+                "percent_of_time_at_asked": 100 * speed.part,
+            }
+            for speed in audit.speeds
+        ],
+        "path_deviation": {
+            "rows": _deviation(audit.deviation_rows),
+            "midway": _deviation(audit.deviation_midway),
+        },
+        "corners": [_corner(corner) for corner in audit.corners],
+        "continuous": [_joint(joint) for joint in audit.continuous],
+        "findings": [_finding(finding, audit) for finding in audit.findings],
+    }
+
+
+def _number(value: float | None) -> float | None:
+    return None if value is None or not math.isfinite(value) else float(value)
+
+
+def _place(time: float, step: int) -> dict[str, Any]:
+    return {"time_s": _number(time), "step": step + 1}
+
+
+def _scaled(value: float | None, dimension: str | None) -> float | None:
+    value = _number(value)
+    return value if value is None or dimension is None else to_screen(value, dimension)
+
+
+def _unit(dimension: str | None) -> str:
+    return "SI" if dimension is None else DIMENSIONS[dimension].screen
+
+
+def _peak(peak: Peak | None, dimension: str | None) -> dict[str, Any] | None:
+    if peak is None:
+        return None
+    found = {
+        "peak": _scaled(peak.peak, dimension),
+        "limit": _scaled(peak.limit, dimension),
+        "unit": _unit(dimension),
+        "percent": _number(100 * peak.share),
+        **_place(peak.time, peak.step),
+        "row": peak.row + 1,
+    }
+    if peak.margin is not None:
+        found["margin"] = _scaled(peak.margin, dimension)
+    return found
+
+
+def _joint(joint: JointAudit) -> dict[str, Any]:
+    def all_of(peaks: dict[str, Peak]) -> dict[str, Any]:
+        return {name: _peak(peak, dimension_of(joint.kind, name)) for name, peak in peaks.items()}
+
+    found = {"name": joint.name, "kind": joint.kind or None, **all_of(joint.peaks())}
+    if joint.differences is not None:
+        found["differences"] = all_of(dict(joint.differences))
+    return found
+
+
+def _deviation(deviation: Deviation | None) -> dict[str, Any] | None:
+    if deviation is None:
+        return None
+    return {
+        "position_mm": 1000 * deviation.position,
+        "position_time_s": deviation.position_time,
+        "position_step": deviation.position_step + 1,
+        "angle_deg": math.degrees(deviation.angle),
+        "angle_time_s": deviation.angle_time,
+        "angle_step": deviation.angle_step + 1,
+        "poses": deviation.count,
+    }
+
+
+def _corner(corner: CornerUse) -> dict[str, Any]:
+    dimension = _REGIONS.get(corner.region)
+    unit = "percent" if dimension == "ratio" else _unit(dimension) if dimension else None
+    return {
+        "after_step": corner.after_step + 1,
+        "kind": corner.kind,
+        "reason": corner.reason,
+        "asked": corner.asked,
+        "asked_value": _scaled(corner.asked_value, dimension) if dimension else None,
+        "used": _scaled(corner.used, dimension) if dimension else None,
+        "unit": unit,
+    }
+
+
+def _finding(finding: Finding, audit: Audit) -> dict[str, Any]:
+    found = asdict(finding)
+    kinds = {joint.name: joint.kind for joint in (*audit.joints, *audit.rows)}
+    dimension = None
+    if finding.quantity == "time":
+        dimension = "time"
+    elif finding.quantity is not None and finding.value is not None:
+        dimension = dimension_of(kinds.get(finding.joint or "", ""), finding.quantity)
+    found["time_s"] = _number(found.pop("time"))
+    found["step"] = None if finding.step is None else finding.step + 1
+    for name in ("value", "limit"):
+        found[name] = _scaled(getattr(finding, name), dimension)
+    found["unit"] = None if finding.value is None else _unit(dimension)
+    return found

@@ -1,0 +1,101 @@
+"""The tool in a table: speed and acceleration, the caps on them, and how near it comes to a singularity."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm import Arm
+from pathplan.arm.kinematics import smallest_singular_value
+from pathplan.audit.model import Singularity
+from pathplan.audit.shares import Array, Rows
+
+__all__ = ["nearest_singularity", "step_caps", "tool_acceleration", "tool_speed"]
+
+Numbers = NDArray[np.intp]
+TRAVEL = 0.02  # rad of joint travel, m over the arm's length, between rows at which a singular value is taken
+
+
+def step_caps(arm: Arm, task: Any = None) -> tuple[Array, Array]:
+    """Caps on tool speed and acceleration (S,) by step, inf where there is none; (1,) without a task.
+
+    The lowest of what step, task and tool say. Raises nothing.
+    """
+    if task is None:
+        return _lowest(arm.tool.speed), _lowest(arm.tool.acceleration)
+    speeds, accelerations = [], []
+    for step in task.steps:
+        tool = arm.tools.get(step.tool, arm.tool)
+        speeds.append(_lowest(step.speed, task.speed, tool.speed)[0])
+        accelerations.append(_lowest(step.acceleration, tool.acceleration)[0])
+    return np.array(speeds), np.array(accelerations)
+
+
+def _lowest(*caps: float | None) -> Array:
+    return np.array([min((cap for cap in caps if cap is not None), default=math.inf)])
+
+
+def tool_speed(arm: Arm, position: Array, velocity: Array) -> Array:
+    """Speed (N,) m/s of the tool centre point for positions and velocities (N, n)."""
+    return np.linalg.norm(np.einsum("nij,nj->ni", arm.jacobian(position)[:, :3], velocity), axis=1)
+
+
+def tool_acceleration(arm: Arm, position: Array, velocity: Array, acceleration: Array) -> Array:
+    """Acceleration (N,) m/s^2 of the tool centre point: J qdd + dJ/dt qd.
+
+    dJ/dt is the central difference of J along the velocity over 1e-4 rad or m, good to 1e-8 of its size.
+    """
+    speed = np.linalg.norm(velocity, axis=1)
+    over = np.where(speed > 0, 1e-4 / np.where(speed > 0, speed, 1.0), 0.0)  # s in which 1e-4 is travelled
+    ahead = position + velocity * over[:, None]
+    behind = position - velocity * over[:, None]
+    change = arm.jacobian(ahead)[:, :3] - arm.jacobian(behind)[:, :3]
+    rate = change / np.where(over > 0, 2 * over, 1.0)[:, None, None]
+    linear = np.einsum("nij,nj->ni", arm.jacobian(position)[:, :3], acceleration)
+    return np.linalg.norm(linear + np.einsum("nij,nj->ni", rate, velocity), axis=1)
+
+
+def nearest_singularity(
+    arm: Arm, position: Array, rows: Rows, numbers: Numbers, before: Singularity | None = None
+) -> Singularity:
+    """Of positions (N, n), at rows of these numbers (N,), the one with the smallest singular value.
+
+    `before`, what earlier rows gave, counts too. Of equal values the earliest row is told.
+
+    Not every row needs its own: between two rows d apart (sum of joint travels, prismatic ones over
+    `arm.length`) the value can fall below the mean of the two by at most C d / 2, since turning joint i
+    moves each column of the scaled Jacobian by at most sqrt(1 + v^2), v the longest linear part of a
+    column, and singular values move by no more than the matrix does (Weyl 1912). Rows between are
+    looked at only where that bound lies below the least value known, so the answer is that of all rows.
+    """
+    scale = np.array([1.0 if joint.kind == "revolute" else 1.0 / arm.length for joint in arm.joints])
+    travel = np.concatenate([[0.0], np.cumsum(np.abs(np.diff(position, axis=0)) @ scale)])
+    sampled = np.flatnonzero(np.diff(np.floor(travel / TRAVEL)) > 0) + 1
+    sampled = np.unique(np.concatenate([[0], sampled, [len(position) - 1]]))
+    values = smallest_singular_value(arm, position[sampled])
+    best = _smaller(values, sampled, rows, numbers, before)
+    lengths = np.linalg.norm(arm.jacobian(position[sampled])[:, :3], axis=1)
+    lengths /= arm.length * scale  # of the scaled Jacobian
+    apart = np.diff(travel[sampled])
+    longest = np.exp(apart) * np.maximum(lengths[1:], lengths[:-1]).max(axis=1, initial=0.0)
+    steepest = math.sqrt(arm.n) * np.sqrt(1 + longest**2)
+    lowest = (values[1:] + values[:-1] - steepest * apart) / 2
+    near = np.flatnonzero((lowest < best.value) & (np.diff(sampled) > 1))
+    between = [np.arange(sampled[i] + 1, sampled[i + 1]) for i in near]
+    if between:
+        inner = np.concatenate(between)
+        best = _smaller(smallest_singular_value(arm, position[inner]), inner, rows, numbers, best)
+    return best
+
+
+def _smaller(
+    values: Array, at: NDArray[np.intp], rows: Rows, numbers: Numbers, before: Singularity | None
+) -> Singularity:
+    i = int(np.argmin(values))
+    row = int(numbers[at[i]])
+    if before is not None and (before.value, before.row) <= (values[i], row):
+        return before
+    return Singularity(float(values[i]), float(rows.time[at[i]]), int(rows.step[at[i]]), row)

@@ -1,0 +1,185 @@
+"""The audit as text for a terminal: at most 100 columns, no colour, nothing beyond ASCII but the user's names."""
+
+from __future__ import annotations
+
+import math
+import textwrap
+from collections.abc import Iterator, Sequence
+
+from pathplan.audit import Audit, Deviation, JointAudit, Pacing, Peak, StepPacing
+from pathplan.audit.exceedances import clock
+from pathplan.audit.words import dimension_of, shown
+from pathplan.units import format_quantity, format_value
+
+__all__ = ["CAUTIONS", "WIDTH", "audit_screen"]
+
+WIDTH = 100
+MOST_STEPS = 12  # lines of steps shown; the rest is in --json
+MOST_FINDINGS = 20
+CAUTIONS = (
+    "Prove the plan at reduced speed first. Clearance is not checked. A plan is no safety function: the risk",
+    "assessment and the local codes apply.",
+)
+QUANTITIES = ("velocity", "acceleration", "jerk", "torque")
+
+
+def audit_screen(audit: Audit) -> str:
+    """The audit in lines of at most 100 columns, without a line end after the last.
+
+    Shares in percent, the largest of each joint marked *, what passes its limit marked !.
+    """
+    blocks = [
+        _headline(audit),
+        _joints(audit),
+        _tool(audit),
+        _steps(audit),
+        _findings(audit),
+        [*CAUTIONS],
+    ]
+    return "\n\n".join("\n".join(block) for block in map(list, blocks) if block)
+
+
+def _headline(audit: Audit) -> Iterator[str]:
+    title = f"{audit.task}, " if audit.task else ""
+    count = sum(finding.level == "exceedance" for finding in audit.findings)
+    verdict = "within limits" if audit.passed else f"BREAKS LIMITS ({count} exceedance{'s' * (count > 1)})"
+    yield _fit(f"{_printable(title + audit.arm)}: {verdict}")
+    parts = [f"cycle time {clock(audit.duration)}"]
+    if audit.motion_time is not None and audit.waiting_time is not None:
+        parts[0] += f" (motion {clock(audit.motion_time)}, waiting {clock(audit.waiting_time)})"
+    if audit.bound is not None:
+        parts.append(f"bound {clock(math.floor(audit.bound * 1e3) / 1e3)}")
+    rows = f"{audit.count} row{'s' * (audit.count != 1)}"
+    parts.append(f"{rows} at {format_value(audit.cycle * 1e3)} ms" if audit.cycle else f"{rows}, irregular")
+    yield ", ".join(parts)
+
+
+def _joints(audit: Audit) -> Iterator[str]:
+    table = [["joint", "position", "margin", *QUANTITIES]]
+    table += [_joint_cells(joint) for joint in (*audit.joints, *audit.rows)]
+    if audit.measured == "differences":
+        yield "velocity, acceleration and jerk: where no column, finite differences of the positions"
+    yield from _aligned(table, [24, *[15] * 6])
+
+
+def _joint_cells(joint: JointAudit) -> list[str]:
+    peaks = joint.peaks()
+    largest = max((peak.share for peak in peaks.values()), default=None)
+    position = peaks.get("position")
+    cells = [_printable(joint.name), _share(position, largest), "-"]
+    if position is not None and position.margin is not None:
+        cells[2] = shown(position.margin, dimension_of(joint.kind, "position"), 3)
+    return cells + [_share(peaks.get(quantity), largest) for quantity in QUANTITIES]
+
+
+def _share(peak: Peak | None, largest: float | None) -> str:
+    """A share in percent with its mark. 100.0 is only printed of what keeps the limit."""
+    if peak is None:
+        return "-  "
+    over = peak.margin < -1e-9 if peak.margin is not None else peak.share > 1 + 1e-6
+    percent = 100 * peak.share
+    text = f"{max(percent, 100.1):.1f}" if over else f"{percent:.1f}"
+    return f"{text} %{'!' if over else '*' if peak.share == largest else ' '}"
+
+
+def _tool(audit: Audit) -> Iterator[str]:
+    for name, peak in (("speed", audit.tool_speed), ("acceleration", audit.tool_acceleration)):
+        if peak is not None:
+            used = f"{shown(peak.peak, name)} of {shown(peak.limit, name)}"
+            yield f"tool {name}: at most {used} ({_share(peak, None).strip()}) {_place(peak.time, peak.step)}"
+    if audit.singularity is not None:
+        where = _place(audit.singularity.time, audit.singularity.step)
+        value = format_value(audit.singularity.value, 3)
+        yield f"singularity: smallest singular value {value} {where} (0: singular)"
+    for name, deviation in (("rows", audit.deviation_rows), ("midway", audit.deviation_midway)):
+        if deviation is not None:
+            yield f"path deviation, {name}: {_deviation_text(deviation)}"
+    if audit.corners:
+        flown = sum(corner.kind == "fly-by" for corner in audit.corners)
+        yield f"corners: {flown} flown by, {len(audit.corners) - flown} stop points"
+    if audit.continuous:
+        worst = max(
+            (peak.share, joint.name, quantity)
+            for joint in audit.continuous
+            for quantity, peak in joint.peaks().items()
+            if quantity != "position"
+        )
+        text = f"largest share {100 * worst[0]:.4f} %, {_printable(worst[1])} {worst[2]}"
+        yield _fit(f"between rows: {text}")
+
+
+def _deviation_text(deviation: Deviation) -> str:
+    position = format_quantity(deviation.position * 1e3, "length", 3).replace("mm", "um")
+    angle = format_value(deviation.angle * 1e6, 3)
+    return (
+        f"{position} {_place(deviation.position_time, deviation.position_step)}, "
+        f"{angle} urad {_place(deviation.angle_time, deviation.angle_step)}"
+    )
+
+
+def _place(time: float, step: int) -> str:
+    return f"at {clock(time)} in step {step + 1}"
+
+
+def _steps(audit: Audit) -> Iterator[str]:
+    """What paces each step, and what became of its asked speed; of many steps the longest."""
+    if not audit.pacing:
+        return
+    chosen = sorted(audit.pacing, key=lambda step: -step.duration)[:MOST_STEPS]
+    speeds = {speed.step: speed for speed in audit.speeds if speed.asked is not None}
+    table = [["step", "", "time", "paced by, share of its time"]]
+    table[0] += ["tool speed reached"] if speeds else []
+    for step in sorted(chosen, key=lambda step: step.step):
+        cells = [str(step.step + 1), _printable(step.name), clock(step.duration), _pacing_text(step)]
+        if speeds:
+            speed = speeds.get(step.step)
+            cells.append("-")
+            if speed is not None and speed.asked is not None:
+                cells[-1] = f"{format_value(1e3 * speed.reached)} of {format_value(1e3 * speed.asked)} mm/s"
+        table.append(cells)
+    yield from _aligned(table, [6, 16, 12, 46, 22], left=(1, 3, 4))
+    if len(audit.pacing) > MOST_STEPS:
+        yield f"... and {len(audit.pacing) - MOST_STEPS} shorter steps, all of them in --json"
+
+
+def _pacing_text(step: StepPacing) -> str:
+    shown_parts = [_part_text(part) for part in step.parts[:3]]
+    return ", ".join(shown_parts) + (", ..." if len(step.parts) > 3 else "")
+
+
+def _part_text(part: Pacing) -> str:
+    who = f"{_printable(part.joint)} " if part.joint else ""
+    return f"{who}{part.quantity} {100 * part.part:.0f} %"
+
+
+def _findings(audit: Audit) -> Iterator[str]:
+    marks = {"exceedance": "!", "warning": "?", "note": "-"}
+    for finding in audit.findings[:MOST_FINDINGS]:
+        text = _printable(finding.text)
+        yield from textwrap.wrap(
+            text, WIDTH, initial_indent=f"{marks[finding.level]} ", subsequent_indent="  "
+        )
+    if len(audit.findings) > MOST_FINDINGS:
+        yield f"... and {len(audit.findings) - MOST_FINDINGS} more findings, all of them in --json"
+
+
+def _aligned(table: Sequence[Sequence[str]], most: Sequence[int], left: Sequence[int] = (0,)) -> Iterator[str]:
+    """Columns as wide as they need to be, up to `most`; those in `left` begin at the left edge."""
+    widths = [
+        min(most[c], max(len(row[c]) for row in table)) for c in range(len(table[0]))
+    ]
+    for row in table:
+        cells = []
+        for c, (cell, width) in enumerate(zip(row, widths, strict=True)):
+            cell = cell if len(cell) <= width else cell[: width - 3] + "..."
+            cells.append(cell.ljust(width) if c in left else cell.rjust(width))
+        yield _fit("  ".join(cells).rstrip())
+
+
+def _fit(line: str) -> str:
+    return line if len(line) <= WIDTH else line[: WIDTH - 3] + "..."
+
+
+def _printable(text: str) -> str:
+    """Names from files: nothing that moves the cursor or ends the line."""
+    return "".join(char if char.isprintable() else "?" for char in text)
