@@ -8,7 +8,7 @@ happens get tighter limits, and what is left at the end slows the whole stretch 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,7 +23,6 @@ from pathplan.timing.motion import Motion
 from pathplan.timing.stretch import StretchTiming
 
 Array = NDArray[np.float64]
-Progress = Callable[[int], None]
 
 _LOSS = 2.5e-3  # a stretch is refined while more than this share of its time leaves every limit unused
 _ROUNDS = 8
@@ -37,30 +36,22 @@ _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of 
 _FEWEST_CELLS = 12
 _CELLS_PER_WINDOW = 3.0
 _SHORTEST_WINDOW = 1 / 30  # of the coarse duration: a finer clock only copies the noise of the coarse timing
-_BATCH = 64  # stretches solved together
+BATCH = 64  # stretches solved together
 
 
-def time_motions(motions: Sequence[Motion], *, progress: Progress | None = None) -> list[StretchTiming]:
-    """Near time-optimal timings, one for each motion, in order. `progress` is told how many were finished.
+def time_motions(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | None = None) -> list[StretchTiming]:
+    """Near time-optimal timings, one for each motion, in order, solved together: hand over at most about `BATCH`.
 
-    Raises PathplanError when a problem does not converge: no unfinished timing is returned.
+    `coarse` spares computing the coarse timings anew. Raises PathplanError when a problem does not converge: no
+    unfinished timing is returned.
     """
-    out: list[StretchTiming] = []
-    for begin in range(0, len(motions), _BATCH):
-        batch = motions[begin : begin + _BATCH]
-        out.extend(_time_batch(batch))
-        if progress is not None:
-            progress(len(batch))
-    return out
-
-
-def _time_batch(motions: Sequence[Motion]) -> list[StretchTiming]:
-    windows, meshes = [], []
-    for motion, coarse in zip(motions, coarse_timing(motions), strict=True):
-        window = _jerk_window(motion, coarse)
-        clock = make_clock(coarse, window)
+    if not motions:
+        return []
+    meshes = []
+    for motion, first in zip(motions, coarse_timing(motions) if coarse is None else coarse, strict=True):
+        window = _jerk_window(motion, first)
+        clock = make_clock(first, window)
         cells = max(_FEWEST_CELLS, int(np.ceil(_CELLS_PER_WINDOW * clock.duration / window)))
-        windows.append(window)
         meshes.append(make_mesh(motion, clock, cells, 1))
     problem = FineProblem(meshes)
     x = problem.feasible_start(0.7)

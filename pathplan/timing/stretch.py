@@ -81,8 +81,20 @@ class StretchTiming:
 
     def parameter(self, t: Array) -> Array:
         """Path parameter s at times t (N,)."""
-        cell, u = self.locate(np.asarray(t, dtype=float))
+        return self.place(*self.locate(np.asarray(t, dtype=float)))
+
+    def place(self, cell: NDArray[np.intp], u: Array) -> Array:
+        """Path parameter s (N,) at places u in given cells."""
         return self.clock.derivatives(self.tau[cell] + u * np.diff(self.tau)[cell], 0)[0]
+
+    def times(self, tau: Array) -> Array:
+        """Times (N,) at which the clock shows tau (N,)."""
+        cell = np.clip(np.searchsorted(self.tau, tau, side="right") - 1, 0, len(self.tau) - 2)
+        return self.cell_times(cell, (tau - self.tau[cell]) / np.diff(self.tau)[cell])
+
+    def cell_times(self, cell: NDArray[np.intp], u: Array) -> Array:
+        """Times (N,) at places u in given cells."""
+        return self.node_times[cell] + self._time_in_cell(cell, u)
 
     def derivatives(self, t: Array, highest: int = 3) -> list[Array]:
         """Joint positions and time derivatives up to `highest` (at most 3) at times t (N,), each (N, n)."""

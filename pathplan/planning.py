@@ -1,0 +1,292 @@
+"""From a task to its plan: path, timing, table and audit in one value."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field
+from functools import cached_property, partial
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.errors import InputError
+from pathplan.table import JointTable, Mark, tick_times
+from pathplan.task.model import Task
+
+if TYPE_CHECKING:
+    from pathplan.arm import Arm
+    from pathplan.audit import Audit, Evidence
+    from pathplan.path.taskpath import Stretch, TaskPath
+    from pathplan.timeline import Part
+    from pathplan.timing.motion import Motion
+    from pathplan.timing.stretch import StretchTiming
+
+Array = NDArray[np.float64]
+Progress = Callable[[str, int, int], None]  # what is being done, how many are done, of how many
+
+_DENSER = 20  # the trajectory is audited at this many times the rows' rate
+_CHUNK = 16384
+_NO_LIMIT = 1e6  # a row without a limit of some kind gets this many times the arm's largest
+
+
+@dataclass(frozen=True, eq=False)
+class Plan:
+    """A planned task. Made by `plan`; everything SI.
+
+    `timings` are the near time-optimal timings of the stretches in order, at the task's pace, not rounded to ticks;
+    `bounds` (S,) what no motion along the same stretches under the same limits can beat, at full pace.
+    """
+
+    task: Task
+    path: TaskPath
+    timings: tuple[StretchTiming, ...]
+    bounds: Array
+    parts: tuple[Part, ...] = field(repr=False)
+
+    @property
+    def ticks(self) -> int:
+        """Number of cycles from the first row to the last."""
+        return self.parts[-1].last if self.parts else 0
+
+    @property
+    def duration(self) -> float:
+        """s from the first row to the last, waits included, in whole ticks."""
+        return float(tick_times(self.ticks, self.task.cycle))
+
+    @property
+    def motion_time(self) -> float:
+        """s in motion, not rounded to ticks."""
+        return float(sum(timing.duration for timing in self.timings))
+
+    @property
+    def waiting_time(self) -> float:
+        """s of waits, in whole ticks."""
+        ticks = sum(part.last - part.first for part in self.parts if part.wait is not None)
+        return float(tick_times(ticks, self.task.cycle))
+
+    @property
+    def bound(self) -> float:
+        """s: no motion along this path under these limits is faster, waits included. See `pathplan.timing.bound`."""
+        return float(self.bounds.sum()) + self.waiting_time
+
+    @property
+    def arm(self) -> Arm:
+        """The arm as it starts."""
+        return self.task.arm
+
+    @cached_property
+    def marks(self) -> tuple[Mark, ...]:
+        """Named instants, on ticks."""
+        from pathplan.timeline import marks_of
+
+        return marks_of(self.parts, [step.mark for step in self.task.steps], self.task.cycle)
+
+    @cached_property
+    def meta(self) -> dict[str, Any]:
+        """What the table's header says of where it comes from."""
+        task = self.task
+        return {
+            "arm": task.arm.name,
+            "task": task.title,
+            "task_file": task.file.name if task.file is not None else "",
+            "versions": versions(torque=task.arm.links is not None),
+            "sources": {**task.arm.sources, **task.sources},
+            "pace": task.pace,
+        }
+
+    @cached_property
+    def table(self) -> JointTable:
+        """The whole joint table. For hours of motion use `rows`."""
+        return self._rows(np.arange(self.ticks + 1))
+
+    def rows(self, chunk: int = _CHUNK) -> Iterator[JointTable]:
+        """The table in pieces of at most `chunk` rows, evaluated as they are asked for."""
+        if chunk < 1:
+            raise InputError(f"rows: expected a positive number of rows a chunk, got {chunk}")
+        for first in range(0, self.ticks + 1, chunk):
+            yield self._rows(np.arange(first, min(first + chunk, self.ticks + 1)))
+
+    @cached_property
+    def audit(self) -> Audit:
+        """The audit of the whole table with this plan behind it."""
+        from pathplan.audit import audit
+
+        table = self.__dict__.get("table")
+        return audit(self.rows() if table is None else table, self.task.arm, plan=self)
+
+    def _rows(self, ticks: NDArray[np.int64]) -> JointTable:
+        from pathplan.path.tool_motion import tool_derivatives
+        from pathplan.timeline import arm_of, evaluate, in_parts
+
+        arm, count = self.task.arm, len(ticks)
+        n = len(arm.joints)
+        columns = np.empty((4, count, n))
+        step, pose, speed = np.empty(count, dtype=np.int64), np.empty((count, 4, 4)), np.empty(count)
+        torque = np.empty((count, n)) if arm.links is not None else None
+
+        def visit(part: Part, rows: NDArray[np.intp], local: NDArray[np.int64]) -> None:
+            values = evaluate(part, np.asarray(tick_times(local, self.task.cycle)), n)
+            carrying = arm_of(part, arm)
+            q, qd, qdd = values.position, values.velocity, values.acceleration
+            columns[:, rows] = q, qd, qdd, values.jerk
+            step[rows] = values.step
+            pose[rows] = carrying.forward(q)
+            speed[rows] = np.linalg.norm(tool_derivatives(carrying, q, qd, qdd)[0], axis=1)
+            if torque is not None:
+                torque[rows] = carrying.torque(q, qd, qdd)
+
+        in_parts(self.parts, ticks, visit)
+        return JointTable(
+            np.asarray(tick_times(ticks, self.task.cycle)),
+            *columns,
+            torque=torque,
+            step=step,
+            pose=pose,
+            tool_speed=speed,
+            joint_names=tuple(joint.name for joint in arm.joints),
+            joint_kinds=tuple(joint.kind for joint in arm.joints),
+            cycle=self.task.cycle,
+            marks=self.marks,
+            meta=self.meta,
+        )
+
+    def evidence(self) -> Evidence:
+        """Path deviation at the rows and midway between them, and the trajectory's peaks 20 times denser."""
+        from pathplan.audit import Evidence, worse_deviation, worse_peaks
+
+        at_rows = midway = None
+        peaks: tuple[Any, ...] = ()
+        for part in self.parts:
+            if part.timing is None:
+                continue
+            at_rows = worse_deviation(at_rows, self._deviation(part, 0.0))
+            midway = worse_deviation(midway, self._deviation(part, 0.5))
+            peaks = worse_peaks(peaks, self._dense_peaks(part))
+        return Evidence(at_rows, midway, peaks)
+
+    def _deviation(self, part: Part, shift: float) -> Any:
+        from pathplan.audit import path_deviation, worse_deviation
+        from pathplan.timeline import evaluate
+
+        assert part.stretch is not None and part.timing is not None
+        worst = None
+        cycle = self.task.cycle
+        for first in range(0, part.last - part.first + 1, _CHUNK):
+            local = (np.arange(first, min(first + _CHUNK, part.last - part.first + 1)) + shift) * cycle
+            local = local[local <= part.timing.duration]
+            rows = evaluate(part, local, len(self.task.arm.joints))
+            programmed, known = part.stretch.programmed(rows.s)
+            actual = part.stretch.arm.forward(rows.position)
+            times = part.first * cycle + local
+            worst = worse_deviation(worst, path_deviation(actual, programmed, known, times, rows.step))
+        return worst
+
+    def _dense_peaks(self, part: Part) -> Any:
+        from pathplan.audit import joint_peaks, worse_peaks
+        from pathplan.timeline import step_at
+
+        assert part.stretch is not None and part.timing is not None
+        timing, cycle = part.timing, self.task.cycle
+        count = np.maximum(2, np.ceil(np.diff(timing.node_times) / cycle * _DENSER)).astype(int) + 1
+        worst: tuple[Any, ...] = ()
+        ends = np.cumsum(count)
+        for first in range(0, int(ends[-1]), 8 * _CHUNK):
+            point = np.arange(first, min(first + 8 * _CHUNK, int(ends[-1])))
+            cell = np.searchsorted(ends, point, side="right")
+            u = (point - (ends[cell] - count[cell])) / (count[cell] - 1)
+            q, qd, qdd, qddd = timing.at(cell, u)
+            times = part.first * cycle + timing.cell_times(cell, u)
+            step = step_at(part.stretch, timing.place(cell, u))
+            found = joint_peaks(
+                part.stretch.arm, times, step, position=q, velocity=qd, acceleration=qdd, jerk=qddd
+            )
+            worst = worse_peaks(worst, found)
+        return worst
+
+
+def plan(task: Task, *, progress: Progress | None = None) -> Plan:
+    """Plan a task: path, branches, near time-optimal timing, rows on the controller's cycle.
+
+    Parameters
+    ----------
+    task : Task
+        As `load_task` gives it. `task.speed` caps the tool everywhere, `task.pace` slows the whole trajectory.
+    progress
+        Called with what is being done, how many parts of it are done, and of how many.
+
+    Raises
+    ------
+    UnreachableError
+        A pose can't be reached or a step not followed: step, share, pose, joint or singularity.
+    LimitError, InputError
+        The task can't be planned as it stands; the message says which step and why.
+
+    Notes
+    -----
+    Limits of velocity, acceleration and jerk, and caps on the tool, are planned for; torque is audited.
+    """
+    from pathplan.path import follow_task
+    from pathplan.timeline import lay_on_ticks
+    from pathplan.timing.bound import bound_durations
+    from pathplan.timing.coarse import coarse_timing
+    from pathplan.timing.solve import BATCH, time_motions
+
+    if not 0 < task.pace <= 1:
+        raise InputError(f"pace: expected more than 0 and at most 1, got {task.pace}")
+    say = progress or (lambda what, done, total: None)
+    say("path", 0, 1)
+    path = follow_task(task)
+    say("path", 1, 1)
+    motions = [motion_of(stretch) for stretch in path.stretches]
+    timings: list[StretchTiming] = []
+    bounds: list[Array] = [np.zeros(0)]
+    say("timing", 0, len(motions))
+    for first in range(0, len(motions), BATCH):
+        batch = motions[first : first + BATCH]
+        coarse = coarse_timing(batch)
+        timings.extend(time_motions(batch, coarse))
+        bounds.append(bound_durations(batch, coarse))
+        say("timing", len(timings), len(motions))
+    paced = tuple(timing if task.pace == 1 else timing.slowed(task.pace) for timing in timings)
+    parts = lay_on_ticks(path.sequence, paced, task.start, task.cycle)
+    return Plan(task, path, paced, np.concatenate(bounds), parts)
+
+
+def motion_of(stretch: Stretch) -> Motion:
+    """What limits a stretch: the arm's limit rows, and the caps on the tool."""
+    from pathplan.path.tool_motion import tool_derivatives
+    from pathplan.timing.motion import Cap, Motion
+
+    limits = stretch.arm.limits
+    used = [np.isfinite(rows).any(axis=1) for rows in (limits.velocity, limits.acceleration, limits.jerk)]
+    kept = np.any(used, axis=0)
+    velocity, acceleration, jerk = (
+        _finite(rows[kept]) for rows in (limits.velocity, limits.acceleration, limits.jerk)
+    )
+    caps = tuple(Cap(*cap) for cap in stretch.caps if cap.speed is not None or cap.acceleration is not None)
+    tool = partial(tool_derivatives, stretch.arm)
+    return Motion(stretch.path, limits.matrix[kept], velocity, acceleration, jerk, caps, tool)
+
+
+def _finite(rows: Array) -> Array:
+    """Limits (R, 2) with the missing ones out of the way but finite."""
+    far = _NO_LIMIT * np.abs(rows[np.isfinite(rows)]).max(initial=1.0)
+    return np.clip(rows, -far, far)
+
+
+def versions(*, torque: bool = False) -> dict[str, str]:
+    """Versions of what computes a plan, for headers and reports."""
+    from importlib.metadata import version
+
+    names = ["numpy", "scipy"] + (["roboticstoolbox-python"] if torque else [])
+    return {"pathplan": _own_version(), **{name: version(name) for name in names}}
+
+
+def _own_version() -> str:
+    from importlib.metadata import PackageNotFoundError, version
+
+    try:
+        return version("pathplan")
+    except PackageNotFoundError:  # run from a checkout that was not installed
+        return "uninstalled"
