@@ -48,9 +48,7 @@ def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces
                 joint_path = _joint_path(pieces, part, start)
                 caps = _caps(path, spans, span, start)
                 arm = arms.carrying(step)
-                sequence.append(
-                    Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span])
-                )
+                sequence.append(Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span]))
         elif step.motion == "wait" or step.index not in parts.flown_by:
             sequence.append(Wait(step.index, step.wait))
     corners = _corners(path, layout, start, stretch_of_motion)
@@ -115,7 +113,7 @@ def _step_parts(
         end[one] = middle
         if two >= 0:
             begin[two] = middle
-            end[two] = middle
+            end[two] = start[i] + spans.length[i]  # unless more of it follows
     parts = _Parts()
     before = -1  # the last motion so far
     for leg in path.legs:
@@ -157,9 +155,7 @@ def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple
     return tuple(caps)
 
 
-def _corners(
-    path: CartesianPath, layout: Layout, start: Array, stretch_of_motion: Index
-) -> tuple[Corner, ...]:
+def _corners(path: CartesianPath, layout: Layout, start: Array, stretch_of_motion: Index) -> tuple[Corner, ...]:
     spans = layout.spans
     span_of = {int(spans.before[i]): i for i in np.flatnonzero(spans.corner)}
     ends = np.zeros(int(layout.stretch.max(initial=0)) + 1)

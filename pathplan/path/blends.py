@@ -46,14 +46,10 @@ def asked_sizes(motions: Motions, blends: Sequence[Blend | None], steps: Sequenc
             has_not, hint = "moves the tool centre point", "an angle"
             if blend.kind == "angle":
                 has_not, hint = "turns anything", "a length"
-            raise InputError(
-                f"{step.where}: blend {blend.text}: neither step here {has_not}, expected {hint}"
-            )
+            raise InputError(f"{step.where}: blend {blend.text}: neither step here {has_not}, expected {hint}")
         asked[j] = min((size for size in sides if size is not None), default=np.inf)
         sampled += [
-            _Sampled(j, side, blend.kind == "length", blend.value)
-            for side, size in enumerate(sides)
-            if size is None
+            _Sampled(j, side, blend.kind == "length", blend.value) for side, size in enumerate(sides) if size is None
         ]
     for entry, size in zip(sampled, _sampled_sizes(motions, sampled), strict=True):
         asked[entry.junction] = min(asked[entry.junction], size)
@@ -76,9 +72,7 @@ def _check_length(motions: Motions, j: int, blend: Blend, step: Step) -> None:
     own = float(motions.segments.path_length[segment])
     if 0.0 < own * (1 + 1e-9) < blend.value:
         text = f"blend {blend.text} is longer than its {step.motion} of {format_quantity(own, 'length')}"
-        raise InputError(
-            f"{step.where}: {text}", data={"step": step.index, "blend": blend.value, "length": own}
-        )
+        raise InputError(f"{step.where}: {text}", data={"step": step.index, "blend": blend.value, "length": own})
 
 
 def _size_on_side(motions: Motions, j: int, side: int, blend: Blend) -> float | None:

@@ -30,10 +30,7 @@ class Crossing:
 def _to_bernstein(degree: int) -> Array:
     """(degree+1, degree+1) from power coefficients on [0, 1], lowest first, to Bernstein coefficients."""
     return np.array(
-        [
-            [comb(i, j) / comb(degree, j) if j <= i else 0.0 for j in range(degree + 1)]
-            for i in range(degree + 1)
-        ]
+        [[comb(i, j) / comb(degree, j) if j <= i else 0.0 for j in range(degree + 1)] for i in range(degree + 1)]
     )
 
 
@@ -52,12 +49,8 @@ def first_crossing(pieces: Pieces, limits: Limits) -> Crossing | None:
     for piece in np.flatnonzero(suspect.any(axis=1)):
         for row in np.flatnonzero(suspect[piece]):
             powers = unit[::-1, piece, row]
-            stationary = (
-                np.roots(np.polyder(np.trim_zeros(powers, "f"))) if np.any(powers[:-1]) else np.zeros(0)
-            )
-            inside = stationary.real[
-                (abs(stationary.imag) < 1e-6) & (stationary.real > 0) & (stationary.real < 1)
-            ]
+            stationary = np.roots(np.polyder(np.trim_zeros(powers, "f"))) if np.any(powers[:-1]) else np.zeros(0)
+            inside = stationary.real[(abs(stationary.imag) < 1e-6) & (stationary.real > 0) & (stationary.real < 1)]
             t = np.concatenate([[0.0, 1.0], inside])
             values = np.polyval(powers, t)
             beyond = np.stack([low[row] - values, values - high[row]], axis=1)

@@ -19,7 +19,7 @@ from pathplan.path.geometry import NO_MOTION, Index, Segments
 from pathplan.path.joint import Array
 from pathplan.task.model import Step, Target, Task
 
-__all__ = ["CartesianPath", "Finding", "Leg", "cartesian_path", "tool_of"]
+__all__ = ["CartesianPath", "Finding", "Leg", "cartesian_path", "tool_frames", "tool_of"]
 
 
 @dataclass(frozen=True)
@@ -145,9 +145,7 @@ def _target_pose(task: Task, step: Step, tool: Array) -> Array:
         return task.arm.forward(target.joints) @ np.linalg.solve(task.arm.tool.flange_from_tool, tool)
     carried = _carried_by(task, target)
     if carried:
-        raise InputError(
-            f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest"
-        )
+        raise InputError(f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest")
     pose = task.pose(target)
     if task.arm.n >= 6:
         return pose
@@ -168,3 +166,24 @@ def _carried_by(task: Task, target: Target) -> str | None:
             return frame.joint
         name = frame.parent
     return None
+
+
+def tool_frames(path: CartesianPath) -> Array:
+    """(m, 4, 4) tool_from_own of each leg: from the leg's tool to the tool that the task's arm itself
+    carries.
+
+    The whole path is followed with one arm; a pose of another tool is first turned into the pose its own
+    tool then has.
+    """
+    own = path.task.arm.tool.flange_from_tool
+    frames: dict[str, Array] = {}
+    rows = []
+    for leg in path.legs:
+        name = leg.step.tool
+        if name not in frames:
+            tool = tool_of(path.task.arm, name)
+            same = tool is path.task.arm.tool
+            swap = np.eye(4) if same else np.linalg.solve(tool.flange_from_tool, own)
+            frames[name] = np.asarray(swap, dtype=float)
+        rows.append(frames[name])
+    return np.array(rows)

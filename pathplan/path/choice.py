@@ -20,12 +20,10 @@ from pathplan.path.cartesian import CartesianPath
 from pathplan.path.geometry import Index
 from pathplan.path.joint import Array
 from pathplan.path.refusals import no_branch_follows, no_state_asked
-from pathplan.path.states import LIMIT_SLACK, States, endless_joints, expand, judged_rows, matching
+from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, endless_joints, expand, judged_rows, matching
 from pathplan.path.tracking import Tracks, turns_between
 
 __all__ = ["Choice", "Routes", "candidate_states", "choose", "routes"]
-
-SAME_STATE = 1e-6  # rad or m: a track that ends nearer than this to a state ends in it
 
 
 @dataclass(frozen=True, eq=False)
@@ -140,9 +138,9 @@ def routes(path: CartesianPath, states: States, tracks: Tracks) -> Routes:
     matrix, (low, high) = arm.limits.matrix[judged], arm.limits.position[judged].T
     lowest, highest, time = _extremes(arm, tracks, matrix)
     shift = turns @ matrix.T
-    inside = (
-        (lowest[k, slot] + shift >= low - LIMIT_SLACK) & (highest[k, slot] + shift <= high + LIMIT_SLACK)
-    ).all(axis=1)
+    inside = ((lowest[k, slot] + shift >= low - LIMIT_SLACK) & (highest[k, slot] + shift <= high + LIMIT_SLACK)).all(
+        axis=1
+    )
     return Routes(
         row=row,
         slot=slot,
@@ -214,7 +212,7 @@ def choose(
         reached = total[parent, np.arange(len(parent))]
         if not np.isfinite(reached).any():
             alive = np.flatnonzero(np.isfinite(cost)) + here.start
-            raise no_branch_follows(path, i, states, tracks, ways, alive)
+            raise no_branch_follows(path, i, states, alive)
         parents.append(parent.astype(np.intp))
         cost = reached
     return _trace(path, states, tracks, ways, parents, cost)

@@ -11,10 +11,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from pathplan.arm.kinematics import joint_derivatives, smallest_singular_value
-from pathplan.path.geometry import Index, poses_of, spatial_twists
+from pathplan.path.geometry import Index, Mask, poses_of, spatial_twists
 from pathplan.path.hermite import derivatives_at, hermite_coefficients
 from pathplan.path.joint import Array
 from pathplan.path.newton import joint_weights, pose_error, solve_near
@@ -29,6 +28,7 @@ ANGLE = 2e-7  # rad
 DERIVATIVE = (1e-5, 1e-4, 1e-3)
 FIRST_WIDTH = 0.5  # path parameter of a piece to start with
 _HALVINGS = 14
+_NEAR = 1e-2  # rad, or arm lengths: nearer than this to its pose a piece is a fair guess of the joints
 # Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second) and near 0.32 and 0.68
 # (first, third).
 _CHECKED = np.array([0.32, 0.5, 0.68])
@@ -67,9 +67,7 @@ def fit(spans: Spans) -> Pieces:
     span = np.repeat(todo, count + 1)
     number = np.arange(len(span)) - np.repeat(np.cumsum(count + 1) - (count + 1), count + 1)
     at = spans.length[span] * number / np.repeat(count, count + 1)
-    jets = (
-        _nodes(spans, span, at, spans.guess(span, at)) if len(span) else np.zeros((4, 0, spans.motions.arm.n))
-    )
+    jets = _nodes(spans, span, at, spans.guess(span, at)) if len(span) else np.zeros((4, 0, spans.motions.arm.n))
     opening = np.flatnonzero(number < np.repeat(count, count + 1))
     span, start, width = span[opening], at[opening], (at[1:] - at[:-1])[opening] if len(at) else at
     begin, end = jets[:, opening], jets[:, opening + 1]
@@ -77,7 +75,7 @@ def fit(spans: Spans) -> Pieces:
         if not len(span):
             break
         coefficients = hermite_coefficients(begin, end, width)
-        good = _keeps(spans, span, start, width, coefficients, begin, end)
+        good, off = _keeps(spans, span, start, width, coefficients, begin, end)
         done.append(Pieces(span[good], start[good], width[good], coefficients[:, good]))
         bad = ~good
         span, start, width, begin, end = span[bad], start[bad], width[bad], begin[:, bad], end[:, bad]
@@ -85,6 +83,8 @@ def fit(spans: Spans) -> Pieces:
             break
         half = width / 2
         guess = derivatives_at(coefficients[:, bad], half)[0] - spans.joint_jets(span, start + half)[0]
+        wild = off[bad] > _NEAR  # a piece far too long for its path: the tracked branch is the better guess
+        guess[wild] = spans.guess(span[wild], (start + half)[wild])
         middle = _nodes(spans, span, start + half, guess)
         span, start, width = np.tile(span, 2), np.concatenate([start, start + half]), np.tile(half, 2)
         begin, end = np.concatenate([begin, middle], axis=1), np.concatenate([middle, end], axis=1)
@@ -144,17 +144,17 @@ def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
     poor = ~met | (value < SINGULAR)
     if poor.any():
         row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
-        raise Trouble(
-            int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach"
-        )
+        raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach")
     derivatives, _ = joint_derivatives(arm, q, spatial_twists(jets))
     return np.concatenate([q[None], derivatives.transpose(1, 0, 2)]) + spans.joint_jets(i, at)
 
 
 def _keeps(
     spans: Spans, span: Index, start: Array, width: Array, coefficients: Array, begin: Array, end: Array
-) -> NDArray[np.bool_]:
-    """(m,) which pieces keep to the path and its derivatives."""
+) -> tuple[Mask, Array]:
+    """(m,) which pieces keep to the path and its derivatives, and how far each is off the pose in its middle
+    (rad, or arm lengths).
+    """
     arm, m = spans.motions.arm, len(span)
     points = len(_CHECKED)
     i = np.repeat(span, points)
@@ -166,9 +166,7 @@ def _keeps(
     jets = spans.tool_jets(i, at)
     own_from_tool = np.linalg.inv(spans.tool_from_own(i))
     missing = pose_error(arm.forward(q) @ own_from_tool, poses_of(jets.position[0], jets.rotation))
-    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (
-        np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE
-    )
+    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
     good = near.reshape(m, points).all(axis=1)
     exact = joint_derivatives(arm, q, spatial_twists(jets))[0].transpose(1, 0, 2) + straight[1:]
     weights = joint_weights(arm)
@@ -184,4 +182,5 @@ def _keeps(
     scale[1:] = np.maximum(scale[1:], scale[0])
     powers = width ** np.arange(1, 4)[:, None]
     allowed = np.array(DERIVATIVE)[:, None] * scale + _ROUNDING[:, None] / powers
-    return np.asarray(good & (error <= allowed).all(axis=0))
+    off = np.linalg.norm(missing.reshape(m, points, 6)[:, 1] / ([arm.length] * 3 + [1.0] * 3), axis=1)
+    return good & (error <= allowed).all(axis=0), off

@@ -9,13 +9,13 @@ import numpy as np
 from pathplan.errors import PathplanError, UnreachableError
 from pathplan.path.assembly import assemble
 from pathplan.path.bounds import Crossing, first_crossing
-from pathplan.path.cartesian import CartesianPath, cartesian_path
+from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
 from pathplan.path.choice import Choice, candidate_states, choose, routes
 from pathplan.path.fit import Pieces, Trouble, fit
 from pathplan.path.geometry import poses_of
 from pathplan.path.hermite import derivatives_at
 from pathplan.path.layout import Layout, lay_out
-from pathplan.path.motions import motions_of, tool_frames
+from pathplan.path.motions import motions_of
 from pathplan.path.refusals import limit_text, place_text, singularity
 from pathplan.path.taskpath import TaskPath
 from pathplan.path.tracking import track
@@ -76,9 +76,7 @@ def follow_task(task: Task) -> TaskPath:
     raise refusal
 
 
-def _bar(
-    layout: Layout, choice: Choice, span: int, barred_legs: set[tuple[int, int]], barred_states: set[int]
-) -> None:
+def _bar(layout: Layout, choice: Choice, span: int, barred_legs: set[tuple[int, int]], barred_states: set[int]) -> None:
     """Bar what led to a span: the state its step starts from, or the state in the middle of its corner."""
     leg = int(layout.spans.motions.leg[layout.spans.before[span]])
     if layout.spans.corner[span]:
@@ -95,17 +93,13 @@ def _trouble_words(path: CartesianPath, layout: Layout, trouble: Trouble) -> Unr
     return _refusal(path, layout, trouble.span, trouble.at, trouble.q, reason, data)
 
 
-def _crossing_words(
-    path: CartesianPath, layout: Layout, pieces: Pieces, crossing: Crossing
-) -> UnreachableError:
+def _crossing_words(path: CartesianPath, layout: Layout, pieces: Pieces, crossing: Crossing) -> UnreachableError:
     arm, piece = path.task.arm, crossing.piece
     q = derivatives_at(pieces.coefficients[:, piece : piece + 1], np.array([crossing.local]))[0, 0]
     limit = float(arm.limits.position[crossing.row, crossing.side])
     data = {"joint": arm.limits.names[crossing.row], "limit": limit}
     at = float(pieces.start[piece]) + crossing.local
-    return _refusal(
-        path, layout, int(pieces.span[piece]), at, q, limit_text(arm, crossing.row, crossing.side), data
-    )
+    return _refusal(path, layout, int(pieces.span[piece]), at, q, limit_text(arm, crossing.row, crossing.side), data)
 
 
 def _refusal(

@@ -91,13 +91,15 @@ class Segments:
     def __len__(self) -> int:
         return len(self.length)
 
+    def take(self, k: Index) -> Segments:
+        """The rows k as a batch of their own."""
+        return Segments(*(getattr(self, f.name)[k] for f in fields(self)))
+
     @classmethod
     def join(cls, parts: Sequence[Segments]) -> Segments:
         """One batch of all rows; an empty batch of none."""
         if not parts:
-            return cls(
-                *(np.zeros((0, *shape)) for shape in ((3,), (3,), (3,), (3,), (), (3,), (3, 3), (), (), ()))
-            )
+            return cls(*(np.zeros((0, *shape)) for shape in ((3,), (3,), (3,), (3,), (), (3,), (3, 3), (), (), ())))
         return cls(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)))
 
     def poses(self, k: Index, s: Array) -> Array:
@@ -163,9 +165,7 @@ def superpose(first: Jets, second: Jets, corner: Array) -> Jets:
     position[0] -= corner[:, :3, 3]
     lead = first.rotation @ corner[:, :3, :3].transpose(0, 2, 1)
     a, a1, a2 = first.turning
-    b, b1, b2 = (
-        rotate(lead, w) for w in second.turning
-    )  # as seen from the base, turned along with the first
+    b, b1, b2 = (rotate(lead, w) for w in second.turning)  # as seen from the base, turned along with the first
     carried = cross(a, b)
     turning = np.stack(
         [
@@ -200,15 +200,11 @@ def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segm
     names = ("via and start", "via and target", "start and target")
     for size, names_ in zip(sizes, names, strict=True):
         if size < NO_MOTION * arm_length:
-            extra = (
-                "; a full circle is given by centre, axis and angle" if names_ == "start and target" else ""
-            )
+            extra = "; a full circle is given by centre, axis and angle" if names_ == "start and target" else ""
             raise DegenerateArc(f"{names_} of the arc coincide{extra}")
     normal = np.cross(a, b)
     if np.linalg.norm(normal) < _ON_CHORD * sizes[0] * sizes[1]:
-        raise DegenerateArc(
-            "start, via and target of the arc lie on one line, expected three points of a circle"
-        )
+        raise DegenerateArc("start, via and target of the arc lie on one line, expected three points of a circle")
     turn = _shortest(start, end)
     # Circumcentre seen from via: (|a|^2 b - |b|^2 a) x (a x b) / (2 |a x b|^2).
     centre = via + np.cross(sizes[0] ** 2 * b - sizes[1] ** 2 * a, normal) / (2.0 * float(normal @ normal))
@@ -221,9 +217,7 @@ def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segm
     return _segment(start, centre, np.zeros(3), x, y, angle, turn, distance, arm_length)
 
 
-def arc_about(
-    start: Array, centre: Array, axis: Array, angle: float, arm_length: float, *, along: bool
-) -> Segments:
+def arc_about(start: Array, centre: Array, axis: Array, angle: float, arm_length: float, *, along: bool) -> Segments:
     """Arc from pose `start` about `axis` (3,) through `centre` (3,) by a signed angle, full circles and
     more; K = 1.
 
@@ -245,9 +239,7 @@ def arc_about(
     if radius < NO_MOTION * arm_length:
         raise DegenerateArc("centre of the arc is where it starts, expected a radius")
     turn = angle * axis if along else np.zeros(3)
-    return _segment(
-        start, centre, np.zeros(3), x, np.cross(axis, x), angle, turn, radius * abs(angle), arm_length
-    )
+    return _segment(start, centre, np.zeros(3), x, np.cross(axis, x), angle, turn, radius * abs(angle), arm_length)
 
 
 def _shortest(start: Array, end: Array) -> Array:

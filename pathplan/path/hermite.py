@@ -23,9 +23,7 @@ def _solution() -> Array:
 
 
 _UPPER = _solution()
-_FALLING = np.array(
-    [[factorial(p) / factorial(p - k) if p >= k else 0.0 for p in range(8)] for k in range(4)]
-)
+_FALLING = np.array([[factorial(p) / factorial(p - k) if p >= k else 0.0 for p in range(8)] for k in range(4)])
 
 
 def hermite_coefficients(begin: Array, end: Array, width: Array) -> Array:

@@ -66,9 +66,7 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
     junctions = [_junction(path, motions, j) for j in range(len(motions) - 1)]
     _stop_at_reversals(motions, junctions)
     _note_stops_that_a_blend_would_save(motions, junctions)
-    asked = asked_sizes(
-        motions, [junction.blend for junction in junctions], [junction.step for junction in junctions]
-    )
+    asked = asked_sizes(motions, [junction.blend for junction in junctions], [junction.step for junction in junctions])
     for _ in range(_ROUNDS):
         delta = fit_into_steps(asked, motions.length) if len(asked) else asked
         spans, _ = _spans(motions, delta)
@@ -76,9 +74,7 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
             break
     else:
         worst = next(j for j, junction in enumerate(junctions) if junction.blend is not None)
-        raise InputError(
-            f"{junctions[worst].step.where}: blend: the corner does not come to lie within its region"
-        )
+        raise InputError(f"{junctions[worst].step.where}: blend: the corner does not come to lie within its region")
     used = used_sizes(motions, [junction.blend for junction in junctions], delta)
     findings = []
     for j, junction in enumerate(junctions):
@@ -114,11 +110,7 @@ def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
         reason = "the step without motion that follows has no blend"
     else:
         return junction
-    note = (
-        ""
-        if step.blend is None
-        else f"the arm stops here ({reason}), so the blend {step.blend.text} has no effect"
-    )
+    note = "" if step.blend is None else f"the arm stops here ({reason}), so the blend {step.blend.text} has no effect"
     junction.stop(reason, note)
     return junction
 
@@ -157,9 +149,7 @@ def _turn_angles(motions: Motions, j: Index) -> Array:
     after = _tangents(motions, j + 1, np.zeros(len(j), dtype=bool), joint_space)
     before /= np.linalg.norm(before, axis=1, keepdims=True)
     after /= np.linalg.norm(after, axis=1, keepdims=True)
-    return np.asarray(
-        2.0 * np.arctan2(np.linalg.norm(after - before, axis=1), np.linalg.norm(after + before, axis=1))
-    )
+    return np.asarray(2.0 * np.arctan2(np.linalg.norm(after - before, axis=1), np.linalg.norm(after + before, axis=1)))
 
 
 def _stop_at_reversals(motions: Motions, junctions: list[Junction]) -> None:
@@ -188,10 +178,7 @@ def _note_stops_that_a_blend_would_save(motions: Motions, junctions: list[Juncti
         return
     one, two = motions.segment[cartesian], motions.segment[np.array(cartesian) + 1]
     segments = motions.segments
-    bend = (
-        segments.jets(two, np.zeros(len(two))).position[2]
-        - segments.jets(one, segments.length[one]).position[2]
-    )
+    bend = segments.jets(two, np.zeros(len(two))).position[2] - segments.jets(one, segments.length[one]).position[2]
     bends = np.linalg.norm(bend, axis=1) > 1e-9 * motions.arm.length
     for row, (j, angle) in enumerate(zip(cartesian, _turn_angles(motions, np.array(cartesian)), strict=True)):
         if angle > _STRAIGHT:
@@ -282,12 +269,8 @@ def _excess(spans: Spans, junctions: list[Junction], i: Index, at: Array) -> Arr
     """
     out = np.zeros(len(i))
     motions = spans.motions
-    kind = np.array([junction.blend.kind if junction.blend else "" for junction in junctions])[
-        spans.before[i]
-    ]
-    value = np.array([junction.blend.value if junction.blend else 1.0 for junction in junctions])[
-        spans.before[i]
-    ]
+    kind = np.array([junction.blend.kind if junction.blend else "" for junction in junctions])[spans.before[i]]
+    value = np.array([junction.blend.value if junction.blend else 1.0 for junction in junctions])[spans.before[i]]
     rows = np.flatnonzero(~spans.programmed()[i] & (kind != "share"))
     if not len(rows):
         return out

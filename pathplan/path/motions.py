@@ -9,34 +9,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from pathplan.arm import Arm
-from pathplan.path.cartesian import CartesianPath, tool_of
+from pathplan.path.cartesian import CartesianPath
 from pathplan.path.choice import Choice, Routes
 from pathplan.path.geometry import NO_MOTION, Index, Segments
 from pathplan.path.joint import Array
 from pathplan.path.newton import joint_weights
 from pathplan.path.tracking import Tracks
 
-__all__ = ["Motions", "Reference", "motions_of", "tool_frames"]
-
-
-def tool_frames(path: CartesianPath) -> Array:
-    """(m, 4, 4) tool_from_own of each leg: from the leg's tool to the tool that the task's arm itself
-    carries.
-
-    The whole path is followed with one arm; a pose of another tool is first turned into the pose its own
-    tool then has.
-    """
-    own = path.task.arm.tool.flange_from_tool
-    frames: dict[str, Array] = {}
-    rows = []
-    for leg in path.legs:
-        name = leg.step.tool
-        if name not in frames:
-            tool = tool_of(path.task.arm, name)
-            same = tool is path.task.arm.tool
-            frames[name] = np.eye(4) if same else np.linalg.solve(tool.flange_from_tool, own)
-        rows.append(frames[name])
-    return np.array(rows)
+__all__ = ["Motions", "Reference", "motions_of"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -121,9 +101,7 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
     )
 
 
-def _reference(
-    path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes, segment: Index
-) -> Reference:
+def _reference(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes, segment: Index) -> Reference:
     legs = np.flatnonzero(segment >= 0)
     if not len(legs):
         return Reference(np.array([0.0, 1.0]), np.zeros((2, path.task.arm.n)), np.ones(1))

@@ -5,7 +5,8 @@ best branch.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from typing import TYPE_CHECKING, Any
+from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -13,15 +14,12 @@ from pathplan.arm import Arm
 from pathplan.arm.kinematics import smallest_singular_value, spatial_axes
 from pathplan.arm.structure import meeting_point
 from pathplan.errors import UnreachableError
-from pathplan.path.cartesian import CartesianPath, Leg
-from pathplan.path.geometry import Index
+from pathplan.path.cartesian import CartesianPath, Leg, tool_frames
+from pathplan.path.geometry import Index, Segments
 from pathplan.path.joint import Array
-from pathplan.path.states import LIMIT_SLACK, States, judged_rows
-from pathplan.path.tracking import Tracks
+from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, judged_rows
+from pathplan.path.tracking import Tracks, track, turns_between
 from pathplan.units import format_quantity, joint_dimension
-
-if TYPE_CHECKING:
-    from pathplan.path.choice import Routes
 
 __all__ = ["limit_text", "no_branch_follows", "no_state_asked", "place_text", "singular_kind", "singularity"]
 
@@ -99,80 +97,96 @@ def _words(label: Mapping[str, str]) -> str:
     return ", ".join(f"{part} {word}" for part, word in label.items()) or "the only branch"
 
 
-def no_branch_follows(
-    path: CartesianPath, leg: int, states: States, tracks: Tracks, ways: Routes, alive: Index
-) -> UnreachableError:
-    """The refusal of a leg that none of the states `alive` at its start can follow; the best of them is
-    described.
-    """
-    best: tuple[float, str, dict[str, Any]] | None = None
-    for state in alive:
-        found = _obstacle(path, leg, states, tracks, ways, int(state))
-        if best is None or found[0] > best[0]:
-            best = found
-    assert best is not None, "a leg is only judged from states that were reached"
-    share, reason, data = best
+def no_branch_follows(path: CartesianPath, leg: int, states: States, alive: Index) -> UnreachableError:
+    """The refusal of a leg that none of the states `alive` at its start can follow; the best is described."""
     step = path.legs[leg].step
+    outcomes = _outcomes(path, leg, states, alive)
+    best = max(outcomes, key=lambda outcome: outcome.share)
     who = "the only branch" if len(alive) == 1 else f"the best of {len(alive)} branches"
-    label = data.pop("label")
-    who += f" ({label})" if label else ""
+    who += f" ({best.label})" if best.label else ""
     text = (
-        f"{step.where}: no branch can follow this {step.motion}: {who} gets to {share * 100:.1f} % of it, "
-        f"{place_text(data['pose'])}, where {reason}"
+        f"{step.where}: no branch can follow this {step.motion}: {who} gets to {best.share * 100:.1f} % of it, "
+        f"{place_text(best.pose)}, where {best.reason}"
     )
-    return UnreachableError(text, data={"step": step.index, "share": share, **data})
+    data = {"step": step.index, "share": best.share, "pose": best.pose, "best": best.q, **best.more}
+    return UnreachableError(text, data=data)
 
 
-def _obstacle(
-    path: CartesianPath, leg: int, states: States, tracks: Tracks, ways: Routes, state: int
-) -> tuple[float, str, dict[str, Any]]:
-    """How far one state follows a leg (share), what stops it in words, and the numbers."""
+@dataclass(frozen=True, eq=False)
+class _Outcome:
+    """How far one branch follows a step, and what stops it."""
+
+    share: float
+    reason: str
+    pose: Array
+    q: Array
+    label: str = ""
+    more: Mapping[str, Any] = field(default_factory=dict)
+
+
+def _outcomes(path: CartesianPath, leg: int, states: States, alive: Index) -> list[_Outcome]:
+    """What becomes of each state on a leg, its branches tracked once more, this time to the bitter end."""
     arm, entry = path.task.arm, path.legs[leg]
     if entry.kind != "cartesian":
-        data = {"pose": entry.end, "best": states.q[state], "label": ""}
-        return 0.0, "no state at its target is left", data
-    k, row = entry.segment, int(ways.row[state])
-    slot = int(ways.slot[row])
-    data = {"best": states.q[state], "label": ""}
-    if slot < 0:
-        text, singular = singularity(arm, states.q[state])
-        return 0.0, f"it starts in {text}", {**data, "pose": entry.start, "singular": singular}
-    part = slice(int(tracks.first[k]), int(tracks.last[k]) + 1)
-    s, ok, reached = tracks.s[part], tracks.ok[part, slot], tracks.reached[part, slot]
-    q = tracks.q[part, slot] + ways.turns[row]
-    labels = arm.inverse_batch(entry.start[None]).labels if arm.structure != "general" else ()
-    data["label"] = _words(labels[slot]) if labels and labels[slot] else ""
-    length = float(path.segments.length[k])
+        reason = "the target has no state left that can be used"
+        return [_Outcome(0.0, reason, entry.end, states.q[state]) for state in alive]
+    frame = tool_frames(path)[[leg]]
+    segment = path.segments.take(np.array([entry.segment]))
+    tracks = track(arm, segment, frame, thorough=True)
+    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    labels = arm.inverse_batch(entry.start[None] @ frame).labels
+    outcomes = []
+    for state in alive:
+        q = states.q[state]
+        turns = turns_between(q - tracks.q[0], revolute)
+        starts = (np.abs(q - tracks.q[0] - turns) < SAME_STATE).all(axis=1) & tracks.reached[0]
+        if not starts.any():
+            text, singular = singularity(arm, q)
+            more = {"singular": singular}
+            outcomes.append(_Outcome(0.0, f"it starts in {text}", entry.start, q, more=more))
+            continue
+        slot = int(np.argmax(starts))
+        words = _words(labels[slot]) if slot < len(labels) and labels[slot] else ""
+        outcomes.append(_outcome(path, entry, segment, frame, tracks, slot, turns[slot], words))
+    return outcomes
 
-    def placed(at: float, configuration: Array, **more: Any) -> dict[str, Any]:
-        pose = path.segments.poses(np.array([k]), np.array([at]))[0]
-        return {**data, "pose": pose, "best": configuration, **more}
+
+def _outcome(
+    path: CartesianPath,
+    entry: Leg,
+    segment: Segments,
+    frame: Array,
+    tracks: Tracks,
+    slot: int,
+    turns: Array,
+    label: str,
+) -> _Outcome:
+    """What becomes of one track, counted from the turns its motion starts with."""
+    arm = path.task.arm
+    s, ok, reached, q = tracks.s, tracks.ok[:, slot], tracks.reached[:, slot], tracks.q[:, slot] + turns
+    length = float(segment.length[0])
+
+    def outcome(at: float, reason: str, configuration: Array, **more: Any) -> _Outcome:
+        pose = segment.poses(np.array([0]), np.array([at]))[0]
+        return _Outcome(at / length, reason, pose, configuration, label, more)
 
     bad = np.flatnonzero(~ok)
     stop = int(bad[0]) if len(bad) else len(s)
     crossing = _first_crossing(arm, s[:stop], q[:stop])
     if crossing is not None:
-        at, limit_row, side, configuration = crossing
-        limit = float(arm.limits.position[limit_row, side])
-        more = {"joint": arm.limits.names[limit_row], "limit": limit}
-        return at / length, limit_text(arm, limit_row, side), placed(at, configuration, **more)
+        at, row, side, configuration = crossing
+        limit = float(arm.limits.position[row, side])
+        return outcome(at, limit_text(arm, row, side), configuration, joint=arm.limits.names[row], limit=limit)
     if stop == len(s):
-        words = _words(entry.step.configuration) if entry.step.configuration else "the joint vector asked"
-        return 1.0, f"it does not arrive with {words}", placed(length, q[-1])
+        asked = entry.step.configuration
+        words = _words(asked) if asked else "the joint positions asked"
+        return outcome(length, f"it does not arrive with {words}", q[-1])
     before = max(stop - 1, 0)
     if reached[stop]:
-        text, singular = singularity(arm, q[stop if stop == 0 else _nearer(arm, q, before, stop)])
-        return (
-            float(s[stop]) / length,
-            f"it meets {text}",
-            placed(float(s[stop]), q[before], singular=singular),
-        )
-    at = _last_reached(path, k, slot, float(s[before]), float(s[stop]))
-    return (
-        at / length,
-        "the line leaves the reach of the arm".replace("line", entry.step.motion),
-        placed(at, q[before]),
-    )
+        text, singular = singularity(arm, q[_nearer(arm, q, before, stop)])
+        return outcome(float(s[stop]), f"it meets {text}", q[before], singular=singular)
+    at = _last_reached(arm, segment, frame, slot, float(s[before]), float(s[stop]))
+    return outcome(at, f"the {entry.step.motion} leaves the reach of the arm", q[before])
 
 
 def _nearer(arm: Arm, q: Array, one: int, other: int) -> int:
@@ -197,24 +211,19 @@ def _first_crossing(arm: Arm, s: Array, q: Array) -> tuple[float, int, int, Arra
     where = int(judged[row])
     if t == 0:
         return float(s[0]), where, int(side), q[0]
-    part = float(
-        np.clip(-beyond[t - 1, row, side] / (beyond[t, row, side] - beyond[t - 1, row, side]), 0.0, 1.0)
-    )
+    part = float(np.clip(-beyond[t - 1, row, side] / (beyond[t, row, side] - beyond[t - 1, row, side]), 0.0, 1.0))
     return float(s[t - 1] + part * (s[t] - s[t - 1])), where, int(side), q[t - 1] + part * (q[t] - q[t - 1])
 
 
-def _last_reached(path: CartesianPath, k: int, slot: int, inside: float, outside: float) -> float:
-    """s at which a segment leaves the reach of the arm, by bisection between two samples."""
-    if inside == outside:
+def _last_reached(arm: Arm, segment: Segments, frame: Array, slot: int, inside: float, outside: float) -> float:
+    """s at which a branch loses a segment, by bisection between two samples; a branch index must have a
+    meaning.
+    """
+    if arm.structure == "general":
         return inside
-    arm = path.task.arm
-    leg = next(leg for leg in path.legs if leg.segment == k)
-    from pathplan.path.cartesian import tool_of
-
-    swap = np.linalg.solve(tool_of(arm, leg.step.tool).flange_from_tool, arm.tool.flange_from_tool)
     for _ in range(30):
         middle = (inside + outside) / 2
-        pose = path.segments.poses(np.array([k]), np.array([middle])) @ swap
+        pose = segment.poses(np.array([0]), np.array([middle])) @ frame
         if arm.inverse_batch(pose).valid[0, slot]:
             inside = middle
         else:

@@ -43,11 +43,7 @@ def turn_about(axis: Array, angle: Array) -> Array:
     zero = np.zeros_like(x)
     cross = np.stack([zero, -z, y, z, zero, -x, -y, x, zero], axis=1).reshape(-1, 3, 3)
     half = np.sin(angle / 2.0)
-    return (
-        np.eye(3)
-        + np.sin(angle)[:, None, None] * cross
-        + 2.0 * (half * half)[:, None, None] * (cross @ cross)
-    )
+    return np.eye(3) + np.sin(angle)[:, None, None] * cross + 2.0 * (half * half)[:, None, None] * (cross @ cross)
 
 
 def exponential(vector: Array) -> Array:

@@ -14,9 +14,19 @@ from pathplan.arm import Arm
 from pathplan.path.geometry import Index
 from pathplan.path.joint import Array
 
-__all__ = ["LIMIT_SLACK", "States", "endless_joints", "expand", "judged_rows", "matching", "within_limits"]
+__all__ = [
+    "LIMIT_SLACK",
+    "SAME_STATE",
+    "States",
+    "endless_joints",
+    "expand",
+    "judged_rows",
+    "matching",
+    "within_limits",
+]
 
 LIMIT_SLACK = 1e-9  # rad or m beyond a position limit: the limit itself, rounded
+SAME_STATE = 1e-6  # rad or m: a track that starts or ends nearer than this to a state does so in it
 _TURN = 2.0 * np.pi
 
 
@@ -50,9 +60,7 @@ def judged_rows(arm: Arm) -> Index:
     on the finished path.
     """
     limits = arm.limits
-    judged = ~(limits.matrix[:, endless_joints(arm)] != 0).any(axis=1) & np.isfinite(limits.position).any(
-        axis=1
-    )
+    judged = ~(limits.matrix[:, endless_joints(arm)] != 0).any(axis=1) & np.isfinite(limits.position).any(axis=1)
     return np.flatnonzero(judged)
 
 
@@ -86,6 +94,4 @@ def expand(arm: Arm, target: Index, branch: Index, q: Array) -> tuple[Index, Ind
 
 def matching(labels: tuple[Mapping[str, str], ...], asked: Mapping[str, str]) -> NDArray[np.bool_]:
     """(B,) branches whose labels have everything asked."""
-    return np.array(
-        [all(label.get(key) == word for key, word in asked.items()) for label in labels], dtype=bool
-    )
+    return np.array([all(label.get(key) == word for key, word in asked.items()) for label in labels], dtype=bool)

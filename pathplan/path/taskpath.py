@@ -68,9 +68,7 @@ class Stretch:
         poses = np.full((len(at), 4, 4), np.nan)
         if known.any():
             rows = i[known]
-            jets = self.spans.tool_jets(
-                rows, np.minimum(at - self.span_start[place], self.spans.length[i])[known]
-            )
+            jets = self.spans.tool_jets(rows, np.minimum(at - self.span_start[place], self.spans.length[i])[known])
             poses[known] = poses_of(jets.position[0], jets.rotation)
         return poses, known
 

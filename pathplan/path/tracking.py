@@ -67,10 +67,14 @@ class Tracks:
         return np.logical_and.reduceat(self.ok, self.first, axis=0) if len(self.first) else self.ok[:0]
 
 
-def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
+def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool = False) -> Tracks:
     """Every branch along every segment. `tool_from_own` (K, 4, 4): base_from_tool @ this is the pose of
     the arm's own tool.
     """
+    if not len(segments):
+        none = np.zeros(0, dtype=np.intp)
+        no = np.zeros((0, 1), dtype=bool)
+        return Tracks(none, np.zeros(0), np.zeros((0, 1, arm.n)), no, no, none, none)
     count = np.maximum(np.ceil(segments.length / SPACING).astype(int), FEWEST)
     segment = np.repeat(np.arange(len(segments)), count + 1)
     first = np.concatenate([[0], np.cumsum(count + 1)[:-1]]).astype(np.intp)
@@ -90,7 +94,7 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
     for round_ in range(_ROUNDS + 1):
         jumps = _jumps(q, valid, segment, revolute)
         # A branch that fails elsewhere on the segment anyway is not worth more samples.
-        lives = np.logical_and.reduceat(useful, first, axis=0)[segment[:-1]] if len(first) else valid[:0]
+        lives = np.logical_and.reduceat(useful, first, axis=0)[segment[:-1]] | thorough
         split = np.flatnonzero((jumps & lives).any(axis=1))
         if not len(split) or round_ == _ROUNDS:
             break
@@ -109,9 +113,7 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array) -> Tracks:
     regular = _regular(arm, q, valid, looked_at)
     jumped = np.zeros_like(valid)
     jumped[1:] = jumps
-    return Tracks(
-        segment, s, _unwrapped(q, first, segment, revolute), valid & regular & ~jumped, valid, first, last
-    )
+    return Tracks(segment, s, _unwrapped(q, first, segment, revolute), valid & regular & ~jumped, valid, first, last)
 
 
 def _jumps(q: Array, valid: Mask, segment: Index, revolute: Mask) -> Mask:
@@ -149,8 +151,6 @@ def _regular(arm: Arm, q: Array, valid: Mask, looked_at: Mask) -> Mask:
 
 def _unwrapped(q: Array, first: Index, segment: Index, revolute: Mask) -> Array:
     """q made continuous along each segment by nearest turn, starting from the segment's first sample."""
-    if not len(q):
-        return q
     turns = np.zeros_like(q)
     turns[1:] = turns_between(np.diff(q, axis=0), revolute)
     turns[first] = 0.0
