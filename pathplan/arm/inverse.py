@@ -205,7 +205,8 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
         "angle_error": float(branches.angle_error[0, best]),
     }
     # A closed form with four axes serves position and turn exactly: what is left of the angle is tilt.
-    if arm.n < 6 and arm.closed_form is not None and (tilt := _tilt(arm, q, pose)):
+    if arm.n < 6 and arm.closed_form is not None and data["angle_error"] > TILT_TOLERANCE:
+        tilt = _tilt(arm, q, pose)
         return UnreachableError(
             f"{arm.name}: the pose is tilted {tilt}; {arm.name} serves {_served(arm)}; tolerance 0.001 deg",
             data=data,
@@ -230,19 +231,14 @@ def _tilt(arm: Arm, q: Array, pose: Array) -> str:
     skew = np.array(
         [relative[2, 1] - relative[1, 2], relative[0, 2] - relative[2, 0], relative[1, 0] - relative[0, 1]]
     )
-    sine, cosine = np.linalg.norm(skew) / 2.0, (np.trace(relative) - 1.0) / 2.0
-    if sine > 1e-9:
-        vector = skew / (2.0 * sine) * np.arctan2(sine, cosine)
-    else:  # a half turn: its axis is a column of (R + 1) / 2
-        columns = (relative + np.eye(3)) / 2.0
-        vector = np.pi * columns[:, np.argmax(np.diag(columns))]
-        vector = vector * (np.pi / max(float(np.linalg.norm(vector)), 1e-12))
-    parts = [
-        (abs(value), f"{format_quantity(abs(value), 'angle')} about {name}")
-        for name, value in zip("xyz", vector, strict=True)
-        if f"rotation about {name}" not in arm.serves and abs(value) > TILT_TOLERANCE / 2.0
-    ]
-    return " and ".join(text for _, text in sorted(parts, reverse=True))
+    sine, cosine = float(np.linalg.norm(skew)) / 2.0, (np.trace(relative) - 1.0) / 2.0
+    angle = float(np.arctan2(sine, cosine))
+    names = [name for name in "xyz" if f"rotation about {name}" not in arm.serves]
+    if angle > np.deg2rad(179.0):  # which axis it is about hangs on where the turning joint stands
+        return f"{format_quantity(angle, 'angle')} about {' or '.join(names)}"
+    vector = dict(zip("xyz", np.abs(skew) / (2.0 * sine) * angle, strict=True))
+    large = sorted((vector[name], name) for name in names if vector[name] > TILT_TOLERANCE / 2.0)
+    return " and ".join(f"{format_quantity(value, 'angle')} about {name}" for value, name in large[::-1])
 
 
 def _served(arm: Arm) -> str:

@@ -57,9 +57,10 @@ def rotation_about(axis: Array, rotation: Array) -> Array:
 def angle_about(axis: Array, start: Array, end: Array) -> Array:
     """SP1: angle (...) about `axis` that brings vectors `start` nearest to `end`; 0 where either lies along
     the axis."""
-    turned = cross(axis, start)
+    turned, end_turned = cross(axis, start), cross(axis, end)
     sine = turned[0] * end[0] + turned[1] * end[1] + turned[2] * end[2]
-    cosine = start[0] * end[0] + start[1] * end[1] + start[2] * end[2] - dot(axis, start) * dot(axis, end)
+    # start . end - (axis . start)(axis . end) would cancel for vectors that all but lie along the axis.
+    cosine = turned[0] * end_turned[0] + turned[1] * end_turned[1] + turned[2] * end_turned[2]
     return np.arctan2(sine, cosine)
 
 

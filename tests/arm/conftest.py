@@ -1,8 +1,10 @@
-"""The cast of arms that the tests of this folder draw from, and the referees built independently of our own code."""
+"""The cast of arms that the tests of this folder draw from, and the referees built independently of our
+own code.
+"""
 
 from __future__ import annotations
 
-from functools import lru_cache
+from functools import cache
 from pathlib import Path
 
 import numpy as np
@@ -30,15 +32,14 @@ def dh_arm(name: str, rows: list[DHRow], convention: str = "standard", kinds: st
 def oblique_six() -> Arm:
     """Six axes in no special position: general structure."""
     r = np.random.default_rng(11)
-    rows = [
-        DHRow(r.uniform(0.1, 0.5), alpha, r.uniform(0.1, 0.4), r.uniform(-1, 1))
-        for alpha in r.uniform(-2, 2, 6)
-    ]
+    rows = [DHRow(r.uniform(0.1, 0.5), alpha, r.uniform(0.1, 0.4), r.uniform(-1, 1)) for alpha in r.uniform(-2, 2, 6)]
     return dh_arm("oblique six", rows)
 
 
 def crooked_wrist() -> Arm:
-    """A spherical wrist on crooked ground: shoulder offset, axes turned about, wrist axes not square, base tilted."""
+    """A spherical wrist on crooked ground: shoulder offset, axes turned about, wrist axes not square,
+    base tilted.
+    """
     frame = translation(0.3, -0.2, 0.1) @ rot_x(0.4) @ rot_z(0.7)
     centre = np.array([0.15, 0.9, 0.2])
     axes = np.array([[0, 0.2, 1.0], [1, 0, 0], [-1, 0, 0], [0.1, 1, 0.2], [1, 0.3, 0.1], [0, 1, 0.3]])
@@ -72,10 +73,7 @@ def heavy_gantry() -> Arm:
     frame = translation(0.2, 0.1, 1.5) @ rot_x(0.5) @ rot_z(0.3)
     kinds = ["prismatic", "prismatic", "revolute", "prismatic"]
     axes = np.array([[1, 0.1, 0], [0, 1, 0], [0, 0.2, -1], [0, 0, 1.0]]) @ frame[:3, :3].T
-    origins = (
-        np.array([[0, 0, 0], [0.1, 0, 0], [0.2, 0.1, -0.3], [0.3, 0.1, -0.4]]) @ frame[:3, :3].T
-        + frame[:3, 3]
-    )
+    origins = np.array([[0, 0, 0], [0.1, 0, 0], [0.2, 0.1, -0.3], [0.3, 0.1, -0.4]]) @ frame[:3, :3].T + frame[:3, 3]
     links = tuple(
         Link(
             3.0 - 0.5 * i,
@@ -87,12 +85,8 @@ def heavy_gantry() -> Arm:
         )
         for i in range(4)
     )
-    joints = [
-        Joint(f"j{i}", kind, (-1.0, 1.0), 1.0, 1.0, 1.0, gear_ratio=20.0) for i, kind in enumerate(kinds)
-    ]
-    return Arm.from_axes(
-        "heavy gantry", joints, origins, axes, frame @ translation(0.3, 0.2, -0.5), links=links
-    )
+    joints = [Joint(f"j{i}", kind, (-1.0, 1.0), 1.0, 1.0, 1.0, gear_ratio=20.0) for i, kind in enumerate(kinds)]
+    return Arm.from_axes("heavy gantry", joints, origins, axes, frame @ translation(0.3, 0.2, -0.5), links=links)
 
 
 def crane_scara() -> Arm:
@@ -159,7 +153,7 @@ CAST = {
 }
 
 
-@lru_cache(maxsize=None)
+@cache
 def cast_member(name: str) -> Arm:
     return CAST[name]()
 
@@ -189,7 +183,9 @@ def random_configurations(arm: Arm, count: int, seed: int = 0) -> np.ndarray:
 
 @pytest.fixture
 def referee():
-    """A pinocchio model of an arm, built joint by joint from its transforms and axes: (model, data, tool frame)."""
+    """A pinocchio model of an arm, built joint by joint from its transforms and axes: (model, data, tool
+    frame).
+    """
     return pinocchio_model
 
 
@@ -201,9 +197,7 @@ def pinocchio_model(arm: Arm):
     parent = 0
     for i, item in enumerate(arm.joints):
         axis = np.array(arm.axes[i])
-        kind = (
-            pin.JointModelRevoluteUnaligned if item.kind == "revolute" else pin.JointModelPrismaticUnaligned
-        )
+        kind = pin.JointModelRevoluteUnaligned if item.kind == "revolute" else pin.JointModelPrismaticUnaligned
         placement = pin.SE3(np.array(arm.parent_from_joint[i]))
         parent = model.addJoint(parent, kind(axis), placement, item.name)
         if arm.links is not None:

@@ -1,4 +1,6 @@
-"""Forward kinematics, Jacobian and joint derivatives against pinocchio, roboticstoolbox and finite differences."""
+"""Forward kinematics, Jacobian and joint derivatives against pinocchio, roboticstoolbox and finite
+differences.
+"""
 
 import re
 import tomllib
@@ -34,9 +36,7 @@ def test_joint_frames_agree_with_pinocchio(arm, spread, referee):
     q = spread(arm, 1)[0]
     pin.forwardKinematics(model, data, q)
     for i, joint in enumerate(arm.joints):
-        np.testing.assert_allclose(
-            arm.base_from_joint(joint.name, q), data.oMi[i + 1].homogeneous, rtol=0, atol=1e-12
-        )
+        np.testing.assert_allclose(arm.base_from_joint(joint.name, q), data.oMi[i + 1].homogeneous, rtol=0, atol=1e-12)
 
 
 def toolbox_robot(name: str):
@@ -55,9 +55,7 @@ def toolbox_robot(name: str):
         else:
             links.append(rtb.PrismaticMDH(a=a, alpha=alpha, theta=theta, offset=d))
     flange = data["mechanical_interface"]
-    tool = SE3(*np.array(flange.get("xyz", [0, 0, 0])) / 1e3) * SE3.RPY(
-        flange.get("rpy", [0, 0, 0]), unit="deg"
-    )
+    tool = SE3(*np.array(flange.get("xyz", [0, 0, 0])) / 1e3) * SE3.RPY(flange.get("rpy", [0, 0, 0]), unit="deg")
     return rtb.DHRobot(links, tool=tool)
 
 
@@ -72,7 +70,9 @@ def test_arm_file_of_dh_rows_agrees_with_roboticstoolbox(name, cast, spread):
 
 
 def test_arm_file_of_axes_agrees_with_roboticstoolbox(cast, spread):
-    """loader4: its file states axes; here the same gantry as elementary transforms, typed in from the file."""
+    """loader4: its file states axes; here the same gantry as elementary transforms, typed in from the
+    file.
+    """
     from roboticstoolbox import ET
 
     ets = ET.tx(jindex=0) * ET.ty(jindex=1) * ET.tz(jindex=2) * ET.tx(0.12) * ET.Rz(jindex=3)
@@ -97,13 +97,12 @@ def test_any_leading_shape_and_the_borders_of_the_internal_chunks(cast, spread):
 
 
 def test_a_wrong_number_of_joint_values_is_refused(cast):
-    with pytest.raises(
-        errors.InputError, match=re.escape("expected 6 joint values in the last dimension, got 4")
-    ):
+    with pytest.raises(errors.InputError, match=re.escape("expected 6 joint values in the last dimension, got 4")):
         cast("glazer6").forward(np.zeros((3, 4)))
 
 
-# ---- joint derivatives -------------------------------------------------------------------------------------------
+# ---- joint derivatives
+# -------------------------------------------------------------------------------------------
 
 
 def rotation(axis: np.ndarray, angle: float) -> np.ndarray:
@@ -245,11 +244,14 @@ def test_twists_of_a_wrong_shape_are_refused(cast):
         joint_derivatives(cast("glazer6"), np.zeros((2, 6)), np.zeros((2, 6)))
 
 
-# ---- singular values ---------------------------------------------------------------------------------------------
+# ---- singular values
+# ---------------------------------------------------------------------------------------------
 
 
 def test_puma_singularities(cast):
-    """Wrist, elbow and shoulder conditions computed for the toolbox's DH model of the Puma 560 (a3 .0203, d4 .4318)."""
+    """Wrist, elbow and shoulder conditions computed for the toolbox's DH model of the Puma 560 (a3
+    .0203, d4 .4318).
+    """
     arm = cast("puma")
     elbow = np.arctan2(0.0203, 0.4318) + np.pi / 2  # cos(q3 - atan2(a3, d4)) = 0
     assert elbow == pytest.approx(1.6178, abs=1e-4)
@@ -278,9 +280,7 @@ def test_singular_value_has_no_unit(cast, spread):
     tool = np.array(arm.tool.flange_from_tool)
     for array in (fixed, flange, tool):
         array[..., :3, 3] *= 2.0
-    large = replace(
-        arm, parent_from_joint=fixed, tip_from_flange=flange, tool=replace(arm.tool, flange_from_tool=tool)
-    )
+    large = replace(arm, parent_from_joint=fixed, tip_from_flange=flange, tool=replace(arm.tool, flange_from_tool=tool))
     q = spread(arm, 50)
     assert large.length == pytest.approx(2 * arm.length)
     np.testing.assert_allclose(smallest_singular_value(large, q), smallest_singular_value(arm, q), atol=1e-13)
