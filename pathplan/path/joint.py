@@ -140,20 +140,37 @@ class JointPath:
 
     def derivatives(self, s: Array, highest: int = 3, side: Literal["left", "right"] = "right") -> list[Array]:
         """q and its derivatives up to `highest` at s (N,): a list of (N, n)."""
-        piece, local = self.locate(s, side)
-        return [self.at(piece, local, order) for order in range(highest + 1)]
+        return self.all_at(*self.locate(s, side), highest)
 
     def at(self, piece: NDArray[np.intp], local: Array, derivative: int = 0) -> Array:
         """(N, n) from piece indices (N,) and local offsets (N,): no search, so the caller decides the side."""
-        degree = len(self._coefficients) - 1
-        value = np.zeros((len(piece), self.joints))
-        x = local[:, None]
-        for k in range(degree - derivative + 1):
-            power = degree - k
-            factor = float(np.prod(np.arange(power - derivative + 1, power + 1))) if derivative else 1.0
-            value *= x
-            value += factor * self._coefficients[k][piece]
-        return value
+        return _horner(self._coefficients[:, piece], local, derivative)
+
+    def all_at(self, piece: NDArray[np.intp], local: Array, highest: int = 3) -> list[Array]:
+        """q and its derivatives up to `highest`, each (N, n), like `at`."""
+        coefficients = self._coefficients[:, piece]
+        return [_horner(coefficients, local, order) for order in range(highest + 1)]
+
+
+def _horner(coefficients: Array, local: Array, derivative: int) -> Array:
+    """Value (N, n) of a derivative of N polynomials (k+1, N, n), highest power first, at local (N,)."""
+    degree = len(coefficients) - 1
+    if derivative > degree:
+        return np.zeros(coefficients.shape[1:])
+    x = local[:, None]
+    value = _falling(degree, derivative) * coefficients[0]
+    for k in range(1, degree - derivative + 1):
+        value *= x
+        value += _falling(degree - k, derivative) * coefficients[k]
+    return value
+
+
+def _falling(power: int, derivative: int) -> float:
+    """power (power - 1) ... over `derivative` factors: what differentiating x^power brings down."""
+    product = 1.0
+    for i in range(derivative):
+        product *= power - i
+    return product
 
 
 def _check_pieces(breaks: Array, coefficients: Array) -> None:
@@ -168,11 +185,11 @@ def _check_pieces(breaks: Array, coefficients: Array) -> None:
     if not np.all(width > 0):
         raise InputError("joint path: expected increasing breaks")
     for order in range(3):
-        left = _end_values(coefficients[:, :-1], width[:-1], order)
-        right = _end_values(coefficients[:, 1:], np.zeros(len(width) - 1), order)
+        left = _horner(coefficients[:, :-1], width[:-1], order)
+        right = _horner(coefficients[:, 1:], np.zeros(len(width) - 1), order)
         if not len(left):
             break
-        scale = np.abs(_end_values(coefficients, width / 2, order)).max() + np.abs(left).max() + 1.0
+        scale = np.abs(_horner(coefficients, width / 2, order)).max() + np.abs(left).max() + 1.0
         jump = np.abs(left - right).max(axis=1)
         if jump.max() > _SMOOTH * scale:
             at = int(np.argmax(jump))
@@ -181,13 +198,3 @@ def _check_pieces(breaks: Array, coefficients: Array) -> None:
                 f"joint path: expected a path that is C2 or smoother, but its {what} jumps by {jump[at]:.3g} "
                 f"at parameter {breaks[at + 1]:.6g}"
             )
-
-
-def _end_values(coefficients: Array, local: Array, order: int) -> Array:
-    degree = len(coefficients) - 1
-    value = np.zeros(coefficients.shape[1:])
-    for k in range(degree - order + 1):
-        power = degree - k
-        factor = float(np.prod(np.arange(power - order + 1, power + 1))) if order else 1.0
-        value = value * local[:, None] + factor * coefficients[k]
-    return value

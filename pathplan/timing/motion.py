@@ -44,7 +44,7 @@ class Motion:
     def rows(self, piece: NDArray[np.intp], s: Array, highest: int = 3) -> list[Array]:
         """Derivatives 1..highest of the limited rows by s, each (N, R); `piece` says which side of a break."""
         local = s - self.path.breaks[piece]
-        return [self.path.at(piece, local, order) @ self.matrix.T for order in range(1, highest + 1)]
+        return [value @ self.matrix.T for value in self.path.all_at(piece, local, highest)[1:]]
 
     def tool_speed_cap(self, s: Array) -> Array:
         """(N,) the lowest speed cap at each s, inf where there is none."""
@@ -59,7 +59,7 @@ class Motion:
         if self.tool is None:
             raise ValueError("motion has caps on the tool but no way to compute the tool's motion")
         local = s - self.path.breaks[piece]
-        return self.tool(*(self.path.at(piece, local, order) for order in range(3)))
+        return self.tool(*self.path.all_at(piece, local, 2))
 
     @property
     def capped(self) -> bool:

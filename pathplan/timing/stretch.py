@@ -113,7 +113,7 @@ class StretchTiming:
         t3 = s3 * rate[0] ** 3 + 3 * s2 * rate[0] * rate[1] + s1 * rate[2]
         path, piece = self.motion.path, self._piece[cell]
         local = s - path.breaks[piece]
-        q = [path.at(piece, local, order) for order in range(highest + 1)]
+        q = path.all_at(piece, local, highest)
         out = q[:1]
         if highest >= 1:
             out.append(q[1] * t1[:, None])
