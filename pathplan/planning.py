@@ -139,7 +139,10 @@ class Plan:
         in_parts(self.parts, ticks, visit)
         return JointTable(
             np.asarray(tick_times(ticks, self.task.cycle)),
-            *columns,
+            columns[0],
+            columns[1],
+            columns[2],
+            columns[3],
             torque=torque,
             step=step,
             pose=pose,
@@ -175,10 +178,10 @@ class Plan:
         for first in range(0, part.last - part.first + 1, _CHUNK):
             local = (np.arange(first, min(first + _CHUNK, part.last - part.first + 1)) + shift) * cycle
             local = local[local <= part.timing.duration]
-            rows = evaluate(part, local, len(self.task.arm.joints))
+            rows = evaluate(part, np.asarray(local, dtype=np.float64), len(self.task.arm.joints))
             programmed, known = part.stretch.programmed(rows.s)
             actual = part.stretch.arm.forward(rows.position)
-            times = part.first * cycle + local
+            times = np.asarray(part.first * cycle + local, dtype=np.float64)
             worst = worse_deviation(worst, path_deviation(actual, programmed, known, times, rows.step))
         return worst
 

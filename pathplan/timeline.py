@@ -26,7 +26,7 @@ _SAME = 1e-9  # of a cycle: an end this little after a tick is on it
 
 @dataclass(frozen=True, eq=False)
 class Part:
-    """A stretch with its timing, or a wait, on ticks `first` to `last` (the row on `first` belongs to the part before)."""
+    """A stretch with its timing, or a wait, from tick `first` to `last`; the row on `first` is of the part before."""
 
     first: int
     last: int
@@ -114,9 +114,9 @@ def evaluate(part: Part, local: Array, joints: int) -> Rows:
     """A part at local times (N,) in s; before its start and after its end it rests."""
     if part.stretch is None or part.timing is None:
         assert part.wait is not None
-        still = np.zeros((3, len(local), joints))
-        position = np.broadcast_to(part.rest, (len(local), joints)).copy()
-        return Rows(position, *still, np.full(len(local), np.nan), np.full(len(local), part.wait.step, dtype=np.int64))
+        still = np.zeros((len(local), joints))
+        step = np.full(len(local), part.wait.step, dtype=np.int64)
+        return Rows(still + part.rest, still, still, still, np.full(len(local), np.nan), step)
     cell, u = part.timing.locate(local)
     values = part.timing.at(cell, u)
     over = local >= part.timing.duration
@@ -125,7 +125,7 @@ def evaluate(part: Part, local: Array, joints: int) -> Rows:
         derivative[over | (local < 0)] = 0.0
     s = part.timing.place(cell, u)
     s[over] = part.stretch.path.length
-    return Rows(*values, s, step_at(part.stretch, s))
+    return Rows(values[0], values[1], values[2], values[3], s, step_at(part.stretch, s))
 
 
 def step_at(stretch: Stretch, s: Array) -> Integers:

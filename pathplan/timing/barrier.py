@@ -24,6 +24,11 @@ _BOUNDARY = 0.98  # share of the way to the nearest wall that a step may go
 _ROUND_OFF = 1e-12  # relative: a decrease smaller than this can't be told from rounding
 
 
+def sum_by(owner: NDArray[np.intp], values: Array, count: int) -> Array:
+    """(count,) sums of values (N,) by the group that `owner` (N,) says."""
+    return np.asarray(np.bincount(owner, values, count), dtype=np.float64)
+
+
 class BarrierProblem(Protocol[State]):
     """What `follow_central_path` needs: S independent problems laid end to end in one vector of unknowns."""
 

@@ -25,7 +25,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.timing.barrier import follow_central_path
+from pathplan.timing.barrier import follow_central_path, sum_by
 from pathplan.timing.coarse import CoarseTiming, coarse_timing, speed_wall, tool_wall
 from pathplan.timing.motion import Motion
 
@@ -106,8 +106,8 @@ class _Weak:
         self.at_left, self.at_right = np.zeros((2, widest, cells))  # what b of a cell adds to the rows of its nodes
         self.low, self.high = -np.ones((widest, nodes)), np.ones((widest, nodes))
         self.wall = np.empty(cells)
-        self.node_width = np.bincount(self.left, self.h / 2, nodes) + np.bincount(self.right, self.h / 2, nodes)
-        total = np.bincount(self.owner, self.h, self.count)
+        self.node_width = sum_by(self.left, self.h / 2, nodes) + sum_by(self.right, self.h / 2, nodes)
+        total = sum_by(self.owner, self.h, self.count)
         self.share, self.node_share = self.h / total[self.owner], self.node_width / total[self.node_owner]
         at = 0
         for k, mesh in enumerate(meshes):
@@ -126,7 +126,7 @@ class _Weak:
         self.gap = 2.0 * widest + 1.0
 
     def durations(self, b: Array) -> Array:
-        return np.bincount(self.owner, self.h / np.sqrt(b), self.count)
+        return sum_by(self.owner, self.h / np.sqrt(b), self.count)
 
     def rows(self, b: Array) -> Array:
         out = np.zeros_like(self.low)
@@ -153,7 +153,7 @@ class _Weak:
         with np.errstate(invalid="ignore", divide="ignore"):
             cost = np.where(bad, 0.0, self.h / np.sqrt(state.b) - mu[self.owner] * self.share * np.log(under))
             logs = np.where(bad_node, 0.0, self.node_share * np.log(slack.prod(axis=0)))
-        total = np.bincount(self.owner, cost, self.count) - mu * np.bincount(self.node_owner, logs, self.count)
+        total = sum_by(self.owner, cost, self.count) - mu * sum_by(self.node_owner, logs, self.count)
         total[self.owner[bad]] = np.inf
         total[self.node_owner[bad_node]] = np.inf
         return total
@@ -175,7 +175,7 @@ class _Weak:
         shared = (bend[:, self.left[1:]] * self.at_right[:, :-1] * self.at_left[:, 1:]).sum(axis=0)
         band[0, 1:] = np.where(neighbours, shared, 0.0)
         step = -solveh_banded(band, gradient, check_finite=False)
-        return step, -np.bincount(self.owner, gradient * step, self.count)
+        return step, -sum_by(self.owner, gradient * step, self.count)
 
     def reach(self, state: _State, step: Array) -> Array:
         rows = self.rows(step)

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.timing.barrier import follow_central_path
+from pathplan.timing.barrier import follow_central_path, sum_by
 from pathplan.timing.motion import Motion
 
 Array = NDArray[np.float64]
@@ -153,7 +153,7 @@ class _Coarse:
         self.rows_per_length = 2.0 * self.coefficients.shape[3] + 1.0
 
     def per_stretch_cells(self, values: Array) -> Array:
-        return np.bincount(self.cell_owner, values, self.count)
+        return sum_by(self.cell_owner, values, self.count)
 
     def per_stretch(self, b: Array) -> Array:
         root = np.sqrt(b)
@@ -184,7 +184,7 @@ class _Coarse:
             node_logs = np.log(under) * self.node_weight
             time = 2 * self.h / (state.root[self.left] + state.root[self.right])
         total = self.per_stretch_cells(np.where(bad, 0.0, time - mu[self.cell_owner] * logs))
-        total -= np.bincount(self.owner, np.where(bad_node, 0.0, mu[self.owner] * node_logs), self.count)
+        total -= sum_by(self.owner, np.where(bad_node, 0.0, mu[self.owner] * node_logs), self.count)
         total[self.cell_owner[bad]] = np.inf
         total[self.owner[bad_node]] = np.inf
         return total
@@ -199,8 +199,8 @@ class _Coarse:
         slope, bend = m * (above - below), m * (above * above + below * below)
         c = self.coefficients
         for k, end in enumerate((self.left, self.right)):
-            gradient += np.bincount(end, (slope * c[k]).sum(axis=(1, 2)), len(b))
-            diagonal += np.bincount(end, (bend * c[k] * c[k]).sum(axis=(1, 2)), len(b))
+            gradient += sum_by(end, (slope * c[k]).sum(axis=(1, 2)), len(b))
+            diagonal += sum_by(end, (bend * c[k] * c[k]).sum(axis=(1, 2)), len(b))
         coupling += (bend * c[0] * c[1]).sum(axis=(1, 2))
         under = 1 / (self.wall - b)
         gradient += mu[self.owner] * self.node_weight * under
@@ -212,7 +212,7 @@ class _Coarse:
         band[1] = diagonal
         band[0, self.right] = coupling
         step = -solveh_banded(band, gradient, check_finite=False)
-        return step, -np.bincount(self.owner, gradient * step, self.count)
+        return step, -sum_by(self.owner, gradient * step, self.count)
 
     def reach(self, state: _State, step: Array) -> Array:
         rows = self.rows(step)
@@ -244,17 +244,17 @@ def cell_cost(
     total = x + y
     first, second = -2 * h / total**2, 4 * h / total**3
     x, y = np.where(x > 0, x, 1.0), np.where(y > 0, y, 1.0)
-    gradient = np.bincount(left, first / (2 * x), size) + np.bincount(right, first / (2 * y), size)
-    diagonal = np.bincount(left, second / (4 * x * x) - first / (4 * x**3), size)
-    diagonal += np.bincount(right, second / (4 * y * y) - first / (4 * y**3), size)
+    gradient = sum_by(left, first / (2 * x), size) + sum_by(right, first / (2 * y), size)
+    diagonal = sum_by(left, second / (4 * x * x) - first / (4 * x**3), size)
+    diagonal += sum_by(right, second / (4 * y * y) - first / (4 * y**3), size)
     return gradient, diagonal, second / (4 * x * y)
 
 
 def _stack(parts: list[Array], axis: int, fill: float = 0.0) -> Array:
     """Concatenate along axis, padding the last axis to the widest (stretches may have different row counts)."""
     widest = max(p.shape[-1] for p in parts)
-    padded = [
-        np.concatenate([p, np.full((*p.shape[:-1], widest - p.shape[-1]), fill)], axis=-1) if p.shape[-1] < widest else p
-        for p in parts
-    ]
+    padded = []
+    for part in parts:
+        extra = np.full((*part.shape[:-1], widest - part.shape[-1]), fill)
+        padded.append(np.concatenate([part, extra], axis=-1))
     return np.concatenate(padded, axis=axis)

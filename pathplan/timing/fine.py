@@ -15,6 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.timing.barrier import sum_by
 from pathplan.timing.mesh import GAUSS_LOBATTO, LOBATTO_WEIGHTS, Mesh, Rows, hermite, joined, rows_at
 
 Array = NDArray[np.float64]
@@ -58,7 +59,7 @@ class FineProblem:
 
     def per_stretch(self, values: Array) -> Array:
         """Sum of (cells,) by stretch."""
-        return np.bincount(self.cell_owner, values, self.count)
+        return sum_by(self.cell_owner, values, self.count)
 
     def durations(self, x: Array) -> Array:
         """(S,) duration of every stretch by the collocation quadrature."""
@@ -138,7 +139,7 @@ class FineProblem:
             power = i % 2 + j % 2
             band[3 - (j - i), self.first + j] += entry if power == 0 else entry * self.stretch**power
         step = -solveh_banded(band, total, check_finite=False)
-        return step, -np.bincount(self.owner, total * step, self.count)
+        return step, -sum_by(self.owner, total * step, self.count)
 
     def _local(self, state: _State, m: Array) -> tuple[Array, Array]:
         """Gradient (3, K, cells) by b, b_u, b_uu and the six second derivatives (6, K, cells) at every point."""
@@ -223,7 +224,7 @@ def apply_rows(rows: Rows, b: Array) -> tuple[Array, Array]:
 
 
 def limit_shares(rows: Rows, b: Array) -> tuple[Array, Array, Array, Array]:
-    """Shares used (1 = at the limit): velocity squared (K, cells), acceleration, jerk (R, K, cells), tool (K, cells)."""
+    """Shares (1 = at the limit): velocity squared (K, cells), acceleration, jerk (R, K, cells), tool (K, cells)."""
     acceleration, jerk = apply_rows(rows, b)
     acceleration = np.maximum(acceleration / rows.acceleration_range[0], acceleration / rows.acceleration_range[1])
     jerk = np.maximum(jerk / rows.jerk_range[0], jerk / rows.jerk_range[1]) * np.sqrt(b[0])

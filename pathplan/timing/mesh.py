@@ -134,9 +134,9 @@ def _tool_rows(
     c1, c2, top = s1[capped], s2[capped], cap[capped]
     rows[0][:, capped] = (x2.T * c1**2 + x1.T * c2) / top
     rows[1][:, capped] = x1.T * c1 / (2 * top)
-    rows = rows.reshape(2, 3, points, len(h))
-    rows[1] /= h
-    return rows
+    by_cell = rows.reshape(2, 3, points, len(h))
+    by_cell[1] /= h
+    return by_cell
 
 
 def joined(parts: Sequence[Rows]) -> Rows:

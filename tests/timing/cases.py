@@ -26,7 +26,8 @@ def straight(distance, velocity, acceleration, jerk) -> Case:
     distance = np.atleast_1d(np.asarray(distance, dtype=float))
     length = float(np.linalg.norm(distance))
     path = JointPath.from_pieces([0.0, length], np.stack([distance / length, 0 * distance])[:, None, :])
-    return Case(path, *(np.broadcast_to(np.asarray(x, dtype=float), distance.shape) for x in (velocity, acceleration, jerk)))
+    limits = (np.broadcast_to(np.asarray(x, dtype=float), distance.shape) for x in (velocity, acceleration, jerk))
+    return Case(path, *limits)
 
 
 def wavy(seed: int, points: int, joints: int = 6) -> Case:
