@@ -98,9 +98,7 @@ class Arm:
         for name, shape in shapes.items():
             put(name, read_only(getattr(self, name)))
             if getattr(self, name).shape != shape:
-                raise InputError(
-                    f"{self.name}: {name}: expected shape {shape}, got {getattr(self, name).shape}"
-                )
+                raise InputError(f"{self.name}: {name}: expected shape {shape}, got {getattr(self, name).shape}")
             if not np.isfinite(getattr(self, name)).all():
                 raise InputError(f"{self.name}: {name}: expected finite numbers")
         if np.abs(np.linalg.norm(self.axes, axis=1) - 1.0).max() > 1e-9:
@@ -115,9 +113,7 @@ class Arm:
         put("positions", MappingProxyType({key: read_only(value) for key, value in positions.items()}))
         for key, value in self.positions.items():
             if np.shape(value) != (n,):
-                raise InputError(
-                    f"{self.name}: positions.{key}: expected {n} joint values, got {np.size(value)}"
-                )
+                raise InputError(f"{self.name}: positions.{key}: expected {n} joint values, got {np.size(value)}")
         for name in ("tools", "payloads", "sources"):
             put(name, MappingProxyType(dict(getattr(self, name))))
         if self.limits is None:

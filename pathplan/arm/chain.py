@@ -72,9 +72,7 @@ def chain_from_dh(
     fixed, joint_from_link = np.empty((n, 4, 4)), np.empty((n, 4, 4))
     if convention == "modified":
         for i, row in enumerate(rows):
-            fixed[i] = (
-                rot_x(row.alpha) @ translation(row.a, 0, 0) @ rot_z(row.theta) @ translation(0, 0, row.d)
-            )
+            fixed[i] = rot_x(row.alpha) @ translation(row.a, 0, 0) @ rot_z(row.theta) @ translation(0, 0, row.d)
             joint_from_link[i] = np.eye(4)
         tip_from_last = np.eye(4)
     else:
@@ -92,9 +90,7 @@ def chain_from_axes(origins: Any, axes: Any, base_from_flange: Any) -> tuple[Arr
     0."""
     origins, axes = np.asarray(origins, dtype=float), np.asarray(axes, dtype=float)
     if axes.ndim != 2 or axes.shape[1] != 3 or origins.shape != axes.shape:
-        raise InputError(
-            f"expected origins and axes of one shape (n, 3), got {origins.shape} and {axes.shape}"
-        )
+        raise InputError(f"expected origins and axes of one shape (n, 3), got {origins.shape} and {axes.shape}")
     lengths = np.linalg.norm(axes, axis=1)
     if not (lengths > 1e-12).all():
         raise InputError("expected axes that are not zero")

@@ -132,9 +132,7 @@ def spherical_wrist(form: ClosedForm, rotation: Array, point: Array) -> Array:
     middle_5, half_5 = _bend_of_wrist(form, pointing)
     # Positive is sin q5 > 0, q5 counted from the straight wrist nearest to its zero.
     flipped = round(middle_5 / np.pi) % 2 == 1
-    q5 = (
-        middle_5 + (np.array([-1.0, 1.0]) if flipped else np.array([1.0, -1.0]))[:, None] * half_5[:, :, None]
-    )
+    q5 = middle_5 + (np.array([-1.0, 1.0]) if flipped else np.array([1.0, -1.0]))[:, None] * half_5[:, :, None]
     bent = rotate(a5, q5, np.broadcast_to(a6[:, None, None, None, None], (3, *q5.shape)))
     pointing = np.broadcast_to(pointing[:, :, :, None], (3, *q5.shape))
     q4 = angle_about(a4, bent, pointing)

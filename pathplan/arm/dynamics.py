@@ -34,9 +34,7 @@ def torque(arm: Arm, q: Any, qd: Any, qdd: Any) -> Array:
     rows = np.shape(arrays[0])[0] if arrays[0].ndim == 2 else -1
     for name, value in zip(("q", "qd", "qdd"), arrays, strict=True):
         if value.shape != (rows, arm.n):
-            raise InputError(
-                f"{name}: expected shape (N, {arm.n}), the same N for q, qd and qdd, got {value.shape}"
-            )
+            raise InputError(f"{name}: expected shape (N, {arm.n}), the same N for q, qd and qdd, got {value.shape}")
         if not np.isfinite(value).all():
             raise InputError(f"{name}: expected finite numbers, got NaN or infinity")
     if rows == 0:
@@ -58,11 +56,7 @@ def build_rigid_body(arm: Arm) -> tuple[Any, bool]:
     from roboticstoolbox import RevoluteMDH
 
     front = arm.joints[0].kind == "prismatic"
-    lead = (
-        [RevoluteMDH(m=0.0, r=np.zeros(3), I=np.zeros(6), Jm=0.0, B=0.0, Tc=[0.0, 0.0], G=1.0)]
-        if front
-        else []
-    )
+    lead = [RevoluteMDH(m=0.0, r=np.zeros(3), I=np.zeros(6), Jm=0.0, B=0.0, Tc=[0.0, 0.0], G=1.0)] if front else []
     return _robot(arm, lead), front
 
 

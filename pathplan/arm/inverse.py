@@ -32,9 +32,7 @@ __all__ = [
 
 POSITION_TOLERANCE = 1e-9  # m
 ANGLE_TOLERANCE = 1e-9  # rad
-TILT_TOLERANCE = np.deg2rad(
-    0.001
-)  # rad: of the components that an arm with fewer than six axes does not serve
+TILT_TOLERANCE = np.deg2rad(0.001)  # rad: of the components that an arm with fewer than six axes does not serve
 LIMIT_TOLERANCE = 1e-10  # rad or m: an answer this far beyond a position limit is the limit, rounded
 SAME = 1e-7  # rad or m: answers closer than this are one (where two branches meet they differ by sqrt(eps))
 CHUNK = 512  # poses solved at a time, so that the working arrays stay in cache
@@ -47,9 +45,7 @@ class Branches:
 
     q: Array  # (N, B, n) rad and m, revolute joints in (-pi, pi]; the nearest answer where not valid
     valid: Any  # (N, B) bool: the tool stands at the pose, position limits left aside
-    labels: tuple[
-        Mapping[str, str], ...
-    ]  # of length B: {"shoulder": "left", "elbow": "up", "wrist": "positive"}
+    labels: tuple[Mapping[str, str], ...]  # of length B: {"shoulder": "left", "elbow": "up", "wrist": "positive"}
     position_error: Array  # (N, B) m, measured through the forward kinematics
     angle_error: Array  # (N, B) rad
 
@@ -57,18 +53,18 @@ class Branches:
 def inverse_batch(arm: Arm, poses: Any) -> Branches:
     """All branches for tool poses base_from_tool (N, 4, 4), rigid transforms; position limits are left aside.
 
-    Closed form for a gantry (one branch), a SCARA (2) and a spherical wrist (8); other arms by seeded
-    numeric search (16 slots without labels, some tens of milliseconds a pose; a slot without an answer has
-    infinite errors). What the labels mean ("up" is the side of axis 1 that opposes gravity):
-    - shoulder left or right: facing from axis 1 to the wrist centre, the side on which axis 2 carries the
-    arm; where
-      it is not set off, the side to which axis 2 points (a right-handed axis 2 that lowers the arm points
-      left);
+    Closed form for a gantry (one branch), a SCARA (2) and a spherical wrist (8); other arms by seeded numeric search
+    (16 slots without labels, some tens of milliseconds a pose; a slot without an answer has infinite errors). Where a
+    pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at 0. What the labels mean, "up" being the side of
+    axis 1 that opposes gravity:
+
+    - shoulder left or right: facing from axis 1 to the wrist centre, the side to which the arm is set off along
+      axis 2; where it is not set off, the side to which axis 2 points (left if a positive joint 2 lowers the arm);
     - elbow up or down: axis 3 above or below the line from axis 2 to the wrist centre;
     - wrist positive or negative: sign of sin q5, q5 counted from the straight wrist nearest to its zero;
     - SCARA, elbow left or right: facing from axis 1 to the last revolute axis.
-    Where a pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at 0. Raises InputError for a
-    wrong shape.
+
+    Raises InputError for a wrong shape.
     """
     poses = np.asarray(poses, dtype=float)
     if poses.ndim != 3 or poses.shape[1:] != (4, 4):
@@ -120,9 +116,7 @@ def rigid_pose(pose: Any) -> Array:
         raise InputError(f"pose: expected the last row 0 0 0 1, got {' '.join(f'{x:g}' for x in matrix[3])}")
     left, size, right = np.linalg.svd(matrix[:3, :3])
     if np.abs(size - 1.0).max() > 1e-6:
-        raise InputError(
-            "pose: expected a rotation, its columns are not unit length and square to each other"
-        )
+        raise InputError("pose: expected a rotation, its columns are not unit length and square to each other")
     if np.linalg.det(left @ right) < 0:
         raise InputError("pose: expected a right-handed rotation, got a mirror image")
     matrix[:3, :3] = left @ right
@@ -160,18 +154,10 @@ def _turns(arm: Arm, q: Array) -> list[Array]:
             last = np.floor((high + LIMIT_TOLERANCE - value) / (2 * np.pi))
             turns = [value + 2 * np.pi * k for k in np.arange(first, last + 1)]
         else:  # limited on one side only: the turn nearest to the limit, or the answer itself
-            k = (
-                np.ceil((low - value) / (2 * np.pi))
-                if low > value
-                else np.floor((high - value) / (2 * np.pi))
-            )
+            k = np.ceil((low - value) / (2 * np.pi)) if low > value else np.floor((high - value) / (2 * np.pi))
             turns = [value if low <= value <= high else value + 2 * np.pi * k]
         choices.append(
-            [
-                float(np.clip(t, low, high))
-                for t in turns
-                if low - LIMIT_TOLERANCE <= t <= high + LIMIT_TOLERANCE
-            ]
+            [float(np.clip(t, low, high)) for t in turns if low - LIMIT_TOLERANCE <= t <= high + LIMIT_TOLERANCE]
         )
     rows = arm.limits
     answers = [np.array(choice) for choice in product(*choices)]
@@ -216,9 +202,7 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
         off.append(format_quantity(data["position_error"], "length"))
     if data["angle_error"] > (ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE):
         off.append(format_quantity(data["angle_error"], "angle"))
-    why = (
-        f" (an arm with {arm.n} axes can't serve every pose)" if arm.n < 6 and arm.closed_form is None else ""
-    )
+    why = f" (an arm with {arm.n} axes can't serve every pose)" if arm.n < 6 and arm.closed_form is None else ""
     return UnreachableError(
         f"{arm.name}: the pose is out of reach{why}: the nearest answer is off by {' and '.join(off)}",
         data=data,
@@ -228,9 +212,7 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
 def _tilt(arm: Arm, q: Array, pose: Array) -> str:
     """The part of the angle error about base axes that the arm does not serve, in words."""
     relative = pose[:3, :3] @ forward(arm, q)[:3, :3].T
-    skew = np.array(
-        [relative[2, 1] - relative[1, 2], relative[0, 2] - relative[2, 0], relative[1, 0] - relative[0, 1]]
-    )
+    skew = np.array([relative[2, 1] - relative[1, 2], relative[0, 2] - relative[2, 0], relative[1, 0] - relative[0, 1]])
     sine, cosine = float(np.linalg.norm(skew)) / 2.0, (np.trace(relative) - 1.0) / 2.0
     angle = float(np.arctan2(sine, cosine))
     names = [name for name in "xyz" if f"rotation about {name}" not in arm.serves]
@@ -254,9 +236,7 @@ def _excluded(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:
     misses = []
     for q, valid, label in zip(branches.q[0], branches.valid[0], branches.labels, strict=True):
         if valid:
-            misses.append(
-                (*_worst_miss(arm, q), ", ".join(f"{key} {word}" for key, word in label.items()), q)
-            )
+            misses.append((*_worst_miss(arm, q), ", ".join(f"{key} {word}" for key, word in label.items()), q))
     misses.sort(key=lambda miss: miss[0])
     beyond, joint, text, _, q = misses[0]
     if len(misses) == 1:

@@ -174,9 +174,7 @@ def joint_frame(arm: Arm, joint: int, q: Array) -> Array:
     while arm.parents[lineage[0]] >= 0:
         lineage.insert(0, arm.parents[lineage[0]])
     for i in lineage:
-        pose = (
-            pose @ arm.parent_from_joint[i] @ joint_motion(arm.joints[i].kind, arm.axes[i], float(rows[0, i]))
-        )
+        pose = pose @ arm.parent_from_joint[i] @ joint_motion(arm.joints[i].kind, arm.axes[i], float(rows[0, i]))
     return pose
 
 
@@ -253,13 +251,9 @@ def _derivatives(arm: Arm, q: Array, twists: Array) -> tuple[Array, Array]:
     m = q.shape[0]
     columns, tcp = spatial_axes(arm, q)
     at_tcp = np.empty((m, 6, arm.n))
-    at_tcp[:, :3] = (columns[:, :3] + np.stack([_cross(column[3:], tcp) for column in columns])).transpose(
-        2, 1, 0
-    )
+    at_tcp[:, :3] = (columns[:, :3] + np.stack([_cross(column[3:], tcp) for column in columns])).transpose(2, 1, 0)
     at_tcp[:, 3:] = columns[:, 3:].transpose(2, 1, 0) * arm.length
-    solve = _solver(
-        at_tcp, np.array([1.0 if joint.kind == "revolute" else arm.length for joint in arm.joints])
-    )
+    solve = _solver(at_tcp, np.array([1.0 if joint.kind == "revolute" else arm.length for joint in arm.joints]))
 
     def answer(spatial: Array) -> tuple[Array, Array]:
         asked = np.empty((m, 6))

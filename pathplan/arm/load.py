@@ -1,41 +1,77 @@
-"""Arm files: TOML in mm, deg and seconds, checked key by key.
+"""Arm files: TOML in mm, deg and seconds, checked key by key. All that can be in one:
 
-    name = "sorter4"
-    title = "SCARA over the sorting belt"
-    dh = "modified"                    # or "standard"; left out where the joints give origin and axis
-    gravity = [0, 0, -9.80665]         # m/s^2 in the base frame (this is the default)
-    [base]                             # where the arm stands in the cell's base frame; default: there
+    name = "lifter"
+    title = "Swing arm with a lift"
+    dh = "modified"                 # or "standard"; left out where the joints give origin and axis
+    gravity = [0, 0, -9.80665]      # m/s^2 in the base frame; this is the default
+
+    [base]                          # where the arm stands in the cell's base frame; default: in it
     xyz = [0, 0, 300]
-    [mechanical_interface]             # from the last DH frame; with axes: in the arm's own base at zero
-    xyz = [0, 0, -20]
-    [[joint]]
-    name = "arm"
-    kind = "revolute"                  # or "prismatic"
-    dh = { a = 0, alpha = 0, d = 0, theta = 0 }      # or: origin = [0, 0, 0], axis = [0, 0, 1]
-    position = [-130, 130]             # or "unlimited"
-    velocity = 400                     # deg/s or mm/s, symmetric; then deg/s^2, deg/s^3
-    acceleration = 1500
-    jerk = 15000
-    # where known: torque, continuous_torque, gear_ratio, encoder_counts, and for all joints or none: mass
-    # (of the
-    # link that the joint moves), com, inertia, viscous_friction, coulomb_friction, rotor_inertia
-    [tools.cup]                        # xyz and rpy or quat of the tool centre point in the mechanical
-    interface xyz = [0, 0, 60] mass = "0.4 kg"                    # com and inertia in the tool frame; speed
-    and acceleration: caps of the tool [payloads.tile] mass = "1.2 kg" [positions] home = [0, 0, 0, 0]
-    # joint values in deg or mm; home is required [[limit]]                          # a coupled drive:
-    limits on a sum of joint positions name = "screw nut" row = [0, 0, 18, 1]                # deg (or mm)
-    of the row per deg or mm of each joint velocity = 2000
 
-Link data (com, inertia about the com) are stated in the DH frame of the row or, with axes, in a frame at
-the joint's origin that is parallel to the arm's own base at zero.
+    [mechanical_interface]          # from the last DH frame; with axes: in the arm's own base, all joints at zero
+    xyz = [0, 0, -20]
+    rpy = [180, 0, 0]               # fixed axes x, y, z; or quat = [w, x, y, z]
+
+    [[joint]]
+    name = "swing"
+    kind = "revolute"               # or "prismatic"
+    dh = { a = 0, alpha = 0, d = 400, theta = 0 }    # or: origin = [0, 0, 400] and axis = [0, 0, 1]
+    position = [-130, 130]          # or "unlimited"
+    velocity = 200                  # deg/s or mm/s, the same both ways; then per s^2 and per s^3
+    acceleration = 900
+    jerk = 9000
+    # From here on where known. Link data: for every joint or for none.
+    torque = 150                    # peak, N m or N
+    continuous_torque = 60
+    gear_ratio = 80                 # of a prismatic joint: rad of the motor per m
+    encoder_counts = 131072         # per turn of the motor
+    mass = "8 kg"                   # of the link that the joint moves
+    com = [150, 0, 0]
+    inertia = [0.02, 0.09, 0.1, 0, 0, 0]             # xx yy zz xy xz yz about the com, kg m^2; or xx yy zz
+    viscous_friction = 5            # joint side, N m s/rad or N s/m
+    coulomb_friction = [6, 7]       # joint side, moving positive and negative; or one value for both
+    rotor_inertia = 0.0001          # motor side, kg m^2
+
+    [[joint]]
+    name = "lift"
+    kind = "prismatic"
+    dh = { a = 500 }                # what is left out is 0
+    position = [-200, 0]
+    velocity = 500
+    acceleration = 3000
+    jerk = 40000
+    mass = "2 kg"
+
+    [tools.cup]                     # tool centre point in the mechanical interface
+    xyz = [0, 0, 60]
+    mass = "0.4 kg"                 # com and inertia in the tool frame
+    com = [0, 0, -30]
+    speed = 800                     # caps on the tool's motion while it is carried
+    acceleration = 5000
+
+    [payloads.tile]                 # com and inertia in the tool frame
+    mass = "1.2 kg"
+    com = [0, 0, 4]
+
+    [positions]                     # named joint vectors in deg or mm; home is required
+    home = [0, -100]
+
+    [[limit]]                       # a coupled drive: limits on a sum of joint positions
+    name = "screw nut"
+    kind = "revolute"               # the row counts in deg (or "prismatic": mm); needed where its joints differ
+    row = [1, 18]                   # deg of the row per deg or mm of each joint
+    velocity = [-9000, 10000]       # any of position, velocity, acceleration, jerk; one value or low, high
+
+Link data are stated in the DH frame of the row or, with axes, in a frame at the joint's origin that is parallel to
+the arm's own base while all joints stand at zero.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 
@@ -71,12 +107,11 @@ def load_arm(file: str | Path) -> Arm:
     data, digest = read_toml(path)
     problems = Problems()
     top = Table(data, path.name, problems=problems)
+    head: dict[str, Any] = {"file": path, "sources": {path.name: digest}}
     with problems.gather():
-        name, title = top.text("name"), top.text("title", "")
+        head |= {"name": top.text("name"), "title": top.text("title", "")}
     with problems.gather():
-        gravity = top.vector("gravity", 3, "linear_acceleration", np.array(GRAVITY))
-        if np.abs(gravity).max() > 1e3:
-            raise top.error("gravity", f"expected at most 1000 m/s^2, got {toml_text(data['gravity'])}")
+        head["gravity"] = _gravity(top)
     with problems.gather():
         base, interface = _pose(top, "base"), _pose(top, "mechanical_interface")
     with problems.gather():
@@ -86,16 +121,8 @@ def load_arm(file: str | Path) -> Arm:
         for table in _joint_tables(top):
             with problems.gather():
                 rows.append(_joint_row(table, has_dh=top.has("dh")))
-    tools: dict[str, Tool] = {}
-    payloads: dict[str, Payload] = {}
-    with problems.gather():
-        for key, table in top.named_tables("tools").items():
-            with problems.gather():
-                tools[key] = _tool(key, table)
-    with problems.gather():
-        for key, table in top.named_tables("payloads").items():
-            with problems.gather():
-                payloads[key] = _payload(key, table)
+    head["tools"] = _named(top, "tools", _tool, problems)
+    head["payloads"] = _named(top, "payloads", _payload, problems)
     problems.check()
 
     joints = tuple(row.joint for row in rows)
@@ -104,12 +131,24 @@ def load_arm(file: str | Path) -> Arm:
     with problems.gather():
         links = _links(top, rows)
     with problems.gather():
-        positions = _positions(top, joints, problems)
+        head["positions"] = _positions(top, joints, problems)
     with problems.gather():
-        limits = _limits(top, joints, problems)
+        head["limits"] = _limits(top, joints, problems)
     top.finish()
     problems.check()
+    return _assembled(joints, rows, links, convention, base, interface, head)
 
+
+def _assembled(
+    joints: tuple[Joint, ...],
+    rows: Sequence[_JointRow],
+    links: list[Link] | None,
+    convention: Literal["standard", "modified"] | None,
+    base: Array,
+    interface: Array,
+    head: dict[str, Any],
+) -> Arm:
+    """The arm of what was read; `head` are the fields of `Arm` that are finished."""
     if convention is None:
         origins, axes = [row.origin for row in rows], [row.axis for row in rows]
         fixed, unit_axes, tip_from_flange = chain_from_axes(origins, axes, interface)
@@ -121,21 +160,30 @@ def load_arm(file: str | Path) -> Arm:
             links = [moved_link(link, frame) for link, frame in zip(links, joint_from_link, strict=True)]
     fixed[0] = base @ fixed[0]
     return Arm(
-        name,
-        joints,
-        fixed,
-        unit_axes,
-        tip_from_flange,
-        title=title,
-        file=path,
-        sources={path.name: digest},
+        joints=joints,
+        parent_from_joint=fixed,
+        axes=unit_axes,
+        tip_from_flange=tip_from_flange,
         links=None if links is None else tuple(links),
-        gravity=gravity,
-        tools=tools,
-        payloads=payloads,
-        positions=positions,
-        limits=limits,
+        **head,
     )
+
+
+def _named(top: Table, key: str, read: Callable[[str, Table], Any], problems: Problems) -> dict[str, Any]:
+    """[tools.NAME] or [payloads.NAME] tables by name."""
+    found: dict[str, Any] = {}
+    with problems.gather():
+        for name, table in top.named_tables(key).items():
+            with problems.gather():
+                found[name] = read(name, table)
+    return found
+
+
+def _gravity(top: Table) -> Array:
+    gravity: Array = top.vector("gravity", 3, "linear_acceleration", np.array(GRAVITY))
+    if np.abs(gravity).max() > 1e3:
+        raise top.error("gravity", f"expected at most 1000 m/s^2, got {toml_text(top.data['gravity'])}")
+    return gravity
 
 
 @dataclass(frozen=True)
@@ -215,9 +263,7 @@ def _dh_row(table: Table) -> DHRow:
     )
     for key, value in (("a", row.a), ("d", row.d), ("alpha", row.alpha), ("theta", row.theta)):
         if abs(value) > FARTHEST:
-            raise table.error(
-                key, f"expected at most {FARTHEST:g} m or rad, got {toml_text(table.data[key])}"
-            )
+            raise table.error(key, f"expected at most {FARTHEST:g} m or rad, got {toml_text(table.data[key])}")
     table.finish()
     return row
 
@@ -236,9 +282,7 @@ def _limit(table: Table, key: str, dimension: str, *default: None) -> float | No
 def _gear_ratio(table: Table) -> float:
     ratio: float = table.quantity("gear_ratio", "number", 1.0)
     if not 1e-3 <= abs(ratio) <= 1e6:
-        raise table.error(
-            "gear_ratio", f"expected a ratio such as 100, got {toml_text(table.data['gear_ratio'])}"
-        )
+        raise table.error("gear_ratio", f"expected a ratio such as 100, got {toml_text(table.data['gear_ratio'])}")
     return ratio
 
 
@@ -246,9 +290,7 @@ def _position(table: Table, dimension: str) -> tuple[float, float]:
     if table.take("position") == "unlimited":
         return (-np.inf, np.inf)
     if not isinstance(table.data["position"], list):
-        raise table.error(
-            "position", f'expected [low, high] or "unlimited", got {toml_text(table.data["position"])}'
-        )
+        raise table.error("position", f'expected [low, high] or "unlimited", got {toml_text(table.data["position"])}')
     return _ordered(table, "position", dimension)
 
 
@@ -285,9 +327,7 @@ def _coulomb(table: Table, dimension: str) -> tuple[float, float]:
     value = table.take("coulomb_friction", 0.0)
     pair = value if isinstance(value, list) else [value, value]
     if len(pair) != 2:
-        raise table.error(
-            "coulomb_friction", f"expected one value or [positive, negative], got {toml_text(value)}"
-        )
+        raise table.error("coulomb_friction", f"expected one value or [positive, negative], got {toml_text(value)}")
     result = tuple(parse_quantity(item, dimension, table.at("coulomb_friction")) for item in pair)
     if not 0.0 <= min(result) <= max(result) <= LARGEST:
         raise table.error("coulomb_friction", f"expected values of zero or more, got {toml_text(value)}")
@@ -381,8 +421,8 @@ def _positions(top: Table, joints: Sequence[Joint], problems: Problems) -> dict[
     for key in table.data:
         with problems.gather():
             q = table.mixed_vector(key, dimensions, noun="joint positions")
-            for value, joint, dimension in zip(q, joints, dimensions, strict=True):
-                low, high = joint.position
+            for value, joint, dimension in zip(q.tolist(), joints, dimensions, strict=True):
+                low, high = np.clip(joint.position, -FARTHEST, FARTHEST).tolist()
                 if not low <= value <= high:
                     raise table.error(
                         key,
@@ -408,9 +448,7 @@ def _limits(top: Table, joints: Sequence[Joint], problems: Problems) -> Limits:
             given = {key: _row_bound(table, key, kind) for key in _BOUNDS}
             table.finish()
             if all(np.isinf(bound).all() for bound in given.values()):
-                raise InputError.at(
-                    table.where, "limits nothing, expected position, velocity, acceleration or jerk"
-                )
+                raise InputError.at(table.where, "limits nothing, expected position, velocity, acceleration or jerk")
             names.append(name)
             rows.append(row[None])
             for key, bound in given.items():
@@ -454,9 +492,7 @@ def _row_bound(table: Table, key: Any, kind: str) -> Array:
     if isinstance(table.data[key], list):
         low, high = table.vector(key, 2, dimension)
         if not (-LARGEST <= low <= -SMALLEST and SMALLEST <= high <= LARGEST):
-            raise table.error(
-                key, f"expected [low below zero, high above zero], got {toml_text(table.data[key])}"
-            )
+            raise table.error(key, f"expected [low below zero, high above zero], got {toml_text(table.data[key])}")
         return np.array([[low, high]])
     limit = _limit(table, key, dimension)
     return np.array([[-1.0, 1.0]]) * np.array(limit)

@@ -66,9 +66,7 @@ def _any_normal(axis: Array) -> Array:
     return np.asarray(normal / np.linalg.norm(normal))
 
 
-def _common_normal(
-    origin: Array, axis: Array, point: Array, next_axis: Array, x: Array
-) -> tuple[Array, Array]:
+def _common_normal(origin: Array, axis: Array, point: Array, next_axis: Array, x: Array) -> tuple[Array, Array]:
     """Foot on this axis and unit direction of the common normal to the next axis; `x` where the two are one
     line."""
     across = np.cross(axis, next_axis)

@@ -54,9 +54,7 @@ def _starts(arm: Arm, count: int) -> Array:
     low, high = np.full(arm.n, -np.pi), np.full(arm.n, np.pi)
     for i, joint in enumerate(arm.joints):
         if joint.kind == "prismatic":
-            low[i], high[i] = (
-                joint.position if np.isfinite(joint.position).all() else (-arm.length, arm.length)
-            )
+            low[i], high[i] = joint.position if np.isfinite(joint.position).all() else (-arm.length, arm.length)
     return np.random.default_rng(20_240_229).uniform(low, high, (count, arm.n))
 
 

@@ -35,9 +35,7 @@ def rotate(axis: Array, angle: Array, vector: Array) -> Array:
     """Vectors (3, ...) turned about a constant axis by angles (...) (Rodrigues)."""
     c, s = np.cos(angle), np.sin(angle)
     along = dot(axis, vector) * (1.0 - c)
-    return (
-        c * vector + s * cross(axis, vector) + np.stack([axis[0] * along, axis[1] * along, axis[2] * along])
-    )
+    return c * vector + s * cross(axis, vector) + np.stack([axis[0] * along, axis[1] * along, axis[2] * along])
 
 
 def rotation_about(axis: Array, rotation: Array) -> Array:
@@ -46,9 +44,7 @@ def rotation_about(axis: Array, rotation: Array) -> Array:
     Maximises the trace of rotation^T Rot(axis, angle): exact where the rotation is about that axis. 0 where
     every angle comes equally near (a half turn about a line square to the axis).
     """
-    skew = np.stack(
-        [rotation[2, 1] - rotation[1, 2], rotation[0, 2] - rotation[2, 0], rotation[1, 0] - rotation[0, 1]]
-    )
+    skew = np.stack([rotation[2, 1] - rotation[1, 2], rotation[0, 2] - rotation[2, 0], rotation[1, 0] - rotation[0, 1]])
     trace = rotation[0, 0] + rotation[1, 1] + rotation[2, 2]
     along = sum(axis[i] * dot(axis, rotation[i]) for i in range(3))
     return np.arctan2(dot(axis, skew), trace - along)

@@ -122,6 +122,17 @@ def test_everything_in_a_file_arrives_in_si(write):
     assert arm.sources == {"two.toml": hashlib.sha256(TWO.encode()).hexdigest()}
 
 
+def test_the_example_at_the_head_of_the_loader_is_a_good_file(write):
+    from textwrap import dedent
+
+    import pathplan.arm.load
+
+    text = pathplan.arm.load.__doc__.split("\n\n", 1)[1].split("Link data are stated")[0]
+    arm = load_arm(write(dedent(text)))
+    assert (arm.name, arm.n, arm.tools["cup"].speed) == ("lifter", 2, 0.8)
+    np.testing.assert_allclose(arm.forward(arm.positions["home"])[:3, 3], [0.5, 0, 0.3 + 0.4 - 0.1 - 0.02], atol=1e-12)
+
+
 def test_extra_limit_rows(write):
     """18 deg of the spline per mm of the slide are 18 * pi / 180 * 1000 rad per m."""
     limits = load_arm(write(TWO)).limits
@@ -252,6 +263,11 @@ WRONG = [
         "home = [90, 20]",
         "home = [190, 20]",
         "positions.home: turn at 190 deg is outside its limits, -170 deg to 170 deg",
+    ),
+    (
+        "home = [90, 20]",
+        "home = [90, 1e308]",
+        "positions.home: slide at 1e+308 mm is outside its limits, -1000000 mm to 1000000 mm",
     ),
     ("home = [90, 20]", "hom = [90, 20]", 'positions: missing key "home" (is "hom" meant for it?)'),
     ('name = "slide"', 'name = "turn"', 'joint[2].name: "turn" is taken already'),
