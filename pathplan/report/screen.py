@@ -4,21 +4,20 @@ from __future__ import annotations
 
 import math
 import textwrap
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator
 
 from pathplan.audit import Audit, Deviation, JointAudit, Pacing, Peak, StepPacing
-from pathplan.audit.exceedances import clock
 from pathplan.audit.words import dimension_of, shown
+from pathplan.report.text import WIDTH, aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value
 
-__all__ = ["CAUTIONS", "WIDTH", "audit_screen"]
+__all__ = ["CAUTIONS", "WIDTH", "audit_blocks", "audit_screen", "verdict"]
 
-WIDTH = 100
 MOST_STEPS = 12  # lines of steps shown; the rest is in --json
 MOST_FINDINGS = 20
 CAUTIONS = (
-    "Prove the plan at reduced speed first. Clearance is not checked. A plan is no safety function: the risk",
-    "assessment and the local codes apply.",
+    "Prove the plan at reduced speed first. Clearance is not checked. A plan is no safety function: the",
+    "risk assessment, the local codes and licensed practice apply.",
 )
 QUANTITIES = ("velocity", "acceleration", "jerk", "torque")
 
@@ -28,22 +27,31 @@ def audit_screen(audit: Audit) -> str:
 
     Shares in percent, the largest of each joint marked *, what passes its limit marked !.
     """
-    blocks = [
-        _headline(audit),
-        _joints(audit),
-        _tool(audit),
-        _steps(audit),
-        _findings(audit),
-        [*CAUTIONS],
-    ]
-    return "\n\n".join("\n".join(block) for block in map(list, blocks) if block)
+    return "\n\n".join("\n".join(block) for block in audit_blocks(audit).values() if block)
+
+
+def audit_blocks(audit: Audit) -> dict[str, list[str]]:
+    """The lines of the audit by what they tell: headline, joints, tool, steps, findings, cautions."""
+    blocks: dict[str, Iterable[str]] = {
+        "headline": _headline(audit),
+        "joints": _joints(audit),
+        "tool": _tool(audit),
+        "steps": _steps(audit),
+        "findings": _findings(audit),
+        "cautions": CAUTIONS,
+    }
+    return {name: list(lines) for name, lines in blocks.items()}
+
+
+def verdict(audit: Audit) -> str:
+    """'within limits', or how many times they are broken."""
+    count = sum(finding.level == "exceedance" for finding in audit.findings)
+    return "within limits" if audit.passed else f"BREAKS LIMITS ({count} exceedance{'s' * (count > 1)})"
 
 
 def _headline(audit: Audit) -> Iterator[str]:
     title = f"{audit.task}, " if audit.task else ""
-    count = sum(finding.level == "exceedance" for finding in audit.findings)
-    verdict = "within limits" if audit.passed else f"BREAKS LIMITS ({count} exceedance{'s' * (count > 1)})"
-    yield _fit(f"{_printable(title + audit.arm)}: {verdict}")
+    yield fit(printable(title + audit.arm), f": {verdict(audit)}")
     parts = [f"cycle time {clock(audit.duration)}"]
     if audit.motion_time is not None and audit.waiting_time is not None:
         parts[0] += f" (motion {clock(audit.motion_time)}, waiting {clock(audit.waiting_time)})"
@@ -59,14 +67,14 @@ def _joints(audit: Audit) -> Iterator[str]:
     table += [_joint_cells(joint) for joint in (*audit.joints, *audit.rows)]
     if audit.measured == "differences":
         yield "velocity, acceleration and jerk: where no column, finite differences of the positions"
-    yield from _aligned(table, [24, *[15] * 6])
+    yield from aligned(table, [24, *[15] * 6])
 
 
 def _joint_cells(joint: JointAudit) -> list[str]:
     peaks = joint.peaks()
     largest = max((peak.share for peak in peaks.values()), default=None)
     position = peaks.get("position")
-    cells = [_printable(joint.name), _share(position, largest), "-"]
+    cells = [printable(joint.name), _share(position, largest), "-"]
     if position is not None and position.margin is not None:
         cells[2] = shown(position.margin, dimension_of(joint.kind, "position"), 3)
     return cells + [_share(peaks.get(quantity), largest) for quantity in QUANTITIES]
@@ -104,8 +112,8 @@ def _tool(audit: Audit) -> Iterator[str]:
             for quantity, peak in joint.peaks().items()
             if quantity != "position"
         )
-        text = f"largest share {100 * worst[0]:.4f} %, {_printable(worst[1])} {worst[2]}"
-        yield _fit(f"between rows: {text}")
+        text = f"largest share {100 * worst[0]:.4f} %, {printable(worst[1])} {worst[2]}"
+        yield fit(f"between rows: {text}")
 
 
 def _deviation_text(deviation: Deviation) -> str:
@@ -130,14 +138,14 @@ def _steps(audit: Audit) -> Iterator[str]:
     table = [["step", "", "time", "paced by, share of its time"]]
     table[0] += ["tool speed reached"] if speeds else []
     for step in sorted(chosen, key=lambda step: step.step):
-        cells = [str(step.step + 1), _printable(step.name), clock(step.duration), _pacing_text(step)]
+        cells = [str(step.step + 1), printable(step.name), clock(step.duration), _pacing_text(step)]
         if speeds:
             speed = speeds.get(step.step)
             cells.append("-")
             if speed is not None and speed.asked is not None:
                 cells[-1] = f"{format_value(1e3 * speed.reached)} of {format_value(1e3 * speed.asked)} mm/s"
         table.append(cells)
-    yield from _aligned(table, [6, 16, 12, 46, 22], left=(1, 3, 4))
+    yield from aligned(table, [6, 16, 12, 46, 22], left=(1, 3, 4))
     if len(audit.pacing) > MOST_STEPS:
         yield f"... and {len(audit.pacing) - MOST_STEPS} shorter steps, all of them in --json"
 
@@ -148,38 +156,16 @@ def _pacing_text(step: StepPacing) -> str:
 
 
 def _part_text(part: Pacing) -> str:
-    who = f"{_printable(part.joint)} " if part.joint else ""
+    who = f"{printable(part.joint)} " if part.joint else ""
     return f"{who}{part.quantity} {100 * part.part:.0f} %"
 
 
 def _findings(audit: Audit) -> Iterator[str]:
     marks = {"exceedance": "!", "warning": "?", "note": "-"}
     for finding in audit.findings[:MOST_FINDINGS]:
-        text = _printable(finding.text)
+        text = printable(finding.text)
         yield from textwrap.wrap(
             text, WIDTH, initial_indent=f"{marks[finding.level]} ", subsequent_indent="  "
         )
     if len(audit.findings) > MOST_FINDINGS:
         yield f"... and {len(audit.findings) - MOST_FINDINGS} more findings, all of them in --json"
-
-
-def _aligned(table: Sequence[Sequence[str]], most: Sequence[int], left: Sequence[int] = (0,)) -> Iterator[str]:
-    """Columns as wide as they need to be, up to `most`; those in `left` begin at the left edge."""
-    widths = [
-        min(most[c], max(len(row[c]) for row in table)) for c in range(len(table[0]))
-    ]
-    for row in table:
-        cells = []
-        for c, (cell, width) in enumerate(zip(row, widths, strict=True)):
-            cell = cell if len(cell) <= width else cell[: width - 3] + "..."
-            cells.append(cell.ljust(width) if c in left else cell.rjust(width))
-        yield _fit("  ".join(cells).rstrip())
-
-
-def _fit(line: str) -> str:
-    return line if len(line) <= WIDTH else line[: WIDTH - 3] + "..."
-
-
-def _printable(text: str) -> str:
-    """Names from files: nothing that moves the cursor or ends the line."""
-    return "".join(char if char.isprintable() else "?" for char in text)

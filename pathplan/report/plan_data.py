@@ -1,0 +1,69 @@
+"""A plan as plain types, for JSON: mm, deg and s, shares in percent, steps and rows counted from 1."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+from pathplan.units import to_screen
+
+if TYPE_CHECKING:
+    from pathplan.planning import Plan
+
+__all__ = ["bound_at_pace", "plan_as_dict"]
+
+
+def bound_at_pace(plan: Plan) -> float:
+    """s: a lower bound for the duration at the plan's pace. Motion is slowed by the pace, waits are not."""
+    return (plan.bound - plan.waiting_time) / plan.task.pace + plan.waiting_time
+
+
+def plan_as_dict(plan: Plan) -> dict[str, Any]:
+    """What a plan says of itself, its steps and marks, and its audit. Every number is finite or None."""
+    task, audit, bound = plan.task, plan.audit.to_dict(), bound_at_pace(plan)
+    cap = task.speed
+    return {
+        **plan.meta,
+        "tool": task.arm.tool.name,
+        "payload": None if task.arm.payload is None else task.arm.payload.name,
+        "passed": plan.audit.passed,
+        "plan": {
+            "duration_s": plan.duration,
+            "motion_s": plan.duration - plan.waiting_time,
+            "waiting_s": plan.waiting_time,
+            "bound_s": bound,
+            "above_bound_percent": 100 * (plan.duration / bound - 1) if bound > 0 else None,
+            "rows": plan.ticks + 1,
+            "cycle_s": task.cycle,
+            "pace_percent": 100 * task.pace,
+            "tool_speed_cap_mm_s": None if cap is None else to_screen(cap, "speed"),
+        },
+        "steps": _steps(plan, audit),
+        "marks": [
+            {"name": mark.name, "time_s": mark.time, "row": mark.row + 1, "step": mark.step + 1}
+            for mark in plan.marks
+        ],
+        "audit": audit,
+    }
+
+
+def _steps(plan: Plan, audit: dict[str, Any]) -> list[dict[str, Any]]:
+    """Every step of the task with what the audit tells of it. A step within its neighbours' corners has no rows."""
+    pacing = {entry["step"]: entry for entry in audit["pacing"]}
+    speeds = {entry["step"]: entry for entry in audit["speeds"]}
+    corners = {entry["after_step"]: entry for entry in audit["corners"]}
+    found = []
+    for number, step in enumerate(plan.task.steps, start=1):
+        paced, speed, corner = pacing.get(number), speeds.get(number), corners.get(number)
+        found.append(
+            {
+                "step": number,
+                "name": step.name,
+                "motion": step.motion,
+                "duration_s": paced["duration_s"] if paced else 0.0,
+                "tool_speed_asked_mm_s": speed and speed["asked_mm_s"],
+                "tool_speed_reached_mm_s": speed and speed["reached_mm_s"],
+                "pacing": paced["parts"] if paced else [],
+                "corner": corner and {key: value for key, value in corner.items() if key != "after_step"},
+            }
+        )
+    return found
