@@ -69,13 +69,15 @@ class StretchTiming:
         width = np.diff(self.tau)[cell]
         u = np.clip(local / np.diff(times)[cell], 0.0, 1.0)
         corner = self._corners[:, cell]
+        open_ = np.arange(len(u))  # settled rows are left alone: a row does not depend on those it is computed with
         for _ in range(_NEWTON):
-            b = sum(corner[i] * value for i, value in enumerate(_values(u)))
-            change = (local - self._time_in_cell(cell, u)) * np.sqrt(b) / width
-            moved = np.clip(u + change, 0.0, 1.0)
-            settled = np.all(np.abs(moved - u) <= 1e-13)
-            u = moved
-            if settled:
+            b = sum(corner[i, open_] * value for i, value in enumerate(_values(u[open_])))
+            missing = local[open_] - self._time_in_cell(cell[open_], u[open_])
+            moved = np.clip(u[open_] + missing * np.sqrt(b) / width[open_], 0.0, 1.0)
+            going = np.abs(moved - u[open_]) > 1e-13
+            u[open_] = moved
+            open_ = open_[going]
+            if not len(open_):
                 return cell, u
         raise ArithmeticError("timing: the time integral could not be inverted")
 
