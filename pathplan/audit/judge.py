@@ -101,8 +101,8 @@ class _Judge:
         self.stamps = Stamps(self.cycle, stated=first.cycle is not None)
         self.speed_caps, self.acceleration_caps = step_caps(arm, plan.task if plan else None)
         joints = [(name, q) for q in (*DERIVED, "torque") for name in self.names]
-        self.clock = StepClock([*joints, (None, TOOL[0]), (None, TOOL[1])])
-        self.rows = 0
+        self.clock = StepClock([*joints, (None, TOOL[0]), (None, TOOL[1])], self.cycle)
+        self.rows, self.last_time = 0, 0.0
         self.joints: tuple[JointAudit, ...] = ()
         self.found: dict[Key, Exceedance] = {}
         self.not_finite: dict[str, tuple[int, str, int]] = {}
@@ -128,6 +128,7 @@ class _Judge:
         with np.errstate(invalid="ignore", over="ignore"):
             self._judge_rows(table, good)
         self.rows += len(table)
+        self.last_time = float(table.time[-1])
 
     def _judge_rows(self, table: JointTable, good: NDArray[np.bool_]) -> None:
         rows = Rows(table.time, table.step, self.rows)
@@ -139,8 +140,7 @@ class _Judge:
             shares.append(self._share(quantity, columns.get(quantity), rows))
         self._share("position", columns["position"], rows)
         shares += self._tool(table, good, rows)
-        seconds = self._seconds(table.time)
-        self.clock.add(np.hstack(shares), table.step, seconds)
+        self.clock.add(np.hstack(shares), table.step, self._times(table.time))
         if good.any():
             at = Rows(table.time[good], table.step[good], 0)
             numbers = self.rows + np.flatnonzero(good)
@@ -168,8 +168,8 @@ class _Judge:
             speed = np.zeros(len(table))
             speed[good] = tool_speed(self.arm, table.position[good], table.velocity[good])
         if speed is not None:
-            seconds = self._seconds(table.time)
-            for step, mine in tool_speed_by_step(speed, self.speed_caps, table.step, seconds).items():
+            times = self._times(table.time)
+            for step, mine in tool_speed_by_step(speed, self.speed_caps, table.step, times).items():
                 was = self.speeds.get(step, (0.0, 0.0, 0.0))
                 self.speeds[step] = (max(was[0], mine[0]), was[1] + mine[1], was[2] + mine[2])
         shares = [self._tool_share(TOOL[0], speed, self.speed_caps, rows)]
@@ -205,11 +205,18 @@ class _Judge:
             gather(self.found, exceedances(quantity, values[mine, None], limits, own, at))
         return shares
 
-    def _seconds(self, time: Array) -> Array:
-        """Time (N,) that each row stands for."""
-        if self.cycle is not None:
-            return np.full(len(time), self.cycle)
-        return np.maximum(np.diff(time, append=time[-1]), 0.0)
+    def _times(self, time: Array) -> Array:
+        """Time (N,) that each row stands for, that since the row before; the first row is an instant.
+
+        In cycles, or in s where there is no cycle.
+        """
+        if self.cycle is None:
+            before = self.last_time if self.rows else time[0]
+            return np.maximum(np.nan_to_num(np.diff(time, prepend=before)), 0.0)
+        cycles = np.ones(len(time))
+        if not self.rows:
+            cycles[0] = 0.0
+        return cycles
 
     def verdict(self) -> Audit:
         """All of it together."""
@@ -217,7 +224,7 @@ class _Judge:
         plan = self.plan
         names = {step.index: step.name for step in plan.task.steps} if plan else {}
         evidence = plan.evidence() if plan else Evidence()
-        moving, waiting = self._times()
+        moving, waiting = self._motion_and_waiting()
         joints = self._with_differences()
         start, end = self.ends
         return Audit(
@@ -244,8 +251,8 @@ class _Judge:
             bound=plan.bound if plan else None,
         )
 
-    def _times(self) -> tuple[float | None, float | None]:
-        """Motion and waiting time; the first row is an instant and stands for no time."""
+    def _motion_and_waiting(self) -> tuple[float | None, float | None]:
+        """Motion and waiting time."""
         if self.plan is None:
             return None, None
         waits = {step.index for step in self.plan.task.steps if step.motion == "wait"}
@@ -277,8 +284,9 @@ class _Judge:
         yield from _rest(self.arm, *self.ends)
         yield from self._between_rows(evidence)
         if self.measured == "differences":
-            missing = " and ".join(name for name in DERIVED if name not in self.derived)
-            text = f"the table has no columns of {missing}: judged by finite differences of the positions"
+            missing = [name for name in DERIVED if name not in self.derived]
+            named = " and ".join([*([", ".join(missing[:-1])] if missing[1:] else []), missing[-1]])
+            text = f"the table has no columns of {named}: judged by finite differences of the positions"
             yield Finding("note", text)
         if self.cycle is None:
             text = "the times lie on no regular grid: differences use the times of the rows"

@@ -27,9 +27,9 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
         "task": audit.task,
         "rows": audit.count,
         "cycle_s": audit.cycle,
-        "duration_s": audit.duration,
-        "motion_time_s": audit.motion_time,
-        "waiting_time_s": audit.waiting_time,
+        "duration_s": _number(audit.duration),
+        "motion_time_s": _number(audit.motion_time),
+        "waiting_time_s": _number(audit.waiting_time),
         "bound_s": audit.bound,
         "measured": audit.measured,
         "joints": [_joint(joint) for joint in audit.joints],
@@ -55,7 +55,7 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
                 "step": speed.step + 1,
                 "name": speed.name,
                 "asked_mm_s": None if speed.asked is None else 1000 * speed.asked,
-                "reached_mm_s": 1000 * speed.reached,
+                "reached_mm_s": _number(1000 * speed.reached),
                 "percent_of_time_at_asked": 100 * speed.part,
             }
             for speed in audit.speeds

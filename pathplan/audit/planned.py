@@ -193,11 +193,11 @@ def worse_peaks(one: tuple[JointAudit, ...], other: tuple[JointAudit, ...]) -> t
 
 
 def tool_speed_by_step(
-    speed: Array, asked: Array, step: NDArray[np.int64], seconds: Array
+    speed: Array, asked: Array, step: NDArray[np.int64], times: Array
 ) -> dict[int, tuple[float, float, float]]:
-    """Step -> (largest speed m/s, time at the asked speed s, time s).
+    """Step -> (largest speed m/s, time at the asked speed, time), times in the unit of `times`.
 
-    speed (N,) m/s of rows of `step` (N,) that stand for `seconds` (N,); asked (S,) by step, inf where nothing
+    speed (N,) m/s of rows of `step` (N,) that stand for `times` (N,); asked (S,) by step, inf where nothing
     is. At the asked speed means 99.9 % of it or more.
     """
     found = {}
@@ -205,7 +205,7 @@ def tool_speed_by_step(
         mine = step == number
         cap = asked[min(number, len(asked) - 1)]
         at = speed[mine] >= AT_ASKED * cap
-        found[number] = (float(speed[mine].max()), float(seconds[mine][at].sum()), float(seconds[mine].sum()))
+        found[number] = (float(speed[mine].max()), float(times[mine][at].sum()), float(times[mine].sum()))
     return found
 
 

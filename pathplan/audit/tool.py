@@ -17,6 +17,7 @@ __all__ = ["nearest_singularity", "step_caps", "tool_acceleration", "tool_speed"
 
 Numbers = NDArray[np.intp]
 TRAVEL = 0.02  # rad of joint travel, m over the arm's length, between rows at which a singular value is taken
+FEW = 512  # rows that are not worth halving
 
 
 def step_caps(arm: Arm, task: Any = None) -> tuple[Array, Array]:
@@ -63,39 +64,47 @@ def nearest_singularity(
 ) -> Singularity:
     """Of positions (N, n), at rows of these numbers (N,), the one with the smallest singular value.
 
-    `before`, what earlier rows gave, counts too. Of equal values the earliest row is told.
+    `before`, what earlier rows gave, counts too.
 
     Not every row needs its own: between two rows d apart (sum of joint travels, prismatic ones over
     `arm.length`) the value can fall below the mean of the two by at most C d / 2, since turning joint i
     moves each column of the scaled Jacobian by at most sqrt(1 + v^2), v the longest linear part of a
-    column, and singular values move by no more than the matrix does (Weyl 1912). Rows between are
-    looked at only where that bound lies below the least value known, so the answer is that of all rows.
+    column, and singular values move by no more than the matrix does (Weyl 1912). Intervals whose bound lies
+    below the least value known are halved until few rows are left, and these are looked at one by one: the
+    answer is that of all rows.
     """
     scale = np.array([1.0 if joint.kind == "revolute" else 1.0 / arm.length for joint in arm.joints])
     travel = np.concatenate([[0.0], np.cumsum(np.abs(np.diff(position, axis=0)) @ scale)])
     sampled = np.flatnonzero(np.diff(np.floor(travel / TRAVEL)) > 0) + 1
     sampled = np.unique(np.concatenate([[0], sampled, [len(position) - 1]]))
-    values = smallest_singular_value(arm, position[sampled])
-    best = _smaller(values, sampled, rows, numbers, before)
-    lengths = np.linalg.norm(arm.jacobian(position[sampled])[:, :3], axis=1)
-    lengths /= arm.length * scale  # of the scaled Jacobian
-    apart = np.diff(travel[sampled])
-    longest = np.exp(apart) * np.maximum(lengths[1:], lengths[:-1]).max(axis=1, initial=0.0)
-    steepest = math.sqrt(arm.n) * np.sqrt(1 + longest**2)
-    lowest = (values[1:] + values[:-1] - steepest * apart) / 2
-    near = np.flatnonzero((lowest < best.value) & (np.diff(sampled) > 1))
-    between = [np.arange(sampled[i] + 1, sampled[i + 1]) for i in near]
-    if between:
-        inner = np.concatenate(between)
-        best = _smaller(smallest_singular_value(arm, position[inner]), inner, rows, numbers, best)
-    return best
-
-
-def _smaller(
-    values: Array, at: NDArray[np.intp], rows: Rows, numbers: Numbers, before: Singularity | None
-) -> Singularity:
-    i = int(np.argmin(values))
-    row = int(numbers[at[i]])
-    if before is not None and (before.value, before.row) <= (values[i], row):
+    value = np.full(len(position), np.inf)
+    value[sampled] = smallest_singular_value(arm, position[sampled])
+    least = min(float(value.min()), before.value if before else np.inf)
+    low, high = sampled[:-1], sampled[1:]
+    steepest = _steepest(arm, arm.jacobian(position[sampled]), scale, np.diff(travel[sampled]))
+    while len(low):
+        bound = (value[low] + value[high] - steepest * (travel[high] - travel[low])) / 2
+        near = (bound < least) & (high - low > 1)
+        low, high, steepest = low[near], high[near], steepest[near]
+        few = np.sum(high - low) < FEW
+        inner = [np.arange(i + 1, k) for i, k in zip(low, high, strict=True)] if few else [(low + high) // 2]
+        at = np.concatenate([np.empty(0, dtype=np.intp), *inner])
+        if len(at):
+            value[at] = smallest_singular_value(arm, position[at])
+            least = min(least, float(value[at].min()))
+        if few:
+            break
+        low, high = np.concatenate([low, at]), np.concatenate([at, high])
+        steepest = np.concatenate([steepest, steepest])
+    i = int(np.argmin(value))
+    if before is not None and before.value <= value[i]:
         return before
-    return Singularity(float(values[i]), float(rows.time[at[i]]), int(rows.step[at[i]]), row)
+    return Singularity(float(value[i]), float(rows.time[i]), int(rows.step[i]), int(numbers[i]))
+
+
+def _steepest(arm: Arm, jacobian: Array, scale: Array, apart: Array) -> Array:
+    """The C of each interval (M - 1,) between the rows that have these Jacobians (M, 6, n)."""
+    lengths = (np.linalg.norm(jacobian[:, :3], axis=1) / (arm.length * scale)).max(axis=1)
+    # each unit of travel adds no more than the longest v, or 1 where a prismatic joint moves
+    longest = np.exp(np.minimum(apart, 50.0)) * np.maximum(np.maximum(lengths[1:], lengths[:-1]), 1.0)
+    return np.asarray(math.sqrt(arm.n) * np.sqrt(1 + longest**2))
