@@ -72,29 +72,29 @@ def _joints(audit: Audit) -> Iterator[str]:
 
 def _joint_cells(joint: JointAudit) -> list[str]:
     peaks = joint.peaks()
-    largest = max((peak.share for peak in peaks.values()), default=None)
+    largest = max(peaks, key=lambda quantity: peaks[quantity].share, default="")  # the first of equal ones
     position = peaks.get("position")
-    cells = [printable(joint.name), _share(position, largest), "-"]
+    cells = [printable(joint.name), _share(position, largest == "position"), "-"]
     if position is not None and position.margin is not None:
         cells[2] = shown(position.margin, dimension_of(joint.kind, "position"), 3)
-    return cells + [_share(peaks.get(quantity), largest) for quantity in QUANTITIES]
+    return cells + [_share(peaks.get(quantity), largest == quantity) for quantity in QUANTITIES]
 
 
-def _share(peak: Peak | None, largest: float | None) -> str:
+def _share(peak: Peak | None, largest: bool = False) -> str:
     """A share in percent with its mark. 100.0 is only printed of what keeps the limit."""
     if peak is None:
         return "-  "
     over = peak.margin < -1e-9 if peak.margin is not None else peak.share > 1 + 1e-6
     percent = 100 * peak.share
     text = f"{max(percent, 100.1):.1f}" if over else f"{percent:.1f}"
-    return f"{text} %{'!' if over else '*' if peak.share == largest else ' '}"
+    return f"{text} %{'!' if over else '*' if largest else ' '}"
 
 
 def _tool(audit: Audit) -> Iterator[str]:
     for name, peak in (("speed", audit.tool_speed), ("acceleration", audit.tool_acceleration)):
         if peak is not None:
             used = f"{shown(peak.peak, name)} of {shown(peak.limit, name)}"
-            yield f"tool {name}: at most {used} ({_share(peak, None).strip()}) {_place(peak.time, peak.step)}"
+            yield f"tool {name}: at most {used} ({_share(peak).strip()}) {_place(peak.time, peak.step)}"
     if audit.singularity is not None:
         where = _place(audit.singularity.time, audit.singularity.step)
         value = format_value(audit.singularity.value, 3)

@@ -58,7 +58,7 @@ def test_a_row_over_both_kinds_of_joints_stays_in_si(calm_table):
     table = with_cell(calm_table, "velocity", 400, 0, 0.9)
     found = audit(table, made_arm(limits=limits))
     (finding,) = [f for f in found.findings if f.level == "exceedance" and f.quantity == "velocity"]
-    assert "shaft: velocity 18.4" in finding.text and finding.text.count("(SI)") == 2
+    assert "shaft: velocity 18.5" in finding.text and finding.text.count("(SI)") == 2
     assert as_json(found)["coupled"][0]["velocity"]["unit"] == "SI"
 
 
