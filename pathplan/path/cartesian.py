@@ -21,6 +21,8 @@ from pathplan.task.model import Step, Target, Task
 
 __all__ = ["CartesianPath", "Finding", "Leg", "cartesian_path", "tool_frames", "tool_of"]
 
+NO_MOTION_TEXT = "the arm already is at this target, the step has no motion"
+
 
 @dataclass(frozen=True)
 class Finding:
@@ -107,7 +109,7 @@ def cartesian_path(task: Task) -> CartesianPath:
             pose = pose if step.target is None else _target_pose(task, step, tool)
             continue
         if segment.length[0] < NO_MOTION:
-            findings.append(Finding(step.index, "the arm already is at this target, the step has no motion"))
+            findings.append(Finding(step.index, NO_MOTION_TEXT))
             legs.append(Leg(step, "none", pose, pose))
             continue
         legs.append(Leg(step, "cartesian", pose, end, segment=len(parts)))

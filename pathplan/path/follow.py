@@ -20,6 +20,7 @@ from pathplan.path.refusals import limit_text, place_text, singularity
 from pathplan.path.taskpath import TaskPath
 from pathplan.path.tracking import track
 from pathplan.task.model import Task
+from pathplan.task.places import check_positions
 
 __all__ = ["follow_task"]
 
@@ -42,6 +43,7 @@ def follow_task(task: Task) -> TaskPath:
         A target is out of reach, or no branch can follow a step; the message names step, share, pose and
         reason, and `data` holds step, share, pose, joint, limit, singular, best.
     """
+    _check_given_joints(task)
     path = cartesian_path(task)
     frames = tool_frames(path)
     states = candidate_states(path, frames)
@@ -74,6 +76,14 @@ def follow_task(task: Task) -> TaskPath:
         _bar(layout, choice, span, barred_legs, barred_states)
     assert refusal is not None
     raise refusal
+
+
+def _check_given_joints(task: Task) -> None:
+    """Refuse a start or a target given as a joint vector outside the position limits."""
+    check_positions(task.start, task.arm, f"{task.file.name if task.file else task.title}: start")
+    for step in task.steps:
+        if step.target is not None and step.target.joints is not None:
+            check_positions(step.target.joints, task.arm, step.where)
 
 
 def _bar(layout: Layout, choice: Choice, span: int, barred_legs: set[tuple[int, int]], barred_states: set[int]) -> None:

@@ -273,6 +273,7 @@ def _segment(
         turn=turn[None] * per,
         rotation=start[None, :3, :3],
         length=np.array([length]),
-        path_length=np.array([distance]),
-        angle=np.array([angle]),
+        # What rounding left of a motion is none, so that nobody measures a corner along it.
+        path_length=np.array([distance if distance > NO_MOTION * arm_length else 0.0]),
+        angle=np.array([angle if angle > NO_MOTION else 0.0]),
     )

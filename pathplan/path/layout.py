@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from pathplan.arm.kinematics import joint_derivatives
 from pathplan.errors import InputError
 from pathplan.path.blends import asked_sizes, revolute_joints, used_sizes
-from pathplan.path.cartesian import CartesianPath, Finding
+from pathplan.path.cartesian import NO_MOTION_TEXT, CartesianPath, Finding
 from pathplan.path.corners import REVERSAL, fit_into_steps
 from pathplan.path.geometry import Index, poses_of, spatial_twists
 from pathplan.path.joint import Array
@@ -76,7 +76,12 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
         worst = next(j for j, junction in enumerate(junctions) if junction.blend is not None)
         raise InputError(f"{junctions[worst].step.where}: blend: the corner does not come to lie within its region")
     used = used_sizes(motions, [junction.blend for junction in junctions], delta)
-    findings = []
+    moving = set(motions.leg.tolist())
+    findings = [
+        Finding(leg.step.index, NO_MOTION_TEXT)
+        for i, leg in enumerate(path.legs)
+        if leg.kind == "joint" and i not in moving
+    ]
     for j, junction in enumerate(junctions):
         junction.size = float(delta[j])
         if junction.blend is not None and used[j] < junction.blend.value * (1 - 1e-6):

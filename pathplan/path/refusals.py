@@ -180,7 +180,7 @@ def _outcome(
     if stop == len(s):
         asked = entry.step.configuration
         words = _words(asked) if asked else "the joint positions asked"
-        return outcome(length, f"it does not arrive with {words}", q[-1])
+        return outcome(length, f"it arrives, but not with {words}", q[-1])
     before = max(stop - 1, 0)
     if reached[stop]:
         text, singular = singularity(arm, q[_nearer(arm, q, before, stop)])

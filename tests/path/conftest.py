@@ -1,4 +1,4 @@
-"""Arms and tasks that the tests of this room draw from, and what every finished path must hold, judged independently."""
+"""Arms and tasks that the tests of this room draw from, and what every finished path must hold."""
 
 from __future__ import annotations
 
@@ -120,7 +120,9 @@ def check_path(path: TaskPath, dense: int = 10) -> None:
             left, right = (joint_path(inner, order, side=side) for side in ("left", "right"))
             size = np.abs(joint_path(joint_path.breaks, order)).max() + 1.0
             assert np.abs(left - right).max(initial=0.0) <= 1e-9 * size
-        s = np.concatenate([np.linspace(a, b, dense + 2) for a, b in zip(joint_path.breaks, joint_path.breaks[1:], strict=False)])
+        s = np.concatenate(
+            [np.linspace(a, b, dense + 2) for a, b in zip(joint_path.breaks, joint_path.breaks[1:], strict=False)]
+        )
         q = joint_path(s)
         rows = q @ arm.limits.matrix.T
         assert (rows >= arm.limits.position[:, 0] - 2e-9).all()
@@ -151,7 +153,11 @@ def check_corners(path: TaskPath) -> None:
         if corner.region == "length":
             away = np.linalg.norm(reached[:, :3, 3] - corner.pose[:3, 3], axis=1).max()
             assert away <= corner.used * (1 + 1e-5) + 1e-6
-        elif corner.region == "angle" and stretch.programmed([corner.s_from])[1][0] and stretch.programmed([corner.s_to])[1][0]:
+        elif (
+            corner.region == "angle"
+            and stretch.programmed([corner.s_from])[1][0]
+            and stretch.programmed([corner.s_to])[1][0]
+        ):
             turned = rotation_angle(reached[:, :3, :3], np.tile(corner.pose[:3, :3], (len(s), 1, 1))).max()
             assert turned <= corner.used * (1 + 1e-5) + 1e-6
 
