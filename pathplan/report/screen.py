@@ -13,6 +13,7 @@ from pathplan.units import format_quantity, format_value
 
 __all__ = ["CAUTIONS", "WIDTH", "audit_blocks", "audit_screen", "verdict"]
 
+PACING_WIDTH = 46
 MOST_STEPS = 12  # lines of steps shown; the rest is in --json
 MOST_FINDINGS = 20
 CAUTIONS = (
@@ -145,14 +146,19 @@ def _steps(audit: Audit) -> Iterator[str]:
             if speed is not None and speed.asked is not None:
                 cells[-1] = f"{format_value(1e3 * speed.reached)} of {format_value(1e3 * speed.asked)} mm/s"
         table.append(cells)
-    yield from aligned(table, [6, 16, 12, 46, 22], left=(1, 3, 4))
+    yield from aligned(table, [6, 16, 12, PACING_WIDTH, 22], left=(1, 3, 4))
     if len(audit.pacing) > MOST_STEPS:
         yield f"... and {len(audit.pacing) - MOST_STEPS} shorter steps, all of them in --json"
 
 
 def _pacing_text(step: StepPacing) -> str:
-    shown_parts = [_part_text(part) for part in step.parts[:3]]
-    return ", ".join(shown_parts) + (", ..." if len(step.parts) > 3 else "")
+    """The largest parts, as many as fit whole; what rounds to nothing is left out."""
+    parts = [_part_text(part) for part in step.parts if part.part >= 0.005]
+    for count in range(len(parts), 1, -1):
+        text = ", ".join(parts[:count]) + (", ..." if count < len(parts) else "")
+        if len(text) <= PACING_WIDTH:
+            return text
+    return ", ".join(parts[:1]) + (", ..." if len(parts) > 1 else "")
 
 
 def _part_text(part: Pacing) -> str:
