@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from pathplan.planning import Plan
     from pathplan.task import Step
 
-__all__ = ["plan_screen"]
+__all__ = ["plan_headline", "plan_screen"]
 
 MOST_STEPS = 40  # rows shown; the rest is in --json
 MOST_MARKS = 20
@@ -40,9 +40,14 @@ def plan_screen(plan: Plan) -> str:
     return "\n\n".join("\n".join(block) for block in map(list, blocks) if block)
 
 
+def plan_headline(plan: Plan) -> str:
+    """Title and verdict in one line."""
+    return fit(printable(plan.task.title), f": {verdict(plan.audit)}")
+
+
 def _head(plan: Plan) -> Iterator[str]:
     task, arm = plan.task, plan.task.arm
-    yield fit(printable(task.title), f": {verdict(plan.audit)}")
+    yield plan_headline(plan)
     parts = [f"arm {arm.name}", f"tool {arm.tool.name}"]
     parts += [f"payload {arm.payload.name}"] if arm.payload is not None else []
     parts += [f"pace {format_quantity(task.pace, 'ratio')}"] if task.pace != 1 else []

@@ -1,0 +1,451 @@
+"""The command line: arguments in, a call into the library, its answer on the screen. Computes nothing itself.
+
+Exit status: 0 within limits; 1 a limit is broken, a task can't be followed or the work can't be finished; 2 bad
+input; 70 an error of our own; 130 ended by Ctrl-C. Errors are one line each on the standard error stream.
+"""
+
+from __future__ import annotations
+
+import argparse
+import contextlib
+import dataclasses
+import os
+import sys
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, NoReturn, TextIO
+
+from pathplan.errors import InputError, PathplanError
+
+if TYPE_CHECKING:
+    from pathplan.planning import Plan
+    from pathplan.report.judged import Judged
+    from pathplan.task import Task
+
+__all__ = ["main"]
+
+REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
+OUR_ERROR, INTERRUPTED = 70, 130  # sysexits.h; 128 + SIGINT, as shells count
+
+ABOUT = """\
+From tool poses to an audited, synchronized joint table at the controller's cycle."""
+STATUS = """\
+exit status: 0 within limits; 1 a limit is broken or a step can't be followed; 2 bad input;
+             70 an error of pathplan's own; 130 ended by Ctrl-C
+
+A plan is no safety function. Prove it at reduced speed first (--reduced-speed); clearance is not
+checked; the risk assessment, the local codes and licensed practice apply."""
+EXAMPLES = """\
+examples:
+  pathplan plan pick.toml                      plan the task, show what it takes, write pick.csv
+  pathplan audit pick.csv --arm glazer6.toml   judge a table against the limits of an arm
+  pathplan export pick.csv -o pick.npz         write a table as another kind of file
+  pathplan plan --help                         more on one command, with examples
+
+"""
+PLAN = """\
+Plan a task: path, branch, near time-optimal timing within every joint's limits, rows at the cycle.
+Writes TASK's name + .csv into the current folder, and the audit beside it (.audit.json).
+A plan that breaks a limit writes its audit but no table."""
+PLAN_EXAMPLES = """\
+examples:
+  pathplan plan examples/glazer6-pick-and-place.toml
+      plan, show what it takes, write glazer6-pick-and-place.csv and glazer6-pick-and-place.audit.json
+  pathplan plan pick.toml --reduced-speed -o slow/pick.csv
+      the tool at no more than 250 mm/s (ISO 10218-1), to prove the plan on the arm
+  pathplan plan pick.toml --pace "50 %" -o pick.csv -o pick.npz
+      the whole motion at half speed, as two kinds of file
+  pathplan plan pick.toml --no-table --json
+      a dry run for scripts: one JSON document, nothing written
+
+"""
+AUDIT = """\
+Judge a motion against the limits of its arm: position, velocity, acceleration, jerk and torque of
+every joint. A task (.toml) is planned first; a table (.csv, .npz) is read. Nothing is written."""
+AUDIT_EXAMPLES = """\
+examples:
+  pathplan audit pick.toml
+      plan the task and show the audit
+  pathplan audit pick.csv --arm robots/glazer6.toml --tool cup
+      judge a table against an arm; without --arm the arm file that the table names is taken from beside it
+  pathplan audit pick.csv --arm robots/glazer6.toml --quiet && echo within limits
+
+"""
+EXPORT = """\
+Write a table as another kind of file (.csv: mm and deg; .npz: SI, exact), or plan a task and write it.
+A table is judged against its arm (--arm, or the arm file it names if that lies beside it) before it is
+written. Without an arm it is converted as it is, and the screen says so."""
+EXPORT_EXAMPLES = """\
+examples:
+  pathplan export pick.csv -o pick.npz --arm robots/glazer6.toml
+  pathplan export pick.toml -o pick.csv -o pick.npz
+
+"""
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run a command line (default: this process's) and return its exit status. Raises nothing."""
+    try:
+        try:
+            args, unknown = _parser().parse_known_args(argv)
+            if unknown:
+                raise InputError(f"unknown arguments: {' '.join(unknown)} (see {args.prog} --help)")
+            return int(args.run(args))
+        finally:
+            _flush(sys.stdout)
+    except SystemExit as done:  # --help
+        return int(done.code or 0)
+    except KeyboardInterrupt:
+        return INTERRUPTED
+    except PathplanError as error:
+        for line in getattr(error, "problems", None) or (str(error),):
+            _complain(line)
+        return error.exit_status
+    except Exception as error:
+        if os.environ.get("PATHPLAN_DEBUG"):
+            import traceback
+
+            traceback.print_exc()
+        what = f"{type(error).__name__}: {error}" if str(error) else type(error).__name__
+        _complain(f"internal error: {what} (please report; PATHPLAN_DEBUG=1 shows the traceback)")
+        return OUR_ERROR
+
+
+class _Parser(argparse.ArgumentParser):
+    """argparse with errors as everywhere here: one line, no usage before it."""
+
+    def __init__(self, **options: Any) -> None:
+        options.setdefault("formatter_class", _formatter)
+        super().__init__(allow_abbrev=False, **options)
+
+    def error(self, message: str) -> NoReturn:
+        raise InputError(f"{message} (see {self.prog} --help)")
+
+
+def _formatter(prog: str) -> argparse.HelpFormatter:
+    width = min(100, max(60, _columns()))
+    return argparse.RawDescriptionHelpFormatter(prog, width=width, max_help_position=28)
+
+
+def _columns() -> int:
+    import shutil
+
+    return shutil.get_terminal_size((100, 24)).columns
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = _Parser(prog="pathplan", description=ABOUT, epilog=EXAMPLES + STATUS)
+    parser.add_argument("--version", action="store_true", help="show the version and end")
+    parser.set_defaults(run=_no_command, prog="pathplan")
+    commands = parser.add_subparsers(metavar="COMMAND", title="commands", prog="pathplan")
+
+    def command(name: str, run: Any, about: str, examples: str, summary: str) -> _Parser:
+        added: _Parser = commands.add_parser(name, help=summary, description=about, epilog=examples + STATUS)
+        added.set_defaults(run=run, prog=added.prog)
+        return added
+
+    plan = command("plan", _run_plan, PLAN, PLAN_EXAMPLES, "plan a task, audit it, write its table")
+    plan.add_argument("file", metavar="TASK", help="task file (.toml)")
+    plan.add_argument("-o", dest="output", metavar="FILE", action="append", default=[],
+                      help="table to write (.csv or .npz); may be repeated")  # fmt: skip
+    plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
+    _planning_options(plan)
+    _writing_options(plan)
+    _screen_options(plan)
+
+    audit = command("audit", _run_audit, AUDIT, AUDIT_EXAMPLES, "judge a task's plan, or a table")
+    audit.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table (.csv, .npz)")
+    _planning_options(audit)
+    _arm_options(audit)
+    _screen_options(audit)
+
+    export = command("export", _run_export, EXPORT, EXPORT_EXAMPLES, "write another kind of file")
+    export.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table (.csv, .npz)")
+    export.add_argument("-o", dest="output", metavar="FILE", action="append", required=True,
+                        help="file to write (.csv or .npz); may be repeated")  # fmt: skip
+    _planning_options(export)
+    _arm_options(export)
+    _writing_options(export)
+    _screen_options(export)
+    return parser
+
+
+def _planning_options(parser: argparse.ArgumentParser) -> None:
+    group = parser.add_argument_group("how a task is planned")
+    speed = group.add_mutually_exclusive_group()
+    speed.add_argument("--speed", metavar="SPEED", help='cap the tool speed of the whole task, "250 mm/s"')
+    speed.add_argument("--reduced-speed", action="store_true",
+                       help="cap the tool speed at 250 mm/s (ISO 10218-1)")  # fmt: skip
+    group.add_argument("--pace", metavar="SHARE",
+                       help='slow the whole motion in time, "50 %%": speeds by it, accelerations by its square, '
+                       "jerks by its cube")  # fmt: skip
+    group.add_argument("--cycle", metavar="TIME", help='the controller\'s cycle in place of the task\'s, "2 ms"')
+
+
+def _arm_options(parser: argparse.ArgumentParser) -> None:
+    group = parser.add_argument_group("what a table is judged against")
+    group.add_argument("--arm", metavar="ARM", help="arm file (.toml)")
+    group.add_argument("--tool", metavar="NAME", help="tool of the arm that is carried")
+
+
+def _writing_options(parser: argparse.ArgumentParser) -> None:
+    group = parser.add_argument_group("writing")
+    group.add_argument("--overwrite", action="store_true",
+                       help="replace files even if they are no earlier output of the same task")  # fmt: skip
+    group.add_argument("--write-anyway", action="store_true",
+                       help="write a table that breaks limits; its header says so")  # fmt: skip
+
+
+def _screen_options(parser: argparse.ArgumentParser) -> None:
+    group = parser.add_argument_group("screen").add_mutually_exclusive_group()
+    group.add_argument("--json", action="store_true", help="one JSON document in place of the screen")
+    group.add_argument("--quiet", action="store_true", help="nothing but errors")
+
+
+# Commands
+
+
+def _no_command(args: argparse.Namespace) -> int:
+    if not args.version:
+        raise InputError("expected a command: plan, audit or export (see pathplan --help)")
+    _print(f"pathplan {_version()}")
+    return 0
+
+
+def _run_plan(args: argparse.Namespace) -> int:
+    if args.no_table and args.output:
+        raise InputError("argument -o: not allowed with argument --no-table (see pathplan plan --help)")
+    names = args.output or [f"{Path(args.file).stem}.csv"]
+    return _plan_and_write(args, [] if args.no_table else names)
+
+
+def _run_audit(args: argparse.Namespace) -> int:
+    if not _is_table(args):
+        return _plan_and_write(args, [])
+    judged = _judged(args)
+    if judged.arm is None:
+        raise InputError(judged.notes[0])
+    _show_judged(args, judged, None)
+    return _status(args.file, judged.breaks, "")
+
+
+def _run_export(args: argparse.Namespace) -> int:
+    if not _is_table(args):
+        return _plan_and_write(args, args.output)
+    from pathplan import write_table
+    from pathplan.report.outputs import check_outputs, marked
+
+    judged = _judged(args)
+    outputs = [Path(name) for name in args.output]
+    check_outputs(outputs, None, judged.table.meta, overwrite=args.overwrite)
+    for output in outputs:
+        if output.exists() and output.samefile(args.file):
+            raise InputError.at(str(output), "is the table that is read: choose another name")
+    table = marked(judged.table) if judged.breaks else judged.table
+    written = [] if judged.breaks and not args.write_anyway else outputs
+    for output in written:
+        write_table(table, output, overwrite=args.overwrite)
+    _show_judged(args, judged, written)
+    return _status(args.file, judged.breaks, "" if written else ": not written")
+
+
+# Tasks
+
+
+def _task(args: argparse.Namespace) -> Task:
+    """The task of a file with what the command line changes of it."""
+    from pathplan import load_task
+    from pathplan.task.load import CYCLES
+
+    for option in ("arm", "tool"):
+        if getattr(args, option, None) is not None:
+            raise InputError(f"argument --{option}: only for a table, a task names its own")
+    changes: dict[str, Any] = {}
+    speed = REDUCED_SPEED if args.reduced_speed else _quantity(args.speed, "speed", "--speed")
+    if speed is not None and speed <= 0:
+        raise _refused("--speed", 'a speed above zero such as "250 mm/s"', args.speed)
+    pace = _quantity(args.pace, "ratio", "--pace")
+    if pace is not None:
+        if not 0 < pace <= 1:
+            raise _refused("--pace", 'more than 0 % and at most 100 %, such as "50 %"', args.pace)
+        changes["pace"] = pace
+    cycle = _quantity(args.cycle, "time", "--cycle")
+    if cycle is not None:
+        if not CYCLES[0] <= cycle <= CYCLES[1]:
+            raise _refused("--cycle", "a time from 50 us to 1 s", args.cycle)
+        changes["cycle"] = cycle
+    task = load_task(args.file)
+    if speed is not None:  # the task's own cap stays where it is the lower
+        changes["speed"] = speed if task.speed is None else min(speed, task.speed)
+    return dataclasses.replace(task, **changes)
+
+
+def _quantity(text: str | None, dimension: str, option: str) -> float | None:
+    """An option in SI. A bare number is in the unit of task files: mm/s, s."""
+    from pathplan.units import parse_quantity
+
+    if text is None:
+        return None
+    with contextlib.suppress(ValueError):
+        if dimension != "ratio":  # 50 could be meant as 50 % or as 50 times
+            return parse_quantity(float(text), dimension, option)
+    return parse_quantity(text, dimension, option)
+
+
+def _refused(option: str, expected: str, got: str) -> InputError:
+    from pathplan.units import toml_text
+
+    return InputError.at(option, f"expected {expected}, got {toml_text(got)}")
+
+
+def _plan_and_write(args: argparse.Namespace, names: Sequence[str]) -> int:
+    """Plan, audit, write tables and the audit beside the first; without names, nothing."""
+    import pathplan
+    from pathplan.report.outputs import WHOLE, audit_name, check_outputs, write_plan
+    from pathplan.report.plan_data import plan_as_dict
+    from pathplan.report.progress import Progress
+
+    task = _task(args)
+    overwrite, anyway = getattr(args, "overwrite", False), getattr(args, "write_anyway", False)
+    outputs = [Path(name) for name in names]
+    audit_file = audit_name(outputs[0]) if outputs else None
+    meta = {"task": task.title, "task_file": Path(args.file).name}
+    check_outputs(outputs, audit_file, meta, overwrite=overwrite)
+    left = [output for output in outputs if output.exists()]
+    with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
+        plan = pathplan.plan(task, progress=tell)
+        _check_rows(plan, args.file)
+        tell("audit", 0, 1)
+        if plan.ticks < WHOLE:
+            plan.table  # noqa: B018  # evaluated once, then kept for the audit and the files
+        tables = outputs if plan.audit.passed or anyway else []
+        files = {"tables": list(map(str, tables)), "audit": None if audit_file is None else str(audit_file)}
+        document = {"pathplan": _version(), **plan_as_dict(plan), "files": files}
+        if audit_file is not None:
+            write_plan(plan, tables, audit_file, document, overwrite=overwrite, tell=tell)
+    if args.json:
+        _print(_json(document))
+    elif not args.quiet:
+        _print(_plan_text(args, plan, tables, audit_file))
+    if plan.audit.passed:
+        return 0
+    more = ": no table written" if outputs and not tables else ""
+    if more and left:
+        more += f", {', '.join(map(str, left))} is of an earlier plan"
+    from pathplan.report.judged import first_exceedance
+
+    return _status(args.file, first_exceedance(plan.audit), more)
+
+
+def _check_rows(plan: Plan, file: str) -> None:
+    from pathplan.export.kinds import MAX_ROWS
+
+    if plan.ticks >= MAX_ROWS:
+        complaint = f"would take {plan.ticks + 1} rows, more than {MAX_ROWS}: slow it less or lengthen the cycle"
+        raise InputError.at(file, complaint)
+
+
+def _plan_text(args: argparse.Namespace, plan: Plan, tables: Sequence[Path], audit_file: Path | None) -> str:
+    from pathplan.report.judged import written_line
+    from pathplan.report.plan_screen import plan_headline, plan_screen
+    from pathplan.report.screen import audit_screen
+
+    if args.run is _run_audit:
+        return audit_screen(plan.audit)
+    written = written_line(tables, plan.ticks + 1, audit_file)
+    if args.run is _run_plan:
+        return f"{plan_screen(plan)}\n\n{written}"
+    return f"{plan_headline(plan)}\n{written}"
+
+
+# Tables
+
+
+def _is_table(args: argparse.Namespace) -> bool:
+    from pathplan.export.kinds import kinds
+
+    if Path(args.file).suffix.lower() not in kinds():
+        return False
+    for option in ("speed", "reduced_speed", "pace", "cycle"):
+        if getattr(args, option):
+            raise InputError(f"argument --{option.replace('_', '-')}: only for a task, {args.file} is a table")
+    return True
+
+
+def _judged(args: argparse.Namespace) -> Judged:
+    from pathplan.report.judged import judge_file
+    from pathplan.report.progress import Progress
+
+    with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
+        tell("audit", 0, 1)
+        return judge_file(args.file, args.arm, args.tool)
+
+
+def _show_judged(args: argparse.Namespace, judged: Judged, written: Sequence[Path] | None) -> None:
+    from pathplan.report.judged import judged_as_dict, judged_screen
+
+    if args.json:
+        _print(_json({"pathplan": _version(), **judged_as_dict(judged, written or ())}))
+    elif not args.quiet:
+        _print(judged_screen(judged, written))
+
+
+# Streams
+
+
+def _status(file: str, breaks: str, more: str) -> int:
+    """1, with one line of why, for what breaks a limit."""
+    if breaks:
+        _complain(f"{file}: breaks limits: {breaks}{more}")
+    return int(bool(breaks))
+
+
+def _version() -> str:
+    from pathplan.planning import versions
+
+    return versions()["pathplan"]
+
+
+def _json(document: Mapping[str, Any]) -> str:
+    from pathplan.report.outputs import json_text
+
+    return json_text(document)
+
+
+def _print(text: str) -> None:
+    """Text on the standard output, in whatever its encoding takes. Raises PathplanError if it can't be written."""
+    out = sys.stdout
+    if out is None:  # closed by whoever started us
+        return
+    encoding = getattr(out, "encoding", None) or "utf-8"
+    try:
+        out.write(text.encode(encoding, "backslashreplace").decode(encoding) + "\n")
+    except BrokenPipeError:
+        _drop(out)
+    _flush(out)
+
+
+def _flush(out: TextIO | None) -> None:
+    try:
+        if out is not None:
+            out.flush()
+    except BrokenPipeError:
+        _drop(out)
+    except OSError as error:
+        _drop(out)
+        raise PathplanError(f"standard output: can't be written: {error.strerror}") from None
+
+
+def _drop(out: TextIO | None) -> None:
+    """The reader is gone, as `| head` goes: what is still to be written leads nowhere; the verdict stands."""
+    with contextlib.suppress(OSError, ValueError, AttributeError):
+        nowhere = os.open(os.devnull, os.O_WRONLY)
+        os.dup2(nowhere, out.fileno())  # type: ignore[union-attr]
+        os.close(nowhere)
+
+
+def _complain(line: str) -> None:
+    """One line on the standard error stream, whatever the message holds."""
+    shown = "".join(char if char.isprintable() else "?" for char in line)
+    with contextlib.suppress(OSError, ValueError, AttributeError):
+        print(f"pathplan: {shown}", file=sys.stderr, flush=True)
