@@ -1,0 +1,120 @@
+"""Random task files for an arm, and a judge of joint tables that shares nothing with our own audit.
+
+Run as a script to judge many: python -m tests.random_tasks 10000
+"""
+
+from __future__ import annotations
+
+import sys
+from collections import Counter
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+import pathplan
+
+ROOT = Path(__file__).parent.parent
+ARMS = ("loader4", "sorter4", "glazer6")
+Array = NDArray[np.float64]
+
+
+def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
+    """TOML text of a task of 1 to 7 motions: joint steps, lines and arcs with blends, waits, caps."""
+    low, high = np.array([joint.position for joint in arm.joints]).T
+    middle, half = (low + high) / 2, (high - low) / 2
+    unit = np.array([1000.0 if joint.kind == "prismatic" else 180 / np.pi for joint in arm.joints])
+    q = middle + half * rng.uniform(-0.7, 0.7, arm.n)
+    lines = [
+        'title = "random"',
+        f'arm = "{(ROOT / "robots" / (arm.name + ".toml")).as_posix()}"',
+        f'cycle = "{rng.choice([1, 2, 4, 8])} ms"',
+        f"start = {_numbers(q * unit)}",
+    ]
+    if rng.random() < 0.3:
+        lines.append(f'speed = "{rng.uniform(50, 800):.0f} mm/s"')
+    count = int(rng.integers(1, 8))
+    for i in range(count):
+        lines.append("\n[[step]]")
+        motion = rng.choice(["joint", "joint", "line", "line", "line", "arc"])
+        far = 0.8 if motion == "joint" else 0.12
+        before = q
+        q = np.clip(q + half * rng.uniform(-far, far, arm.n), low + 0.05 * half, high - 0.05 * half)
+        lines.append(f'motion = "{motion}"')
+        if motion == "joint" and rng.random() < 0.5:
+            lines.append(f"to = {{ joints = {_numbers(q * unit)} }}")
+        elif motion == "arc":
+            q = before  # an arc in the horizontal plane the tool is in
+            centre = arm.forward(q)[:3, 3] * 1000 + [*rng.uniform(-60, 60, 2), 0.0]
+            lines.append(f"centre = {{ xyz = {_numbers(centre)} }}")
+            lines.append("axis = [0, 0, 1]")
+            lines.append(f"angle = {rng.uniform(-360, 360):.2f}")
+        else:
+            lines.append(f"to = {_pose(arm.forward(q))}")
+        if i < count - 1 and rng.random() < 0.6:
+            size = rng.choice([f'"{rng.uniform(1, 60):.1f} mm"', f'"{rng.uniform(1, 50):.1f} %"', '"5 deg"'])
+            lines.append(f"blend = {size}")
+        elif rng.random() < 0.2:
+            lines.append('mark = "here"')
+            lines.append('\n[[step]]\nwait = "0.0505 s"')
+    return "\n".join(lines) + "\n"
+
+
+def _numbers(values: Array) -> str:
+    return "[" + ", ".join(repr(float(value)) for value in values) + "]"
+
+
+def _pose(matrix: Array) -> str:
+    from scipy.spatial.transform import Rotation
+
+    x, y, z, w = Rotation.from_matrix(matrix[:3, :3]).as_quat()
+    return f"{{ xyz = {_numbers(matrix[:3, 3] * 1000)}, quat = {_numbers(np.array([w, x, y, z]))} }}"
+
+
+def broken_limits(arm: pathplan.Arm, position: Array, cycle: float) -> list[str]:
+    """What finite differences of a column of positions (N, n) break, padded with rest; SI."""
+    padded = np.concatenate([np.repeat(position[:1], 4, axis=0), position, np.repeat(position[-1:], 4, axis=0)])
+    broken = []
+    for k, joint in enumerate(arm.joints):
+        rounding = np.spacing(np.abs(position[:, k]).max())
+        if position[:, k].min() < joint.position[0] - 1e-9 or position[:, k].max() > joint.position[1] + 1e-9:
+            broken.append(f"{joint.name} position")
+        for n, limit in enumerate((joint.velocity, joint.acceleration, joint.jerk), start=1):
+            if np.abs(np.diff(padded[:, k], n)).max() > (limit * (1 + 1e-6)) * cycle**n + 8 * rounding:
+                broken.append(f"{joint.name} derivative {n}")
+    return broken
+
+
+def judge(text: str, folder: Path) -> str:
+    """'planned' or 'refused'; raises AssertionError with the task when a table breaks a limit."""
+    file = folder / "random.toml"
+    file.write_text(text)
+    try:
+        plan = pathplan.plan(pathplan.load_task(file))
+    except pathplan.PathplanError as error:
+        assert str(error) and "\n" not in str(error), text
+        return "refused"
+    broken = broken_limits(plan.task.arm, plan.table.position, plan.task.cycle)
+    assert not broken, f"{broken}\n{text}"
+    assert plan.bound <= plan.duration + 1e-12, text
+    return "planned"
+
+
+def main(count: int, seed: int = 0) -> None:
+    """Judge `count` random tasks over the arms and print what became of them."""
+    from tempfile import TemporaryDirectory
+
+    seen: Counter[str] = Counter()
+    with TemporaryDirectory() as folder:
+        arms = [pathplan.load_arm(ROOT / "robots" / f"{name}.toml") for name in ARMS]
+        for i in range(count):
+            arm = arms[i % len(arms)]
+            rng = np.random.default_rng([seed, i])
+            seen[f"{arm.name} {judge(random_task(arm, rng), Path(folder))}"] += 1
+            if (i + 1) % 500 == 0:
+                print(i + 1, dict(seen), flush=True)
+    print(dict(seen))
+
+
+if __name__ == "__main__":
+    main(int(sys.argv[1]), int(sys.argv[2]) if len(sys.argv) > 2 else 0)
