@@ -6,7 +6,7 @@ from decimal import Decimal
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from pathplan.errors import InputError
@@ -100,6 +100,7 @@ def test_tick_times_print_cleanly():
     assert tick_times([300], 1 / 300)[0] == 1.0
 
 
+@settings(deadline=None)
 @given(
     st.integers(0, 10**7),
     st.sampled_from("0.001 0.004 0.0025 0.012 0.1 0.000125 0.007 0.0333 2.5 0.000062".split()),
@@ -108,6 +109,7 @@ def test_tick_times_are_the_nearest_floats_to_the_decimal_product(tick, cycle):
     assert tick_times([tick], float(cycle))[0] == float(tick * Decimal(cycle))
 
 
+@settings(deadline=None)
 @given(st.integers(0, 10**7), st.floats(1e-6, 10.0))
 def test_tick_times_of_any_cycle_are_within_one_ulp_of_the_product(tick, cycle):
     exact = tick * cycle

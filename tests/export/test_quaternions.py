@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.spatial.transform import Rotation
 
@@ -22,6 +22,7 @@ def test_agrees_with_scipy_up_to_sign():
     assert np.abs(rotations_of(ours) - back).max() < 2e-15
 
 
+@settings(deadline=None)
 @given(st.tuples(*[st.floats(-1, 1)] * 3).filter(lambda v: np.linalg.norm(v) > 0.1), st.floats(-1e-7, 1e-7))
 def test_near_half_turns_lose_nothing(axis, more):
     axis = np.array(axis) / np.linalg.norm(axis)
