@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from pathplan.arm import Arm, load_arm
-    from pathplan.audit import Audit, audit
+    from pathplan.auditing import Audit, audit
     from pathplan.errors import InputError, LimitError, PathplanError, UnreachableError
     from pathplan.export import read_table, write_table
     from pathplan.path import JointPath
@@ -26,7 +26,7 @@ if TYPE_CHECKING:
 
 _HOMES = {
     "Arm": "arm",
-    "Audit": "audit",
+    "Audit": "auditing",
     "InputError": "errors",
     "JointPath": "path.joint",
     "JointTable": "table",
@@ -36,7 +36,7 @@ _HOMES = {
     "Task": "task",
     "Timing": "timing",
     "UnreachableError": "errors",
-    "audit": "audit",
+    "audit": "auditing",
     "load_arm": "arm",
     "load_task": "task",
     "lower_bound": "timing",

@@ -16,7 +16,7 @@ from pathplan.task.model import Task
 
 if TYPE_CHECKING:
     from pathplan.arm import Arm
-    from pathplan.audit import Audit, Evidence
+    from pathplan.auditing import Audit, Evidence
     from pathplan.path.taskpath import Stretch, TaskPath
     from pathplan.timeline import Part
     from pathplan.timing.motion import Motion
@@ -110,7 +110,7 @@ class Plan:
     @cached_property
     def audit(self) -> Audit:
         """The audit of the whole table with this plan behind it."""
-        from pathplan.audit import audit
+        from pathplan.auditing import audit
 
         table = self.__dict__.get("table")
         return audit(self.rows() if table is None else table, self.task.arm, plan=self)
@@ -156,7 +156,7 @@ class Plan:
 
     def evidence(self) -> Evidence:
         """Path deviation at the rows and midway between them, and the trajectory's peaks 20 times denser."""
-        from pathplan.audit import Evidence, worse_deviation, worse_peaks
+        from pathplan.auditing import Evidence, worse_deviation, worse_peaks
 
         at_rows = midway = None
         peaks: tuple[Any, ...] = ()
@@ -169,7 +169,7 @@ class Plan:
         return Evidence(at_rows, midway, peaks)
 
     def _deviation(self, part: Part, shift: float) -> Any:
-        from pathplan.audit import path_deviation, worse_deviation
+        from pathplan.auditing import path_deviation, worse_deviation
         from pathplan.timeline import evaluate
 
         assert part.stretch is not None and part.timing is not None
@@ -186,7 +186,7 @@ class Plan:
         return worst
 
     def _dense_peaks(self, part: Part) -> Any:
-        from pathplan.audit import joint_peaks, worse_peaks
+        from pathplan.auditing import joint_peaks, worse_peaks
         from pathplan.timeline import step_at
 
         assert part.stretch is not None and part.timing is not None

@@ -6,8 +6,8 @@ import math
 import textwrap
 from collections.abc import Iterable, Iterator
 
-from pathplan.audit import Audit, Deviation, JointAudit, Pacing, Peak, StepPacing
-from pathplan.audit.words import dimension_of, shown
+from pathplan.auditing import Audit, Deviation, JointAudit, Pacing, Peak, StepPacing
+from pathplan.auditing.words import dimension_of, shown
 from pathplan.report.text import WIDTH, aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value
 

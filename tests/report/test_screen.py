@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from pathplan.arm import Tool
-from pathplan.audit import Deviation, StepSpeed, audit
+from pathplan.auditing import Deviation, StepSpeed, audit
 from pathplan.report import CAUTIONS, audit_screen
 from tests.audit.cast import made_arm, move_table, with_cell
 

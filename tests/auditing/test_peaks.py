@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 from pathplan.arm import Tool
-from pathplan.audit import audit
+from pathplan.auditing import audit
 from pathplan.errors import InputError
 from pathplan.table import JointTable, tick_times
 from tests.audit.cast import jerk_phases, made_arm, move_table, with_cell

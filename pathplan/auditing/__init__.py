@@ -1,8 +1,8 @@
 """The audit: what a joint table uses of every limit, where, and whether it may be run."""
 
-from pathplan.audit.judge import audit
-from pathplan.audit.model import Audit, Finding, JointAudit, Pacing, Peak, Singularity, StepPacing
-from pathplan.audit.planned import (
+from pathplan.auditing.judge import audit
+from pathplan.auditing.model import Audit, Finding, JointAudit, Pacing, Peak, Singularity, StepPacing
+from pathplan.auditing.planned import (
     CornerUse,
     Deviation,
     Evidence,

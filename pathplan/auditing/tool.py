@@ -10,8 +10,8 @@ from numpy.typing import NDArray
 
 from pathplan.arm import Arm
 from pathplan.arm.kinematics import smallest_singular_value
-from pathplan.audit.model import Singularity
-from pathplan.audit.shares import Array, Rows
+from pathplan.auditing.model import Singularity
+from pathplan.auditing.shares import Array, Rows
 
 __all__ = ["nearest_singularity", "step_caps", "tool_acceleration", "tool_speed"]
 

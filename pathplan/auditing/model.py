@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Literal
 
 if TYPE_CHECKING:
-    from pathplan.audit.planned import CornerUse, Deviation, StepSpeed
+    from pathplan.auditing.planned import CornerUse, Deviation, StepSpeed
 
 __all__ = [
     "QUANTITIES",
@@ -51,7 +51,7 @@ class JointAudit:
     """One joint, or one row that limits a sum of joints. None where there is no limit or nothing to judge.
 
     `differences` holds the same for velocity, acceleration and jerk as the drive sees them: finite
-    differences of the written positions, see `pathplan.audit.differences`.
+    differences of the written positions, see `pathplan.auditing.differences`.
     """
 
     name: str
@@ -154,7 +154,7 @@ class Audit:
         return not any(finding.level == "exceedance" for finding in self.findings)
 
     def to_dict(self) -> dict[str, Any]:
-        """Plain types for JSON, in mm and deg, steps and rows counted from 1. See `pathplan.audit.plain`."""
-        from pathplan.audit.plain import audit_as_dict
+        """Plain types for JSON, in mm and deg, steps and rows counted from 1. See `pathplan.auditing.plain`."""
+        from pathplan.auditing.plain import audit_as_dict
 
         return audit_as_dict(self)

@@ -10,8 +10,8 @@ from hypothesis import strategies as st
 
 from pathplan.arm import Tool, load_arm
 from pathplan.arm.kinematics import smallest_singular_value
-from pathplan.audit.shares import Rows
-from pathplan.audit.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
+from pathplan.auditing.shares import Rows
+from pathplan.auditing.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
 from tests.audit.cast import made_arm
 
 

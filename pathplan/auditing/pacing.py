@@ -7,8 +7,8 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.audit.model import Pacing, StepPacing
-from pathplan.audit.shares import Array
+from pathplan.auditing.model import Pacing, StepPacing
+from pathplan.auditing.shares import Array
 from pathplan.table import tick_times
 
 __all__ = ["PACING", "StepClock"]

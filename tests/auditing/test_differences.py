@@ -7,8 +7,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from pathplan.audit import audit
-from pathplan.audit.differences import divided_differences
+from pathplan.auditing import audit
+from pathplan.auditing.differences import divided_differences
 from pathplan.table import JointTable, tick_times
 from tests.audit.cast import jerk_phases, move_table, with_cell
 

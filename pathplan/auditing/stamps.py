@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.audit.exceedances import clock
-from pathplan.audit.model import Finding
-from pathplan.audit.shares import Array
+from pathplan.auditing.exceedances import clock
+from pathplan.auditing.model import Finding
+from pathplan.auditing.shares import Array
 from pathplan.table import JointTable
 
 __all__ = ["FINITE_COLUMNS", "Stamps", "finite_rows", "found_cycle"]

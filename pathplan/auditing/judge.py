@@ -10,11 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
-from pathplan.audit.differences import ORDERS, Differences
-from pathplan.audit.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
-from pathplan.audit.model import QUANTITIES, TOLERANCE, Audit, Finding, JointAudit, Peak, Singularity
-from pathplan.audit.pacing import StepClock
-from pathplan.audit.planned import (
+from pathplan.auditing.differences import ORDERS, Differences
+from pathplan.auditing.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
+from pathplan.auditing.model import QUANTITIES, TOLERANCE, Audit, Finding, JointAudit, Peak, Singularity
+from pathplan.auditing.pacing import StepClock
+from pathplan.auditing.planned import (
     Evidence,
     Planned,
     corners_of,
@@ -23,7 +23,7 @@ from pathplan.audit.planned import (
     tool_speed_by_step,
     worse_peaks,
 )
-from pathplan.audit.shares import (
+from pathplan.auditing.shares import (
     Array,
     Rows,
     larger,
@@ -34,9 +34,9 @@ from pathplan.audit.shares import (
     rows_of,
     shares_of,
 )
-from pathplan.audit.stamps import Stamps, finite_rows, found_cycle
-from pathplan.audit.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
-from pathplan.audit.words import dimension_of, shown
+from pathplan.auditing.stamps import Stamps, finite_rows, found_cycle
+from pathplan.auditing.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
+from pathplan.auditing.words import dimension_of, shown
 from pathplan.errors import InputError
 from pathplan.export.columns import DEGREES, MILLIMETRES
 from pathplan.table import JointTable
@@ -53,7 +53,7 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
 
     Judged are: position, velocity, acceleration, jerk and torque of every joint and of every row that
     limits a sum of joints; tool speed and acceleration against their caps; the finite differences of
-    the written positions, which are what the drive sees (rule: `pathplan.audit.differences`); rest in
+    the written positions, which are what the drive sees (rule: `pathplan.auditing.differences`); rest in
     the first and last row; times that repeat, go back or leave the grid of the cycle; values that are
     not finite. A value may pass its limit by 1e-6 of it, a position by 1e-9 rad or m. Without columns
     of velocity, acceleration and jerk the differences stand for them, and `measured` says so. Reported

@@ -8,9 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.audit.model import TOLERANCE, Finding, Peak
-from pathplan.audit.shares import Array, Rows
-from pathplan.audit.words import apart, dimension_of, shown
+from pathplan.auditing.model import TOLERANCE, Finding, Peak
+from pathplan.auditing.shares import Array, Rows
+from pathplan.auditing.words import apart, dimension_of, shown
 
 __all__ = ["SLACK", "Exceedance", "clock", "exceedances", "finding_of", "gather"]
 

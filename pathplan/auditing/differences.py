@@ -22,9 +22,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.audit.exceedances import Exceedance, Key, exceedances, gather
-from pathplan.audit.model import TOLERANCE, Peak
-from pathplan.audit.shares import Array, Rows, larger, peaks_of, rows_of
+from pathplan.auditing.exceedances import Exceedance, Key, exceedances, gather
+from pathplan.auditing.model import TOLERANCE, Peak
+from pathplan.auditing.shares import Array, Rows, larger, peaks_of, rows_of
 
 __all__ = ["ORDERS", "Differences", "divided_differences"]
 

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
-from pathplan.audit.model import Peak
+from pathplan.auditing.model import Peak
 from pathplan.errors import InputError
 
 __all__ = [

@@ -6,9 +6,9 @@ import math
 from dataclasses import asdict
 from typing import Any
 
-from pathplan.audit.model import Audit, Finding, JointAudit, Peak
-from pathplan.audit.planned import CornerUse, Deviation
-from pathplan.audit.words import dimension_of
+from pathplan.auditing.model import Audit, Finding, JointAudit, Peak
+from pathplan.auditing.planned import CornerUse, Deviation
+from pathplan.auditing.words import dimension_of
 from pathplan.units import DIMENSIONS, to_screen
 
 __all__ = ["audit_as_dict"]

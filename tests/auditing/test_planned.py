@@ -8,7 +8,7 @@ import pytest
 from scipy.spatial.transform import Rotation
 
 from pathplan.arm import Tool
-from pathplan.audit import (
+from pathplan.auditing import (
     Evidence,
     audit,
     joint_peaks,
@@ -17,7 +17,7 @@ from pathplan.audit import (
     worse_deviation,
     worse_peaks,
 )
-from pathplan.audit.model import QUANTITIES
+from pathplan.auditing.model import QUANTITIES
 from tests.audit.cast import made_arm
 
 

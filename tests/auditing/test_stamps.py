@@ -5,7 +5,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from pathplan.audit import audit
+from pathplan.auditing import audit
 from tests.audit.cast import with_cell
 
 

@@ -10,8 +10,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
-from pathplan.audit.model import QUANTITIES, JointAudit
-from pathplan.audit.shares import Array, Rows, larger, limit_rows, peaks_of, row_kinds, rows_of
+from pathplan.auditing.model import QUANTITIES, JointAudit
+from pathplan.auditing.shares import Array, Rows, larger, limit_rows, peaks_of, row_kinds, rows_of
 
 __all__ = [
     "CornerUse",

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from pathplan.arm import Tool
-from pathplan.audit import CornerUse, Deviation, audit
+from pathplan.auditing import CornerUse, Deviation, audit
 from tests.audit.cast import made_arm, with_cell
 
 
