@@ -1,6 +1,10 @@
 """`python -m pathplan`: the command line."""
 
-from pathplan.cli import main
-
 if __name__ == "__main__":
-    raise SystemExit(main())
+    try:
+        from pathplan.cli import main
+
+        status = main()
+    except KeyboardInterrupt:  # so early that main had not begun
+        status = 130
+    raise SystemExit(status)

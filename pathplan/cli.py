@@ -11,7 +11,7 @@ import contextlib
 import dataclasses
 import os
 import sys
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn, TextIO
 
@@ -418,29 +418,33 @@ def _print(text: str) -> None:
     if out is None:  # closed by whoever started us
         return
     encoding = getattr(out, "encoding", None) or "utf-8"
-    try:
+    with _leaving(out):
         out.write(text.encode(encoding, "backslashreplace").decode(encoding) + "\n")
-    except BrokenPipeError:
-        _drop(out)
-    _flush(out)
+        out.flush()
 
 
 def _flush(out: TextIO | None) -> None:
-    try:
-        if out is not None:
+    if out is not None:
+        with _leaving(out):
             out.flush()
-    except BrokenPipeError:
+
+
+@contextlib.contextmanager
+def _leaving(out: TextIO) -> Iterator[None]:
+    try:
+        yield
+    except BrokenPipeError:  # the reader is gone, as `| head` goes: the verdict stands without it
         _drop(out)
     except OSError as error:
         _drop(out)
         raise PathplanError(f"standard output: can't be written: {error.strerror}") from None
 
 
-def _drop(out: TextIO | None) -> None:
-    """The reader is gone, as `| head` goes: what is still to be written leads nowhere; the verdict stands."""
-    with contextlib.suppress(OSError, ValueError, AttributeError):
+def _drop(out: TextIO) -> None:
+    """What is still to be written to the stream leads nowhere."""
+    with contextlib.suppress(OSError, ValueError):
         nowhere = os.open(os.devnull, os.O_WRONLY)
-        os.dup2(nowhere, out.fileno())  # type: ignore[union-attr]
+        os.dup2(nowhere, out.fileno())
         os.close(nowhere)
 
 

@@ -14,7 +14,7 @@ from pathplan.table import JointTable
 
 if TYPE_CHECKING:
     from pathplan.arm import Arm
-    from pathplan.audit import Audit
+    from pathplan.auditing import Audit
 
 __all__ = ["Judged", "first_exceedance", "judge_file", "judged_as_dict", "judged_screen", "written_line"]
 

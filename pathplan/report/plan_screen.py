@@ -12,7 +12,7 @@ from pathplan.report.text import aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value
 
 if TYPE_CHECKING:
-    from pathplan.audit import CornerUse, StepPacing, StepSpeed
+    from pathplan.auditing import CornerUse, StepPacing, StepSpeed
     from pathplan.planning import Plan
     from pathplan.task import Step
 

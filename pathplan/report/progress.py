@@ -61,10 +61,11 @@ class Progress:
     def line(self, seconds: float) -> str:
         """The line as it stands after so many seconds."""
         what, done, total = self.state
-        part = min(max(done / total, 0.0), 1.0) if total > 0 else 1.0
-        filled = round(part * WIDTH)
+        if done <= 0 or done >= total:  # how far it has come is not known
+            return f"{what} ...  {seconds:.0f} s"
+        filled = round(done / total * WIDTH)
         bar = "#" * filled + "." * (WIDTH - filled)
-        return f"{what:<7} [{bar}] {100 * part:3.0f} %  {seconds:.0f} s"
+        return f"{what:<7} [{bar}] {100 * done / total:3.0f} %  {seconds:.0f} s"
 
     def _put(self, text: str) -> None:
         """Put a text in place of the one before, shortened so that a narrow terminal does not wrap it."""

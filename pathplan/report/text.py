@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 
-from pathplan.audit.exceedances import clock
+from pathplan.auditing.exceedances import clock
 
 __all__ = ["WIDTH", "aligned", "clock", "fit", "printable"]
 
