@@ -5,7 +5,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from tests.audit.cast import made_arm, move_table
+from tests.auditing.cast import made_arm, move_table
 
 
 @pytest.fixture(scope="session")

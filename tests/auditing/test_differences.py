@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 from pathplan.auditing import audit
 from pathplan.auditing.differences import divided_differences
 from pathplan.table import JointTable, tick_times
-from tests.audit.cast import jerk_phases, move_table, with_cell
+from tests.auditing.cast import jerk_phases, move_table, with_cell
 
 KINDS = ("prismatic", "revolute", "revolute")
 

@@ -10,7 +10,7 @@ from pathplan.arm import Tool
 from pathplan.auditing import audit
 from pathplan.errors import InputError
 from pathplan.table import JointTable, tick_times
-from tests.audit.cast import jerk_phases, made_arm, move_table, with_cell
+from tests.auditing.cast import jerk_phases, made_arm, move_table, with_cell
 
 
 def exceedances(table, arm, **more):

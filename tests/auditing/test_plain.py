@@ -9,7 +9,7 @@ import pytest
 
 from pathplan.arm import Tool
 from pathplan.auditing import CornerUse, Deviation, audit
-from tests.audit.cast import made_arm, with_cell
+from tests.auditing.cast import made_arm, with_cell
 
 
 def as_json(found):

@@ -18,7 +18,7 @@ from pathplan.auditing import (
     worse_peaks,
 )
 from pathplan.auditing.model import QUANTITIES
-from tests.audit.cast import made_arm
+from tests.auditing.cast import made_arm
 
 
 def moved_poses(angles, shifts):

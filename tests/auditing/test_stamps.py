@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from pathplan.auditing import audit
-from tests.audit.cast import with_cell
+from tests.auditing.cast import with_cell
 
 
 def exceedances(table, arm):

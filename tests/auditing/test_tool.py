@@ -12,7 +12,7 @@ from pathplan.arm import Tool, load_arm
 from pathplan.arm.kinematics import smallest_singular_value
 from pathplan.auditing.shares import Rows
 from pathplan.auditing.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
-from tests.audit.cast import made_arm
+from tests.auditing.cast import made_arm
 
 
 @settings(deadline=None, max_examples=40)

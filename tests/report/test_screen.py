@@ -8,7 +8,7 @@ import pytest
 from pathplan.arm import Tool
 from pathplan.auditing import Deviation, StepSpeed, audit
 from pathplan.report import CAUTIONS, audit_screen
-from tests.audit.cast import made_arm, move_table, with_cell
+from tests.auditing.cast import made_arm, move_table, with_cell
 
 
 @pytest.fixture(scope="module")
