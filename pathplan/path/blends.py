@@ -155,29 +155,35 @@ def _first_reach(measure: Callable[[Index, Array], Array], length: Array, value:
 
 
 def used_sizes(motions: Motions, blends: Sequence[Blend | None], delta: Array) -> Array:
-    """(M - 1,) how far corners of sizes delta reach, in the unit each was asked in: the larger of both
-    sides.
-    """
+    """(M - 1,) how far corners of sizes delta reach, in the unit each was asked in: the larger of both sides."""
     used = np.zeros(len(blends))
+    sampled: list[_Sampled] = []
     for j, blend in enumerate(blends):
         if blend is None:
             continue
         if blend.kind == "share":
             used[j] = delta[j] / min(motions.length[j], motions.length[j + 1])
             continue
-        reach = [_reach_on_side(motions, j, side, blend, float(delta[j])) for side in (0, 1)]
-        used[j] = min(max(reach), blend.value)
+        for side in (0, 1):
+            segment = motions.segment[j + side]
+            if segment >= 0 and (blend.kind == "length" or _is_pair(motions, j)):
+                reach = float(_extents(motions, blend)[segment] * delta[j] / motions.length[j + side])
+                used[j] = max(used[j], min(reach, blend.value))
+            else:
+                sampled.append(_Sampled(j, side, blend.kind == "length", blend.value))
+    for entry, reach in zip(sampled, _sampled_reach(motions, sampled, delta), strict=True):
+        used[entry.junction] = max(used[entry.junction], min(reach, entry.value))
     return used
 
 
-def _reach_on_side(motions: Motions, j: int, side: int, blend: Blend, delta: float) -> float:
+def _sampled_reach(motions: Motions, wanted: Sequence[_Sampled], delta: Array) -> Array:
+    """(N,) largest measured distance from the corner on sides that corners of sizes delta take."""
+    if not wanted:
+        return np.zeros(0)
+    j = np.repeat([entry.junction for entry in wanted], _SAMPLES)
+    side = np.repeat([entry.side for entry in wanted], _SAMPLES)
+    as_length = np.repeat([entry.as_length for entry in wanted], _SAMPLES)
+    x = delta[j] * np.tile(np.linspace(0.0, 1.0, _SAMPLES), len(wanted))
     m = j + side
-    segment = motions.segment[m]
-    if segment >= 0 and (blend.kind == "length" or _is_pair(motions, j)):
-        return float(_extents(motions, blend)[segment] * delta / motions.length[m])
-    x = np.linspace(0.0, delta, _SAMPLES)
-    rows = np.full(_SAMPLES, m)
-    q = motions.joint_points(rows, motions.length[m] - x if side == 0 else x)
-    corner = np.tile(motions.end[j], (_SAMPLES, 1))
-    as_length = np.full(_SAMPLES, blend.kind == "length")
-    return float(_apart(motions, rows, q, corner, as_length).max())
+    q = motions.joint_points(m, np.where(side == 0, motions.length[m] - x, x))
+    return _apart(motions, m, q, motions.end[j], as_length).reshape(-1, _SAMPLES).max(axis=1)

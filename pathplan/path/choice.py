@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from pathplan.arm import Arm
 from pathplan.errors import PathplanError
 from pathplan.path.cartesian import CartesianPath
-from pathplan.path.geometry import Index
+from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
 from pathplan.path.refusals import no_branch_follows, no_state_asked
 from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, endless_joints, expand, judged_rows, matching
@@ -188,34 +188,63 @@ def choose(
     parents: list[Index] = []
     for i, leg in enumerate(path.legs):
         here, there = states.of(i), states.of(i + 1)
+        alive = np.flatnonzero(np.isfinite(cost)) + here.start
         if leg.kind == "cartesian":
-            rows = ways.row[here]
-            reach, spent, free = ways.end[rows], ways.time[rows], ways.free[rows]
+            leaving = alive[ways.free[ways.row[alive]]]
+            rows = ways.row[leaving]
+            same = _same(ways.end[rows], states.q[there], endless)
+            step = np.where(same, ways.time[rows][:, None], np.inf)
         else:
-            reach, spent, free = states.q[here], np.zeros(len(cost)), np.ones(len(cost), dtype=bool)
-        change = states.q[there] - reach[:, None]
-        if endless.any():
-            change -= turns_between(change, endless)
-        if leg.kind == "joint":
-            step = travel_time(arm, change)
-        else:
-            arrives = (np.abs(change) < SAME_STATE).all(axis=2)
-            step = np.where(arrives & free[:, None], spent[:, None], np.inf)
+            leaving = alive
+            if leg.kind == "joint":
+                step = _joint_step_times(arm, states.q[leaving], states.q[there], endless)
+            else:
+                step = np.where(_same(states.q[leaving], states.q[there], endless), 0.0, np.inf)
         for barred_leg, state in barred_legs:
             if barred_leg == i:
-                step[state - here.start] = np.inf
+                step[leaving == state] = np.inf
         for state in barred_states:
             if there.start <= state < there.stop:
                 step[:, state - there.start] = np.inf
-        total = cost[:, None] + step
-        parent = total.argmin(axis=0)
-        reached = total[parent, np.arange(len(parent))]
-        if not np.isfinite(reached).any():
-            alive = np.flatnonzero(np.isfinite(cost)) + here.start
+        step += cost[leaving - here.start, None]
+        if not np.isfinite(step).any():
             raise no_branch_follows(path, i, states, alive)
-        parents.append(parent.astype(np.intp))
-        cost = reached
+        parent = step.argmin(axis=0)
+        cost = step[parent, np.arange(len(parent))]
+        parents.append((leaving[parent] - here.start).astype(np.intp))
     return _trace(path, states, tracks, ways, parents, cost)
+
+
+def _same(reached: Array, q: Array, endless: Mask) -> Mask:
+    """(A, B): joint vectors reached (A, n) are the states q (B, n), whole turns of endless joints aside."""
+    same = np.zeros((len(reached), len(q)), dtype=bool)
+    a, b = np.nonzero(np.ones_like(same))
+    for j in range(q.shape[1]):  # each joint leaves fewer pairs to look at
+        change = q[b, j] - reached[a, j]
+        if endless[j]:
+            change -= 2.0 * np.pi * np.round(change / (2.0 * np.pi))
+        near = np.abs(change) < SAME_STATE
+        a, b = a[near], b[near]
+    same[a, b] = True
+    return same
+
+
+def _joint_step_times(arm: Arm, start: Array, end: Array, endless: Mask) -> Array:
+    """(A, B) times of joint steps from each of start (A, n) to each of end (B, n); endless joints by nearest turn.
+
+    The same as `travel_time`, row by row: with hundreds of turn equivalents the whole array would be large.
+    """
+    if endless.any():
+        change = end - start[:, None]
+        return travel_time(arm, change - turns_between(change, endless))
+    time = np.zeros((len(start), len(end)))
+    for row, (low, high) in zip(arm.limits.matrix, arm.limits.velocity, strict=True):
+        if np.isinf(low) and np.isinf(high):
+            continue
+        change = (end @ row) - (start @ row)[:, None]
+        np.maximum(time, change * (1.0 / high), out=time)
+        np.maximum(time, change * (1.0 / low), out=time)
+    return time
 
 
 def _trace(
