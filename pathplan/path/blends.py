@@ -17,12 +17,12 @@ from pathplan.path.motions import Motions
 from pathplan.task.model import Blend, Step
 from pathplan.units import format_quantity
 
-__all__ = ["asked_sizes", "revolute_joints", "used_sizes"]
+__all__ = ["asked_sizes", "distances", "used_sizes"]
 
 _SAMPLES = 33  # of a step, where something is measured along it
 
 
-def revolute_joints(motions: Motions) -> list[int]:
+def _revolute(motions: Motions) -> list[int]:
     return [i for i, joint in enumerate(motions.arm.joints) if joint.kind == "revolute"]
 
 
@@ -84,7 +84,7 @@ def _size_on_side(motions: Motions, j: int, side: int, blend: Blend) -> float | 
     if segment < 0:
         if blend.kind == "length":
             return None
-        rate = float(np.abs(motions.direction[m, revolute_joints(motions)]).max(initial=0.0))
+        rate = float(np.abs(motions.direction[m, _revolute(motions)]).max(initial=0.0))
         return blend.value / rate if rate > 1e-12 else np.inf
     if blend.kind == "angle" and not _is_pair(motions, j):
         return None
@@ -115,16 +115,16 @@ def _sampled_sizes(motions: Motions, wanted: Sequence[_Sampled]) -> Array:
 
     def measure(rows: Index, x: Array) -> Array:
         q = motions.joint_points(m[rows], np.where(side[rows] == 0, length[rows] - x, x))
-        return _apart(motions, m[rows], q, corner[rows], as_length[rows])
+        return distances(motions, m[rows], q, corner[rows], as_length[rows])
 
     return _first_reach(measure, length, np.array([entry.value for entry in wanted]))
 
 
-def _apart(motions: Motions, m: Index, q: Array, corner: Array, as_length: Mask) -> Array:
+def distances(motions: Motions, m: Index, q: Array, corner: Array, as_length: Mask) -> Array:
     """(N,) distance of joint vectors from corners (N, n): m at the tool centre point, or rad of a
     revolute joint.
     """
-    out = np.abs((q - corner)[:, revolute_joints(motions)]).max(axis=1, initial=0.0)
+    out = np.abs((q - corner)[:, _revolute(motions)]).max(axis=1, initial=0.0)
     if as_length.any():
         at = m[as_length]
         moved = motions.tool_points(at, q[as_length]) - motions.tool_points(at, corner[as_length])
@@ -186,4 +186,4 @@ def _sampled_reach(motions: Motions, wanted: Sequence[_Sampled], delta: Array) -
     x = delta[j] * np.tile(np.linspace(0.0, 1.0, _SAMPLES), len(wanted))
     m = j + side
     q = motions.joint_points(m, np.where(side == 0, motions.length[m] - x, x))
-    return _apart(motions, m, q, motions.end[j], as_length).reshape(-1, _SAMPLES).max(axis=1)
+    return distances(motions, m, q, motions.end[j], as_length).reshape(-1, _SAMPLES).max(axis=1)

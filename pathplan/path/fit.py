@@ -27,7 +27,7 @@ ANGLE = 2e-7  # rad
 # Share of the largest q', q'', q''' on a piece by which it may miss the exact one.
 DERIVATIVE = (1e-5, 1e-4, 1e-3)
 FIRST_WIDTH = 0.5  # path parameter of a piece to start with
-_HALVINGS = 14
+_HALVINGS = 16
 _NEAR = 1e-2  # rad, or arm lengths: nearer than this to its pose a piece is a fair guess of the joints
 # Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second) and near 0.32 and 0.68
 # (first, third).

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from pathplan.arm.kinematics import joint_derivatives
 from pathplan.errors import InputError
-from pathplan.path.blends import asked_sizes, revolute_joints, used_sizes
+from pathplan.path.blends import asked_sizes, distances, used_sizes
 from pathplan.path.cartesian import NO_MOTION_TEXT, CartesianPath, Finding
 from pathplan.path.corners import REVERSAL, fit_into_steps
 from pathplan.path.geometry import Index, poses_of, spatial_twists
@@ -70,11 +70,12 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
     for _ in range(_ROUNDS):
         delta = fit_into_steps(asked, motions.length) if len(asked) else asked
         spans, _ = _spans(motions, delta)
-        if not _adjust(spans, junctions, delta, asked):
+        changed = _adjust(spans, junctions, delta, asked)
+        if not changed:
             break
     else:
-        worst = next(j for j, junction in enumerate(junctions) if junction.blend is not None)
-        raise InputError(f"{junctions[worst].step.where}: blend: the corner does not come to lie within its region")
+        step = junctions[changed[0]].step
+        raise InputError(f"{step.where}: blend: the corner does not come to lie within its region")
     used = used_sizes(motions, [junction.blend for junction in junctions], delta)
     moving = set(motions.leg.tolist())
     findings = [
@@ -216,77 +217,69 @@ def _spans(motions: Motions, delta: Array) -> tuple[Spans, Index]:
     return spans, number[keep].astype(np.intp)
 
 
-def _adjust(spans: Spans, junctions: list[Junction], delta: Array, asked: Array) -> bool:
-    """Drop corners that nearly stand still, shrink those that leave their region; True if anything
-    changed in `asked`.
+def _adjust(spans: Spans, junctions: list[Junction], delta: Array, asked: Array) -> list[int]:
+    """Drop corners that nearly stand still, shrink those that leave their region; the junctions whose `asked`
+    was changed.
     """
     corners = np.flatnonzero(spans.corner)
     if not len(corners):
-        return False
+        return []
     u = np.linspace(0.0, 2.0, _SAMPLES)
     i = np.repeat(corners, _SAMPLES)
     at = (spans.delta[corners][:, None] * u).ravel()
-    changed = False
-    slow = _slowest(spans, i, at).reshape(-1, _SAMPLES)
-    excess = _excess(spans, junctions, i, at).reshape(-1, _SAMPLES).max(axis=1)
+    size, q = _tangents_and_joints(spans, i, at)
+    size = size.reshape(-1, _SAMPLES)
+    excess = _excess(spans, junctions, i, q).reshape(-1, _SAMPLES).max(axis=1)
+    changed = []
     for row, span in enumerate(corners):
         j = int(spans.before[span])
-        if slow[row].min() < np.sin(REVERSAL / 2) * max(slow[row, 0], slow[row, -1]):
+        if size[row].min() < np.sin(REVERSAL / 2) * max(size[row, 0], size[row, -1]):
             _reverse(junctions[j])
-            asked[j], changed = 0.0, True
+            asked[j] = 0.0
+            changed.append(j)
         elif excess[row] > 1 + _REGION_SLACK:
-            asked[j], changed = 0.99 * delta[j] / excess[row], True
+            asked[j] = 0.99 * delta[j] / excess[row]
+            changed.append(j)
     return changed
 
 
-def _slowest(spans: Spans, i: Index, at: Array) -> Array:
-    """(N,) size of the path's tangent, in the space it is blended in."""
-    size = np.empty(len(i))
+def _tangents_and_joints(spans: Spans, i: Index, at: Array) -> tuple[Array, Array]:
+    """Size of the path's tangent (N,) in the space it is blended in, and joint positions (N, n) where that is joint
+    space (NaN elsewhere).
+    """
+    arm = spans.motions.arm
+    size, q = np.empty(len(i)), np.full((len(i), arm.n), np.nan)
     known = spans.programmed()[i]
     if known.any():
         jets = spans.tool_jets(i[known], at[known])
-        size[known] = np.hypot(
-            np.linalg.norm(jets.position[1], axis=1) / spans.motions.arm.length,
-            np.linalg.norm(jets.turning[0], axis=1),
-        )
-    if (~known).any():
+        speed = np.linalg.norm(jets.position[1], axis=1) / arm.length
+        size[known] = np.hypot(speed, np.linalg.norm(jets.turning[0], axis=1))
+    if not known.all():
         rows, where = i[~known], at[~known]
-        rate = spans.joint_jets(rows, where)[1]
+        straight = spans.joint_jets(rows, where)
         mixed = spans.inverted()[rows]
         if mixed.any():
-            q = _cartesian_part(spans, rows[mixed], where[mixed])
-            twists = spatial_twists(spans.tool_jets(rows[mixed], where[mixed]))
-            rate[mixed] += joint_derivatives(spans.motions.arm, q, twists)[0][:, 0]
-        size[~known] = np.linalg.norm(rate * joint_weights(spans.motions.arm), axis=1)
-    return size
+            jets = spans.tool_jets(rows[mixed], where[mixed])
+            poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(rows[mixed])
+            inverse, _ = solve_near(arm, poses, spans.guess(rows[mixed], where[mixed]))
+            straight[0, mixed] += inverse
+            straight[1, mixed] += joint_derivatives(arm, inverse, spatial_twists(jets))[0][:, 0]
+        q[~known] = straight[0]
+        size[~known] = np.linalg.norm(straight[1] * joint_weights(arm), axis=1)
+    return size, q
 
 
-def _cartesian_part(spans: Spans, i: Index, at: Array) -> Array:
-    jets = spans.tool_jets(i, at)
-    poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(i)
-    q, _ = solve_near(spans.motions.arm, poses, spans.guess(i, at))
-    return q
-
-
-def _excess(spans: Spans, junctions: list[Junction], i: Index, at: Array) -> Array:
-    """(N,) distance from the corner over what its region allows, of corners in which a joint step takes
-    part; else 0.
+def _excess(spans: Spans, junctions: list[Junction], i: Index, q: Array) -> Array:
+    """(N,) distance from the corner over what its region allows, of corners in which a joint step takes part;
+    else 0.
     """
-    out = np.zeros(len(i))
     motions = spans.motions
-    kind = np.array([junction.blend.kind if junction.blend else "" for junction in junctions])[spans.before[i]]
-    value = np.array([junction.blend.value if junction.blend else 1.0 for junction in junctions])[spans.before[i]]
-    rows = np.flatnonzero(~spans.programmed()[i] & (kind != "share"))
-    if not len(rows):
-        return out
-    k, where = i[rows], at[rows]
-    q = spans.joint_jets(k, where)[0]
-    mixed = spans.inverted()[k]
-    if mixed.any():
-        q[mixed] += _cartesian_part(spans, k[mixed], where[mixed])
-    corner = motions.end[spans.before[k]]
-    turned = np.abs((q - corner)[:, revolute_joints(motions)]).max(axis=1, initial=0.0)
-    m = spans.before[k]
-    moved = np.linalg.norm(motions.tool_points(m, q) - motions.tool_points(m, corner), axis=1)
-    out[rows] = np.where(kind[rows] == "length", moved, turned) / value[rows]
+    kind = np.array([junction.blend.kind if junction.blend else "" for junction in junctions])
+    value = np.array([junction.blend.value if junction.blend else 1.0 for junction in junctions])
+    out = np.zeros(len(i))
+    j = spans.before[i]
+    rows = np.flatnonzero(~spans.programmed()[i] & (kind[j] != "share"))
+    if len(rows):
+        m = j[rows]
+        out[rows] = distances(motions, m, q[rows], motions.end[m], kind[m] == "length") / value[m]
     return out

@@ -30,7 +30,7 @@ __all__ = ["SINGULAR", "Obstacle", "Tracks", "track", "turns_between"]
 
 Mask = NDArray[np.bool_]
 
-SINGULAR = 1e-4  # smallest singular value below which a pose counts as singular
+SINGULAR = 3e-4  # smallest singular value below which a pose counts as singular
 SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
 FEWEST = 6  # intervals of a segment
 JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way

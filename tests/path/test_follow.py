@@ -344,6 +344,23 @@ def test_tool_change_moves_the_tool_centre_point_and_not_the_arm(cast) -> None:
     assert path.corners[0].reason == "the tool changes"
 
 
+def test_line_a_millimetre_from_a_wrist_singularity(cast) -> None:
+    """400 mm, axes 4 and 6 nearly in line in its middle: joint 4 turns nearly half round within a few millimetres."""
+    arm = cast.robot("glazer6")
+    middle = arm.forward(np.deg2rad([20, 10, 40, 0, 0, 0]))
+    a, b = middle.copy(), middle.copy()
+    a[:3, 3] += -0.2 * middle[:3, 0] + 0.001 * middle[:3, 1]
+    b[:3, 3] += +0.2 * middle[:3, 0] + 0.001 * middle[:3, 1]
+    answers = arm.inverse(a)
+    start = answers[np.argmin(np.abs(answers[:, [3, 5]]).sum(axis=1))]
+    path = follow_task(cast.task(arm, start, [cast.step("line", b)]))
+    cast.check_path(path)
+    q = path.stretches[0].path(np.linspace(0, path.stretches[0].path.length, 2000))
+    assert np.abs(q[-1, 3] - q[0, 3]) > np.deg2rad(150)
+    assert np.abs(np.sin(q[:, 4])).min() < 0.01
+    assert len(path.stretches[0].path.breaks) < 100
+
+
 def test_cartesian_path_needs_no_branch(cast) -> None:
     arm = cast.robot("glazer6")
     a, b = above(cast), cast.pose(9000, 0, 0)  # far out of reach
