@@ -50,7 +50,7 @@ A plan that breaks a limit writes its audit but no table."""
 PLAN_EXAMPLES = """\
 examples:
   pathplan plan examples/glazer6-pick-and-place.toml
-      plan, show what it takes, write glazer6-pick-and-place.csv and glazer6-pick-and-place.audit.json
+      plan, show what it takes, write glazer6-pick-and-place.csv and its audit beside it
   pathplan plan pick.toml --reduced-speed -o slow/pick.csv
       the tool at no more than 250 mm/s (ISO 10218-1), to prove the plan on the arm
   pathplan plan pick.toml --pace "50 %" -o pick.csv -o pick.npz
@@ -67,14 +67,14 @@ examples:
   pathplan audit pick.toml
       plan the task and show the audit
   pathplan audit pick.csv --arm robots/glazer6.toml --tool cup
-      judge a table against an arm; without --arm the arm file that the table names is taken from beside it
+      judge a table against an arm; without --arm the arm file that it names is taken from beside it
   pathplan audit pick.csv --arm robots/glazer6.toml --quiet && echo within limits
 
 """
 EXPORT = """\
-Write a table as another kind of file (.csv: mm and deg; .npz: SI, exact), or plan a task and write it.
-A table is judged against its arm (--arm, or the arm file it names if that lies beside it) before it is
-written. Without an arm it is converted as it is, and the screen says so."""
+Write a table as another kind of file (.csv: mm and deg; .npz: SI, exact), or plan a task and write
+its table. A table is judged against its arm first: that of --arm, or the arm file that it names if
+that lies beside it. Without an arm it is converted as it is, and the screen says so."""
 EXPORT_EXAMPLES = """\
 examples:
   pathplan export pick.csv -o pick.npz --arm robots/glazer6.toml
@@ -246,7 +246,7 @@ def _run_export(args: argparse.Namespace) -> int:
     for output in written:
         write_table(table, output, overwrite=args.overwrite)
     _show_judged(args, judged, written)
-    return _status(args.file, judged.breaks, "" if written else ": not written")
+    return _status(args.file, judged.breaks, ": written all the same" if written else ": not written")
 
 
 # Tasks
@@ -329,11 +329,12 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str]) -> int:
         _print(_plan_text(args, plan, tables, audit_file))
     if plan.audit.passed:
         return 0
-    more = ": no table written" if outputs and not tables else ""
-    if more and left:
-        more += f", {', '.join(map(str, left))} is of an earlier plan"
     from pathplan.report.judged import first_exceedance
 
+    more = ""
+    if outputs:
+        more = ": written all the same" if tables else ": no table written"
+        more += f", {', '.join(map(str, left))} is of an earlier plan" if left and not tables else ""
     return _status(args.file, first_exceedance(plan.audit), more)
 
 

@@ -8,6 +8,7 @@ from pathlib import Path, PurePath
 from typing import TYPE_CHECKING, Any
 
 import pathplan
+from pathplan.errors import InputError
 from pathplan.report.screen import audit_screen, verdict
 from pathplan.report.text import printable
 from pathplan.table import JointTable
@@ -46,7 +47,10 @@ def judge_file(file: str, arm_file: str | None, tool: str | None) -> Judged:
     audit = None
     if arm is not None:
         arm = _with_tool(arm, table, tool)
-        audit = pathplan.audit(table, arm)
+        try:
+            audit = pathplan.audit(table, arm)
+        except InputError as error:
+            raise InputError.at(file, str(error).removeprefix("table: ")) from None
     breaks = ""
     if audit is not None and not audit.passed:
         breaks = first_exceedance(audit)
