@@ -7,6 +7,7 @@ between can be followed exactly.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Literal
 
@@ -88,6 +89,7 @@ def cartesian_path(task: Task) -> CartesianPath:
     parts: list[Segments] = []
     findings: list[Finding] = []
     problems: list[str] = []
+    targets = _target_poses(task)
     flange_from_tool = task.arm.tool.flange_from_tool
     pose = task.arm.forward(task.start)
     for step in task.steps:
@@ -98,15 +100,15 @@ def cartesian_path(task: Task) -> CartesianPath:
             pose = pose @ np.linalg.solve(flange_from_tool, tool)
             flange_from_tool = tool
         if step.motion == "joint":
-            end = _target_pose(task, step, tool)
+            end = _given(targets, step)
             legs.append(Leg(step, "joint", pose, end))
             pose = end
             continue
         try:
-            segment, end = _segment(task, step, tool, pose)
+            segment, end = _segment(task, step, targets, pose)
         except (geometry.DegenerateArc, geometry.HalfTurn) as complaint:
             problems.append(f"{step.where}: {complaint}")
-            pose = pose if step.target is None else _target_pose(task, step, tool)
+            pose = targets.get(step.index, pose)
             continue
         if segment.length[0] < NO_MOTION:
             findings.append(Finding(step.index, NO_MOTION_TEXT))
@@ -122,7 +124,7 @@ def cartesian_path(task: Task) -> CartesianPath:
     return CartesianPath(task, tuple(legs), Segments.join(parts), tuple(findings))
 
 
-def _segment(task: Task, step: Step, tool: Array, start: Array) -> tuple[Segments, Array]:
+def _segment(task: Task, step: Step, targets: Mapping[int, Array], start: Array) -> tuple[Segments, Array]:
     """The segment of a line or arc, and the pose it ends at."""
     size = task.arm.length
     if step.target is None:
@@ -130,7 +132,7 @@ def _segment(task: Task, step: Step, tool: Array, start: Array) -> tuple[Segment
             raise InputError(f"{step.where}: expected a target, or centre, axis and angle of an arc")
         segment = geometry.arc_about(start, step.centre, step.axis, step.angle, size, along=step.along)
         return segment, segment.poses(np.array([0]), segment.length)[0]
-    end = _target_pose(task, step, tool)
+    end = _given(targets, step)
     if step.motion == "line":
         return geometry.line(start, end, size), end
     if step.via is None:
@@ -138,25 +140,39 @@ def _segment(task: Task, step: Step, tool: Array, start: Array) -> tuple[Segment
     return geometry.arc_through(start, step.via, end, size), end
 
 
-def _target_pose(task: Task, step: Step, tool: Array) -> Array:
-    """(4, 4) base_from_tool of a step's target with that step's tool."""
-    target = step.target
-    if target is None:
+def _given(targets: Mapping[int, Array], step: Step) -> Array:
+    if step.index not in targets:
         raise InputError(f"{step.where}: expected a target")
-    if target.joints is not None:
-        return task.arm.forward(target.joints) @ np.linalg.solve(task.arm.tool.flange_from_tool, tool)
-    carried = _carried_by(task, target)
-    if carried:
-        raise InputError(f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest")
-    pose = task.pose(target)
-    if task.arm.n >= 6:
-        return pose
-    swap = np.linalg.solve(tool, task.arm.tool.flange_from_tool)
-    branches = task.arm.inverse_batch((pose @ swap)[None])
-    if not branches.valid.any():
-        return pose  # refused later, where the branches are chosen and the reason is known
-    best = int(np.argmax(branches.valid[0]))
-    return task.arm.forward(branches.q[0, best]) @ np.linalg.inv(swap)
+    return targets[step.index]
+
+
+def _target_poses(task: Task) -> dict[int, Array]:
+    """base_from_tool (4, 4) of every target, with the tool of its step, by step index."""
+    own = task.arm.tool.flange_from_tool
+    poses: dict[int, Array] = {}
+    asked: list[int] = []  # those given as poses
+    for step in task.steps:
+        target = step.target
+        if target is None:
+            continue
+        if target.joints is not None:
+            tool = tool_of(task.arm, step.tool).flange_from_tool
+            poses[step.index] = task.arm.forward(target.joints) @ np.linalg.solve(own, tool)
+            continue
+        carried = _carried_by(task, target)
+        if carried:
+            raise InputError(f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest")
+        poses[step.index] = task.pose(target)
+        asked.append(step.index)
+    if task.arm.n < 6 and asked:
+        steps = {step.index: step for step in task.steps}
+        swap = np.array([np.linalg.solve(tool_of(task.arm, steps[i].tool).flange_from_tool, own) for i in asked])
+        branches = task.arm.inverse_batch(np.array([poses[i] for i in asked]) @ swap)
+        best = np.argmax(branches.valid, axis=1)
+        served = task.arm.forward(branches.q[np.arange(len(asked)), best]) @ np.linalg.inv(swap)
+        # What is not served is refused later, where the branches are chosen and the reason is known.
+        poses |= {i: served[row] for row, i in enumerate(asked) if branches.valid[row, best[row]]}
+    return poses
 
 
 def _carried_by(task: Task, target: Target) -> str | None:

@@ -12,7 +12,6 @@ from collections.abc import Set
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from pathplan.arm import Arm
 from pathplan.errors import PathplanError
@@ -39,7 +38,7 @@ class Routes:
     slot: Index
     turns: Array
     end: Array
-    free: NDArray[np.bool_]
+    free: Mask
     time: Array
 
 

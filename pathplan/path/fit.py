@@ -9,6 +9,7 @@ miss are halved, all of a level in one batch.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
@@ -29,24 +30,18 @@ DERIVATIVE = (1e-5, 1e-4, 1e-3)
 FIRST_WIDTH = 0.5  # path parameter of a piece to start with
 _HALVINGS = 16
 _NEAR = 1e-2  # rad, or arm lengths: nearer than this to its pose a piece is a fair guess of the joints
-# Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second) and near 0.32 and 0.68
-# (first, third).
+# Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second), near 0.32 and 0.68 (first, third).
 _CHECKED = np.array([0.32, 0.5, 0.68])
-# Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over
-# h^k.
+# Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over h^k.
 _ROUNDING = np.array([1e-13, 1e-12, 1e-11])
 
 
-@dataclass(frozen=True)
 class Trouble(Exception):
-    """A place where a span can't be followed with the branches chosen: span, position in it, joint
-    vector, and why.
-    """
+    """A place where a span can't be followed with the branches chosen: span, position in it, joint vector, and why."""
 
-    span: int
-    at: float
-    q: Array
-    kind: str  # "singular" | "reach"
+    def __init__(self, span: int, at: float, q: Array, kind: Literal["singular", "reach"]) -> None:
+        super().__init__(f"span {span} at {at:g}: {kind}")
+        self.span, self.at, self.q, self.kind = span, at, q, kind
 
 
 @dataclass(frozen=True, eq=False)

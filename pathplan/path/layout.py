@@ -7,14 +7,13 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 import numpy as np
-from numpy.typing import NDArray
 
 from pathplan.arm.kinematics import joint_derivatives
 from pathplan.errors import InputError
 from pathplan.path.blends import asked_sizes, distances, used_sizes
 from pathplan.path.cartesian import NO_MOTION_TEXT, CartesianPath, Finding
 from pathplan.path.corners import REVERSAL, fit_into_steps
-from pathplan.path.geometry import Index, poses_of, spatial_twists
+from pathplan.path.geometry import Index, Mask, poses_of, spatial_twists
 from pathplan.path.joint import Array
 from pathplan.path.motions import Motions
 from pathplan.path.newton import joint_weights, solve_near
@@ -32,18 +31,19 @@ _REGION_SLACK = 1e-6  # share of the region that rounding may take
 
 @dataclass
 class Junction:
-    """Two motions that follow one another: what was asked between them and what becomes of it."""
+    """Two motions that follow one another: what was asked between them and what becomes of it.
 
-    motion: int  # the incoming one
+    Filled in step by step while the corners are laid out, and left alone after.
+    """
+
     step: Step  # of the incoming motion
     blend: Blend | None  # asked; None where none is, or where it can't be kept
     reason: str  # why the arm stops, "" for a fly-by point
-    size: float = 0.0  # delta in use
     asked: str = ""  # as written
     notes: list[str] = field(default_factory=list)
 
     def stop(self, reason: str, note: str = "") -> None:
-        self.blend, self.reason, self.size = None, reason, 0.0
+        self.blend, self.reason = None, reason
         if note:
             self.notes.append(note)
 
@@ -84,7 +84,6 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
         if leg.kind == "joint" and i not in moving
     ]
     for j, junction in enumerate(junctions):
-        junction.size = float(delta[j])
         if junction.blend is not None and used[j] < junction.blend.value * (1 - 1e-6):
             shrunk = format_quantity(float(used[j]), _dimension(junction.blend))
             junction.notes.append(f"the blend shrinks from {junction.asked} to {shrunk}")
@@ -102,7 +101,7 @@ def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
     steps = path.task.steps
     step, following = path.legs[motions.leg[j]].step, path.legs[motions.leg[j + 1]].step
     between = steps[step.index + 1 : following.index]
-    junction = Junction(j, step, step.blend, "", asked=step.blend.text if step.blend else "")
+    junction = Junction(step, step.blend, "", asked=step.blend.text if step.blend else "")
     if any(other.motion == "wait" for other in between):
         reason = "wait"
     elif following.tool != step.tool or any(other.tool != step.tool for other in between):
@@ -121,7 +120,7 @@ def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
     return junction
 
 
-def _tangents(motions: Motions, m: Index, at_end: NDArray[np.bool_], joint_space: NDArray[np.bool_]) -> Array:
+def _tangents(motions: Motions, m: Index, at_end: Mask, joint_space: Mask) -> Array:
     """(N, max(6, n)) tangents of motions m at their end or start, in the space they are blended in,
     scaled without unit.
     """
@@ -199,8 +198,8 @@ def _note_stops_that_a_blend_would_save(motions: Motions, junctions: list[Juncti
 def _spans(motions: Motions, delta: Array) -> tuple[Spans, Index]:
     """Plain spans and corners in order, and the number of the stretch each belongs to."""
     count = len(motions)
-    left = np.concatenate([[0.0], delta])  # corner at the start of each motion
-    right = np.concatenate([delta, [0.0]])
+    left = np.concatenate([[0.0], delta])[:count]  # corner at the start of each motion
+    right = np.concatenate([delta, [0.0]])[:count]
     rest = motions.length - left - right
     rest[rest < 1e-12 * motions.length] = 0.0
     every = np.arange(count)
@@ -211,7 +210,7 @@ def _spans(motions: Motions, delta: Array) -> tuple[Spans, Index]:
     offset, size, length = np.zeros(2 * count), np.zeros(2 * count), np.zeros(2 * count)
     offset[::2], size[1::2] = left, right
     length[::2], length[1::2] = rest, 2 * right
-    number = np.repeat(np.concatenate([[0], np.cumsum(delta == 0)]), 2)
+    number = np.repeat(np.concatenate([[0], np.cumsum(delta == 0)])[:count], 2)
     keep = length > 0
     spans = Spans(motions, before[keep], after[keep], offset[keep], size[keep], length[keep])
     return spans, number[keep].astype(np.intp)

@@ -12,23 +12,20 @@ depend on the turns a motion starts with, so they are judged by start state in `
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Literal
 
 import numpy as np
-from numpy.typing import NDArray
 
 from pathplan.arm import Arm
 from pathplan.arm.kinematics import smallest_singular_value
-from pathplan.path.geometry import Index, Segments
+from pathplan.path.geometry import Index, Mask, Segments
 from pathplan.path.joint import Array
 from pathplan.path.newton import solve_near
 from pathplan.path.states import LIMIT_SLACK
 
-__all__ = ["SINGULAR", "Obstacle", "Tracks", "track", "turns_between"]
-
-Mask = NDArray[np.bool_]
+__all__ = ["SINGULAR", "Tracks", "track", "turns_between"]
 
 SINGULAR = 3e-4  # smallest singular value below which a pose counts as singular
 SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
@@ -36,7 +33,6 @@ FEWEST = 6  # intervals of a segment
 JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
 _BETWEEN = 3  # samples put between two
 _ROUNDS = 6  # of putting them: 2e-5 apart in the end, where a joint that moves by JUMP is as good as singular
-Obstacle = Literal["reach", "singular"]
 
 
 def turns_between(change: Array, revolute: Mask) -> Array:
@@ -158,7 +154,7 @@ def _unwrapped(q: Array, first: Index, segment: Index, revolute: Mask) -> Array:
     return np.asarray(q - (total - total[first][segment]))
 
 
-def _continued(arm: Arm, poses, segment: Index, s: Array, first: Index) -> Tracks:  # type: ignore[no-untyped-def]
+def _continued(arm: Arm, poses: Callable[[Index, Array], Array], segment: Index, s: Array, first: Index) -> Tracks:
     """As `track` for an arm without closed form: all answers at the start of a segment, continued by
     Newton steps.
     """
