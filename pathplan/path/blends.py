@@ -154,36 +154,21 @@ def _first_reach(measure: Callable[[Index, Array], Array], length: Array, value:
     return np.where(never, np.inf, low + part * (high - low))
 
 
-def used_sizes(motions: Motions, blends: Sequence[Blend | None], delta: Array) -> Array:
-    """(M - 1,) how far corners of sizes delta reach, in the unit each was asked in: the larger of both sides."""
+def used_sizes(motions: Motions, blends: Sequence[Blend | None], delta: Array, reach: Array) -> Array:
+    """(M - 1,) how far corners of sizes delta reach, in the unit each was asked in: the larger of both sides.
+
+    `reach` (M - 1,): the measured one of corners in which a joint step takes part.
+    """
     used = np.zeros(len(blends))
-    sampled: list[_Sampled] = []
     for j, blend in enumerate(blends):
         if blend is None:
             continue
         if blend.kind == "share":
             used[j] = delta[j] / min(motions.length[j], motions.length[j + 1])
-            continue
-        for side in (0, 1):
-            segment = motions.segment[j + side]
-            if segment >= 0 and (blend.kind == "length" or _is_pair(motions, j)):
-                reach = float(_extents(motions, blend)[segment] * delta[j] / motions.length[j + side])
-                used[j] = max(used[j], min(reach, blend.value))
-            else:
-                sampled.append(_Sampled(j, side, blend.kind == "length", blend.value))
-    for entry, reach in zip(sampled, _sampled_reach(motions, sampled, delta), strict=True):
-        used[entry.junction] = max(used[entry.junction], min(reach, entry.value))
+        elif _is_pair(motions, j):
+            extents = _extents(motions, blend)[motions.segment[j : j + 2]]
+            used[j] = float((extents * delta[j] / motions.length[j : j + 2]).max())
+        else:
+            used[j] = reach[j]
+        used[j] = min(used[j], blend.value)
     return used
-
-
-def _sampled_reach(motions: Motions, wanted: Sequence[_Sampled], delta: Array) -> Array:
-    """(N,) largest measured distance from the corner on sides that corners of sizes delta take."""
-    if not wanted:
-        return np.zeros(0)
-    j = np.repeat([entry.junction for entry in wanted], _SAMPLES)
-    side = np.repeat([entry.side for entry in wanted], _SAMPLES)
-    as_length = np.repeat([entry.as_length for entry in wanted], _SAMPLES)
-    x = delta[j] * np.tile(np.linspace(0.0, 1.0, _SAMPLES), len(wanted))
-    m = j + side
-    q = motions.joint_points(m, np.where(side == 0, motions.length[m] - x, x))
-    return distances(motions, m, q, motions.end[j], as_length).reshape(-1, _SAMPLES).max(axis=1)

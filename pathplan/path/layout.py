@@ -66,17 +66,19 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
     junctions = [_junction(path, motions, j) for j in range(len(motions) - 1)]
     _stop_at_reversals(motions, junctions)
     _note_stops_that_a_blend_would_save(motions, junctions)
-    asked = asked_sizes(motions, [junction.blend for junction in junctions], [junction.step for junction in junctions])
+    blends = [junction.blend for junction in junctions]
+    asked = asked_sizes(motions, blends, [junction.step for junction in junctions])
     for _ in range(_ROUNDS):
         delta = fit_into_steps(asked, motions.length) if len(asked) else asked
-        spans, _ = _spans(motions, delta)
-        changed = _adjust(spans, junctions, delta, asked)
+        spans, stretch = _spans(motions, delta)
+        changed, reach = _adjust(spans, junctions, delta, asked)
         if not changed:
             break
     else:
         step = junctions[changed[0]].step
         raise InputError(f"{step.where}: blend: the corner does not come to lie within its region")
-    used = used_sizes(motions, [junction.blend for junction in junctions], delta)
+    blends = [junction.blend for junction in junctions]
+    used = used_sizes(motions, blends, delta, reach)
     moving = set(motions.leg.tolist())
     findings = [
         Finding(leg.step.index, NO_MOTION_TEXT)
@@ -88,7 +90,6 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
             shrunk = format_quantity(float(used[j]), _dimension(junction.blend))
             junction.notes.append(f"the blend shrinks from {junction.asked} to {shrunk}")
         findings += [Finding(junction.step.index, note) for note in junction.notes]
-    spans, stretch = _spans(motions, delta)
     return Layout(spans, stretch, tuple(junctions), used, tuple(findings))
 
 
@@ -216,30 +217,36 @@ def _spans(motions: Motions, delta: Array) -> tuple[Spans, Index]:
     return spans, number[keep].astype(np.intp)
 
 
-def _adjust(spans: Spans, junctions: list[Junction], delta: Array, asked: Array) -> list[int]:
-    """Drop corners that nearly stand still, shrink those that leave their region; the junctions whose `asked`
-    was changed.
+def _adjust(spans: Spans, junctions: list[Junction], delta: Array, asked: Array) -> tuple[list[int], Array]:
+    """Drop corners that nearly stand still, shrink those that leave their region.
+
+    Returns the junctions whose `asked` was changed, and how far the corners of joint steps reach (M - 1,), in the
+    unit of their blend.
     """
+    reach = np.zeros(len(junctions))
     corners = np.flatnonzero(spans.corner)
     if not len(corners):
-        return []
+        return [], reach
     u = np.linspace(0.0, 2.0, _SAMPLES)
     i = np.repeat(corners, _SAMPLES)
     at = (spans.delta[corners][:, None] * u).ravel()
     size, q = _tangents_and_joints(spans, i, at)
     size = size.reshape(-1, _SAMPLES)
-    excess = _excess(spans, junctions, i, q).reshape(-1, _SAMPLES).max(axis=1)
+    away = _away(spans, junctions, i, q).reshape(-1, _SAMPLES).max(axis=1)
     changed = []
     for row, span in enumerate(corners):
         j = int(spans.before[span])
+        blend = junctions[j].blend
+        assert blend is not None
+        reach[j] = away[row]
         if size[row].min() < np.sin(REVERSAL / 2) * max(size[row, 0], size[row, -1]):
             _reverse(junctions[j])
             asked[j] = 0.0
             changed.append(j)
-        elif excess[row] > 1 + _REGION_SLACK:
-            asked[j] = 0.99 * delta[j] / excess[row]
+        elif away[row] > blend.value * (1 + _REGION_SLACK):
+            asked[j] = 0.99 * delta[j] * blend.value / away[row]
             changed.append(j)
-    return changed
+    return changed, reach
 
 
 def _tangents_and_joints(spans: Spans, i: Index, at: Array) -> tuple[Array, Array]:
@@ -268,17 +275,14 @@ def _tangents_and_joints(spans: Spans, i: Index, at: Array) -> tuple[Array, Arra
     return size, q
 
 
-def _excess(spans: Spans, junctions: list[Junction], i: Index, q: Array) -> Array:
-    """(N,) distance from the corner over what its region allows, of corners in which a joint step takes part;
-    else 0.
-    """
+def _away(spans: Spans, junctions: list[Junction], i: Index, q: Array) -> Array:
+    """(N,) distance from the corner, in the unit of its blend, where a joint step takes part in it; else 0."""
     motions = spans.motions
     kind = np.array([junction.blend.kind if junction.blend else "" for junction in junctions])
-    value = np.array([junction.blend.value if junction.blend else 1.0 for junction in junctions])
     out = np.zeros(len(i))
     j = spans.before[i]
     rows = np.flatnonzero(~spans.programmed()[i] & (kind[j] != "share"))
     if len(rows):
         m = j[rows]
-        out[rows] = distances(motions, m, q[rows], motions.end[m], kind[m] == "length") / value[m]
+        out[rows] = distances(motions, m, q[rows], motions.end[m], kind[m] == "length")
     return out
