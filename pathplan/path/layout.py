@@ -27,6 +27,7 @@ _STRAIGHT = 1e-6  # rad between tangents that count as one
 _SAMPLES = 33  # of a corner or a step, where something is measured along it
 _ROUNDS = 40  # of shrinking a corner until its region holds it
 _REGION_SLACK = 1e-6  # share of the region that rounding may take
+_WORTH_SAYING = 1e-3  # share by which a corner falls short of what was asked
 
 
 @dataclass
@@ -86,7 +87,7 @@ def lay_out(path: CartesianPath, motions: Motions) -> Layout:
         if leg.kind == "joint" and i not in moving
     ]
     for j, junction in enumerate(junctions):
-        if junction.blend is not None and used[j] < junction.blend.value * (1 - 1e-6):
+        if junction.blend is not None and used[j] < junction.blend.value * (1 - _WORTH_SAYING):
             shrunk = format_quantity(float(used[j]), _dimension(junction.blend))
             junction.notes.append(f"the blend shrinks from {junction.asked} to {shrunk}")
         findings += [Finding(junction.step.index, note) for note in junction.notes]
@@ -244,7 +245,7 @@ def _adjust(spans: Spans, junctions: list[Junction], delta: Array, asked: Array)
             asked[j] = 0.0
             changed.append(j)
         elif away[row] > blend.value * (1 + _REGION_SLACK):
-            asked[j] = 0.99 * delta[j] * blend.value / away[row]
+            asked[j] = (1 - _REGION_SLACK) * delta[j] * blend.value / away[row]
             changed.append(j)
     return changed, reach
 

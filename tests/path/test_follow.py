@@ -435,3 +435,50 @@ def test_arm_without_closed_form(cast) -> None:
     path = follow_task(cast.task(arm, start, [cast.step("line", b, blend=cast.length(30)), cast.step("line", c)]))
     cast.check_path(path)
     assert arm.structure == "general"
+
+
+def test_corner_shrinks_until_its_region_holds_it(cast) -> None:
+    """In the corner both motions turn one joint the same way: together more than either side alone may."""
+    arm = cast.robot("sorter4")
+    q = np.array([0.0, 0.7, -0.05, 1.8])
+    b = arm.forward(q)
+    via = 1e3 * b[:3, 3] + [22.5, -14.3, 0.0]
+    b[:2, 3] += [-0.06, -0.02]
+    steps = [cast.step("joint", q, blend=cast.angle(21)), cast.step("arc", b, via=via)]
+    path = follow_task(cast.task(arm, arm.positions["home"], steps))
+    cast.check_path(path)
+    (corner,) = path.corners
+    assert corner.s_to < path.stretches[0].path.length - 0.1  # not for want of room
+    assert 20.0 < np.rad2deg(corner.used) < 20.99
+    (finding,) = path.findings
+    assert finding.text == f"the blend shrinks from 21 deg to {np.rad2deg(corner.used):.2f} deg"
+
+
+def test_corner_that_would_stand_still_becomes_a_stop(cast) -> None:
+    """Two arcs meet at 170 deg, no reversal yet; within the corner their tangents turn on until they cancel out."""
+    arm = cast.robot("glazer6")
+    a = above(cast)
+    turn = np.deg2rad(120)
+    first = cast.step(
+        "arc", None, centre=[550, -50, 350], axis=np.array([0, 0, 1.0]), angle=turn, blend=cast.share(22.2)
+    )
+    path = cartesian_path(cast.task(arm, arm.inverse(a)[0], [first]))
+    tangent = path.segments.jets(np.array([0]), path.segments.length).position[1, 0]
+    tangent /= np.linalg.norm(tangent)
+    corner = path.legs[0].end[:3, 3]
+    for degrees, kind in ((170.0, "stop"), (-170.0, "fly-by")):
+        back = Rotation.from_euler("z", degrees, degrees=True).apply(tangent)
+        centre = corner + 0.05 * np.cross([0, 0, 1.0], back)
+        second = cast.step("arc", None, centre=1e3 * centre, axis=np.array([0, 0, 1.0]), angle=turn)
+        flown = follow_task(cast.task(arm, arm.inverse(a)[0], [first, second]))
+        cast.check_path(flown)
+        assert flown.corners[0].kind == kind
+        assert flown.corners[0].reason == ("reversal" if kind == "stop" else "")
+
+
+def test_task_that_does_not_move(cast) -> None:
+    arm = cast.robot("glazer6")
+    home = arm.positions["home"]
+    path = follow_task(cast.task(arm, home, [cast.step("line", arm.forward(home), mark="m"), cast.step("joint", home)]))
+    assert path.sequence == (Wait(0, 0.0), Wait(1, 0.0))
+    assert path.corners == () and len(path.findings) == 2
