@@ -2,8 +2,7 @@
 
 Each segment is sampled, all samples of all segments go through the inverse in one batch, and each branch
 is unwrapped from sample to sample by nearest turn. Where a joint moves too far between two samples to
-tell, samples are put in between; a joint that still jumps when they lie a few ten-thousandths apart is at
-a singularity.
+tell, samples are put in between; a joint that still jumps when they lie a ten-thousandth apart is at a singularity.
 
 A branch follows a segment if at every sample the pose is reached, the smallest singular value of the Jacobian
 (dimensionless, see `pathplan.arm.kinematics`) is at least `SINGULAR`, and no jump remains. Position limits
@@ -32,7 +31,7 @@ SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or
 FEWEST = 6  # intervals of a segment
 JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
 _BETWEEN = 3  # samples put between two
-_ROUNDS = 6  # of putting them: 2e-5 apart in the end, where a joint that moves by JUMP is as good as singular
+_ROUNDS = 5  # of putting them: 1e-4 apart in the end, where a joint can only move by JUMP below SINGULAR
 
 
 def turns_between(change: Array, revolute: Mask) -> Array:
