@@ -3,18 +3,21 @@
 On the clock tau, p(tau) = q(s(tau)) and b(tau) = (dtau/dt)^2. Velocity p' sqrt(b) and acceleration p' b'/2 + p'' b
 are linear limits on b (Verscheure et al., IEEE TAC 2009); jerk is sqrt(b) (p' b''/2 + 1.5 p'' b' + p''' b), so its
 limit reads |p' b''/2 + 1.5 p'' b' + p''' b| <= J / sqrt(b). The right side is convex, so its tangent at any b gives a
-safe linear limit (convex-concave procedure: Debrouwere et al., IEEE T-RO 2013). The tangent is renewed at every
-Newton step: each step lowers a bound of the true barrier function, hence the true one.
+safe linear limit (convex-concave procedure: Debrouwere et al., IEEE T-RO 2013); so does the tangent of viscous torque,
+which grows with sqrt(b) (see `pathplan.timing.torque`). The tangents are renewed at every Newton step: each step lowers
+a bound of the true barrier function, hence the true one.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.errors import PathplanError
 from pathplan.timing.barrier import sum_by
 from pathplan.timing.mesh import GAUSS_LOBATTO, LOBATTO_WEIGHTS, Mesh, Rows, hermite, joined, rows_at
 
@@ -32,6 +35,7 @@ class _State:
     acceleration: Array  # (R, K, cells)
     jerk: Array  # divided by sqrt(b)
     tool: Array | None  # (3, K, cells)
+    torque: Array | None  # (Q, K, cells), 1 at the limit
 
 
 class FineProblem:
@@ -51,7 +55,8 @@ class FineProblem:
         self.weights = LOBATTO_WEIGHTS[:, None] * self.width
         self.share = self.weights / self.duration[self.cell_owner]
         self.rows = joined([rows_at(mesh, GAUSS_LOBATTO) for mesh in meshes]) if rows is None else rows
-        self.gap = 4.0 * self.rows.acceleration.shape[1] + 2.0  # barrier terms per unit of time
+        torques = 0 if self.rows.torque is None else self.rows.torque.shape[1]
+        self.gap = 4.0 * self.rows.acceleration.shape[1] + 2.0 + torques  # barrier terms per unit of time
         basis = hermite(GAUSS_LOBATTO)
         self._basis = basis
         self._to_gradient = basis.reshape(-1, 4).T.copy()
@@ -79,12 +84,10 @@ class FineProblem:
         b = self.evaluate(x, self._basis)
         with np.errstate(invalid="ignore", divide="ignore"):
             root = 1.0 / np.sqrt(b[0])
+            torque = None if self.rows.torque is None else apply_torque(self.rows.torque, b)
         tool = self.rows.tool
-        return _State(b, root, *apply_rows(self.rows, b), None if tool is None else tool[0] * b[0] + tool[1] * b[1])
-
-    def shares(self, state: _State) -> tuple[Array, Array, Array, Array]:
-        """Shares used (1 = at the limit): velocity squared (K, cells), acceleration, jerk (R, K, cells), tool."""
-        return limit_shares(self.rows, state.b)
+        along = None if tool is None else tool[0] * b[0] + tool[1] * b[1]
+        return _State(b, root, *apply_rows(self.rows, b), along, torque)
 
     def feasible_start(self, share: float) -> Array:
         """b constant on every stretch, so slow that no limit is used beyond about `share`."""
@@ -93,13 +96,28 @@ class FineProblem:
         return self.slowed(x, share)
 
     def slowed(self, x: Array, share: float, only_down: bool = False) -> Array:
-        """x scaled, stretch by stretch, so that at the collocation points no limit is used beyond `share` of b."""
-        speed, acceleration, jerk, tool = self.shares(self.state(x))
+        """x scaled, stretch by stretch, so that at the collocation points no limit is used beyond `share` of b.
+
+        Torque has a part that no slowing removes: of what it leaves, 1 - `share` stays free. Raises PathplanError where
+        it leaves nothing.
+        """
+        shares = limit_shares(self.rows, self.evaluate(x, self._basis))
         worst = np.zeros(self.count)
-        need = np.max([speed, acceleration.max(axis=0), jerk.max(axis=0) ** (2 / 3), tool], axis=(0, 1))
-        np.maximum.at(worst, self.cell_owner, need)
+        np.maximum.at(worst, self.cell_owner, shares.needed_slowing().max(axis=0))
         factor = share / worst
-        return x * (np.minimum(factor, 1.0) if only_down else factor)[self.owner]
+        if only_down:
+            factor = np.minimum(factor, 1.0)
+        if self.rows.torque is None:
+            return x * factor[self.owner]
+        room = 1.0 - self.rows.torque[3]
+        for _ in range(200):
+            torque = apply_torque(self.rows.torque, self.evaluate(x * factor[self.owner], self._basis))
+            short = np.zeros(self.count, dtype=bool)
+            short[self.cell_owner[(1.0 - torque < (1.0 - share) * room).any(axis=(0, 1))]] = True
+            if not short.any():
+                return x * factor[self.owner]
+            factor = np.where(short, 0.8 * factor, factor)
+        raise PathplanError("timing: no speed is slow enough for the torque limits")
 
     def value(self, state: _State, mu: Array) -> Array:
         a_low, a_high = self.rows.acceleration_range
@@ -116,6 +134,9 @@ class FineProblem:
         if state.tool is not None:
             room = 1.0 - (state.tool**2).sum(axis=0)
             lowest, product = np.minimum(lowest, room), product * room
+        if state.torque is not None:
+            free = 1.0 - state.torque
+            lowest, product = np.minimum(lowest, free.min(axis=0)), product * free.prod(axis=0)
         bad = ~((lowest > 0) & (state.b[0] > 0)).all(axis=0)
         with np.errstate(invalid="ignore", divide="ignore"):
             cost = (self.weights * root - mu[self.cell_owner] * self.share * np.log(product)).sum(axis=0)
@@ -176,8 +197,12 @@ class FineProblem:
         matrix[5] = (jerk_bend * j[2] * j[2]).sum(axis=0)
         if rows.tool is not None and state.tool is not None:
             _add_tool(rows.tool, state.tool, gradient, matrix, m)
+        bent = np.zeros_like(b)
+        if rows.torque is not None and state.torque is not None:
+            bent = _add_torque(rows.torque, state, gradient, matrix, m)
         matrix *= m
-        matrix[0] += np.maximum(self.weights - m * pull, _CURVATURE_KEPT * self.weights) * 0.75 * root / (b * b)
+        cost = self.weights * 0.75 * root / (b * b)
+        matrix[0] += np.maximum(cost - m * (pull * 0.75 * root / (b * b) - bent), _CURVATURE_KEPT * cost)
         return gradient, matrix
 
     def reach(self, state: _State, step: Array) -> Array:
@@ -192,6 +217,10 @@ class FineProblem:
         above = (along - j_high * fall) / (j_high * root - state.jerk)
         below = (j_low * fall - along) / (state.jerk - j_low * root)
         ratio = np.maximum(ratio, np.maximum(above, below))
+        if state.torque is not None and self.rows.torque is not None:
+            f = self.rows.torque
+            change = (f[0] + 0.5 * state.root * f[2]) * b[0] + f[1] * b[1]
+            ratio = np.concatenate([ratio, change / (1.0 - state.torque)])
         walls = np.maximum(b[0] / (self.rows.wall - state.b[0]), -b[0] / state.b[0])
         worst = np.full(self.count, 1e-9)
         np.maximum.at(worst, self.cell_owner, np.maximum(ratio.max(axis=0), walls).max(axis=0))
@@ -223,13 +252,59 @@ def apply_rows(rows: Rows, b: Array) -> tuple[Array, Array]:
     return acceleration, rows.jerk[0] * b[0] + rows.jerk[1] * b[1] + rows.jerk[2] * b[2]
 
 
-def limit_shares(rows: Rows, b: Array) -> tuple[Array, Array, Array, Array]:
-    """Shares (1 = at the limit): velocity squared (K, cells), acceleration, jerk (R, K, cells), tool (K, cells)."""
+def _add_torque(rows: Array, state: _State, gradient: Array, matrix: Array, m: Array) -> Array:
+    """Barrier of the torque rows; returns (K, cells) what their square roots add to the curvature by b."""
+    assert state.torque is not None
+    free = 1 / (1.0 - state.torque)
+    by_b = rows[0] + 0.5 * state.root * rows[2]
+    gradient[0] += m * (free * by_b).sum(axis=0)
+    gradient[1] += m * (free * rows[1]).sum(axis=0)
+    square = free * free
+    matrix[0] += (square * by_b * by_b).sum(axis=0)
+    matrix[1] += (square * by_b * rows[1]).sum(axis=0)
+    matrix[3] += (square * rows[1] * rows[1]).sum(axis=0)
+    bent: Array = -0.25 * state.root**3 * (free * rows[2]).sum(axis=0)
+    return bent
+
+
+def apply_torque(rows: Array, b: Array) -> Array:
+    """Torque (Q, K, cells) in shares of the limit for b, b_u, b_uu (3, K, cells)."""
+    total: Array = rows[0] * b[0] + rows[1] * b[1] + rows[2] * np.sqrt(b[0]) + rows[3]
+    return total
+
+
+class Shares(NamedTuple):
+    """Shares of the limits that are used, 1 at the limit."""
+
+    speed: Array  # (K, cells), of the square of the velocity limits and the tool-speed cap
+    acceleration: Array  # (R, K, cells)
+    jerk: Array  # (R, K, cells)
+    tool: Array  # (K, cells), tool acceleration
+    torque: Array  # (Q, K, cells)
+
+    def needed_slowing(self) -> Array:
+        """The factor by which b must fall for all limits but torque to be kept, where above 1; like `speed`."""
+        need: Array = np.max(
+            [self.speed, self.acceleration.max(axis=0), self.jerk.max(axis=0) ** (2 / 3), self.tool], axis=0
+        )
+        return need
+
+    def largest(self) -> Array:
+        """(K, cells) the largest share of any limit."""
+        parts = [np.sqrt(self.speed), self.acceleration.max(axis=0), self.jerk.max(axis=0), self.tool]
+        if len(self.torque):
+            parts.append(self.torque.max(axis=0))
+        largest: Array = np.max(parts, axis=0)
+        return largest
+
+
+def limit_shares(rows: Rows, b: Array) -> Shares:
+    """Shares used for b, b_u, b_uu (3, K, cells)."""
     acceleration, jerk = apply_rows(rows, b)
     acceleration = np.maximum(acceleration / rows.acceleration_range[0], acceleration / rows.acceleration_range[1])
     jerk = np.maximum(jerk / rows.jerk_range[0], jerk / rows.jerk_range[1]) * np.sqrt(b[0])
-    if rows.tool is None:
-        tool = np.zeros_like(b[0])
-    else:
+    tool = np.zeros_like(b[0])
+    if rows.tool is not None:
         tool = np.sqrt(((rows.tool[0] * b[0] + rows.tool[1] * b[1]) ** 2).sum(axis=0))
-    return b[0] / rows.wall, acceleration, jerk, tool
+    torque = np.zeros((0, *b[0].shape)) if rows.torque is None else apply_torque(rows.torque, b)
+    return Shares(b[0] / rows.wall, acceleration, jerk, tool, torque)

@@ -53,6 +53,7 @@ class Rows:
     velocity: b <= wall.   acceleration: low <= a[0] b + a[1] b_u <= high.
     jerk: low / sqrt(b) <= j[0] b + j[1] b_u + j[2] b_uu <= high / sqrt(b).
     tool: |t[0] b + t[1] b_u| <= 1 (a norm over three axes), zero rows where there is no cap.
+    torque: f[0] b + f[1] b_u + f[2] sqrt(b) + f[3] <= 1, one-sided.
     """
 
     wall: Array  # (K, cells)
@@ -61,9 +62,13 @@ class Rows:
     jerk: Array  # (3, R, K, cells)
     jerk_range: Array
     tool: Array | None  # (2, 3, K, cells)
+    torque: Array | None = None  # (4, Q, K, cells)
 
-    def tightened(self, wall: Array, acceleration: Array, jerk: Array, tool: Array) -> Rows:
-        """Rows multiplied by factors >= 1 for each cell: wall and tool (cells,), acceleration and jerk (R, cells)."""
+    def tightened(self, wall: Array, acceleration: Array, jerk: Array, tool: Array, torque: Array) -> Rows:
+        """Rows multiplied by factors >= 1 for each cell: wall and tool (cells,), acceleration and jerk (R, cells).
+
+        Torque (Q, cells) has a constant part, which stays: what its factor exceeds 1 by is taken off its limit.
+        """
         return Rows(
             self.wall / wall,
             self.acceleration * acceleration[:, None],
@@ -71,7 +76,16 @@ class Rows:
             self.jerk * jerk[:, None],
             self.jerk_range,
             None if self.tool is None else self.tool * tool,
+            None if self.torque is None else _shrunk(self.torque, torque - 1.0),
         )
+
+
+def _shrunk(torque: Array, less: Array) -> Array:
+    """Torque rows whose limit is lower by `less` (Q, cells), but never by more than most of the room there is."""
+    room = 1.0 - torque[3].max(axis=1)
+    shrunk = torque.copy()
+    shrunk[3] += np.minimum(less, 0.8 * np.maximum(room, 0.0))[:, None]
+    return shrunk
 
 
 def make_mesh(motion: Motion, clock: Clock, cells: int, cells_per_piece: int) -> Mesh:
@@ -119,7 +133,19 @@ def rows_at(mesh: Mesh, u: Array) -> Rows:
         jerk=np.stack([p3 * j, p2 * (1.5 * j / h), p1 * (0.5 * j / h**2)]),
         jerk_range=(motion.jerk / half_jerk[:, None]).T[:, :, None, None],
         tool=_tool_rows(motion, piece, s, s1, s2, h, len(u)),
+        torque=_torque_rows(motion, piece, s, s1, s2, h, len(u)),
     )
+
+
+def _torque_rows(
+    motion: Motion, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array, h: Array, points: int
+) -> Array | None:
+    rows = motion.torque_rows(piece, s, s1, s2)
+    if rows is None or not len(rows.joint):
+        return None
+    shape = (-1, points, len(h))
+    on = [value.reshape(shape) for value in (rows.on_b, rows.on_slope, rows.on_root, rows.constant)]
+    return np.stack([on[0], on[1] / h, on[2], on[3]])
 
 
 def _tool_rows(
@@ -155,6 +181,10 @@ def joined(parts: Sequence[Rows]) -> Rows:
     tool = None
     if any(p.tool is not None for p in parts):
         tool = np.concatenate([np.zeros((2, 3, *p.wall.shape)) if p.tool is None else p.tool for p in parts], axis=3)
+    torque = None
+    if any(p.torque is not None for p in parts):
+        most = max(p.torque.shape[1] for p in parts if p.torque is not None)
+        torque = np.concatenate([_widened(p.torque, most, p.wall.shape) for p in parts], axis=3)
     return Rows(
         np.concatenate([p.wall for p in parts], axis=1),
         np.concatenate([pad(p.acceleration) for p in parts], axis=3),
@@ -162,4 +192,13 @@ def joined(parts: Sequence[Rows]) -> Rows:
         np.concatenate([pad(p.jerk) for p in parts], axis=3),
         np.concatenate([spread(p.jerk_range, p.wall.shape[1]) for p in parts], axis=3),
         tool,
+        torque,
     )
+
+
+def _widened(torque: Array | None, rows: int, shape: tuple[int, ...]) -> Array:
+    """Torque rows padded to `rows` with ones that never bind."""
+    wide = np.zeros((4, rows, *shape))
+    if torque is not None:
+        wide[:, : torque.shape[1]] = torque
+    return wide

@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from pathplan.errors import InputError
 from pathplan.path.joint import JointPath
+from pathplan.timing.torque import TorqueLimits, TorqueRows, torque_rows
 
 Array = NDArray[np.float64]
 ToolDerivatives = Callable[[Array, Array, Array], tuple[Array, Array]]
@@ -40,6 +41,7 @@ class Motion:
     jerk: Array
     caps: tuple[Cap, ...] = ()
     tool: ToolDerivatives | None = None  # (q, q', q'') each (N, n) -> tool position x', x'' each (N, 3)
+    torque: TorqueLimits | None = None
 
     def rows(self, piece: NDArray[np.intp], s: Array, highest: int = 3) -> list[Array]:
         """Derivatives 1..highest of the limited rows by s, each (N, R); `piece` says which side of a break."""
@@ -60,6 +62,14 @@ class Motion:
             raise ValueError("motion has caps on the tool but no way to compute the tool's motion")
         local = s - self.path.breaks[piece]
         return self.tool(*self.path.all_at(piece, local, 2))
+
+    def torque_rows(self, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array) -> TorqueRows | None:
+        """Torque limits at s (N,) on a clock with ds/dtau and d2s/dtau2 (N,); None without torque limits."""
+        if self.torque is None:
+            return None
+        q, q1, q2 = self.path.all_at(piece, s - self.path.breaks[piece], 2)
+        c1, c2 = s1[:, None], s2[:, None]
+        return torque_rows(self.torque, q, q1 * c1, q2 * c1**2 + q1 * c2)
 
     @property
     def capped(self) -> bool:

@@ -17,7 +17,7 @@ from pathplan.errors import PathplanError
 from pathplan.timing.barrier import follow_central_path
 from pathplan.timing.clock import make_clock
 from pathplan.timing.coarse import CoarseTiming, coarse_timing
-from pathplan.timing.fine import FineProblem, limit_shares
+from pathplan.timing.fine import FineProblem, Shares, limit_shares
 from pathplan.timing.mesh import Mesh, Rows, hermite, joined, make_mesh, refined, rows_at
 from pathplan.timing.motion import Motion
 from pathplan.timing.stretch import StretchTiming
@@ -31,6 +31,7 @@ _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is 
 _COARSE_GAP, _FINAL_GAP = 5e-3, 2e-4  # duality gap aimed at, relative to the duration
 _TIGHTENINGS = 5
 _TIGHT = 2e-4  # overstepping left to slowing the whole stretch
+_SLOWINGS = 200
 _CHECK_POINTS = 33  # per cell, ends included; peaks between them by parabolas
 _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of tables
 _FEWEST_CELLS = 12
@@ -95,8 +96,7 @@ def _where_to_split(problem: FineProblem, x: Array) -> tuple[list[NDArray[np.boo
     """For every stretch which cells to halve, and which stretches are good enough already."""
     u = (np.arange(6) + 0.5) / 6
     rows = joined([rows_at(mesh, u) for mesh in problem.meshes])
-    speed, acceleration, jerk, tool = limit_shares(rows, problem.evaluate(x, hermite(u)))
-    used = np.max([np.sqrt(speed), acceleration.max(axis=0), jerk.max(axis=0), tool], axis=0)
+    used = limit_shares(rows, problem.evaluate(x, hermite(u))).largest()
     loss = problem.width * (1.0 - np.minimum(used, 1.0)).mean(axis=0) / problem.duration[problem.cell_owner]
     over = used.max(axis=0) > 1.0 + _OVERSTEP
     borders = np.cumsum(problem.cells)[:-1]
@@ -137,11 +137,10 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
         scale = problem.durations(x) / problem.gap
         x, _ = follow_central_path(problem, x, start=start * scale, final=_FINAL_GAP * scale)
         peaks = _peaks(checked, problem.evaluate(x, basis))
-        speed, acceleration, jerk, tool = peaks
-        need = np.max([speed, acceleration.max(axis=0), jerk.max(axis=0) ** (2 / 3), tool], axis=0)
         worst = np.zeros(problem.count)
-        np.maximum.at(worst, problem.cell_owner, need)
-        if worst.max() <= 1.0 + _TIGHT or round_ == _TIGHTENINGS - 1:
+        np.maximum.at(worst, problem.cell_owner, peaks.needed_slowing())
+        over = peaks.torque.max(initial=0.0)
+        if max(worst.max(), over) <= 1.0 + _TIGHT or round_ == _TIGHTENINGS - 1:
             break
         factors = [1.0 + 1.7 * np.maximum(peak - 1.0, 0.0) for peak in peaks]
         problem = FineProblem(meshes, problem.rows.tightened(*factors))
@@ -149,7 +148,7 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
         start = 3.0 * _FINAL_GAP
     if not np.all(np.isfinite(worst)):
         raise PathplanError("timing: the limits could not be evaluated along the path (not a number)")
-    x = x * ((1.0 - _MARGIN) / worst)[problem.owner]
+    x = _slowed_for_torque(problem, x * ((1.0 - _MARGIN) / worst)[problem.owner], checked, basis)
     out = []
     for mesh, values in zip(meshes, np.split(x, np.cumsum(2 * (problem.cells + 1))[:-1]), strict=True):
         b, slope = values[::2].copy(), values[1::2] / mesh.unit
@@ -157,10 +156,24 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
     return out
 
 
-def _peaks(rows: Rows, b: Array) -> tuple[Array, Array, Array, Array]:
-    """Largest share in every cell: velocity squared (cells,), acceleration, jerk (R, cells), tool (cells,)."""
-    speed, acceleration, jerk, tool = limit_shares(rows, b)
-    return _top(speed), _top(acceleration), _top(jerk), _top(tool)
+def _slowed_for_torque(problem: FineProblem, x: Array, checked: Rows, basis: Array) -> Array:
+    """x with those stretches slowed that overstep a torque limit anywhere."""
+    if checked.torque is None:
+        return x
+    factor = np.ones(problem.count)
+    for _ in range(_SLOWINGS):
+        peaks = _peaks(checked, problem.evaluate(x * factor[problem.owner], basis)).torque.max(axis=0)
+        worst = np.zeros(problem.count)
+        np.maximum.at(worst, problem.cell_owner, peaks - (1.0 - _MARGIN))
+        if not np.any(worst > 0):
+            return x * factor[problem.owner]
+        factor = np.where(worst > 0, factor * (1.0 - np.clip(2.0 * worst, 1e-6, 0.2)), factor)
+    raise PathplanError("timing: slowing does not bring the torque within its limits")
+
+
+def _peaks(rows: Rows, b: Array) -> Shares:
+    """The largest shares in every cell: the arrays of `Shares` without their axis of points."""
+    return Shares(*(_top(values) for values in limit_shares(rows, b)))
 
 
 def _top(values: Array) -> Array:
