@@ -203,6 +203,14 @@ def test_same_input_gives_the_same_bytes(home, folder, run):
         assert (folder / name).read_bytes() == (home / name).read_bytes()
 
 
+def test_a_table_too_long_to_hold_whole_is_the_same(home, folder, run, monkeypatch):
+    monkeypatch.setattr("pathplan.report.outputs.WHOLE", 100)
+    monkeypatch.setattr(pathplan.Plan, "table", property(lambda plan: pytest.fail("held whole")))
+    assert run("plan", "cross.toml", "-o", "cross.csv", "-o", "cross.npz", "--quiet")[0] == 0
+    for name in made(folder):
+        assert (folder / name).read_bytes() == (home / name).read_bytes()
+
+
 @pytest.mark.parametrize("command", ["plan cross.toml", "audit cross.toml", "export cross.toml -o a.csv"])
 def test_screens_fit_a_hundred_columns_of_ascii(run, command):
     status, out, _ = run(*command.split())
