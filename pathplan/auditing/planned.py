@@ -20,6 +20,7 @@ __all__ = [
     "Planned",
     "StepSpeed",
     "corners_of",
+    "deviations",
     "joint_peaks",
     "path_deviation",
     "step_speeds",
@@ -112,8 +113,7 @@ def path_deviation(
     at = np.flatnonzero(known)
     if not len(at):
         return None
-    distance = np.linalg.norm(actual[at, :3, 3] - programmed[at, :3, 3], axis=1)
-    angle = _angle_between(actual[at, :3, :3], programmed[at, :3, :3])
+    distance, angle = deviations(actual[at], programmed[at])
     p, a = int(np.argmax(distance)), int(np.argmax(angle))
     return Deviation(
         position=float(distance[p]),
@@ -124,6 +124,12 @@ def path_deviation(
         angle_step=int(step[at[a]]),
         count=len(at),
     )
+
+
+def deviations(actual: Array, programmed: Array) -> tuple[Array, Array]:
+    """Distances (N,) m and angles (N,) rad between tool poses (N, 4, 4) and programmed ones (N, 4, 4)."""
+    distance = np.linalg.norm(actual[:, :3, 3] - programmed[:, :3, 3], axis=1)
+    return distance, _angle_between(actual[:, :3, :3], programmed[:, :3, :3])
 
 
 def _angle_between(one: Array, other: Array) -> Array:
