@@ -23,6 +23,8 @@
     # From here on where known. Link data: for every joint or for none.
     torque = 150                    # peak, N m or N
     continuous_torque = 60
+    torque_corner_speed = 120       # deg/s or mm/s: above it the peak torque falls on a straight line
+    torque_at_velocity = 90         # to this at the velocity limit
     gear_ratio = 80                 # of a prismatic joint: rad of the motor per m
     encoder_counts = 131072         # per turn of the motor
     mass = "8 kg"                   # of the link that the joint moves
@@ -236,15 +238,7 @@ def _joint_row(table: Table, *, has_dh: bool) -> _JointRow:
         quantity: _limit(table, quantity, joint_dimension(kind, quantity))
         for quantity in ("velocity", "acceleration", "jerk")
     }
-    force = joint_dimension(kind, "torque")
-    values["torque"] = _limit(table, "torque", force, None)
-    values["continuous_torque"] = _limit(table, "continuous_torque", force, None)
-    peak, lasting = values["torque"], values["continuous_torque"]
-    if peak is not None and lasting is not None and lasting > peak:
-        raise table.error(
-            "continuous_torque",
-            f"{format_quantity(lasting, force)} is above torque (its peak) {format_quantity(peak, force)}",
-        )
+    values |= _torques(table, kind, values["velocity"])
     values["gear_ratio"] = _gear_ratio(table)
     values["encoder_counts"] = table.integer("encoder_counts", None, low=1, high=2**40)
     joint = Joint(name, kind, _position(table, joint_dimension(kind, "position")), **values)
@@ -277,6 +271,38 @@ def _limit(table: Table, key: str, dimension: str, *default: None) -> float | No
             f"expected {DIMENSIONS[dimension].expected}, got {toml_text(table.data[key])}: no machine has it",
         )
     return value
+
+
+def _torques(table: Table, kind: str, velocity: float | None) -> dict[str, float | None]:
+    """What the drive can give: peak, continuous, and how the peak falls off with speed."""
+    force, speed = joint_dimension(kind, "torque"), joint_dimension(kind, "velocity")
+    peak = _limit(table, "torque", force, None)
+    lasting = _limit(table, "continuous_torque", force, None)
+    corner = _limit(table, "torque_corner_speed", speed, None)
+    at_velocity = _limit(table, "torque_at_velocity", force, None)
+    for key, value in (("continuous_torque", lasting), ("torque_at_velocity", at_velocity)):
+        if peak is not None and value is not None and value > peak:
+            raise table.error(
+                key, f"{format_quantity(value, force)} is above torque (its peak) {format_quantity(peak, force)}"
+            )
+    for key, other in (
+        ("torque_corner_speed", "torque_at_velocity"),
+        ("torque_at_velocity", "torque_corner_speed"),
+        ("torque_corner_speed", "torque"),
+    ):
+        if table.has(key) and not table.has(other):
+            raise InputError.at(table.where, f'missing key "{other}": "{key}" needs it')
+    if corner is not None and velocity is not None and corner >= velocity:
+        raise table.error(
+            "torque_corner_speed",
+            f"{format_quantity(corner, speed)} is not below velocity {format_quantity(velocity, speed)}",
+        )
+    return {
+        "torque": peak,
+        "continuous_torque": lasting,
+        "torque_corner": corner,
+        "torque_at_velocity": at_velocity,
+    }
 
 
 def _gear_ratio(table: Table) -> float:
@@ -406,8 +432,8 @@ def _links(top: Table, rows: Sequence[_JointRow]) -> list[Link] | None:
     if len(links) == len(rows):
         return links
     for row in rows:
-        if row.link is None and (links or row.link_keys):
-            reason = "other joints have one" if links else f'"{row.link_keys[0]}" needs it'
+        if row.link is None and (links or row.link_keys or row.joint.torque is not None):
+            reason = "other joints have one" if links else f'"{(*row.link_keys, "torque")[0]}" needs it'
             raise InputError.at(row.table.where, f'missing key "mass": {reason}')
     return None
 

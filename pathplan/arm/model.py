@@ -31,6 +31,8 @@ class Joint:
     continuous_torque: float | None = None
     gear_ratio: float = 1.0  # motor turns per joint turn; rad of the motor per m of a prismatic joint
     encoder_counts: int | None = None  # counts per turn of the motor
+    torque_corner: float | None = None  # rad/s or m/s, joint side: above it the peak torque falls on a straight line
+    torque_at_velocity: float | None = None  # to this, N m or N, at the velocity limit. Both or neither
 
 
 @dataclass(frozen=True)

@@ -101,6 +101,7 @@ def test_everything_in_a_file_arrives_in_si(write):
     assert (turn.velocity, turn.acceleration, turn.jerk) == pytest.approx((np.pi, 10.0, np.deg2rad(6000)))
     assert (turn.torque, turn.continuous_torque) == (40.0, 15.0)
     assert (turn.gear_ratio, turn.encoder_counts) == (-80.0, 131072)
+    assert (turn.torque_corner, turn.torque_at_velocity) == (None, None)
     assert slide.position == (-np.inf, np.inf)
     assert (slide.velocity, slide.acceleration, slide.jerk, slide.torque) == (0.5, 2.0, 20.0, None)
     link = arm.links[0]
@@ -120,6 +121,20 @@ def test_everything_in_a_file_arrives_in_si(write):
     # base 500 mm up; the tool of the turned, slid arm
     np.testing.assert_allclose(arm.forward(arm.positions["home"])[:3, 3], [0, 0.32, 0.6], atol=1e-12)
     assert arm.sources == {"two.toml": hashlib.sha256(TWO.encode()).hexdigest()}
+
+
+def test_peak_torque_that_falls_with_speed(write):
+    text = TWO.replace("gear_ratio = -80", "torque_corner_speed = 90\ntorque_at_velocity = 20")
+    arm = load_arm(
+        write(
+            text.replace(
+                "jerk = 20000", 'jerk = 20000\ntorque = 30\ntorque_corner_speed = 100\ntorque_at_velocity = "0.01 kN"'
+            )
+        )
+    )
+    first, second = arm.joints
+    assert (first.torque, first.torque_corner, first.torque_at_velocity) == (40.0, pytest.approx(np.pi / 2), 20.0)
+    assert (second.torque, second.torque_corner, second.torque_at_velocity) == (30.0, pytest.approx(0.1), 10.0)
 
 
 def test_the_example_at_the_head_of_the_loader_is_a_good_file(write):
@@ -234,6 +249,41 @@ WRONG = [
         "continuous_torque = 45",
         "joint[1].continuous_torque: 45 N m is above torque (its peak) 40 N m",
     ),
+    (
+        "gear_ratio = -80",
+        "torque_corner_speed = 180\ntorque_at_velocity = 20",
+        "joint[1].torque_corner_speed: 180 deg/s is not below velocity 180 deg/s",
+    ),
+    (
+        "gear_ratio = -80",
+        "torque_corner_speed = 0\ntorque_at_velocity = 20",
+        'joint[1].torque_corner_speed: expected an angular speed above zero such as "180 deg/s", got 0',
+    ),
+    (
+        "gear_ratio = -80",
+        "torque_corner_speed = 90\ntorque_at_velocity = 41",
+        "joint[1].torque_at_velocity: 41 N m is above torque (its peak) 40 N m",
+    ),
+    (
+        "gear_ratio = -80",
+        "torque_corner_speed = 90\ntorque_at_velocity = 0",
+        'joint[1].torque_at_velocity: expected a torque above zero such as "50 N m", got 0',
+    ),
+    (
+        "gear_ratio = -80",
+        "torque_corner_speed = 90",
+        'joint[1]: missing key "torque_at_velocity": "torque_corner_speed" needs it',
+    ),
+    (
+        "gear_ratio = -80",
+        "torque_at_velocity = 20",
+        'joint[1]: missing key "torque_corner_speed": "torque_at_velocity" needs it',
+    ),
+    (
+        "torque = 40\n",
+        "torque_corner_speed = 90\ntorque_at_velocity = 20\n",
+        'joint[1]: missing key "torque": "torque_corner_speed" needs it',
+    ),
     ("gear_ratio = -80", "gear_ratio = 0", "joint[1].gear_ratio: expected a ratio such as 100, got 0"),
     (
         "encoder_counts = 131072",
@@ -314,6 +364,14 @@ def test_link_data_without_a_mass(write):
     text = TWO.replace("mass = 4\n", "").replace('mass = "800 g"\n', "")
     with pytest.raises(errors.InputError, match=re.escape('two.toml: joint[1]: missing key "mass": "com" needs it')):
         load_arm(write(text))
+
+
+def test_a_torque_limit_without_link_masses(write):
+    text = (ROBOTS / "sorter4.toml").read_text()
+    jerk = next(line for line in text.splitlines() if line.startswith("jerk"))
+    message = re.escape('arm.toml: joint[1]: missing key "mass": "torque" needs it')
+    with pytest.raises(errors.InputError, match=message):
+        load_arm(write(text.replace(jerk, f"{jerk}\ntorque = 30", 1), "arm.toml"))
 
 
 def test_a_limit_row_that_limits_nothing(write):
