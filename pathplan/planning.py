@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.errors import InputError
+from pathplan.errors import InputError, LimitError
 from pathplan.table import JointTable, Mark, tick_times
 from pathplan.task.model import Task
 
@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from pathplan.timeline import Part
     from pathplan.timing.motion import Motion
     from pathplan.timing.stretch import StretchTiming
+    from pathplan.timing.torque import TorqueLimits
 
 Array = NDArray[np.float64]
 Progress = Callable[[str, int, int], None]  # what is being done, how many are done, of how many
@@ -90,6 +91,8 @@ class Plan:
             "arm": task.arm.name,
             "task": task.title,
             "task_file": task.file.name if task.file is not None else "",
+            "tool": task.arm.tool.name,
+            "payload": task.arm.payload.name if task.arm.payload is not None else "",
             "versions": versions(torque=task.arm.links is not None),
             "sources": {**task.arm.sources, **task.sources},
             "pace": task.pace,
@@ -242,6 +245,8 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
     path = follow_task(task)
     say("path", 1, 1)
     motions = [motion_of(stretch) for stretch in path.stretches]
+    for stretch, motion in zip(path.stretches, motions, strict=True):
+        _check_held(task, stretch, motion)
     timings: list[StretchTiming] = []
     bounds: list[Array] = [np.zeros(0)]
     say("timing", 0, len(motions))
@@ -256,8 +261,33 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
     return Plan(task, path, paced, np.concatenate(bounds), parts)
 
 
+def _check_held(task: Task, stretch: Stretch, motion: Motion) -> None:
+    """Refuse a stretch on which some joint has no torque left to move with."""
+    from pathplan.timeline import step_at
+    from pathplan.units import format_quantity
+
+    unheld = motion.unheld()
+    if unheld is None:
+        return
+    step = task.steps[int(step_at(stretch, np.array([unheld.s]))[0])]
+    joint = task.arm.joints[unheld.joint]
+    dimension = "torque" if joint.kind == "revolute" else "force"
+    needed, limit = (format_quantity(abs(value), dimension) for value in (unheld.needed, unheld.limit))
+    what = "to move slowly" if unheld.moving else "just to hold the pose"
+    raise LimitError(
+        f"{step.where}: joint {joint.name} needs {needed} {what} on this step, and its peak torque is {limit}",
+        data={
+            "step": step.index,
+            "joint": joint.name,
+            "quantity": "torque",
+            "value": unheld.needed,
+            "limit": unheld.limit,
+        },
+    )
+
+
 def motion_of(stretch: Stretch) -> Motion:
-    """What limits a stretch: the arm's limit rows, and the caps on the tool."""
+    """What limits a stretch: the arm's limit rows, its torque, and the caps on the tool."""
     from pathplan.path.tool_motion import tool_derivatives
     from pathplan.timing.motion import Cap, Motion
 
@@ -269,7 +299,21 @@ def motion_of(stretch: Stretch) -> Motion:
     )
     caps = tuple(Cap(*cap) for cap in stretch.caps if cap.speed is not None or cap.acceleration is not None)
     tool = partial(tool_derivatives, stretch.arm)
-    return Motion(stretch.path, limits.matrix[kept], velocity, acceleration, jerk, caps, tool)
+    torque = torque_limits(stretch.arm)
+    return Motion(stretch.path, limits.matrix[kept], velocity, acceleration, jerk, caps, tool, torque)
+
+
+def torque_limits(arm: Arm) -> TorqueLimits | None:
+    """The arm's torque limits for the timing; None without link masses or without any limit."""
+    from pathplan.arm.path_torque import path_torque
+    from pathplan.timing.torque import TorqueLimits
+
+    n = len(arm.joints)
+    peak = arm.limits.torque[:n]
+    if arm.links is None or not np.isfinite(peak).any():
+        return None
+    never = np.full(n, np.inf)
+    return TorqueLimits(partial(path_torque, arm), peak, never, np.zeros(n))
 
 
 def _finite(rows: Array) -> Array:

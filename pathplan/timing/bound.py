@@ -1,20 +1,25 @@
 """A lower bound of the duration of any motion along a path, with its proof.
 
-Leave out the jerk limits and the caps on tool acceleration: what is left is convex in b(tau) = (dtau/dt)^2 on any
-clock tau with s(tau) at rest at both ends (Verscheure et al., IEEE TAC 2009):
+Leave out the jerk limits. What is left limits b(tau) = (dtau/dt)^2 on a clock tau with s(tau) at rest at both ends
+(Verscheure et al., IEEE TAC 2009): 0 < b <= wall (velocity, tool speed), and for every row, with coefficients that
+depend on tau alone,
 
-    minimise the integral of 1/sqrt(b)   subject to   low <= r' b'/2 + r'' b <= high for every row r,   0 < b <= wall.
+    low <= slope b' + level b + root sqrt(b) <= high        (acceleration; torque, whose viscous part has a root)
+    |slope b' + level b| <= high, a norm over three rows    (tool acceleration)
 
-For any multipliers lambda(tau) of the rows, continuous and piecewise linear, and any motion that keeps the limits,
+For any multipliers lambda(tau), continuous and piecewise linear, and any motion that keeps the limits,
 
-    duration >= integral of 1/sqrt(b) + sum lambda (r' b'/2 + r'' b) - sum (lambda+ high - lambda- low)
-              = integral of 1/sqrt(b) + c b - sum (lambda+ high - lambda- low),   c = sum (lambda r'' - lambda' r') / 2,
+    duration >= integral of 1/sqrt(b) + sum lambda (slope b' + level b + root sqrt(b)) - price
+              = integral of 1/sqrt(b) + c b + d sqrt(b) - price,
+    c = sum lambda (level - slope') - lambda' slope,    d = sum lambda root,
+    price = sum (lambda+ high - lambda- low), or |lambda| high for a norm,
 
-by integration by parts; the boundary terms vanish because r' is zero where the clock is at rest. The right side is
-least, at every tau by itself, at b = min(wall, (2c)^(-2/3)), or at the wall where c <= 0. That least value is the
-bound: it holds whatever the multipliers are, and good multipliers only make it tight. They come from a barrier method
-on the weak form of the same problem (the rows tested with hat functions), whose multipliers are such functions. The
-integral is taken by Gauss-Legendre quadrature of two orders, and their difference is taken off.
+by integration by parts; the boundary terms vanish because slope is zero where the clock is at rest. The right side is
+least where at every tau by itself b makes 1/sqrt(b) + c b + d sqrt(b) least in (0, wall]. That least value is the bound
+(weak duality: Boyd & Vandenberghe 2004, sec. 5.2): it holds whatever the multipliers are and whether or not the problem
+is convex; good multipliers only make it tight. They come from a barrier method on the weak form of the same problem (b
+constant in cells, the rows tested with hat functions and integrated by parts), whose multipliers are such functions.
+The integral is taken by Gauss-Legendre quadrature of two orders, and their difference, cell by cell, is taken off.
 """
 
 from __future__ import annotations
@@ -36,6 +41,24 @@ _TEST_POINTS = 3
 _GAP = 3e-4
 _CELLS = 160
 _SMOOTHINGS = 3
+_FAR = 1e9  # a limit that is none, in half ranges
+
+
+@dataclass(frozen=True)
+class _Field:
+    """Coefficients at P Gauss points of N cells; rows are normalised by half their range."""
+
+    slope: Array  # (R, P, N)
+    change: Array  # slope' by tau
+    level: Array
+    root: Array
+    low: Array  # (R, P, N), -inf where there is none
+    high: Array
+    tool_slope: Array  # (3, P, N), m per tau
+    tool_level: Array
+    tool_high: Array  # (P, N) m/s^2, inf where there is no cap
+    wall: Array  # (P, N)
+    weight: Array  # (P, N) of the quadrature
 
 
 @dataclass(frozen=True)
@@ -45,19 +68,44 @@ class _Mesh:
     tau: Array  # (N+1,)
     cell: NDArray[np.intp]  # (N,) cell of the coarse timing
 
-    def rows(self, points: int) -> tuple[Array, Array, Array, Array]:
-        """r' and r'' by tau (R, points, N), the wall (points, N), quadrature weights (points, N)."""
+    def field(self, points: int) -> _Field:
+        """Coefficients at the Gauss-Legendre points of every cell."""
+        motion, h = self.motion, np.diff(self.tau)
         x, w = np.polynomial.legendre.leggauss(points)
-        h = np.diff(self.tau)
         tau = self.tau[:-1] + h * (0.5 * (x + 1.0))[:, None]
         cell = np.tile(self.cell, points)
         s, s1, s2 = self.coarse.at(cell, tau.ravel())
         piece = self.coarse.piece[cell]
-        q1, q2 = self.motion.rows(piece, s, 2)
-        wall = np.minimum(speed_wall(q1, self.motion.velocity), tool_wall(self.motion, piece, s)) / s1**2
+        q1, q2 = motion.rows(piece, s, 2)
+        wall = np.minimum(speed_wall(q1, motion.velocity), tool_wall(motion, piece, s)) / s1**2
         shape = (-1, points, len(h))
-        first, second = (q1.T * s1).reshape(shape), (q2.T * s1**2 + q1.T * s2).reshape(shape)
-        return first, second, wall.reshape(shape[1:]), 0.5 * w[:, None] * h
+        half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])[:, None, None]
+        first, second = (q1.T * s1).reshape(shape) / half, (q2.T * s1**2 + q1.T * s2).reshape(shape) / half
+        limits = [np.broadcast_to(motion.acceleration[:, k, None, None] / half, first.shape) for k in range(2)]
+        rows = [(0.5 * first, 0.5 * second, second, np.zeros_like(first), limits[0], limits[1])]
+        torque = motion.torque_rows(piece, s, s1, s2)
+        if torque is not None:
+            slope = torque.on_slope.reshape(shape)
+            change = np.einsum("pk,rkn->rpn", _differentiation(x), slope) * (2.0 / h)
+            high = 1.0 - torque.constant.reshape(shape)
+            never = np.full_like(slope, -np.inf)
+            rows.append((slope, change, torque.on_b.reshape(shape), torque.on_root.reshape(shape), never, high))
+        tool = self._tool(piece, s, s1, s2, shape)
+        on_slope, change, level, root, low, high = (np.concatenate(parts) for parts in zip(*rows, strict=True))
+        weight = 0.5 * w[:, None] * h
+        return _Field(on_slope, change, level, root, low, high, *tool, wall.reshape(shape[1:]), weight)
+
+    def _tool(
+        self, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array, shape: tuple[int, ...]
+    ) -> tuple[Array, Array, Array]:
+        cap = self.motion.tool_acceleration_cap(s)
+        slope, level = np.zeros((2, 3, len(s)))
+        capped = np.isfinite(cap)
+        if capped.any():
+            x1, x2 = self.motion.tool_derivatives(piece[capped], s[capped])
+            slope[:, capped] = 0.5 * x1.T * s1[capped]
+            level[:, capped] = x2.T * s1[capped] ** 2 + x1.T * s2[capped]
+        return slope.reshape(shape), level.reshape(shape), cap.reshape(shape[1:])
 
 
 def bound_durations(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | None = None) -> Array:
@@ -69,7 +117,7 @@ def bound_durations(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | 
     weight = problem.durations(start) / problem.gap
     b, _ = follow_central_path(problem, start, start=0.1 * weight, final=_GAP * weight, factor=0.15, centred=0.01)
     multipliers = problem.multipliers(b, _GAP * weight)
-    return np.array([_best_bound(mesh, m) for mesh, m in zip(meshes, multipliers, strict=True)])
+    return np.array([_best_bound(mesh, *m) for mesh, m in zip(meshes, multipliers, strict=True)])
 
 
 def _mesh(motion: Motion, coarse: CoarseTiming) -> _Mesh:
@@ -81,10 +129,22 @@ def _mesh(motion: Motion, coarse: CoarseTiming) -> _Mesh:
     return _Mesh(motion, coarse, tau, cell)
 
 
+def _differentiation(x: Array) -> Array:
+    """(P, P) derivative at points x of the polynomial through values there (barycentric: Berrut & Trefethen 2004)."""
+    difference = x[:, None] - x + np.eye(len(x))
+    weight = 1.0 / difference.prod(axis=1)
+    matrix = weight / weight[:, None] / difference
+    np.fill_diagonal(matrix, 0.0)
+    np.fill_diagonal(matrix, -matrix.sum(axis=1))
+    return matrix
+
+
 @dataclass(frozen=True)
 class _State:
     b: Array  # (cells,)
+    root: Array  # sqrt(b)
     rows: Array  # (R, nodes)
+    tool: Array  # (3, nodes)
 
 
 class _Weak:
@@ -101,58 +161,93 @@ class _Weak:
         self.left = np.arange(len(self.owner)) + self.owner
         self.right = self.left + 1
         self.h = np.concatenate([np.diff(mesh.tau) for mesh in meshes])
-        cells, nodes = len(self.owner), len(self.node_owner)
-        widest = max(len(mesh.motion.matrix) for mesh in meshes)
-        self.at_left, self.at_right = np.zeros((2, widest, cells))  # what b of a cell adds to the rows of its nodes
-        self.low, self.high = -np.ones((widest, nodes)), np.ones((widest, nodes))
-        self.wall = np.empty(cells)
+        nodes = len(self.node_owner)
         self.node_width = sum_by(self.left, self.h / 2, nodes) + sum_by(self.right, self.h / 2, nodes)
         total = sum_by(self.owner, self.h, self.count)
         self.share, self.node_share = self.h / total[self.owner], self.node_width / total[self.node_owner]
+        self._test([mesh.field(_TEST_POINTS) for mesh in meshes])
+        self.gap = 2.0 * len(self.low) + 3.0
+
+    def _test(self, fields: Sequence[_Field]) -> None:
+        """Test the rows of all stretches with the hat functions."""
+        widest = max(len(field.slope) for field in fields)
+        cells, nodes = len(self.owner), len(self.node_owner)
+        # what b, and its root, in a cell add to the rows of its left (0) and right (1) node
+        self.on_b, self.on_root = np.zeros((2, 2, widest, cells))
+        self.tool_on_b = np.zeros((2, 3, cells))
+        self.low, self.high = np.zeros((2, widest, nodes))
+        self.wall = np.concatenate([field.wall.min(axis=0) for field in fields])
+        capped = np.ones(nodes, dtype=bool)
+        cap = np.zeros(nodes)
+        x = 0.5 * (np.polynomial.legendre.leggauss(_TEST_POINTS)[0] + 1.0)[:, None]
         at = 0
-        for k, mesh in enumerate(meshes):
-            here = slice(at, at + len(mesh.tau) - 1)
-            node = slice(at + k, at + k + len(mesh.tau))
-            limits = mesh.motion.acceleration
-            half = 0.5 * (limits[:, 1] - limits[:, 0])[:, None]
-            rows = slice(0, len(half))
-            self.at_left[rows, here], self.at_right[rows, here], self.wall[here] = _tested_rows(mesh)
-            self.at_left[rows, here] /= half
-            self.at_right[rows, here] /= half
-            self.low[rows, node], self.high[rows, node] = limits[:, :1] / half, limits[:, 1:] / half
-            at += len(mesh.tau) - 1
-        self.at_left /= self.node_width[self.left]
-        self.at_right /= self.node_width[self.right]
-        self.gap = 2.0 * widest + 1.0
+        for k, field in enumerate(fields):
+            here = slice(at, at + field.wall.shape[1])
+            rows = slice(0, len(field.slope))
+            h = self.h[here]
+            for end, (hat, steep) in enumerate(((1.0 - x, -1.0 / h), (x, 1.0 / h))):
+                node = slice(at + k + end, at + k + end + len(h))
+                tested = field.weight * hat
+                b = (tested * (field.level - field.change) - field.weight * steep * field.slope).sum(axis=1)
+                self.on_b[end, rows, here] = b / self.node_width[node]
+                self.on_root[end, rows, here] = (tested * field.root).sum(axis=1) / self.node_width[node]
+                self.low[rows, node] += (tested * np.maximum(field.low, -_FAR)).sum(axis=1) / self.node_width[node]
+                self.high[rows, node] += (tested * field.high).sum(axis=1) / self.node_width[node]
+                tool = (tested * 0.5 * field.tool_level - field.weight * steep * field.tool_slope).sum(axis=1)
+                self.tool_on_b[end, :, here] = tool / self.node_width[node]
+                whole = np.isfinite(field.tool_high).all(axis=0)
+                capped[node] &= whole
+                top = np.where(np.isfinite(field.tool_high), field.tool_high, 0.0)
+                cap[node] += (tested * top).sum(axis=0) / self.node_width[node]
+            empty = slice(len(field.slope), widest)
+            self.low[empty, at + k : at + k + len(h) + 1], self.high[empty, at + k : at + k + len(h) + 1] = -1.0, 1.0
+            at += len(h)
+        self.cap = np.where(capped, cap, np.inf)  # m/s^2; a node next to an uncapped cell has no cap
+        self.tool_on_b[0] /= self.cap[self.left]
+        self.tool_on_b[1] /= self.cap[self.right]
 
     def durations(self, b: Array) -> Array:
         return sum_by(self.owner, self.h / np.sqrt(b), self.count)
 
-    def rows(self, b: Array) -> Array:
-        out = np.zeros_like(self.low)
-        out[:, self.left] = self.at_left * b
-        out[:, self.right] += self.at_right * b
+    def _at_nodes(self, left: Array, right: Array) -> Array:
+        out = np.zeros((len(left), len(self.node_owner)))
+        out[:, self.left] = left
+        out[:, self.right] += right
         return out
 
     def feasible_start(self) -> Array:
-        b = np.ones(len(self.owner))
-        rows = self.rows(b)
-        worst = np.zeros(self.count)
-        np.maximum.at(worst, self.node_owner, np.maximum(rows / self.low, rows / self.high).max(axis=0))
-        np.maximum.at(worst, self.owner, b / self.wall)
-        return b / (1.05 * worst[self.owner])
+        """b constant on every stretch, no limit used beyond about 0.9 of the room it leaves."""
+        factor = np.ones(self.count)
+        for _ in range(400):
+            state = self.state(factor[self.owner])
+            used = np.maximum(state.rows / np.where(self.rows_up(state), self.high, self.low), 0.0).max(axis=0)
+            used = np.maximum(used, np.sqrt((state.tool**2).sum(axis=0)))
+            worst = np.zeros(self.count)
+            np.maximum.at(worst, self.node_owner, used)
+            np.maximum.at(worst, self.owner, state.b / self.wall)
+            if not np.any(worst > 0.9):
+                return factor[self.owner]
+            factor = np.where(worst > 0.9, factor / np.clip(worst / 0.85, 1.05, 1e6), factor)
+        raise ArithmeticError("timing: no speed is slow enough for the limits")
+
+    @staticmethod
+    def rows_up(state: _State) -> NDArray[np.bool_]:
+        return state.rows > 0
 
     def state(self, b: Array) -> _State:
-        return _State(b, self.rows(b))
+        root = np.sqrt(np.maximum(b, 0.0))
+        rows = self._at_nodes(*(self.on_b[end] * b + self.on_root[end] * root for end in range(2)))
+        return _State(b, root, rows, self._at_nodes(*(self.tool_on_b[end] * b for end in range(2))))
 
     def value(self, state: _State, mu: Array) -> Array:
         under = 1.0 - state.b / self.wall
         slack = (self.high - state.rows) * (state.rows - self.low)
-        bad_node = ~(slack > 0).all(axis=0)
+        room = 1.0 - (state.tool**2).sum(axis=0)
+        bad_node = ~((slack > 0).all(axis=0) & (room > 0))
         bad = ~((under > 0) & (state.b > 0))
         with np.errstate(invalid="ignore", divide="ignore"):
-            cost = np.where(bad, 0.0, self.h / np.sqrt(state.b) - mu[self.owner] * self.share * np.log(under))
-            logs = np.where(bad_node, 0.0, self.node_share * np.log(slack.prod(axis=0)))
+            cost = np.where(bad, 0.0, self.h / state.root - mu[self.owner] * self.share * np.log(under))
+            logs = np.where(bad_node, 0.0, self.node_share * (np.log(slack).sum(axis=0) + np.log(room)))
         total = sum_by(self.owner, cost, self.count) - mu * sum_by(self.node_owner, logs, self.count)
         total[self.owner[bad]] = np.inf
         total[self.node_owner[bad_node]] = np.inf
@@ -164,70 +259,112 @@ class _Weak:
         m, m_node = mu[self.owner] * self.share, mu[self.node_owner] * self.node_share
         above, below = 1 / (self.high - state.rows), 1 / (state.rows - self.low)
         slope, bend = m_node * (above - below), m_node * (above * above + below * below)
+        # rows are linear in b but for the root, whose tangent stands for it
+        tangent = [self.on_b[end] + self.on_root[end] * (0.5 / state.root) for end in range(2)]
+        room = 2.0 * m_node / (1.0 - (state.tool**2).sum(axis=0))
+        ends = (self.left, self.right)
         under = 1 / (self.wall - state.b)
-        time = self.h / np.sqrt(state.b) / state.b
+        time = self.h / state.root / state.b
         gradient = m * under - 0.5 * time
-        gradient += (slope[:, self.left] * self.at_left + slope[:, self.right] * self.at_right).sum(axis=0)
         band = np.zeros((2, len(state.b)))
         band[1] = 0.75 * time / state.b + m * under * under
-        band[1] += (bend[:, self.left] * self.at_left**2 + bend[:, self.right] * self.at_right**2).sum(axis=0)
+        pull = []
+        for end, node in enumerate(ends):
+            tool = self.tool_on_b[end]
+            pull.append((state.tool[:, node] * tool).sum(axis=0))
+            gradient += (slope[:, node] * tangent[end]).sum(axis=0) + room[node] * pull[end]
+            band[1] += (bend[:, node] * tangent[end] ** 2).sum(axis=0)
+            band[1] += room[node] * (tool**2).sum(axis=0) + room[node] ** 2 / m_node[node] * pull[end] ** 2
         neighbours = self.owner[1:] == self.owner[:-1]
-        shared = (bend[:, self.left[1:]] * self.at_right[:, :-1] * self.at_left[:, 1:]).sum(axis=0)
+        node = self.left[1:]
+        shared = (bend[:, node] * tangent[1][:, :-1] * tangent[0][:, 1:]).sum(axis=0)
+        shared += room[node] * (self.tool_on_b[1][:, :-1] * self.tool_on_b[0][:, 1:]).sum(axis=0)
+        shared += room[node] ** 2 / m_node[node] * pull[1][:-1] * pull[0][1:]
         band[0, 1:] = np.where(neighbours, shared, 0.0)
         step = -solveh_banded(band, gradient, check_finite=False)
         return step, -sum_by(self.owner, gradient * step, self.count)
 
     def reach(self, state: _State, step: Array) -> Array:
-        rows = self.rows(step)
+        tangent = (self.on_b[end] + self.on_root[end] * (0.5 / state.root) for end in range(2))
+        rows = self._at_nodes(*(side * step for side in tangent))
         ratio = np.maximum(rows / (self.high - state.rows), rows / (self.low - state.rows)).max(axis=0)
         worst = np.full(self.count, 1e-9)
         np.maximum.at(worst, self.node_owner, ratio)
         np.maximum.at(worst, self.owner, np.maximum(step / (self.wall - state.b), -step / state.b))
         return 1.0 / worst
 
-    def multipliers(self, b: Array, mu: Array) -> list[Array]:
-        """Signed multipliers (R, nodes) of every stretch, per unit of tau and half range."""
-        rows = self.rows(b)
-        density = (mu[self.node_owner] * self.node_share / self.node_width) * (
-            1 / (self.high - rows) - 1 / (rows - self.low)
-        )
-        return np.split(density, np.cumsum(self.nodes)[:-1], axis=1)
+    def multipliers(self, b: Array, mu: Array) -> list[tuple[Array, Array]]:
+        """For every stretch, per unit of tau: signed multipliers of the rows (R, nodes) and of the tool (3, nodes)."""
+        state = self.state(b)
+        weight = mu[self.node_owner] * self.node_share / self.node_width
+        density = weight * (1 / (self.high - state.rows) - 1 / (state.rows - self.low))
+        tool = weight * 2 * state.tool / (1.0 - (state.tool**2).sum(axis=0)) / self.cap
+        one_sided = self.low <= -0.5 * _FAR
+        density = np.where(one_sided, np.maximum(density, 0.0), density)
+        borders = np.cumsum(self.nodes)[:-1]
+        return list(zip(np.split(density, borders, axis=1), np.split(tool, borders, axis=1), strict=True))
 
 
-def _tested_rows(mesh: _Mesh) -> tuple[Array, Array, Array]:
-    """What b of a cell adds to the rows of its left and right node, (R, cells) each, and the wall (cells,)."""
-    x = 0.5 * (np.polynomial.legendre.leggauss(_TEST_POINTS)[0] + 1.0)[:, None]
-    first, second, wall, weight = mesh.rows(_TEST_POINTS)
-    h = np.diff(mesh.tau)
-    left = 0.5 * (weight * ((1.0 - x) * second + first / h)).sum(axis=1)
-    right = 0.5 * (weight * (x * second - first / h)).sum(axis=1)
-    return left, right, wall.min(axis=0)
-
-
-def _best_bound(mesh: _Mesh, multipliers: Array) -> float:
+def _best_bound(mesh: _Mesh, rows: Array, tool: Array) -> float:
     """The largest bound over the multipliers and smoothed versions of them (the weak form leaves them jagged)."""
-    fields = [mesh.rows(points) for points in _ORDERS]
+    fields = [mesh.field(points) for points in _ORDERS]
+    rows = rows[: len(fields[0].slope)]
     best = 0.0
     for _ in range(_SMOOTHINGS):
-        coarse, fine = (_bound_density(mesh, multipliers, *field) for field in fields)
+        coarse, fine = (_bound_density(mesh, field, rows, tool) for field in fields)
         best = max(best, float(fine.sum() - np.abs(fine - coarse).sum()))
-        smooth = multipliers.copy()
-        smooth[:, 1:-1] = 0.25 * (multipliers[:, :-2] + 2 * multipliers[:, 1:-1] + multipliers[:, 2:])
-        multipliers = smooth
+        rows = _smoothed(rows)
     return best
 
 
-def _bound_density(mesh: _Mesh, multipliers: Array, first: Array, second: Array, wall: Array, weight: Array) -> Array:
+def _smoothed(values: Array) -> Array:
+    smooth = values.copy()
+    smooth[:, 1:-1] = 0.25 * (values[:, :-2] + 2 * values[:, 1:-1] + values[:, 2:])
+    return smooth
+
+
+def _bound_density(mesh: _Mesh, field: _Field, rows: Array, tool: Array) -> Array:
     """(N,) what every cell adds to the bound."""
-    points = len(weight)
-    limits = mesh.motion.acceleration
-    half = 0.5 * (limits[:, 1] - limits[:, 0])[:, None, None]
-    x = 0.5 * (np.polynomial.legendre.leggauss(points)[0] + 1.0)[:, None]
-    change = np.diff(multipliers, axis=1)[:, None, :]
-    value = multipliers[:, None, :-1] + change * x
-    c = ((value * second - change / np.diff(mesh.tau) * first) / half).sum(axis=0) / 2
-    price = np.maximum(value * limits[:, 1, None, None] / half, value * limits[:, 0, None, None] / half)
+    h = np.diff(mesh.tau)
+    x = 0.5 * (np.polynomial.legendre.leggauss(len(field.weight))[0] + 1.0)[:, None]
+
+    def between(nodes: Array) -> tuple[Array, Array]:
+        change = np.diff(nodes, axis=1)[:, None, :]
+        return nodes[:, None, :-1] + change * x, change / h
+
+    value, change = between(rows)
+    c = (value * (field.level - field.change) - change * field.slope).sum(axis=0)
+    d = (value * field.root).sum(axis=0)
+    with np.errstate(invalid="ignore"):
+        price = np.maximum(value * field.high, np.where(value < 0, value * field.low, 0.0)).sum(axis=0)
+    if tool.any():
+        value, change = between(tool)
+        c += (value * 0.5 * field.tool_level - change * field.tool_slope).sum(axis=0)
+        size = np.sqrt((value**2).sum(axis=0))
+        price += np.where(size > 0, size * np.where(np.isfinite(field.tool_high), field.tool_high, 0.0), 0.0)
+    return ((_least(c, d, np.sqrt(field.wall)) - price) * field.weight).sum(axis=0)
+
+
+def _least(c: Array, d: Array, wall: Array) -> Array:
+    """The least of 1/y + c y^2 + d y over 0 < y <= wall."""
+
+    def value(y: Array) -> Array:
+        out: Array = 1 / y + c * y * y + d * y
+        return out
+
+    # the slope -1/y^2 + 2 c y + d rises from -inf while 2/y^3 + 2 c > 0: its zero there is the only inner minimum
     with np.errstate(divide="ignore", invalid="ignore"):
-        free = (2 * c) ** (-2.0 / 3.0)
-    b = np.where((c > 0) & (free < wall), free, wall)
-    return ((1 / np.sqrt(b) + c * b - price.sum(axis=0)) * weight).sum(axis=0)
+        top = np.where(c < 0, np.minimum(wall, np.cbrt(1 / np.abs(c))), wall)
+        rising = (-1 / top**2 + 2 * c * top + d) > 0
+    low, high = np.zeros_like(top), top
+    if not d.any():
+        with np.errstate(divide="ignore"):
+            high = np.where(rising, np.cbrt(0.5 / np.where(c > 0, c, np.inf)), top)
+    else:
+        for _ in range(60):
+            middle = 0.5 * (low + high)
+            with np.errstate(divide="ignore"):
+                up = (-1 / middle**2 + 2 * c * middle + d) > 0
+            low, high = np.where(up, low, middle), np.where(up, middle, high)
+    inner = np.where(rising, value(np.where(rising, high, wall)), np.inf)
+    return np.minimum(inner, value(wall))

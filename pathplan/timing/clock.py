@@ -76,8 +76,6 @@ class Clock:
 
 def make_clock(coarse: CoarseTiming, window: float) -> Clock:
     """The coarse timing averaged over `window` seconds, as a clock of duration coarse duration + window."""
-    from scipy.interpolate import BSpline
-
     end, length = float(coarse.time[-1]), float(coarse.s[-1])
     duration = end + window
     count = int(np.clip(np.ceil(duration / window * _KNOTS_PER_WINDOW), _FEWEST_KNOTS, _MOST_KNOTS))
@@ -93,7 +91,30 @@ def make_clock(coarse: CoarseTiming, window: float) -> Clock:
     least = np.linspace(0.0, _LEAST_SLOPE * length, len(control))
     control = np.maximum.accumulate(np.clip(control, 0.0, length)) * (1.0 - _LEAST_SLOPE) + least
     control[:3], control[-3:] = 0.0, length
-    spline = BSpline(t, control, _DEGREE)
-    scale = np.array([1.0, 1.0, 2.0, 6.0, 24.0, 120.0])
-    taylor = [spline(knots[:-1], nu=order) / scale[order] for order in range(_DEGREE, -1, -1)]
-    return Clock(knots, np.stack(taylor))
+    return Clock(knots, _taylor(t, control))
+
+
+def _taylor(t: Array, control: Array) -> Array:
+    """(6, K) local powers at the K distinct knots of a clamped quintic B-spline, highest first.
+
+    De Boor's algorithm on the spline and its derivatives, at all knots at once (de Boor 1978, ch. X). Our own, because
+    importing scipy's splines takes longer than planning a task.
+    """
+    spans = np.arange(_DEGREE, len(t) - _DEGREE - 1)
+    x = t[spans]
+    powers, factorial = [], 1.0
+    for order in range(_DEGREE + 1):
+        degree = _DEGREE - order
+        knots = t[order : len(t) - order]
+        j = spans - order
+        values = [control[j - degree + i] for i in range(degree + 1)]
+        for r in range(1, degree + 1):
+            for i in range(degree, r - 1, -1):
+                left, right = knots[i + j - degree], knots[i + 1 + j - r]
+                share = (x - left) / (right - left)
+                values[i] = (1.0 - share) * values[i - 1] + share * values[i]
+        powers.append(values[degree] / factorial)
+        factorial *= order + 1
+        if degree:
+            control = degree * np.diff(control) / (knots[degree + 1 : -1] - knots[1 : -degree - 1])
+    return np.stack(powers[::-1])

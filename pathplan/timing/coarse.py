@@ -20,6 +20,7 @@ Array = NDArray[np.float64]
 
 _CELLS = 60  # a stretch has about this many cells, and every piece of its path at least _CELLS_PER_PIECE
 _CELLS_PER_PIECE = 8
+_NO_LOW = -1e9  # low side of a one-sided row
 _NEVER = 1e-12  # q' below this (relative to its limit) does not limit the speed
 
 
@@ -101,6 +102,26 @@ def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
     return np.concatenate([*nodes, breaks[-1:]]), np.concatenate(pieces)
 
 
+def _end_rows(
+    motion: Motion, piece: NDArray[np.intp], s: Array, slope: Array, level: Array
+) -> tuple[Array, Array, Array, Array]:
+    """Coefficients on db/ds and b, and low and high, each (N, R): acceleration rows as given, then torque rows.
+
+    Viscous torque is left out: this timing is only a clock, and a starting point for the bound.
+    """
+    half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
+    low, high = (np.broadcast_to(motion.acceleration[:, k] / half, slope.shape) for k in range(2))
+    torque = motion.torque_rows(piece, s, np.ones(len(s)), np.zeros(len(s)))
+    if torque is None:
+        return slope, level, low, high
+    return (
+        np.hstack([slope, torque.on_slope.T]),
+        np.hstack([level, torque.on_b.T]),
+        np.hstack([low, np.full_like(torque.on_b.T, _NO_LOW)]),
+        np.hstack([high, 1.0 - torque.constant.T]),
+    )
+
+
 @dataclass(frozen=True)
 class _State:
     b: Array
@@ -127,25 +148,25 @@ class _Coarse:
         self.wall = np.full(len(self.owner), np.inf)
         coefficients, low, high = [], [], []
         for k, (motion, (s, piece)) in enumerate(zip(motions, meshes, strict=True)):
-            parts = []
+            half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
+            h = np.diff(s)[:, None]
+            ends = []
             for side, at in enumerate((s[:-1], s[1:])):
                 first_rows, second_rows = motion.rows(piece, at, 2)
                 wall = np.minimum(speed_wall(first_rows, motion.velocity), tool_wall(motion, piece, at))
                 target = self.wall[first[k] + side : first[k] + side + len(at)]
                 np.minimum(target, wall, out=target)
-                parts.append((first_rows, second_rows))
-            half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
-            h = np.diff(s)[:, None]
-            to_left = np.stack([-p[0] / (2 * h) for p in parts], axis=1) / half
-            to_right = -to_left
-            to_left[:, 0] += parts[0][1] / half
-            to_right[:, 1] += parts[1][1] / half
-            coefficients.append(np.stack([to_left, to_right]))
-            low.append(np.broadcast_to(motion.acceleration[:, 0] / half, (len(piece), len(half))))
-            high.append(np.broadcast_to(motion.acceleration[:, 1] / half, (len(piece), len(half))))
+                ends.append(_end_rows(motion, piece, at, first_rows / (2 * half), second_rows / half))
+            slope = np.stack([end[0] for end in ends], axis=1) / h[:, None, :]
+            both = np.stack([-slope, slope])
+            both[0, :, 0] += ends[0][1]
+            both[1, :, 1] += ends[1][1]
+            coefficients.append(both)
+            low.append(np.stack([end[2] for end in ends], axis=1))
+            high.append(np.stack([end[3] for end in ends], axis=1))
         self.coefficients = _stack(coefficients, axis=1)  # (2, cells, 2, R)
-        self.low = _stack(low, axis=0, fill=-1.0)[:, None, :]
-        self.high = _stack(high, axis=0, fill=1.0)[:, None, :]
+        self.low = _stack(low, axis=0, fill=-1.0)  # (cells, 2, R)
+        self.high = _stack(high, axis=0, fill=1.0)
         self.weight = 0.5 * self.h / self.per_stretch_cells(self.h)[self.cell_owner]
         self.node_weight = np.zeros(len(self.owner))
         np.add.at(self.node_weight, self.left, self.weight)

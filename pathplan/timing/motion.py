@@ -10,9 +10,11 @@ from numpy.typing import ArrayLike, NDArray
 
 from pathplan.errors import InputError
 from pathplan.path.joint import JointPath
-from pathplan.timing.torque import TorqueLimits, TorqueRows, torque_rows
+from pathplan.timing.torque import TorqueLimits, TorqueRows, Unheld, torque_rows
 
 Array = NDArray[np.float64]
+_HELD_POINTS = 33  # a piece of the path is looked at in this many places, its ends included
+_LEAST_ROOM = 2e-3  # of a torque limit must be left to accelerate with
 ToolDerivatives = Callable[[Array, Array, Array], tuple[Array, Array]]
 
 
@@ -70,6 +72,26 @@ class Motion:
         q, q1, q2 = self.path.all_at(piece, s - self.path.breaks[piece], 2)
         c1, c2 = s1[:, None], s2[:, None]
         return torque_rows(self.torque, q, q1 * c1, q2 * c1**2 + q1 * c2)
+
+    def unheld(self) -> Unheld | None:
+        """The worst place where gravity, or gravity and the friction of slow motion, take all the torque there is."""
+        if self.torque is None:
+            return None
+        breaks = self.path.breaks
+        share = np.linspace(0.0, 1.0, _HELD_POINTS)
+        s = (breaks[:-1, None] + np.diff(breaks)[:, None] * share).ravel()
+        piece = np.repeat(np.arange(len(breaks) - 1), _HELD_POINTS)
+        rows = self.torque_rows(piece, s, np.ones(len(s)), np.zeros(len(s)))
+        if rows is None or not rows.constant.size:
+            return None
+        moving = rows.gravity.max() < 1.0
+        used = rows.constant if moving else rows.gravity
+        row, at = np.unravel_index(int(np.argmax(used)), used.shape)
+        if used[row, at] < 1.0 - _LEAST_ROOM:
+            return None
+        joint = int(rows.joint[row])
+        limit = float(self.torque.peak[joint, 1 if rows.sign[row] > 0 else 0])
+        return Unheld(float(s[at]), joint, float(used[row, at]) * limit, limit, bool(moving))
 
     @property
     def capped(self) -> bool:

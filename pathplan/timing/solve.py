@@ -33,6 +33,7 @@ _TIGHTENINGS = 5
 _TIGHT = 2e-4  # overstepping left to slowing the whole stretch
 _SLOWINGS = 200
 _CHECK_POINTS = 33  # per cell, ends included; peaks between them by parabolas
+_TORQUE_MARGIN = 5e-5  # and torque with this, for peaks between the points it is checked at
 _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of tables
 _FEWEST_CELLS = 12
 _CELLS_PER_WINDOW = 3.0
@@ -164,7 +165,7 @@ def _slowed_for_torque(problem: FineProblem, x: Array, checked: Rows, basis: Arr
     for _ in range(_SLOWINGS):
         peaks = _peaks(checked, problem.evaluate(x * factor[problem.owner], basis)).torque.max(axis=0)
         worst = np.zeros(problem.count)
-        np.maximum.at(worst, problem.cell_owner, peaks - (1.0 - _MARGIN))
+        np.maximum.at(worst, problem.cell_owner, peaks - (1.0 - _TORQUE_MARGIN))
         if not np.any(worst > 0):
             return x * factor[problem.owner]
         factor = np.where(worst > 0, factor * (1.0 - np.clip(2.0 * worst, 1e-6, 0.2)), factor)
@@ -173,7 +174,10 @@ def _slowed_for_torque(problem: FineProblem, x: Array, checked: Rows, basis: Arr
 
 def _peaks(rows: Rows, b: Array) -> Shares:
     """The largest shares in every cell: the arrays of `Shares` without their axis of points."""
-    return Shares(*(_top(values) for values in limit_shares(rows, b)))
+    shares = limit_shares(rows, b)
+    # torque jumps where a joint turns round, and a parabola over a jump would see a peak that is none
+    torque = shares.torque.max(axis=1)
+    return Shares(_top(shares.speed), _top(shares.acceleration), _top(shares.jerk), _top(shares.tool), torque)
 
 
 def _top(values: Array) -> Array:

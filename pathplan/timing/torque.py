@@ -51,7 +51,8 @@ def torque_rows(limits: TorqueLimits, q: Array, p1: Array, p2: Array) -> TorqueR
     """Rows of all limited joints at points with q, p', p'' (N, n)."""
     terms = limits.terms(q, p1, p2)
     parts: list[tuple[Array, ...]] = []
-    joints, signs = [], []
+    joints: list[int] = []
+    signs: list[int] = []
     for falling in (False, True):
         for joint in np.flatnonzero(np.isfinite(limits.peak).all(axis=1)):
             if falling and not np.isfinite(limits.corner[joint]):
@@ -74,9 +75,20 @@ def torque_rows(limits: TorqueLimits, q: Array, p1: Array, p2: Array) -> TorqueR
                         )
                     )
                 )
-                joints.append(joint)
+                joints.append(int(joint))
                 signs.append(sign)
     stacked = [np.stack([part[k] for part in parts]) if parts else np.zeros((0, len(q))) for k in range(5)]
     on_b, on_slope, on_root, constant, gravity = stacked
-    joint, side = np.array(joints, dtype=np.intp), np.array(signs, dtype=np.int64)
-    return TorqueRows(on_b, on_slope, on_root, constant, gravity, joint, side)
+    which, sides = np.array(joints, dtype=np.intp), np.array(signs, dtype=np.int64)
+    return TorqueRows(on_b, on_slope, on_root, constant, gravity, which, sides)
+
+
+@dataclass(frozen=True)
+class Unheld:
+    """Where torque runs out whatever the speed: path parameter, joint, torque needed and torque there is (SI)."""
+
+    s: float
+    joint: int
+    needed: float
+    limit: float
+    moving: bool  # True: holding would do, but friction of the slowest motion comes on top
