@@ -10,17 +10,19 @@ import io
 import itertools
 import os
 import re
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import BinaryIO
 
 import numpy as np
+from numpy.typing import NDArray
 
 from pathplan.errors import InputError
-from pathplan.export.columns import UNITS_TEXT, Array, Group, groups
+from pathplan.export.columns import AS_ON_SCREENS, Array, Group, Units, fitting, units_from, units_text
 from pathplan.export.header import (
     FORMAT,
+    MAX_HEADER,
     RESERVED,
     Header,
     cycle_from,
@@ -29,39 +31,34 @@ from pathplan.export.header import (
     json_line,
     mark_as_dict,
     mark_from,
+    rows_from,
 )
 from pathplan.export.kinds import MAX_ROWS, Kind
-from pathplan.export.quaternions import quaternions_of, rotations_of
-from pathplan.table import JointTable, Mark, tick_times
+from pathplan.export.rows import faults, numbers, table_of
+from pathplan.table import JointTable, Mark
 
 TITLE = "# pathplan joint table, format "
 BREAKS_LIMITS = "# THIS TABLE BREAKS LIMITS: it failed its audit and must not be run"
 BYTE_ORDER_MARK = "\ufeff".encode()  # some editors put it in front of UTF-8 text
 MAX_LINE = 1 << 20  # characters, of a header line or a row
 MAX_HEADER_LINES = 100_000
+BLOCK = 1 << 24  # characters of rows that are read at once
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?", re.ASCII)
 
 
-def write(chunks: Iterator[JointTable], stream: BinaryIO, header: Header) -> None:
+def write(chunks: Iterator[JointTable], stream: BinaryIO, header: Header, units: Units) -> None:
     """See `Kind.write`."""
-    known = groups(header.joint_names, header.joint_kinds)
-    for line in _header_lines(header):
+    for line in _header_lines(header, units):
         stream.write(_encoded(line + "\n"))
     # How many rows there are is known at the end only, so room is kept: it tells when a file was cut short.
     place = stream.tell()
     stream.write(_rows_line(0))
     rows = 0
-    before = None
-    for table in chunks:
-        present = [group for group in known if getattr(table, group.field) is not None]
+    for columns, block, steps in numbers(chunks, header, units):
         if rows == 0:
-            stream.write(_encoded(_csv_line([column for group in present for column in group.columns])))
-        quaternions = None
-        if table.pose is not None:
-            quaternions = quaternions_of(table.pose[:, :3, :3], before)
-            before = quaternions[-1]
-        stream.write(_encoded(_rows_text(table, present, quaternions)))
-        rows += len(table)
+            stream.write(_encoded(_csv_line(columns)))
+        stream.write(_encoded(_rows_text(block, steps)))
+        rows += len(block)
     stream.seek(place)
     stream.write(_rows_line(rows))
     stream.seek(0, os.SEEK_END)
@@ -76,13 +73,13 @@ def _rows_line(rows: int) -> bytes:
     return f"# rows = {rows:<10}\n".encode()
 
 
-def _header_lines(header: Header) -> Iterator[str]:
+def _header_lines(header: Header, units: Units) -> Iterator[str]:
     yield f"{TITLE}{FORMAT}"
     if header.meta.get("breaks_limits"):
         yield BREAKS_LIMITS
     for key, value in header.meta.items():
         yield f"# {key} = {json_line(value)}"
-    yield f"# units = {json_line(UNITS_TEXT)}"
+    yield f"# units = {json_line(units_text(units))}"
     yield f"# cycle_s = {json_line(header.cycle)}"
     yield f"# joints = {json_line(header.joints())}"
     for mark in header.marks:
@@ -95,34 +92,10 @@ def _csv_line(cells: list[str]) -> str:
     return line.getvalue()
 
 
-def _rows_text(table: JointTable, present: list[Group], quaternions: Array | None) -> str:
-    """Rows as text. All columns but the last, step, are floats."""
-    parts = []
-    for group in present[:-1]:
-        if group.field == "time":
-            values = _clean_times(table)[:, None]
-        elif group.field == "pose":
-            assert table.pose is not None and quaternions is not None
-            values = np.hstack([table.pose[:, :3, 3], quaternions])
-        else:
-            values = getattr(table, group.field).reshape(len(table), -1)
-        parts.append(values * np.array(group.factors))
-    numbers = np.hstack(parts) + 0.0  # adding zero turns -0.0 into 0.0
-    rows = numbers.tolist()
-    steps = (table.step + 1).tolist()
+def _rows_text(block: Array, steps: NDArray[np.int64]) -> str:
     # repr is the shortest text that reads back as the same float; nothing faster was found than joining it
-    return "".join(f"{','.join(map(repr, row))},{step}\n" for row, step in zip(rows, steps, strict=True))
-
-
-def _clean_times(table: JointTable) -> Array:
-    """Times; those that are ticks but for the rounding of a product become the float that prints cleanly."""
-    if table.cycle is None:
-        return table.time
-    ticks = np.rint(table.time / table.cycle)
-    if np.abs(ticks).max() > 2**52:
-        return table.time
-    clean = tick_times(ticks.astype(np.int64), table.cycle)
-    return np.where(np.abs(clean - table.time) <= 4 * np.spacing(np.abs(table.time)), clean, table.time)
+    rows = zip(block.tolist(), steps.tolist(), strict=True)
+    return "".join(f"{','.join(map(repr, row))},{step}\n" for row, step in rows)
 
 
 def read_header(file: Path) -> Header:
@@ -136,35 +109,13 @@ def read(file: Path) -> JointTable:
     with open(file, "rb") as stream:
         top = _read_header(file, stream)
         header = top.header
-        present, order = _columns(file, header, top.names)
+        present, order = _columns(file, top)
         blocks = list(_number_blocks(file, stream, top.lines + 1, present, order))
     rows = sum(map(len, blocks))
     if rows != top.rows or not rows:
         complaint = f"has {rows} rows where its header says {top.rows}: cut short or edited"
         raise InputError.at(str(file), complaint)
-    arrays = {}
-    start = 0
-    for group in present:  # one group at a time, so that the peak of memory is little above the table itself
-        stop = start + len(group.columns)
-        values = np.concatenate([block[:, start:stop] for block in blocks]) / np.array(group.factors)
-        arrays[group.field] = values if group.field in ("pose", *JOINT_FIELDS) else values[:, 0]
-        start = stop
-    arrays["step"] = arrays["step"].astype(np.int64) - 1
-    if "pose" in arrays:
-        arrays["pose"] = _poses(arrays["pose"])
-    for array in arrays.values():
-        array.setflags(write=False)  # ours alone: spares the table its copy
-    return JointTable(
-        **arrays,
-        joint_names=header.joint_names,
-        joint_kinds=header.joint_kinds,
-        cycle=header.cycle,
-        marks=header.marks,
-        meta=header.meta,
-    )
-
-
-JOINT_FIELDS = ("position", "velocity", "acceleration", "jerk", "torque")
+    return table_of(blocks, present, header, str(file))
 
 
 def _line(file: Path, stream: BinaryIO, number: int) -> str:
@@ -185,6 +136,7 @@ class _Top:
     """All that stands above the rows of a file."""
 
     header: Header
+    units: Units
     rows: int
     names: str  # the line of column names
     lines: int  # how many lines all this is
@@ -207,8 +159,8 @@ def _read_header(file: Path, stream: BinaryIO) -> _Top:
         text = _line(file, stream, number)
         if not text.startswith("#"):
             break
-        if number > MAX_HEADER_LINES:
-            raise InputError.at(where, f"more than {MAX_HEADER_LINES} header lines")
+        if number > MAX_HEADER_LINES or stream.tell() > MAX_HEADER:
+            raise InputError.at(where, f"more than {MAX_HEADER_LINES} header lines or {MAX_HEADER >> 20} MiB of them")
         key, equals, value = text[1:].partition(" = ")
         key = key.strip()
         if not equals:
@@ -223,58 +175,48 @@ def _read_header(file: Path, stream: BinaryIO) -> _Top:
     for key in ("joints", "cycle_s", "rows"):
         if key not in values:
             raise InputError.at(where, f'header has no line "# {key} = ..."')
-    rows = values["rows"]
-    if not isinstance(rows, int) or not 0 <= rows <= MAX_ROWS:
-        raise InputError.at(where, "rows", f"expected a number up to {MAX_ROWS}, got {str(rows)[:40]}")
+    rows = rows_from(values["rows"], MAX_ROWS, where)
     names, kinds = joints_from(values["joints"], where)
     meta = {key: value for key, value in values.items() if key not in RESERVED}
     header = Header(names, kinds, cycle_from(values["cycle_s"], where), tuple(marks), meta)
-    return _Top(header, rows, text, number)
+    units = units_from(values["units"], where) if "units" in values else AS_ON_SCREENS
+    return _Top(header, units, rows, text, number)
 
 
-def _columns(file: Path, header: Header, text: str) -> tuple[list[Group], list[int]]:
+def _columns(file: Path, top: _Top) -> tuple[tuple[Group, ...], list[int]]:
     """The groups that the file has, and where their columns stand in a row."""
-    where = str(file)
-    if not header.joint_kinds:
-        raise InputError.at(where, "joints", "the kinds of the joints are missing")
-    known = groups(header.joint_names, header.joint_kinds)
+    where, header = str(file), top.header
     try:
-        names = next(csv.reader([text.rstrip("\r\n")]), [])
+        names = next(csv.reader([top.names.rstrip("\r\n")]), [])
     except csv.Error:  # a line end inside, or a name of more than 128 KiB
         raise InputError.at(where, "the row of column names is damaged") from None
-    columns = {column for group in known for column in group.columns}
-    if not names:
+    if not names and header.joint_kinds:
         raise InputError.at(where, "has a header but no row of column names")
-    for index, name in enumerate(names[: len(columns) + 1]):
-        if name not in columns:
-            raise InputError.at(where, f"column {name[:60]!r}: unknown for these joints")
-        if name in names[:index]:
-            raise InputError.at(where, f"column {name}: is there twice")
-    present = [group for group in known if group.required or any(name in names for name in group.columns)]
-    for group in present:
-        for column in group.columns:
-            if column not in names:
-                raise InputError.at(where, f"column {column}: missing")
+    present = fitting(header.joint_names, header.joint_kinds, names, top.units, where)
     return present, [names.index(column) for group in present for column in group.columns]
 
 
 def _number_blocks(
-    file: Path, stream: BinaryIO, line: int, present: list[Group], order: list[int]
+    file: Path, stream: BinaryIO, line: int, present: Sequence[Group], order: list[int]
 ) -> Iterator[Array]:
     """Blocks (rows, columns) of numbers, columns in the order of the groups, all judged."""
     columns = [column for group in present for column in group.columns]
     row = 0
     while True:
         lines: list[str] = []
-        while len(lines) < 4096 and (text := _line(file, stream, line + row + len(lines))):
+        size = 0
+        while len(lines) < 4096 and size < BLOCK and (text := _line(file, stream, line + row + len(lines))):
             lines.append(text)
+            size += len(text)
         if not lines:
             return
         place = _Place(file, line, row, columns, order)
         if row + len(lines) > MAX_ROWS:
             raise InputError.at(str(file), f"more than {MAX_ROWS} rows")
         block = _parsed(lines, place)
-        _judge(block, present, place)
+        fault = faults(block, present)
+        if fault is not None:
+            raise place.error(fault[0], fault[2], fault[1])
         row += len(lines)
         yield block
 
@@ -316,38 +258,6 @@ def _parsed(lines: list[str], place: _Place) -> Array:
                 raise place.error(index, f"expected a number, got {cell[:40]!r}", column)
             values[index, column] = float(cell)
     return values
-
-
-def _judge(block: Array, present: list[Group], place: _Place) -> None:
-    """Refuse what is not finite, quaternions that are none, steps that are no step."""
-    bad = np.argwhere(~np.isfinite(block))
-    if len(bad):
-        index, column = bad[0].tolist()
-        raise place.error(index, f"expected a finite number, got {block[index, column]}", column)
-    column = 0
-    for group in present:
-        values = block[:, column : column + len(group.columns)]
-        if group.field == "pose":
-            length = np.linalg.norm(values[:, 3:], axis=1)
-            off = np.flatnonzero(np.abs(length - 1) > 1e-9)
-            if len(off):
-                got = f"got length {length[off[0]]:.6g}"
-                raise place.error(off[0], f"expected a quaternion of length 1, {got}", column + 3)
-        if group.field == "step":
-            steps = values[:, 0]
-            off = np.flatnonzero((steps != np.rint(steps)) | (steps < 1) | (steps > 2**31))
-            if len(off):
-                got = f"got {steps[off[0]]:g}"
-                raise place.error(off[0], f"expected the number of a step, 1 or above, {got}", column)
-        column += len(group.columns)
-
-
-def _poses(values: Array) -> Array:
-    poses = np.zeros((len(values), 4, 4))
-    poses[:, :3, 3] = values[:, :3]
-    poses[:, :3, :3] = rotations_of(values[:, 3:])
-    poses[:, 3, 3] = 1.0
-    return poses
 
 
 KIND = Kind(".csv", write, read, read_header)

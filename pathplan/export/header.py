@@ -11,9 +11,11 @@ from typing import Any
 from pathplan.errors import InputError
 from pathplan.table import JointTable, Mark
 
-__all__ = ["FORMAT", "MAX_JOINTS", "RESERVED", "Header"]
+__all__ = ["FORMAT", "MAX_HEADER", "MAX_JOINTS", "RESERVED", "TITLE", "Header", "header_as_dict", "header_from_dict"]
 
 MAX_JOINTS = 100  # with MAX_ROWS of kinds.py it bounds what reading a hostile file can cost
+MAX_HEADER = 1 << 26  # characters or bytes of a header
+TITLE = "pathplan joint table"
 FORMAT = 1  # of the files, raised when a reader of the last one would misread the next
 RESERVED = ("format", "units", "cycle_s", "joints", "mark", "marks", "rows")  # not for meta
 _KEY = re.compile(r"[A-Za-z_][A-Za-z0-9_ .-]*")
@@ -52,9 +54,12 @@ class Header:
 
 def joints_from(value: Any, where: str) -> tuple[tuple[str, ...], tuple[str, ...]]:
     """Names and kinds from what `Header.joints` wrote. Raises InputError at `where`."""
-    good = isinstance(value, list) and value and all(
-        isinstance(pair, list) and len(pair) == 2 and all(isinstance(text, str) for text in pair)
-        for pair in value
+    good = (
+        isinstance(value, list)
+        and value
+        and all(
+            isinstance(pair, list) and len(pair) == 2 and all(isinstance(text, str) for text in pair) for pair in value
+        )
     )
     if not good:
         raise InputError.at(where, "joints", f"expected a list of [name, kind], got {_short(value)}")
@@ -65,6 +70,43 @@ def joints_from(value: Any, where: str) -> tuple[tuple[str, ...], tuple[str, ...
     if not (known or set(kinds) == {""}) or len(set(names)) != len(names):
         raise InputError.at(where, "joints", f"expected different names of known kinds, got {_short(value)}")
     return names, kinds if known else ()
+
+
+def header_as_dict(header: Header, first: int, units: str, **more: Any) -> dict[str, Any]:
+    """A header for kinds of file that keep it as one JSON text; rows and steps count from `first`."""
+    remark = {"BREAKS LIMITS": "this table failed its audit and must not be run"}
+    return {
+        "format": f"{TITLE} {FORMAT}",
+        **more,
+        **(remark if header.meta.get("breaks_limits") else {}),
+        "units": units,
+        "cycle_s": header.cycle,
+        "joints": header.joints(),
+        "marks": [mark_as_dict(mark, first) for mark in header.marks],
+        "meta": dict(header.meta),
+    }
+
+
+def header_from_dict(content: Any, first: int, where: str) -> Header:
+    """The header that `header_as_dict` made. Raises InputError at `where`."""
+    if not isinstance(content, dict) or not str(content.get("format")).startswith(TITLE):
+        raise InputError.at(where, "not a joint table written by pathplan: its header is of another kind")
+    if content["format"] != f"{TITLE} {FORMAT}":
+        got = str(content["format"])[len(TITLE) :].strip()[:20]
+        raise InputError.at(where, f"format {got} of table: this pathplan reads {FORMAT}")
+    for key, kind in (("joints", list), ("cycle_s", object), ("marks", list), ("meta", dict)):
+        if not isinstance(content.get(key, KeyError), kind) or key not in content:
+            raise InputError.at(where, "header", f"{key} is missing or of another kind")
+    names, kinds = joints_from(content["joints"], where)
+    marks = tuple(mark_from(mark, first, where) for mark in content["marks"])
+    return Header(names, kinds, cycle_from(content["cycle_s"], where), marks, content["meta"])
+
+
+def rows_from(value: Any, most: int, where: str) -> int:
+    """How many rows a header says there are. Raises InputError at `where`."""
+    if not isinstance(value, int) or not 0 <= value <= most:
+        raise InputError.at(where, "rows", f"expected a number up to {most}, got {str(value)[:40]}")
+    return value
 
 
 def cycle_from(value: Any, where: str) -> float | None:

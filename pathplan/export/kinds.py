@@ -8,34 +8,38 @@ from pathlib import Path
 from typing import BinaryIO
 
 from pathplan.errors import InputError
+from pathplan.export.columns import Units
 from pathplan.export.header import Header
 from pathplan.table import JointTable
 
-__all__ = ["MAX_ROWS", "Kind", "kind_of"]
+__all__ = ["MAX_BYTES", "MAX_ROWS", "Kind", "kind_of"]
 
-MAX_ROWS = 20_000_000  # five hours at 1 kHz; bounds what reading a hostile file can cost
+MAX_ROWS = 20_000_000  # five hours at 1 kHz; with MAX_BYTES it bounds what reading a hostile file can cost
+MAX_BYTES = 16_000_000_000  # of a file to be read: what MAX_ROWS rows of a six-axis arm take as text
 
 
 @dataclass(frozen=True)
 class Kind:
     """One kind of file.
 
-    `write(chunks, stream, header)`: chunks of one table, in order, into a seekable binary stream.
-    `read(file)`: the table, or InputError naming what is damaged. `read_header(file)`: the same for the
-    header alone, at the cost of the header alone.
+    `write(chunks, stream, header, units)`: chunks of one table, in order, into a seekable binary stream; the
+    same table in other chunks gives the same bytes. `read(file)`: the table, or InputError naming what is
+    damaged. `read_header(file)`: the same for the header alone, at the cost of the header alone. `si`: the
+    kind holds SI and nothing else.
     """
 
     suffix: str
-    write: Callable[[Iterator[JointTable], BinaryIO, Header], None]
+    write: Callable[[Iterator[JointTable], BinaryIO, Header, Units], None]
     read: Callable[[Path], JointTable]
     read_header: Callable[[Path], Header]
+    si: bool = False
 
 
 def kinds() -> Mapping[str, Kind]:
     """Every kind by its suffix."""
-    from pathplan.export import csv_file, npz_file
+    from pathplan.export import csv_file, jsonl_file, npz_file, parquet_file
 
-    return {module.KIND.suffix: module.KIND for module in (csv_file, npz_file)}
+    return {module.KIND.suffix: module.KIND for module in (csv_file, jsonl_file, npz_file, parquet_file)}
 
 
 def kind_of(file: Path) -> Kind:
@@ -43,5 +47,7 @@ def kind_of(file: Path) -> Kind:
     known = kinds()
     if file.suffix.lower() not in known:
         got = f'"{file.suffix}"' if file.suffix else "none"
-        raise InputError.at(str(file), f"unknown kind of table: expected {' or '.join(known)}, got {got}")
+        *others, last = known
+        expected = f"{', '.join(others)} or {last}"
+        raise InputError.at(str(file), f"unknown kind of table: expected {expected}, got {got}")
     return known[file.suffix.lower()]

@@ -22,23 +22,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import InputError
-from pathplan.export.header import (
-    FORMAT,
-    MAX_JOINTS,
-    Header,
-    cycle_from,
-    from_json,
-    joints_from,
-    mark_as_dict,
-    mark_from,
-)
+from pathplan.export.columns import Units
+from pathplan.export.header import MAX_HEADER, MAX_JOINTS, Header, from_json, header_as_dict, header_from_dict
 from pathplan.export.kinds import MAX_ROWS, Kind
+from pathplan.export.rows import tabled
 from pathplan.table import JointTable
 
 FIELDS = ("time", "position", "velocity", "acceleration", "jerk", "torque", "step", "pose", "tool_speed")
-TITLE = "pathplan joint table"
 UNITS_TEXT = "SI: s, rad, m, N m, N; steps and rows count from 0; pose is base_from_tool"
-MAX_HEADER = 1 << 26  # characters
 IN_MEMORY = 1 << 22  # bytes of each field kept in memory while chunks come in, before a file takes over
 _DAMAGE = (zipfile.BadZipFile, struct.error, EOFError, ValueError, NotImplementedError, RuntimeError)
 _ARRAY_HEADER = re.compile(
@@ -47,8 +38,8 @@ _ARRAY_HEADER = re.compile(
 )
 
 
-def write(chunks: Iterator[JointTable], stream: BinaryIO, header: Header) -> None:
-    """See `Kind.write`. Rows are spooled per field, since an array's header states its length."""
+def write(chunks: Iterator[JointTable], stream: BinaryIO, header: Header, units: Units) -> None:
+    """See `Kind.write`; SI in any case. Rows are spooled per field, since an array's header states its length."""
     folder = Path(stream.name).parent
     spools: dict[str, IO[bytes]] = {}
     shapes: dict[str, tuple[int, ...]] = {}
@@ -94,19 +85,7 @@ def _entry(field: str) -> zipfile.ZipInfo:
 
 
 def _header_text(header: Header) -> str:
-    remark = {"BREAKS LIMITS": "this table failed its audit and must not be run"}
-    return json.dumps(
-        {
-            "format": f"{TITLE} {FORMAT}",
-            **(remark if header.meta.get("breaks_limits") else {}),
-            "units": UNITS_TEXT,
-            "cycle_s": header.cycle,
-            "joints": header.joints(),
-            "marks": [mark_as_dict(mark, 0) for mark in header.marks],
-            "meta": dict(header.meta),
-        },
-        allow_nan=False,
-    )
+    return json.dumps(header_as_dict(header, 0, UNITS_TEXT), allow_nan=False)
 
 
 def read_header(file: Path) -> Header:
@@ -126,17 +105,7 @@ def read(file: Path) -> JointTable:
             where = ", ".join(str(i) for i in bad[0][1:])
             place = f"row {bad[0][0] + 1}, array {field}" + (f" [{where}]" if where else "")
             raise InputError.at(str(file), place, f"expected a finite number, got {array[tuple(bad[0])]}")
-    try:
-        return JointTable(
-            **arrays,
-            joint_names=header.joint_names,
-            joint_kinds=header.joint_kinds,
-            cycle=header.cycle,
-            marks=header.marks,
-            meta=header.meta,
-        )
-    except InputError as error:
-        raise InputError.at(str(file), str(error).removeprefix("table: ")) from None
+    return tabled(arrays, header, str(file))
 
 
 @contextlib.contextmanager
@@ -168,18 +137,7 @@ def _header(file: Path, archive: zipfile.ZipFile) -> Header:
     where = str(file)
     if "header.npy" not in archive.namelist():
         raise InputError.at(where, "not a joint table written by pathplan: it has no header")
-    content = from_json(str(_array(file, archive, "header")), where)
-    if not isinstance(content, dict) or not str(content.get("format")).startswith(TITLE):
-        raise InputError.at(where, "not a joint table written by pathplan: its header is of another kind")
-    if content["format"] != f"{TITLE} {FORMAT}":
-        got = str(content["format"])[len(TITLE) :].strip()[:20]
-        raise InputError.at(where, f"format {got} of table: this pathplan reads {FORMAT}")
-    for key, kind in (("joints", list), ("cycle_s", object), ("marks", list), ("meta", dict)):
-        if not isinstance(content.get(key, KeyError), kind) or key not in content:
-            raise InputError.at(where, "header", f"{key} is missing or of another kind")
-    names, kinds = joints_from(content["joints"], where)
-    marks = tuple(mark_from(mark, 0, where) for mark in content["marks"])
-    return Header(names, kinds, cycle_from(content["cycle_s"], where), marks, content["meta"])
+    return header_from_dict(from_json(str(_array(file, archive, "header")), where), 0, where)
 
 
 def _array(file: Path, archive: zipfile.ZipFile, field: str) -> NDArray[Any]:
@@ -224,4 +182,4 @@ def _check_layout(field: str, kind: str, shape: tuple[int, ...], where: str) -> 
         raise InputError.at(where, f"more than {MAX_ROWS} rows")
 
 
-KIND = Kind(".npz", write, read, read_header)
+KIND = Kind(".npz", write, read, read_header, si=True)

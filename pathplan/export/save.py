@@ -1,10 +1,15 @@
-"""A file that is there whole or not at all: written beside, flushed to disk, then renamed into place."""
+"""A file that is there whole or not at all: written beside, flushed to disk, then renamed into place.
+
+What is written beside is called .NAME.HEX.part and locked as long as its writer lives. A writer that was killed
+leaves such a part; the next one of the same name finds it unlocked and removes it.
+"""
 
 from __future__ import annotations
 
 import contextlib
 import errno
 import os
+import re
 import secrets
 import stat
 from collections.abc import Iterator
@@ -13,7 +18,9 @@ from typing import BinaryIO
 
 from pathplan.errors import InputError, PathplanError
 
-__all__ = ["check_place", "saving"]
+__all__ = ["Batch", "batched", "check_place", "saving"]
+
+_PREFIX = 100  # characters of the name that go into the name of its part
 
 
 def check_place(file: Path) -> None:
@@ -41,25 +48,118 @@ def saving(file: Path) -> Iterator[BinaryIO]:
     returns. An exception, Ctrl-C included, removes the part written. Trouble with the disk becomes one line:
     InputError where the place is wrong, PathplanError where the disk is.
     """
-    check_place(file)
-    target = Path(os.path.realpath(file))  # a link stays a link, to the new content
-    part = target.with_name(f".{target.name[:100]}.{secrets.token_hex(6)}.part")
+    with batched() as batch, batch.part(file) as stream:
+        yield stream
+
+
+@contextlib.contextmanager
+def batched() -> Iterator[Batch]:
+    """Files that take their places together when the block ends without an exception, else none of them.
+
+    Between the first rename and the last lies nothing but renames.
+    """
+    batch = Batch()
     try:
+        yield batch
+        batch.commit()
+    finally:
+        batch.discard()
+
+
+class Batch:
+    """Parts that are written one by one and renamed together: see `batched`."""
+
+    def __init__(self) -> None:
+        self._parts: list[tuple[Path, Path, Path]] = []  # part, target, the name as it was given
+
+    @contextlib.contextmanager
+    def part(self, file: Path) -> Iterator[BinaryIO]:
+        """A stream whose content becomes `file` with the batch; raises as `saving` does."""
+        check_place(file)
+        target = Path(os.path.realpath(file))  # a link stays a link, to the new content
+        _remove_leftovers(target)
         try:
-            with open(part, "xb") as stream:
+            with _new_part(target) as stream:
+                part = Path(stream.name)
+                self._parts.append((part, target, file))
                 yield stream
                 stream.flush()
                 if target.exists():  # its permissions are kept
                     os.chmod(part, stat.S_IMODE(target.stat().st_mode))
                 os.fsync(stream.fileno())
-            os.replace(part, target)
-        except BaseException:
+        except OSError as error:
+            raise _told(file, error) from error
+
+    def commit(self) -> None:
+        """All parts to their names. Raises as `saving` does."""
+        folders: dict[Path, None] = {}
+        while self._parts:
+            part, target, file = self._parts[0]
+            try:
+                os.replace(part, target)
+            except OSError as error:
+                raise _told(file, error) from error
+            del self._parts[0]
+            folders[target.parent] = None
+        for folder in folders:
+            _record(folder)
+
+    def discard(self) -> None:
+        """Remove the parts that have not become files."""
+        for part, _, _ in self._parts:
             with contextlib.suppress(OSError):  # what went wrong first is what must be told
                 os.unlink(part)
+        self._parts.clear()
+
+
+def _new_part(target: Path) -> BinaryIO:
+    """A new part of a target, locked. Raises OSError."""
+    while True:
+        part = target.with_name(f".{target.name[:_PREFIX]}.{secrets.token_hex(6)}.part")
+        stream = open(part, "xb")
+        try:
+            # Between creating and locking another writer may have taken it for a leftover.
+            if _lock(stream, wait=True) and _is_same(stream, part):
+                return stream
+        except BaseException:
+            stream.close()
+            with contextlib.suppress(OSError):
+                os.unlink(part)
             raise
-    except OSError as error:
-        raise _told(file, error) from error
-    _record(target.parent)
+        stream.close()
+
+
+def _remove_leftovers(target: Path) -> None:
+    """Remove the parts of this target whose writers are gone. What can't be told or removed is left."""
+    pattern = re.compile(re.escape(f".{target.name[:_PREFIX]}.") + r"[0-9a-f]{12}\.part")
+    with contextlib.suppress(OSError):
+        for name in os.listdir(target.parent):
+            if pattern.fullmatch(name):
+                with contextlib.suppress(OSError), open(target.with_name(name), "r+b") as stream:
+                    if _lock(stream, wait=False):
+                        os.unlink(stream.name)
+
+
+def _lock(stream: BinaryIO, *, wait: bool) -> bool:
+    """Whether the file is now ours alone. Where files can't be locked a part counts as in use."""
+    try:
+        import fcntl
+    except ImportError:  # Windows, which does not let go of a file in use anyway
+        return True
+    try:
+        fcntl.flock(stream.fileno(), fcntl.LOCK_EX | (0 if wait else fcntl.LOCK_NB))
+    except OSError:  # in use; or a network disk without locks, where parts are written all the same
+        return wait
+    return True
+
+
+def _is_same(stream: BinaryIO, part: Path) -> bool:
+    """Whether the name still leads to the open file."""
+    try:
+        named = os.stat(part)
+    except FileNotFoundError:
+        return False
+    return os.path.samestat(named, os.fstat(stream.fileno()))
 
 
 def _record(folder: Path) -> None:
@@ -78,6 +178,8 @@ def _told(file: Path, error: OSError | ValueError) -> PathplanError:
     code = error.errno if isinstance(error, OSError) else errno.EINVAL
     if code in (errno.ENOSPC, errno.EDQUOT):
         return PathplanError(f"{file}: the disk is full: nothing was changed")
+    if code == errno.EFBIG:
+        return PathplanError(f"{file}: larger than files may be here: nothing was changed")
     if code == errno.ENOENT:
         return InputError.at(str(file), f"can't be written: there is no folder {file.parent}")
     if code in (errno.EACCES, errno.EPERM, errno.EROFS):

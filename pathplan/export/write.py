@@ -2,56 +2,95 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Mapping
+import dataclasses
+from collections.abc import Collection, Iterable, Iterator, Mapping
 from pathlib import Path, PurePath
 from typing import Any
 
 import numpy as np
 
 from pathplan.errors import InputError
+from pathplan.export.columns import AS_ON_SCREENS, Units
 from pathplan.export.header import Header
-from pathplan.export.kinds import MAX_ROWS, kind_of
-from pathplan.export.save import check_place, saving
+from pathplan.export.kinds import MAX_ROWS, Kind, kind_of
+from pathplan.export.save import Batch, check_place, saving
 from pathplan.table import JointTable
+from pathplan.tomlfile import listed, nearest
+from pathplan.units import toml_text
 
-__all__ = ["check_destination", "may_replace", "write_table"]
+__all__ = ["ALWAYS", "OPTIONAL", "check_destination", "chosen_columns", "may_replace", "write_table"]
 
+ALWAYS = ("time", "position", "step")  # a table without them is none
+OPTIONAL = ("velocity", "acceleration", "jerk", "torque", "pose", "tool_speed")
 COLUMNS = ("time", "position", "velocity", "acceleration", "jerk", "torque", "pose", "tool_speed")
 BLOCK = 4096  # rows formatted at once: bounds memory whatever the size of the chunks that come in
 
 
 def write_table(
-    table: JointTable | Iterable[JointTable], file: str | Path, *, overwrite: bool = False
+    table: JointTable | Iterable[JointTable],
+    file: str | Path,
+    *,
+    overwrite: bool = False,
+    units: str | Units | None = None,
+    columns: Collection[str] | None = None,
+    batch: Batch | None = None,
 ) -> None:
-    """Write a table, or the chunks of one in order, to a file whose suffix says the kind: .csv or .npz.
+    """Write a table, or the chunks of one in order, to a file: .csv, .jsonl, .npz or .parquet, by its suffix.
 
-    CSV holds mm and deg with steps counted from 1; NPZ holds SI with steps counted from 0. Reading NPZ back
-    gives the same table to the last bit. Reading CSV back gives times, torques and steps exactly, joint
-    values, tool points and tool speeds within one unit in the last place (mm and deg are one rounding away
-    from m and rad), and rotations within 2e-15, since they pass through quaternions.
-    The same input gives the same bytes. The file is replaced in one instant after all is on disk; chunks are
-    written as they come, so memory is bounded by the size of a chunk.
+    NPZ holds SI with steps counted from 0, and reading it back gives the same table to the last bit. The
+    other kinds hold mm and deg, or `units` such as "rad, m", with steps counted from 1. Reading them back
+    gives times, torques and steps exactly, joint values, tool points and tool speeds within one unit in the
+    last place (mm and deg are one rounding away from m and rad), and rotations within 2e-15, since they pass
+    through quaternions. `columns` names the fields that are written beside time, position and step: of
+    "velocity", "acceleration", "jerk", "torque", "pose" and "tool_speed"; None: all there are.
+    The same input gives the same bytes. The file is replaced in one instant after all is on disk, or when the
+    `batch` ends; chunks are written as they come, so memory is bounded by the size of a chunk.
 
-    Raises InputError for an unknown suffix, a place that can't be written, values that are not finite, chunks
-    that don't belong together, or a file that exists and is neither our own output of the same task nor to be
-    overwritten; PathplanError when the disk fails.
+    Raises InputError for an unknown suffix, unit or column, a place that can't be written, values that are
+    not finite, chunks that don't belong together, or a file that exists and is neither our own output of the
+    same task nor to be overwritten; PathplanError when the disk fails.
     """
     file = Path(file)
     kind = kind_of(file)
+    chosen = _units(units, kind, file)
     check_place(file)
     chunks = iter([table] if isinstance(table, JointTable) else table)
+    if columns is not None:
+        chunks = chosen_columns(chunks, columns)
     first = next(chunks, None)
     if first is None:
         raise InputError.at(str(file), "there are no rows to write")
     check_destination(file, first, overwrite=overwrite)
     header = Header.of(first)
-    with saving(file) as stream:
-        kind.write(_blocks(first, chunks, file), stream, header)
+    with saving(file) if batch is None else batch.part(file) as stream:
+        kind.write(_blocks(first, chunks, file), stream, header, chosen)
 
 
-def check_destination(
-    file: str | Path, table: JointTable | Mapping[str, Any], *, overwrite: bool = False
-) -> None:
+def _units(units: str | Units | None, kind: Kind, file: Path) -> Units:
+    if units is None:
+        return AS_ON_SCREENS
+    if kind.si:
+        expected = "holds SI (rad, m) and nothing else: units can be chosen for other kinds of file"
+        raise InputError.at(str(file), expected)
+    return units if isinstance(units, Units) else Units.parse(units, "units")
+
+
+def chosen_columns(chunks: Iterable[JointTable], columns: Collection[str]) -> Iterator[JointTable]:
+    """The chunks with only these of the optional columns. Raises InputError for one unknown or not there."""
+    for name in columns:
+        if name not in OPTIONAL and name not in ALWAYS:
+            raise InputError.at(
+                "columns", f"expected {listed(OPTIONAL)}, got {toml_text(name)}{nearest(name, OPTIONAL)}"
+            )
+    left_out: dict[str, Any] = {name: None for name in OPTIONAL if name not in columns}
+    for chunk in chunks:
+        for name in columns:
+            if name in OPTIONAL and getattr(chunk, name) is None:
+                raise InputError.at("columns", f"the table has no {name}")
+        yield dataclasses.replace(chunk, **left_out)
+
+
+def check_destination(file: str | Path, table: JointTable | Mapping[str, Any], *, overwrite: bool = False) -> None:
     """Refuse now, before long work, what `write_table` would refuse later. `table` may be its meta alone.
 
     Raises InputError: unknown suffix, missing folder, a directory, or a file that may not be replaced.
@@ -116,6 +155,4 @@ def _check_finite(block: JointTable, row: int, file: Path) -> None:
             continue
         at = np.argwhere(~np.isfinite(values))[0]
         joint = f" of {block.joint_names[at[1]]}" if values.ndim == 2 else ""
-        raise InputError.at(
-            str(file), f"row {row + at[0] + 1}: {name}{joint} is not a finite number: nothing written"
-        )
+        raise InputError.at(str(file), f"row {row + at[0] + 1}: {name}{joint} is not a finite number: nothing written")

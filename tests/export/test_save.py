@@ -151,7 +151,7 @@ def test_places_where_no_file_can_be(full_table, tmp_path):
     ("name", "got"), [("t.xls", '".xls"'), ("table", "none"), ("t.csv.bak", '".bak"'), (".csv", "none")]
 )
 def test_unknown_suffixes_list_the_known(full_table, tmp_path, name, got):
-    message = f"{tmp_path / name}: unknown kind of table: expected .csv or .npz, got {got}"
+    message = f"{tmp_path / name}: unknown kind of table: expected .csv, .jsonl, .npz or .parquet, got {got}"
     with pytest.raises(InputError) as error:
         write_table(full_table, tmp_path / name)
     assert str(error.value) == message
