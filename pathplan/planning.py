@@ -312,8 +312,12 @@ def torque_limits(arm: Arm) -> TorqueLimits | None:
     peak = arm.limits.torque[:n]
     if arm.links is None or not np.isfinite(peak).any():
         return None
-    never = np.full(n, np.inf)
-    return TorqueLimits(partial(path_torque, arm), peak, never, np.zeros(n))
+    corner, fall = np.full(n, np.inf), np.zeros(n)
+    for k, joint in enumerate(arm.joints):
+        if joint.torque is not None and joint.torque_corner is not None and joint.torque_at_velocity is not None:
+            corner[k] = joint.torque_corner
+            fall[k] = (joint.torque - joint.torque_at_velocity) / (joint.velocity - joint.torque_corner)
+    return TorqueLimits(partial(path_torque, arm), peak, corner, fall)
 
 
 def _finite(rows: Array) -> Array:

@@ -168,7 +168,7 @@ def _slowed_for_torque(problem: FineProblem, x: Array, checked: Rows, basis: Arr
         np.maximum.at(worst, problem.cell_owner, peaks - (1.0 - _TORQUE_MARGIN))
         if not np.any(worst > 0):
             return x * factor[problem.owner]
-        factor = np.where(worst > 0, factor * (1.0 - np.clip(2.0 * worst, 1e-6, 0.2)), factor)
+        factor = np.where(worst > 0, factor * (1.0 - np.clip(10.0 * worst, 1e-5, 0.2)), factor)
     raise PathplanError("timing: slowing does not bring the torque within its limits")
 
 
