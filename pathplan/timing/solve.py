@@ -31,7 +31,6 @@ _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is 
 _COARSE_GAP, _FINAL_GAP = 5e-3, 2e-4  # duality gap aimed at, relative to the duration
 _TIGHTENINGS = 5
 _TIGHT = 2e-4  # overstepping left to slowing the whole stretch
-_SLOWINGS = 200
 _CHECK_POINTS = 33  # per cell, ends included; peaks between them by parabolas
 _TORQUE_MARGIN = 5e-5  # and torque with this, for peaks between the points it is checked at
 _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of tables
@@ -149,7 +148,10 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
         start = 3.0 * _FINAL_GAP
     if not np.all(np.isfinite(worst)):
         raise PathplanError("timing: the limits could not be evaluated along the path (not a number)")
-    x = _slowed_for_torque(problem, x * ((1.0 - _MARGIN) / worst)[problem.owner], checked, basis)
+    factor = (1.0 - _MARGIN) / worst
+    if checked.torque is not None:  # torque may be at its limit where the others are not: no speeding up
+        factor = np.minimum(factor, 1.0)
+    x = _slowed_for_torque(problem, x * factor[problem.owner], checked, basis)
     out = []
     for mesh, values in zip(meshes, np.split(x, np.cumsum(2 * (problem.cells + 1))[:-1]), strict=True):
         b, slope = values[::2].copy(), values[1::2] / mesh.unit
@@ -158,18 +160,26 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
 
 
 def _slowed_for_torque(problem: FineProblem, x: Array, checked: Rows, basis: Array) -> Array:
-    """x with those stretches slowed that overstep a torque limit anywhere."""
+    """x with those stretches slowed that overstep a torque limit anywhere, by no more than it takes.
+
+    Slowing by k turns a row into k on_b + sqrt(k) on_root + constant: the largest k that keeps it solves a quadratic.
+    """
     if checked.torque is None:
         return x
-    factor = np.ones(problem.count)
-    for _ in range(_SLOWINGS):
-        peaks = _peaks(checked, problem.evaluate(x * factor[problem.owner], basis)).torque.max(axis=0)
-        worst = np.zeros(problem.count)
-        np.maximum.at(worst, problem.cell_owner, peaks - (1.0 - _TORQUE_MARGIN))
-        if not np.any(worst > 0):
-            return x * factor[problem.owner]
-        factor = np.where(worst > 0, factor * (1.0 - np.clip(10.0 * worst, 1e-5, 0.2)), factor)
-    raise PathplanError("timing: slowing does not bring the torque within its limits")
+    b = problem.evaluate(x, basis)
+    linear = checked.torque[0] * b[0] + checked.torque[1] * b[1]
+    root, constant = checked.torque[2] * np.sqrt(b[0]), checked.torque[3]
+    room = (1.0 - _TORQUE_MARGIN) - constant
+    over = linear + root > room
+    if not over.any():
+        return x
+    if np.any(room[over] <= 0):
+        raise PathplanError("timing: no speed is slow enough for the torque limits")
+    linear, root, room = linear[over], root[over], room[over]
+    factor = (2.0 * room / (root + np.sqrt(root**2 + 4.0 * linear * room))) ** 2
+    least = np.ones(problem.count)
+    np.minimum.at(least, problem.cell_owner[np.nonzero(over)[2]], factor)
+    return x * least[problem.owner]
 
 
 def _peaks(rows: Rows, b: Array) -> Shares:
