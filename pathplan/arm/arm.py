@@ -22,7 +22,8 @@ if TYPE_CHECKING:
 __all__ = ["Arm", "Structure", "joint_rows"]
 
 Structure = Literal["gantry", "scara", "spherical wrist", "general"]
-BARE = Tool("none", np.eye(4))
+NOTHING = "none"  # the name of no tool and of no payload
+BARE = Tool(NOTHING, np.eye(4))
 GRAVITY = (0.0, 0.0, -9.80665)  # m/s^2, standard gravity (ISO 80000-3)
 # Built from libraries, cheap to build again, and not picklable.
 LIBRARY_OBJECTS = ("rigid_body", "numeric_chain")
@@ -50,6 +51,7 @@ def joint_rows(joints: Sequence[Joint]) -> Limits:
         acceleration=symmetric([joint.acceleration for joint in joints]),
         jerk=symmetric([joint.jerk for joint in joints]),
         torque=symmetric([joint.torque for joint in joints]),
+        kinds=tuple(joint.kind for joint in joints),
     )
 
 
@@ -149,8 +151,22 @@ class Arm:
     def joint_names(self) -> tuple[str, ...]:
         return tuple(joint.name for joint in self.joints)
 
+    @cached_property
+    def limit_kinds(self) -> tuple[str, ...]:
+        """What each row of the limits counts in: "revolute" (rad) or "prismatic" (m).
+
+        "" for a row that sums joints of both kinds where its limits don't say.
+        """
+        if self.limits.kinds:
+            return tuple(self.limits.kinds)
+        kinds = []
+        for row in self.limits.matrix:
+            involved = {joint.kind for joint, share in zip(self.joints, row, strict=True) if share != 0.0}
+            kinds.append(str(involved.pop()) if len(involved) == 1 else "")
+        return tuple(kinds)
+
     def equipped(self, *, tool: Tool | str | None = None, payload: Payload | str | None = None) -> Arm:
-        """The same arm carrying another tool and payload. None: the bare mechanical interface, no payload.
+        """The same arm carrying another tool and payload. None or "none": the bare mechanical interface, no payload.
 
         Raises InputError, naming those there are, for a name that the arm does not know.
         """
@@ -159,6 +175,8 @@ class Arm:
         return replace(self, tool=carried or BARE, payload=held)
 
     def _known(self, kind: str, things: Mapping[str, Any], name: str) -> Any:
+        if name == NOTHING:
+            return None
         if name not in things:
             there = ", ".join(f'"{key}"' for key in things) or "none"
             raise InputError(f'{self.name}: unknown {kind} "{name}", there is {there}')

@@ -77,9 +77,9 @@ from typing import Any, Literal
 
 import numpy as np
 
-from pathplan.arm.arm import GRAVITY, Arm, joint_rows, read_only
+from pathplan.arm.arm import GRAVITY, NOTHING, Arm, joint_rows, read_only
 from pathplan.arm.chain import DHRow, chain_from_axes, chain_from_dh, moved_link
-from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool
+from pathplan.arm.model import Array, Joint, Kind, Limits, Link, Payload, Tool
 from pathplan.errors import InputError
 from pathplan.tomlfile import FARTHEST, Problems, Table, read_toml
 from pathplan.units import DIMENSIONS, format_quantity, joint_dimension, parse_quantity, toml_text
@@ -177,6 +177,8 @@ def _named(top: Table, key: str, read: Callable[[str, Table], Any], problems: Pr
     with problems.gather():
         for name, table in top.named_tables(key).items():
             with problems.gather():
+                if name == NOTHING:
+                    raise InputError.at(table.where, f'"{NOTHING}" means that nothing is carried, expected another name')
                 found[name] = read(name, table)
     return found
 
@@ -462,7 +464,7 @@ def _positions(top: Table, joints: Sequence[Joint], problems: Problems) -> dict[
 def _limits(top: Table, joints: Sequence[Joint], problems: Problems) -> Limits:
     """Identity rows of the joints, then the [[limit]] rows."""
     plain = joint_rows(joints)
-    names = list(plain.names)
+    names, kinds = list(plain.names), list(plain.kinds)
     rows, bounds = [plain.matrix], {key: [getattr(plain, key)] for key in _BOUNDS}
     for table in top.tables("limit"):
         with problems.gather():
@@ -476,18 +478,19 @@ def _limits(top: Table, joints: Sequence[Joint], problems: Problems) -> Limits:
             if all(np.isinf(bound).all() for bound in given.values()):
                 raise InputError.at(table.where, "limits nothing, expected position, velocity, acceleration or jerk")
             names.append(name)
+            kinds.append(kind)
             rows.append(row[None])
             for key, bound in given.items():
                 bounds[key].append(bound)
     torque = np.vstack([plain.torque, np.tile([-np.inf, np.inf], (len(names) - len(joints), 1))])
     stacked = {key: read_only(np.vstack(parts)) for key, parts in bounds.items()}
-    return Limits(tuple(names), read_only(np.vstack(rows)), torque=read_only(torque), **stacked)
+    return Limits(tuple(names), read_only(np.vstack(rows)), torque=read_only(torque), kinds=tuple(kinds), **stacked)
 
 
 _BOUNDS = ("position", "velocity", "acceleration", "jerk")
 
 
-def _row_kind(table: Table, joints: Sequence[Joint]) -> str:
+def _row_kind(table: Table, joints: Sequence[Joint]) -> Kind:
     """Whether a row counts in deg or in mm: as its joints, or as it says."""
     coefficients = table.vector("row", len(joints), "number")
     kinds = {joint.kind for joint, c in zip(joints, coefficients, strict=True) if c != 0.0}
@@ -496,7 +499,7 @@ def _row_kind(table: Table, joints: Sequence[Joint]) -> str:
             "row", f"expected a coefficient for each joint, not all zero, got {toml_text(table.data['row'])}"
         )
     if table.has("kind") or len(kinds) > 1:
-        kind: str = table.choice("kind", ("revolute", "prismatic"))
+        kind: Kind = table.choice("kind", ("revolute", "prismatic"))
         return kind
     return kinds.pop()
 

@@ -80,7 +80,8 @@ class Limits:
     derivatives.
 
     The plain per-joint limits are identity rows named like the joints. A row that has no limit of some kind
-    carries -inf and inf there. All arrays (R, 2) hold low, high.
+    carries -inf and inf there. All arrays (R, 2) hold low, high. `kinds` says what each row counts in: "revolute"
+    (rad) or "prismatic" (m), also where it couples joints of both kinds; () where nobody has said.
     """
 
     names: tuple[str, ...]
@@ -90,6 +91,7 @@ class Limits:
     acceleration: Array
     jerk: Array
     torque: Array
+    kinds: tuple[Kind, ...] = ()
 
 
 PoseNames = Mapping[str, Array]  # named joint vectors of an arm, such as "home"
