@@ -7,33 +7,27 @@ from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from types import MappingProxyType
-from typing import TYPE_CHECKING, Any, Literal
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from pathplan.arm import kinematics
-from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool
+from pathplan.arm.inverse_form import Structure
+from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool, read_only
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:
     from pathplan.arm.inverse import Branches
-    from pathplan.arm.structure import ClosedForm
+    from pathplan.arm.redundant import FreeSolver
+    from pathplan.arm.solver import Solver
 
 __all__ = ["Arm", "Structure", "joint_rows"]
 
-Structure = Literal["gantry", "scara", "spherical wrist", "general"]
 NOTHING = "none"  # the name of no tool and of no payload
 BARE = Tool(NOTHING, np.eye(4))
 GRAVITY = (0.0, 0.0, -9.80665)  # m/s^2, standard gravity (ISO 80000-3)
 # Built from libraries, cheap to build again, and not picklable.
-LIBRARY_OBJECTS = ("rigid_body", "numeric_chain")
-
-
-def read_only(value: Any) -> Array:
-    """A float copy that can't be written to."""
-    array = np.array(value, dtype=float)
-    array.flags.writeable = False
-    return array
+LIBRARY_OBJECTS = ("rigid_body", "_free_solvers")
 
 
 def joint_rows(joints: Sequence[Joint]) -> Limits:
@@ -53,6 +47,17 @@ def joint_rows(joints: Sequence[Joint]) -> Limits:
         torque=symmetric([joint.torque for joint in joints]),
         kinds=tuple(joint.kind for joint in joints),
     )
+
+
+def _is_tree(parents: Sequence[int]) -> bool:
+    """Every joint leads to the base, -1."""
+    n = len(parents)
+    at = np.array(parents)
+    if ((at < -1) | (at >= n)).any():
+        return False
+    for _ in range(n):
+        at = np.where(at < 0, -1, np.array(parents)[at])
+    return bool((at < 0).all())
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,6 +88,9 @@ class Arm:
     tool: Tool = BARE
     payload: Payload | None = None
     positions: Mapping[str, Array] = field(default_factory=dict)  # "home" is always there: zero if not given
+    own_length: float | None = None  # m: what `length` then is
+    free_first: tuple[int, ...] = ()  # joints that planning is to leave free before others (`free_joints`)
+    warnings: tuple[str, ...] = ()  # about limits and masses that look wrong: one line each
     limits: Limits = None  # type: ignore[assignment]  # default: identity rows of the joints
 
     def __post_init__(self) -> None:
@@ -94,6 +102,8 @@ class Arm:
             object.__setattr__(self, name, value)
 
         put("joints", tuple(self.joints))
+        put("warnings", tuple(self.warnings))
+        put("free_first", tuple(self.free_first))
         put("parents", tuple(self.parents) or tuple(range(-1, n - 1)))
         put("tip", self.tip if self.tip >= 0 else n - 1)
         shapes = {"parent_from_joint": (n, 4, 4), "axes": (n, 3), "tip_from_flange": (4, 4), "gravity": (3,)}
@@ -105,8 +115,8 @@ class Arm:
                 raise InputError(f"{self.name}: {name}: expected finite numbers")
         if np.abs(np.linalg.norm(self.axes, axis=1) - 1.0).max() > 1e-9:
             raise InputError(f"{self.name}: axes: expected unit vectors")
-        if len(self.parents) != n or any(not -1 <= parent < i for i, parent in enumerate(self.parents)):
-            raise InputError(f"{self.name}: parents: expected {n} indices, each of an earlier joint or -1")
+        if len(self.parents) != n or not _is_tree(self.parents):
+            raise InputError(f"{self.name}: parents: expected {n} indices of other joints or -1, without a loop")
         if self.links is not None and len(self.links) != n:
             raise InputError(f"{self.name}: links: expected {n}, got {len(self.links)}")
         if len({joint.name for joint in self.joints}) != n:
@@ -192,32 +202,98 @@ class Arm:
         return kinematics.jacobian(self, q)
 
     def base_from_joint(self, name: str, q: Any) -> Array:
-        """(4, 4) moving frame of the named joint at one configuration q (n,)."""
+        """(..., 4, 4) moving frame of the named joint at joint positions q (..., n); only those count that move it."""
         if name not in self.joint_names:
             raise InputError(f'{self.name}: unknown joint "{name}", there is {", ".join(self.joint_names)}')
         return kinematics.joint_frame(self, self.joint_names.index(name), q)
 
-    def inverse(self, pose: Any) -> Array:
+    def inverse(self, pose: Any, outside: Any = None) -> Array:
         """Every joint vector (k, n) that puts the tool at `pose`, within the position limits, turn
         equivalents included.
 
-        `pose`: base_from_tool, a 4x4 rigid transform or a spatialmath SE3. Ordered by branch (see
-        `inverse_batch`), then by joint values. Every answer is verified through `forward` to 1e-9 m and
-        1e-9 rad; on an arm with fewer than six axes the components it does not serve are judged against
-        0.001 deg. A joint without limits answers in (-pi, pi]. Raises InputError for what is no rigid
-        transform, and UnreachableError, saying how far off the best answer is, which component the arm does
-        not serve, or which joint limit excludes every branch.
+        `pose`: base_from_tool, a 4x4 rigid transform or a spatialmath SE3. `outside` (n,): where joints stand that
+        don't carry the tool; NaN in the answers if not given. Ordered by branch (see `inverse_batch`), then by joint
+        values. Every answer is verified through `forward` to 1e-9 m and 1e-9 rad; on an arm with fewer than six axes
+        the components it does not serve are judged against 0.001 deg. A joint without limits answers in (-pi, pi].
+        An arm with more than six axes has answers without end: up to 16 are given, from all over the range of its
+        free joints (`inverse_free` gives all for values of your choice). Raises InputError for what is no rigid
+        transform, and UnreachableError, saying how far off the best answer is, which component the arm does not
+        serve, or which joint limit excludes every branch.
         """
         from pathplan.arm.inverse import inverse
 
-        return inverse(self, pose)
+        return inverse(self, pose, outside)
 
-    def inverse_batch(self, poses: Any) -> Branches:
+    def inverse_batch(self, poses: Any, outside: Any = None) -> Branches:
         """All branches for poses (N, 4, 4), position limits left aside: see
         `pathplan.arm.inverse.inverse_batch`."""
         from pathplan.arm.inverse import inverse_batch
 
-        return inverse_batch(self, poses)
+        return inverse_batch(self, poses, outside)
+
+    def inverse_free(self, poses: Any, joints: Any, values: Any) -> Branches:
+        """All branches with some joints held at given values: how the free coordinate of an arm with more than six
+        axes is chosen.
+
+        Parameters: poses (N, 4, 4); joints, a name, an index or a list of them, among `tool_joints`, so many that six
+        or fewer are left (`free_joints` suggests some); values (M,) for one joint, (M, k) for k, or (N, M, k), others
+        at each pose. Returns `Branches` with q (N, M, B, n), valid and errors (N, M, B); the held joints carry their
+        values, which may lie outside their limits. For one value the branch index follows the poses as in
+        `inverse_batch`: always where `free_solver(joints).typical.steady`, else within the call, while it can be
+        told. Raises InputError for wrong shapes, unknown joints, or joints that don't move the tool.
+
+        Held at the base or tool end of the chain (a track, a turntable: see `seen_from`; `with_tool_roll`) all N M
+        poses are one batch; otherwise every value costs about a millisecond, then some microseconds a pose and branch.
+        """
+        from pathplan.arm.redundant import inverse_free
+
+        return inverse_free(self, poses, joints, values)
+
+    def free_solver(self, joints: Any) -> FreeSolver:
+        """What `inverse_free` solves with: its `typical` solver tells structure, method, labels and `steady`."""
+        from pathplan.arm.redundant import FreeSolver, held_joints
+
+        held = held_joints(self, joints)
+        if held not in self._free_solvers:
+            self._free_solvers[held] = FreeSolver(self, held)
+        return self._free_solvers[held]
+
+    @cached_property
+    def _free_solvers(self) -> dict[tuple[int, ...], FreeSolver]:
+        return {}
+
+    @cached_property
+    def free_joints(self) -> tuple[str, ...]:
+        """Joints that an arm with more than six axes best leaves free, by name; none for six or fewer.
+
+        A track or the joint of a turning workpiece first, then those that leave axes with a closed form.
+        """
+        from pathplan.arm.redundant import suggested
+
+        return suggested(self)
+
+    def seen_from(self, joint: str) -> Arm:
+        """The arm as seen from the moving frame of a joint that carries a workpiece (a turntable).
+
+        It has the same joint vector, limits and tools; `forward`, `jacobian`, `inverse_free` and the rest give
+        poses and motions of the tool in that frame. `tool_joints` then has the workpiece's joints as well, and
+        `free_joints` names them first. It has no link data: torque is asked of the arm itself, with the same q.
+        Raises InputError for an unknown joint and for one that carries the tool.
+        """
+        from pathplan.arm.relative import seen_from
+
+        return seen_from(self, joint)
+
+    def with_tool_roll(self) -> Arm:
+        """The arm with one more joint, "tool roll", an endless turn about the z axis of its tool, which nothing limits.
+
+        For tools that don't care how they are turned about their axis: six axes become seven with the roll free, five
+        become six, which serve a position and the direction of the tool's z axis. It has no link data, tools or
+        payloads of its own; joint vectors of the arm itself are its first n columns.
+        """
+        from pathplan.arm.relative import with_tool_roll
+
+        return with_tool_roll(self)
 
     def torque(self, q: Any, qd: Any, qdd: Any) -> Array:
         """Joint torques (N, n), N m or N, with gravity, friction, drives, the tool and the payload.
@@ -239,8 +315,9 @@ class Arm:
     def chain(self) -> kinematics.Chain:
         """Constants of the kinematic walk, tool included."""
         tip_from_tool = self.tip_from_flange @ self.tool.flange_from_tool
+        kinds = tuple(joint.kind for joint in self.joints)
         return kinematics.Chain.build(
-            self.joints, self.parents, self.parent_from_joint, self.axes, self.tip, tip_from_tool
+            kinds, self.parents, self.parent_from_joint, self.axes, self.tip, tip_from_tool
         )
 
     @cached_property
@@ -250,24 +327,34 @@ class Arm:
 
         return build_rigid_body(self)
 
-    @cached_property
-    def numeric_chain(self) -> Any:
-        """The toolbox's elementary transforms behind the numeric inverse, built once."""
-        from pathplan.arm.dynamics import elementary_transforms
-
-        return elementary_transforms(self)
+    @property
+    def tool_joints(self) -> tuple[int, ...]:
+        """Indices of the joints between base and tool, in their order; the others (a turntable) don't move the tool."""
+        return self.chain.path
 
     @cached_property
-    def closed_form(self) -> ClosedForm | None:
-        """The closed-form inverse recognised from the axes, None for a general arm."""
-        from pathplan.arm.structure import recognise
+    def solver(self) -> Solver:
+        """What solves the inverse of the joints between base and tool."""
+        from pathplan.arm.solver import solver_of
+        from pathplan.arm.structure import geometry_of
 
-        return recognise(self)
+        return solver_of(geometry_of(self), self.search_range[list(self.tool_joints)])
+
+    @property
+    def search_range(self) -> Array:
+        """(n, 2) travels of prismatic joints, the characteristic length either way where they are endless."""
+        limits = np.array([joint.position for joint in self.joints])
+        return np.where(np.isfinite(limits).all(axis=1)[:, None], limits, [[-self.length, self.length]])
 
     @property
     def structure(self) -> Structure:
         """What the axes make of the arm, recognised from their geometry."""
-        return self.closed_form.structure if self.closed_form else "general"
+        return self.solver.structure
+
+    @property
+    def steady_branches(self) -> bool:
+        """The branch index of `inverse_batch` follows a path by itself, in whatever batch of poses."""
+        return self.solver.steady
 
     @cached_property
     def serves(self) -> frozenset[str]:
@@ -281,26 +368,44 @@ class Arm:
         return served_components(self)
 
     @cached_property
+    def serves_pointing(self) -> bool:
+        """Position and direction of the tool's z axis are served in general position, whatever its roll about it."""
+        from pathplan.arm.structure import serves_pointing
+
+        return serves_pointing(self)
+
+    @cached_property
     def length(self) -> float:
         """Characteristic length, m, always above 0: it makes angles and distances comparable.
 
-        Half of the largest span: of an arm with revolute joints before the last, half the length of the
-        stretched-out chain from the first joint to the mechanical interface, travels of prismatic joints
-        included; of a gantry, half the diagonal of its travel. 1 m where neither gives a length.
+        Half of the largest span of the joints between base and tool: half the length of the stretched-out chain from
+        the first of them to the mechanical interface, travels of prismatic joints included (not of those that carry a
+        whole arm of six axes or more, a track); of a gantry, half the diagonal of its travel. 1 m where neither gives
+        a length.
         """
-        travel = np.array(
-            [
-                joint.position[1] - joint.position[0]
-                for joint in self.joints
-                if joint.kind == "prismatic" and np.isfinite(joint.position).all()
-            ]
-        )
-        if self.structure == "gantry":
+        if self.own_length is not None:
+            return self.own_length
+        path = list(self.tool_joints)
+        while len(path) > 6 and self.joints[path[0]].kind == "prismatic":
+            path.pop(0)
+        slides = [i for i in path if self.joints[i].kind == "prismatic"]
+        travels = np.diff([self.joints[i].position for i in slides]).ravel() if slides else np.zeros(0)
+        travel = travels[np.isfinite(travels)]
+        if self._three_slides(path):
             span = float(np.sqrt(np.sum(travel**2)))
         else:
-            fixed = [*self.parent_from_joint[1:, :3, 3], self.tip_from_flange[:3, 3]]
+            fixed = [*self.parent_from_joint[path[1:], :3, 3], self.tip_from_flange[:3, 3]]
             span = float(np.sum(np.linalg.norm(fixed, axis=1)) + np.sum(travel))
         return span / 2.0 if span > 1e-6 else 1.0
+
+    def _three_slides(self, path: Sequence[int]) -> bool:
+        """Three prismatic joints that move in independent directions."""
+        frames, axes = np.eye(3), []
+        for i in path:
+            frames = frames @ self.parent_from_joint[i, :3, :3]
+            if self.joints[i].kind == "prismatic":
+                axes.append(frames @ self.axes[i])
+        return len(axes) == 3 and bool(abs(np.linalg.det(axes)) > 1e-3)
 
     def __getstate__(self) -> dict[str, Any]:
         state = {key: value for key, value in self.__dict__.items() if key not in LIBRARY_OBJECTS}

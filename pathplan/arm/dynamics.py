@@ -70,15 +70,6 @@ def toolbox(arm: Arm) -> Any:
     return _robot(arm, [])
 
 
-def elementary_transforms(arm: Arm) -> Any:
-    """The arm as the toolbox's ETS, its joints without limits: `ik_LM` shifts joints outside them by whole
-    turns."""
-    robot = _robot(arm, [])
-    for link in robot.links:
-        link.qlim = np.array([-1e6, 1e6])
-    return robot.ets()
-
-
 def _robot(arm: Arm, lead: list[Any]) -> Any:
     from roboticstoolbox import DHRobot, PrismaticMDH, RevoluteMDH
     from spatialmath import SE3

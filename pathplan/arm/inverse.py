@@ -10,15 +10,16 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from pathplan.arm.closed_form import branch_labels, solve_closed_form
 from pathplan.arm.kinematics import forward
 from pathplan.arm.model import Array
+from pathplan.arm.refine import pose_errors
 from pathplan.arm.structure import COMPONENTS
 from pathplan.errors import InputError, UnreachableError
 from pathplan.units import format_quantity
 
 if TYPE_CHECKING:
     from pathplan.arm.arm import Arm
+    from pathplan.arm.solver import Answers
 
 __all__ = [
     "ANGLE_TOLERANCE",
@@ -35,7 +36,6 @@ ANGLE_TOLERANCE = 1e-9  # rad
 TILT_TOLERANCE = np.deg2rad(0.001)  # rad: of the components that an arm with fewer than six axes does not serve
 LIMIT_TOLERANCE = 1e-10  # rad or m: an answer this far beyond a position limit is the limit, rounded
 SAME = 1e-7  # rad or m: answers closer than this are one (where two branches meet they differ by sqrt(eps))
-CHUNK = 512  # poses solved at a time, so that the working arrays stay in cache
 
 
 @dataclass(frozen=True)
@@ -50,55 +50,57 @@ class Branches:
     angle_error: Array  # (N, B) rad
 
 
-def inverse_batch(arm: Arm, poses: Any) -> Branches:
+def inverse_batch(arm: Arm, poses: Any, outside: Any = None) -> Branches:
     """All branches for tool poses base_from_tool (N, 4, 4), rigid transforms; position limits are left aside.
 
-    Closed form for a gantry (one branch), a SCARA (2) and a spherical wrist (8); other arms by seeded numeric search
-    (16 slots without labels, some tens of milliseconds a pose; a slot without an answer has infinite errors). Where a
-    pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at 0. What the labels mean, "up" being the side of
-    axis 1 that opposes gravity:
+    Which method serves an arm, and how many branches there are, hangs on its axes (`pathplan.arm.structure`): closed
+    form for a gantry (one branch), a SCARA (2), three slides with three turns (2), axes that meet (8 of six revolute
+    ones) and three parallel axes (8); elimination for any other six revolute axes (16 places); numeric search for the
+    rest (16 places, some tens of milliseconds a pose). A place without an answer has infinite errors, where a closed
+    form has nothing it holds the nearest one. Where a pose leaves a joint free (axes 4 and 6 in line) joint 4 stays at
+    0. Arms with more than six axes: see `pathplan.arm.redundant`.
 
-    - shoulder left or right: facing from axis 1 to the wrist centre, the side to which the arm is set off along
-      axis 2; where it is not set off, the side to which axis 2 points (left if a positive joint 2 lowers the arm);
-    - elbow up or down: axis 3 above or below the line from axis 2 to the wrist centre;
+    Where `Arm.steady_branches` is True the branch index means the same for every pose and follows a path
+    continuously; elsewhere a branch keeps its index from one pose to the next within the batch while it can be told,
+    and labels are empty. What the labels mean, "up" being the side of axis 1 that opposes gravity:
+
+    - shoulder left or right: facing from axis 1 to the wrist centre (three parallel axes: to where axes 5 and 6 meet),
+      the side to which the arm is set off along axis 2; where it is not set off, the side to which axis 2 points (left
+      if a positive joint 2 lowers the arm);
+    - elbow up or down: axis 3 above or below the line from axis 2 to the wrist centre (to axis 4);
     - wrist positive or negative: sign of sin q5, q5 counted from the straight wrist nearest to its zero;
-    - SCARA, elbow left or right: facing from axis 1 to the last revolute axis.
+    - SCARA, elbow left or right: facing from axis 1 to the last revolute axis;
+    - joint 3 positive or negative: of its two answers the one above or below their middle;
+    - branch 1, 2, ...: told apart, but without a meaning of their own.
 
-    Raises InputError for a wrong shape.
+    `outside` (n,) or (N, n): where joints stand that don't carry the tool (a turntable); only those entries count.
+    They are NaN in the answers if it is not given. Raises InputError for a wrong shape.
     """
     poses = np.asarray(poses, dtype=float)
     if poses.ndim != 3 or poses.shape[1:] != (4, 4):
         raise InputError(f"expected poses of shape (N, 4, 4), got {poses.shape}")
-    form = arm.closed_form
-    if form is None:
-        from pathplan.arm.numeric import all_branches
+    joints = list(arm.tool_joints)
+    if len(joints) > 6:
+        from pathplan.arm.redundant import some_branches
 
-        q, kind = all_branches(arm, poses)
-        labels: tuple[Mapping[str, str], ...] = tuple({} for _ in range(q.shape[1]))
+        answers = some_branches(arm, poses)
+        labels: tuple[Mapping[str, str], ...] = ({},) * answers.q.shape[1]
     else:
-        labels = branch_labels(form.structure)
-        q, kind = np.empty((len(poses), len(labels), arm.n)), np.ones((len(poses), len(labels)))
-        for start in range(0, len(poses), CHUNK):
-            part = slice(start, start + CHUNK)
-            rotation = np.ascontiguousarray(poses[part, :3, :3].transpose(1, 2, 0))
-            q[part] = solve_closed_form(form, rotation, poses[part, :3, 3].T).transpose(2, 1, 0)
-    position_error, angle_error = pose_errors(forward(arm, q), poses[:, None])
-    position_error[kind < 0] = angle_error[kind < 0] = np.inf
-    angle_tolerance = ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE
-    valid = (position_error <= POSITION_TOLERANCE) & (angle_error <= angle_tolerance)
-    for array in (q, valid, position_error, angle_error):
+        answers, labels = arm.solver.solve(poses), arm.solver.labels
+    q = np.full((*answers.q.shape[:2], arm.n), np.nan)
+    if outside is not None:
+        q[:] = np.broadcast_to(np.asarray(outside, dtype=float), (len(poses), arm.n))[:, None]
+    q[:, :, joints] = answers.q
+    return branches_of(arm, q, answers, labels)
+
+
+def branches_of(arm: Arm, q: Array, answers: Answers, labels: tuple[Mapping[str, str], ...]) -> Branches:
+    """`Branches` with joint values q (..., B, n), read-only."""
+    angle_tolerance = ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE
+    valid = (answers.position_error <= POSITION_TOLERANCE) & (answers.angle_error <= angle_tolerance)
+    for array in (q, valid, answers.position_error, answers.angle_error):
         array.flags.writeable = False
-    return Branches(q, valid, labels, position_error, angle_error)
-
-
-def pose_errors(reached: Array, asked: Array) -> tuple[Array, Array]:
-    """Distance (m) and angle (rad) between poses (..., 4, 4)."""
-    apart = reached[..., :3, :] - asked[..., :3, :]
-    squares = apart * apart
-    distance = np.sqrt(squares[..., 3].sum(axis=-1))
-    # |R1 - R2| (Frobenius) = 2 sqrt 2 sin(angle / 2): as exact for small angles as the rotations are.
-    half = np.sqrt(squares[..., :3].sum(axis=(-2, -1))) / (2.0 * np.sqrt(2.0))
-    return distance, 2.0 * np.arcsin(np.minimum(half, 1.0))
+    return Branches(q, valid, labels, answers.position_error, answers.angle_error)
 
 
 def rigid_pose(pose: Any) -> Array:
@@ -123,10 +125,10 @@ def rigid_pose(pose: Any) -> Array:
     return matrix
 
 
-def inverse(arm: Arm, pose: Any) -> Array:
+def inverse(arm: Arm, pose: Any, outside: Any = None) -> Array:
     """See `Arm.inverse`."""
     matrix = rigid_pose(pose)
-    branches = inverse_batch(arm, matrix[None])
+    branches = inverse_batch(arm, matrix[None], outside)
     if not branches.valid.any():
         raise _out_of_reach(arm, matrix, branches)
     answers: list[Array] = []
@@ -134,8 +136,9 @@ def inverse(arm: Arm, pose: Any) -> Array:
         if valid:
             answers += sorted(_turns(arm, q), key=tuple)
     distinct: list[Array] = []
+    moving = list(arm.tool_joints)
     for q in _verified(arm, answers, matrix):
-        if all(np.abs(q - other).max() > SAME for other in distinct):
+        if all(np.abs((q - other)[moving]).max() > SAME for other in distinct):
             distinct.append(q)
     if not distinct:
         raise _excluded(arm, matrix, branches)
@@ -143,10 +146,15 @@ def inverse(arm: Arm, pose: Any) -> Array:
 
 
 def _turns(arm: Arm, q: Array) -> list[Array]:
-    """The turn equivalents of one answer that lie within the position limits."""
+    """The turn equivalents of one answer that lie within the position limits. NaN is no joint's position: it may be
+    anywhere.
+    """
     choices = []
     for value, joint in zip(q, arm.joints, strict=True):
         low, high = joint.position
+        if np.isnan(value):
+            choices.append([np.nan])
+            continue
         if joint.kind == "prismatic" or (low == -np.inf and high == np.inf):
             turns = [float(value)]
         elif np.isfinite([low, high]).all():
@@ -159,14 +167,20 @@ def _turns(arm: Arm, q: Array) -> list[Array]:
         choices.append(
             [float(np.clip(t, low, high)) for t in turns if low - LIMIT_TOLERANCE <= t <= high + LIMIT_TOLERANCE]
         )
-    rows = arm.limits
+    low, high = arm.limits.position.T
     answers = [np.array(choice) for choice in product(*choices)]
     return [
         answer
         for answer in answers
-        if (rows.matrix @ answer >= rows.position[:, 0] - LIMIT_TOLERANCE).all()
-        and (rows.matrix @ answer <= rows.position[:, 1] + LIMIT_TOLERANCE).all()
+        if not ((rows := limited(arm, answer)) < low - LIMIT_TOLERANCE).any() and not (rows > high + LIMIT_TOLERANCE).any()
     ]
+
+
+def limited(arm: Arm, q: Array) -> Array:
+    """(R,) what the rows of the limits come to at q (n,); NaN where a joint that counts in one is NaN."""
+    known = np.isfinite(q)
+    rows = arm.limits.matrix[:, known] @ q[known]
+    return np.where((arm.limits.matrix[:, ~known] != 0.0).any(axis=1), np.nan, rows)
 
 
 def _verified(arm: Arm, answers: list[Array], pose: Array) -> list[Array]:
@@ -174,7 +188,7 @@ def _verified(arm: Arm, answers: list[Array], pose: Array) -> list[Array]:
     if not answers:
         return []
     distance, angle = pose_errors(forward(arm, np.array(answers)), pose)
-    good = (distance <= POSITION_TOLERANCE) & (angle <= (ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE))
+    good = (distance <= POSITION_TOLERANCE) & (angle <= (ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE))
     return [q for q, is_good in zip(answers, good, strict=True) if is_good]
 
 
@@ -191,7 +205,7 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
         "angle_error": float(branches.angle_error[0, best]),
     }
     # A closed form with four axes serves position and turn exactly: what is left of the angle is tilt.
-    if arm.n < 6 and arm.closed_form is not None and data["angle_error"] > TILT_TOLERANCE:
+    if len(arm.tool_joints) < 6 and arm.structure != "general" and data["angle_error"] > TILT_TOLERANCE:
         tilt = _tilt(arm, q, pose)
         return UnreachableError(
             f"{arm.name}: the pose is tilted {tilt}; {arm.name} serves {_served(arm)}; tolerance 0.001 deg",
@@ -200,9 +214,9 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
     off = []
     if data["position_error"] > POSITION_TOLERANCE:
         off.append(format_quantity(data["position_error"], "length"))
-    if data["angle_error"] > (ANGLE_TOLERANCE if arm.n >= 6 else TILT_TOLERANCE):
+    if data["angle_error"] > (ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE):
         off.append(format_quantity(data["angle_error"], "angle"))
-    why = f" (an arm with {arm.n} axes can't serve every pose)" if arm.n < 6 and arm.closed_form is None else ""
+    why = f" (an arm with {len(arm.tool_joints)} axes can't serve every pose)" if len(arm.tool_joints) < 6 and arm.structure == "general" else ""
     return UnreachableError(
         f"{arm.name}: the pose is out of reach{why}: the nearest answer is off by {' and '.join(off)}",
         data=data,
@@ -226,7 +240,7 @@ def _tilt(arm: Arm, q: Array, pose: Array) -> str:
 def _served(arm: Arm) -> str:
     """The served components in words."""
     names = [name for name in COMPONENTS if name in arm.serves]
-    turning = arm.closed_form is not None and not any(name.startswith("rotation") for name in names)
+    turning = arm.structure != "general" and not any(name.startswith("rotation") for name in names)
     names += ["rotation about its turning axis"] * turning
     return ", ".join(names[:-1]) + " and " + names[-1]
 
@@ -255,7 +269,7 @@ def _worst_miss(arm: Arm, q: Array) -> tuple[float, str, str]:
         low, high = joint.position
         if joint.kind == "revolute" and np.isfinite(low) and np.isfinite(high):
             nearest[i] += 2 * np.pi * np.round(((low + high) / 2 - q[i]) / (2 * np.pi))
-    values = arm.limits.matrix @ nearest
+    values = limited(arm, nearest)
     for name, row, value, (low, high) in zip(
         arm.limits.names, arm.limits.matrix, values, arm.limits.position, strict=True
     ):

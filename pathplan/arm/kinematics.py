@@ -12,11 +12,11 @@ Jacobian, adjoint).
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from pathplan.arm.model import Array, Joint
+from pathplan.arm.model import Array, Kind
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:
@@ -49,7 +49,7 @@ class Chain:
     @classmethod
     def build(
         cls,
-        joints: tuple[Joint, ...],
+        kinds: tuple[Kind, ...],
         parents: tuple[int, ...],
         parent_from_joint: Array,
         axes: Array,
@@ -72,8 +72,8 @@ class Chain:
             untwist.append(joint_twist.T.copy())
             twist = joint_twist
         end = _packed(twist.T @ tip_from_tool[:3, :3], twist.T @ tip_from_tool[:3, 3])
-        revolute = tuple(joints[i].kind == "revolute" for i in path)
-        return cls(len(joints), tuple(path), revolute, tuple(steps), end, tuple(untwist))
+        revolute = tuple(kinds[i] == "revolute" for i in path)
+        return cls(len(kinds), tuple(path), revolute, tuple(steps), end, tuple(untwist))
 
 
 def z_onto(axis: Array) -> Array:
@@ -165,27 +165,26 @@ def jacobian(arm: Arm, q: Array) -> Array:
 
 
 def joint_frame(arm: Arm, joint: int, q: Array) -> Array:
-    """(4, 4) base_from_joint: the moving frame of one joint at a single configuration q (n,)."""
+    """(..., 4, 4) base_from_joint: the moving frame of one joint at configurations q (..., n)."""
     rows, shape = checked(q, arm.n)
-    if shape:
-        raise InputError(f"expected one configuration of {arm.n} joint values, got shape {np.shape(q)}")
-    pose = np.eye(4)
+    pose = np.tile(np.eye(4), (len(rows), 1, 1))
     lineage = [joint]
     while arm.parents[lineage[0]] >= 0:
         lineage.insert(0, arm.parents[lineage[0]])
     for i in lineage:
-        pose = pose @ arm.parent_from_joint[i] @ joint_motion(arm.joints[i].kind, arm.axes[i], float(rows[0, i]))
-    return pose
+        pose = pose @ arm.parent_from_joint[i] @ joint_motion(arm.joints[i].kind, arm.axes[i], rows[:, i])
+    return pose.reshape(*shape, 4, 4)
 
 
-def joint_motion(kind: str, axis: Array, value: float) -> Array:
-    """(4, 4) motion of one joint about or along a unit axis through the origin of its frame."""
-    motion = np.eye(4)
+def joint_motion(kind: str, axis: Array, value: Any) -> Array:
+    """(..., 4, 4) motions (...) of one joint about or along a unit axis through the origin of its frame."""
+    value = np.asarray(value, dtype=float)[..., None, None]
+    motion = np.tile(np.eye(4), (*value.shape[:-2], 1, 1))
     if kind == "revolute":
         cross = np.array([[0.0, -axis[2], axis[1]], [axis[2], 0.0, -axis[0]], [-axis[1], axis[0], 0.0]])
-        motion[:3, :3] += np.sin(value) * cross + (1.0 - np.cos(value)) * cross @ cross
+        motion[..., :3, :3] += np.sin(value) * cross + (1.0 - np.cos(value)) * cross @ cross
     else:
-        motion[:3, 3] = value * axis
+        motion[..., :3, 3] = value[..., 0] * axis
     return motion
 
 
@@ -312,11 +311,11 @@ class _solver:
 def smallest_singular_value(arm: Arm, q: Array) -> Array:
     """Distance from singularity (N,), dimensionless, for q (N, n).
 
-    The smallest singular value (the n-th for fewer than six axes) of the Jacobian at the tool centre point,
+    The smallest singular value (of fewer than six joints between base and tool, the last) of the Jacobian at the tool centre point,
     its linear rows divided by `arm.length` and its prismatic columns multiplied by it.
     """
     matrix = jacobian(arm, checked(q, arm.n)[0])
     matrix[:, :3] /= arm.length
     prismatic = [i for i, joint in enumerate(arm.joints) if joint.kind == "prismatic"]
     matrix[:, :, prismatic] *= arm.length
-    return np.asarray(np.linalg.svd(matrix, compute_uv=False)[:, min(arm.n, 6) - 1])
+    return np.asarray(np.linalg.svd(matrix, compute_uv=False)[:, min(len(arm.chain.path), 6) - 1])

@@ -14,7 +14,7 @@ import numpy as np
 
 from pathplan.arm.chain import DHRow
 from pathplan.arm.model import Array
-from pathplan.arm.structure import zero_axes
+from pathplan.arm.geometry import zero_axes
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:
@@ -40,7 +40,7 @@ def modified_chain(arm: Arm) -> ModifiedChain:
 
     Raises InputError for an arm that branches.
     """
-    if len(arm.chain.path) != arm.n:
+    if arm.tool_joints != tuple(range(arm.n)):
         raise InputError(f"{arm.name}: expected a single chain from base to tip, the arm branches")
     points, axes, zero_pose = zero_axes(arm)
     frames = np.tile(np.eye(4), (arm.n, 1, 1))

@@ -8,12 +8,21 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
+
+
+def read_only(value: Any) -> Array:
+    """A float copy that can't be written to."""
+    array = np.array(value, dtype=float)
+    array.flags.writeable = False
+    return array
+
+
 Kind = Literal["revolute", "prismatic"]
 
 

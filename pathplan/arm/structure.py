@@ -3,114 +3,86 @@ file."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from itertools import pairwise
-from typing import TYPE_CHECKING, Literal
+from collections.abc import Callable, Collection, Iterator
+from dataclasses import replace
+from functools import partial
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from pathplan.arm.kinematics import jacobian, walk
+from pathplan.arm.closed_form import gantry, scara
+from pathplan.arm.geometry import EXACT, Geometry, Tolerance, meeting_point, zero_axes
+from pathplan.arm.inverse_form import Form, Structure, backwards
+from pathplan.arm.kinematics import forward, jacobian
 from pathplan.arm.model import Array
+from pathplan.arm.parallels import inner_parallel, outer_parallel
+from pathplan.arm.wrists import meeting_elsewhere, three_slides, wrist
 
 if TYPE_CHECKING:
     from pathplan.arm.arm import Arm
 
-__all__ = ["COMPONENTS", "ClosedForm", "meeting_point", "recognise", "served_components", "zero_axes"]
+__all__ = ["COMPONENTS", "geometry_of", "meeting_point", "recognise", "served_components", "zero_axes"]
 
 COMPONENTS = ("x", "y", "z", "rotation about x", "rotation about y", "rotation about z")
-PARALLEL = 1e-9  # sine of the angle below which axes count as parallel: 1 nm on a metre
-COINCIDE = 1e-9  # m
-SHORT = 1e-6  # m: a link shorter than this makes no two-link mechanism
 
 
-@dataclass(frozen=True)
-class ClosedForm:
-    """Constants of a closed-form inverse, all at q = 0 in the base frame."""
-
-    structure: Literal["gantry", "scara", "spherical wrist"]
-    order: tuple[int, ...]  # joints in the order the closed form speaks of them
-    points: Array  # (n, 3) a point on each axis
-    axes: Array  # (n, 3) unit
-    zero_pose: Array  # (4, 4) base_from_tool
-    centre: Array  # (3,) spherical wrist: where axes 4, 5, 6 meet; else the tool centre point
-    up: Array  # (3,) unit: what the words up, left and right of the branch labels refer to
-
-
-def zero_axes(arm: Arm) -> tuple[Array, Array, Array]:
-    """Points (n, 3), unit axes (n, 3) and tool pose (4, 4) at q = 0 in the base frame. For a single chain."""
-    axes_at: list[tuple[Array, Array]] = []
-    columns, tcp = walk(arm.chain, np.zeros((1, arm.n)), axes_at)
-    pose = np.eye(4)
-    pose[:3, :3], pose[:3, 3] = columns[:, :, 0].T, tcp[:, 0]
-    return (
-        np.array([point[:, 0] for _, point in axes_at]),
-        np.array([axis[:, 0] for axis, _ in axes_at]),
-        pose,
-    )
-
-
-def recognise(arm: Arm) -> ClosedForm | None:
-    """The closed form that fits the axes of an arm, or None."""
-    if len(arm.chain.path) != arm.n:
-        return None
-    kinds = [joint.kind for joint in arm.joints]
-    points, axes, zero_pose = zero_axes(arm)
-    centre = zero_pose[:3, 3]
-    structure: Literal["gantry", "scara", "spherical wrist"]
-    revolute = [i for i, kind in enumerate(kinds) if kind == "revolute"]
-    prismatic = [i for i, kind in enumerate(kinds) if kind == "prismatic"]
-    if len(prismatic) == 3 and len(revolute) == 1 and abs(np.linalg.det(axes[prismatic])) > 1e-3:
-        structure, order, main = "gantry", (*prismatic, *revolute), revolute[0]
-    elif len(revolute) == 3 and len(prismatic) == 1 and all(_parallel(axes[0], axis) for axis in axes[1:]):
-        links = [_across(points[j] - points[i], axes[0]) for i, j in pairwise(revolute)]
-        if min(np.linalg.norm(link) for link in links) < SHORT:
-            return None
-        structure, order, main = "scara", (*revolute, *prismatic), revolute[0]
-    elif kinds == ["revolute"] * 6:
-        meets = _wrist_centre(points, axes)
-        if meets is None:
-            return None
-        structure, order, main, centre = "spherical wrist", (0, 1, 2, 3, 4, 5), 0, meets
-    else:
-        return None
+def geometry_of(arm: Arm, q: Array | None = None, held: Collection[int] = ()) -> Geometry:
+    """The axes of an arm between base and tool as they stand at q = 0, or at q (n,) with joints `held` left out: those
+    stand still at their value in q, the others count from it.
+    """
+    points, axes, zero_pose = zero_axes(arm, q)
+    kinds = tuple(arm.joints[i].kind for i in arm.tool_joints)
+    main = kinds.index("revolute") if "revolute" in kinds else 0
     # Up is the side of the main axis that opposes gravity; of a level main axis, its own positive side.
     against = -float(axes[main] @ arm.gravity)
     up = axes[main] * (-1.0 if against < -1e-6 else 1.0)
-    return ClosedForm(structure, order, points, axes, zero_pose, centre, up)
+    numbers = tuple(i + 1 for i in arm.tool_joints)
+    whole = Geometry(kinds, points, axes, zero_pose, up, arm.length, numbers=numbers)
+    free = [k for k, i in enumerate(arm.tool_joints) if i not in held]
+    return replace(whole.of(free), zero_pose=zero_pose)
 
 
-def _wrist_centre(points: Array, axes: Array) -> Array | None:
-    """Where the last three of six revolute axes meet if the arm also has parallel second and third axes,
-    else None."""
-    meets = meeting_point(points[3:], axes[3:])
-    if meets is None or not _parallel(axes[1], axes[2]) or _parallel(axes[0], axes[1]):
+def recognise(g: Geometry, tolerance: Tolerance = EXACT) -> Form | None:
+    """The closed form that fits the axes within a tolerance, None if none does.
+
+    Of several forms one with steady branches is taken.
+    """
+    unsteady = None
+    for form in forms(g, tolerance):
+        if form.steady:
+            return form
+        unsteady = unsteady or form
+    return unsteady
+
+
+def forms(g: Geometry, tolerance: Tolerance = EXACT) -> Iterator[Form]:
+    """Every closed form that fits the axes, in order of preference."""
+    g = replace(g, tolerance=tolerance)
+    found = (form for make in (_FORMS_OF_SIX if g.m == 6 else _FORMS_OF_FOUR if g.m == 4 else ()) if (form := make(g)))
+    return found
+
+
+def _backwards(make: Callable[[Geometry], Form | None], structure: Structure, g: Geometry) -> Form | None:
+    """The form of the reversed chain. What its labels say holds for the chain read backwards: they become numbers."""
+    form = make(g.reversed())
+    if form is None:
         return None
-    if _parallel(axes[3], axes[4]) or _parallel(axes[4], axes[5]):
-        return None
-    upper, lower = _across(points[2] - points[1], axes[1]), _across(meets - points[2], axes[1])
-    return meets if min(np.linalg.norm(upper), np.linalg.norm(lower)) > SHORT else None
+    labels = tuple({"branch": str(k + 1)} if form.steady else {} for k in range(len(form.labels)))
+    return backwards(replace(form, labels=labels), structure)
 
 
-def meeting_point(points: Array, axes: Array) -> Array | None:
-    """(3,) the point nearest to all axes (k, 3) through points (k, 3), None if it does not lie on each of
-    them."""
-    across = np.eye(3) - axes[:, :, None] * axes[:, None, :]
-    moment = np.einsum("kij,kj->i", across, points)
-    total = across.sum(axis=0)
-    if np.linalg.cond(total) > 1e12:
-        return None  # all parallel
-    centre = np.asarray(np.linalg.solve(total, moment))
-    distance = np.linalg.norm(np.einsum("kij,kj->ki", across, centre - points), axis=1)
-    return centre if distance.max() < COINCIDE else None
-
-
-def _parallel(a: Array, b: Array) -> bool:
-    return bool(np.linalg.norm(np.cross(a, b)) < PARALLEL)
-
-
-def _across(vector: Array, axis: Array) -> Array:
-    """The part of a vector square to an axis."""
-    return np.asarray(vector - axis * (axis @ vector))
+_FORMS_OF_FOUR: tuple[Callable[[Geometry], Form | None], ...] = (gantry, scara)
+_FORMS_OF_SIX: tuple[Callable[[Geometry], Form | None], ...] = (
+    wrist,
+    inner_parallel,
+    partial(_backwards, wrist, "spherical shoulder"),
+    partial(_backwards, inner_parallel, "three parallel axes"),
+    three_slides,
+    meeting_elsewhere,
+    partial(_backwards, meeting_elsewhere, "three meeting axes"),
+    outer_parallel,
+    partial(_backwards, outer_parallel, "three parallel axes"),
+)
 
 
 def served_components(arm: Arm) -> frozenset[str]:
@@ -125,3 +97,13 @@ def served_components(arm: Arm) -> frozenset[str]:
         inside = np.linalg.norm(basis, axis=1) > 1.0 - 1e-9
         served &= {name for name, is_in in zip(COMPONENTS, inside, strict=True) if is_in}
     return frozenset(served)
+
+
+def serves_pointing(arm: Arm) -> bool:
+    """See `Arm.serves_pointing`."""
+    q = np.random.default_rng(7).uniform(-1.0, 1.0, (4, arm.n))
+    for pose, jac in zip(forward(arm, q), jacobian(arm, q), strict=True):
+        rows = np.vstack([jac[:3] / arm.length, pose[:3, :2].T @ jac[3:]])
+        if np.linalg.svd(rows, compute_uv=False)[-1] < 1e-9:
+            return False
+    return True

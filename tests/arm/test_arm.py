@@ -21,7 +21,7 @@ GOOD = {"name": "one", "joints": ONE, "parent_from_joint": np.eye(4)[None], "axe
         ({"axes": np.zeros((2, 3))}, "one: axes: expected shape (1, 3), got (2, 3)"),
         ({"axes": np.array([[0, 0, 1.1]])}, "one: axes: expected unit vectors"),
         ({"gravity": np.array([0, 0, np.nan])}, "one: gravity: expected finite numbers"),
-        ({"parents": (0,)}, "one: parents: expected 1 indices, each of an earlier joint or -1"),
+        ({"parents": (0,)}, "one: parents: expected 1 indices of other joints or -1, without a loop"),
         ({"positions": {"up": np.zeros(2)}}, "one: positions.up: expected 1 joint values, got 2"),
         ({"links": ()}, "one: links: expected 1, got 0"),
     ],
