@@ -28,7 +28,7 @@ _NEVER = 1e-12  # q' below this (relative to its limit) does not limit the speed
 class CoarseTiming:
     """s(t) of one stretch with constant acceleration of s between nodes."""
 
-    s: Array  # (N+1,) nodes, breaks of the path among them
+    s: Array  # (N+1,) nodes, borders of the motion among them
     piece: NDArray[np.intp]  # (N,) piece of the path that each cell lies in
     time: Array  # (N+1,)
     speed: Array  # (N+1,) ds/dt at the nodes, zero at both ends
@@ -84,9 +84,10 @@ def tool_wall(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
 
 
 def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
-    breaks = motion.path.breaks
-    width = np.diff(breaks)
-    cells = np.maximum(_CELLS_PER_PIECE, np.ceil(_CELLS * width / breaks[-1])).astype(int)
+    borders = motion.borders()
+    width = np.diff(borders)
+    piece = motion.path.locate(0.5 * (borders[:-1] + borders[1:]))[0]
+    cells = np.maximum(_CELLS_PER_PIECE, np.ceil(_CELLS * width / borders[-1])).astype(int)
     nodes, pieces = [], []
     for i, count in enumerate(cells):
         share = np.arange(count) / count
@@ -97,9 +98,9 @@ def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
             share = share**2
         elif last:
             share = 1.0 - (1.0 - share) ** 2
-        nodes.append(breaks[i] + width[i] * share)
-        pieces.append(np.full(count, i))
-    return np.concatenate([*nodes, breaks[-1:]]), np.concatenate(pieces)
+        nodes.append(borders[i] + width[i] * share)
+        pieces.append(np.full(count, piece[i]))
+    return np.concatenate([*nodes, borders[-1:]]), np.concatenate(pieces)
 
 
 def _end_rows(
