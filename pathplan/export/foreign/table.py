@@ -77,7 +77,7 @@ def read_foreign(file: str | Path, arm: Arm, asked: Asked = Asked()) -> Foreign:
     meta = {"arm": arm.name, "sources": dict(arm.sources), "read_from": file.name, "columns_read": names}
     table = JointTable(
         **arrays,
-        step=steps,  # type: ignore[arg-type]  # None: all zero
+        step=steps,
         joint_names=tuple(joint.name for joint in arm.joints),
         joint_kinds=tuple(joint.kind for joint in arm.joints),
         cycle=asked.cycle,
@@ -115,11 +115,11 @@ def _uses(file: Path, source: Source, arm: Arm, asked: Asked) -> tuple[list[_Use
         if at in taken or (meaning.field == "time" and (asked.time is not None or asked.cycle is not None)):
             continue
         unit = meaning.unit or unit_of(source.units[at])
-        joint = _joint(meaning, 0 if base == 0 else 1, arm.n)
+        meant = _joint(meaning, 0 if base == 0 else 1, arm.n)
         field = meaning.field or _field_by_unit(unit)
-        if joint is None or ((field, joint) in found and found[field, joint].at in _asked_places(names, asked)):
+        if meant is None or ((field, meant) in found and found[field, meant].at in _asked_places(names, asked)):
             continue  # the number of no joint; or what is asked for stands before what is recognised
-        take(at, field, joint, unit)
+        take(at, field, meant, unit)
     order = ["time", *JOINT_FIELDS, "step"]
     return sorted(found.values(), key=lambda use: (order.index(use.field), use.joint)), []
 
@@ -239,10 +239,10 @@ def _arrays(uses: Sequence[_Use], units: Sequence[float], values: Array, n: int)
     return arrays
 
 
-def _steps(values: Array, notes: list[str]) -> Array | None:
+def _steps(values: Array, notes: list[str]) -> Any:
     """Steps counted from 0, where a column of that name holds whole numbers from 1."""
     whole = np.isfinite(values).all() and (values == np.rint(values)).all()
     if whole and values.min() >= 1 and values.max() <= 2**31:
-        return np.asarray(values - 1, dtype=np.int64)  # type: ignore[return-value]
+        return np.asarray(values - 1, dtype=np.int64)
     notes.append("column step is not used: it does not count steps from 1")
     return None

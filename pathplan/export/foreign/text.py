@@ -88,7 +88,7 @@ class TextSource:
             raise InputError.at(str(self.file), f"more than {MAX_COLUMNS} columns")
         rows = [self.form.cells(line) for line in above[-2:]]
         if not self.form.cells(first)[-1]:  # every row of numbers ends with a delimiter, which names need not
-            rows = [cells + [""] if len(cells) == width - 1 else cells for cells in rows]
+            rows = [[*cells, ""] if len(cells) == width - 1 else cells for cells in rows]
         rows = [cells for cells in rows if len(cells) == width]
         units = [""] * width
         if rows and any(rows[-1]) and all(not cell or unit_of(cell) for cell in rows[-1]) and len(rows) > 1:
