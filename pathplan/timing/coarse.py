@@ -65,11 +65,16 @@ def coarse_timing(motions: Sequence[Motion], *, accuracy: float = 3e-3) -> list[
     return problem.timings(b, meshes)
 
 
+def speed_walls(rows: Array, velocity: Array) -> Array:
+    """(N, R) largest (ds/dt)^2 by each velocity limit (R, 2), from q' (N, R)."""
+    limit = np.where(rows > 0, velocity[:, 1], -velocity[:, 0])
+    return 1.0 / np.maximum(np.abs(rows) / limit, _NEVER) ** 2
+
+
 def speed_wall(rows: Array, velocity: Array) -> Array:
     """(N,) largest (ds/dt)^2 by the velocity limits (R, 2), from q' (N, R)."""
-    limit = np.where(rows > 0, velocity[:, 1], -velocity[:, 0])
-    ratio = np.abs(rows) / limit
-    return 1.0 / np.maximum(ratio.max(axis=1), _NEVER) ** 2
+    wall: Array = speed_walls(rows, velocity).min(axis=1)
+    return wall
 
 
 def tool_wall(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
