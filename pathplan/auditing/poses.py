@@ -74,7 +74,7 @@ def passes(table: JointTable, task: Task, near: tuple[float, float] = NEAR) -> t
     steps = [step for step in task.steps if step.target is not None]
     if len(table) > MOST_ROWS or len(table) * len(steps) > MOST_WORK:
         raise InputError(f"table: {len(table)} rows are too many to be compared with {len(steps)} targets")
-    good = np.isfinite(table.position).all(axis=1)
+    good = np.asarray(np.isfinite(table.position).all(axis=1))
     position = np.where(good[:, None], table.position, 0.0)
     carried = {step.tool: _carrying(arm, step) for step in steps}
     poses = {tool: carrying.forward(position) for tool, carrying in carried.items()}
