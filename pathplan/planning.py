@@ -16,8 +16,9 @@ from pathplan.task.model import Task
 
 if TYPE_CHECKING:
     from pathplan.arm import Arm
-    from pathplan.auditing import Audit, Evidence
+    from pathplan.auditing import Audit, Evidence, LoadChange
     from pathplan.path.taskpath import Stretch, TaskPath
+    from pathplan.savings import Saving
     from pathplan.timeline import Part
     from pathplan.timing.motion import Motion
     from pathplan.timing.stretch import StretchTiming
@@ -118,9 +119,15 @@ class Plan:
         table = self.__dict__.get("table")
         return audit(self.rows() if table is None else table, self.task.arm, plan=self)
 
+    def savings(self, *, top: int = 5) -> tuple[Saving, ...]:
+        """What would buy time: see `pathplan.savings.find_savings`. Plans the task again for every change it tries."""
+        from pathplan.savings import find_savings
+
+        return find_savings(self, top=top)
+
     def _rows(self, ticks: NDArray[np.int64]) -> JointTable:
         from pathplan.path.tool_motion import tool_derivatives
-        from pathplan.timeline import arm_of, evaluate, in_parts
+        from pathplan.timeline import evaluate, in_parts
 
         arm, count = self.task.arm, len(ticks)
         n = len(arm.joints)
@@ -130,7 +137,7 @@ class Plan:
 
         def visit(part: Part, rows: NDArray[np.intp], local: NDArray[np.int64]) -> None:
             values = evaluate(part, np.asarray(tick_times(local, self.task.cycle)), n)
-            carrying = arm_of(part, arm)
+            carrying = self._carrying(part)
             q, qd, qdd = values.position, values.velocity, values.acceleration
             columns[:, rows] = q, qd, qdd, values.jerk
             step[rows] = values.step
@@ -169,7 +176,49 @@ class Plan:
             at_rows = worse_deviation(at_rows, self._deviation(part, 0.0))
             midway = worse_deviation(midway, self._deviation(part, 0.5))
             peaks = worse_peaks(peaks, self._dense_peaks(part))
-        return Evidence(at_rows, midway, peaks)
+        return Evidence(at_rows, midway, peaks, self._load_changes())
+
+    @cached_property
+    def _arms(self) -> dict[tuple[str, str | None], Arm]:
+        """The arm by tool and payload, as the stretches carry them."""
+        return {_load(stretch.arm): stretch.arm for stretch in self.path.stretches}
+
+    def _carrying(self, part: Part) -> Arm:
+        """The arm with what it carries in a part; in a wait, what the waiting step says."""
+        from pathplan.path.cartesian import tool_of
+
+        if part.stretch is not None:
+            return part.stretch.arm
+        assert part.wait is not None
+        step = self.task.steps[part.wait.step]
+        tool = tool_of(self.task.arm, step.tool)
+        load = (tool.name, step.payload)
+        if load == _load(self.task.arm):
+            return self.task.arm
+        if load not in self._arms:
+            self._arms[load] = self.task.arm.equipped(tool=tool, payload=step.payload)
+        return self._arms[load]
+
+    def _load_changes(self) -> tuple[LoadChange, ...]:
+        """Where the arm takes up or leaves a load, and what that makes of the torque that holds it."""
+        from pathplan.auditing import LoadChange
+
+        if self.task.arm.links is None:
+            return ()
+        found: list[LoadChange] = []
+        carried = [self._carrying(part) for part in self.parts]
+        places: dict[tuple[Any, Any], list[int]] = {}
+        for k in range(1, len(carried)):
+            if _load(carried[k]) != _load(carried[k - 1]):
+                places.setdefault((_load(carried[k - 1]), _load(carried[k])), []).append(k)
+        for at in places.values():
+            q = np.array([self.parts[k - 1].rest for k in at])
+            still = np.zeros_like(q)
+            change = carried[at[0]].torque(q, still, still) - carried[at[0] - 1].torque(q, still, still)
+            for k, torque in zip(at, change, strict=True):
+                time = float(tick_times(self.parts[k].first, self.task.cycle))
+                found.append(LoadChange(time, _step_of(self.parts[k]), torque))
+        return tuple(sorted(found, key=lambda load: load.time))
 
     def _deviation(self, part: Part, shift: float) -> Any:
         from pathplan.auditing import path_deviation, worse_deviation
@@ -234,9 +283,8 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
     """
     from pathplan.path import follow_task
     from pathplan.timeline import lay_on_ticks
-    from pathplan.timing.bound import bound_durations
-    from pathplan.timing.coarse import coarse_timing
-    from pathplan.timing.solve import BATCH, time_motions
+    from pathplan.timing.batch import time_batch
+    from pathplan.timing.solve import BATCH
 
     if not 0 < task.pace <= 1:
         raise InputError(f"pace: expected more than 0 and at most 1, got {task.pace}")
@@ -251,10 +299,9 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
     bounds: list[Array] = [np.zeros(0)]
     say("timing", 0, len(motions))
     for first in range(0, len(motions), BATCH):
-        batch = motions[first : first + BATCH]
-        coarse = coarse_timing(batch)
-        timings.extend(time_motions(batch, coarse))
-        bounds.append(bound_durations(batch, coarse))
+        timed = time_batch(motions[first : first + BATCH])
+        timings.extend(one.timing for one in timed)
+        bounds.append(np.array([one.bound for one in timed]))
         say("timing", len(timings), len(motions))
     paced = tuple(timing if task.pace == 1 else timing.slowed(task.pace) for timing in timings)
     parts = lay_on_ticks(path.sequence, paced, task.start, task.cycle)
@@ -318,6 +365,19 @@ def torque_limits(arm: Arm) -> TorqueLimits | None:
             corner[k] = joint.torque_corner
             fall[k] = (joint.torque - joint.torque_at_velocity) / (joint.velocity - joint.torque_corner)
     return TorqueLimits(partial(path_torque, arm), peak, corner, fall)
+
+
+def _load(arm: Arm) -> tuple[str, str | None]:
+    """The tool and the payload that an arm carries, by name."""
+    return arm.tool.name, arm.payload.name if arm.payload is not None else None
+
+
+def _step_of(part: Part) -> int:
+    """The step that a part begins with."""
+    if part.wait is not None:
+        return part.wait.step
+    assert part.stretch is not None
+    return part.stretch.steps[0].step
 
 
 def _finite(rows: Array) -> Array:

@@ -167,10 +167,8 @@ class Arm:
 
         "" for a row that sums joints of both kinds where its limits don't say.
         """
-        if self.limits.kinds:
-            return tuple(self.limits.kinds)
-        kinds = []
-        for row in self.limits.matrix:
+        kinds: list[str] = list(self.limits.kinds)
+        for row in self.limits.matrix[len(kinds) :]:
             involved = {joint.kind for joint, share in zip(self.joints, row, strict=True) if share != 0.0}
             kinds.append(str(involved.pop()) if len(involved) == 1 else "")
         return tuple(kinds)

@@ -1,5 +1,6 @@
 """The audit: what a joint table uses of every limit, where, and whether it may be run."""
 
+from pathplan.auditing.drives import DriveUse, LoadChange, TorqueJumps
 from pathplan.auditing.judge import audit
 from pathplan.auditing.model import Audit, Finding, JointAudit, Pacing, Peak, Singularity, StepPacing
 from pathplan.auditing.planned import (
@@ -18,14 +19,17 @@ __all__ = [
     "Audit",
     "CornerUse",
     "Deviation",
+    "DriveUse",
     "Evidence",
     "Finding",
     "JointAudit",
+    "LoadChange",
     "Pacing",
     "Peak",
     "Singularity",
     "StepPacing",
     "StepSpeed",
+    "TorqueJumps",
     "audit",
     "joint_peaks",
     "path_deviation",

@@ -12,7 +12,7 @@ from pathplan.auditing.model import TOLERANCE, Finding, Peak
 from pathplan.auditing.shares import Array, Rows
 from pathplan.auditing.words import apart, dimension_of, shown
 
-__all__ = ["SLACK", "Exceedance", "clock", "exceedances", "finding_of", "gather"]
+__all__ = ["SLACK", "Exceedance", "clock", "exceedances", "finding_of", "gather", "percent"]
 
 SLACK = 1e-9  # rad or m beyond a position limit: the rounding of a start or goal that lies on it
 Key = tuple[str, int, int]  # quantity, limit row, step
@@ -35,13 +35,13 @@ class Exceedance:
 def exceedances(
     quantity: str, values: Array, limits: Array, shares: Array, rows: Rows, *, over: NDArray[np.bool_] | None = None
 ) -> Iterator[tuple[Key, Exceedance]]:
-    """What exceeds limits (R, 2) in values (N, R) of these shares.
+    """What exceeds limits (R, 2), or (N, R, 2) where they differ from row to row, in values (N, R) of these shares.
 
     Shares above 1 + TOLERANCE do; of positions, what lies beyond the limit by more than SLACK; where `over`
     (N, R) is given, what is true there.
     """
     if over is None:
-        beyond = (values > limits[:, 1] + SLACK) | (values < limits[:, 0] - SLACK)
+        beyond = (values > limits[..., 1] + SLACK) | (values < limits[..., 0] - SLACK)
         over = beyond if quantity == "position" else shares > 1 + TOLERANCE
     for r in np.flatnonzero(over.any(axis=0)):
         at = np.flatnonzero(over[:, r])
@@ -49,12 +49,13 @@ def exceedances(
             mine = at[rows.step[at] == step]
             i = mine[np.argmax(shares[mine, r])]
             value = values[i, r]
+            low, high = limits[i, r] if limits.ndim == 3 else limits[r]
             if quantity == "position":
-                limit = limits[r, 1] if value > limits[r, 1] else limits[r, 0]
+                limit = high if value > high else low
                 margin = -abs(float(value - limit))
                 worst = rows.peak(i, value, limit, shares[i, r], margin)
             else:
-                worst = rows.peak(i, value, limits[r, 1] if value >= 0 else limits[r, 0], shares[i, r])
+                worst = rows.peak(i, value, high if value >= 0 else low, shares[i, r])
             times = float(rows.time[mine[0]]), float(rows.time[mine[-1]])
             yield (quantity, int(r), int(step)), Exceedance(worst, len(mine), *times)
 
@@ -65,9 +66,7 @@ def gather(found: dict[Key, Exceedance], more: Iterator[tuple[Key, Exceedance]])
         found[key] = found[key].joined(exceedance) if key in found else exceedance
 
 
-def finding_of(
-    key: Key, found: Exceedance, names: Sequence[str], kinds: Sequence[str], *, how: str = ""
-) -> Finding:
+def finding_of(key: Key, found: Exceedance, names: Sequence[str], kinds: Sequence[str], *, how: str = "") -> Finding:
     """An exceedance in words: joint, quantity, value, limit, time, step. `how` says how it was measured."""
     quantity, r, step = key
     peak = found.worst
@@ -81,7 +80,7 @@ def finding_of(
         beyond = shown(abs(peak.peak - peak.limit), dimension)
         text = f"{name}: {what} {value} {place} lies beyond the limit {limit} by {beyond}"
     else:
-        text = f"{name}: {what} {value} {place} exceeds the limit {limit}, {_percent(peak.share)}"
+        text = f"{name}: {what} {value} {place} exceeds the limit {limit}, {percent(peak.share)}"
     if found.count > 1:
         text += f"; {found.count} rows from {clock(found.first)} to {clock(found.last)}"
     where = (peak.time, step, None if tool else name, quantity)
@@ -93,7 +92,7 @@ def clock(time: float) -> str:
     return f"{time:.6f}".rstrip("0").rstrip(".") + " s"
 
 
-def _percent(share: float) -> str:
+def percent(share: float) -> str:
     """101.3 %, with digits enough to show that it is above 100."""
     for digits in range(1, 12):
         text = f"{share * 100:.{digits}f}"

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from pathplan.arm import Arm
 from pathplan.auditing.differences import ORDERS, Differences
+from pathplan.auditing.drives import Drives, DriveUse, jump_notes, overloads, torque_limits
 from pathplan.auditing.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
 from pathplan.auditing.model import QUANTITIES, TOLERANCE, Audit, Finding, JointAudit, Peak, Singularity
 from pathplan.auditing.pacing import StepClock
@@ -97,6 +98,7 @@ class _Judge:
             self.notes.append(Finding("note", "torque is not judged: the table has no torque columns"))
         limits = {name: getattr(arm.limits, name) for name, _ in ORDERS}
         factors = [DEGREES if joint.kind == "revolute" else MILLIMETRES for joint in arm.joints]
+        self.drives = Drives(arm) if first.torque is not None else None
         self.differences = Differences(self.matrix, limits, np.array(factors), self.cycle)
         self.stamps = Stamps(self.cycle, stated=first.cycle is not None)
         self.speed_caps, self.acceleration_caps = step_caps(arm, plan.task if plan else None)
@@ -110,6 +112,7 @@ class _Judge:
         self.singularity: Singularity | None = None
         self.speeds: dict[int, tuple[float, float, float]] = {}
         self.ends: list[JointTable] = []
+        self.before: JointTable | None = None  # the last row so far
 
     def _all_derived(self) -> bool:
         return len(self.derived) == len(DERIVED)
@@ -129,16 +132,20 @@ class _Judge:
             self._judge_rows(table, good)
         self.rows += len(table)
         self.last_time = float(table.time[-1])
+        self.before = self.ends[1]
 
     def _judge_rows(self, table: JointTable, good: NDArray[np.bool_]) -> None:
         rows = Rows(table.time, table.step, self.rows)
         columns = {q: getattr(table, q) for q in QUANTITIES if getattr(table, q) is not None}
+        velocity = self._velocity(table)
+        if self.drives is not None and table.torque is not None:
+            self.drives.add(rows, velocity, table.torque, jumps_of_load=self.plan is None)
         peaks = joint_peaks(self.arm, table.time, table.step, self.rows, **columns)
         self.joints = worse_peaks(self.joints, peaks)
         shares = []
         for quantity in (*DERIVED, "torque"):
-            shares.append(self._share(quantity, columns.get(quantity), rows))
-        self._share("position", columns["position"], rows)
+            shares.append(self._share(quantity, columns.get(quantity), rows, velocity))
+        self._share("position", columns["position"], rows, velocity)
         shares += self._tool(table, good, rows)
         self.clock.add(np.hstack(shares), table.step, self._times(table.time))
         if good.any():
@@ -147,14 +154,25 @@ class _Judge:
             before = self.singularity
             self.singularity = nearest_singularity(self.arm, table.position[good], at, numbers, before)
 
-    def _share(self, quantity: str, values: Array | None, rows: Rows) -> Array:
+    def _velocity(self, table: JointTable) -> Array:
+        """Joint velocities (N, n): the column, or else the differences from row to row."""
+        if table.velocity is not None:
+            return table.velocity
+        before = self.before or table
+        time = np.concatenate([before.time[-1:], table.time])
+        position = np.vstack([before.position[-1:], table.position])
+        interval = np.diff(time)[:, None]
+        return np.where(interval > 0, np.diff(position, axis=0) / np.where(interval > 0, interval, 1.0), 0.0)
+
+    def _share(self, quantity: str, values: Array | None, rows: Rows, velocity: Array) -> Array:
         """Shares (N, R) of one quantity, zero without data; what exceeds is kept."""
         if values is None:
             return np.zeros((len(rows.time), len(self.names)))
         limits = getattr(self.arm.limits, quantity)
         if quantity == "torque":  # of the joints alone: a torque is not summed as positions are
-            shares = shares_of(values, limits[: self.arm.n])
-            gather(self.found, exceedances(quantity, values, limits[: self.arm.n], shares, rows))
+            limits = torque_limits(self.arm, velocity)
+            shares = shares_of(values, limits)
+            gather(self.found, exceedances(quantity, values, limits, shares, rows))
             return np.hstack([shares, np.zeros((len(shares), len(self.names) - self.arm.n))])
         values = rows_of(values, self.matrix)
         shares = position_shares(values, limits)[0] if quantity == "position" else shares_of(values, limits)
@@ -185,9 +203,7 @@ class _Judge:
         if not len(at):
             return None
         found = np.zeros(len(table))
-        found[at] = tool_acceleration(
-            self.arm, table.position[at], table.velocity[at], table.acceleration[at]
-        )
+        found[at] = tool_acceleration(self.arm, table.position[at], table.velocity[at], table.acceleration[at])
         return found
 
     def _tool_share(self, quantity: str, values: Array | None, caps: Array, rows: Rows) -> Array:
@@ -227,6 +243,11 @@ class _Judge:
         moving, waiting = self._motion_and_waiting()
         joints = self._with_differences()
         start, end = self.ends
+        if self.drives is not None:
+            self.drives.finish(evidence.loads)
+            drives = self.drives.uses()
+        else:
+            drives = ()
         return Audit(
             arm=self.arm.name,
             task=str(self.meta.get("task", "")),
@@ -236,7 +257,7 @@ class _Judge:
             measured=self.measured,
             joints=joints[: self.arm.n],
             rows=joints[self.arm.n :],
-            findings=tuple(self._findings(evidence)),
+            findings=tuple(self._findings(evidence, drives)),
             tool_speed=self.tool_peaks[TOOL[0]][0],
             tool_acceleration=self.tool_peaks[TOOL[1]][0],
             singularity=self.singularity,
@@ -248,6 +269,7 @@ class _Judge:
             deviation_midway=evidence.deviation_midway,
             corners=corners_of(plan.path) if plan else (),
             continuous=evidence.continuous,
+            drives=drives,
             bound=plan.bound if plan else None,
         )
 
@@ -270,7 +292,7 @@ class _Judge:
             joined.append(replace(joint, differences=known, **missing))
         return tuple(joined)
 
-    def _findings(self, evidence: Evidence) -> Iterator[Finding]:
+    def _findings(self, evidence: Evidence, drives: tuple[DriveUse, ...]) -> Iterator[Finding]:
         """Exceedances first, then warnings and notes."""
         for name, (row, joint, pieces) in self.not_finite.items():
             more = ", and further rows" if pieces > 1 else ""
@@ -279,7 +301,8 @@ class _Judge:
             yield Finding("exceedance", text, joint=joint or None, quantity=name)
         yield from self.stamps.findings()
         for key, found in sorted(self.found.items(), key=lambda item: item[1].first):
-            yield finding_of(key, found, self.names, self.kinds)
+            yield finding_of(key, found, self.names, self.kinds, how=self._at_speed(key, found))
+        yield from overloads(drives)
         yield from self._seen_by_the_drive()
         yield from _rest(self.arm, *self.ends)
         yield from self._between_rows(evidence)
@@ -295,9 +318,16 @@ class _Judge:
             text = f"the table states no cycle: {self.cycle * 1e3:.6g} ms found from its times"
             yield Finding("note", text)
         yield from self.notes
+        yield from jump_notes(drives)
         if self.plan is not None:
             for note in self.plan.path.findings:
                 yield Finding("note", str(note), step=note.step)
+
+    def _at_speed(self, key: Key, found: Exceedance) -> str:
+        """Says so where the limit is what the drive has left at the speed."""
+        full = np.abs(self.arm.limits.torque[: self.arm.n]).max(axis=1)
+        fallen = key[0] == "torque" and abs(found.worst.limit) < full[key[1]]
+        return " (what the drive gives at that speed)" if fallen else ""
 
     def _seen_by_the_drive(self) -> Iterator[Finding]:
         """What only the differences show: the columns of that step keep the limit, or are not there."""

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Literal
 
 if TYPE_CHECKING:
+    from pathplan.auditing.drives import DriveUse
     from pathplan.auditing.planned import CornerUse, Deviation, StepSpeed
 
 __all__ = [
@@ -147,6 +148,7 @@ class Audit:
     deviation_midway: Deviation | None = None
     corners: tuple[CornerUse, ...] = ()
     continuous: tuple[JointAudit, ...] = ()  # of the trajectory itself, evaluated between the rows
+    drives: tuple[DriveUse, ...] = ()  # where the table has torque
     bound: float | None = None  # s, lower bound of the duration, where the plan states one
 
     @property

@@ -6,6 +6,7 @@ import math
 from dataclasses import asdict
 from typing import Any
 
+from pathplan.auditing.drives import DriveUse, rpm
 from pathplan.auditing.model import Audit, Finding, JointAudit, Peak
 from pathplan.auditing.planned import CornerUse, Deviation
 from pathplan.auditing.words import dimension_of
@@ -33,6 +34,7 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
         "bound_s": audit.bound,
         "measured": audit.measured,
         "joints": [_joint(joint) for joint in audit.joints],
+        "drives": [_drive(drive) for drive in audit.drives],
         "coupled": [_joint(row) for row in audit.rows],
         "tool_speed": _peak(audit.tool_speed, "speed"),
         "tool_acceleration": _peak(audit.tool_acceleration, "acceleration"),
@@ -44,8 +46,7 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
                 "name": step.name,
                 "duration_s": step.duration,
                 "parts": [
-                    {"joint": part.joint, "quantity": part.quantity, "percent": 100 * part.part}
-                    for part in step.parts
+                    {"joint": part.joint, "quantity": part.quantity, "percent": 100 * part.part} for part in step.parts
                 ],
             }
             for step in audit.pacing
@@ -111,6 +112,43 @@ def _joint(joint: JointAudit) -> dict[str, Any]:
     if joint.differences is not None:
         found["differences"] = all_of(dict(joint.differences))
     return found
+
+
+def _drive(drive: DriveUse) -> dict[str, Any]:
+    """One drive; motor speeds in rpm, power in W, energy in J over the table, margins in percent of the limit."""
+    share = drive.rms_share
+    limited = math.isfinite(drive.torque.limit)
+    dimension = dimension_of(drive.kind, "torque")
+    return {
+        "name": drive.name,
+        "kind": drive.kind,
+        "unit": _unit(dimension),
+        "torque": _peak(drive.torque, dimension),
+        "torque_margin_percent": 100 * (1 - drive.torque.share) if limited else None,
+        "rms_torque": _number(drive.rms),
+        "continuous_torque": drive.continuous,
+        "rms_percent": None if share is None else 100 * share,
+        "rms_margin_percent": None if share is None else 100 * (1 - share),
+        "motor_speed_rpm": _number(rpm(drive.motor_speed)),
+        "motor_speed_limit_rpm": _number(rpm(drive.motor_speed_limit)),
+        "peak_power_w": _number(drive.power),
+        "peak_power_time_s": _number(drive.power_time),
+        "peak_power_step": drive.power_step + 1,
+        "peak_returning_power_w": _number(drive.returning),
+        "work_j": _number(drive.work),
+        "returned_j": _number(drive.returned),
+        "net_j": _number(drive.net),
+        "jumps": [
+            {
+                "cause": jumps.cause,
+                "count": jumps.count,
+                "largest": jumps.largest,
+                "unit": _unit(dimension),
+                **_place(jumps.time, jumps.step),
+            }
+            for jumps in drive.jumps
+        ],
+    }
 
 
 def _deviation(deviation: Deviation | None) -> dict[str, Any] | None:

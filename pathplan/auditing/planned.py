@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
+from pathplan.auditing.drives import LoadChange, torque_limits
 from pathplan.auditing.model import QUANTITIES, JointAudit
 from pathplan.auditing.shares import Array, Rows, larger, limit_rows, peaks_of, row_kinds, rows_of
 
@@ -80,12 +81,14 @@ class Evidence:
     """What a plan hands to the audit about the trajectory behind its table.
 
     `deviation_rows` and `deviation_midway` from `path_deviation` at the rows and halfway between them;
-    `continuous` from `joint_peaks` over an evaluation of the trajectory 20 times denser than the rows, or ().
+    `continuous` from `joint_peaks` over an evaluation of the trajectory 20 times denser than the rows, or ();
+    `loads` are the stops at which the arm takes up or leaves a load.
     """
 
     deviation_rows: Deviation | None = None
     deviation_midway: Deviation | None = None
     continuous: tuple[JointAudit, ...] = ()
+    loads: tuple[LoadChange, ...] = ()
 
 
 class Planned(Protocol):
@@ -176,7 +179,7 @@ def joint_peaks(
         if values is None:
             found[quantity] = [None] * len(names)
         elif quantity == "torque":  # of the joints alone: a torque is not summed as positions are
-            peaks, _ = peaks_of(values, limits[: arm.n], rows)
+            peaks, _ = peaks_of(values, torque_limits(arm, columns.get("velocity")), rows)
             found[quantity] = peaks + [None] * (len(names) - arm.n)
         else:
             own = rows_of(values, matrix)

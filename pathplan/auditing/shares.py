@@ -50,7 +50,7 @@ def limit_rows(arm: Arm) -> tuple[tuple[str, ...], Array]:
 
 
 def row_kinds(arm: Arm) -> tuple[str, ...]:
-    """"revolute" or "prismatic" for each limit row, "" for one that sums both kinds."""
+    """ "revolute" or "prismatic" for each limit row, "" for one that sums both kinds."""
     kinds = []
     for row in arm.limits.matrix:
         involved = {joint.kind for joint, c in zip(arm.joints, row, strict=True) if c != 0.0}
@@ -68,11 +68,11 @@ def rows_of(values: Array, matrix: Array) -> Array:
 
 
 def shares_of(values: Array, limits: Array) -> Array:
-    """Shares (N, R) that values (N, R) use of limits (R, 2): value / high above zero, value / low below.
+    """Shares (N, R) that values (N, R) use of limits (R, 2) or (N, R, 2): value / high above zero, value / low below.
 
     No limit (infinite) is share 0. A value that is not a number gives one.
     """
-    low, high = limits[:, 0], limits[:, 1]
+    low, high = limits[..., 0], limits[..., 1]
     with np.errstate(divide="ignore", invalid="ignore"):
         shares = np.where(values >= 0, values / high, values / low)
         # an infinite value of an unlimited row, and zero of a limit of zero, use nothing
@@ -91,10 +91,11 @@ def position_shares(values: Array, limits: Array) -> tuple[Array, Array]:
     return shares, margins
 
 
-def peaks_of(
-    values: Array, limits: Array, rows: Rows, *, position: bool = False
-) -> tuple[list[Peak | None], Array]:
-    """The peak of each limit row, None for a row without limits, and all the shares (N, R)."""
+def peaks_of(values: Array, limits: Array, rows: Rows, *, position: bool = False) -> tuple[list[Peak | None], Array]:
+    """The peak of each limit row, None for a row without limits, and all the shares (N, R).
+
+    limits (R, 2), or (N, R, 2) where they differ from row to row of the values (N, R).
+    """
     if position:
         shares, margins = position_shares(values, limits)
     else:
@@ -102,7 +103,7 @@ def peaks_of(
     at = np.argmax(np.where(np.isnan(shares), -np.inf, shares), axis=0)
     peaks: list[Peak | None] = []
     for r, i in enumerate(at):
-        low, high = limits[r]
+        low, high = limits[i, r] if limits.ndim == 3 else limits[r]
         if not (math.isfinite(low) or math.isfinite(high)) or np.isnan(shares[i, r]):
             peaks.append(None)
         elif position:

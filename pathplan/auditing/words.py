@@ -13,6 +13,8 @@ def dimension_of(kind: str, quantity: str) -> str | None:
     """Dimension of a joint's or the tool's quantity; None for a row that sums deg and mm."""
     if quantity in _TOOL:
         return _TOOL[quantity]
+    if quantity == "rms torque":
+        quantity = "torque"
     return joint_dimension(kind, quantity) if kind else None  # type: ignore[arg-type]
 
 

@@ -25,7 +25,7 @@ class Kind:
     `write(chunks, stream, header, units)`: chunks of one table, in order, into a seekable binary stream; the
     same table in other chunks gives the same bytes. `read(file)`: the table, or InputError naming what is
     damaged. `read_header(file)`: the same for the header alone, at the cost of the header alone. `si`: the
-    kind holds SI and nothing else.
+    kind holds SI and nothing else. `check(file)` raises InputError where the kind needs what is not installed.
     """
 
     suffix: str
@@ -33,6 +33,7 @@ class Kind:
     read: Callable[[Path], JointTable]
     read_header: Callable[[Path], Header]
     si: bool = False
+    check: Callable[[Path], object] = lambda file: None
 
 
 def kinds() -> Mapping[str, Kind]:

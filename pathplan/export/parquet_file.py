@@ -6,6 +6,7 @@ Needs pyarrow, which comes with the extra "parquet". Steps and rows count from 1
 from __future__ import annotations
 
 import contextlib
+import io
 import json
 from collections.abc import Iterator
 from pathlib import Path
@@ -33,25 +34,53 @@ MISSING = 'Parquet needs pyarrow, which is not installed: pip install "pathplan[
 def write(chunks: Iterator[JointTable], stream: BinaryIO, header: Header, units: Units) -> None:
     """See `Kind.write`."""
     pa, pq = _pyarrow(Path(stream.name))
-    writer = None
     content = json.dumps(header_as_dict(header, 1, units_text(units)), allow_nan=False)
-    for columns, block, steps in _row_groups(numbers(chunks, header, units)):
-        if writer is None:
-            fields = [pa.field(name, pa.float64(), nullable=False) for name in columns[:-1]]
-            fields.append(pa.field(columns[-1], pa.int64(), nullable=False))
-            schema = pa.schema(fields, metadata={KEY: content.encode()})
-            writer = pq.ParquetWriter(
-                stream,
-                schema,
-                compression="zstd",
-                use_dictionary=False,
-                column_encoding={name: "PLAIN" for name in columns},
-                write_page_checksum=True,
-            )
-        arrays = [pa.array(np.ascontiguousarray(column)) for column in block.T]
-        writer.write_table(pa.Table.from_arrays([*arrays, pa.array(steps)], schema=schema), ROW_GROUP)
-    assert writer is not None  # `write_table` refuses tables without rows
-    writer.close()
+    sink, writer, schema = _Sink(stream), None, None
+    try:
+        for columns, block, steps in _row_groups(numbers(chunks, header, units)):
+            if writer is None:
+                fields = [pa.field(name, pa.float64(), nullable=False) for name in columns[:-1]]
+                fields.append(pa.field(columns[-1], pa.int64(), nullable=False))
+                schema = pa.schema(fields, metadata={KEY: content.encode()})
+                writer = pq.ParquetWriter(
+                    sink,
+                    schema,
+                    compression="zstd",
+                    use_dictionary=False,
+                    column_encoding={name: "PLAIN" for name in columns},
+                    write_page_checksum=True,
+                )
+            arrays = [pa.array(np.ascontiguousarray(column)) for column in block.T]
+            writer.write_table(pa.Table.from_arrays([*arrays, pa.array(steps)], schema=schema), ROW_GROUP)
+        if writer is not None:
+            writer.close()
+    except BaseException:
+        # What is left of the writer ends the file when it is collected, long after the stream was closed.
+        sink.shut = True
+        if writer is not None:
+            with contextlib.suppress(Exception):
+                writer.close()
+        raise
+
+
+class _Sink(io.RawIOBase):
+    """A stream that takes bytes and, once it is shut, drops them."""
+
+    def __init__(self, stream: BinaryIO) -> None:
+        self._stream, self._size = stream, 0
+        self.shut = False
+
+    def writable(self) -> bool:
+        return True
+
+    def write(self, content: Any) -> int:
+        if not self.shut:
+            self._stream.write(content)
+        self._size += len(content)
+        return len(content)
+
+    def tell(self) -> int:
+        return self._size
 
 
 def _row_groups(blocks: Iterator[Numbers]) -> Iterator[Numbers]:
@@ -71,6 +100,7 @@ def _row_groups(blocks: Iterator[Numbers]) -> Iterator[Numbers]:
 
 
 def _pyarrow(file: Path) -> tuple[Any, Any]:
+    """pyarrow and pyarrow.parquet. Raises InputError where they are not installed."""
     try:
         import pyarrow
         import pyarrow.parquet
@@ -166,4 +196,4 @@ def read(file: Path) -> JointTable:
     return table_of([block], present, header, where)
 
 
-KIND = Kind(".parquet", write, read, read_header)
+KIND = Kind(".parquet", write, read, read_header, check=_pyarrow)

@@ -59,7 +59,7 @@ def pvt_of_plan(plan: Plan, period: float) -> Pvt:
     intervals = max(1, PIECE // dense)
     for first in range(0, count - 1, intervals):
         last = min(first + intervals, count - 1)
-        instants = np.arange(first * dense, last * dense + 1) * (step / dense)
+        instants = np.arange(first * dense, last * dense + 1, dtype=np.float64) * (step / dense)
         q, v, _ = _motion(plan, instants)
         error = np.maximum(error, _error(q, v, dense, step * cycle))
     measured = f"{dense} instants a period"

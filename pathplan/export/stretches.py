@@ -79,7 +79,8 @@ def _around(table: JointTable, first: int, last: int, side: str) -> dict[str, An
     """The rest between two rows, and the marks that fall into it."""
     if first == last:
         return {}
-    found: dict[str, Any] = {f"wait_{side}_s": float(table.time[last] - table.time[first])}
+    waited = table.time[last] - table.time[first] if table.cycle is None else tick_times(last - first, table.cycle)
+    found: dict[str, Any] = {f"wait_{side}_s": float(waited)}
     marks = [mark.name for mark in table.marks if first < mark.row <= last]
     return found | ({f"marks_{side}": marks} if marks else {})
 

@@ -52,6 +52,7 @@ def write_table(
     """
     file = Path(file)
     kind = kind_of(file)
+    kind.check(file)
     chosen = _units(units, kind, file)
     check_place(file)
     chunks = iter([table] if isinstance(table, JointTable) else table)
@@ -96,7 +97,7 @@ def check_destination(file: str | Path, table: JointTable | Mapping[str, Any], *
     Raises InputError: unknown suffix, missing folder, a directory, or a file that may not be replaced.
     """
     file = Path(file)
-    kind_of(file)
+    kind_of(file).check(file)
     check_place(file)
     if file.exists() and not overwrite and not may_replace(file, table):
         raise InputError.at(

@@ -100,9 +100,11 @@ class Picture:
         return np.asarray(getattr(self.arm.limits, quantity), dtype=np.float64)
 
     def step_label(self, step: int) -> str:
-        """'3 lift', or '3' for a step without a name."""
-        name = self.step_names[step] if step < len(self.step_names) else ""
-        return f"{step + 1} {name}".rstrip()
+        """'3 lift'; '3 wait' for a wait without a name, '3' for another step."""
+        known = step < len(self.step_names)
+        name = self.step_names[step] if known else ""
+        waits = known and self.motions[step] == "wait"
+        return f"{step + 1} {name or ('wait' if waits else '')}".rstrip()
 
     def pace_label(self, index: int) -> str:
         """'shoulder jerk', 'tool speed', or '' for none."""

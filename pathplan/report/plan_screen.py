@@ -32,6 +32,7 @@ def plan_screen(plan: Plan) -> str:
         _head(plan),
         _steps(plan),
         audit["joints"],
+        audit["drives"],
         audit["tool"],
         _marks(plan),
         audit["findings"],

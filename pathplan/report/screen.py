@@ -8,6 +8,7 @@ from collections.abc import Iterable, Iterator
 
 from pathplan.auditing import Audit, Deviation, JointAudit, Pacing, Peak, StepPacing
 from pathplan.auditing.words import dimension_of, shown
+from pathplan.report.drives import drive_lines
 from pathplan.report.text import WIDTH, aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value
 
@@ -36,6 +37,7 @@ def audit_blocks(audit: Audit) -> dict[str, list[str]]:
     blocks: dict[str, Iterable[str]] = {
         "headline": _headline(audit),
         "joints": _joints(audit),
+        "drives": drive_lines(audit),
         "tool": _tool(audit),
         "steps": _steps(audit),
         "findings": _findings(audit),

@@ -27,7 +27,6 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -35,10 +34,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm, load_arm
-from pathplan.task.model import Motion, Task
-from pathplan.task.places import Places, check_positions, joint_vector, read_places
-from pathplan.task.steps import read_caps, read_steps, step_to_start
-from pathplan.tomlfile import Problems, Table, nearest, read_toml
+from pathplan.task.joints import check_positions, joint_vector
+from pathplan.task.model import Motion, Step, Task
+from pathplan.task.places import Places, read_places
+from pathplan.task.sequence import Reader, carried
+from pathplan.task.steps import read_caps, step_to_start
+from pathplan.tomlfile import Problems, Table, read_toml
 from pathplan.units import toml_text
 
 __all__ = ["CYCLES", "load_task"]
@@ -49,15 +50,16 @@ CYCLES = (50e-6, 1.0)
 
 
 def load_task(file: str | Path, *, arm: Arm | None = None) -> Task:
-    """Load a task file and the arm file it names.
+    """Load a task file, the arm file it names, and the files that it includes.
 
     Args:
         file: a TOML file; its `arm` is a path relative to the file's own folder.
         arm: taken in place of the arm file (the key `arm` is then not read from disk).
 
     Returns:
-        The task in SI: offsets applied, via points, centres and axes in the base frame, the arm carrying the
-        task's tool and payload. `return` has become a last step. `sources` has the SHA-256 of what was read.
+        The task in SI: repeats unrolled, offsets applied, via points, centres and axes in the base frame, the arm
+        carrying the first step's tool and payload. `return` has become a last step. `sources` has the SHA-256 of
+        what was read.
 
     Raises:
         InputError: the file or a key is not what it must be; one line names file, key and what was expected.
@@ -68,31 +70,42 @@ def load_task(file: str | Path, *, arm: Arm | None = None) -> Task:
     problems = Problems()
     root = Table(data, file.name, problems=problems)
     title = root.text("title", file.stem)
-    arm = _equipped(root, _arm(root, file) if arm is None else arm)
+    arm = _arm(root, file) if arm is None else arm
+    root.has("arm")
+    arms: dict[tuple[str, str | None], Arm] = {}
+    arm = carried(root, arm, arms)
     cycle = _cycle(root)
     caps = read_caps(root)
     motion_back = _return(root)
-    places = read_places(root, arm, problems)
+    places, sources = read_places(root, arm, problems, file.parent)
     with problems.gather():
         start = _start(root, arm, places)
     root.has("step")
     root.finish()
     problems.check()  # a step that names a spoilt pose would only repeat the complaint
-    steps = read_steps(root, places, caps, problems, returns=motion_back is not None)
+    reader = Reader(arm, problems, sources=sources)
+    reader.read(root, file, places, caps, returns=motion_back is not None)
     problems.check()
+    steps = reader.steps
     if motion_back is not None:
-        steps += (step_to_start(motion_back, len(steps), root.file, start, places, caps),)
+        around = places.carrying(reader.arm)
+        steps.append(step_to_start(motion_back, len(steps), root.file, start, around, caps))
+    first = steps[0]
     return Task(
         title=title,
         file=file,
-        arm=arm,
+        arm=arm if _carries(arm, first) else arm.equipped(tool=first.tool, payload=first.payload),
         start=start,
-        steps=steps,
+        steps=tuple(steps),
         cycle=cycle,
         frames=places.frames,
         speed=caps.speed,
-        sources={**arm.sources, file.name: digest},
+        sources={**arm.sources, file.name: digest, **reader.sources},
     )
+
+
+def _carries(arm: Arm, step: Step) -> bool:
+    return (arm.tool.name, arm.payload.name if arm.payload is not None else None) == (step.tool, step.payload)
 
 
 def _arm(root: Table, file: Path) -> Arm:
@@ -103,24 +116,6 @@ def _arm(root: Table, file: Path) -> Arm:
     if not path.exists():
         raise root.error("arm", f"no such file {toml_text(name)}")
     return load_arm(path)
-
-
-def _equipped(root: Table, arm: Arm) -> Arm:
-    """The arm with the tool and payload that the task names."""
-    root.has("arm")
-    tool = _known(root, "tool", arm, arm.tools)
-    payload = _known(root, "payload", arm, arm.payloads)
-    if tool is None and payload is None:
-        return arm
-    # What the task does not name stays as the arm file has it; None would take it off.
-    return arm.equipped(tool=tool or arm.tool, payload=payload or arm.payload)
-
-
-def _known(root: Table, key: str, arm: Arm, things: Mapping[str, Any]) -> str | None:
-    name: str | None = root.text(key, None)
-    if name is not None and name not in things:
-        raise root.error(key, f"arm {arm.name} has no {key} {toml_text(name)}{nearest(name, things)}")
-    return name
 
 
 def _cycle(root: Table) -> float:
@@ -135,7 +130,7 @@ def _start(root: Table, arm: Arm, places: Places) -> Array:
     value: Any = root.take("start")
     if not isinstance(value, str):
         return joint_vector(root, "start", arm)
-    target = places.target(root, "start")
+    target = places.named(value, root.at("start"))
     if target.joints is None:
         raise root.error(
             "start", f"{toml_text(value)} is a tool pose, expected joint positions or their name"

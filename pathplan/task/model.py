@@ -10,11 +10,13 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.tomlfile import read_only, rotation_from_quaternion
+
 if TYPE_CHECKING:
     from pathplan.arm import Arm
 
 Array = NDArray[np.float64]
-Motion = Literal["joint", "line", "arc", "wait"]
+Motion = Literal["joint", "line", "arc", "curve", "taught", "wait"]
 
 
 @dataclass(frozen=True)
@@ -50,6 +52,50 @@ class Blend:
     text: str  # as written, for messages: "20 mm"
 
 
+@dataclass(frozen=True, eq=False)
+class Curve:
+    """A smooth tool path through points of a file, in the frame that the file means: piecewise polynomials, C4.
+
+    The parameter counts arm lengths travelled and rad turned, about evenly; pieces are local power series, highest
+    power first, like scipy's PPoly. The quaternion (w, x, y, z) is not of unit length: only its direction counts.
+    """
+
+    name: str
+    frame: str  # as written: the points' frame
+    breaks: Array  # (M + 1,) from 0
+    position: Array  # (6, M, 3) m
+    quaternion: Array  # (6, M, 4)
+    note: str = ""  # how far it passes the points, for people
+    deviation: float = 0.0  # m, largest distance of a point from the curve
+    turned: float = 0.0  # rad, largest angle between the orientation at a point and that of the curve
+
+    def pose(self, *, end: bool) -> Array:
+        """(4, 4) tool pose in the curve's frame at its start or end."""
+        piece = -1 if end else 0
+        local = self.breaks[-1] - self.breaks[-2] if end else 0.0
+        position, quaternion = (np.zeros(size) for size in (3, 4))
+        for row in range(len(self.position)):
+            position = position * local + self.position[row, piece]
+            quaternion = quaternion * local + self.quaternion[row, piece]
+        pose = np.eye(4)
+        pose[:3, :3] = rotation_from_quaternion(quaternion / np.linalg.norm(quaternion))
+        pose[:3, 3] = position
+        return read_only(pose)
+
+
+@dataclass(frozen=True, eq=False)
+class Taught:
+    """A joint path through taught points: smooth, and passing each within `tolerance`.
+
+    Distances in joint space count a rad as 1 and a metre as 1 over the arm's length.
+    """
+
+    name: str
+    points: Array  # (m, n) rad or m; neighbours differ
+    tolerance: float = 0.0  # rad, or arm lengths; 0: through every point
+    note: str = ""  # what was left out when it was read, for people
+
+
 @dataclass(frozen=True)
 class Step:
     """One line of a task."""
@@ -74,8 +120,11 @@ class Step:
     configuration: Mapping[str, str] = field(
         default_factory=dict
     )  # {"elbow": "up"}: asked at this step's target
-    tool: str = ""  # carried during this step
+    tool: str = ""  # carried during this step and on; "none" is the bare mechanical interface
     payload: str | None = None
+    curve: Curve | None = None  # motion == "curve"; the target is where it ends
+    frame_from_curve: Array | None = None  # (4, 4) in the target's frame
+    taught: Taught | None = None  # motion == "taught"; the target is its last point
 
 
 @dataclass(frozen=True)

@@ -1,10 +1,16 @@
-"""The places of a task: nested frames, named poses, joint vectors, and targets made from them."""
+"""The places of a task: nested frames, named poses, patterns and curves, and targets made from them.
+
+Frames and poses that hang on a pattern move with it: they mean something only where a step repeats the pattern, at the
+place it is at. `Places.at` gives the places as they are there. A file that is included has places of its own, moved as
+a whole (`Places.under`). Either way a target ends up in a frame that the task itself knows: `Places.settled`.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass, field
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
 from functools import cached_property
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -12,28 +18,48 @@ from numpy.typing import NDArray
 
 from pathplan.arm import Arm
 from pathplan.errors import InputError
-from pathplan.task.model import Frame, Target
+from pathplan.task.curves import read_curve, read_taught
+from pathplan.task.joints import check_positions, joint_vector
+from pathplan.task.model import Curve, Frame, Target, Taught
+from pathplan.task.patterns import Pattern, read_pattern
 from pathplan.tomlfile import Problems, Table, nearest, read_only
-from pathplan.units import format_quantity, joint_dimension, toml_text
+from pathplan.units import toml_text
 
 __all__ = ["Places", "check_positions", "joint_vector", "read_places"]
 
 Array = NDArray[np.float64]
-_POSE_KEYS = ("frame", "xyz", "rpy", "quat", "joints")
 ORIENTATION_OF_AN_ARC = (
     "only the position of a via point counts: "
     "the orientation of an arc runs on the shortest rotation from start to target"
 )
 
 
+IDENTITY = read_only(np.eye(4))
+"""The `frame_from_here` of a frame that the task itself knows, and of no other."""
+
+
+@dataclass(frozen=True)
+class Tie:
+    """Where a frame stands: in a frame that the task knows, and in the base frame with everything at rest."""
+
+    frame: str
+    frame_from_here: Array  # (4, 4)
+    base_from_here: Array  # (4, 4)
+
+
 @dataclass(frozen=True)
 class Places:
-    """Everything of a task that has a name and a place."""
+    """Everything of a task file that has a name and a place."""
 
     arm: Arm
-    frames: Mapping[str, Frame]
+    frames: Mapping[str, Frame]  # all but those that hang on a pattern
     poses: Mapping[str, Target]
-    base_from_frame: dict[str, Array] = field(default_factory=dict)  # (4, 4) of every frame, "base" included
+    patterns: Mapping[str, Pattern] = field(default_factory=dict)
+    curves: Mapping[str, Curve] = field(default_factory=dict)
+    taught: Mapping[str, Taught] = field(default_factory=dict)
+    moving: Mapping[str, tuple[str, Array]] = field(default_factory=dict)  # frame -> its pattern, pattern_from_frame
+    ties: Mapping[str, Tie] = field(default_factory=dict)  # of every frame that stands somewhere now
+    here: Mapping[str, Target] = field(default_factory=dict)  # what a step repeats, at the place it is at
 
     @cached_property
     def branch_words(self) -> dict[str, tuple[str, ...]]:
@@ -44,87 +70,237 @@ class Places:
                 words.setdefault(part, {})[word] = None
         return {part: tuple(options) for part, options in words.items()}
 
+    def at(self, name: str, target: Target) -> Places:
+        """The places while `name` means this target, with all that hangs on it."""
+        ties = dict(self.ties)
+        if target.joints is None:
+            assert target.frame_from_tool is not None
+            to_place = np.eye(4)
+            to_place[:3, 3] = target.frame_from_tool[:3, 3]
+            ties[name] = _tied(self.ties[target.frame], to_place)
+            for frame, (pattern, pattern_from_frame) in self.moving.items():
+                if pattern == name:
+                    ties[frame] = _tied(ties[name], pattern_from_frame)
+        return self._changed(ties=ties, here={**self.here, name: target})
+
+    def under(self, tie: Tie) -> Places:
+        """The places of a file that is included, its base frame moved to where `tie` says."""
+        ties = {name: _tied(tie, own.base_from_here) for name, own in self.ties.items()}
+        return self._changed(ties=ties)
+
+    def carrying(self, arm: Arm) -> Places:
+        """The places as another tool sees them."""
+        return self if arm is self.arm else self._changed(arm=arm)
+
+    def _changed(self, **changes: Any) -> Places:
+        other = replace(self, **changes)
+        if "branch_words" in self.__dict__:  # the tool has no part in them
+            other.__dict__["branch_words"] = self.branch_words
+        return other
+
+    def names(self) -> Iterable[str]:
+        """Everything that a step could go to."""
+        ends = [f"{name}.{end}" for name in (*self.curves, *self.taught) for end in ("start", "end")]
+        return (*self.here, *self.poses, *self.arm.positions, *self.patterns, *ends)
+
     def target(self, table: Table, key: str) -> Target:
-        """The target under a key: the name of a pose or arm position, or a table with a pose or joints."""
+        """The target under a key: the name of a pose or arm position, or a table with a pose or joints.
+
+        In the frame it is given in, which may hang on a pattern: `settled` before it goes into a step.
+        """
         value = table.take(key)
         if isinstance(value, str):
-            return self._named(table, key, value)
+            return self.named(value, table.at(key))
         if not isinstance(value, dict):
             raise table.error(key, f"expected the name of a pose or a table with one, got {toml_text(value)}")
         inline = table.table(key)
-        target = read_target(inline, self.arm, self.base_from_frame)
+        target = read_target(inline, self.arm)
+        if target.joints is None:
+            self.tie(target.frame, inline.at("frame"))
         inline.finish()
         return target
 
-    def point(self, table: Table, key: str) -> tuple[Array, str]:
-        """A point under a key: (3,) in the base frame, and the name of the frame it was given in."""
+    def point(self, table: Table, key: str) -> tuple[Array, Tie]:
+        """A point under a key: (3,) in the base frame, and where the frame stands that it was given in."""
         value = table.take(key)
         if isinstance(value, str):
-            target = self._named(table, key, value)
-            return read_only(self.base_from_tool(target)[:3, 3]), target.frame
+            target = self.named(value, table.at(key))
+            return read_only(self.base_from_tool(target)[:3, 3].copy()), self.tie(target.frame, table.at(key))
         if not isinstance(value, dict):
             raise table.error(key, f"expected the name of a pose or a table with xyz, got {toml_text(value)}")
         inline = table.table(key)
-        frame = frame_name(inline, "frame", self.base_from_frame)
+        tie = self.tie(inline.text("frame", "base"), inline.at("frame"))
         xyz = inline.position("xyz")
         if key == "via":
             for orientation in ("rpy", "quat"):
                 if inline.has(orientation):
                     raise inline.error(orientation, ORIENTATION_OF_AN_ARC)
         inline.finish()
-        base_from_frame = self.base_from_frame[frame]
-        return read_only(base_from_frame[:3, :3] @ xyz + base_from_frame[:3, 3]), frame
+        return read_only(tie.base_from_here[:3, :3] @ xyz + tie.base_from_here[:3, 3]), tie
+
+    def tie(self, name: str, where: str) -> Tie:
+        """Where a frame stands. Raises InputError for one that is not there, or moves with a pattern elsewhere."""
+        if name in self.ties:
+            return self.ties[name]
+        self._refuse_elsewhere(name, f"frame {toml_text(name)}", where)
+        raise InputError.at(where, f"no frame {toml_text(name)} in [frames]{nearest(name, self.ties)}")
+
+    def _refuse_elsewhere(self, frame: str, what: str, where: str) -> None:
+        """Raise InputError if a frame is, or moves with, a pattern that no step around repeats."""
+        pattern = frame if frame in self.patterns else self.moving.get(frame, ("",))[0]
+        if pattern:
+            moves = "is a pattern" if pattern == frame else f"moves with pattern {toml_text(pattern)}"
+            raise InputError.at(where, f"{what} {moves}, expected inside a step that repeats it")
+
+    def settled(self, target: Target) -> Target:
+        """The same target in a frame that the task knows."""
+        if target.frame_from_tool is None:
+            return target
+        tie = self.ties[target.frame]
+        if tie.frame_from_here is IDENTITY:
+            return target
+        return replace(target, frame=tie.frame, frame_from_tool=read_only(tie.frame_from_here @ target.frame_from_tool))
 
     def base_from_tool(self, target: Target) -> Array:
         """(4, 4) of a target at rest; of a joint vector through forward kinematics."""
         if target.joints is not None:
             return read_only(self.arm.forward(target.joints))
         assert target.frame_from_tool is not None
-        return read_only(self.base_from_frame[target.frame] @ target.frame_from_tool)
+        return read_only(self.ties[target.frame].base_from_here @ target.frame_from_tool)
 
-    def _named(self, table: Table, key: str, name: str) -> Target:
-        if name in self.poses:
-            return self.poses[name]
-        if name in self.arm.positions:
-            return Target(joints=self.arm.positions[name])
-        hint = nearest(name, [*self.poses, *self.arm.positions])
-        raise table.error(key, f"no pose {toml_text(name)} in [poses]{hint}")
+    def named(self, name: str, where: str) -> Target:
+        """The pose, place, arm position, or end of a curve of that name."""
+        target = self.here.get(name) or self.poses.get(name)
+        if target is None and name in self.arm.positions:
+            target = Target(joints=self.arm.positions[name])
+        if target is None:
+            target = self._end_of(name)
+        if target is None:
+            if name in self.patterns:
+                self._refuse_elsewhere(name, toml_text(name), where)
+            hint = nearest(name, self.names())
+            raise InputError.at(where, f"no pose {toml_text(name)} in [poses]{hint}")
+        if target.joints is None and target.frame not in self.ties:
+            what = toml_text(name) if target.frame in self.moving else f"{toml_text(name)} stands in a place that"
+            self._refuse_elsewhere(target.frame, what, where)
+        return target
+
+    def _end_of(self, name: str) -> Target | None:
+        path, _, end = name.rpartition(".")
+        if end not in ("start", "end"):
+            return None
+        if path in self.curves:
+            curve = self.curves[path]
+            return Target(frame=curve.frame, frame_from_tool=curve.pose(end=end == "end"))
+        if path in self.taught:
+            return Target(joints=read_only(self.taught[path].points[-1 if end == "end" else 0].copy()))
+        return None
 
 
-def read_places(root: Table, arm: Arm, problems: Problems) -> Places:
-    """Read [frames] and [poses]; problems inside are gathered, and the places they spoil are left out."""
+def _tied(tie: Tie, here_from_there: Array) -> Tie:
+    """Where something stands that stands in a frame of this tie."""
+    frame_from_there, base_from_there = (m @ here_from_there for m in (tie.frame_from_here, tie.base_from_here))
+    return Tie(tie.frame, read_only(frame_from_there), read_only(base_from_there))
+
+
+def read_places(root: Table, arm: Arm, problems: Problems, folder: Path) -> tuple[Places, dict[str, str]]:
+    """Read [frames], [poses], [patterns], [curves] and [taught], and the files they name from `folder`.
+
+    Problems inside are gathered, and the places they spoil are left out. The second part: SHA-256 by file name.
+    """
+    tables = root.named_tables("patterns")
+    frames = _read_frames(root, tables, problems)
+    problems.check()  # what is said of nested frames below holds only for frames that were read
+    resolved = resolve_frames(frames, root.file, tuple(tables))
+    moving = {name: place for name, place in resolved.items() if place[0] != "base"}
+    still = {name: frame for name, frame in frames.items() if name not in moving}
+    known = {**resolved, **{name: (name, np.eye(4)) for name in tables}}
+    ties = {
+        name: Tie(name, IDENTITY, base_from_frame)
+        for name, (root_name, base_from_frame) in resolved.items()
+        if root_name == "base"
+    }
+    poses = _read_poses(root, arm, known, problems)
+    taken = {**dict.fromkeys(poses, "pose"), **dict.fromkeys(arm.positions, "position of the arm")}
+    patterns: dict[str, Pattern] = {}
+    for name, table in tables.items():
+        with problems.gather():
+            _check_name(name, taken, table)
+            frame = known_frame(table, known)
+            if frame == name:
+                raise table.error("frame", "a pattern can't stand in itself")
+            patterns[name] = read_pattern(name, table, frame)
+            table.finish()
+    curves: dict[str, Curve] = {}
+    taught: dict[str, Taught] = {}
+    sources: dict[str, str] = {}
+    for key in ("curves", "taught"):
+        for name, table in root.named_tables(key).items():
+            with problems.gather():
+                _check_name(name, taken, table)
+                if key == "curves":
+                    curves[name], points = read_curve(name, table, folder, arm, known_frame(table, known))
+                else:
+                    taught[name], points = read_taught(name, table, folder, arm)
+                table.finish()
+                taken[name] = key
+                sources[table.data["points"]] = points.digest
+    return Places(arm, still, poses, patterns, curves, taught, moving, ties), sources
+
+
+def _read_frames(root: Table, patterns: Mapping[str, Any], problems: Problems) -> dict[str, Frame]:
     frames: dict[str, Frame] = {}
     for name, table in root.named_tables("frames").items():
         with problems.gather():
             if name == "base":
                 complaint = "base is the name of the arm's own frame, expected another name"
                 raise InputError.at(table.where, complaint)
+            if name in patterns:
+                raise InputError.at(table.where, "a pattern has that name, expected another name")
             parent = table.text("parent", "base")
             frames[name] = Frame(name, parent, table.pose(position=False))
             table.finish()
-    problems.check()  # what is said of nested frames below holds only for frames that were read
-    base_from_frame = resolve_frames(frames, root.file)
+    return frames
+
+
+def _read_poses(root: Table, arm: Arm, known: Mapping[str, Any], problems: Problems) -> dict[str, Target]:
     poses: dict[str, Target] = {}
     for name, table in root.named_tables("poses").items():
         with problems.gather():
             if name in arm.positions:
                 complaint = f"arm {arm.name} has a position of that name, expected another name"
                 raise InputError.at(table.where, complaint)
-            poses[name] = read_target(table, arm, base_from_frame)
+            target = read_target(table, arm)
+            if target.joints is None:
+                known_frame(table, known)
+            poses[name] = target
             table.finish()
-    return Places(arm, frames, poses, base_from_frame)
+    return poses
 
 
-def resolve_frames(frames: Mapping[str, Frame], file: str) -> dict[str, Array]:
-    """(4, 4) base_from_frame of every frame; refuses unknown parents and cycles, naming the cycle."""
-    resolved: dict[str, Array] = {"base": np.eye(4)}
+def _check_name(name: str, taken: Mapping[str, str], table: Table) -> None:
+    if name == "base":
+        raise InputError.at(table.where, "base is the name of the arm's own frame, expected another name")
+    if name in taken:
+        raise InputError.at(table.where, f"a {taken[name]} has that name, expected another name")
+
+
+def resolve_frames(
+    frames: Mapping[str, Frame], file: str, patterns: Iterable[str] = ()
+) -> dict[str, tuple[str, Array]]:
+    """What every frame hangs on, "base" or a pattern, and (4, 4) root_from_frame.
+
+    Refuses unknown parents and cycles, naming the cycle.
+    """
+    resolved: dict[str, tuple[str, Array]] = {"base": ("base", np.eye(4))}
+    roots = {name: (name, np.eye(4)) for name in patterns}
     for first in frames:
         chain: dict[str, None] = {}
         name = first
-        while name not in resolved:
+        while name not in resolved and name not in roots:
             if name not in frames:
                 child = next(reversed(chain))
-                hint = nearest(name, ["base", *frames])
+                hint = nearest(name, ["base", *frames, *roots])
                 complaint = f"no frame {toml_text(name)} in [frames]{hint}"
                 raise InputError.at(file, f"frames.{child}.parent", complaint)
             if name in chain:
@@ -135,53 +311,24 @@ def resolve_frames(frames: Mapping[str, Frame], file: str) -> dict[str, Array]:
             chain[name] = None
             name = frames[name].parent
         for name in reversed(chain):
-            resolved[name] = resolved[frames[name].parent] @ frames[name].parent_from_frame
+            root, root_from_parent = (resolved.get(frames[name].parent) or roots[frames[name].parent])
+            resolved[name] = root, root_from_parent @ frames[name].parent_from_frame
     return resolved
 
 
-def frame_name(table: Table, key: str, frames: Mapping[str, Any]) -> str:
-    """The name of a frame under a key; "base" where it is missing."""
-    name: str = table.text(key, "base")
+def known_frame(table: Table, frames: Mapping[str, Any]) -> str:
+    """The name of a frame under the key "frame"; "base" where it is missing."""
+    name: str = table.text("frame", "base")
     if name not in frames:
-        raise table.error(key, f"no frame {toml_text(name)} in [frames]{nearest(name, frames)}")
+        raise table.error("frame", f"no frame {toml_text(name)} in [frames]{nearest(name, frames)}")
     return name
 
 
-def read_target(table: Table, arm: Arm, frames: Mapping[str, Any]) -> Target:
-    """A pose (frame, xyz, rpy or quat) or a joint vector (joints) from a table."""
+def read_target(table: Table, arm: Arm) -> Target:
+    """A pose (frame, xyz, rpy or quat) or a joint vector (joints) from a table; its frame is not looked up."""
     if table.has("joints"):
         for key in ("frame", "xyz", "rpy", "quat"):
             if table.has(key):
                 raise table.error(key, "given together with joints, expected a pose or a joint vector")
         return Target(joints=joint_vector(table, "joints", arm))
-    return Target(frame=frame_name(table, "frame", frames), frame_from_tool=table.pose())
-
-
-def joint_vector(table: Table, key: str, arm: Arm) -> Array:
-    """(n,) joint vector under a key, deg and mm in the file, SI here; refused outside the position limits."""
-    dimensions = [joint_dimension(joint.kind, "position") for joint in arm.joints]
-    joints: Array = table.mixed_vector(key, dimensions, noun="joint positions")
-    check_positions(joints, arm, table.at(key))
-    return joints
-
-
-def check_positions(joints: Array, arm: Arm, where: str) -> None:
-    """Refuse a joint vector (n,) outside the position limits, naming row, value and limits."""
-    rows = arm.limits.matrix @ joints
-    low, high = arm.limits.position[:, 0], arm.limits.position[:, 1]
-    slack = 1e-12 * np.maximum(1.0, np.abs(rows))  # a limit itself, converted from deg, is inside
-    outside = (rows < low - slack) | (rows > high + slack)
-    for row in np.flatnonzero(outside):
-        dimension = _row_dimension(arm, int(row))
-        value, *limits = (format_quantity(float(v), dimension, 6) for v in (rows[row], low[row], high[row]))
-        name = arm.limits.names[row]
-        raise InputError.at(
-            where,
-            f"joint {name} at {value}, expected from {limits[0]} to {limits[1]}",
-            data={"joint": name, "value": float(rows[row]), "limit": (float(low[row]), float(high[row]))},
-        )
-
-
-def _row_dimension(arm: Arm, row: int) -> str:
-    kinds = {arm.joints[column].kind for column in np.flatnonzero(arm.limits.matrix[row])}
-    return joint_dimension(kinds.pop(), "position") if len(kinds) == 1 else "number"
+    return Target(frame=table.text("frame", "base"), frame_from_tool=table.pose())

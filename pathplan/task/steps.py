@@ -1,7 +1,8 @@
-"""Reading the steps of a task: what one [[step]] may say, and what it means."""
+"""Reading one step of a task: what a [[step]] that moves or waits may say, and what it means."""
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -9,20 +10,21 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import InputError
-from pathplan.task.model import Blend, Motion, Step, Target
+from pathplan.task.curves import read_offset
+from pathplan.task.model import Blend, Curve, Motion, Step, Target, Taught
 from pathplan.task.places import Places
-from pathplan.tomlfile import Problems, Table, listed, nearest, read_only
+from pathplan.tomlfile import Table, listed, nearest, read_only
 from pathplan.units import DIMENSIONS, format_quantity, toml_text
 
-__all__ = ["MAX_STEPS", "MAX_WAIT", "MOTIONS", "Caps", "read_caps", "read_steps", "step_to_start"]
+__all__ = ["MAX_WAIT", "MOTIONS", "STEP_KEYS", "Caps", "read_caps", "read_step", "step_to_start"]
 
 Array = NDArray[np.float64]
-MAX_STEPS = 100_000
 MAX_WAIT = 3600.0  # s
-MOTIONS: tuple[Motion, ...] = ("joint", "line", "arc")
+MOTIONS: tuple[Motion, ...] = ("joint", "line", "arc", "curve", "taught")
 MOVING_KEYS = ("motion", "to", "offset", "blend", "speed", "acceleration", "configuration")
 ARC_KEYS = ("via", "centre", "axis", "angle", "tool_along")
-STEP_KEYS = ("name", "mark", "wait", *MOVING_KEYS, *ARC_KEYS)
+CARRYING_KEYS = ("tool", "payload")
+STEP_KEYS = ("name", "mark", "wait", *CARRYING_KEYS, *MOVING_KEYS, *ARC_KEYS, "along")
 CONFIGURATION = {
     "shoulder": ("left", "right"),
     "elbow": ("up", "down", "left", "right"),
@@ -47,32 +49,15 @@ class Caps:
         return Caps(_lower(self.speed, other.speed), _lower(self.acceleration, other.acceleration))
 
 
-def read_steps(
-    root: Table, places: Places, caps: Caps, problems: Problems, *, returns: bool
-) -> tuple[Step, ...]:
-    """All steps of a task. `caps`: the task's own; `returns`: a way back to the start follows the last."""
-    tables = root.tables("step")
-    if not tables:
-        raise root.error("step", "expected at least one step [[step]], got none")
-    if len(tables) > MAX_STEPS:
-        raise root.error("step", f"expected at most {MAX_STEPS} steps, got {len(tables)}")
-    steps = []
-    for index, (table, following) in enumerate(zip(tables, [*tables[1:], None], strict=True)):
-        with problems.gather():
-            steps.append(read_step(table, index, places, caps))
-            table.finish()
-            _check_stop(table, following, returns=returns)
-    if not problems.found and all(step.motion == "wait" for step in steps):
-        raise root.error("step", "expected at least one step that moves, got only waits")
-    return tuple(steps)
+def read_step(table: Table, where: str, places: Places, caps: Caps) -> Step:
+    """One step, resolved: SI, points and directions in the base frame, offsets applied; its index is still 0.
 
-
-def read_step(table: Table, index: int, places: Places, caps: Caps) -> Step:
-    """One step, resolved: SI, points and directions in the base frame, offsets applied."""
+    `places` are those seen with what the step carries; `where` names it in messages about the finished task.
+    """
     step = Step(
-        index=index,
+        index=0,
         motion="wait",
-        where=table.where,
+        where=where,
         name=table.text("name", ""),
         mark=table.text("mark", None),
         tool=places.arm.tool.name,
@@ -83,7 +68,7 @@ def read_step(table: Table, index: int, places: Places, caps: Caps) -> Step:
     if not table.has("motion"):
         raise _neither_motion_nor_wait(table)
     motion: Motion = table.choice("motion", MOTIONS)
-    _only_for_arcs(table, motion)
+    _only_for(table, motion)
     own = read_caps(table).within(caps)
     step = replace(
         step,
@@ -93,12 +78,14 @@ def read_step(table: Table, index: int, places: Places, caps: Caps) -> Step:
         acceleration=own.acceleration,
         configuration=read_configuration(table, places),
     )
+    if motion in ("curve", "taught"):
+        return replace(step, **_along(table, motion, places))
     if motion == "arc" and table.has("centre"):
         return replace(step, **_centre_arc(table, places))
     for key in ARC_KEYS[2:]:
         if table.has(key):
             raise table.error(key, f"{key} goes with centre, which is missing")
-    target = _shifted(table, "offset", places.target(table, "to"))
+    target = places.settled(_shifted(table, "offset", places.target(table, "to")))
     if target.joints is not None and step.configuration:
         raise table.error("configuration", "the target is a joint vector, which leaves nothing to choose")
     if motion != "joint":
@@ -172,10 +159,31 @@ def read_configuration(table: Table, places: Places) -> dict[str, str]:
     return words
 
 
+def _along(table: Table, motion: Motion, places: Places) -> dict[str, Any]:
+    """The curve or taught path that a step follows, and where it ends."""
+    for key in ("to", "offset"):
+        if table.has(key):
+            complaint = f'motion = "{motion}" ends where its points do, expected along = NAME and no target'
+            raise table.error(key, complaint)
+    name = table.text("along")
+    there: Mapping[str, Curve | Taught] = places.curves if motion == "curve" else places.taught
+    if name not in there:
+        tables = "[curves]" if motion == "curve" else "[taught]"
+        raise table.error("along", f"no path {toml_text(name)} in {tables}{nearest(name, there)}")
+    path = there[name]
+    if isinstance(path, Taught):
+        if table.has("configuration"):
+            raise table.error("configuration", "the target is a joint vector, which leaves nothing to choose")
+        return {"taught": path, "target": Target(joints=read_only(path.points[-1].copy()))}
+    tie = places.tie(path.frame, table.at("along"))
+    end = Target(frame=path.frame, frame_from_tool=path.pose(end=True))
+    return {"curve": path, "frame_from_curve": tie.frame_from_here, "target": places.settled(end)}
+
+
 def _wait(table: Table) -> float:
     for key in table.data:
-        if key not in ("wait", "mark", "name"):
-            complaint = "this step is a wait, which takes only mark and name beside it"
+        if key not in ("wait", "mark", "name", *CARRYING_KEYS):
+            complaint = "this step is a wait, which takes only mark, name, tool and payload beside it"
             raise table.error(key, complaint)
     seconds: float = table.quantity("wait", "time", positive=True)
     if seconds > MAX_WAIT:
@@ -192,10 +200,13 @@ def _neither_motion_nor_wait(table: Table) -> InputError:
     return InputError.at(table.where, f"expected a motion ({listed(MOTIONS)}) or a wait, got neither")
 
 
-def _only_for_arcs(table: Table, motion: Motion) -> None:
+def _only_for(table: Table, motion: Motion) -> None:
+    """Refuse keys of other motions."""
     for key in ARC_KEYS:
         if table.has(key) and motion != "arc":
             raise table.error(key, f'only an arc takes {key}, this motion is "{motion}"')
+    if table.has("along") and motion not in ("curve", "taught"):
+        raise table.error("along", f'only a curve or a taught path takes along, this motion is "{motion}"')
     if motion == "arc" and table.has("via") == table.has("centre"):
         got = "got both" if table.has("via") else "got neither"
         raise table.error("motion", f"an arc takes via and to, or centre, axis and angle, {got}")
@@ -205,12 +216,12 @@ def _centre_arc(table: Table, places: Places) -> dict[str, Any]:
     for key in ("to", "offset"):
         if table.has(key):
             raise table.error(key, "an arc by its centre ends where its angle says, expected no target")
-    centre, frame = places.point(table, "centre")
+    centre, tie = places.point(table, "centre")
     axis = table.vector("axis", 3, "number")
     largest = float(np.max(np.abs(axis)))
     if largest == 0.0:
         raise table.error("axis", "expected a direction, got [0, 0, 0]")
-    axis = places.base_from_frame[frame][:3, :3] @ (axis / largest)  # scaled first: its square can't overflow
+    axis = tie.base_from_here[:3, :3] @ (axis / largest)  # scaled first: its square can't overflow
     angle = table.quantity("angle", "angle")
     if not _LEAST["angle"] <= abs(angle) <= _MOST_ANGLE:
         got = toml_text(table.data["angle"])
@@ -221,31 +232,13 @@ def _centre_arc(table: Table, places: Places) -> dict[str, Any]:
 
 def _shifted(table: Table, key: str, target: Target) -> Target:
     """The target moved along the axes of its frame, then along and about those of the tool."""
-    offset = table.table(key, None)
+    offset = read_offset(table, key)
     if offset is None:
         return target
     if target.frame_from_tool is None:
         raise table.error(key, "the target is a joint vector, expected a pose to offset")
-    in_frame, in_tool = np.eye(4), np.eye(4)
-    in_frame[:3, 3] = offset.position("frame", np.zeros(3))
-    in_tool[:3, 3] = offset.position("tool", np.zeros(3))
-    rotation = offset.rotation()
-    if rotation is not None:
-        in_tool[:3, :3] = rotation
-    if not offset.data:
-        raise table.error(key, 'expected "frame", "tool" or "rpy", got an empty table')
-    offset.finish()
+    in_frame, in_tool = offset
     return replace(target, frame_from_tool=read_only(in_frame @ target.frame_from_tool @ in_tool))
-
-
-def _check_stop(table: Table, following: Table | None, *, returns: bool) -> None:
-    """Refuse a blend where the arm must stop."""
-    if "blend" not in table.data:
-        return
-    if following is not None and "wait" in following.data:
-        raise table.error("blend", f"{following.path} is a wait, so this step ends at a stop point")
-    if following is None and not returns:
-        raise table.error("blend", "the last step ends at a stop point")
 
 
 def _blend_kind(value: Any) -> str | None:

@@ -28,7 +28,7 @@ _NEVER = 1e-12  # q' below this (relative to its limit) does not limit the speed
 class CoarseTiming:
     """s(t) of one stretch with constant acceleration of s between nodes."""
 
-    s: Array  # (N+1,) nodes, breaks of the path among them
+    s: Array  # (N+1,) nodes, borders of the motion among them
     piece: NDArray[np.intp]  # (N,) piece of the path that each cell lies in
     time: Array  # (N+1,)
     speed: Array  # (N+1,) ds/dt at the nodes, zero at both ends
@@ -65,11 +65,16 @@ def coarse_timing(motions: Sequence[Motion], *, accuracy: float = 3e-3) -> list[
     return problem.timings(b, meshes)
 
 
+def speed_walls(rows: Array, velocity: Array) -> Array:
+    """(N, R) largest (ds/dt)^2 by each velocity limit (R, 2), from q' (N, R)."""
+    limit = np.where(rows > 0, velocity[:, 1], -velocity[:, 0])
+    return 1.0 / np.maximum(np.abs(rows) / limit, _NEVER) ** 2
+
+
 def speed_wall(rows: Array, velocity: Array) -> Array:
     """(N,) largest (ds/dt)^2 by the velocity limits (R, 2), from q' (N, R)."""
-    limit = np.where(rows > 0, velocity[:, 1], -velocity[:, 0])
-    ratio = np.abs(rows) / limit
-    return 1.0 / np.maximum(ratio.max(axis=1), _NEVER) ** 2
+    wall: Array = speed_walls(rows, velocity).min(axis=1)
+    return wall
 
 
 def tool_wall(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
@@ -84,9 +89,10 @@ def tool_wall(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
 
 
 def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
-    breaks = motion.path.breaks
-    width = np.diff(breaks)
-    cells = np.maximum(_CELLS_PER_PIECE, np.ceil(_CELLS * width / breaks[-1])).astype(int)
+    borders = motion.borders()
+    width = np.diff(borders)
+    piece = motion.path.locate(0.5 * (borders[:-1] + borders[1:]))[0]
+    cells = np.maximum(_CELLS_PER_PIECE, np.ceil(_CELLS * width / borders[-1])).astype(int)
     nodes, pieces = [], []
     for i, count in enumerate(cells):
         share = np.arange(count) / count
@@ -97,9 +103,9 @@ def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
             share = share**2
         elif last:
             share = 1.0 - (1.0 - share) ** 2
-        nodes.append(breaks[i] + width[i] * share)
-        pieces.append(np.full(count, i))
-    return np.concatenate([*nodes, breaks[-1:]]), np.concatenate(pieces)
+        nodes.append(borders[i] + width[i] * share)
+        pieces.append(np.full(count, piece[i]))
+    return np.concatenate([*nodes, borders[-1:]]), np.concatenate(pieces)
 
 
 def _end_rows(

@@ -32,7 +32,7 @@ def hermite(u: Array) -> Array:
 
 @dataclass(frozen=True)
 class Mesh:
-    """Cells of one stretch on its clock; breaks of the path are cell borders, so each cell is smooth inside."""
+    """Cells of one stretch on its clock; the motion's borders are cell borders, so each cell is smooth inside."""
 
     motion: Motion
     clock: Clock
@@ -89,8 +89,8 @@ def _shrunk(torque: Array, less: Array) -> Array:
 
 
 def make_mesh(motion: Motion, clock: Clock, cells: int, cells_per_piece: int) -> Mesh:
-    """About `cells` equal cells, at least `cells_per_piece` in every piece of the path."""
-    inner = motion.path.breaks[1:-1]
+    """About `cells` equal cells, at least `cells_per_piece` between two borders of the motion."""
+    inner = motion.borders()[1:-1]
     borders = np.concatenate([[0.0], clock.inverse(inner) if len(inner) else [], [clock.duration]])
     width = np.diff(borders)
     count = np.maximum(cells_per_piece, np.round(cells * width / clock.duration)).astype(int)
@@ -106,14 +106,37 @@ def refined(mesh: Mesh, split: NDArray[np.bool_]) -> Mesh:
     return Mesh(mesh.motion, mesh.clock, np.sort(np.concatenate([mesh.tau, middle])), mesh.unit)
 
 
+@dataclass(frozen=True)
+class _Points:
+    """The points u of every cell of a mesh, flat, point by point."""
+
+    u: Array
+    shape: tuple[int, int]  # (K, cells)
+    piece: NDArray[np.intp]
+    s: Array
+    s1: Array
+    s2: Array
+    s3: Array
+
+
+def _points(mesh: Mesh, u: Array) -> _Points:
+    tau = (mesh.tau[:-1] + mesh.width * u[:, None]).ravel()
+    centre = mesh.clock.derivatives(0.5 * (mesh.tau[:-1] + mesh.tau[1:]), 0)[0]
+    piece = np.tile(mesh.motion.path.locate(centre)[0], len(u))
+    return _Points(u, (len(u), len(mesh.tau) - 1), piece, *mesh.clock.derivatives(tau))
+
+
+def torque_rows_at(mesh: Mesh, u: Array) -> Array | None:
+    """The torque rows (4, Q, K, cells) of a mesh at the points u (K,) of every cell; None without torque limits."""
+    return _torque_rows(mesh, _points(mesh, u))
+
+
 def rows_at(mesh: Mesh, u: Array) -> Rows:
     """The limited rows of a mesh at the points u (K,) in [0, 1] of every cell, one-sided at cell ends."""
     motion, h = mesh.motion, mesh.width
-    shape = (len(u), len(h))
-    tau = (mesh.tau[:-1] + h * u[:, None]).ravel()
-    centre = mesh.clock.derivatives(0.5 * (mesh.tau[:-1] + mesh.tau[1:]), 0)[0]
-    piece = np.tile(motion.path.locate(centre)[0], len(u))
-    s, s1, s2, s3 = mesh.clock.derivatives(tau)
+    points = _points(mesh, u)
+    shape, piece, s = points.shape, points.piece, points.s
+    s1, s2, s3 = points.s1, points.s2, points.s3
     q1, q2, q3 = motion.rows(piece, s)
     wall = np.minimum(speed_wall(q1, motion.velocity), tool_wall(motion, piece, s))
     q1, q2, q3 = q1.T, q2.T, q3.T
@@ -132,36 +155,32 @@ def rows_at(mesh: Mesh, u: Array) -> Rows:
         acceleration_range=(motion.acceleration / half[:, None]).T[:, :, None, None],
         jerk=np.stack([p3 * j, p2 * (1.5 * j / h), p1 * (0.5 * j / h**2)]),
         jerk_range=(motion.jerk / half_jerk[:, None]).T[:, :, None, None],
-        tool=_tool_rows(motion, piece, s, s1, s2, h, len(u)),
-        torque=_torque_rows(motion, piece, s, s1, s2, h, len(u)),
+        tool=_tool_rows(mesh, points),
+        torque=_torque_rows(mesh, points),
     )
 
 
-def _torque_rows(
-    motion: Motion, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array, h: Array, points: int
-) -> Array | None:
-    rows = motion.torque_rows(piece, s, s1, s2)
+def _torque_rows(mesh: Mesh, points: _Points) -> Array | None:
+    rows = mesh.motion.torque_rows(points.piece, points.s, points.s1, points.s2)
     if rows is None or not len(rows.joint):
         return None
-    shape = (-1, points, len(h))
+    shape = (-1, *points.shape)
     on = [value.reshape(shape) for value in (rows.on_b, rows.on_slope, rows.on_root, rows.constant)]
-    return np.stack([on[0], on[1] / h, on[2], on[3]])
+    return np.stack([on[0], on[1] / mesh.width, on[2], on[3]])
 
 
-def _tool_rows(
-    motion: Motion, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array, h: Array, points: int
-) -> Array | None:
-    cap = motion.tool_acceleration_cap(s)
+def _tool_rows(mesh: Mesh, points: _Points) -> Array | None:
+    cap = mesh.motion.tool_acceleration_cap(points.s)
     capped = np.isfinite(cap)
     if not capped.any():
         return None
-    rows = np.zeros((2, 3, len(s)))
-    x1, x2 = motion.tool_derivatives(piece[capped], s[capped])
-    c1, c2, top = s1[capped], s2[capped], cap[capped]
+    rows = np.zeros((2, 3, len(cap)))
+    x1, x2 = mesh.motion.tool_derivatives(points.piece[capped], points.s[capped])
+    c1, c2, top = points.s1[capped], points.s2[capped], cap[capped]
     rows[0][:, capped] = (x2.T * c1**2 + x1.T * c2) / top
     rows[1][:, capped] = x1.T * c1 / (2 * top)
-    by_cell = rows.reshape(2, 3, points, len(h))
-    by_cell[1] /= h
+    by_cell = rows.reshape(2, 3, *points.shape)
+    by_cell[1] /= mesh.width
     return by_cell
 
 

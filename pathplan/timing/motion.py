@@ -15,6 +15,7 @@ from pathplan.timing.torque import TorqueLimits, TorqueRows, Unheld, torque_rows
 Array = NDArray[np.float64]
 _HELD_POINTS = 33  # a piece of the path is looked at in this many places, its ends included
 _LEAST_ROOM = 2e-3  # of a torque limit must be left to accelerate with
+_APART = 1e-6  # of the path: a cap that ends this near to a break of the path ends on it
 ToolDerivatives = Callable[[Array, Array, Array], tuple[Array, Array]]
 
 
@@ -44,6 +45,14 @@ class Motion:
     caps: tuple[Cap, ...] = ()
     tool: ToolDerivatives | None = None  # (q, q', q'') each (N, n) -> tool position x', x'' each (N, 3)
     torque: TorqueLimits | None = None
+
+    def borders(self) -> Array:
+        """Where the path or a cap changes, from 0 to the path's length: cells of a timing end there."""
+        breaks = self.path.breaks
+        ends = np.array([end for cap in self.caps for end in (cap.begin, cap.end)])
+        between = ends[(ends > breaks[0]) & (ends < breaks[-1])]
+        apart = np.abs(between[:, None] - breaks).min(axis=1, initial=np.inf) > _APART * breaks[-1]
+        return np.union1d(breaks, between[apart])
 
     def rows(self, piece: NDArray[np.intp], s: Array, highest: int = 3) -> list[Array]:
         """Derivatives 1..highest of the limited rows by s, each (N, R); `piece` says which side of a break."""

@@ -28,11 +28,11 @@ _LOSS = 2.5e-3  # a stretch is refined while more than this share of its time le
 _ROUNDS = 8
 _SPLIT_SHARE = 0.85  # the cells that together hold this share of the loss are halved
 _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
-_COARSE_GAP, _FINAL_GAP = 5e-3, 2e-4  # duality gap aimed at, relative to the duration
+_COARSE_GAP, _FINAL_GAP = 5e-4, 2e-4
 _TIGHTENINGS = 5
 _TIGHT = 2e-4  # overstepping left to slowing the whole stretch
 _CHECK_POINTS = 33  # per cell, ends included; peaks between them by parabolas
-_TORQUE_MARGIN = 5e-5  # and torque with this, for peaks between the points it is checked at
+TORQUE_MARGIN = 5e-5  # and torque with this, for peaks between the points it is checked at
 _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of tables
 _FEWEST_CELLS = 12
 _CELLS_PER_WINDOW = 3.0
@@ -169,7 +169,7 @@ def _slowed_for_torque(problem: FineProblem, x: Array, checked: Rows, basis: Arr
     b = problem.evaluate(x, basis)
     linear = checked.torque[0] * b[0] + checked.torque[1] * b[1]
     root, constant = checked.torque[2] * np.sqrt(b[0]), checked.torque[3]
-    room = (1.0 - _TORQUE_MARGIN) - constant
+    room = (1.0 - TORQUE_MARGIN) - constant
     over = linear + root > room
     if not over.any():
         return x

@@ -33,7 +33,8 @@ class StretchTiming:
     slope: Array  # (N+1,) db/dtau at the nodes
 
     @cached_property
-    def _corners(self) -> Array:
+    def corners(self) -> Array:
+        """(4, N) value and slope of b over the cell, at the left and right end of every cell."""
         h = np.diff(self.tau)
         return np.stack([self.b[:-1], self.slope[:-1] * h, self.b[1:], self.slope[1:] * h])
 
@@ -57,7 +58,7 @@ class StretchTiming:
         """Time from the start of a cell to the place u (0..1) in it."""
         x, w = np.polynomial.legendre.leggauss(_POINTS)
         places = u[:, None] * (0.5 * (x + 1.0))
-        corner = self._corners[:, cell]
+        corner = self.corners[:, cell]
         b = sum(corner[i][:, None] * value for i, value in enumerate(_values(places)))
         return (0.5 * w / np.sqrt(b)).sum(axis=1) * u * np.diff(self.tau)[cell]
 
@@ -68,7 +69,7 @@ class StretchTiming:
         local = np.clip(t, 0.0, times[-1]) - times[cell]
         width = np.diff(self.tau)[cell]
         u = np.clip(local / np.diff(times)[cell], 0.0, 1.0)
-        corner = self._corners[:, cell]
+        corner = self.corners[:, cell]
         open_ = np.arange(len(u))  # settled rows are left alone: a row does not depend on those it is computed with
         for _ in range(_NEWTON):
             b = sum(corner[i, open_] * value for i, value in enumerate(_values(u[open_])))
@@ -106,7 +107,7 @@ class StretchTiming:
         """The same at places u in given cells: one-sided at nodes."""
         h = np.diff(self.tau)[cell]
         basis = hermite(u)  # (3, N, 4)
-        b, b1, b2 = np.einsum("dni,in->dn", basis, self._corners[:, cell])
+        b, b1, b2 = np.einsum("dni,in->dn", basis, self.corners[:, cell])
         speed = np.sqrt(b)
         rate = (speed, 0.5 * b1 / h, 0.5 * speed * b2 / h**2)  # tau by t
         s, s1, s2, s3 = self.clock.derivatives(self.tau[cell] + u * h)

@@ -94,11 +94,7 @@ def test_a_table_of_time_and_position_stays_one(bare_table, tmp_path):
 
 
 @settings(deadline=None, max_examples=200)
-@given(
-    st.lists(
-        st.tuples(st.floats(-1e6, 1e6), st.floats(-1e300, 1e300), st.floats(-7, 7)), min_size=1, max_size=20
-    )
-)
+@given(st.lists(st.tuples(st.floats(-1e6, 1e6), st.floats(-1e300, 1e300), st.floats(-7, 7)), min_size=1, max_size=20))
 def test_any_float_comes_back_within_one_unit_in_the_last_place(tmp_path_factory, values):
     q = np.array(values)
     q[np.abs(q) < 1e-290] = 0.0  # subnormal numbers have fewer places
@@ -126,9 +122,7 @@ def test_differences_of_the_written_positions_keep_the_rounding_bound(tmp_path, 
     ticks = np.arange(int(np.ceil(duration / cycle)) + 1)
     tau = np.minimum(tick_times(ticks, cycle) / duration, 1.0)
     q = -1.2 + distance * tau**3 * (10 - 15 * tau + 6 * tau**2)
-    table = JointTable(
-        time=tick_times(ticks, cycle), position=q[:, None], joint_kinds=("revolute",), cycle=cycle
-    )
+    table = JointTable(time=tick_times(ticks, cycle), position=q[:, None], joint_kinds=("revolute",), cycle=cycle)
     lines = written(table, tmp_path).read_text(encoding="utf-8").split("\n")
     rows = csv.DictReader(line for line in lines if not line.startswith("#"))
     p = np.array([float(row["joint1_deg"]) for row in rows])
@@ -141,9 +135,7 @@ def test_differences_of_the_written_positions_keep_the_rounding_bound(tmp_path, 
 
 def test_times_print_cleanly_even_when_made_by_multiplying(tmp_path):
     ticks = np.arange(1000)
-    table = JointTable(
-        time=ticks * 0.1, position=np.zeros((1000, 1)), joint_kinds=("prismatic",), cycle=0.1
-    )
+    table = JointTable(time=ticks * 0.1, position=np.zeros((1000, 1)), joint_kinds=("prismatic",), cycle=0.1)
     assert not np.array_equal(table.time, tick_times(ticks, 0.1))
     text = written(table, tmp_path).read_text()
     assert "\n0.3,0.0,1\n" in text and "00000000" not in text

@@ -69,9 +69,7 @@ def test_the_same_table_gives_the_same_bytes_in_chunks_too(full_table, tmp_path,
 @given(st.lists(st.lists(st.floats(-1.7e308, 1.7e308), min_size=2, max_size=2), min_size=1))
 def test_any_finite_float_comes_back(bare_table, tmp_path_factory, rows):
     q = np.array(rows)
-    table = replace(
-        bare_table, time=np.arange(float(len(q))), position=q, step=None, joint_names=(), joint_kinds=()
-    )
+    table = replace(bare_table, time=np.arange(float(len(q))), position=q, step=None, joint_names=(), joint_kinds=())
     file = tmp_path_factory.mktemp("t") / "t.npz"
     write_table(table, file)
     again = read_table(file).position

@@ -2,20 +2,20 @@
 
 import errno
 import os
-import signal
 import subprocess
 import sys
-import time
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 import pathplan.export.save
 from pathplan.errors import InputError, PathplanError
 from pathplan.export import read_table, write_table
-from pathplan.export.save import saving
+from pathplan.export.save import batched, saving
+from tests.kills import environment, kill_writer
 
-SUFFIXES = (".csv", ".npz")
+SUFFIXES = (".csv", ".jsonl", ".npz", ".parquet")
 
 
 class FullDisk:
@@ -182,34 +182,112 @@ def test_a_new_file_has_the_permissions_of_any_new_file(full_table, tmp_path):
     assert (tmp_path / "t.csv").stat().st_mode == (tmp_path / "plain").stat().st_mode
 
 
-WRITER = """
-import sys
+@pytest.mark.parametrize("suffix", SUFFIXES)
+def test_a_kill_at_any_instant_leaves_a_whole_file(tmp_path, suffix):
+    """Two kills a kind; many more: python -m tests.kills 200."""
+    rng = np.random.default_rng()
+    for _ in range(2):
+        kill_writer(tmp_path / f"t{suffix}", rng)
+
+
+def left_part(file, content=b"half"):
+    """A part as a killed writer leaves it."""
+    part = file.with_name(f".{file.name}.0123456789ab.part")
+    part.write_bytes(content)
+    return part
+
+
+def test_leftovers_of_a_killed_writer_go_with_the_next_write(full_table, tmp_path):
+    file = tmp_path / "t.csv"
+    left_part(file)
+    others = [left_part(tmp_path / "u.csv"), tmp_path / ".t.csv.mine.part", tmp_path / "t.csv.0123456789ab.part"]
+    for other in others[1:]:
+        other.write_bytes(b"mine")
+    write_table(full_table, file)
+    assert sorted(tmp_path.iterdir()) == sorted([file, *others])
+
+
+def test_the_part_of_a_living_writer_stays(full_table, tmp_path):
+    file = tmp_path / "t.csv"
+    with saving(file) as stream:
+        stream.write(b"mine")
+        write_table(full_table, file)
+        assert len(read_table(file)) == 50
+    assert file.read_bytes() == b"mine" and list(tmp_path.iterdir()) == [file]
+
+
+def test_a_leftover_that_can_not_be_removed_is_left(full_table, tmp_path, monkeypatch):
+    file = tmp_path / "t.csv"
+    part = left_part(file)
+    real = os.unlink
+    monkeypatch.setattr(os, "unlink", lambda path, **more: real(path) if path != str(part) else fails())
+
+    def fails():
+        raise PermissionError(errno.EPERM, "Operation not permitted")
+
+    write_table(full_table, file)
+    assert sorted(tmp_path.iterdir()) == sorted([file, part])
+
+
+def test_files_of_a_batch_take_their_places_together(full_table, tmp_path):
+    one, two = tmp_path / "1.csv", tmp_path / "2.npz"
+    one.write_bytes(b"old")
+    with batched() as batch:
+        write_table(full_table, one, overwrite=True, batch=batch)
+        assert one.read_bytes() == b"old"
+        write_table(full_table, two, batch=batch)
+        assert not two.exists()
+    assert len(read_table(one)) == len(read_table(two)) == 50
+    assert sorted(tmp_path.iterdir()) == [one, two]
+
+
+@pytest.mark.parametrize("what", [KeyboardInterrupt, InputError])
+def test_a_batch_that_ends_early_changes_nothing(full_table, tmp_path, what):
+    one = tmp_path / "1.csv"
+    one.write_bytes(b"old")
+    with pytest.raises(what, match="stopped here"), batched() as batch:
+        write_table(full_table, one, overwrite=True, batch=batch)
+        raise what("stopped here")
+    assert one.read_bytes() == b"old" and list(tmp_path.iterdir()) == [one]
+
+
+LIMITED = """
+import resource, sys
 import numpy as np
+from pathplan.cli import main
 from pathplan.export import write_table
-from pathplan.table import JointTable, tick_times
-rows = 20000
-table = JointTable(time=tick_times(np.arange(rows), .001), position=np.full((rows, 6), float(sys.argv[2])),
-                   joint_kinds=("revolute",) * 6, cycle=.001, meta={"task": "t", "task_file": "t.toml"})
-print("ready", flush=True)
-while True:
-    write_table(table, sys.argv[1])
+from pathplan.table import JointTable
+resource.setrlimit(resource.RLIMIT_FSIZE, (100_000, 100_000))
+q = np.random.default_rng(1).normal(size=(20000, 6))
+table = JointTable(np.arange(20000.) / 1000, q, joint_kinds=("revolute",) * 6, cycle=.001)
+try:
+    write_table(table, sys.argv[1], overwrite=True)
+except Exception as error:
+    print(type(error).__name__, error)
 """
 
 
 @pytest.mark.parametrize("suffix", SUFFIXES)
-def test_a_kill_at_any_instant_leaves_a_whole_file(tmp_path, suffix):
+def test_a_disk_that_takes_no_more_leaves_the_old_file(tmp_path, suffix):
+    """The system itself refuses further bytes: a limit on the size of files stands for a full disk."""
     file = tmp_path / f"t{suffix}"
-    for attempt in range(3):
-        with subprocess.Popen(
-            [sys.executable, "-c", WRITER, str(file), str(attempt)],
-            stdout=subprocess.PIPE,
-            env={**os.environ, "PYTHONPATH": str(Path(pathplan.export.save.__file__).parents[2])},
-        ) as writer:
-            assert writer.stdout.readline() == b"ready\n"
-            time.sleep(0.05 + 0.13 * attempt)
-            writer.send_signal(signal.SIGKILL)
-        if file.exists():
-            assert len(read_table(file)) == 20000
+    file.write_bytes(b"old")
+    command = [sys.executable, "-c", LIMITED, str(file)]
+    done = subprocess.run(command, capture_output=True, text=True, env=environment(), timeout=60)
+    refusal = f"PathplanError {file}: larger than files may be here: nothing was changed\n"
+    assert (done.stdout, done.stderr) == (refusal, "")
+    assert file.read_bytes() == b"old" and list(tmp_path.iterdir()) == [file]
+
+
+def test_a_folder_that_is_read_only_indeed(full_table, tmp_path):
+    """For whoever may write anywhere, a file system mounted read-only says the same."""
+    folder = Path("/sys") if os.geteuid() == 0 else tmp_path / "locked"
+    if folder.parent == tmp_path:
+        folder.mkdir(mode=0o500)
+    file = folder / "t.csv"
+    with pytest.raises(InputError) as error:
+        write_table(full_table, file)
+    assert str(error.value) == f"{file}: can't be written: the folder {folder} is read-only for you"
 
 
 def test_saving_is_all_or_nothing(tmp_path):

@@ -8,7 +8,7 @@ import pytest
 from pathplan.errors import InputError
 from pathplan.export import check_destination, kinds, may_replace, read_table, write_table
 
-SUFFIXES = (".csv", ".npz")
+SUFFIXES = (".csv", ".jsonl", ".npz", ".parquet")
 REFUSAL = "exists and is no earlier output of this task: choose another name or ask to overwrite"
 
 

@@ -7,7 +7,7 @@ import pytest
 
 from pathplan.errors import InputError
 from pathplan.task import load_task
-from pathplan.task.steps import MAX_STEPS
+from pathplan.task.sequence import MAX_STEPS
 
 STEP4 = '[[step]]\nmotion = "line"\nto = "belt"\noffset = { tool = [0, 0, -80] }\nblend = "20 mm"\n'
 ARC = 'via = { frame = "cell", xyz = [0, 0, 200] }'
@@ -145,14 +145,34 @@ BAD = {
     "no motion": (
         LAST,
         'to = "parked"',
-        'step[7]: expected a motion ("joint", "line" or "arc") or a wait, got neither',
+        'step[7]: expected a motion ("joint", "line", "arc", "curve" or "taught") or a wait, got neither',
     ),
     "misspelt motion": (LAST, 'motoin = "joint"', 'step[7].motoin: unknown key, did you mean "motion"?'),
-    "curve": (LAST, 'motion = "curve"', 'step[7].motion: expected "joint", "line" or "arc", got "curve"'),
+    "curve": (LAST, 'motion = "curve"', 'step[7]: missing key "along"'),
+    "curve with a target": (
+        LAST,
+        'motion = "curve"\nto = "parked"',
+        'step[7].to: motion = "curve" ends where its points do, expected along = NAME and no target',
+    ),
+    "no such curve": (
+        LAST,
+        'motion = "curve"\nalong = "rim"',
+        'step[7].along: no path "rim" in [curves]',
+    ),
+    "no such taught path": (
+        LAST,
+        'motion = "taught"\nalong = "rim"',
+        'step[7].along: no path "rim" in [taught]',
+    ),
+    "line along": (
+        LAST,
+        LAST + '\nalong = "rim"',
+        'step[7].along: only a curve or a taught path takes along, this motion is "joint"',
+    ),
     "motion": (
         LAST,
         'motion = "lines"',
-        'step[7].motion: expected "joint", "line" or "arc", got "lines", did you mean "line"?',
+        'step[7].motion: expected "joint", "line", "arc", "curve" or "taught", got "lines", did you mean "line"?',
     ),
     "no target": (LAST, 'motion = "joint"', 'step[7]: missing key "to"'),
     "unknown pose": (
@@ -228,7 +248,7 @@ BAD = {
     "wait and motion": (
         'wait = "0.3 s"',
         'wait = "0.3 s"\nmotion = "line"',
-        "step[3].motion: this step is a wait, which takes only mark and name beside it",
+        "step[3].motion: this step is a wait, which takes only mark, name, tool and payload beside it",
     ),
     "wait zero": (
         'wait = "0.3 s"',

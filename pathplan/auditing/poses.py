@@ -1,0 +1,195 @@
+"""Whether a table passes the targets of a task: the nearest row to each, in the order of the steps.
+
+Of all ways to give every target a row, later steps no earlier rows, the one counts whose distances are least in sum; a
+distance far beyond some millimetres counts as no more than missed, so that one target that is missed does not draw its
+neighbours away from theirs.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.arm import Arm
+from pathplan.arm.inverse import pose_errors
+from pathplan.auditing.exceedances import clock
+from pathplan.auditing.model import Finding
+from pathplan.auditing.shares import Array
+from pathplan.errors import InputError
+from pathplan.table import JointTable
+from pathplan.units import format_quantity, joint_dimension
+
+if TYPE_CHECKING:
+    from pathplan.task import Step, Task
+
+__all__ = ["NEAR", "Pass", "pass_findings", "passes"]
+
+NEAR = (1e-4, math.radians(0.1))  # m, rad: as near as a target counts as passed, if nothing else is asked
+MISSED = 0.005  # m, or rad times the arm's length: from about here on a target counts as missed
+MOST_ROWS, MOST_WORK = 2_000_000, 2_000_000_000  # rows, and rows times targets
+MOST_CANDIDATES = 4_000_000  # rows looked at for all targets together
+Integers = NDArray[np.intp]
+
+
+@dataclass(frozen=True)
+class Pass:
+    """The target of a step and the row that comes nearest to it.
+
+    `allowed` (m, rad) is how near it must come: at a stop point what was asked for, at a fly-by point the blend more;
+    None where the blend is no length, so that nothing is judged. `joint` would have to move most, by `off` (rad or m),
+    to stand at the target; None where the pose is out of reach.
+    """
+
+    step: int
+    name: str
+    kind: Literal["stop", "fly-by"]
+    row: int
+    time: float  # s
+    distance: float  # m
+    angle: float  # rad
+    joint: str | None
+    off: float
+    allowed: tuple[float, float] | None
+
+    @property
+    def passed(self) -> bool:
+        return self.allowed is None or (self.distance <= self.allowed[0] and self.angle <= self.allowed[1])
+
+
+def passes(table: JointTable, task: Task, near: tuple[float, float] = NEAR) -> tuple[Pass, ...]:
+    """Every step of the task that has a target, with the nearest row of the table.
+
+    `near`: m and rad within which a target counts as passed. Arcs by centre and angle and waits have no target. Rows
+    that are not finite count as far away. Raises InputError for a table of another number of joints, or one too long
+    to be compared.
+    """
+    arm = task.arm
+    if table.n != arm.n:
+        raise InputError(f"table: has {table.n} joints, {arm.name} has {arm.n}")
+    steps = [step for step in task.steps if step.target is not None]
+    if len(table) > MOST_ROWS or len(table) * len(steps) > MOST_WORK:
+        raise InputError(f"table: {len(table)} rows are too many to be compared with {len(steps)} targets")
+    good = np.asarray(np.isfinite(table.position).all(axis=1))
+    position = np.where(good[:, None], table.position, 0.0)
+    carried = {step.tool: _carrying(arm, step) for step in steps}
+    poses = {tool: carrying.forward(position) for tool, carrying in carried.items()}
+    costs, rows = [], []
+    most = max(64, MOST_CANDIDATES // max(1, len(steps)))
+    for step in steps:
+        away = _away(step, task, carried[step.tool], poses[step.tool], position)
+        away[~good] = np.inf
+        at = _candidates(away, most)
+        rows.append(at)
+        known = np.minimum(away[at], 1e6)
+        costs.append(known / (known + MISSED))
+    chosen = _in_order(rows, costs)
+    return tuple(
+        _pass(step, task, carried[step.tool], table, row, near) for step, row in zip(steps, chosen, strict=True)
+    )
+
+
+def _carrying(arm: Arm, step: Step) -> Arm:
+    if step.tool in ("", arm.tool.name):
+        return arm
+    return arm.equipped(tool=step.tool if step.tool in arm.tools else None)
+
+
+def _target_pose(step: Step, task: Task, arm: Arm) -> Array:
+    """(4, 4) base_from_tool of a step's target."""
+    assert step.target is not None
+    return arm.forward(step.target.joints) if step.target.joints is not None else task.pose(step.target)
+
+
+def _away(step: Step, task: Task, arm: Arm, poses: Array, position: Array) -> Array:
+    """How far each row (N,) is from a step's target, m; angles times the arm's length."""
+    assert step.target is not None
+    if step.target.joints is not None:
+        scale = np.array([arm.length if joint.kind == "revolute" else 1.0 for joint in arm.joints])
+        return np.asarray((np.abs(position - step.target.joints) * scale).max(axis=1))
+    distance, angle = pose_errors(poses, _target_pose(step, task, arm)[None])
+    return np.asarray(distance + arm.length * angle)
+
+
+def _candidates(away: Array, most: int) -> Integers:
+    """Rows where a distance (N,) is least in its neighbourhood, and both ends; of too many the nearest ones."""
+    falling = np.concatenate([[True], away[1:] < away[:-1]])
+    not_rising_after = np.concatenate([away[:-1] <= away[1:], [True]])
+    at = np.flatnonzero(falling & not_rising_after)
+    if len(at) > most:
+        at = np.sort(at[np.argsort(away[at], kind="stable")[:most]])
+    return np.unique(np.concatenate([[0], at, [len(away) - 1]]))
+
+
+def _in_order(rows: Sequence[Integers], costs: Sequence[Array]) -> list[int]:
+    """A row for each target, none before that of the target before, of least cost in sum (dynamic programming)."""
+    came: list[Integers] = []
+    total: Array = np.zeros(0)
+    for k, (at, cost) in enumerate(zip(rows, costs, strict=True)):
+        if k == 0:
+            total = cost
+            continue
+        best = np.minimum.accumulate(total)
+        first = np.concatenate([[True], total[1:] < best[:-1]])
+        leading = np.maximum.accumulate(np.where(first, np.arange(len(total)), 0))
+        upto = np.searchsorted(rows[k - 1], at, side="right") - 1  # row 0 is a candidate of every target
+        came.append(leading[upto])
+        total = cost + best[upto]
+    chosen = [int(np.argmin(total))] if len(rows) else []
+    for back in reversed(came):
+        chosen.append(int(back[chosen[-1]]))
+    return [int(at[i]) for at, i in zip(rows, reversed(chosen), strict=True)]
+
+
+def _pass(step: Step, task: Task, arm: Arm, table: JointTable, row: int, near: tuple[float, float]) -> Pass:
+    assert step.target is not None
+    q, target = table.position[row], _target_pose(step, task, arm)
+    distance, angle = (float(value[0]) for value in pose_errors(arm.forward(q[None]), target[None]))
+    joint, off = _joint_off(arm, q, target, step.target.joints)
+    allowed: tuple[float, float] | None = near
+    if step.blend is not None:
+        allowed = (near[0] + step.blend.value, math.pi) if step.blend.kind == "length" else None
+    kind: Literal["stop", "fly-by"] = "stop" if step.blend is None else "fly-by"
+    return Pass(step.index, step.name, kind, row, float(table.time[row]), distance, angle, joint, off, allowed)
+
+
+def _joint_off(arm: Arm, q: Array, target: Array, joints: Array | None) -> tuple[str | None, float]:
+    """The joint that would have to move most to stand at the target, and by how much."""
+    scale = np.array([arm.length if joint.kind == "revolute" else 1.0 for joint in arm.joints])
+    if joints is None:
+        branches = arm.inverse_batch(target[None])
+        answers = branches.q[0][branches.valid[0]]
+        if not len(answers):
+            return None, 0.0
+        turning = np.array([joint.kind == "revolute" for joint in arm.joints])
+        moves = answers - q
+        moves = np.where(turning, np.remainder(moves + np.pi, 2 * np.pi) - np.pi, moves)
+        move = moves[np.argmin(np.abs(moves * scale).max(axis=1))]
+    else:
+        move = joints - q
+    k = int(np.argmax(np.abs(move * scale)))
+    return arm.joints[k].name, float(move[k])
+
+
+def pass_findings(found: Sequence[Pass], arm: Arm) -> list[Finding]:
+    """What to know of targets that are not passed, one exceedance each."""
+    findings = []
+    kinds = {joint.name: joint.kind for joint in arm.joints}
+    for target in found:
+        if target.passed:
+            continue
+        assert target.allowed is not None
+        name = f" ({target.name})" if target.name else ""
+        near = format_quantity(target.distance, "length", 3), format_quantity(target.angle, "angle", 3)
+        text = f"step {target.step + 1}{name}: its target is not passed: nearest is row {target.row + 1} at "
+        text += f"{clock(target.time)}, {near[0]} and {near[1]} away"
+        if target.joint is not None:
+            off = format_quantity(target.off, joint_dimension(kinds[target.joint], "position"), 3)
+            text += f", {target.joint} by {off}"
+        where = (target.time, target.step, target.joint, "target")
+        findings.append(Finding("exceedance", text, *where, value=target.distance, limit=target.allowed[0]))
+    return findings

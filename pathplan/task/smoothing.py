@@ -1,0 +1,148 @@
+"""Smooth curves through and near points: quintic splines, C4, of the least bend that a tolerance allows.
+
+The spline minimises sum w |c(u_i) - y_i|^2 + lambda integral |c'''|^2 (a smoothing spline: Reinsch 1967, with the third
+derivative in place of the second), with lambda as large as the tolerance permits. Its normal equations are banded, so
+the cost is linear in the number of points.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pathplan.errors import InputError
+
+if TYPE_CHECKING:
+    from scipy.interpolate import BSpline
+
+__all__ = ["interpolated", "knots_of", "pieces_of", "smoothed"]
+
+Array = NDArray[np.float64]
+_DEGREE = 5
+_FEWEST = 6  # points from which on end knots are left out ("not a knot"); fewer get natural ends
+_END_WEIGHT = 1e6  # of the first and last point: a curve begins and ends where its points do
+_WEAKEST, _STRONGEST = -12.0, 12.0  # log10 of lambda, relative to the size of the two terms
+_HALVINGS = 14  # of the interval between them
+
+
+def interpolated(u: Array, y: Array) -> BSpline:
+    """The quintic spline through y (m, d) at increasing u (m,); a straight line through two points."""
+    from scipy.interpolate import BSpline, make_interp_spline
+
+    if len(u) == 2:
+        return BSpline(np.array([u[0], u[0], u[1], u[1]]), np.array(y, dtype=float), 1)
+    if len(u) < _FEWEST:  # of the least integral |c'''|^2: c''' and c'''' vanish at the ends
+        free = [(3, np.zeros(y.shape[1])), (4, np.zeros(y.shape[1]))]
+        ends: Any = (free, free)
+        return make_interp_spline(u, y, k=_DEGREE, bc_type=ends)
+    return make_interp_spline(u, y, k=_DEGREE)
+
+
+def smoothed(u: Array, y: Array, excess: Callable[[Array], float], knots: Array | None = None) -> BSpline:
+    """The smoothest spline whose values at u (m,) are near enough to y (m, d).
+
+    `excess(values (m, d))` says how much of the tolerance is used, 1 all of it. `knots`: inner knots, fewer than the
+    points that lie between them; without, one at every point, so that the tolerance can always be met. Raises
+    InputError if the spline of these knots that is nearest to the points is not near enough.
+    """
+    if len(u) < _FEWEST:
+        return interpolated(u, y)
+    fit = _Fit(u, y, u[3:-3] if knots is None else knots)
+    if excess(fit.values(_WEAKEST)) > 1.0:
+        if knots is None:
+            return interpolated(u, y)  # the weakest smoothing that rounding lets us tell from none
+        raise InputError("the points can't be met within the tolerance with so few knots")
+    low, high = _WEAKEST, _STRONGEST
+    if excess(fit.values(high)) <= 1.0:
+        return fit.spline(high)
+    for _ in range(_HALVINGS):
+        middle = (low + high) / 2
+        if excess(fit.values(middle)) <= 1.0:
+            low = middle
+        else:
+            high = middle
+    return fit.spline(low)
+
+
+def knots_of(spline: BSpline) -> Array:
+    """Where the pieces of a spline meet, its ends included."""
+    return np.unique(spline.t[spline.k : len(spline.t) - spline.k])
+
+
+def pieces_of(spline: BSpline, breaks: Array) -> Array:
+    """Local power coefficients (6, M, d), highest power first, of a spline of degree 5 or less.
+
+    `breaks` (M + 1,): all of its knots, and any places between them.
+    """
+    from math import factorial
+
+    return np.stack([spline(breaks[:-1], nu=order) / factorial(order) for order in range(_DEGREE, -1, -1)])
+
+
+class _Fit:
+    """The banded problem of one set of points, for any lambda."""
+
+    def __init__(self, u: Array, y: Array, knots: Array) -> None:
+        from scipy.interpolate import BSpline
+
+        self.t = np.concatenate([[u[0]] * (_DEGREE + 1), knots, [u[-1]] * (_DEGREE + 1)])
+        weight = np.ones(len(u))
+        weight[[0, -1]] = _END_WEIGHT
+        self.basis = BSpline.design_matrix(u, self.t, _DEGREE)
+        self.centre = y.mean(axis=0)
+        self.right = self.basis.T @ (weight[:, None] * (y - self.centre))
+        ones = np.ones(len(u))
+        self.near = _band(self.basis.T @ self.basis.multiply(weight[:, None]))
+        self.bend = _band(_bending(self.t))
+        size = _band(self.basis.T @ self.basis.multiply(ones[:, None]))[-1].sum()
+        self.scale = size / max(float(self.bend[-1].sum()), 1e-300)
+
+    def coefficients(self, strength: float) -> Array:
+        from scipy.linalg import solveh_banded
+
+        matrix = self.near + 10.0**strength * self.scale * self.bend
+        return np.asarray(solveh_banded(matrix, self.right, check_finite=False)) + self.centre
+
+    def values(self, strength: float) -> Array:
+        return np.asarray(self.basis @ self.coefficients(strength))
+
+    def spline(self, strength: float) -> BSpline:
+        from scipy.interpolate import BSpline
+
+        return BSpline(self.t, self.coefficients(strength), _DEGREE)
+
+
+def _band(matrix: Any) -> Array:
+    """Upper band storage (6, n) of a symmetric sparse matrix of half bandwidth 5."""
+    band = np.zeros((_DEGREE + 1, matrix.shape[0]))
+    for offset in range(_DEGREE + 1):
+        diagonal = matrix.diagonal(offset)
+        band[_DEGREE - offset, offset:] = diagonal
+    return band
+
+
+def _bending(t: Array) -> Any:
+    """Sparse (n, n) matrix P with c' P c = integral |spline'''|^2 for coefficients c."""
+    from scipy.interpolate import BSpline
+    from scipy.sparse import diags_array
+
+    down: Any = None
+    knots = t
+    for degree in range(_DEGREE, _DEGREE - 3, -1):
+        count = len(knots) - degree - 1
+        rate = degree / (knots[degree + 1 : degree + count] - knots[1:count])
+        step: Any = diags_array(np.stack([-rate, rate]), offsets=[0, 1], shape=(count - 1, count))
+        down = step if down is None else step @ down
+        knots = knots[1:-1]
+    # The third derivative is piecewise quadratic: three Gauss points integrate its square exactly.
+    breaks = np.unique(t)
+    point, weight = np.polynomial.legendre.leggauss(3)
+    width = np.diff(breaks)
+    at = (breaks[:-1, None] + width[:, None] * (point + 1) / 2).ravel()
+    share = (width[:, None] * weight / 2).ravel()
+    basis = BSpline.design_matrix(at, knots, _DEGREE - 3)
+    gram = basis.T @ basis.multiply(share[:, None])
+    return down.T @ gram @ down

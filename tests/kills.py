@@ -1,0 +1,111 @@
+"""Writers of files killed at random instants: what they leave must be whole, or not there at all.
+
+Run as a script to kill many: python -m tests.kills 200
+"""
+
+from __future__ import annotations
+
+import os
+import signal
+import subprocess
+import sys
+import time
+from collections import Counter
+from pathlib import Path
+
+import numpy as np
+
+import pathplan
+from pathplan.export import read_table, write_table
+
+ROOT = Path(__file__).parent.parent
+SUFFIXES = (".csv", ".jsonl", ".npz", ".parquet")
+ROWS = 20_000
+WRITER = """
+import sys
+import numpy as np
+from pathplan.export import write_table
+from pathplan.table import JointTable, tick_times
+time = tick_times(np.arange({rows}), .001)
+more = dict(joint_kinds=("revolute",) * 6, cycle=.001, meta={{"task": "t", "task_file": "t.toml"}})
+print("ready", flush=True)
+k = 0
+while True:
+    k += 1
+    write_table(JointTable(time, np.full(({rows}, 6), float(k)), **more), sys.argv[1])
+"""
+
+
+def kill_writer(file: Path, rng: np.random.Generator) -> str:
+    """Start a writer that replaces a file over and over, kill it at a random instant, judge what is there.
+
+    Returns 'nothing', 'whole' or 'whole, and a part': the part is gone after the next write.
+    """
+    before = file.read_bytes() if file.exists() else None
+    with subprocess.Popen(
+        [sys.executable, "-c", WRITER.format(rows=ROWS), str(file)], stdout=subprocess.PIPE, env=environment()
+    ) as writer:
+        assert writer.stdout is not None and writer.stdout.readline() == b"ready\n"
+        time.sleep(rng.uniform(0.0, 0.6))
+        writer.send_signal(signal.SIGKILL)
+    parts = [path for path in file.parent.iterdir() if path.suffix == ".part"]
+    if not file.exists():
+        assert before is None
+        return "nothing"
+    table = read_table(file)
+    assert len(table) == ROWS and np.ptp(table.position) == 0, "rows of two writes in one file"
+    write_table(table, file)
+    assert [path.name for path in file.parent.iterdir() if path.suffix == ".part"] == []
+    return "whole, and a part" if parts else "whole"
+
+
+def kill_plan(folder: Path, rng: np.random.Generator) -> str:
+    """Kill `pathplan plan` over a finished plan at a random instant; what is there afterwards is one plan or the other.
+
+    Returns 'untouched' or 'new'.
+    """
+    task = folder / "task.toml"
+    line = '[[step]]\nmotion = "joint"\nto = "parked"\n'
+    arm = (ROOT / "robots" / "loader4.toml").as_posix()
+    task.write_text(f'title = "kill"\narm = "{arm}"\ncycle = "1 ms"\nstart = "home"\n{line}')
+    command = [sys.executable, "-m", "pathplan", "plan", "task.toml", "-o", "task.csv", "--quiet"]
+    wanted = {}
+    for pace in ("50 %", "100 %"):
+        subprocess.run([*command, "--pace", pace], cwd=folder, env=environment(), check=True)
+        wanted[pace] = (folder / "task.csv").read_bytes()
+    started = time.monotonic()
+    subprocess.run([*command, "--pace", "50 %"], cwd=folder, env=environment(), check=True)
+    needed = time.monotonic() - started
+    with subprocess.Popen([*command, "--pace", "100 %"], cwd=folder, env=environment()) as planner:
+        time.sleep(rng.uniform(0.5, 1.1) * needed)
+        planner.send_signal(signal.SIGKILL)
+    found = (folder / "task.csv").read_bytes()
+    assert found in wanted.values(), "neither the old table nor the new one"
+    pathplan.read_table(folder / "task.csv")
+    return "untouched" if found == wanted["50 %"] else "new"
+
+
+def environment() -> dict[str, str]:
+    return {**os.environ, "PYTHONPATH": str(ROOT), "OMP_NUM_THREADS": "1"}
+
+
+def main(count: int, seed: int = 0) -> None:
+    """Kill `count` writers over the kinds of file, every tenth a whole command, and print what became of them."""
+    from tempfile import TemporaryDirectory
+
+    rng = np.random.default_rng(seed)
+    seen: Counter[str] = Counter()
+    with TemporaryDirectory() as folder:
+        for k in range(count):
+            suffix = SUFFIXES[k % len(SUFFIXES)]
+            if k % 10 == 9:
+                (Path(folder) / "plan").mkdir(exist_ok=True)
+                seen[f"plan: {kill_plan(Path(folder) / 'plan', rng)}"] += 1
+            else:
+                seen[f"{suffix}: {kill_writer(Path(folder) / f't{suffix}', rng)}"] += 1
+            if (k + 1) % 20 == 0:
+                print(k + 1, dict(sorted(seen.items())), flush=True)
+
+
+if __name__ == "__main__":
+    main(int(sys.argv[1]), int(sys.argv[2]) if len(sys.argv) > 2 else 0)
