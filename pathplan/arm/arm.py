@@ -314,9 +314,7 @@ class Arm:
         """Constants of the kinematic walk, tool included."""
         tip_from_tool = self.tip_from_flange @ self.tool.flange_from_tool
         kinds = tuple(joint.kind for joint in self.joints)
-        return kinematics.Chain.build(
-            kinds, self.parents, self.parent_from_joint, self.axes, self.tip, tip_from_tool
-        )
+        return kinematics.Chain.build(kinds, self.parents, self.parent_from_joint, self.axes, self.tip, tip_from_tool)
 
     @cached_property
     def rigid_body(self) -> tuple[Any, bool]:

@@ -22,7 +22,7 @@ from itertools import product
 import numpy as np
 
 from pathplan.arm.geometry import Geometry
-from pathplan.arm.model import Array
+from pathplan.arm.model import Array, Mask
 from pathplan.arm.refine import apart, canonical, pose_errors, reached, refine
 from pathplan.arm.subproblems import rotate, rotation_about, wrapped
 
@@ -57,7 +57,7 @@ def versions(g: Geometry, seed: int = 5) -> tuple[tuple[Version, ...], float]:
     """
     q = np.random.default_rng(seed).uniform(-np.pi, np.pi, (TRIALS, 6))
     poses = reached(g, q)
-    trials: list[tuple[Version, Array, Array]] = []
+    trials: list[tuple[Version, Array, Mask]] = []
     whole: list[int] = []
     # With the loop opened at the tool everything but the pose itself is the same for all poses: those are faster.
     for shift, backwards in product(range(6), (False, True)):
@@ -80,7 +80,7 @@ def versions(g: Geometry, seed: int = 5) -> tuple[tuple[Version, ...], float]:
     return tuple(trials[k][0] for k in order), share[order[0]]
 
 
-def eliminate(g: Geometry, version: Version, poses: Array) -> tuple[Array, Array]:
+def eliminate(g: Geometry, version: Version, poses: Array) -> tuple[Array, Mask]:
     """Answers (N, 24, 6) for poses (N, 4, 4) and which of them (N, 24) stand there; not yet distinct."""
     rotation, shift = g.motion(poses)
     turn, place = rotation.transpose(2, 0, 1), shift.T
@@ -232,7 +232,7 @@ def _last(g: Geometry, joint: int, q: Array, turn: Array) -> Array:
     return rotation_about(g.axes[joint], rest.swapaxes(0, 1))
 
 
-def distinct(g: Geometry, q: Array, good: Array, slots: int) -> tuple[Array, Array]:
+def distinct(g: Geometry, q: Array, good: Mask, slots: int) -> tuple[Array, Mask]:
     """The answers q (N, C, m) that are good and differ, in the first of `slots` places: (N, slots, m), (N, slots)."""
     gap = apart(g, q[:, :, None], q[:, None])
     before = np.tri(q.shape[1], k=-1, dtype=bool)

@@ -172,7 +172,8 @@ def _turns(arm: Arm, q: Array) -> list[Array]:
     return [
         answer
         for answer in answers
-        if not ((rows := limited(arm, answer)) < low - LIMIT_TOLERANCE).any() and not (rows > high + LIMIT_TOLERANCE).any()
+        if not ((rows := limited(arm, answer)) < low - LIMIT_TOLERANCE).any()
+        and not (rows > high + LIMIT_TOLERANCE).any()
     ]
 
 
@@ -188,7 +189,9 @@ def _verified(arm: Arm, answers: list[Array], pose: Array) -> list[Array]:
     if not answers:
         return []
     distance, angle = pose_errors(forward(arm, np.array(answers)), pose)
-    good = (distance <= POSITION_TOLERANCE) & (angle <= (ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE))
+    good = (distance <= POSITION_TOLERANCE) & (
+        angle <= (ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE)
+    )
     return [q for q, is_good in zip(answers, good, strict=True) if is_good]
 
 
@@ -216,7 +219,11 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
         off.append(format_quantity(data["position_error"], "length"))
     if data["angle_error"] > (ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE):
         off.append(format_quantity(data["angle_error"], "angle"))
-    why = f" (an arm with {len(arm.tool_joints)} axes can't serve every pose)" if len(arm.tool_joints) < 6 and arm.structure == "general" else ""
+    why = (
+        f" (an arm with {len(arm.tool_joints)} axes can't serve every pose)"
+        if len(arm.tool_joints) < 6 and arm.structure == "general"
+        else ""
+    )
     return UnreachableError(
         f"{arm.name}: the pose is out of reach{why}: the nearest answer is off by {' and '.join(off)}",
         data=data,

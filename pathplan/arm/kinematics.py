@@ -311,8 +311,8 @@ class _solver:
 def smallest_singular_value(arm: Arm, q: Array) -> Array:
     """Distance from singularity (N,), dimensionless, for q (N, n).
 
-    The smallest singular value (of fewer than six joints between base and tool, the last) of the Jacobian at the tool centre point,
-    its linear rows divided by `arm.length` and its prismatic columns multiplied by it.
+    The smallest singular value (of fewer than six joints between base and tool, the last) of the Jacobian at the tool
+    centre point, its linear rows divided by `arm.length` and its prismatic columns multiplied by it.
     """
     matrix = jacobian(arm, checked(q, arm.n)[0])
     matrix[:, :3] /= arm.length

@@ -13,8 +13,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from pathplan.arm.chain import DHRow
-from pathplan.arm.model import Array
 from pathplan.arm.geometry import zero_axes
+from pathplan.arm.model import Array
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:

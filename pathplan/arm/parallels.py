@@ -16,7 +16,6 @@ import numpy as np
 from pathplan.arm.geometry import SHORT, Geometry, across
 from pathplan.arm.inverse_form import Form
 from pathplan.arm.model import Array
-from pathplan.arm.positions import signs
 from pathplan.arm.subproblems import (
     STRAIGHT,
     angle_about,
@@ -82,25 +81,22 @@ def _inner_meeting(g: Geometry, pointing: Array, end: Array) -> tuple[Array, Arr
     ahead = up * (1.0 if offset > -1e-9 else -1.0) * np.array([1.0, -1.0])[:, None]  # left, right
     q1 = ahead * half - middle
     unturned = rotate(a1, -q1, np.repeat(pointing[:, None], 2, axis=1))
-    q5, flipped = _bend(g, unturned)
-    side = np.array([-1.0, 1.0]) if flipped else np.array([1.0, -1.0])
-    middle, half = q5
-    q5 = middle + side[:, None] * half[:, None]  # shoulder, wrist, pose
+    bend, half_bend = _bend(g, unturned)
+    # Positive is sin q5 > 0, q5 counted from the straight wrist nearest to its zero.
+    side = np.array([-1.0, 1.0]) if round(bend / np.pi) % 2 == 1 else np.array([1.0, -1.0])
+    q5 = bend + side[:, None] * half_bend[:, None]  # shoulder, wrist, pose
     elbow_up = np.repeat((up * ahead)[:, None], 2, axis=1).reshape(4, 1)
     return np.repeat(q1, 2, axis=0), q5.reshape(4, -1), elbow_up
 
 
-def _bend(g: Geometry, unturned: Array) -> tuple[tuple[float, Array], bool]:
-    """Middle and half angle of q5 with h . Rot(a5, q5) a6 = h . unturned, and whether the straight wrist nearest to
-    q5 = 0 lies on the other side of the middle.
-    """
+def _bend(g: Geometry, unturned: Array) -> tuple[float, Array]:
+    """Middle and half angle of q5 with h . Rot(a5, q5) a6 = h . unturned."""
     h, a5, a6 = g.axes[1], g.axes[4], g.axes[5]
     level = dot(h, unturned)
     middle, half = two_angles(a5, h, a6[:, None], level.reshape(1, -1))
     if abs(h @ a5) < 1e-9 and abs(a5 @ a6) < 1e-9:  # square axes: exact even where the sine is small
         half = np.arctan2(np.linalg.norm(cross(h, unturned), axis=0), level)
-    angle = float(middle.reshape(-1)[0])
-    return (angle, half.reshape(level.shape)), round(angle / np.pi) % 2 == 1
+    return float(middle.reshape(-1)[0]), half.reshape(level.shape)
 
 
 def _inner_skew(g: Geometry, pointing: Array, end: Array) -> tuple[Array, Array, Array]:
@@ -109,9 +105,7 @@ def _inner_skew(g: Geometry, pointing: Array, end: Array) -> tuple[Array, Array,
     o1, o5, o6 = g.points[0], g.points[4], g.points[5]
     w = end - o1[:, None]
     one = np.stack([_coefficients(h, -a1, pointing), _coefficients(h, -a1, w) / g.length])
-    five = np.stack(
-        [_coefficients(h, a5, a6[:, None]), _coefficients(h, a5, (o6 - o5)[:, None]) / g.length]
-    )
+    five = np.stack([_coefficients(h, a5, a6[:, None]), _coefficients(h, a5, (o6 - o5)[:, None]) / g.length])
     lean_1, lean_5 = float(h @ a1), float(h @ a5)
     right = np.stack(
         [
@@ -211,12 +205,7 @@ def _outer(g: Geometry, rotation: Array, shift: Array) -> Array:
     right = np.stack(
         [
             float(a5 @ a4) * float(a4 @ h) - float(a5 @ a6) * dot(a6, v),
-            (
-                dot(h, end)
-                - h @ o4
-                - float((o6 - o5) @ a6) * dot(a6, v)
-                - float((o5 - o4) @ a4) * float(a4 @ h)
-            )
+            (dot(h, end) - h @ o4 - float((o6 - o5) @ a6) * dot(a6, v) - float((o5 - o4) @ a4) * float(a4 @ h))
             / g.length,
         ]
     )

@@ -1,7 +1,7 @@
 """Arms with more axes than a pose asks for: the inverse with some joints held at given values.
 
-Held still, a joint becomes part of its link and six axes remain, which their closed form (or elimination) solves for all
-branches. Where a joint is held at the base or at the tool end of the chain (a track, a turntable seen from its
+Held still, a joint becomes part of its link and six axes remain, which their closed form (or elimination) solves for
+all branches. Where a joint is held at the base or at the tool end of the chain (a track, a turntable seen from its
 workpiece, a last roll) only the poses change and everything is one batch; in between, the six axes that are left look
 different for each value: one small set-up a value.
 """
@@ -11,15 +11,14 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from itertools import combinations
+from itertools import combinations, pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from pathplan.arm.elimination import BRANCHES, versions
+from pathplan.arm.elimination import BRANCHES
 from pathplan.arm.geometry import EXACT, Geometry, near
-from pathplan.arm.model import Array
-from pathplan.arm.refine import pose_errors
+from pathplan.arm.model import Array, Index, Mask
 from pathplan.arm.solver import Answers, Solver, solver_of
 from pathplan.arm.structure import forms, geometry_of, recognise
 from pathplan.errors import InputError
@@ -109,7 +108,7 @@ class FreeSolver:
         q[:, :, list(self.held)] = values[:, None]
         return q, Answers(q, errors[0], errors[1])
 
-    def _groups(self, values: Array) -> list[tuple[Array, Array]]:
+    def _groups(self, values: Array) -> list[tuple[Index, Array]]:
         """Rows that share the values of the middle joints, in their order, with a row of values."""
         if not self.middle:
             return [(np.arange(len(values)), values[0])] if len(values) else []
@@ -117,7 +116,7 @@ class FreeSolver:
         inverse = inverse.reshape(-1)
         order = np.argsort(inverse, kind="stable")
         borders = np.searchsorted(inverse[order], np.arange(len(same) + 1))
-        return [(order[a:b], values[order[a]]) for a, b in zip(borders[:-1], borders[1:], strict=True)]
+        return [(order[a:b], values[order[a]]) for a, b in pairwise(borders.tolist())]
 
     def _without_ends(self, poses: Array, values: Array) -> Array:
         """The poses (K, 4, 4) that the chain between the held ends has to make."""
@@ -269,7 +268,7 @@ def some_branches(arm: Arm, poses: Array) -> Answers:
     )
 
 
-def inside(arm: Arm, q: Array) -> Array:
+def inside(arm: Arm, q: Array) -> Mask:
     """(...) whether every joint between base and tool has a turn equivalent within its position limits."""
     good = np.ones(q.shape[:-1], dtype=bool)
     for i in arm.tool_joints:

@@ -9,7 +9,7 @@ import numpy as np
 
 from pathplan.arm.elimination import BRANCHES, distinct
 from pathplan.arm.geometry import Geometry
-from pathplan.arm.model import Array
+from pathplan.arm.model import Array, Mask
 from pathplan.arm.refine import canonical, descend, pose_errors, reached, refine
 
 __all__ = ["FORGIVEN", "nearest", "search", "starts"]
@@ -28,7 +28,7 @@ def starts(g: Geometry, travel: Array, count: int = STARTS, seed: int = 20_240_2
     return np.random.default_rng(seed).uniform(low, high, (count, g.m))
 
 
-def search(g: Geometry, travel: Array, poses: Array) -> tuple[Array, Array]:
+def search(g: Geometry, travel: Array, poses: Array) -> tuple[Array, Mask]:
     """Answers (N, 16, m) for poses (N, 4, 4), and which places (N, 16) hold one.
 
     A chain with fewer than six joints may miss the orientation by what its tolerance forgives, not the position.

@@ -12,7 +12,7 @@ import numpy as np
 from pathplan.arm.elimination import BRANCHES, Version, distinct, eliminate, versions
 from pathplan.arm.geometry import EXACT, Geometry, near
 from pathplan.arm.inverse_form import Form, Structure
-from pathplan.arm.model import Array
+from pathplan.arm.model import Array, Index, Mask
 from pathplan.arm.refine import apart, canonical, pose_errors, reached, refine
 from pathplan.arm.search import nearest, search
 from pathplan.arm.structure import recognise
@@ -91,7 +91,7 @@ class Solver:
             else:
                 q[part], errors[:, part] = self._in_general(poses[part])
         if not self.steady and len(poses) > 1:
-            order = _followed(self.g, q, (errors < VALID).all(axis=0))
+            order = _followed(self.g, q, _valid(errors))
             rows = np.arange(len(poses))[:, None]
             q, errors = q[rows, order], errors[:, rows, order]
         return Answers(q, errors[0], errors[1])
@@ -110,7 +110,7 @@ class Solver:
         if len(row):
             tried = canonical(self.g, refine(self.g, q[row, branch], poses[row]))
             tried_errors = np.array(pose_errors(reached(self.g, tried), poses[row]))
-            kept = (tried_errors < VALID).all(axis=0) | (self.g.m < 6)
+            kept = _valid(tried_errors) | (self.g.m < 6)
             row, branch = row[kept], branch[kept]
             q[row, branch], errors[:, row, branch] = tried[kept], tried_errors[:, kept]
         if not form.steady:
@@ -124,14 +124,14 @@ class Solver:
 
     def _drop_repeated(self, q: Array, errors: Array) -> None:
         """Of places that hold the same answer the first keeps it."""
-        good = (errors < VALID).all(axis=0)
+        good = _valid(errors)
         gap = apart(self.g, q[:, :, None], q[:, None])
         repeated = good & ((gap < 1e-7) & good[:, None] & np.tri(q.shape[1], k=-1, dtype=bool)).any(axis=2)
         errors[:, repeated] = np.inf
 
     def _complete(self, q: Array, errors: Array, poses: Array) -> None:
         """A form that fits nearly may miss branches where two of them come close: there the elimination looks too."""
-        good = (errors < VALID).all(axis=0)
+        good = _valid(errors)
         gap = np.where(good[:, None] & good[:, :, None], apart(self.g, q[:, :, None], q[:, None]), np.inf)
         gap[:, np.arange(q.shape[1]), np.arange(q.shape[1])] = np.inf
         lost = ~good & (np.maximum(errors[0] / self.g.length, errors[1]) < NEAR_BASIN)
@@ -142,7 +142,7 @@ class Solver:
         found, filled = distinct(self.g, *eliminate(self.g, self.elimination[0], poses[rows]), BRANCHES)
         for k, row in enumerate(rows):
             for answer in found[k][filled[k]]:
-                valid = (errors[:, row] < VALID).all(axis=0)
+                valid = _valid(errors[:, row])
                 if valid.any() and apart(self.g, q[row, valid], answer).min() < 1e-6:
                     continue
                 free = np.flatnonzero(~valid)
@@ -174,7 +174,12 @@ class Solver:
         return q, errors
 
 
-def _followed(g: Geometry, q: Array, good: Array) -> Array:
+def _valid(errors: Array) -> Mask:
+    """Which answers (...) with errors (2, ...) stand at their pose."""
+    return np.asarray((errors < VALID).all(axis=0))
+
+
+def _followed(g: Geometry, q: Array, good: Mask) -> Index:
     """(N, B) the order of places in which a branch keeps its place from one pose to the next, while it can be told.
 
     Two answers belong together where each is the nearest one to the other, and near.

@@ -34,7 +34,7 @@ def apart(q, other):
         ("puma", "spherical wrist"),
         ("crooked wrist", "spherical wrist"),
         ("planar three", "general"),
-        ("offset wrist", "general"),
+        ("offset wrist", "three parallel axes"),
         ("oblique six", "general"),
         ("seven", "general"),
     ],
