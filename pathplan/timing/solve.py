@@ -24,7 +24,7 @@ from pathplan.timing.stretch import StretchTiming
 
 Array = NDArray[np.float64]
 
-_LOSS = 2.5e-3  # a stretch is refined while more than this share of its time leaves every limit unused
+_LOSS = 2e-3  # a stretch is refined while more than this share of its time leaves every limit unused
 _ROUNDS = 8
 _SPLIT_SHARE = 0.85  # the cells that together hold this share of the loss are halved
 _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
