@@ -219,7 +219,7 @@ def _last_reached(arm: Arm, segment: Segments, frame: Array, slot: int, inside: 
     """s at which a branch loses a segment, by bisection between two samples; a branch index must have a
     meaning.
     """
-    if not arm.steady_branches:
+    if arm.structure == "general":
         return inside
     for _ in range(30):
         middle = (inside + outside) / 2

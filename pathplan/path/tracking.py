@@ -79,7 +79,7 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
     def poses(k: Index, at: Array) -> Array:
         return segments.poses(k, at) @ tool_from_own[k]
 
-    if not arm.steady_branches:
+    if arm.structure == "general":
         return _continued(arm, poses, segment, s, first)
     branches = arm.inverse_batch(poses(segment, s))
     q, valid = branches.q, np.asarray(branches.valid)
