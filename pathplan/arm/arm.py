@@ -27,7 +27,7 @@ NOTHING = "none"  # the name of no tool and of no payload
 BARE = Tool(NOTHING, np.eye(4))
 GRAVITY = (0.0, 0.0, -9.80665)  # m/s^2, standard gravity (ISO 80000-3)
 # Built from libraries, cheap to build again, and not picklable.
-LIBRARY_OBJECTS = ("rigid_body", "_free_solvers")
+LIBRARY_OBJECTS = ("rigid_body", "separate_chains", "_free_solvers")
 
 
 def joint_rows(joints: Sequence[Joint]) -> Limits:
@@ -315,6 +315,13 @@ class Arm:
         tip_from_tool = self.tip_from_flange @ self.tool.flange_from_tool
         kinds = tuple(joint.kind for joint in self.joints)
         return kinematics.Chain.build(kinds, self.parents, self.parent_from_joint, self.axes, self.tip, tip_from_tool)
+
+    @cached_property
+    def separate_chains(self) -> tuple[tuple[list[int], Arm], ...]:
+        """The chains that stand on the base, with their joints' indices: see `pathplan.arm.dynamics`."""
+        from pathplan.arm.dynamics import separate_chains
+
+        return separate_chains(self)
 
     @cached_property
     def rigid_body(self) -> tuple[Any, bool]:

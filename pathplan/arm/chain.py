@@ -60,44 +60,48 @@ def translation(x: float, y: float, z: float) -> Array:
 
 
 def chain_from_dh(
-    rows: Sequence[DHRow], convention: Literal["standard", "modified"]
+    rows: Sequence[DHRow],
+    convention: Literal["standard", "modified"],
+    parents: Sequence[int] | None = None,
+    tip: int = -1,
 ) -> tuple[Array, Array, Array, Array]:
     """parent_from_joint (n, 4, 4), axes (n, 3), tip_from_last (4, 4), joint_from_link (n, 4, 4).
 
-    Every joint moves about or along its own z. `tip_from_last` leads to the last DH frame;
+    Every joint moves about or along its own z. `tip_from_last` leads to the DH frame of row `tip`;
     `joint_from_link` from a joint's moving frame to the DH frame of the same row, in which link data are
-    stated.
+    stated. `parents`: the row that each row follows, -1 the base; default: the one before.
     """
     n = len(rows)
     fixed, joint_from_link = np.empty((n, 4, 4)), np.empty((n, 4, 4))
-    if convention == "modified":
-        for i, row in enumerate(rows):
+    for i, row in enumerate(rows):
+        parent = i - 1 if parents is None else parents[i]
+        if convention == "modified":
             fixed[i] = rot_x(row.alpha) @ translation(row.a, 0, 0) @ rot_z(row.theta) @ translation(0, 0, row.d)
             joint_from_link[i] = np.eye(4)
-        tip_from_last = np.eye(4)
-    else:
-        before = np.eye(4)
-        for i, row in enumerate(rows):
-            fixed[i] = before
-            before = rot_z(row.theta) @ translation(row.a, 0, row.d) @ rot_x(row.alpha)
-            joint_from_link[i] = before
-        tip_from_last = before
-    return fixed, np.tile([0.0, 0.0, 1.0], (n, 1)), tip_from_last, joint_from_link
+        else:
+            fixed[i] = joint_from_link[parent] if parent >= 0 else np.eye(4)
+            joint_from_link[i] = rot_z(row.theta) @ translation(row.a, 0, row.d) @ rot_x(row.alpha)
+    return fixed, np.tile([0.0, 0.0, 1.0], (n, 1)), joint_from_link[tip].copy(), joint_from_link
 
 
-def chain_from_axes(origins: Any, axes: Any, base_from_flange: Any) -> tuple[Array, Array, Array]:
-    """parent_from_joint (n, 4, 4), axes (n, 3), tip_from_flange (4, 4) from axes in the base frame at q =
-    0."""
+def chain_from_axes(
+    origins: Any, axes: Any, base_from_flange: Any, parents: Sequence[int] | None = None, tip: int = -1
+) -> tuple[Array, Array, Array]:
+    """parent_from_joint (n, 4, 4), axes (n, 3), tip_from_flange (4, 4) from axes in the base frame at q = 0.
+
+    `parents`: the joint that each joint stands on, -1 the base; default: the one before. `tip` carries the flange.
+    """
     origins, axes = np.asarray(origins, dtype=float), np.asarray(axes, dtype=float)
     if axes.ndim != 2 or axes.shape[1] != 3 or origins.shape != axes.shape:
         raise InputError(f"expected origins and axes of one shape (n, 3), got {origins.shape} and {axes.shape}")
     lengths = np.linalg.norm(axes, axis=1)
     if not (lengths > 1e-12).all():
         raise InputError("expected axes that are not zero")
+    before = np.arange(-1, len(origins) - 1) if parents is None else np.asarray(parents)
     fixed = np.tile(np.eye(4), (len(origins), 1, 1))
-    fixed[:, :3, 3] = np.diff(origins, axis=0, prepend=np.zeros((1, 3)))
+    fixed[:, :3, 3] = origins - np.where(before[:, None] >= 0, origins[before], 0.0)
     tip_from_flange = np.array(base_from_flange, dtype=float)
-    tip_from_flange[:3, 3] -= origins[-1]
+    tip_from_flange[:3, 3] -= origins[tip]
     return fixed, axes / lengths[:, None], tip_from_flange
 
 

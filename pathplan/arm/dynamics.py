@@ -5,11 +5,12 @@ The toolbox takes seconds to import: only these functions do.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from pathplan.arm.bodies import Body, combined, moved
 from pathplan.arm.chain import moved_link
 from pathplan.arm.mdh import ModifiedChain, modified_chain
 from pathplan.arm.model import Array, Link, Payload, Tool
@@ -39,6 +40,15 @@ def torque(arm: Arm, q: Any, qd: Any, qdd: Any) -> Array:
             raise InputError(f"{name}: expected finite numbers, got NaN or infinity")
     if rows == 0:
         return np.zeros((0, arm.n))
+    result = np.empty((rows, arm.n))
+    for joints, chain in arm.separate_chains:
+        result[:, joints] = _chain_torque(chain, [np.ascontiguousarray(value[:, joints]) for value in arrays])
+    return result
+
+
+def _chain_torque(arm: Arm, arrays: list[Array]) -> Array:
+    """(N, n) of a single chain."""
+    rows = len(arrays[0])
     robot, fixed_front = arm.rigid_body
     if fixed_front:
         arrays = [np.column_stack([np.zeros(rows), value]) for value in arrays]
@@ -58,6 +68,42 @@ def build_rigid_body(arm: Arm) -> tuple[Any, bool]:
     front = arm.joints[0].kind == "prismatic"
     lead = [RevoluteMDH(m=0.0, r=np.zeros(3), I=np.zeros(6), Jm=0.0, B=0.0, Tc=[0.0, 0.0], G=1.0)] if front else []
     return _robot(arm, lead), front
+
+
+def separate_chains(arm: Arm) -> tuple[tuple[list[int], Arm], ...]:
+    """The chains that stand on the base, each with its joints' indices and as an arm of its own: what one of them does
+    the others don't feel. Raises InputError where joints branch above the base.
+    """
+    if arm.tool_joints == tuple(range(arm.n)):
+        return ((list(range(arm.n)), arm),)
+    from pathplan.arm.arm import joint_rows
+
+    chains = []
+    for root in (i for i in range(arm.n) if arm.parents[i] < 0):
+        joints = [root]
+        while after := [i for i in range(arm.n) if arm.parents[i] == joints[-1]]:
+            if len(after) > 1:
+                names = ", ".join(arm.joint_names[i] for i in after)
+                raise InputError(f"{arm.name}: no torque: joint {arm.joint_names[joints[-1]]} carries several, {names}")
+            joints += after
+        holds_tool = joints[-1] == arm.tip
+        part = replace(
+            arm,
+            joints=tuple(arm.joints[i] for i in joints),
+            parent_from_joint=arm.parent_from_joint[joints],
+            axes=arm.axes[joints],
+            parents=(),
+            tip=-1,
+            tip_from_flange=arm.tip_from_flange if holds_tool else np.eye(4),
+            links=None if arm.links is None else tuple(arm.links[i] for i in joints),
+            tool=arm.tool if holds_tool else Tool("none", np.eye(4)),
+            payload=arm.payload if holds_tool else None,
+            positions={},
+            limits=joint_rows([arm.joints[i] for i in joints]),
+            free_first=(),
+        )
+        chains.append((joints, part))
+    return tuple(chains)
 
 
 def toolbox(arm: Arm) -> Any:
@@ -123,24 +169,10 @@ def _links_in(arm: Arm, chain: ModifiedChain) -> list[Link] | None:
 
 
 def combined_link(link: Link, joint_from_tool: Array, tool: Tool, payload: Payload | None) -> Link:
-    """The last link with tool and payload fixed to it, in the joint's moving frame (parallel-axis
-    theorem)."""
-    rotation = joint_from_tool[:3, :3]
-    bodies: list[tuple[float, Array, Array]] = [(link.mass, link.com, link.inertia)]
-    for thing in (tool, payload) if payload is not None else (tool,):
-        com = rotation @ thing.com + joint_from_tool[:3, 3]
-        bodies.append((thing.mass, com, rotation @ thing.inertia @ rotation.T))
-    mass = sum(body[0] for body in bodies)
-    if mass == 0.0:
+    """The last link with tool and payload fixed to it, in the joint's moving frame."""
+    things: list[Tool | Payload] = [tool] if payload is None else [tool, payload]
+    carried = [moved(Body(thing.mass, thing.com, thing.inertia), joint_from_tool) for thing in things]
+    body = combined([Body(link.mass, link.com, link.inertia), *carried])
+    if body.mass == 0.0:
         return link
-    com = sum((body[0] * body[1] for body in bodies), np.zeros(3)) / mass
-    return Link(mass, com, _about(com, bodies), link.viscous, link.coulomb, link.rotor_inertia)
-
-
-def _about(point: Array, bodies: Sequence[tuple[float, Array, Array]]) -> Array:
-    """Inertia (3, 3) of bodies (mass, com, inertia about the com) about a point."""
-    total = np.zeros((3, 3))
-    for mass, com, inertia in bodies:
-        off = com - point
-        total += inertia + mass * (float(off @ off) * np.eye(3) - np.outer(off, off))
-    return total
+    return replace(link, mass=body.mass, com=body.com, inertia=body.inertia)
