@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.auditing import Audit
+from pathplan.auditing.drives import torque_limits
 from pathplan.auditing.model import QUANTITIES
 from pathplan.auditing.pacing import PACING
 from pathplan.auditing.shares import limit_rows, row_kinds, rows_of, shares_of
@@ -60,10 +61,11 @@ class Picture:
     """What is drawn of a motion. R limit rows of the arm, its joints first; everything SI.
 
     `lines`: (quantity, limit row) -> Line, and ("tool speed" | "deviation" | "turn", -1) -> Line, of those that there
-    are; deviation (m) and turn (rad) from the programmed path need a plan. `kept`: columns (M,) of the rows that can be
-    read one by one, by the same keys, with ("tool x", -1) and so on; `kept_rows` (M,) are their numbers.
-    `labels`: (limit row or -1 for the tool, quantity) of what can pace; `pace` the runs of rows that one of them paces,
-    `steps` the runs of rows of one step. `step_names` by step, "" where unnamed.
+    are; deviation (m) and turn (rad) from the programmed path need a plan; ("torque left", joint) is the part (0..1)
+    of a torque limit that the speed leaves, where a drive has less at speed. `kept`: columns (M,) of the rows that can
+    be read one by one, by the same keys, with ("tool x", -1) and so on; `kept_rows` (M,) are their numbers. `labels`:
+    (limit row or -1 for the tool, quantity) of what can pace; `pace` the runs of rows that one of them paces, `steps`
+    the runs of rows of one step. `step_names` by step, "" where unnamed.
     """
 
     title: str
@@ -174,7 +176,8 @@ class _Gathering:
         self.caps = step_caps(arm, plan.task if plan else None)
         self.size = bucket_size(rows, buckets)
         self.chunk = self.size * max(1, CHUNK // self.size)
-        self.labels = tuple((r, q) for q in PACED[:4] for r in range(len(self.names))) + ((-1, PACED[4]), (-1, PACED[5]))
+        joints = [(r, quantity) for quantity in PACED[:4] for r in range(len(self.names))]
+        self.labels = (*joints, *((-1, quantity) for quantity in PACED[4:]))
         self.wanted = self._wanted(most)
         self.seen = 0
         self.last_time = 0.0
@@ -213,8 +216,11 @@ class _Gathering:
             own = values if quantity == "torque" else rows_of(values, self.matrix)
             self._draw(quantity, table.time, own, mine)
             if quantity != "position":
+                limits = getattr(self.arm.limits, quantity)
+                if quantity == "torque":
+                    limits = self._torque_limits(table, mine)
                 used = np.zeros((count, len(self.names)))
-                used[:, : own.shape[1]] = shares_of(own, getattr(self.arm.limits, quantity)[: own.shape[1]])
+                used[:, : own.shape[1]] = shares_of(own, limits)
                 shares.append(used)
         shares += self._tool(table, deviations, mine)
         pace = self._pace(np.hstack(shares)) if self.paced else np.full(count, -1)
@@ -226,10 +232,19 @@ class _Gathering:
         self.last_time = float(table.time[-1])
         self.seen += count
 
+    def _torque_limits(self, table: JointTable, mine: Integers) -> Array:
+        """Limits of the rows; of drives whose torque falls with speed what is left of it is drawn and kept as well."""
+        limits = torque_limits(self.arm, table.velocity)
+        if limits.ndim == 3:
+            with np.errstate(invalid="ignore"):
+                left = limits[:, :, 1] / self.arm.limits.torque[: self.arm.n, 1]
+            self._draw("torque left", table.time, np.where(np.isnan(left), 1.0, left), mine)
+        return limits
+
     def _draw(self, quantity: str, time: Array, values: Array, mine: Integers) -> None:
         """The points of these columns (N, C) that are drawn, and the values that are kept."""
         rows = extremes(values, self.size)
-        ends = [row for row, first in ((0, self.seen == 0), (len(time) - 1, self.seen + len(time) == self.rows)) if first]
+        ends = [0] * (self.seen == 0) + [len(time) - 1] * (self.seen + len(time) == self.rows)
         for r in range(values.shape[1]):
             at = rows[:, r] if self.size == 1 else np.unique(np.append(rows[:, r], ends).astype(np.intp))
             self.drawn.setdefault((quantity, r), []).append((time[at], values[at, r]))
