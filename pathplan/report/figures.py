@@ -347,8 +347,8 @@ def _step_names(axes: Axes, picture: Picture, room: float = 1.0) -> None:
 
 def _above(axes: Axes, time: float, points: float, text: str, **how: Any) -> None:
     """A text so many points above the axes, at a time."""
-    place: dict[str, Any] = {"xycoords": axes.get_xaxis_transform(), "xytext": (0, points), "textcoords": "offset points"}
-    axes.annotate(text, (time, 1.0), **place, fontsize=7, va="bottom", parse_math=False, **how)
+    shift: dict[str, Any] = {"xytext": (0, points), "textcoords": "offset points"}
+    axes.annotate(text, (time, 1.0), xycoords=axes.get_xaxis_transform(), **shift, fontsize=7, va="bottom", parse_math=False, **how)
 
 
 def _strip(axes: Axes, picture: Picture) -> None:
@@ -369,8 +369,8 @@ def _strip(axes: Axes, picture: Picture) -> None:
 
 
 def _block(axes: Axes, start: float, end: float, row: float, quantity: str) -> None:
-    how: dict[str, Any] = {"color": COLOURS[quantity], "hatch": HATCHES[quantity], "ec": "white", "lw": 0.4, "zorder": 2}
-    axes.barh(row, end - start, 0.8, left=start, **how)
+    how: dict[str, Any] = {"color": COLOURS[quantity], "hatch": HATCHES[quantity], "ec": "white", "lw": 0.4}
+    axes.barh(row, end - start, 0.8, left=start, zorder=2, **how)
 
 
 def _swatch(quantity: str) -> Any:

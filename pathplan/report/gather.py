@@ -116,14 +116,18 @@ class Picture:
         return quantity if row < 0 else f"{self.names[row]} {quantity}"
 
 
-def picture_of(plan: Plan, *, buckets: int = BUCKETS, most: int = MOST_ROWS) -> Picture:
-    """The picture of a plan. `buckets`: half the points of a line; `most`: rows kept to be read one by one."""
+def picture_of(plan: Plan, *, buckets: int = BUCKETS, most: int = MOST_ROWS, tool: bool = True) -> Picture:
+    """The picture of a plan.
+
+    `buckets`: half the points of a line; `most`: rows kept to be read one by one; `tool`: whether the deviation from
+    the programmed path is wanted too.
+    """
     audit, rows = plan.audit, plan.ticks + 1
     gathering = _Gathering(plan.arm, audit, rows, plan, buckets, most)
     chunk = gathering.chunk
     whole = plan.__dict__.get("table")
     for piece in plan.rows(chunk) if whole is None else whole.chunks(chunk):
-        gathering.add(piece, deviations_of(plan, gathering.seen, len(piece)))
+        gathering.add(piece, deviations_of(plan, gathering.seen, len(piece)) if tool else None)
     return gathering.picture(plan.meta, plan.marks)
 
 
@@ -174,7 +178,7 @@ class _Gathering:
         self.arm, self.audit, self.rows, self.plan = arm, audit, rows, plan
         self.names, self.matrix = limit_rows(arm)
         self.caps = step_caps(arm, plan.task if plan else None)
-        self.size = bucket_size(rows, buckets)
+        self.size = bucket_size(rows, max(buckets, -(-rows // CHUNK)))  # a bucket never spans two chunks
         self.chunk = self.size * max(1, CHUNK // self.size)
         joints = [(r, quantity) for quantity in PACED[:4] for r in range(len(self.names))]
         self.labels = (*joints, *((-1, quantity) for quantity in PACED[4:]))

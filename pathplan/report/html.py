@@ -38,7 +38,7 @@ from pathplan.report.still import arm_still
 if TYPE_CHECKING:
     from pathplan.savings import Saving
 
-__all__ = ["SLOTS", "PageParts", "content_policy", "digests", "document", "page_parts", "report_html", "title_of"]
+__all__ = ["SLOTS", "PageParts", "asset", "content_policy", "digests", "document", "page_parts", "report_html", "title_of"]
 
 SCRIPTS = ("rows.js", "chain.js", "view.js", "scrub.js", "start.js")
 ABOVE = ("headline", "changes", "findings", "audit", "steps")
@@ -115,7 +115,7 @@ def document(
         tag("meta", name="pathplan-task", content=task_key(meta)),
         tag("link", rel="icon", href="data:,"),
         tag("title", esc(title)),
-        f"<style>{asset('page.css')}</style>",
+        f"<style>{style_text()}</style>",
     ]
     known = digests(parts)
     slots = {name: tag("div", parts.get(name, ""), data_slot=name, data_digest=known.get(name)) for name in SLOTS}
@@ -150,12 +150,18 @@ def content_policy(*, live: bool) -> str:
     rules = [
         "default-src 'none'",
         f"script-src {_hash(script_text(live=live))}",
-        f"style-src {_hash(asset('page.css'))}",
+        f"style-src {_hash(style_text())}",
         "img-src data:",
         "base-uri 'none'",
         "form-action 'none'",
     ]
     return "; ".join([*rules, *(["connect-src 'self'"] if live else [])])
+
+
+@cache
+def style_text() -> str:
+    """Colours and plots, which still pictures use too, and the rest of the page."""
+    return asset("plot.css") + asset("page.css")
 
 
 @cache
