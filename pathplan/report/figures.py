@@ -16,6 +16,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from pathplan.errors import InputError
+from pathplan.report.files import DRAWINGS
 from pathplan.report.gather import PACED, Picture, picture_of, picture_of_table
 from pathplan.report.plots import LETTERS, Lane, quantity_lanes, tool_lanes
 from pathplan.report.text import printable
@@ -51,7 +52,6 @@ BLUE, VERMILLION, PURPLE = "#0072B2", "#D55E00", "#CC79A7"
 COLOURS = dict(zip(PACED, (BLUE, ORANGE, GREEN, PURPLE, SKY, YELLOW), strict=True))
 HATCHES = dict(zip(PACED, ("", "///", "..", "--", "||", "xx"), strict=True))
 MUTED, RULE, SHADE = "#565c64", "#c9cbc6", "#f0f0ec"
-SUFFIXES = (".png", ".svg", ".pdf")
 POINTS = 2000  # half the points of a line
 WIDTH = 10.0  # inches
 MOST_STEPS = 2000
@@ -196,11 +196,14 @@ KINDS: Mapping[str, Callable[..., Figure]] = {
 """Every kind of figure by its name on the command line."""
 
 
-def draw(kind: str, source: Plan | JointTable, arm: Arm | None = None) -> Figure:
-    """A figure by the name of its kind. Raises InputError for an unknown one, and where there is nothing to draw."""
+def draw(kind: str, source: Plan | JointTable | Picture, arm: Arm | None = None, **options: Any) -> Figure:
+    """A figure by the name of its kind, with the options of that kind.
+
+    Raises InputError for an unknown kind, and where there is nothing to draw.
+    """
     if kind not in KINDS:
         raise InputError(f"kind: expected one of {', '.join(KINDS)}, got {kind}")
-    return KINDS[kind](source, arm)
+    return KINDS[kind](source, arm, **options)
 
 
 def save(figure: Figure, file: str | Path, *, note: str = "") -> None:
@@ -214,8 +217,9 @@ def save(figure: Figure, file: str | Path, *, note: str = "") -> None:
 
     file = Path(file)
     kind = file.suffix.lower()
-    if kind not in SUFFIXES:
-        raise InputError.at(str(file), f"unknown kind of figure: expected {', '.join(SUFFIXES)}, got {file.suffix!r}")
+    if kind not in DRAWINGS:
+        got = f'"{file.suffix}"' if file.suffix else "none"
+        raise InputError.at(str(file), f"unknown kind of figure: expected {' or '.join(DRAWINGS)}, got {got}")
     record = {
         ".png": {"Software": "pathplan", "Comment": note},
         ".svg": {"Creator": "pathplan", "Description": note, "Date": None},
@@ -347,8 +351,8 @@ def _step_names(axes: Axes, picture: Picture, room: float = 1.0) -> None:
 
 def _above(axes: Axes, time: float, points: float, text: str, **how: Any) -> None:
     """A text so many points above the axes, at a time."""
-    shift: dict[str, Any] = {"xytext": (0, points), "textcoords": "offset points"}
-    axes.annotate(text, (time, 1.0), xycoords=axes.get_xaxis_transform(), **shift, fontsize=7, va="bottom", parse_math=False, **how)
+    how |= {"xycoords": axes.get_xaxis_transform(), "xytext": (0, points), "textcoords": "offset points"}
+    axes.annotate(text, (time, 1.0), fontsize=7, va="bottom", parse_math=False, **how)
 
 
 def _strip(axes: Axes, picture: Picture) -> None:

@@ -16,10 +16,11 @@ if TYPE_CHECKING:
     from pathplan.planning import Plan
     from pathplan.savings import Saving
 
-__all__ = ["check_picture", "note_of", "write_report"]
+__all__ = ["DRAWINGS", "PAGES", "check_picture", "note_of", "save_page", "write_report"]
 
 LARGEST = 1 << 28  # bytes of an earlier file that are read to see whose it is
 PAGES = (".html", ".htm")
+DRAWINGS = (".png", ".svg", ".pdf")
 TAKEN = "exists and is no earlier picture of this task: choose another name or ask to overwrite"
 
 
@@ -34,7 +35,11 @@ def write_report(
     """
     file = Path(file)
     check_picture(file, plan.meta, PAGES, overwrite=overwrite)
-    text = report_html(picture_of(plan), savings)
+    save_page(report_html(picture_of(plan), savings), file)
+
+
+def save_page(text: str, file: Path) -> None:
+    """Write a page, whole or not at all."""
     with saving(file) as stream:
         stream.write(text.encode())
 

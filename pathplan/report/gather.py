@@ -192,10 +192,10 @@ class _Gathering:
         self.paced = audit.measured == "columns"
 
     def _wanted(self, most: int) -> Integers:
-        """Numbers of the rows to keep."""
+        """Numbers of the rows to keep, the first and the last always among them."""
         if self.rows <= most:
             return np.arange(self.rows)
-        rows = {0, self.rows - 1}
+        rows: set[int] = set()
         for joint in (*self.audit.joints, *self.audit.rows):
             rows |= {peak.row for peak in joint.peaks().values()}
         rows |= {peak.row for peak in (self.audit.tool_speed, self.audit.tool_acceleration) if peak is not None}
@@ -203,7 +203,7 @@ class _Gathering:
             rows |= {mark.row for mark in self.plan.marks} | {part.last for part in self.plan.parts}
         few = np.array(sorted(rows)[:most], dtype=np.int64)
         stride = -(-self.rows // max(1, most - len(few)))
-        return np.union1d(np.arange(0, self.rows, stride), few)
+        return np.union1d(np.arange(0, self.rows, stride), np.append(few, self.rows - 1))
 
     def add(self, table: JointTable, deviations: Array | None) -> None:
         """The next rows; deviations (N, 2) where a plan tells them."""

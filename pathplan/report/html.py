@@ -38,7 +38,18 @@ from pathplan.report.still import arm_still
 if TYPE_CHECKING:
     from pathplan.savings import Saving
 
-__all__ = ["SLOTS", "PageParts", "asset", "content_policy", "digests", "document", "page_parts", "report_html", "title_of"]
+__all__ = [
+    "SLOTS",
+    "PageParts",
+    "asset",
+    "content_policy",
+    "digests",
+    "document",
+    "page_parts",
+    "report_html",
+    "task_key",
+    "title_of",
+]
 
 SCRIPTS = ("rows.js", "chain.js", "view.js", "scrub.js", "start.js")
 ABOVE = ("headline", "changes", "findings", "audit", "steps")

@@ -28,7 +28,7 @@ SHORT = {"acceleration": "accel."}
 
 
 def signs_for(stream: Any) -> Signs | None:
-    """What a stream can show: blocks on a terminal whose encoding has them, else ASCII; None where it is no terminal."""
+    """What a stream can show: blocks on a terminal whose encoding has them, else ASCII; None if it is no terminal."""
     try:
         if stream is None or not stream.isatty() or os.environ.get("TERM") == "dumb":
             return None
@@ -43,8 +43,8 @@ def signs_for(stream: Any) -> Signs | None:
 def terminal_picture(plan: Plan, signs: Signs) -> Iterator[str]:
     """A line a joint, at most 100 columns: its largest share of any limit, and along the cycle where it sets the pace.
 
-    The height of a sign in the strip is the part of its time in which the joint paces. Nothing for a plan whose rows are
-    too many to be held.
+    The height of a sign in the strip is the part of its time in which the joint paces. Nothing for a plan whose rows
+    are too many to be held.
     """
     if plan.ticks >= WHOLE:  # the rows would have to be evaluated once more
         return
