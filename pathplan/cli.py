@@ -73,9 +73,9 @@ examples:
   pathplan audit pick.csv --arm robots/glazer6.toml --tool cup
       judge a table against an arm; without --arm the arm file that it names is taken from beside it
   pathplan audit pick.csv --arm robots/glazer6.toml --quiet && echo within limits
-  pathplan audit logged.csv --arm robots/loader4.toml --time "t [ms]" --columns "A1=x, A2=y, A3=z, A4=wrist"
+  pathplan audit log.csv --arm loader4.toml --time t_ms --columns "A1=x, A2=y, A3=z, A4=wrist"
       a table of another source; names such as wrist_deg, x_mm, wrist_deg_s or t_ms are recognised
-  pathplan audit logged.npz --arm robots/glazer6.toml --unit "rad, s" --task pick.toml
+  pathplan audit log.npz --arm robots/glazer6.toml --unit "rad, s" --task pick.toml
       columns that tell no unit; and whether the table passes every target of a task
   pathplan audit --from "500 -300 400 180 0 0" --to "580 300 300 180 0 30" --arm robots/glazer6.toml
       a straight line from pose to pose, x y z in mm and turns about x, y, z in deg
@@ -84,8 +84,9 @@ examples:
 EXPORT = """\
 Write a table as another kind of file (.csv, .jsonl, .parquet: mm and deg, or as chosen; .npz: SI,
 exact), or plan a task and write its table. With --cycle a task's rows are evaluated anew from its
-timing; a table's rows are never interpolated. A table is judged against its arm first: that of --arm, or the arm file that it names if
-that lies beside it. Without an arm it is converted as it is, and the screen says so."""
+timing; a table's rows are never interpolated. A table is judged against its arm first: that of
+--arm, or the arm file that it names if that lies beside it. Without an arm it is converted as it is,
+and the screen says so."""
 EXPORT_EXAMPLES = """\
 examples:
   pathplan export pick.csv -o pick.npz --arm robots/glazer6.toml
@@ -170,6 +171,9 @@ def _parser() -> argparse.ArgumentParser:
     _screen_options(plan)
 
     audit = command("audit", _run_audit, AUDIT, AUDIT_EXAMPLES, "judge a task's plan, a table or a line")
+    audit.usage = (
+        "pathplan audit [options] TASK|TABLE\n       pathplan audit [options] --from PLACE --to PLACE --arm ARM"
+    )
     audit.add_argument("file", metavar="TASK|TABLE", nargs="?", help="task (.toml), or table of any source")
     _planning_options(audit)
     _arm_options(audit)
@@ -184,6 +188,7 @@ def _parser() -> argparse.ArgumentParser:
     _screen_options(audit)
 
     export = command("export", _run_export, EXPORT, EXPORT_EXAMPLES, "write another kind of file")
+    export.usage = "pathplan export [options] TASK|TABLE -o FILE [-o FILE ...]"
     export.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table of any source")
     export.add_argument("-o", dest="output", metavar="FILE", action="append", required=True,
                         help="file to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
@@ -214,7 +219,6 @@ def _picture_commands(command: Any) -> None:
             is_table=_is_table,
             judged=_judged,
             check_rows=_check_rows,
-            quantity=_quantity,
             show=_print,
             show_json=lambda document: _print(_json({"pathplan": _version(), **document})),
             status=_status,
@@ -407,6 +411,7 @@ def _check_rows(plan: Plan, file: str) -> None:
 def _plan_text(args: argparse.Namespace, plan: Plan, jobs: Sequence[Job], audit_file: Path | None) -> str:
     from pathplan.report.plan_screen import plan_headline, plan_screen
     from pathplan.report.screen import audit_screen
+    from pathplan.report.terminal import signs_for
     from pathplan.report.written import pieces_note, written_lines
 
     if args.run is _run_audit:
@@ -416,7 +421,7 @@ def _plan_text(args: argparse.Namespace, plan: Plan, jobs: Sequence[Job], audit_
         lines += [note] if (note := pieces_note([Path(name) for name in args.output], len(plan.timings))) else []
     written = "\n".join(lines)
     if args.run is _run_plan:
-        return f"{plan_screen(plan)}\n\n{written}"
+        return f"{plan_screen(plan, signs_for(sys.stdout))}\n\n{written}"
     return f"{plan_headline(plan)}\n{written}"
 
 
@@ -432,8 +437,8 @@ def _is_table(args: argparse.Namespace) -> bool:
     if args.cycle and args.run is _run_export:
         complaint = "rows of a table are never interpolated: export the task it comes from with --cycle"
         raise InputError(f"argument --cycle: {complaint}")
-    unfit = ("pace", "cycle") if args.run is _run_audit else ("speed", "reduced_speed", "pace")
-    for option in unfit:
+    capped = args.run is _run_audit  # which judges a table against a cap on the tool speed too
+    for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "pace", "cycle"):
         if getattr(args, option):
             raise InputError(f"argument --{option.replace('_', '-')}: only for a task, {args.file} is a table")
     return True

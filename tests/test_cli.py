@@ -592,11 +592,11 @@ def test_ctrl_c_in_the_middle_of_writing(folder, home, run, monkeypatch, earlier
             shutil.copy(home / name, folder)
     before = {name: (folder / name).read_bytes() for name in made(folder)}
 
-    def cut(plan, tell):
-        yield plan.table.part(0, 100)
+    def cut(pieces, tell, done, total):
+        yield next(pieces).part(0, 100)
         raise KeyboardInterrupt
 
-    monkeypatch.setattr("pathplan.report.outputs._pieces", cut)
+    monkeypatch.setattr("pathplan.report.outputs._told", cut)
     assert run("plan", "cross.toml", "--pace", "50 %") == (130, "", [])
     assert {name: (folder / name).read_bytes() for name in made(folder)} == before
 
