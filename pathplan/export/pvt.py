@@ -25,8 +25,8 @@ if TYPE_CHECKING:
 
 __all__ = ["Pvt", "pvt_of_plan", "pvt_of_table", "rounded_up"]
 
-DENSE = 16
-A_CYCLE = 4
+DENSE = 32
+A_CYCLE = 8
 PIECE = 65_536  # instants evaluated at once: bounds memory
 MOST_CYCLES = 100_000  # of a period
 MOST_ROWS_PIECE = 16_384
@@ -143,7 +143,10 @@ def _motion(plan: Plan, instants: Array) -> tuple[Array, Array, Any]:
     q, v, step = np.empty((len(instants), n)), np.empty((len(instants), n)), np.empty(len(instants), dtype=np.int64)
     for k in np.unique(owner):
         at, part = np.flatnonzero(owner == k), plan.parts[k]
-        values = evaluate(part, (inside[at] - part.first) * plan.task.cycle, n)
+        local, cycle = inside[at] - part.first, plan.task.cycle
+        ticks = np.rint(local)  # on ticks the very times of the plan's own rows
+        times = np.where(local == ticks, tick_times(ticks.astype(np.int64), cycle), local * cycle)
+        values = evaluate(part, times, n)
         q[at], v[at], step[at] = values.position, values.velocity, values.step
     return q, v, step
 

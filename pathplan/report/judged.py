@@ -27,6 +27,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Judged", "Judging", "first_exceedance", "judge_file", "judged_as_dict", "judged_screen"]
 
+TOUCHES = 1e-9  # m or rad: nearer than this is there
 MOST_TARGETS = 40  # lines of targets shown; the rest is in --json
 
 
@@ -224,7 +225,7 @@ def _targets(judged: Judged) -> list[str]:
     table = [["step", "", "target", "row", "at", "distance", "angle", "furthest joint"]]
     for target in judged.passes[:MOST_TARGETS]:
         off, unit = _off(target, judged)
-        near = target.distance <= 1e-6 and target.angle <= 1e-6
+        near = target.distance <= TOUCHES and target.angle <= TOUCHES
         joint = "-" if target.joint is None or near else f"{printable(target.joint)} {format_value(off, 3)} {unit}"
         said = "fly-by" if target.kind == "fly-by" else "passed"
         table.append(
@@ -234,12 +235,12 @@ def _targets(judged: Judged) -> list[str]:
                 said if target.passed else "MISSED",
                 str(target.row + 1),
                 clock(target.time),
-                format_quantity(target.distance, "length", 3),
-                format_quantity(target.angle, "angle", 3),
+                format_quantity(target.distance if target.distance > TOUCHES else 0.0, "length", 3),
+                format_quantity(target.angle if target.angle > TOUCHES else 0.0, "angle", 3),
                 joint,
             ]
         )
-    lines = list(aligned(table, [5, 22, 8, 9, 12, 12, 12, 20], left=(1, 2, 7)))
+    lines = list(aligned(table, [5, 20, 7, 8, 11, 11, 11, 24], left=(1, 2, 7)))
     if len(judged.passes) > MOST_TARGETS:
         lines.append(f"... and {len(judged.passes) - MOST_TARGETS} more targets, all of them in --json")
     return lines

@@ -53,7 +53,7 @@ def _head(line: LineAudit) -> Iterator[str]:
     yield f"{clock(plan.motion_time)} in motion; {plan.ticks + 1} rows at {format_value(plan.task.cycle * 1e3)} ms"
     if line.starts > 1:
         values = ", ".join(
-            format_quantity(float(q), joint_dimension(joint.kind, "position"), 4)
+            format_quantity(round(float(q), 9), joint_dimension(joint.kind, "position"), 4)
             for q, joint in zip(plan.task.start, arm.joints, strict=True)
         )
         yield f"{line.able} of {line.starts} configurations at the start can follow it; shown is the fastest, from"
