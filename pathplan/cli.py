@@ -15,16 +15,17 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn, TextIO
 
+from pathplan import arguments
 from pathplan.errors import InputError, PathplanError
 
 if TYPE_CHECKING:
     from pathplan.planning import Plan
     from pathplan.report.judged import Judged
+    from pathplan.report.outputs import Job
     from pathplan.task import Task
 
 __all__ = ["main"]
 
-REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
 OUR_ERROR, INTERRUPTED = 70, 130  # sysexits.h; 128 + SIGINT, as shells count
 
 ABOUT = """\
@@ -40,6 +41,8 @@ examples:
   pathplan plan pick.toml                      plan the task, show what it takes, write pick.csv
   pathplan audit pick.csv --arm glazer6.toml   judge a table against the limits of an arm
   pathplan export pick.csv -o pick.npz         write a table as another kind of file
+  pathplan report pick.toml                    write a report to sign, as one HTML file
+  pathplan watch pick.toml                     a live page that follows the task as it is edited
   pathplan plan --help                         more on one command, with examples
 
 """
@@ -61,7 +64,8 @@ examples:
 """
 AUDIT = """\
 Judge a motion against the limits of its arm: position, velocity, acceleration, jerk and torque of
-every joint. A task (.toml) is planned first; a table (.csv, .npz) is read. Nothing is written."""
+every joint. A task (.toml) is planned first; a table (.csv, .jsonl, .npz, .parquet) is read, of any
+source if its columns can be told; a single line needs no file. Nothing is written."""
 AUDIT_EXAMPLES = """\
 examples:
   pathplan audit pick.toml
@@ -69,16 +73,29 @@ examples:
   pathplan audit pick.csv --arm robots/glazer6.toml --tool cup
       judge a table against an arm; without --arm the arm file that it names is taken from beside it
   pathplan audit pick.csv --arm robots/glazer6.toml --quiet && echo within limits
+  pathplan audit log.csv --arm loader4.toml --time t_ms --columns "A1=x, A2=y, A3=z, A4=wrist"
+      a table of another source; names such as wrist_deg, x_mm, wrist_deg_s or t_ms are recognised
+  pathplan audit log.npz --arm robots/glazer6.toml --unit "rad, s" --task pick.toml
+      columns that tell no unit; and whether the table passes every target of a task
+  pathplan audit --from "500 -300 400 180 0 0" --to "580 300 300 180 0 30" --arm robots/glazer6.toml
+      a straight line from pose to pose, x y z in mm and turns about x, y, z in deg
 
 """
 EXPORT = """\
-Write a table as another kind of file (.csv: mm and deg; .npz: SI, exact), or plan a task and write
-its table. A table is judged against its arm first: that of --arm, or the arm file that it names if
-that lies beside it. Without an arm it is converted as it is, and the screen says so."""
+Write a table as another kind of file (.csv, .jsonl, .parquet: mm and deg, or as chosen; .npz: SI,
+exact), or plan a task and write its table. With --cycle a task's rows are evaluated anew from its
+timing; a table's rows are never interpolated. A table is judged against its arm first: that of --arm,
+or the arm file that it names if that lies beside it. Without an arm it is converted as it is, and the
+screen says so."""
 EXPORT_EXAMPLES = """\
 examples:
   pathplan export pick.csv -o pick.npz --arm robots/glazer6.toml
   pathplan export pick.toml -o pick.csv -o pick.npz
+  pathplan export pick.toml -o pick.parquet --cycle "1 ms" --write-units "rad, m"
+  pathplan export pick.toml -o pick.csv --write-columns "velocity, torque" --split stretch
+      one file a stretch, from stop to stop: pick-1.csv, pick-2.csv, ...
+  pathplan export pick.toml -o pick.pvt.csv --pvt "20 ms"
+      position and velocity at a coarser period; the error of interpolation is stated
 
 """
 
@@ -147,27 +164,66 @@ def _parser() -> argparse.ArgumentParser:
     plan = command("plan", _run_plan, PLAN, PLAN_EXAMPLES, "plan a task, audit it, write its table")
     plan.add_argument("file", metavar="TASK", help="task file (.toml)")
     plan.add_argument("-o", dest="output", metavar="FILE", action="append", default=[],
-                      help="table to write (.csv or .npz); may be repeated")  # fmt: skip
+                      help="table to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
     plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
     _planning_options(plan)
     _writing_options(plan)
     _screen_options(plan)
 
-    audit = command("audit", _run_audit, AUDIT, AUDIT_EXAMPLES, "judge a task's plan, or a table")
-    audit.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table (.csv, .npz)")
+    audit = command("audit", _run_audit, AUDIT, AUDIT_EXAMPLES, "judge a task's plan, a table or a line")
+    audit.usage = (
+        "pathplan audit [options] TASK|TABLE\n       pathplan audit [options] --from PLACE --to PLACE --arm ARM"
+    )
+    audit.add_argument("file", metavar="TASK|TABLE", nargs="?", help="task (.toml), or table of any source")
     _planning_options(audit)
     _arm_options(audit)
+    _reading_options(audit)
+    group = audit.add_argument_group("targets of a task in a table")
+    group.add_argument("--task", metavar="TASK", help="whether the table passes every target of this task")
+    group.add_argument("--near", metavar="SIZE", help='how near, "0.5 mm, 0.1 deg" (default 0.1 mm, 0.1 deg)')
+    group = audit.add_argument_group("a single line without a file")
+    place = '"x y z rx ry rz" in mm and deg, "joints ..." or the name of a position'
+    group.add_argument("--from", dest="start", metavar="PLACE", help=f"where it starts: {place}")
+    group.add_argument("--to", dest="goal", metavar="PLACE", help="where it ends")
     _screen_options(audit)
 
     export = command("export", _run_export, EXPORT, EXPORT_EXAMPLES, "write another kind of file")
-    export.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table (.csv, .npz)")
+    export.usage = "pathplan export [options] TASK|TABLE -o FILE [-o FILE ...]"
+    export.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table of any source")
     export.add_argument("-o", dest="output", metavar="FILE", action="append", required=True,
-                        help="file to write (.csv or .npz); may be repeated")  # fmt: skip
+                        help="file to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
     _planning_options(export)
     _arm_options(export)
-    _writing_options(export)
+    _reading_options(export)
+    group = _writing_options(export)
+    group.add_argument("--write-units", metavar="UNITS", help='"rad, m" in place of "deg, mm"')
+    group.add_argument("--write-columns", metavar="NAMES",
+                       help="of velocity, acceleration, jerk, torque, pose, tool_speed only these")  # fmt: skip
+    group.add_argument("--pvt", metavar="PERIOD", help='position and velocity at a coarser period, "20 ms"')
+    group.add_argument("--split", choices=["stretch"], help="one file for each stretch from stop to stop")
     _screen_options(export)
+    _picture_commands(command)
     return parser
+
+
+def _picture_commands(command: Any) -> None:
+    from pathplan.picture_commands import Shell, add_picture_commands
+
+    add_picture_commands(
+        Shell(
+            command=command,
+            planning_options=_planning_options,
+            arm_options=_arm_options,
+            screen_options=_screen_options,
+            task=_task,
+            is_table=_is_table,
+            judged=_judged,
+            check_rows=_check_rows,
+            show=_print,
+            show_json=lambda document: _print(_json({"pathplan": _version(), **document})),
+            status=_status,
+        )
+    )
 
 
 def _planning_options(parser: argparse.ArgumentParser) -> None:
@@ -179,7 +235,7 @@ def _planning_options(parser: argparse.ArgumentParser) -> None:
     group.add_argument("--pace", metavar="SHARE",
                        help='slow the whole motion in time, "50 %%": speeds by it, accelerations by its square, '
                        "jerks by its cube")  # fmt: skip
-    group.add_argument("--cycle", metavar="TIME", help='the controller\'s cycle in place of the task\'s, "2 ms"')
+    group.add_argument("--cycle", metavar="TIME", help="the controller's cycle in place of the task's, \"2 ms\"")
 
 
 def _arm_options(parser: argparse.ArgumentParser) -> None:
@@ -188,12 +244,21 @@ def _arm_options(parser: argparse.ArgumentParser) -> None:
     group.add_argument("--tool", metavar="NAME", help="tool of the arm that is carried")
 
 
-def _writing_options(parser: argparse.ArgumentParser) -> None:
+def _reading_options(parser: argparse.ArgumentParser) -> None:
+    group = parser.add_argument_group("how a table of another source is read")
+    group.add_argument("--time", metavar="NAME|TIME",
+                       help='its column of time; or the time from row to row, "4 ms", if it has none')  # fmt: skip
+    group.add_argument("--columns", metavar="PAIRS", help='"NAME=joint, NAME=joint velocity, ..."')
+    group.add_argument("--unit", metavar="UNITS", help='of columns that tell none: "deg, mm, ms"')
+
+
+def _writing_options(parser: argparse.ArgumentParser) -> argparse._ArgumentGroup:
     group = parser.add_argument_group("writing")
     group.add_argument("--overwrite", action="store_true",
                        help="replace files even if they are no earlier output of the same task")  # fmt: skip
     group.add_argument("--write-anyway", action="store_true",
                        help="write a table that breaks limits; its header says so")  # fmt: skip
+    return group
 
 
 def _screen_options(parser: argparse.ArgumentParser) -> None:
@@ -207,7 +272,7 @@ def _screen_options(parser: argparse.ArgumentParser) -> None:
 
 def _no_command(args: argparse.Namespace) -> int:
     if not args.version:
-        raise InputError("expected a command: plan, audit or export (see pathplan --help)")
+        raise InputError("expected a command: plan, audit, export, report, watch or figure (see pathplan --help)")
     _print(f"pathplan {_version()}")
     return 0
 
@@ -220,6 +285,8 @@ def _run_plan(args: argparse.Namespace) -> int:
 
 
 def _run_audit(args: argparse.Namespace) -> int:
+    if args.file is None or args.start is not None or args.goal is not None:
+        return _audit_line(args)
     if not _is_table(args):
         return _plan_and_write(args, [])
     judged = _judged(args)
@@ -229,22 +296,45 @@ def _run_audit(args: argparse.Namespace) -> int:
     return _status(args.file, judged.breaks, "")
 
 
+def _audit_line(args: argparse.Namespace) -> int:
+    """A single line, planned and judged without a file."""
+    if args.file is not None:
+        raise InputError(f"arguments --from and --to: a single line takes no file, got {args.file}")
+    if args.start is None and args.goal is None:
+        raise InputError(f"the following arguments are required: TASK|TABLE (see {args.prog} --help)")
+    from pathplan.report.judged import first_exceedance
+    from pathplan.report.line_screen import line_as_dict, line_screen
+    from pathplan.report.progress import Progress
+
+    with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
+        tell("line", 0, 1)
+        line = arguments.line_audit(args)
+        audit = line.plan.audit
+    if args.json:
+        _print(_json({"pathplan": _version(), **line_as_dict(line)}))
+    elif not args.quiet:
+        _print(line_screen(line))
+    return 0 if audit.passed else _status("line", first_exceedance(audit), "")
+
+
 def _run_export(args: argparse.Namespace) -> int:
     if not _is_table(args):
         return _plan_and_write(args, args.output)
-    from pathplan import write_table
-    from pathplan.report.outputs import check_outputs, marked
+    from pathplan.report.outputs import check_jobs, check_outputs, jobs_of_table, marked, write_jobs
+    from pathplan.report.progress import Progress
 
+    writing = arguments.writing(args)
     judged = _judged(args)
     outputs = [Path(name) for name in args.output]
-    check_outputs(outputs, None, judged.table.meta, overwrite=args.overwrite)
-    for output in outputs:
-        if output.exists() and output.samefile(args.file):
-            raise InputError.at(str(output), "is the table that is read: choose another name")
-    table = marked(judged.table) if judged.breaks else judged.table
-    written = [] if judged.breaks and not args.write_anyway else outputs
-    for output in written:
-        write_table(table, output, overwrite=args.overwrite)
+    check_outputs(outputs, None, judged.table.meta, writing)
+    jobs = jobs_of_table(marked(judged.table) if judged.breaks else judged.table, outputs, writing)
+    check_jobs(jobs, judged.table.meta, writing)
+    for job in jobs:
+        if job.file.exists() and job.file.samefile(args.file):
+            raise InputError.at(str(job.file), "is the table that is read: choose another name")
+    written = [] if judged.breaks and not args.write_anyway else jobs
+    with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
+        write_jobs(written, writing, tell)
     _show_judged(args, judged, written)
     return _status(args.file, judged.breaks, ": written all the same" if written else ": not written")
 
@@ -255,86 +345,58 @@ def _run_export(args: argparse.Namespace) -> int:
 def _task(args: argparse.Namespace) -> Task:
     """The task of a file with what the command line changes of it."""
     from pathplan import load_task
-    from pathplan.task.load import CYCLES
 
-    for option in ("arm", "tool"):
+    for option in ("arm", "tool", "task", "near", "time", "columns", "unit"):
         if getattr(args, option, None) is not None:
-            raise InputError(f"argument --{option}: only for a table, a task names its own")
-    changes: dict[str, Any] = {}
-    speed = REDUCED_SPEED if args.reduced_speed else _quantity(args.speed, "speed", "--speed")
-    if speed is not None and speed <= 0:
-        raise _refused("--speed", 'a speed above zero such as "250 mm/s"', args.speed)
-    pace = _quantity(args.pace, "ratio", "--pace")
-    if pace is not None:
-        if not 0 < pace <= 1:
-            raise _refused("--pace", 'more than 0 % and at most 100 %, such as "50 %"', args.pace)
-        changes["pace"] = pace
-    cycle = _quantity(args.cycle, "time", "--cycle")
-    if cycle is not None:
-        if not CYCLES[0] <= cycle <= CYCLES[1]:
-            raise _refused("--cycle", "a time from 50 us to 1 s", args.cycle)
-        changes["cycle"] = cycle
+            more = ", a task names its own" if option in ("arm", "tool") else ""
+            raise InputError(f"argument --{option}: only for a table{more}")
+    speed, pace, cycle = arguments.speed_cap(args), arguments.pace(args), arguments.cycle(args)
+    changes: dict[str, Any] = {"pace": pace} if pace is not None else {}
+    changes |= {"cycle": cycle} if cycle is not None else {}
     task = load_task(args.file)
     if speed is not None:  # the task's own cap stays where it is the lower
         changes["speed"] = speed if task.speed is None else min(speed, task.speed)
     return dataclasses.replace(task, **changes)
 
 
-def _quantity(text: str | None, dimension: str, option: str) -> float | None:
-    """An option in SI. A bare number is in the unit of task files: mm/s, s."""
-    from pathplan.units import parse_quantity
-
-    if text is None:
-        return None
-    with contextlib.suppress(ValueError):
-        if dimension != "ratio":  # 50 could be meant as 50 % or as 50 times
-            return parse_quantity(float(text), dimension, option)
-    return parse_quantity(text, dimension, option)
-
-
-def _refused(option: str, expected: str, got: str) -> InputError:
-    from pathplan.units import toml_text
-
-    return InputError.at(option, f"expected {expected}, got {toml_text(got)}")
-
-
 def _plan_and_write(args: argparse.Namespace, names: Sequence[str]) -> int:
     """Plan, audit, write tables and the audit beside the first; without names, nothing."""
     import pathplan
-    from pathplan.report.outputs import WHOLE, audit_name, check_outputs, write_plan
+    from pathplan.report import outputs as files
     from pathplan.report.plan_data import plan_as_dict
     from pathplan.report.progress import Progress
+    from pathplan.report.written import written_as_dict
 
-    task = _task(args)
-    overwrite, anyway = getattr(args, "overwrite", False), getattr(args, "write_anyway", False)
+    writing, task = arguments.writing(args), _task(args)
     outputs = [Path(name) for name in names]
-    audit_file = audit_name(outputs[0]) if outputs else None
+    audit_file = files.audit_name(outputs[0]) if outputs else None
     meta = {"task": task.title, "task_file": Path(args.file).name}
-    check_outputs(outputs, audit_file, meta, overwrite=overwrite)
+    files.check_outputs(outputs, audit_file, meta, writing)
     left = [output for output in outputs if output.exists()]
     with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
         plan = pathplan.plan(task, progress=tell)
         _check_rows(plan, args.file)
         tell("audit", 0, 1)
-        if plan.ticks < WHOLE:
+        if plan.ticks < files.WHOLE:
             plan.table  # noqa: B018  # evaluated once, then kept for the audit and the files
-        tables = outputs if plan.audit.passed or anyway else []
-        files = {"tables": list(map(str, tables)), "audit": None if audit_file is None else str(audit_file)}
-        document = {"pathplan": _version(), **plan_as_dict(plan), "files": files}
+        may = plan.audit.passed or getattr(args, "write_anyway", False)
+        jobs = files.jobs_of_plan(plan, outputs, writing) if outputs and may else []
+        files.check_jobs(jobs, meta, writing)
+        document = {"pathplan": _version(), **plan_as_dict(plan), **written_as_dict(jobs, audit_file)}
         if audit_file is not None:
-            write_plan(plan, tables, audit_file, document, overwrite=overwrite, tell=tell)
+            files.write_jobs(jobs, writing, tell, audit=(audit_file, document))
     if args.json:
         _print(_json(document))
     elif not args.quiet:
-        _print(_plan_text(args, plan, tables, audit_file))
+        _print(_plan_text(args, plan, jobs, audit_file))
     if plan.audit.passed:
         return 0
     from pathplan.report.judged import first_exceedance
 
     more = ""
     if outputs:
-        more = ": written all the same" if tables else ": no table written"
-        more += f", {', '.join(map(str, left))} is of an earlier plan" if left and not tables else ""
+        more = ": written all the same" if jobs else ": no table written"
+        more += f", {', '.join(map(str, left))} is of an earlier plan" if left and not jobs else ""
     return _status(args.file, first_exceedance(plan.audit), more)
 
 
@@ -346,16 +408,20 @@ def _check_rows(plan: Plan, file: str) -> None:
         raise InputError.at(file, complaint)
 
 
-def _plan_text(args: argparse.Namespace, plan: Plan, tables: Sequence[Path], audit_file: Path | None) -> str:
-    from pathplan.report.judged import written_line
+def _plan_text(args: argparse.Namespace, plan: Plan, jobs: Sequence[Job], audit_file: Path | None) -> str:
     from pathplan.report.plan_screen import plan_headline, plan_screen
     from pathplan.report.screen import audit_screen
+    from pathplan.report.terminal import signs_for
+    from pathplan.report.written import pieces_note, written_lines
 
     if args.run is _run_audit:
         return audit_screen(plan.audit)
-    written = written_line(tables, plan.ticks + 1, audit_file)
+    lines = written_lines(jobs, audit_file)
+    if getattr(args, "split", None) and jobs:
+        lines += [note] if (note := pieces_note([Path(name) for name in args.output], len(plan.timings))) else []
+    written = "\n".join(lines)
     if args.run is _run_plan:
-        return f"{plan_screen(plan)}\n\n{written}"
+        return f"{plan_screen(plan, signs_for(sys.stdout))}\n\n{written}"
     return f"{plan_headline(plan)}\n{written}"
 
 
@@ -363,11 +429,16 @@ def _plan_text(args: argparse.Namespace, plan: Plan, tables: Sequence[Path], aud
 
 
 def _is_table(args: argparse.Namespace) -> bool:
+    from pathplan.export.foreign import SUFFIXES
     from pathplan.export.kinds import kinds
 
-    if Path(args.file).suffix.lower() not in kinds():
+    if Path(args.file).suffix.lower() not in (*kinds(), *SUFFIXES):
         return False
-    for option in ("speed", "reduced_speed", "pace", "cycle"):
+    if args.cycle and args.run is _run_export:
+        complaint = "rows of a table are never interpolated: export the task it comes from with --cycle"
+        raise InputError(f"argument --cycle: {complaint}")
+    capped = args.run is _run_audit  # which judges a table against a cap on the tool speed too
+    for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "pace", "cycle"):
         if getattr(args, option):
             raise InputError(f"argument --{option.replace('_', '-')}: only for a task, {args.file} is a table")
     return True
@@ -377,18 +448,19 @@ def _judged(args: argparse.Namespace) -> Judged:
     from pathplan.report.judged import judge_file
     from pathplan.report.progress import Progress
 
+    how = arguments.judging(args)
     with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
         tell("audit", 0, 1)
-        return judge_file(args.file, args.arm, args.tool)
+        return judge_file(args.file, how)
 
 
-def _show_judged(args: argparse.Namespace, judged: Judged, written: Sequence[Path] | None) -> None:
+def _show_judged(args: argparse.Namespace, judged: Judged, jobs: Sequence[Job] | None) -> None:
     from pathplan.report.judged import judged_as_dict, judged_screen
 
     if args.json:
-        _print(_json({"pathplan": _version(), **judged_as_dict(judged, written or ())}))
+        _print(_json({"pathplan": _version(), **judged_as_dict(judged, jobs or ())}))
     elif not args.quiet:
-        _print(judged_screen(judged, written))
+        _print(judged_screen(judged, jobs))
 
 
 # Streams

@@ -125,6 +125,12 @@ class Plan:
 
         return find_savings(self, top=top)
 
+    def _repr_html_(self) -> str:
+        """For notebooks: a summary and a picture."""
+        from pathplan.report.notebook import plan_html
+
+        return plan_html(self)
+
     def _rows(self, ticks: NDArray[np.int64]) -> JointTable:
         from pathplan.path.tool_motion import tool_derivatives
         from pathplan.timeline import evaluate, in_parts

@@ -48,15 +48,20 @@ def kill_writer(file: Path, rng: np.random.Generator) -> str:
         assert writer.stdout is not None and writer.stdout.readline() == b"ready\n"
         time.sleep(rng.uniform(0.0, 0.6))
         writer.send_signal(signal.SIGKILL)
-    parts = [path for path in file.parent.iterdir() if path.suffix == ".part"]
+    parts = parts_of(file)
     if not file.exists():
         assert before is None
         return "nothing"
     table = read_table(file)
     assert len(table) == ROWS and np.ptp(table.position) == 0, "rows of two writes in one file"
     write_table(table, file)
-    assert [path.name for path in file.parent.iterdir() if path.suffix == ".part"] == []
+    assert parts_of(file) == []
     return "whole, and a part" if parts else "whole"
+
+
+def parts_of(file: Path) -> list[str]:
+    """What writers of this file left half-written beside it."""
+    return [path.name for path in file.parent.iterdir() if path.match(f".{file.name}.*.part")]
 
 
 def kill_plan(folder: Path, rng: np.random.Generator) -> str:

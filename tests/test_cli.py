@@ -490,7 +490,7 @@ def test_export_of_a_task(folder, run):
 @pytest.mark.parametrize(
     ("argv", "line"),
     [
-        ([], "expected a command: plan, audit or export (see pathplan --help)"),
+        ([], "expected a command: plan, audit, export, report, watch or figure (see pathplan --help)"),
         (["plan"], "the following arguments are required: TASK (see pathplan plan --help)"),
         (["export", "a.csv"], "the following arguments are required: -o (see pathplan export --help)"),
         (["plan", "cross.toml", "--fast", "-x"], "unknown arguments: --fast -x (see pathplan plan --help)"),
@@ -592,11 +592,11 @@ def test_ctrl_c_in_the_middle_of_writing(folder, home, run, monkeypatch, earlier
             shutil.copy(home / name, folder)
     before = {name: (folder / name).read_bytes() for name in made(folder)}
 
-    def cut(plan, tell):
-        yield plan.table.part(0, 100)
+    def cut(pieces, tell, done, total):
+        yield next(pieces).part(0, 100)
         raise KeyboardInterrupt
 
-    monkeypatch.setattr("pathplan.report.outputs._pieces", cut)
+    monkeypatch.setattr("pathplan.report.outputs._told", cut)
     assert run("plan", "cross.toml", "--pace", "50 %") == (130, "", [])
     assert {name: (folder / name).read_bytes() for name in made(folder)} == before
 

@@ -7,7 +7,9 @@ is padded with its first row before the start and with its last row after the en
 there: a jump at either end shows. By the mean value theorem a trajectory that keeps its limits has
 differences that keep them too, up to rounding, so what is allowed is limit x (1 + 1e-6) + 8 eps /
 cycle^n, with eps the last place of the largest written position of the column (of the rows so far,
-where a table comes in chunks).
+where a table comes in chunks). A table from elsewhere whose positions were rounded to a step of their own
+(`pathplan.auditing.rounding`) is allowed 2^(n-1) steps / cycle^n more, which is what rounding can make of
+a motion that keeps its limits.
 
 Where the times are irregular the n-th difference is n! times the divided difference over the n + 1
 rows, which is the same thing on a regular grid and for which the same theorem holds; the cycle in the
@@ -57,15 +59,20 @@ class Differences:
     limits: dict[str, Array]  # quantity -> (R, 2)
     factors: Array  # (n,) from SI to what is written
     cycle: float | None
+    rounding: Array  # (n,) steps to which positions were rounded, SI
 
     def __post_init__(self) -> None:
         self.peaks: dict[str, list[Peak | None]] = {}
         self.found: dict[Key, Exceedance] = {}
         self.largest = np.zeros(len(self.factors))
+        self.coarse = np.abs(self.matrix) @ self.rounding
+        self.allowances: dict[str, Array] = {name: np.zeros(len(self.matrix)) for name, _ in ORDERS}
         self._times = np.empty(0)
         self._written = np.empty((0, len(self.factors)))
         self._steps: NDArray[np.int64] = np.empty(0, dtype=np.int64)
         self._next = 0  # row of the whole table that follows those carried
+        self._start: tuple[Array, Array] = self._times, self._written  # of the first two rows
+        self._end = self._start  # of the last two
 
     def expect(self, position: Array) -> None:
         """All positions (N, n) that will come, so that eps is the same from the first row on."""
@@ -80,15 +87,36 @@ class Differences:
             before = np.arange(-PAD, 0) * interval
             self._carry(time[0] + before, np.repeat(written[:1], PAD, axis=0), np.repeat(step[:1], PAD))
             self._next = 0
+        if len(self._start[0]) < 2:
+            lacking = 2 - len(self._start[0])
+            times, rows = self._start
+            self._start = np.concatenate([times, time[:lacking]]), np.vstack([rows, written[:lacking]])
         self._judge(time, written, step, len(time))
 
     def finish(self) -> None:
         """The rest after the last row."""
         if len(self._times):
+            self._end = self._times[-2:], self._written[-2:]
             interval = self.cycle or _interval(self._times[-2:])
             after = self._times[-1] + np.arange(1, PAD + 1) * interval
             written = np.repeat(self._written[-1:], PAD, axis=0)
             self._judge(after, written, np.repeat(self._steps[-1:], PAD), 0)
+
+    def velocity_at(self, end: str) -> Array:
+        """Velocity (n,), SI, from the "first" row to the second or into the "last": 0 where a rest there can be so.
+
+        From rest the third difference of the first two rows is their distance over cycle^3, so that is what the
+        limit of jerk allows, up to rounding.
+        """
+        times, rows = self._start if end == "first" else self._end
+        if len(times) < 2:
+            return np.zeros(len(self.factors))
+        interval = self.cycle or _interval(times)
+        way = (rows[1] - rows[0]) / self.factors
+        n = len(self.factors)
+        jerk = np.abs(self.limits["jerk"][:n]).max(axis=1) * (1 + TOLERANCE)
+        allowed = jerk * interval**3 + 8 * np.spacing(self.largest) / self.factors + 4 * self.rounding
+        return np.where(np.abs(way) > allowed, way / interval, 0.0)
 
     def _carry(self, times: Array, written: Array, steps: NDArray[np.int64]) -> None:
         self._times, self._written, self._steps = times[-PAD:], written[-PAD:], steps[-PAD:]
@@ -110,7 +138,7 @@ class Differences:
             last = self._next + rows - 1 - first
             at = np.clip(middle, -first, last)  # padding is told as the row it repeats
             place = Rows(times[at], steps[at], 0)
-            self._one_order(quantity, differences[start:], place, at + first, eps, self._noise(times, order))
+            self._one_order(quantity, order, differences[start:], place, at + first, eps, self._noise(times, order))
         self._carry(times, values, steps)
         self._next += rows
 
@@ -129,21 +157,29 @@ class Differences:
         return 8 / np.where(shortest > 0, shortest, np.nan) ** order
 
     def _one_order(
-        self, quantity: str, joints: Array, place: Rows, numbers: NDArray[np.int64], eps: Array, noise: Array
+        self,
+        quantity: str,
+        order: int,
+        joints: Array,
+        place: Rows,
+        numbers: NDArray[np.int64],
+        eps: Array,
+        noise: Array,
     ) -> None:
         limits = self.limits[quantity]
         with np.errstate(invalid="ignore"):
             values = rows_of(joints, self.matrix)
-        allowed = noise[:, None] * (np.abs(self.matrix) @ eps)
-        over = (values > limits[:, 1] * (1 + TOLERANCE) + allowed) | (
-            values < limits[:, 0] * (1 + TOLERANCE) - allowed
-        )
+        rounded = noise[:, None] / 8 * 2 ** (order - 1) * self.coarse
+        known = np.nan_to_num(rounded, nan=0.0, posinf=0.0)
+        self.allowances[quantity] = np.maximum(self.allowances[quantity], known.max(axis=0, initial=0.0))
+        allowed = noise[:, None] * (np.abs(self.matrix) @ eps) + rounded
+        over = (values > limits[:, 1] * (1 + TOLERANCE) + allowed) | (values < limits[:, 0] * (1 + TOLERANCE) - allowed)
         peaks, shares = peaks_of(values, limits, place)
         peaks = [p and Peak(p.peak, p.limit, p.share, p.time, p.step, int(numbers[p.row])) for p in peaks]
         self.peaks[quantity] = larger(self.peaks.get(quantity, [None] * len(limits)), peaks)
         if over.any():
             shares = np.where(over, shares, -np.inf)
-            gather(self.found, exceedances(quantity, values, limits, shares, place, over=over))
+            gather(self.found, exceedances(quantity, values, limits, shares, place, over=over, numbers=numbers))
 
 
 def _interval(times: Array) -> float:

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.auditing.model import TOLERANCE, Finding, Peak
-from pathplan.auditing.shares import Array, Rows
+from pathplan.auditing.shares import Array, Rows, shares_of
 from pathplan.auditing.words import apart, dimension_of, shown
 
 __all__ = ["SLACK", "Exceedance", "clock", "exceedances", "finding_of", "gather", "percent"]
@@ -33,16 +33,29 @@ class Exceedance:
 
 
 def exceedances(
-    quantity: str, values: Array, limits: Array, shares: Array, rows: Rows, *, over: NDArray[np.bool_] | None = None
+    quantity: str,
+    values: Array,
+    limits: Array,
+    shares: Array,
+    rows: Rows,
+    *,
+    over: NDArray[np.bool_] | None = None,
+    rounded: Array | float = 0.0,
+    numbers: NDArray[np.intp] | None = None,
 ) -> Iterator[tuple[Key, Exceedance]]:
     """What exceeds limits (R, 2), or (N, R, 2) where they differ from row to row, in values (N, R) of these shares.
 
     Shares above 1 + TOLERANCE do; of positions, what lies beyond the limit by more than SLACK; where `over`
-    (N, R) is given, what is true there.
+    (N, R) is given, what is true there. `rounded` (R,) is how far each value may be off by rounding. `numbers` (N,)
+    are the rows' numbers where they do not follow one another.
     """
     if over is None:
-        beyond = (values > limits[..., 1] + SLACK) | (values < limits[..., 0] - SLACK)
-        over = beyond if quantity == "position" else shares > 1 + TOLERANCE
+        beyond = (values > limits[..., 1] + SLACK + rounded) | (values < limits[..., 0] - SLACK - rounded)
+        over = beyond
+        if quantity != "position":
+            over = shares > 1 + TOLERANCE
+            if np.any(rounded):
+                over &= shares_of(np.sign(values) * np.maximum(np.abs(values) - rounded, 0.0), limits) > 1 + TOLERANCE
     for r in np.flatnonzero(over.any(axis=0)):
         at = np.flatnonzero(over[:, r])
         for step in np.unique(rows.step[at]):
@@ -56,6 +69,8 @@ def exceedances(
                 worst = rows.peak(i, value, limit, shares[i, r], margin)
             else:
                 worst = rows.peak(i, value, high if value >= 0 else low, shares[i, r])
+            if numbers is not None:
+                worst = replace(worst, row=int(numbers[i]))
             times = float(rows.time[mine[0]]), float(rows.time[mine[-1]])
             yield (quantity, int(r), int(step)), Exceedance(worst, len(mine), *times)
 
@@ -75,7 +90,8 @@ def finding_of(key: Key, found: Exceedance, names: Sequence[str], kinds: Sequenc
     what = quantity.removeprefix("tool ")
     dimension = dimension_of("" if tool else kinds[r], quantity)
     value, limit = apart(peak.peak, peak.limit, dimension)
-    place = f"at {clock(peak.time)} in step {step + 1}"
+    row = None if "between rows" in how else peak.row
+    place = f"at {clock(peak.time)}" + ("" if row is None else f" (row {row + 1})") + f" in step {step + 1}"
     if quantity == "position":
         beyond = shown(abs(peak.peak - peak.limit), dimension)
         text = f"{name}: {what} {value} {place} lies beyond the limit {limit} by {beyond}"
@@ -84,7 +100,7 @@ def finding_of(key: Key, found: Exceedance, names: Sequence[str], kinds: Sequenc
     if found.count > 1:
         text += f"; {found.count} rows from {clock(found.first)} to {clock(found.last)}"
     where = (peak.time, step, None if tool else name, quantity)
-    return Finding("exceedance", text + how, *where, value=peak.peak, limit=peak.limit)
+    return Finding("exceedance", text + how, *where, value=peak.peak, limit=peak.limit, row=row)
 
 
 def clock(time: float) -> str:

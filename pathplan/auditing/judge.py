@@ -13,6 +13,7 @@ from pathplan.arm import Arm
 from pathplan.auditing.differences import ORDERS, Differences
 from pathplan.auditing.drives import Drives, DriveUse, jump_notes, overloads, torque_limits
 from pathplan.auditing.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
+from pathplan.auditing.jumps import Jumps
 from pathplan.auditing.model import QUANTITIES, TOLERANCE, Audit, Finding, JointAudit, Peak, Singularity
 from pathplan.auditing.pacing import StepClock
 from pathplan.auditing.planned import (
@@ -24,6 +25,7 @@ from pathplan.auditing.planned import (
     tool_speed_by_step,
     worse_peaks,
 )
+from pathplan.auditing.rounding import NONE, Rounding
 from pathplan.auditing.shares import (
     Array,
     Rows,
@@ -57,9 +59,11 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
     the written positions, which are what the drive sees (rule: `pathplan.auditing.differences`); rest in
     the first and last row; times that repeat, go back or leave the grid of the cycle; values that are
     not finite. A value may pass its limit by 1e-6 of it, a position by 1e-9 rad or m. Without columns
-    of velocity, acceleration and jerk the differences stand for them, and `measured` says so. Reported
-    besides: distance to singularity and what paces each step; and with the plan, speeds asked and
-    reached, times, corners, path deviation and the peaks of the trajectory between the rows.
+    of velocity, acceleration and jerk the differences stand for them, and `measured` says so. A table whose
+    numbers were rounded (a whole one, without a plan) is allowed what rounding makes, and what can't be judged
+    for it is told: see `pathplan.auditing.rounding`. Reported besides: distance to singularity and what paces
+    each step; and with the plan, speeds asked and reached, times, corners, path deviation and the peaks of the
+    trajectory between the rows.
 
     `arm` carries the tool meant; with a plan each step's own tool counts for its caps. Raises
     InputError if the table has another number or other kinds of joints than the arm.
@@ -68,7 +72,9 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
     first = next(chunks, None)
     if first is None:
         raise InputError("table: there are no rows to judge")
-    judge = _Judge(first, arm, plan)
+    kinds = [joint.kind for joint in arm.joints]
+    whole = isinstance(table, JointTable) and plan is None and table.n == arm.n
+    judge = _Judge(first, arm, plan, Rounding.of(first, kinds) if whole else NONE)
     if isinstance(table, JointTable):
         judge.differences.expect(table.position)
     for piece in _pieces(first, chunks):
@@ -85,13 +91,13 @@ def _pieces(first: JointTable, rest: Iterator[JointTable]) -> Iterator[JointTabl
 class _Judge:
     """What is known after the rows so far."""
 
-    def __init__(self, first: JointTable, arm: Arm, plan: Planned | None) -> None:
-        self.arm, self.plan = arm, plan
+    def __init__(self, first: JointTable, arm: Arm, plan: Planned | None, rounding: Rounding) -> None:
+        self.arm, self.plan, self.rounding = arm, plan, rounding
         self.names, self.matrix = limit_rows(arm)
         self.kinds = row_kinds(arm)
         self.notes = _same_joints(first, arm)
         self.meta = first.meta
-        self.cycle = first.cycle if first.cycle is not None else found_cycle(first.time)
+        self.cycle = first.cycle if first.cycle is not None else found_cycle(first.time, rounding.time)
         self.derived = [name for name in DERIVED if getattr(first, name) is not None]
         self.measured: Literal["columns", "differences"] = "columns" if self._all_derived() else "differences"
         if first.torque is None and np.isfinite(arm.limits.torque).any():
@@ -99,15 +105,17 @@ class _Judge:
         limits = {name: getattr(arm.limits, name) for name, _ in ORDERS}
         factors = [DEGREES if joint.kind == "revolute" else MILLIMETRES for joint in arm.joints]
         self.drives = Drives(arm) if first.torque is not None else None
-        self.differences = Differences(self.matrix, limits, np.array(factors), self.cycle)
-        self.stamps = Stamps(self.cycle, stated=first.cycle is not None)
+        steps = rounding.step("position", arm.n)
+        self.differences = Differences(self.matrix, limits, np.array(factors), self.cycle, steps)
+        self.jumps = Jumps(self.names, self.kinds, arm.limits.acceleration[: arm.n], steps)
+        self.stamps = Stamps(self.cycle, stated=first.cycle is not None, rounding=rounding.time)
         self.speed_caps, self.acceleration_caps = step_caps(arm, plan.task if plan else None)
         joints = [(name, q) for q in (*DERIVED, "torque") for name in self.names]
         self.clock = StepClock([*joints, (None, TOOL[0]), (None, TOOL[1])], self.cycle)
         self.rows, self.last_time = 0, 0.0
         self.joints: tuple[JointAudit, ...] = ()
         self.found: dict[Key, Exceedance] = {}
-        self.not_finite: dict[str, tuple[int, str, int]] = {}
+        self.not_finite: dict[tuple[str, str], tuple[int, int]] = {}
         self.tool_peaks: dict[str, list[Peak | None]] = {name: [None] for name in TOOL}
         self.singularity: Singularity | None = None
         self.speeds: dict[int, tuple[float, float, float]] = {}
@@ -124,10 +132,11 @@ class _Judge:
         self.ends[1:] = [table.part(len(table) - 1, len(table))]
         self.stamps.add(table.time)
         self.differences.add(table.time, table.position, table.step)
+        self.jumps.add(table.time, table.position, table.step, self.cycle)
         good, bad = finite_rows(table)
-        for name, row, joint in bad:
-            before = self.not_finite.get(name, (self.rows + row, joint, 0))
-            self.not_finite[name] = (*before[:2], before[2] + 1)
+        for name, row, joint, count in bad:
+            before = self.not_finite.get((name, joint), (self.rows + row, 0))
+            self.not_finite[name, joint] = before[0], before[1] + count
         with np.errstate(invalid="ignore", over="ignore"):
             self._judge_rows(table, good)
         self.rows += len(table)
@@ -146,7 +155,7 @@ class _Judge:
         for quantity in (*DERIVED, "torque"):
             shares.append(self._share(quantity, columns.get(quantity), rows, velocity))
         self._share("position", columns["position"], rows, velocity)
-        shares += self._tool(table, good, rows)
+        shares += self._tool(table, good, rows, velocity)
         self.clock.add(np.hstack(shares), table.step, self._times(table.time))
         if good.any():
             at = Rows(table.time[good], table.step[good], 0)
@@ -172,27 +181,40 @@ class _Judge:
         if quantity == "torque":  # of the joints alone: a torque is not summed as positions are
             limits = torque_limits(self.arm, velocity)
             shares = shares_of(values, limits)
-            gather(self.found, exceedances(quantity, values, limits, shares, rows))
+            rounded = self.rounding.step(quantity, self.arm.n) / 2
+            gather(self.found, exceedances(quantity, values, limits, shares, rows, rounded=rounded))
             return np.hstack([shares, np.zeros((len(shares), len(self.names) - self.arm.n))])
         values = rows_of(values, self.matrix)
         shares = position_shares(values, limits)[0] if quantity == "position" else shares_of(values, limits)
-        gather(self.found, exceedances(quantity, values, limits, shares, rows))
+        rounded = np.abs(self.matrix) @ self.rounding.step(quantity, self.arm.n) / 2
+        gather(self.found, exceedances(quantity, values, limits, shares, rows, rounded=rounded))
         return shares
 
-    def _tool(self, table: JointTable, good: NDArray[np.bool_], rows: Rows) -> list[Array]:
-        """Shares (N, 1) of the caps on tool speed and tool acceleration."""
+    def _tool(self, table: JointTable, good: NDArray[np.bool_], rows: Rows, velocity: Array) -> list[Array]:
+        """Shares (N, 1) of the caps on tool speed and tool acceleration; speed by differences if nothing else tells."""
         speed = table.tool_speed
-        if speed is None and table.velocity is not None:
+        rounded = np.zeros(1)
+        if speed is None and (table.velocity is not None or np.isfinite(self.speed_caps).any()):
+            known = np.where(np.isfinite(velocity).all(axis=1) & good)[0]
             speed = np.zeros(len(table))
-            speed[good] = tool_speed(self.arm, table.position[good], table.velocity[good])
+            speed[known] = tool_speed(self.arm, table.position[known], velocity[known])
+            steps = self.rounding.step("position", self.arm.n)
+            if table.velocity is None and steps.any() and len(known):  # both rows of a difference are rounded
+                reach = np.linalg.norm(self.arm.jacobian(table.position[known])[:, :3], axis=1).max(axis=0)
+                rounded = np.array([reach @ steps / self._interval(table.time)])
         if speed is not None:
             times = self._times(table.time)
             for step, mine in tool_speed_by_step(speed, self.speed_caps, table.step, times).items():
                 was = self.speeds.get(step, (0.0, 0.0, 0.0))
                 self.speeds[step] = (max(was[0], mine[0]), was[1] + mine[1], was[2] + mine[2])
-        shares = [self._tool_share(TOOL[0], speed, self.speed_caps, rows)]
+        shares = [self._tool_share(TOOL[0], speed, self.speed_caps, rows, rounded)]
         acceleration = self._acceleration(table, good)
-        return [*shares, self._tool_share(TOOL[1], acceleration, self.acceleration_caps, rows)]
+        return [*shares, self._tool_share(TOOL[1], acceleration, self.acceleration_caps, rows, np.zeros(1))]
+
+    def _interval(self, time: Array) -> float:
+        """The cycle, or else the shortest interval between rows."""
+        intervals = np.diff(time)
+        return self.cycle or float(intervals[intervals > 0].min(initial=1.0))
 
     def _acceleration(self, table: JointTable, good: NDArray[np.bool_]) -> Array | None:
         """Tool acceleration (N,), only where something caps it."""
@@ -206,7 +228,7 @@ class _Judge:
         found[at] = tool_acceleration(self.arm, table.position[at], table.velocity[at], table.acceleration[at])
         return found
 
-    def _tool_share(self, quantity: str, values: Array | None, caps: Array, rows: Rows) -> Array:
+    def _tool_share(self, quantity: str, values: Array | None, caps: Array, rows: Rows, rounded: Array) -> Array:
         if values is None:
             return np.zeros((len(rows.time), 1))
         cap = caps[np.minimum(rows.step, len(caps) - 1)]
@@ -218,7 +240,9 @@ class _Judge:
             peaks, own = peaks_of(values[mine, None], limits, at)
             peaks = [peak and replace(peak, row=rows.first + int(mine[peak.row])) for peak in peaks]
             self.tool_peaks[quantity] = larger(self.tool_peaks[quantity], peaks)
-            gather(self.found, exceedances(quantity, values[mine, None], limits, own, at))
+            numbers = rows.first + mine
+            over = exceedances(quantity, values[mine, None], limits, own, at, numbers=numbers, rounded=rounded)
+            gather(self.found, over)
         return shares
 
     def _times(self, time: Array) -> Array:
@@ -237,6 +261,7 @@ class _Judge:
     def verdict(self) -> Audit:
         """All of it together."""
         self.differences.finish()
+        self.jumps.finish(self.cycle)
         plan = self.plan
         names = {step.index: step.name for step in plan.task.steps} if plan else {}
         evidence = plan.evidence() if plan else Evidence()
@@ -288,23 +313,26 @@ class _Judge:
         for r, joint in enumerate(self.joints):
             seen = {name: peaks[r] for name, peaks in self.differences.peaks.items()}
             known = {name: peak for name, peak in seen.items() if peak is not None}
-            missing: dict[str, Any] = {q: known.get(q) for q in DERIVED if q not in self.derived}
+            blind = {q for q in DERIVED if self._blind(q)[r] > 1.0}  # noise and no motion
+            missing: dict[str, Any] = {q: known.get(q) for q in DERIVED if q not in self.derived and q not in blind}
             joined.append(replace(joint, differences=known, **missing))
         return tuple(joined)
 
     def _findings(self, evidence: Evidence, drives: tuple[DriveUse, ...]) -> Iterator[Finding]:
         """Exceedances first, then warnings and notes."""
-        for name, (row, joint, pieces) in self.not_finite.items():
-            more = ", and further rows" if pieces > 1 else ""
+        for (name, joint), (row, count) in self.not_finite.items():
+            more = f"; {count - 1} more row{'s' * (count > 2)} like it" if count > 1 else ""
             whose = f" of {joint}" if joint else ""
             text = f"row {row + 1}: {name}{whose} is not a finite number{more}"
-            yield Finding("exceedance", text, joint=joint or None, quantity=name)
+            yield Finding("exceedance", text, joint=joint or None, quantity=name, row=row)
         yield from self.stamps.findings()
+        yield from self.jumps.findings()
         for key, found in sorted(self.found.items(), key=lambda item: item[1].first):
             yield finding_of(key, found, self.names, self.kinds, how=self._at_speed(key, found))
         yield from overloads(drives)
         yield from self._seen_by_the_drive()
-        yield from _rest(self.arm, *self.ends)
+        yield from self._rest(*self.ends)
+        yield from self._too_coarse()
         yield from self._between_rows(evidence)
         if self.measured == "differences":
             missing = [name for name in DERIVED if name not in self.derived]
@@ -336,6 +364,57 @@ class _Judge:
             if key not in self.found:
                 yield finding_of(key, found, self.names, self.kinds, how=how)
 
+    def _blind(self, quantity: str) -> Array:
+        """Parts (R,) of the limits that the rounding of the positions alone may use in a difference."""
+        limits = np.abs(getattr(self.arm.limits, quantity)).min(axis=1)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return np.asarray(np.nan_to_num(self.differences.allowances[quantity] / limits))
+
+    def _too_coarse(self) -> Iterator[Finding]:
+        """What differences of rounded positions can't tell; without columns of velocity that is no small thing."""
+        steps = self.rounding.step("position", self.arm.n)
+        for quantity in DERIVED:
+            part = self._blind(quantity)
+            blind = np.flatnonzero(part > 1.0)
+            worst = int(np.argmax(part))
+            if quantity in self.derived or part[worst] < TOLERANCE:
+                continue
+            joint = int(np.argmax(np.abs(self.matrix[worst]) * steps))
+            coarse = shown(float(steps[joint]), dimension_of(self.arm.joints[joint].kind, "position"))
+            noise = float(self.differences.allowances[quantity][worst])
+            made = shown(noise, dimension_of(self.kinds[worst], quantity))
+            rounded = f"positions rounded to {coarse} alone make up to {made} of {self.names[worst]}"
+            if not len(blind):
+                text = f"{quantity} is judged to within {100 * part[worst]:.2g} % of its limits: {rounded}"
+                yield Finding("note", text, joint=self.names[worst], quantity=quantity)
+                continue
+            named = ", ".join(self.names[r] for r in blind)
+            level: Literal["exceedance", "warning"] = "exceedance" if quantity == "velocity" else "warning"
+            yield Finding(level, f"{quantity} of {named} can't be judged: {rounded}", quantity=quantity)
+
+    def _rest(self, start: JointTable, end: JointTable) -> Iterator[Finding]:
+        """The first and last row must be at rest: velocity and acceleration zero to 1e-6 of their limits.
+
+        Without a column of velocity, the way to the row beside it must be one that a start from rest can make.
+        """
+        for place, table, number in (("first", start, 0), ("last", end, self.rows - 1)):
+            time, step = float(table.time[0]), int(table.step[0])
+            for quantity in ("velocity", "acceleration"):
+                values = getattr(table, quantity)
+                rounded = self.rounding.step(quantity, self.arm.n) / 2
+                if values is None:
+                    if quantity == "acceleration":
+                        continue
+                    values = self.differences.velocity_at(place)[None]
+                    rounded = np.zeros(self.arm.n)
+                for joint, value, more in zip(self.arm.joints, values[0].tolist(), rounded, strict=True):
+                    if not abs(value) > TOLERANCE * min(getattr(joint, quantity), 1e6) + more:
+                        continue
+                    got = shown(value, dimension_of(joint.kind, quantity))
+                    text = f"{joint.name}: the {place} row is not at rest, {quantity} {got} at {clock(time)}"
+                    where = (time, step, joint.name, quantity)
+                    yield Finding("exceedance", text, *where, value=value, limit=0.0, row=number)
+
     def _between_rows(self, evidence: Evidence) -> Iterator[Finding]:
         """Limits that the trajectory passes between rows and not in them."""
         for r, joint in enumerate(evidence.continuous):
@@ -360,19 +439,3 @@ def _same_joints(table: JointTable, arm: Arm) -> list[Finding]:
         return []
     names = ", ".join(table.joint_names)
     return [Finding("warning", f"the table's joints have other names, taken in their order: {names}")]
-
-
-def _rest(arm: Arm, start: JointTable, end: JointTable) -> Iterator[Finding]:
-    """The first and last row must be at rest: velocity and acceleration zero to 1e-6 of their limits."""
-    for place, row in (("first", start), ("last", end)):
-        for quantity in ("velocity", "acceleration"):
-            values = getattr(row, quantity)
-            if values is None:
-                continue
-            for joint, value in zip(arm.joints, values[0].tolist(), strict=True):
-                if abs(value) <= TOLERANCE * min(getattr(joint, quantity), 1e6):
-                    continue
-                got = shown(value, dimension_of(joint.kind, quantity))
-                time, step = float(row.time[0]), int(row.step[0])
-                text = f"{joint.name}: the {place} row is not at rest, {quantity} {got} at {clock(time)}"
-                yield Finding("exceedance", text, time, step, joint.name, quantity, value=value, limit=0.0)

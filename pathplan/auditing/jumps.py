@@ -96,4 +96,5 @@ class Jumps:
             text = f"{name}: position jumps by {way} from row {jump.row} to row {jump.row + 1}, at {clock(jump.time)}"
             more = jump.count - 1
             text += f"; {more} more row{'s' * (more > 1)} like it" if more else ""
-            yield Finding("exceedance", text, jump.time, jump.step, name, "position")
+            where = (jump.time, jump.step, name, "position")
+            yield Finding("exceedance", text, *where, value=jump.way, row=jump.row)

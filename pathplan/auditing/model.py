@@ -85,6 +85,7 @@ class Finding:
     quantity: str | None = None
     value: float | None = None
     limit: float | None = None
+    row: int | None = None
 
 
 @dataclass(frozen=True)

@@ -189,6 +189,7 @@ def _finding(finding: Finding, audit: Audit) -> dict[str, Any]:
         dimension = dimension_of(kinds.get(finding.joint or "", ""), finding.quantity)
     found["time_s"] = _number(found.pop("time"))
     found["step"] = None if finding.step is None else finding.step + 1
+    found["row"] = None if finding.row is None else finding.row + 1
     for name in ("value", "limit"):
         found[name] = _scaled(getattr(finding, name), dimension)
     found["unit"] = None if finding.value is None else _unit(dimension)

@@ -191,5 +191,5 @@ def pass_findings(found: Sequence[Pass], arm: Arm) -> list[Finding]:
             off = format_quantity(target.off, joint_dimension(kinds[target.joint], "position"), 3)
             text += f", {target.joint} by {off}"
         where = (target.time, target.step, target.joint, "target")
-        findings.append(Finding("exceedance", text, *where, value=target.distance, limit=target.allowed[0]))
+        findings.append(Finding("exceedance", text, *where, row=target.row))
     return findings

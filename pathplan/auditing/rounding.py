@@ -8,20 +8,45 @@ a table of full precision has none.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 
+from pathplan.auditing.model import QUANTITIES
 from pathplan.auditing.shares import Array
 from pathplan.export.columns import DEGREES, MILLIMETRES
+from pathplan.table import JointTable
 
-__all__ = ["rounding_of", "rounding_of_times"]
+__all__ = ["NONE", "Rounding", "rounding_of", "rounding_of_times"]
 
 MOST_DIGITS = 9  # decimals or significant digits that count as rounded; what is finer is of no weight
-FEWEST_DIGITS = 3  # significant digits that anybody writes
+FEWEST_DIGITS = 5  # significant digits; fewer can't be told from decimals that happen to be round
 ENOUGH = 16  # different numbers in one column: fewer tell nothing of how they were rounded
 SAMPLE = 64
+NOTHING = 1e-30  # a number below counts as zero
 WITHIN = 1e-6  # of the last place: how far a rounded number may lie off it
+
+
+@dataclass(frozen=True)
+class Rounding:
+    """The steps to which a table was rounded: of times in s, of each column (n,) by its quantity, SI."""
+
+    time: float
+    columns: Mapping[str, Array]
+
+    @classmethod
+    def of(cls, table: JointTable, kinds: Sequence[str]) -> Rounding:
+        """Of a whole table of joints of these kinds."""
+        columns = {name: getattr(table, name) for name in QUANTITIES if getattr(table, name) is not None}
+        return cls(rounding_of_times(table.time), {name: rounding_of(v, kinds) for name, v in columns.items()})
+
+    def step(self, quantity: str, n: int) -> Array:
+        """The steps (n,) of one quantity, 0 where it was not rounded."""
+        return self.columns.get(quantity, np.zeros(n))
+
+
+NONE = Rounding(0.0, {})
 
 
 def rounding_of(values: Array, kinds: Sequence[str]) -> Array:
@@ -42,14 +67,17 @@ def rounding_of(values: Array, kinds: Sequence[str]) -> Array:
 
 def rounding_of_times(time: Array) -> float:
     """The step in s to which times (N,) were rounded; 0 for full precision."""
-    return float(_steps(time[:, None])[0])
+    return float(_steps(time[:, None], significant=False)[0])
 
 
-def _steps(values: Array) -> Array:
-    """The steps (C,) to which columns (N, C) of numbers in one unit were rounded, all zero for full precision."""
+def _steps(values: Array, *, significant: bool = True) -> Array:
+    """The steps (C,) to which columns (N, C) of numbers in one unit were rounded, all zero for full precision.
+
+    `significant`: whether they may have been rounded to significant digits.
+    """
     steps = np.zeros(values.shape[1])
     finite = values[np.isfinite(values).all(axis=1)]
-    moving = np.flatnonzero(np.ptp(finite, axis=0) > 0) if len(finite) else np.empty(0, dtype=np.intp)
+    moving = np.flatnonzero(np.ptp(finite, axis=0) > NOTHING) if len(finite) else np.empty(0, dtype=np.intp)
     if not len(moving):
         return steps
     numbers = finite[:, moving]
@@ -62,7 +90,7 @@ def _steps(values: Array) -> Array:
         if _whole(sample, 10.0**decimals) and _whole(numbers, 10.0**decimals):
             found.append(np.full(len(moving), 10.0**-decimals))
             break
-    for digits in range(FEWEST_DIGITS, MOST_DIGITS + 1):
+    for digits in range(FEWEST_DIGITS, MOST_DIGITS + 1 if significant else 0):
         if _whole(sample, _scales(sample, digits)) and _whole(numbers, _scales(numbers, digits)):
             found.append(10.0 ** (place + 1 - digits))
             break
@@ -76,7 +104,7 @@ def _steps(values: Array) -> Array:
 def _scales(values: Array, digits: int) -> Array:
     """What each number is to be multiplied by so that so many digits stand before its point."""
     size = np.abs(values)
-    place = np.floor(np.log10(np.where(size > 0, size, 1.0)))
+    place = np.floor(np.log10(np.where(size > NOTHING, size, 1.0)))
     return np.asarray(10.0 ** (digits - 1 - place))
 
 

@@ -15,44 +15,75 @@ __all__ = ["FINITE_COLUMNS", "Stamps", "finite_rows", "found_cycle"]
 FINITE_COLUMNS = ("time", "position", "velocity", "acceleration", "jerk", "torque", "pose", "tool_speed")
 STATED = 1e-6  # of the cycle: how far a time may lie off the grid of a stated cycle
 FOUND = 1e-2  # the same where the cycle was found from times that were rounded when they were written
+USUAL = 0.9  # of the intervals that must be alike for a cycle to be found where some are not
+FEWEST = 10  # rows from which on such a cycle is found
 
 
-def found_cycle(time: Array) -> float | None:
-    """The cycle (s) of times (N,) that lie on a regular grid within 1 % of it, or None."""
-    if len(time) < 3 or not np.isfinite(time).all() or np.any(np.diff(time) <= 0):
+def found_cycle(time: Array, rounding: float = 0.0) -> float | None:
+    """The cycle (s) of times (N,) of which nine in ten follow one another alike, within 1 % or their rounding (s).
+
+    None where there is no such cycle.
+    """
+    if len(time) < 3 or not np.isfinite(time).all():
         return None
-    cycle = float(time[-1] - time[0]) / (len(time) - 1)
-    off = np.abs(time - time[0] - np.arange(len(time)) * cycle)
-    if off.max() > FOUND * cycle:
+    intervals = np.diff(time)
+    rows = np.arange(len(time))
+
+    def on_grid(cycle: float, within: float) -> bool:
+        return bool(intervals.min() > 0 and np.abs(time - time[0] - rows * cycle).max() <= within)
+
+    mean = float(time[-1] - time[0]) / len(intervals)
+    if on_grid(mean, FOUND * mean):
+        return _rounded(mean, len(time), 1e-9 * mean)
+    if rounding > 0:  # the ends alone would carry their rounding to every row between
+        slope = float(np.polynomial.Polynomial.fit(rows, time, 1).convert().coef[-1])
+        if on_grid(slope, 1.01 * rounding):
+            return _rounded(slope, len(time), 0.01 * rounding)
+    usual = float(np.median(intervals))
+    alike = np.abs(intervals - usual) <= FOUND * usual
+    if usual <= 0 or len(time) < FEWEST or alike.mean() < USUAL:
         return None
-    # the last digits of a mean are noise: 0.004 and not 0.0040000000000001
-    digits = next(d for d in range(1, 18) if abs(float(f"{cycle:.{d}g}") - cycle) * len(time) <= 1e-9 * cycle)
+    cycle = float(intervals[alike].mean())
+    return _rounded(cycle, len(time), 1e-9 * cycle)
+
+
+def _rounded(cycle: float, rows: int, close: float) -> float:
+    """A cycle without the last digits, which are noise: 0.004 and not 0.0040000000000001; `close` over all rows."""
+    digits = next(d for d in range(1, 18) if abs(float(f"{cycle:.{d}g}") - cycle) * rows <= close or d == 17)
     return float(f"{cycle:.{digits}g}")
 
 
-def finite_rows(table: JointTable) -> tuple[NDArray[np.bool_], list[tuple[str, int, str]]]:
-    """Which rows (N,) bool hold finite times and positions, and what is not finite: column, row, joint."""
+def finite_rows(table: JointTable) -> tuple[NDArray[np.bool_], list[tuple[str, int, str, int]]]:
+    """Which rows (N,) bool hold finite times and positions, and what is not finite.
+
+    That is for each column and joint ("" where none): the first row, and how many rows.
+    """
     good = np.isfinite(table.time) & np.isfinite(table.position).all(axis=1)
     bad = []
     for name in FINITE_COLUMNS:
         values = getattr(table, name)
         if values is None or np.isfinite(values).all():
             continue
-        at = np.argwhere(~np.isfinite(values))
-        joint = table.joint_names[at[0][1]] if name not in ("time", "pose", "tool_speed") else ""
-        bad.append((name, int(at[0][0]), joint))
+        by_joint = values.ndim == 2
+        wrong = ~np.isfinite(values).reshape(len(table), -1)
+        wrong = wrong if by_joint else wrong.any(axis=1)[:, None]
+        for k in np.flatnonzero(wrong.any(axis=0)).tolist():
+            rows = np.flatnonzero(wrong[:, k])
+            bad.append((name, int(rows[0]), table.joint_names[k] if by_joint else "", len(rows)))
     return good, bad
 
 
 class Stamps:
     """Goes over the times of a table in pieces; `findings()` at the end."""
 
-    def __init__(self, cycle: float | None, *, stated: bool) -> None:
+    def __init__(self, cycle: float | None, *, stated: bool, rounding: float = 0.0) -> None:
         self.cycle = cycle
         self.stated = stated
+        self.within = 0.0 if cycle is None else (STATED if stated else FOUND) * cycle
+        self.within = max(self.within, 1.01 * rounding)  # of the first time and of each that is compared with it
         self.rows = 0
         self._first = self._last = 0.0
-        # kind of trouble -> (row, what is told of the first one, how many), in the order of the rows
+        # kind of trouble -> (row, what is told of the first one, its time, how many), in the order of the rows
         self._found: dict[str, tuple[int, str, float, int]] = {}
 
     def add(self, time: Array) -> None:
@@ -68,22 +99,32 @@ class Stamps:
     def _steadily(self, time: Array) -> None:
         first = self.rows - 1 if self.rows else 0
         intervals = np.diff(time)
-        for kind, wrong in (("repeated", intervals == 0), ("backward", intervals < 0)):
+        troubles = {"repeated": intervals == 0, "backward": intervals < 0}
+        if self.cycle is not None:
+            troubles["gap"] = intervals > 1.5 * self.cycle
+        for kind, wrong in troubles.items():
             at = np.flatnonzero(wrong)
             if len(at):
                 i = at[0]
                 was, now = clock(time[i]), clock(time[i + 1])
-                text = f"repeats {now}" if kind == "repeated" else f"goes back from {was} to {now}"
+                if kind == "gap":
+                    assert self.cycle is not None
+                    lost = max(1, round(float(intervals[i]) / self.cycle - 1e-6) - 1)
+                    rows = f"{lost} row{'s' * (lost > 1)} missing" if lost < 1e6 else "rows missing"
+                    text = f"goes from {was} to {now}: {rows} at {self.cycle * 1e3:.6g} ms"
+                else:
+                    text = f"repeats {now}" if kind == "repeated" else f"goes back from {was} to {now}"
                 self._note(kind, first + int(i) + 1, text, float(time[i + 1]), len(at))
 
     def _on_grid(self, time: Array, cycle: float) -> None:
-        grid = self._first + np.arange(self.rows, self.rows + len(time)) * cycle
-        share = STATED if self.stated else FOUND
-        off = np.abs(time - grid) > share * cycle + 4 * np.spacing(np.abs(grid))
+        """Whether each time is a whole number of cycles after the first; that none is missing is told elsewhere."""
+        number = np.rint((time - self._first) / cycle)
+        grid = self._first + number * cycle
+        off = np.abs(time - grid) > self.within + 4 * np.spacing(np.abs(grid))
         at = np.flatnonzero(off)
         if len(at):
             i = at[0]
-            text = f"is {clock(time[i])} where the cycle of {cycle * 1e3:.6g} ms puts {clock(grid[i])}"
+            text = f"is {clock(time[i])}, where the cycle of {cycle * 1e3:.6g} ms puts {clock(grid[i])}"
             self._note("grid", self.rows + int(i), text, float(time[i]), len(at))
 
     def _note(self, kind: str, row: int, text: str, time: float, count: int) -> None:
@@ -94,10 +135,10 @@ class Stamps:
             self._found[kind] = (row, text, time, count)
 
     def findings(self) -> list[Finding]:
-        """Repeated, backward and off-grid times, each with its first row; none where all is well."""
+        """Repeated, backward, missing and off-grid times, each with its first row; none where all is well."""
         found = []
-        for row, text, time, count in self._found.values():
-            more = f", and {count - 1} more rows like it" if count > 1 else ""
+        for row, text, time, count in sorted(self._found.values()):
+            more = f"; {count - 1} more row{'s' * (count > 2)} like it" if count > 1 else ""
             text = f"row {row + 1}: time {text}{more}"
-            found.append(Finding("exceedance", text, time=time, quantity="time", value=time))
+            found.append(Finding("exceedance", text, time=time, quantity="time", value=time, row=row))
         return found

@@ -23,10 +23,10 @@ from pathplan.units import format_quantity
 if TYPE_CHECKING:
     from pathplan.planning import Plan
 
-__all__ = ["Pvt", "pvt_of_plan", "pvt_of_table"]
+__all__ = ["Pvt", "pvt_of_plan", "pvt_of_table", "rounded_up"]
 
-DENSE = 16
-A_CYCLE = 4
+DENSE = 32
+A_CYCLE = 8
 PIECE = 65_536  # instants evaluated at once: bounds memory
 MOST_CYCLES = 100_000  # of a period
 MOST_ROWS_PIECE = 16_384
@@ -35,13 +35,15 @@ KEPT = ("velocity",)  # beside time, position and step
 
 @dataclass(frozen=True, eq=False)
 class Pvt:
-    """Rows of position and velocity every `period` s, `rows()` in pieces; `error` (n,) rad or m by joint.
+    """Rows of position and velocity every `period` s, `rows()` in pieces; `error` (n,) rad or m of each joint.
 
     The motion is followed by rest up to the next row, where the last row repeats the goal.
     """
 
     period: float
     count: int
+    joint_names: tuple[str, ...]
+    joint_kinds: tuple[str, ...]
     error: Array
     measured: str  # where: "16 instants a period", "the rows left out"
     rows: Callable[[], Iterator[JointTable]]
@@ -75,7 +77,7 @@ def pvt_of_plan(plan: Plan, period: float) -> Pvt:
                 *(time, q, v), step=steps, joint_names=names, joint_kinds=kinds, cycle=period, marks=marks, meta=meta
             )
 
-    return Pvt(period, count, error, measured, rows)
+    return Pvt(period, count, names, kinds, error, measured, rows)
 
 
 def pvt_of_table(table: JointTable, period: float) -> Pvt:
@@ -119,7 +121,7 @@ def pvt_of_table(table: JointTable, period: float) -> Pvt:
             meta=meta,
         )
 
-    return Pvt(period, count, error, measured, rows)
+    return Pvt(period, count, table.joint_names, table.joint_kinds, error, measured, rows)
 
 
 def _cycles(period: float, cycle: float) -> int:
@@ -141,7 +143,10 @@ def _motion(plan: Plan, instants: Array) -> tuple[Array, Array, Any]:
     q, v, step = np.empty((len(instants), n)), np.empty((len(instants), n)), np.empty(len(instants), dtype=np.int64)
     for k in np.unique(owner):
         at, part = np.flatnonzero(owner == k), plan.parts[k]
-        values = evaluate(part, (inside[at] - part.first) * plan.task.cycle, n)
+        local, cycle = inside[at] - part.first, plan.task.cycle
+        ticks = np.rint(local)  # on ticks the very times of the plan's own rows
+        times = np.where(local == ticks, tick_times(ticks.astype(np.int64), cycle), local * cycle)
+        values = evaluate(part, times, n)
         q[at], v[at], step[at] = values.position, values.velocity, values.step
     return q, v, step
 
@@ -161,11 +166,11 @@ def _said(error: Array, names: tuple[str, ...], kinds: tuple[str, ...], measured
     largest = {}
     for name, kind, value in zip(names, kinds, error.tolist(), strict=True):
         unit, factor = AS_ON_SCREENS.of(kind)
-        largest[f"{name}_{unit}"] = _rounded_up(value * factor)
+        largest[f"{name}_{unit}"] = rounded_up(value * factor)
     return {"interpolation": "cubic Hermite", "largest_error": largest, "measured_at": measured}
 
 
-def _rounded_up(value: float) -> float:
+def rounded_up(value: float) -> float:
     """To three digits, never below the value."""
     if value <= 0.0:
         return 0.0

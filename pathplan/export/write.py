@@ -12,13 +12,22 @@ import numpy as np
 from pathplan.errors import InputError
 from pathplan.export.columns import AS_ON_SCREENS, Units
 from pathplan.export.header import Header
-from pathplan.export.kinds import MAX_ROWS, Kind, kind_of
+from pathplan.export.kinds import MAX_ROWS, kind_of
 from pathplan.export.save import Batch, check_place, saving
 from pathplan.table import JointTable
 from pathplan.tomlfile import listed, nearest
 from pathplan.units import toml_text
 
-__all__ = ["ALWAYS", "OPTIONAL", "check_destination", "chosen_columns", "may_replace", "write_table"]
+__all__ = [
+    "ALWAYS",
+    "OPTIONAL",
+    "check_columns",
+    "check_destination",
+    "check_units",
+    "chosen_columns",
+    "may_replace",
+    "write_table",
+]
 
 ALWAYS = ("time", "position", "step")  # a table without them is none
 OPTIONAL = ("velocity", "acceleration", "jerk", "torque", "pose", "tool_speed")
@@ -53,7 +62,7 @@ def write_table(
     file = Path(file)
     kind = kind_of(file)
     kind.check(file)
-    chosen = _units(units, kind, file)
+    chosen = check_units(units, file)
     check_place(file)
     chunks = iter([table] if isinstance(table, JointTable) else table)
     if columns is not None:
@@ -67,22 +76,27 @@ def write_table(
         kind.write(_blocks(first, chunks, file), stream, header, chosen)
 
 
-def _units(units: str | Units | None, kind: Kind, file: Path) -> Units:
+def check_units(units: str | Units | None, file: str | Path) -> Units:
+    """The units in which a file is to be written. Raises InputError for unknown ones, or where there is no choice."""
     if units is None:
         return AS_ON_SCREENS
-    if kind.si:
+    if kind_of(Path(file)).si:
         expected = "holds SI (rad, m) and nothing else: units can be chosen for other kinds of file"
         raise InputError.at(str(file), expected)
     return units if isinstance(units, Units) else Units.parse(units, "units")
 
 
-def chosen_columns(chunks: Iterable[JointTable], columns: Collection[str]) -> Iterator[JointTable]:
-    """The chunks with only these of the optional columns. Raises InputError for one unknown or not there."""
+def check_columns(columns: Collection[str], where: str = "columns") -> None:
+    """Raises InputError at `where` for a name that is no column's."""
     for name in columns:
         if name not in OPTIONAL and name not in ALWAYS:
-            raise InputError.at(
-                "columns", f"expected {listed(OPTIONAL)}, got {toml_text(name)}{nearest(name, OPTIONAL)}"
-            )
+            expected = f"expected {listed(OPTIONAL)}"
+            raise InputError.at(where, f"{expected}, got {toml_text(name)}{nearest(name, OPTIONAL)}")
+
+
+def chosen_columns(chunks: Iterable[JointTable], columns: Collection[str]) -> Iterator[JointTable]:
+    """The chunks with only these of the optional columns. Raises InputError for one unknown or not there."""
+    check_columns(columns)
     left_out: dict[str, Any] = {name: None for name in OPTIONAL if name not in columns}
     for chunk in chunks:
         for name in columns:

@@ -82,14 +82,14 @@ def _size_on_side(motions: Motions, j: int, side: int, blend: Blend) -> float | 
     m = j + side
     segment = motions.segment[m]
     if segment < 0:
-        if blend.kind == "length":
+        if blend.kind == "length" or motions.bent[m] >= 0:
             return None
         rate = float(np.abs(motions.direction[m, _revolute(motions)]).max(initial=0.0))
         return blend.value / rate if rate > 1e-12 else np.inf
     if blend.kind == "angle" and not _is_pair(motions, j):
         return None
-    extent = float(_extents(motions, blend)[segment])
-    return float(blend.value / extent * motions.length[m]) if extent > 1e-12 else np.inf
+    extent, rate = (float(values[segment]) for values in _extents(motions, blend))
+    return blend.value / rate if extent > 1e-12 else np.inf
 
 
 def _is_pair(motions: Motions, j: int) -> bool:
@@ -97,9 +97,10 @@ def _is_pair(motions: Motions, j: int) -> bool:
     return bool(motions.segment[j] >= 0 and motions.segment[j + 1] >= 0)
 
 
-def _extents(motions: Motions, blend: Blend) -> Array:
-    """(K,) what there is of a blend's quantity on each segment: m or rad."""
-    return motions.segments.path_length if blend.kind == "length" else motions.segments.angle
+def _extents(motions: Motions, blend: Blend) -> tuple[Array, Array]:
+    """(K,) what there is of a blend's quantity on each segment, m or rad, and the most of it per path parameter."""
+    segments = motions.segments
+    return (segments.path_length, segments.speed) if blend.kind == "length" else (segments.angle, segments.turning)
 
 
 def _sampled_sizes(motions: Motions, wanted: Sequence[_Sampled]) -> Array:
@@ -166,8 +167,7 @@ def used_sizes(motions: Motions, blends: Sequence[Blend | None], delta: Array, r
         if blend.kind == "share":
             used[j] = delta[j] / min(motions.length[j], motions.length[j + 1])
         elif _is_pair(motions, j):
-            extents = _extents(motions, blend)[motions.segment[j : j + 2]]
-            used[j] = float((extents * delta[j] / motions.length[j : j + 2]).max())
+            used[j] = float((_extents(motions, blend)[1][motions.segment[j : j + 2]] * delta[j]).max())
         else:
             used[j] = reach[j]
         used[j] = min(used[j], blend.value)

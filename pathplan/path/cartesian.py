@@ -8,21 +8,34 @@ between can be followed exactly.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal
 
 import numpy as np
 
 from pathplan.arm import Arm, Tool
+from pathplan.arm.arm import BARE, NOTHING
 from pathplan.errors import InputError
 from pathplan.path import geometry
+from pathplan.path.curve import CurveSize, curve_derivatives, curve_size
 from pathplan.path.geometry import NO_MOTION, Index, Segments
-from pathplan.path.joint import Array
-from pathplan.task.model import Step, Target, Task
+from pathplan.path.joint import Array, JointPath
+from pathplan.path.rotations import rotation_vector
+from pathplan.path.taught import taught_path
+from pathplan.task.curves import curve_through
+from pathplan.task.model import Curve, Step, Target, Task, Taught
+from pathplan.units import format_quantity
 
 __all__ = ["CartesianPath", "Finding", "Leg", "cartesian_path", "tool_frames", "tool_of"]
 
+_APART = 1e-6  # rad, or arm lengths: a curve that starts further from where the tool is starts elsewhere
+_ROUNDING = 1e-13  # of poses that are the same
+
 NO_MOTION_TEXT = "the arm already is at this target, the step has no motion"
+
+
+class StartsElsewhere(ValueError):
+    """A curve that does not start where the tool is; the message says how far off."""
 
 
 @dataclass(frozen=True)
@@ -41,7 +54,8 @@ class Leg:
     """One moving step: from where to where, base_from_tool (4, 4) with the step's own tool."""
 
     step: Step
-    kind: Literal["joint", "cartesian", "none"]  # "none": a line or arc to where the arm already is
+    # "none": a line or arc to where the arm already is; "taught": a joint path through taught points
+    kind: Literal["joint", "cartesian", "taught", "none"]
     start: Array
     end: Array
     segment: int = -1  # row of `CartesianPath.segments`, -1 unless cartesian
@@ -51,14 +65,16 @@ class Leg:
 class CartesianPath:
     """What the steps of a task ask of the tool: lines, arcs and reorientations with exact evaluators.
 
-    `legs`: the moving steps in order; waits have none. `segments`: one row per cartesian leg. Corners are
-    not part of it: where a joint step takes part in one, they depend on the joints.
+    `legs`: the moving steps in order; waits have none. `segments`: one row per cartesian leg. `taught`: the joint
+    paths through taught points. Corners are not part of it: where a joint step takes part in one, they depend on the
+    joints.
     """
 
     task: Task
     legs: tuple[Leg, ...]
     segments: Segments
     findings: tuple[Finding, ...]
+    taught: Mapping[Taught, JointPath] = field(default_factory=dict)
 
     def poses(self, legs: Index, s: Array) -> Array:
         """(N, 4, 4) programmed base_from_tool at s (N,) along cartesian legs (N,), corners left aside."""
@@ -74,6 +90,8 @@ def tool_of(arm: Arm, name: str) -> Tool:
     """
     if name in ("", arm.tool.name):
         return arm.tool
+    if name == NOTHING:
+        return BARE
     if name not in arm.tools:
         raise InputError(f"{arm.name}: no tool {name}, there is {', '.join(arm.tools) or 'none'}")
     return arm.tools[name]
@@ -82,13 +100,16 @@ def tool_of(arm: Arm, name: str) -> Tool:
 def cartesian_path(task: Task) -> CartesianPath:
     """The programmed geometry of a task.
 
-    Raises InputError, with every problem found in `problems`, for arcs that make no circle and
-    reorientations by a half turn, naming the step.
+    Raises InputError, with every problem found in `problems`, for arcs that make no circle, reorientations by a
+    half turn, and curves that start elsewhere than where the tool is, naming the step.
     """
     legs: list[Leg] = []
     parts: list[Segments] = []
     findings: list[Finding] = []
     problems: list[str] = []
+    said: set[Curve] = set()
+    taught: dict[Taught, JointPath] = {}
+    sizes: dict[Curve, CurveSize] = {}
     targets = _target_poses(task)
     flange_from_tool = task.arm.tool.flange_from_tool
     pose = task.arm.forward(task.start)
@@ -99,17 +120,23 @@ def cartesian_path(task: Task) -> CartesianPath:
         if tool is not flange_from_tool:  # the same flange carries another tool now
             pose = pose @ np.linalg.solve(flange_from_tool, tool)
             flange_from_tool = tool
-        if step.motion == "joint":
+        if step.motion in ("joint", "taught"):
             end = _given(targets, step)
-            legs.append(Leg(step, "joint", pose, end))
+            legs.append(Leg(step, "joint" if step.taught is None else "taught", pose, end))
+            if step.taught is not None and step.taught not in taught:
+                taught[step.taught], note = taught_path(step.taught, task.arm)
+                findings += [Finding(step.index, note)] if note else []
             pose = end
             continue
         try:
-            segment, end = _segment(task, step, targets, pose)
-        except (geometry.DegenerateArc, geometry.HalfTurn) as complaint:
+            segment, end = _segment(task, step, targets, pose, sizes)
+        except (geometry.DegenerateArc, geometry.HalfTurn, StartsElsewhere) as complaint:
             problems.append(f"{step.where}: {complaint}")
             pose = targets.get(step.index, pose)
             continue
+        if step.curve is not None and step.curve.note and step.curve not in said:
+            said.add(step.curve)
+            findings.append(Finding(step.index, step.curve.note))
         if segment.length[0] < NO_MOTION:
             findings.append(Finding(step.index, NO_MOTION_TEXT))
             legs.append(Leg(step, "none", pose, pose))
@@ -121,11 +148,13 @@ def cartesian_path(task: Task) -> CartesianPath:
         raise InputError(problems[0], problems=problems)
     if not legs:
         raise InputError("expected at least one step that moves, got none")
-    return CartesianPath(task, tuple(legs), Segments.join(parts), tuple(findings))
+    return CartesianPath(task, tuple(legs), Segments.join(parts), tuple(findings), taught)
 
 
-def _segment(task: Task, step: Step, targets: Mapping[int, Array], start: Array) -> tuple[Segments, Array]:
-    """The segment of a line or arc, and the pose it ends at."""
+def _segment(
+    task: Task, step: Step, targets: Mapping[int, Array], start: Array, sizes: dict[Curve, CurveSize]
+) -> tuple[Segments, Array]:
+    """The segment of a line, arc or curve, and the pose it ends at. `sizes`: of the curves so far."""
     size = task.arm.length
     if step.target is None:
         if step.centre is None or step.axis is None or step.angle is None:
@@ -133,11 +162,53 @@ def _segment(task: Task, step: Step, targets: Mapping[int, Array], start: Array)
         segment = geometry.arc_about(start, step.centre, step.axis, step.angle, size, along=step.along)
         return segment, segment.poses(np.array([0]), segment.length)[0]
     end = _given(targets, step)
+    if step.curve is not None:
+        return _along_curve(task, step, step.curve, start, sizes)
     if step.motion == "line":
         return geometry.line(start, end, size), end
     if step.via is None:
         raise InputError(f"{step.where}: expected a via point of the arc, or centre, axis and angle")
     return geometry.arc_through(start, step.via, end, size), end
+
+
+def _along_curve(
+    task: Task, step: Step, curve: Curve, start: Array, sizes: dict[Curve, CurveSize]
+) -> tuple[Segments, Array]:
+    """The segment of a curve, and the pose it ends at."""
+    assert step.target is not None and step.frame_from_curve is not None
+    base_from_curve = task.base_from_frame(step.target.frame) @ step.frame_from_curve
+    if task.arm.n < 6:
+        curve = _served_curve(task, step, curve, base_from_curve)
+    away = base_from_curve @ curve.pose(end=False)
+    distance = float(np.linalg.norm(away[:3, 3] - start[:3, 3]))
+    angle = float(np.linalg.norm(rotation_vector((away[:3, :3] @ start[:3, :3].T)[None])[0]))
+    if distance > _APART * task.arm.length or angle > _APART:
+        off = f"{format_quantity(distance, 'length', 3)} and {format_quantity(angle, 'angle', 3)}"
+        name = step.curve.name if step.curve is not None else ""
+        hint = f'expected a step to "{name}.start" before it' if name else "expected a step to its start before it"
+        raise StartsElsewhere(f"the curve starts {off} from where the tool is, {hint}")
+    if curve not in sizes:
+        sizes[curve] = curve_size(curve)
+    segment = geometry.along_curve(curve, base_from_curve, sizes[curve])
+    return segment, segment.poses(np.array([0]), segment.length)[0]
+
+
+def _served_curve(task: Task, step: Step, curve: Curve, base_from_curve: Array) -> Curve:
+    """The curve that an arm with fewer than six axes truly takes, where every pose of it is served within tolerance."""
+    inner = curve.breaks[:-1, None] + np.diff(curve.breaks)[:, None] * np.array([0.0, 0.5])
+    s = np.append(inner.ravel(), curve.breaks[-1])
+    points, turned, _ = curve_derivatives(curve, s, 0)
+    asked = base_from_curve @ geometry.poses_of(points[0], turned)
+    swap = np.linalg.solve(tool_of(task.arm, step.tool).flange_from_tool, task.arm.tool.flange_from_tool)
+    branches = task.arm.inverse_batch(asked @ swap)
+    best = np.argmax(branches.valid, axis=1)
+    if not branches.valid[np.arange(len(s)), best].all():
+        return curve  # refused where the branches are followed and the reason is known
+    served = task.arm.forward(branches.q[np.arange(len(s)), best]) @ np.linalg.inv(swap)
+    if np.abs(served - asked).max() <= _ROUNDING:
+        return curve
+    own = np.asarray(np.linalg.solve(base_from_curve, served), dtype=np.float64)
+    return curve_through(own[:, :3, 3], own[:, :3, :3], task.arm.length)
 
 
 def _given(targets: Mapping[int, Array], step: Step) -> Array:

@@ -15,7 +15,7 @@ import numpy as np
 
 from pathplan.arm import Arm
 from pathplan.errors import PathplanError
-from pathplan.path.cartesian import CartesianPath
+from pathplan.path.cartesian import CartesianPath, Leg
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
 from pathplan.path.refusals import no_branch_follows, no_state_asked
@@ -195,7 +195,10 @@ def choose(
             step = np.where(same, ways.time[rows][:, None], np.inf)
         else:
             leaving = alive
-            if leg.kind == "joint":
+            if leg.kind == "taught":
+                starts = _same(states.q[leaving], _taught_ends(leg)[:1], endless)
+                step = np.where(starts, 0.0, np.inf) + np.zeros(there.stop - there.start)
+            elif leg.kind == "joint":
                 step = _joint_step_times(arm, states.q[leaving], states.q[there], endless)
             else:
                 step = np.where(_same(states.q[leaving], states.q[there], endless), 0.0, np.inf)
@@ -226,6 +229,12 @@ def _same(reached: Array, q: Array, endless: Mask) -> Mask:
         a, b = a[near], b[near]
     same[a, b] = True
     return same
+
+
+def _taught_ends(leg: Leg) -> Array:
+    """(2, n) first and last point of a taught path."""
+    assert leg.step.taught is not None
+    return leg.step.taught.points[[0, -1]]
 
 
 def _joint_step_times(arm: Arm, start: Array, end: Array, endless: Mask) -> Array:
@@ -266,6 +275,9 @@ def _trace(
             row = ways.row[state[i]]
             slot[i] = ways.slot[row]
             near = q[i] + ways.end[row] - states.q[state[i]]
+        elif leg.kind == "taught":
+            begin, end = _taught_ends(leg)
+            near = q[i] + end - begin
         elif given:
             continue  # a joint step to a joint vector goes to that very vector, however many turns
         else:

@@ -9,6 +9,7 @@ miss are halved, all of a level in one batch.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from math import factorial
 from typing import Literal
 
 import numpy as np
@@ -28,6 +29,7 @@ ANGLE = 2e-7  # rad
 # Share of the largest q', q'', q''' on a piece by which it may miss the exact one.
 DERIVATIVE = (1e-5, 1e-4, 1e-3)
 FIRST_WIDTH = 0.5  # path parameter of a piece to start with
+_BENDS = 3  # pieces of a curve that one of ours spans to start with
 _HALVINGS = 16
 _NEAR = 1e-2  # rad, or arm lengths: nearer than this to its pose a piece is a fair guess of the joints
 # Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second), near 0.32 and 0.68 (first, third).
@@ -56,9 +58,12 @@ class Pieces:
 
 def fit(spans: Spans) -> Pieces:
     """Pieces of all spans. Raises Trouble where a span can't be followed to tolerance."""
-    done = [_exact(spans, np.flatnonzero(~spans.inverted()))]
-    todo = np.flatnonzero(spans.inverted())
-    count = np.maximum(1, np.ceil(spans.length[todo] / FIRST_WIDTH - 1e-9)).astype(int)
+    exact, bent = spans.exact(), spans.motions.bent[spans.before] >= 0
+    done = [_exact(spans, np.flatnonzero(exact & ~bent))]
+    done += [_taught(spans, int(i)) for i in np.flatnonzero(exact & bent)]
+    todo = np.flatnonzero(~exact)
+    count = np.maximum(np.ceil(spans.length[todo] / FIRST_WIDTH - 1e-9), spans.bends(todo) / _BENDS).astype(int)
+    count = np.maximum(count, 1)
     span = np.repeat(todo, count + 1)
     number = np.arange(len(span)) - np.repeat(np.cumsum(count + 1) - (count + 1), count + 1)
     at = spans.length[span] * number / np.repeat(count, count + 1)
@@ -127,21 +132,45 @@ def _exact(spans: Spans, i: Index) -> Pieces:
     return Pieces(i, np.zeros(len(i)), spans.length[i], coefficients)
 
 
+def _taught(spans: Spans, i: int) -> Pieces:
+    """A plain span of a taught path: its own polynomials, cut where the span begins and ends."""
+    motions, before = spans.motions, int(spans.before[i])
+    path = motions.paths[motions.bent[before]]
+    begin = float(spans.offset[i])
+    end = begin + float(spans.length[i])
+    if end > path.length * (1 - 1e-12):
+        end = path.length
+    inner = path.breaks[(path.breaks > begin) & (path.breaks < end)]
+    starts = np.concatenate([[begin], inner])
+    powers = [path(starts, order) / factorial(order) for order in range(len(path.coefficients))]
+    coefficients = np.zeros((8, len(starts), motions.arm.n))
+    coefficients[8 - len(powers) :] = powers[::-1]
+    coefficients[7] += motions.start[before] - path([0.0])
+    width = np.diff(np.append(starts, end))
+    return Pieces(np.full(len(starts), i, dtype=np.intp), starts - begin, width, coefficients)
+
+
 def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
     """(4, N, n) exact q and derivatives at positions in spans. Raises Trouble at singularities and out
     of reach.
     """
     arm = spans.motions.arm
+    out = spans.joint_jets(i, at)
+    rows = np.flatnonzero(spans.inverted()[i])
+    if not len(rows):
+        return out
+    i, at = i[rows], at[rows]
     jets = spans.tool_jets(i, at)
     poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(i)
-    q, met = solve_near(arm, poses, guess)
+    q, met = solve_near(arm, poses, guess[rows])
     value = smallest_singular_value(arm, q)
     poor = ~met | (value < SINGULAR)
     if poor.any():
         row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
         raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach")
     derivatives, _ = joint_derivatives(arm, q, spatial_twists(jets))
-    return np.concatenate([q[None], derivatives.transpose(1, 0, 2)]) + spans.joint_jets(i, at)
+    out[:, rows] += np.concatenate([q[None], derivatives.transpose(1, 0, 2)])
+    return out
 
 
 def _keeps(
@@ -156,15 +185,22 @@ def _keeps(
     local = (width[:, None] * _CHECKED).ravel()
     at = np.repeat(start, points) + local
     fitted = derivatives_at(np.repeat(coefficients, points, axis=1), local)
-    straight = spans.joint_jets(i, at)
-    q = fitted[0] - straight[0]
-    jets = spans.tool_jets(i, at)
-    own_from_tool = np.linalg.inv(spans.tool_from_own(i))
-    missing = pose_error(arm.forward(q) @ own_from_tool, poses_of(jets.position[0], jets.rotation))
-    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
-    good = near.reshape(m, points).all(axis=1)
-    exact = joint_derivatives(arm, q, spatial_twists(jets))[0].transpose(1, 0, 2) + straight[1:]
+    exact = spans.joint_jets(i, at)
     weights = joint_weights(arm)
+    q = fitted[0] - exact[0]  # of the Cartesian part, or what is missing where there is none
+    missing = np.zeros((len(i), 6))
+    rows = np.flatnonzero(spans.inverted()[i])
+    if len(rows):
+        jets = spans.tool_jets(i[rows], at[rows])
+        own_from_tool = np.linalg.inv(spans.tool_from_own(i[rows]))
+        reached = arm.forward(q[rows]) @ own_from_tool
+        missing[rows] = pose_error(reached, poses_of(jets.position[0], jets.rotation))
+        exact[1:, rows] += joint_derivatives(arm, q[rows], spatial_twists(jets))[0].transpose(1, 0, 2)
+        q[rows] = 0.0
+    near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
+    near &= (np.abs(q) * weights).max(axis=1) <= ANGLE
+    good = near.reshape(m, points).all(axis=1)
+    exact = exact[1:]
 
     def largest(values: Array) -> Array:
         return np.abs(values * weights).max(axis=2).reshape(len(values), m, -1).max(axis=2)

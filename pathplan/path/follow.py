@@ -16,7 +16,7 @@ from pathplan.path.geometry import poses_of
 from pathplan.path.hermite import derivatives_at
 from pathplan.path.layout import Layout, lay_out
 from pathplan.path.motions import motions_of
-from pathplan.path.refusals import limit_text, place_text, singularity
+from pathplan.path.refusals import limit_text, motion_words, place_text, singularity
 from pathplan.path.taskpath import TaskPath
 from pathplan.path.tracking import track
 from pathplan.task.model import Task
@@ -138,7 +138,7 @@ def _refusal(
         )
     else:
         text = (
-            f"{step.where}: no branch can follow this {step.motion}: "
+            f"{step.where}: no branch can follow this {motion_words(step)}: "
             f"the best gets to {share * 100:.1f} % of it, {place_text(pose)}, where {reason}"
         )
     return UnreachableError(text, data={"step": step.index, "share": share, "pose": pose, "best": q, **data})

@@ -7,19 +7,23 @@ fixed axis at a constant rate:
     p(s) = base + velocity s + cos(rate s) x + sin(rate s) y          R(s) = exp(turn s) R(0)
 
 with `length` = sqrt((path length / arm length)^2 + (rotation angle)^2), so a pure reorientation counts by
-its angle. A step is therefore a row of numbers, and all steps of a task are evaluated in one go.
+its angle. A step is therefore a row of numbers, and all steps of a task are evaluated in one go. A curve through points
+is a row too: where its own frame stands, and which curve it is (`pathplan.path.curve`).
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, fields
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.path.curve import CurveSize, curve_derivatives
 from pathplan.path.joint import Array
 from pathplan.path.rotations import cross, exponential, rotate, rotation_vector
+from pathplan.task.model import Curve
 
 __all__ = [
     "AMBIGUOUS",
@@ -28,6 +32,7 @@ __all__ = [
     "HalfTurn",
     "Jets",
     "Segments",
+    "along_curve",
     "arc_about",
     "arc_through",
     "line",
@@ -73,8 +78,10 @@ class Jets:
 
 @dataclass(frozen=True, eq=False)
 class Segments:
-    """K uniform motions as arrays; see the module's formula. All in the base frame, SI, over s in [0,
-    length].
+    """K motions as arrays; see the module's formula. All in the base frame, SI, over s in [0, length].
+
+    Of a curve, `base` and `rotation` are where its own frame stands, and `curve` is its place in `curves`; of a uniform
+    motion `curve` is -1.
     """
 
     base: Array  # (K, 3)
@@ -87,27 +94,47 @@ class Segments:
     length: Array  # (K,) of the path parameter
     path_length: Array  # (K,) m
     angle: Array  # (K,) rad the tool turns
+    speed: Array  # (K,) m, the most that the tool centre point moves per path parameter
+    turning: Array  # (K,) rad, the most that it turns
+    curve: Index  # (K,)
+    curves: tuple[Curve, ...] = ()
 
     def __len__(self) -> int:
         return len(self.length)
 
     def take(self, k: Index) -> Segments:
         """The rows k as a batch of their own."""
-        return Segments(*(getattr(self, f.name)[k] for f in fields(self)))
+        arrays: dict[str, Any] = {name: getattr(self, name)[k] for name in _ARRAYS}
+        return Segments(**arrays, curves=self.curves)
 
     @classmethod
     def join(cls, parts: Sequence[Segments]) -> Segments:
         """One batch of all rows; an empty batch of none."""
         if not parts:
-            return cls(*(np.zeros((0, *shape)) for shape in ((3,), (3,), (3,), (3,), (), (3,), (3, 3), (), (), ())))
-        return cls(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls)))
+            shapes = {"x": (3,), "y": (3,), "base": (3,), "velocity": (3,), "turn": (3,), "rotation": (3, 3)}
+            none: dict[str, Any] = {name: np.zeros((0, *shapes.get(name, ()))) for name in _ARRAYS}
+            return cls(**{**none, "curve": np.zeros(0, dtype=np.intp)})
+        place = {id(curve): curve for part in parts for curve in part.curves}
+        number = {key: i for i, key in enumerate(place)}
+        renamed = []
+        for part in parts:
+            own = np.array([number[id(curve)] for curve in part.curves] + [-1], dtype=np.intp)
+            renamed.append(own[part.curve])  # -1 takes the last
+        arrays: dict[str, Any] = {name: np.concatenate([getattr(part, name) for part in parts]) for name in _ARRAYS}
+        return cls(**{**arrays, "curve": np.concatenate(renamed)}, curves=tuple(place.values()))
 
     def poses(self, k: Index, s: Array) -> Array:
         """(N, 4, 4) base_from_tool at s (N,) of segments k (N,)."""
         angle = self.rate[k] * s
         position = self.base[k] + self.velocity[k] * s[:, None]
         position += np.cos(angle)[:, None] * self.x[k] + np.sin(angle)[:, None] * self.y[k]
-        return poses_of(position, exponential(self.turn[k] * s[:, None]) @ self.rotation[k])
+        rotation = exponential(self.turn[k] * s[:, None]) @ self.rotation[k]
+        for curve, rows in self.on_curves(k):
+            points, turned, _ = curve_derivatives(curve, s[rows], 0)
+            base = self.rotation[k[rows]]
+            position[rows] = self.base[k[rows]] + rotate(base, points[0])
+            rotation[rows] = base @ turned
+        return poses_of(position, rotation)
 
     def jets(self, k: Index, s: Array, rates: Array | None = None) -> Jets:
         """Exact derivatives at s (N,) of segments k (N,).
@@ -122,18 +149,41 @@ class Segments:
         along, across = cos * x + sin * y, cos * y - sin * x
         position = np.empty((4, len(s), 3))
         position[0] = self.base[k] + velocity * s[:, None] + along
-        first, second, third = velocity + rate * across, -(rate**2) * along, -(rate**3) * across
+        position[1:] = velocity + rate * across, -(rate**2) * along, -(rate**3) * across
         turning = np.zeros((3, len(s), 3))
-        if rates is None:
-            position[1:] = first, second, third
-            turning[0] = turn
-        else:
-            s1, s2, s3 = rates[:, :, None]
-            position[1] = first * s1
-            position[2] = second * s1**2 + first * s2
-            position[3] = third * s1**3 + 3.0 * second * s1 * s2 + first * s3
-            turning[:] = turn * s1, turn * s2, turn * s3
-        return Jets(position, exponential(turn * s[:, None]) @ self.rotation[k], turning)
+        turning[0] = turn
+        rotation = exponential(turn * s[:, None]) @ self.rotation[k]
+        for curve, rows in self.on_curves(k):
+            points, turned, turns = curve_derivatives(curve, s[rows], 3)
+            base = self.rotation[k[rows]]
+            position[:, rows] = [rotate(base, point) for point in points]
+            position[0, rows] += self.base[k[rows]]
+            turning[:, rows] = [rotate(base, w) for w in turns]
+            rotation[rows] = base @ turned
+        if rates is not None:
+            position[1:], turning = _chained(position[1:], rates), _chained(turning, rates)
+        return Jets(position, rotation, turning)
+
+    def on_curves(self, k: Index) -> Iterator[tuple[Curve, Index]]:
+        """Each curve among segments k (N,), -1 for none, and the rows that are on it."""
+        if not self.curves:
+            return
+        number = np.where(k >= 0, self.curve[k], -1)
+        for i in np.unique(number[number >= 0]):
+            yield self.curves[i], np.flatnonzero(number == i)
+
+
+_ARRAYS = tuple(f.name for f in fields(Segments))[:-1]
+
+
+def _chained(values: Array, rates: Array) -> Array:
+    """First, second and third derivative (3, N, d) by s as those by another parameter, s' s'' s''' (3, N).
+
+    Also a rate and its two derivatives: what is differentiated is the same.
+    """
+    s1, s2, s3 = rates[:, :, None]
+    first, second, third = values
+    return np.stack([first * s1, second * s1**2 + first * s2, third * s1**3 + 3.0 * second * s1 * s2 + first * s3])
 
 
 def poses_of(position: Array, rotation: Array) -> Array:
@@ -276,4 +326,28 @@ def _segment(
         # What rounding left of a motion is none, so that nobody measures a corner along it.
         path_length=np.array([distance if distance > NO_MOTION * arm_length else 0.0]),
         angle=np.array([angle if angle > NO_MOTION else 0.0]),
+        speed=np.array([distance * per]),
+        turning=np.array([angle * per]),
+        curve=np.array([-1], dtype=np.intp),
+    )
+
+
+def along_curve(curve: Curve, base_from_curve: Array, size: CurveSize) -> Segments:
+    """The curve whose frame stands at `base_from_curve` (4, 4); K = 1. `size` as `curve_size` gives it."""
+    zero = np.zeros((1, 3))
+    return Segments(
+        base=base_from_curve[None, :3, 3],
+        velocity=zero,
+        x=zero,
+        y=zero,
+        rate=np.zeros(1),
+        turn=zero,
+        rotation=base_from_curve[None, :3, :3],
+        length=curve.breaks[-1:].copy(),
+        path_length=np.array([size.path_length]),
+        angle=np.array([size.angle]),
+        speed=np.array([size.speed]),
+        turning=np.array([size.turning]),
+        curve=np.zeros(1, dtype=np.intp),
+        curves=(curve,),
     )

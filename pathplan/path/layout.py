@@ -131,6 +131,9 @@ def _tangents(motions: Motions, m: Index, at_end: Mask, joint_space: Mask) -> Ar
     weights = joint_weights(motions.arm)
     straight = motions.segment[m] < 0
     tangents[straight, :n] = motions.direction[m[straight]] * weights
+    for path, rows in motions.on_paths(m):
+        at = np.where(at_end[rows], path.length, 0.0)
+        tangents[rows, :n] = path(at, 1) * weights
     rows = np.flatnonzero(~straight)
     if len(rows):
         s = np.where(at_end[rows], motions.length[m[rows]], 0.0)

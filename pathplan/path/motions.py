@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,7 +13,7 @@ from pathplan.arm import Arm
 from pathplan.path.cartesian import CartesianPath
 from pathplan.path.choice import Choice, Routes
 from pathplan.path.geometry import NO_MOTION, Index, Segments
-from pathplan.path.joint import Array
+from pathplan.path.joint import Array, JointPath
 from pathplan.path.newton import joint_weights
 from pathplan.path.tracking import Tracks
 
@@ -46,12 +47,14 @@ class Motions:
     segments: Segments
     reference: Reference
     leg: Index  # (M,)
-    segment: Index  # (M,) -1: straight in joint space
+    segment: Index  # (M,) -1: in joint space
     length: Array  # (M,) of the path parameter
-    direction: Array  # (M, n) dq/ds of a joint motion, zero for others
+    direction: Array  # (M, n) dq/ds of a straight joint motion, zero for others
     start: Array  # (M, n) joint vectors
     end: Array
     tool_from_own: Array  # (M, 4, 4)
+    bent: Index  # (M,) of a motion through taught points its path in `paths`, else -1
+    paths: tuple[JointPath, ...] = ()
 
     def __len__(self) -> int:
         return len(self.leg)
@@ -59,10 +62,20 @@ class Motions:
     def joint_points(self, m: Index, s: Array) -> Array:
         """(N, n) exact positions on joint motions, near guesses on others."""
         q = np.array(self.start[m] + self.direction[m] * s[:, None])
+        for path, rows in self.on_paths(m):
+            q[rows] += path(s[rows]) - path([0.0])
         cartesian = self.segment[m] >= 0
         if cartesian.any():
             q[cartesian] = self.reference(self.segment[m[cartesian]], s[cartesian])
         return q
+
+    def on_paths(self, m: Index) -> Iterator[tuple[JointPath, Index]]:
+        """Each taught path among motions m (N,), -1 for none, and the rows that are on it."""
+        if not self.paths:
+            return
+        number = np.where(m >= 0, self.bent[m], -1)
+        for i in np.unique(number[number >= 0]):
+            yield self.paths[i], np.flatnonzero(number == i)
 
     def tool_points(self, m: Index, q: Array) -> Array:
         """(N, 3) tool centre points of joint positions (N, n) with the tools of motions m (N,)."""
@@ -80,13 +93,19 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
     change = np.diff(choice.q, axis=0)
     joint_length = np.linalg.norm(change * weights, axis=1)
     segment = np.array([leg.segment for leg in path.legs], dtype=np.intp)
-    is_joint = np.array([leg.kind == "joint" for leg in path.legs])
-    moves = (segment >= 0) | (is_joint & (joint_length > NO_MOTION))
-    leg = np.flatnonzero(moves)
+    kind = np.array([leg.kind for leg in path.legs])
+    leg = np.flatnonzero((segment >= 0) | (kind == "taught") | ((kind == "joint") & (joint_length > NO_MOTION)))
     length = joint_length[leg]
     cartesian = segment[leg] >= 0
     length[cartesian] = path.segments.length[segment[leg[cartesian]]]
-    direction = np.where(cartesian[:, None], 0.0, change[leg] / length[:, None])
+    straight = kind[leg] == "joint"
+    direction = np.where(straight[:, None], change[leg] / np.where(straight, length, 1.0)[:, None], 0.0)
+    bent = np.full(len(leg), -1, dtype=np.intp)
+    for m in np.flatnonzero(kind[leg] == "taught"):
+        taught = path.legs[leg[m]].step.taught
+        assert taught is not None
+        bent[m] = list(path.taught).index(taught)
+        length[m] = path.taught[taught].length
     return Motions(
         arm=arm,
         segments=path.segments,
@@ -98,6 +117,8 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
         start=choice.q[leg],
         end=choice.q[leg + 1],
         tool_from_own=frames[leg],
+        bent=bent,
+        paths=tuple(path.taught.values()),
     )
 
 

@@ -17,11 +17,21 @@ from pathplan.errors import UnreachableError
 from pathplan.path.cartesian import CartesianPath, Leg, tool_frames
 from pathplan.path.geometry import Index, Segments
 from pathplan.path.joint import Array
+from pathplan.path.newton import joint_weights
 from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, judged_rows
 from pathplan.path.tracking import Tracks, track, turns_between
+from pathplan.task.model import Step
 from pathplan.units import format_quantity, joint_dimension
 
-__all__ = ["limit_text", "no_branch_follows", "no_state_asked", "place_text", "singular_kind", "singularity"]
+__all__ = [
+    "limit_text",
+    "motion_words",
+    "no_branch_follows",
+    "no_state_asked",
+    "place_text",
+    "singular_kind",
+    "singularity",
+]
 
 
 def place_text(pose: Array) -> str:
@@ -40,10 +50,15 @@ def place_text(pose: Array) -> str:
 def limit_text(arm: Arm, row: int, side: int) -> str:
     """A position limit in words; `side` 0 low, 1 high."""
     limits = arm.limits
-    kinds = {arm.joints[i].kind for i in np.flatnonzero(limits.matrix[row])}
-    dimension = joint_dimension(kinds.pop(), "position") if len(kinds) == 1 else "number"
+    kind = arm.limit_kinds[row]
+    dimension = joint_dimension(kind, "position") if kind else "number"
     limit = format_quantity(float(limits.position[row, side]), dimension)
     return f"joint {limits.names[row]} meets its limit {limit}"
+
+
+def motion_words(step: Step) -> str:
+    """What a step's motion is called in a sentence."""
+    return "taught path" if step.motion == "taught" else step.motion
 
 
 def singular_kind(arm: Arm, q: Array) -> str:
@@ -100,16 +115,32 @@ def _words(label: Mapping[str, str]) -> str:
 def no_branch_follows(path: CartesianPath, leg: int, states: States, alive: Index) -> UnreachableError:
     """The refusal of a leg that none of the states `alive` at its start can follow; the best is described."""
     step = path.legs[leg].step
+    if path.legs[leg].kind == "taught":
+        return _starts_elsewhere(path.task.arm, step, states.q[alive])
     outcomes = _outcomes(path, leg, states, alive)
     best = max(outcomes, key=lambda outcome: outcome.share)
     who = "the only branch" if len(alive) == 1 else f"the best of {len(alive)} branches"
     who += f" ({best.label})" if best.label else ""
     text = (
-        f"{step.where}: no branch can follow this {step.motion}: {who} gets to {best.share * 100:.1f} % of it, "
+        f"{step.where}: no branch can follow this {motion_words(step)}: {who} gets to {best.share * 100:.1f} % of it, "
         f"{place_text(best.pose)}, where {best.reason}"
     )
     data = {"step": step.index, "share": best.share, "pose": best.pose, "best": best.q, **best.more}
     return UnreachableError(text, data=data)
+
+
+def _starts_elsewhere(arm: Arm, step: Step, q: Array) -> UnreachableError:
+    """The refusal of a taught path that starts where the arm can't be; q (S, n) are the states it can be in."""
+    assert step.taught is not None
+    start = step.taught.points[0]
+    best = q[np.argmin((np.abs(q - start) * joint_weights(arm)).max(axis=1))]
+    j = int(np.argmax(np.abs(best - start) * joint_weights(arm)))
+    joint = arm.joints[j]
+    there, here = (format_quantity(float(v), joint_dimension(joint.kind, "position")) for v in (start[j], best[j]))
+    text = f'the taught path starts with joint {joint.name} at {there}, the arm is at {here}: expected a step to '
+    text += f'"{step.taught.name}.start" before it' if step.taught.name else "its first point before it"
+    data = {"step": step.index, "joint": joint.name, "best": best, "start": start}
+    return UnreachableError(f"{step.where}: {text}", data=data)
 
 
 @dataclass(frozen=True, eq=False)
@@ -186,7 +217,7 @@ def _outcome(
         text, singular = singularity(arm, q[_nearer(arm, q, before, stop)])
         return outcome(float(s[stop]), f"it meets {text}", q[before], singular=singular)
     at = _last_reached(arm, segment, frame, slot, float(s[before]), float(s[stop]))
-    return outcome(at, f"the {entry.step.motion} leaves the reach of the arm", q[before])
+    return outcome(at, f"the {motion_words(entry.step)} leaves the reach of the arm", q[before])
 
 
 def _nearer(arm: Arm, q: Array, one: int, other: int) -> int:
@@ -219,7 +250,7 @@ def _last_reached(arm: Arm, segment: Segments, frame: Array, slot: int, inside: 
     """s at which a branch loses a segment, by bisection between two samples; a branch index must have a
     meaning.
     """
-    if arm.structure == "general":
+    if not arm.steady_branches:
         return inside
     for _ in range(30):
         middle = (inside + outside) / 2

@@ -13,7 +13,7 @@ import numpy as np
 
 from pathplan.path.corners import incoming, outgoing
 from pathplan.path.geometry import Index, Jets, Mask, superpose
-from pathplan.path.joint import Array
+from pathplan.path.joint import Array, JointPath
 from pathplan.path.motions import Motions
 
 __all__ = ["Spans"]
@@ -42,6 +42,25 @@ class Spans:
         """(S,) bool: the span has a Cartesian part, so joint positions come from poses."""
         segment = self.motions.segment
         return (segment[self.before] >= 0) | (self.corner & (segment[self.after] >= 0))
+
+    def exact(self) -> Mask:
+        """(S,) bool: a polynomial of low degree, known without a fit: straight in joint space, or a corner between two
+        that are, or a part of a taught path.
+        """
+        bent = self.motions.bent
+        return ~self.inverted() & ~(self.corner & ((bent[self.before] >= 0) | (bent[self.after] >= 0)))
+
+    def bends(self, i: Index) -> Array:
+        """(N,) how many pieces the curves and taught paths of spans i have, about, on the part that the span covers."""
+        motions = self.motions
+        pieces = np.zeros(len(motions))
+        for curve, m in motions.segments.on_curves(np.where(motions.segment >= 0, motions.segment, -1)):
+            pieces[m] = len(curve.breaks) - 1
+        for path, m in motions.on_paths(np.arange(len(motions))):
+            pieces[m] = len(path.breaks) - 1
+        density = pieces / motions.length
+        after = np.where(self.corner[i], density[self.after[i]], 0.0)
+        return np.asarray((density[self.before[i]] + after) * self.length[i])
 
     def programmed(self) -> Mask:
         """(S,) bool: the tool path is known from the geometry alone."""
@@ -92,8 +111,8 @@ class Spans:
         return jets
 
     def joint_jets(self, i: Index, at: Array) -> Array:
-        """(4, N, n) the straight joint motions' part of q and its derivatives, counted from the corner or
-        the span's start.
+        """(4, N, n) the joint motions' part of q and its derivatives, counted from the corner or the motion's
+        start.
 
         For a span without Cartesian part this is q itself.
         """
@@ -105,6 +124,12 @@ class Spans:
         back = np.where(corner, first - motions.length[self.before[i]], first)
         jets[0] = d1 * back[:, None] + d2 * second[:, None]
         jets[1:] = d1 * first_rates[:, :, None] + d2 * second_rates[:, :, None]
+        for motion, at_s, rates, from_end in (
+            (self.before[i], first, first_rates, corner),
+            (np.where(corner, self.after[i], -1), second, second_rates, np.zeros_like(corner)),
+        ):
+            for path, rows in motions.on_paths(motion):
+                jets[:, rows] += _path_jets(path, at_s[rows], rates[:, rows], from_end[rows])
         alone = ~self.inverted()[i]
         base = np.where(corner[:, None], motions.end[self.before[i]], motions.start[self.before[i]])
         jets[0, alone] += base[alone]
@@ -126,3 +151,11 @@ class Spans:
 
     def tool_from_own(self, i: Index) -> Array:
         return self.motions.tool_from_own[self.before[i]]
+
+
+def _path_jets(path: JointPath, s: Array, rates: Array, from_end: Mask) -> Array:
+    """(4, N, n) a joint path at s (N,) and its derivatives by the chain rule, counted from its end or its start."""
+    q, q1, q2, q3 = path.derivatives(s)
+    s1, s2, s3 = rates[:, :, None]
+    origin = np.where(from_end[:, None], path([path.length], side="left"), path([0.0]))
+    return np.stack([q - origin, q1 * s1, q2 * s1**2 + q1 * s2, q3 * s1**3 + 3.0 * q2 * s1 * s2 + q1 * s3])

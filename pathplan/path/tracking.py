@@ -29,6 +29,7 @@ __all__ = ["SINGULAR", "Tracks", "track", "turns_between"]
 SINGULAR = 3e-4  # smallest singular value below which a pose counts as singular
 SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
 FEWEST = 6  # intervals of a segment
+_MOST_BENDS = 1000  # pieces of a curve up to which each gets an interval of its own
 JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
 _BETWEEN = 3  # samples put between two
 _ROUNDS = 5  # of putting them: 1e-4 apart in the end, where a joint can only move by JUMP below SINGULAR
@@ -71,6 +72,8 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
         no = np.zeros((0, 1), dtype=bool)
         return Tracks(none, np.zeros(0), np.zeros((0, 1, arm.n)), no, no, none, none)
     count = np.maximum(np.ceil(segments.length / SPACING).astype(int), FEWEST)
+    for curve, k in segments.on_curves(np.arange(len(segments))):
+        count[k] = np.maximum(count[k], min(len(curve.breaks) - 1, _MOST_BENDS))
     segment = np.repeat(np.arange(len(segments)), count + 1)
     first = np.concatenate([[0], np.cumsum(count + 1)[:-1]]).astype(np.intp)
     step = np.arange(len(segment)) - first[segment]
@@ -79,7 +82,7 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
     def poses(k: Index, at: Array) -> Array:
         return segments.poses(k, at) @ tool_from_own[k]
 
-    if arm.structure == "general":
+    if not arm.steady_branches:
         return _continued(arm, poses, segment, s, first)
     branches = arm.inverse_batch(poses(segment, s))
     q, valid = branches.q, np.asarray(branches.valid)

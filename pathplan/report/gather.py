@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.auditing import Audit
+from pathplan.auditing.drives import torque_limits
 from pathplan.auditing.model import QUANTITIES
 from pathplan.auditing.pacing import PACING
 from pathplan.auditing.shares import limit_rows, row_kinds, rows_of, shares_of
@@ -60,10 +61,11 @@ class Picture:
     """What is drawn of a motion. R limit rows of the arm, its joints first; everything SI.
 
     `lines`: (quantity, limit row) -> Line, and ("tool speed" | "deviation" | "turn", -1) -> Line, of those that there
-    are; deviation (m) and turn (rad) from the programmed path need a plan. `kept`: columns (M,) of the rows that can be
-    read one by one, by the same keys, with ("tool x", -1) and so on; `kept_rows` (M,) are their numbers.
-    `labels`: (limit row or -1 for the tool, quantity) of what can pace; `pace` the runs of rows that one of them paces,
-    `steps` the runs of rows of one step. `step_names` by step, "" where unnamed.
+    are; deviation (m) and turn (rad) from the programmed path need a plan; ("torque left", joint) is the part (0..1)
+    of a torque limit that the speed leaves, where a drive has less at speed. `kept`: columns (M,) of the rows that can
+    be read one by one, by the same keys, with ("tool x", -1) and so on; `kept_rows` (M,) are their numbers. `labels`:
+    (limit row or -1 for the tool, quantity) of what can pace; `pace` the runs of rows that one of them paces, `steps`
+    the runs of rows of one step. `step_names` by step, "" where unnamed.
     """
 
     title: str
@@ -114,14 +116,18 @@ class Picture:
         return quantity if row < 0 else f"{self.names[row]} {quantity}"
 
 
-def picture_of(plan: Plan, *, buckets: int = BUCKETS, most: int = MOST_ROWS) -> Picture:
-    """The picture of a plan. `buckets`: half the points of a line; `most`: rows kept to be read one by one."""
+def picture_of(plan: Plan, *, buckets: int = BUCKETS, most: int = MOST_ROWS, tool: bool = True) -> Picture:
+    """The picture of a plan.
+
+    `buckets`: half the points of a line; `most`: rows kept to be read one by one; `tool`: whether the deviation from
+    the programmed path is wanted too.
+    """
     audit, rows = plan.audit, plan.ticks + 1
     gathering = _Gathering(plan.arm, audit, rows, plan, buckets, most)
     chunk = gathering.chunk
     whole = plan.__dict__.get("table")
     for piece in plan.rows(chunk) if whole is None else whole.chunks(chunk):
-        gathering.add(piece, deviations_of(plan, gathering.seen, len(piece)))
+        gathering.add(piece, deviations_of(plan, gathering.seen, len(piece)) if tool else None)
     return gathering.picture(plan.meta, plan.marks)
 
 
@@ -172,9 +178,10 @@ class _Gathering:
         self.arm, self.audit, self.rows, self.plan = arm, audit, rows, plan
         self.names, self.matrix = limit_rows(arm)
         self.caps = step_caps(arm, plan.task if plan else None)
-        self.size = bucket_size(rows, buckets)
+        self.size = bucket_size(rows, max(buckets, -(-rows // CHUNK)))  # a bucket never spans two chunks
         self.chunk = self.size * max(1, CHUNK // self.size)
-        self.labels = tuple((r, q) for q in PACED[:4] for r in range(len(self.names))) + ((-1, PACED[4]), (-1, PACED[5]))
+        joints = [(r, quantity) for quantity in PACED[:4] for r in range(len(self.names))]
+        self.labels = (*joints, *((-1, quantity) for quantity in PACED[4:]))
         self.wanted = self._wanted(most)
         self.seen = 0
         self.last_time = 0.0
@@ -185,10 +192,10 @@ class _Gathering:
         self.paced = audit.measured == "columns"
 
     def _wanted(self, most: int) -> Integers:
-        """Numbers of the rows to keep."""
+        """Numbers of the rows to keep, the first and the last always among them."""
         if self.rows <= most:
             return np.arange(self.rows)
-        rows = {0, self.rows - 1}
+        rows: set[int] = set()
         for joint in (*self.audit.joints, *self.audit.rows):
             rows |= {peak.row for peak in joint.peaks().values()}
         rows |= {peak.row for peak in (self.audit.tool_speed, self.audit.tool_acceleration) if peak is not None}
@@ -196,7 +203,7 @@ class _Gathering:
             rows |= {mark.row for mark in self.plan.marks} | {part.last for part in self.plan.parts}
         few = np.array(sorted(rows)[:most], dtype=np.int64)
         stride = -(-self.rows // max(1, most - len(few)))
-        return np.union1d(np.arange(0, self.rows, stride), few)
+        return np.union1d(np.arange(0, self.rows, stride), np.append(few, self.rows - 1))
 
     def add(self, table: JointTable, deviations: Array | None) -> None:
         """The next rows; deviations (N, 2) where a plan tells them."""
@@ -213,8 +220,11 @@ class _Gathering:
             own = values if quantity == "torque" else rows_of(values, self.matrix)
             self._draw(quantity, table.time, own, mine)
             if quantity != "position":
+                limits = getattr(self.arm.limits, quantity)
+                if quantity == "torque":
+                    limits = self._torque_limits(table, mine)
                 used = np.zeros((count, len(self.names)))
-                used[:, : own.shape[1]] = shares_of(own, getattr(self.arm.limits, quantity)[: own.shape[1]])
+                used[:, : own.shape[1]] = shares_of(own, limits)
                 shares.append(used)
         shares += self._tool(table, deviations, mine)
         pace = self._pace(np.hstack(shares)) if self.paced else np.full(count, -1)
@@ -226,10 +236,19 @@ class _Gathering:
         self.last_time = float(table.time[-1])
         self.seen += count
 
+    def _torque_limits(self, table: JointTable, mine: Integers) -> Array:
+        """Limits of the rows; of drives whose torque falls with speed what is left of it is drawn and kept as well."""
+        limits = torque_limits(self.arm, table.velocity)
+        if limits.ndim == 3:
+            with np.errstate(invalid="ignore"):
+                left = limits[:, :, 1] / self.arm.limits.torque[: self.arm.n, 1]
+            self._draw("torque left", table.time, np.where(np.isnan(left), 1.0, left), mine)
+        return limits
+
     def _draw(self, quantity: str, time: Array, values: Array, mine: Integers) -> None:
         """The points of these columns (N, C) that are drawn, and the values that are kept."""
         rows = extremes(values, self.size)
-        ends = [row for row, first in ((0, self.seen == 0), (len(time) - 1, self.seen + len(time) == self.rows)) if first]
+        ends = [0] * (self.seen == 0) + [len(time) - 1] * (self.seen + len(time) == self.rows)
         for r in range(values.shape[1]):
             at = rows[:, r] if self.size == 1 else np.unique(np.append(rows[:, r], ends).astype(np.intp))
             self.drawn.setdefault((quantity, r), []).append((time[at], values[at, r]))

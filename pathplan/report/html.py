@@ -1,20 +1,21 @@
 """The report: one self-contained HTML file, and the pieces of it that the live page puts in place.
 
-Nothing is fetched: styles, scripts and data stand in the file, and its content security policy allows these very scripts
-by their hashes and nothing else.
+Nothing is fetched: style, script and data stand in the file, and its content security policy allows that very style and
+script by their hashes and nothing else.
 """
 
 from __future__ import annotations
 
 import base64
 import hashlib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from functools import cache
 from importlib.resources import files
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from pathplan.report.drives_section import drives_section
 from pathplan.report.gather import Picture
 from pathplan.report.markup import embedded, esc, tag
 from pathplan.report.page_data import page_data
@@ -34,18 +35,45 @@ from pathplan.report.sections import (
 )
 from pathplan.report.still import arm_still
 
-__all__ = ["SLOTS", "PageParts", "document", "page_parts", "report_html"]
+if TYPE_CHECKING:
+    from pathplan.savings import Saving
+
+__all__ = [
+    "SLOTS",
+    "PageParts",
+    "asset",
+    "content_policy",
+    "digests",
+    "document",
+    "page_parts",
+    "report_html",
+    "task_key",
+    "title_of",
+]
 
 SCRIPTS = ("rows.js", "chain.js", "view.js", "scrub.js", "start.js")
-SLOTS = ("headline", "changes", "findings", "audit", "steps", "plots", "still", "marks", "savings", "inputs", "cautions")
+ABOVE = ("headline", "changes", "findings", "audit", "steps")
+BELOW = ("marks", "drives", "savings", "inputs", "cautions")
+SLOTS = (*ABOVE, "plots", "still", *BELOW)
 RATES = (("1", "at full speed"), ("0.25", "at a quarter"), ("0.1", "at a tenth"))
+# what a button shows, says and does: turn by deg, tilt by deg, zoom
+TURNS = (
+    ("◀", "turn left", "-10 0 1"),
+    ("▶", "turn right", "10 0 1"),
+    ("+", "nearer", "0 0 1.2"),
+    ("−", "farther", "0 0 0.8333"),
+)
 PageParts = Mapping[str, str]
 
 
-def report_html(picture: Picture) -> str:
-    """The whole report of a motion. The same motion gives the same text."""
+def report_html(picture: Picture, savings: Sequence[Saving] | None = None) -> str:
+    """The whole report of a motion; `savings` as `Plan.savings` finds them, None to say nothing of them.
+
+    The same motion gives the same text.
+    """
     scene = scene_of(picture)
-    return document(title_of(picture), page_parts(picture, scene), page_data(picture, scene), picture.meta)
+    parts = page_parts(picture, scene, savings)
+    return document(title_of(picture), parts, page_data(picture, scene), picture.meta)
 
 
 def title_of(picture: Picture) -> str:
@@ -53,7 +81,7 @@ def title_of(picture: Picture) -> str:
     return f"{picture.title or picture.arm.name}: {verdict(picture.audit)}"
 
 
-def page_parts(picture: Picture, scene: Scene) -> dict[str, str]:
+def page_parts(picture: Picture, scene: Scene, savings: Sequence[Saving] | None = None) -> dict[str, str]:
     """The markup of each slot, '' for what there is nothing to say of."""
     ghosts = None
     rows = [mark.row for mark in picture.marks][:4]
@@ -70,7 +98,8 @@ def page_parts(picture: Picture, scene: Scene) -> dict[str, str]:
         "plots": _plots(picture),
         "still": arm_still(scene, "arm-still", about, ghosts=ghosts),
         "marks": marks_section(picture),
-        "savings": savings_section(picture.plan),
+        "drives": drives_section(picture),
+        "savings": savings_section(picture.plan, savings),
         "inputs": inputs_section(picture),
         "cautions": cautions_section(),
     }
@@ -86,31 +115,30 @@ def document(
     trouble: str = "",
 ) -> str:
     """The page. `live`: the version that the live page starts from; without it, a report that needs nothing more."""
-    style = asset("page.css")
-    script = "(() => {\n'use strict';\n" + "\n".join(map(asset, SCRIPTS + (("watch.js",) if live is not None else ()))) + "})();"
-    policy = content_policy(live=live is not None)
+    version = dict(meta.get("versions") or {}).get("pathplan", "")
     head = [
         tag("meta", charset="utf-8"),
-        tag("meta", http_equiv="Content-Security-Policy", content=policy),
+        tag("meta", http_equiv="Content-Security-Policy", content=content_policy(live=live is not None)),
         tag("meta", name="viewport", content="width=device-width, initial-scale=1"),
         tag("meta", name="color-scheme", content="light dark"),
         tag("meta", name="referrer", content="no-referrer"),
-        tag("meta", name="generator", content=f"pathplan {dict(meta.get('versions') or {}).get('pathplan', '')}".rstrip()),
+        tag("meta", name="generator", content=f"pathplan {version}".rstrip()),
         tag("meta", name="pathplan-task", content=task_key(meta)),
         tag("link", rel="icon", href="data:,"),
         tag("title", esc(title)),
-        f"<style>{style}</style>",
+        f"<style>{style_text()}</style>",
     ]
-    slots = {name: tag("div", parts.get(name, ""), data_slot=name) for name in SLOTS}
-    before = "".join(slots[name] for name in ("headline", "changes", "findings", "audit", "steps"))
-    after = "".join(slots[name] for name in ("marks", "savings", "inputs", "cautions"))
-    main = tag("main", before + _motion(slots["plots"], slots["still"]) + after, id="sections", hidden=data is None)
+    known = digests(parts)
+    slots = {name: tag("div", parts.get(name, ""), data_slot=name, data_digest=known.get(name)) for name in SLOTS}
+    motion = _motion(slots["plots"], slots["still"])
+    whole = [*(slots[name] for name in ABOVE), motion, *(slots[name] for name in BELOW)]
+    main = tag("main", "".join(whole), id="sections", hidden=data is None)
     body = [
         tag("a", "Skip to the motion", href="#motion", class_="skip"),
-        tag("p", esc(trouble), id="trouble", role="alert", hidden=not trouble) if live is not None else "",
+        _watch_lines(trouble) if live is not None else "",
         main,
         f'<script type="application/json" id="data">{embedded(data)}</script>',
-        f"<script>{script}</script>",
+        f"<script>{script_text(live=live is not None)}</script>",
     ]
     root = {"lang": "en", "data_version": live}
     inner = tag("head", "\n".join(head)) + tag("body", "\n".join(body), class_="stale" if trouble else None)
@@ -130,17 +158,39 @@ def asset(name: str) -> str:
 
 def content_policy(*, live: bool) -> str:
     """Nothing but what stands in the page itself; the live page may ask where it came from."""
-    scripts = SCRIPTS + (("watch.js",) if live else ())
-    script = "(() => {\n'use strict';\n" + "\n".join(map(asset, scripts)) + "})();"
     rules = [
         "default-src 'none'",
-        f"script-src {_hash(script)}",
-        f"style-src {_hash(asset('page.css'))}",
+        f"script-src {_hash(script_text(live=live))}",
+        f"style-src {_hash(style_text())}",
         "img-src data:",
         "base-uri 'none'",
         "form-action 'none'",
     ]
     return "; ".join([*rules, *(["connect-src 'self'"] if live else [])])
+
+
+@cache
+def style_text() -> str:
+    """Colours and plots, which still pictures use too, and the rest of the page."""
+    return asset("plot.css") + asset("page.css")
+
+
+@cache
+def script_text(*, live: bool) -> str:
+    """The page's code in one piece that leaves no names behind."""
+    names = [*SCRIPTS, *(["watch.js"] if live else [])]
+    return "(() => {\n'use strict';\n" + "\n".join(map(asset, names)) + "})();"
+
+
+def digests(parts: PageParts) -> dict[str, str]:
+    """What tells whether a slot's markup is another than before."""
+    return {name: hashlib.sha256(html.encode(errors="replace")).hexdigest()[:16] for name, html in parts.items()}
+
+
+def _watch_lines(trouble: str) -> str:
+    """What the live page says of the files as they are now, and that it is at work."""
+    told = tag("p", "\n".join(map(esc, trouble.split("\n"))), id="trouble", role="alert", hidden=not trouble)
+    return told + tag("p", "planning …", id="doing", role="status", hidden=True)
 
 
 def _hash(text: str) -> str:
@@ -151,14 +201,16 @@ def _plots(picture: Picture) -> str:
     """Every plot over time."""
     plots = []
     if picture.audit.measured == "columns":
-        plots.append(tag("h3", "What sets the pace") + pace_plot(picture, "plot-pace", "What sets the pace") + _legend())
+        title = "What sets the pace"
+        plots.append(tag("h3", title) + pace_plot(picture, "plot-pace", title) + _legend())
     for quantity in picture.quantities:
         name = quantity.capitalize()
         plots.append(tag("h3", name) + lane_plot(picture, f"plot-{quantity}", name, quantity_lanes(picture, quantity)))
     lanes = tool_lanes(picture)
     if lanes:
         plots.append(tag("h3", "Tool") + lane_plot(picture, "plot-tool", "Tool speed and path deviation", lanes))
-    about = "Each lane is as high as the room between its limits (dashed); a ring marks the peak, a tint where the limit paces."
+    about = "Each lane is as high as the room between its limits (dashed)."
+    about += " A ring marks the peak, a tint where the limit paces."
     return tag("p", about, class_="small") + "".join(tag("div", plot, class_="plot-box") for plot in plots)
 
 
@@ -174,8 +226,8 @@ def _legend() -> str:
 def _motion(plots: str, still: str) -> str:
     """The view with its slider and readings, beside the plots."""
     views = [tag("button", name, type="button", data_look=name) for name in ("front", "side", "above", "whole")]
-    turns = [("◀", "turn left", "-10 0 1"), ("▶", "turn right", "10 0 1"), ("+", "nearer", "0 0 1.2"), ("−", "farther", "0 0 0.8333")]
-    views += [tag("button", sign, type="button", data_turn=how, aria_label=name, title=name) for sign, name, how in turns]
+    for sign, name, how in TURNS:
+        views.append(tag("button", sign, type="button", data_turn=how, aria_label=name, title=name))
     box = tag("input", type="checkbox", id="labels", checked=True) + " frames and names"
     canvas = tag("canvas", "", id="view", tabindex=0, role="img", aria_label="The arm")
     rates = "".join(tag("option", esc(name), value=value) for value, name in RATES)
@@ -194,4 +246,5 @@ def _motion(plots: str, still: str) -> str:
     ]
     old = tag("p", "Turning and playing need a browser of 2023 or later.", id="no-scrub", hidden=True)
     left = tag("div", "".join(panel), class_="panel") + old + still
-    return section("motion", "Motion", tag("div", tag("div", left, class_="left") + tag("div", plots, id="plots"), class_="two"))
+    both = tag("div", left, class_="left") + tag("div", plots, id="plots")
+    return section("motion", "Motion", tag("div", both, class_="two"))

@@ -10,7 +10,7 @@ from pathplan.report.text import printable
 
 __all__ = ["embedded", "esc", "number", "pretty", "tag"]
 
-VOID = frozenset({"br", "col", "hr", "input", "link", "meta"})
+VOID = frozenset({"br", "col", "hr", "img", "input", "link", "meta"})
 
 
 def esc(text: Any) -> str:

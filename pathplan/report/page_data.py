@@ -43,6 +43,9 @@ def page_data(picture: Picture, scene: Scene) -> dict[str, Any]:
         if row < 0:
             factor, decimals = TOOL[quantity]
             keys.append(quantity)
+        elif quantity == "torque left":
+            factor, decimals = 1.0, 5
+            keys.append(f"{quantity} {row}")
         else:
             factor = _factor(picture.kinds[row], quantity)
             decimals = decimals_for(_scale(picture, quantity, row, values) * factor)

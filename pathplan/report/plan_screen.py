@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from pathplan.report.plan_data import bound_at_pace
 from pathplan.report.screen import audit_blocks, verdict
+from pathplan.report.terminal import Signs, terminal_picture
 from pathplan.report.text import aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value
 
@@ -25,13 +26,17 @@ _DIMENSIONS = {"length": "length", "angle": "angle", "share": "ratio"}
 _SHORT = {"acceleration": "accel.", "tool acceleration": "tool accel."}
 
 
-def plan_screen(plan: Plan) -> str:
-    """The plan in lines of at most 100 columns, without a line end after the last."""
+def plan_screen(plan: Plan, signs: Signs | None = None) -> str:
+    """The plan in lines of at most 100 columns, without a line end after the last.
+
+    `signs`: what a picture of shares and pace is drawn with, None for plain text alone.
+    """
     audit = audit_blocks(plan.audit)
     blocks = [
         _head(plan),
         _steps(plan),
         audit["joints"],
+        [] if signs is None else terminal_picture(plan, signs),
         audit["drives"],
         audit["tool"],
         _marks(plan),

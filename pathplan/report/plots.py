@@ -47,6 +47,7 @@ class Lane:
     peak: Peak | None  # in SI
     factor: float  # from SI to screen units
     said: str  # in words, for those who don't see it
+    curves: tuple[Line, ...] = ()  # limits that change along the way, in screen units
     label: int = -1  # index in Picture.labels of the limit that the lane shows
 
 
@@ -65,9 +66,12 @@ def quantity_lanes(picture: Picture, quantity: str) -> list[Lane]:
         finite = [float(value) * factor for value in limits[r] if math.isfinite(value)]
         peak: Peak | None = getattr(audits[r], quantity)
         label = picture.labels.index((r, quantity)) if quantity in PACED else -1
+        left = picture.lines.get(("torque left", r)) if quantity == "torque" else None
+        curves = tuple(Line(left.time, left.value * value) for value in finite) if left is not None else ()
         unit = DIMENSIONS[dimension].screen if dimension else "SI"
         pieces = tuple((axis.start, axis.end, value) for value in finite)
-        lanes.append(Lane(quantity, name, unit, line, pieces, peak, factor, said(name, peak, dimension), label))
+        words = said(name, peak, dimension)
+        lanes.append(Lane(quantity, name, unit, line, pieces, peak, factor, words, curves, label))
     return lanes
 
 
@@ -85,7 +89,8 @@ def tool_lanes(picture: Picture) -> list[Lane]:
         peak = picture.audit.tool_speed
         label = picture.labels.index((-1, "tool speed"))
         words = said("tool speed", peak, "speed")
-        lanes.append(Lane("tool speed", "tool speed", "mm/s", picture.lines["tool speed", -1], pieces, peak, 1e3, words, label))
+        speed = picture.lines["tool speed", -1]
+        lanes.append(Lane("tool speed", "tool speed", "mm/s", speed, pieces, peak, 1e3, words, label=label))
     deviation = picture.audit.deviation_rows
     for key, name, unit in (("deviation", "off the path", "µm"), ("turn", "turned off it", "µrad")):
         line = picture.lines.get((key, -1))
@@ -191,7 +196,8 @@ def _marks(picture: Picture, axis: TimeAxis, bottom: float) -> str:
     found, free = [], float(LEFT)
     for mark in picture.marks[:MOST_MARKS]:
         x = axis.x(mark.time)
-        found.append(tag("path", f"{tag('title', esc(mark.name))}", d=f"M{number(x)} {number(TOP - 18)}V{number(bottom)}"))
+        words = tag("title", esc(mark.name))
+        found.append(tag("path", words, d=f"M{number(x)} {number(TOP - 18)}V{number(bottom)}"))
         found.append(tag("path", d=f"M{number(x)} {number(TOP - 18)}l-4 -5l4 -5l4 5z", class_="gem"))
         width = 6.4 * len(mark.name)
         left = x + 7
@@ -220,6 +226,9 @@ def _lane(picture: Picture, axis: TimeAxis, lane: Lane, top: float) -> str:
     for start, end, value in lane.limits:
         where = {"x1": axis.x(start), "x2": axis.x(end), "y1": y(value), "y2": y(value)}
         parts.append(tag("line", **where, class_="limit", data_limit=repr(value)))
+    for curve in lane.curves:
+        shape = _line(axis, curve.time, curve.value, y)
+        parts.append(tag("path", d=shape, transform=f"scale({1 / FINE:g})", class_="limit curve"))
     parts.append(tag("path", d=_line(axis, lane.line.time, values, y), transform=f"scale({1 / FINE:g})", class_="line"))
     parts += _names(lane, edges, high, top, y)
     if lane.peak is not None:

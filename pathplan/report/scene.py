@@ -1,4 +1,4 @@
-"""The arm and its path in space, as numbers to draw: joints and what they carry, frames, path, blends. SI, base frame."""
+"""The arm and its path in space, as numbers to draw: joints, tool, frames, path, blends. SI, in the base frame."""
 
 from __future__ import annotations
 
@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from pathplan.path.cartesian import tool_of
 from pathplan.report.gather import Picture
 from pathplan.report.thinning import Array
 
@@ -118,7 +119,7 @@ def _tools(arm: Arm, plan: Plan | None) -> tuple[tuple[Array, ...], tuple[int, .
         return (own,), (0,)
     names, tools, index = {arm.tool.name: 0}, [own], []
     for step in plan.task.steps:
-        tool = arm.tools.get(step.tool, arm.tool)
+        tool = tool_of(arm, step.tool)
         if tool.name not in names:
             names[tool.name] = len(tools)
             tools.append(arm.tip_from_flange @ tool.flange_from_tool)
@@ -137,9 +138,10 @@ def _legs(plan: Plan) -> list[tuple[int, Array]]:
             points = cartesian.poses(np.full(len(s), number), s)[:, :3, 3]
         elif leg.kind == "joint":
             arm = plan.arm
-            tool = arm.tools.get(leg.step.tool, arm.tool)
+            tool = tool_of(arm, leg.step.tool)
             carrying = arm if tool is arm.tool else arm.equipped(tool=tool)
-            points = carrying.forward(targets[number] + share[:, None] * (targets[number + 1] - targets[number]))[:, :3, 3]
+            q = targets[number] + share[:, None] * (targets[number + 1] - targets[number])
+            points = carrying.forward(q)[:, :3, 3]
         else:
             continue
         found.append((leg.step.index, np.asarray(points)))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import textwrap
-from collections.abc import Iterable, Iterator
+from collections.abc import Collection, Iterable, Iterator
 
 from pathplan.auditing import Audit, Deviation, JointAudit, Pacing, Peak, StepPacing
 from pathplan.auditing.words import dimension_of, shown
@@ -67,27 +67,30 @@ def _headline(audit: Audit) -> Iterator[str]:
 
 def _joints(audit: Audit) -> Iterator[str]:
     table = [["joint", "position", "margin", *QUANTITIES]]
-    table += [_joint_cells(joint) for joint in (*audit.joints, *audit.rows)]
+    broken = {(finding.joint, finding.quantity) for finding in audit.findings if finding.level == "exceedance"}
+    table += [_joint_cells(joint, broken) for joint in (*audit.joints, *audit.rows)]
     if audit.measured == "differences":
         yield "velocity, acceleration and jerk: where no column, finite differences of the positions"
     yield from aligned(table, [24, *[15] * 6])
 
 
-def _joint_cells(joint: JointAudit) -> list[str]:
+def _joint_cells(joint: JointAudit, broken: Collection[tuple[str | None, str | None]]) -> list[str]:
     peaks = joint.peaks()
     largest = max(peaks, key=lambda quantity: peaks[quantity].share, default="")  # the first of equal ones
     position = peaks.get("position")
-    cells = [printable(joint.name), _share(position, largest == "position"), "-"]
+    cells = [printable(joint.name), _share(position, largest == "position", (joint.name, "position") in broken), "-"]
     if position is not None and position.margin is not None:
         cells[2] = shown(position.margin, dimension_of(joint.kind, "position"), 3)
-    return cells + [_share(peaks.get(quantity), largest == quantity) for quantity in QUANTITIES]
+    return cells + [
+        _share(peaks.get(quantity), largest == quantity, (joint.name, quantity) in broken) for quantity in QUANTITIES
+    ]
 
 
-def _share(peak: Peak | None, largest: bool = False) -> str:
-    """A share in percent with its mark. 100.0 is only printed of what keeps the limit."""
+def _share(peak: Peak | None, largest: bool = False, broken: bool = True) -> str:
+    """A share in percent with its mark. 100.0 is only printed of what keeps the limit, up to its rounding."""
     if peak is None:
         return "-  "
-    over = peak.margin < -1e-9 if peak.margin is not None else peak.share > 1 + 1e-6
+    over = broken and (peak.margin < -1e-9 if peak.margin is not None else peak.share > 1 + 1e-6)
     percent = 100 * peak.share
     text = f"{max(percent, 100.1):.1f}" if over else f"{percent:.1f}"
     return f"{text} %{'!' if over else '*' if largest else ' '}"
@@ -172,8 +175,6 @@ def _findings(audit: Audit) -> Iterator[str]:
     marks = {"exceedance": "!", "warning": "?", "note": "-"}
     for finding in audit.findings[:MOST_FINDINGS]:
         text = printable(finding.text)
-        yield from textwrap.wrap(
-            text, WIDTH, initial_indent=f"{marks[finding.level]} ", subsequent_indent="  "
-        )
+        yield from textwrap.wrap(text, WIDTH, initial_indent=f"{marks[finding.level]} ", subsequent_indent="  ")
     if len(audit.findings) > MOST_FINDINGS:
         yield f"... and {len(audit.findings) - MOST_FINDINGS} more findings, all of them in --json"

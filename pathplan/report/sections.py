@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Iterator, Sequence
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from pathplan.auditing import JointAudit, Peak
 from pathplan.auditing.model import TOLERANCE
@@ -49,9 +49,17 @@ def section(name: str, title: str, *content: str) -> str:
 
 
 def table(
-    caption: str, head: Sequence[str], rows: Iterable[Sequence[str]], *, numbers: Sequence[int] = (), small: bool = False
+    caption: str,
+    head: Sequence[str],
+    rows: Iterable[Sequence[str]],
+    *,
+    numbers: Sequence[int] = (),
+    small: bool = False,
 ) -> str:
-    """A table of cells that are markup already; the first cell of a row is its heading. `small`: as wide as it needs."""
+    """A table of cells that are markup already; the first cell of a row is its heading.
+
+    `numbers`: columns aligned to the right. `small`: no wider than it needs to be.
+    """
     top = "".join(tag("th", cell, scope="col", class_="n" if c in numbers else None) for c, cell in enumerate(head))
     body = []
     for cells in rows:
@@ -59,7 +67,8 @@ def table(
         rest = (tag("td", cell, class_="n" if c in numbers else None) for c, cell in enumerate(cells[1:], start=1))
         body.append(tag("tr", first + "".join(rest)))
     inner = tag("caption", esc(caption)) + tag("thead", tag("tr", top)) + tag("tbody", "".join(body))
-    return tag("div", tag("table", inner, class_="narrow" if small else None), class_="wide", tabindex=0, role="region", aria_label=caption)
+    whole = tag("table", inner, class_="narrow" if small else None)
+    return tag("div", whole, class_="wide", tabindex=0, role="region", aria_label=caption)
 
 
 def at(time: float, step: int | None = None) -> str:
@@ -78,8 +87,8 @@ def headline(picture: Picture) -> str:
         task = plan.task
         carries += [f"pace {format_quantity(task.pace, 'ratio')}"] if task.pace != 1 else []
         carries += [f"tool speed capped at {format_quantity(task.speed, 'speed')}"] if task.speed is not None else []
-    word = "pass" if audit.passed else "fail"
-    said = tag("p", tag("span", "✓" if audit.passed else "✕", aria_hidden="true") + " " + esc(verdict(audit)), class_=f"verdict {word}")
+    sign = tag("span", "✓" if audit.passed else "✕", aria_hidden="true")
+    said = tag("p", f"{sign} {esc(verdict(audit))}", class_=f"verdict {'pass' if audit.passed else 'fail'}")
     facts = [("cycle time", clock(picture.duration))]
     if plan is not None:
         facts += [
@@ -97,10 +106,10 @@ def headline(picture: Picture) -> str:
     listed = "".join(tag("div", tag("dt", esc(name)) + tag("dd", esc(value))) for name, value in facts)
     more = ""
     if plan is not None:
-        more = tag("p", "The bound: no motion along this path is faster under these limits, waits included.", class_="small")
-        more = _cycle_bar(picture) + more
-    title = tag("h1", esc(picture.title or arm.name))
-    return tag("header", title + tag("p", esc(", ".join(carries))) + said + tag("dl", listed, class_="facts") + more, id="top")
+        about = "The bound: no motion along this path is faster under these limits, waits included."
+        more = _cycle_bar(picture) + tag("p", about, class_="small")
+    title = tag("h1", esc(picture.title or arm.name)) + tag("p", esc(", ".join(carries)))
+    return tag("header", title + said + tag("dl", listed, class_="facts") + more, id="top")
 
 
 def _cycle_bar(picture: Picture) -> str:
@@ -136,7 +145,8 @@ def findings_section(picture: Picture) -> str:
     items = []
     for finding in found[:MOST_ROWS]:
         when = " " + at(finding.time) if finding.time is not None else ""
-        items.append(tag("li", tag("strong", LEVELS[finding.level]) + " " + esc(pretty(finding.text)) + when, class_=finding.level))
+        words = f"{tag('strong', LEVELS[finding.level])} {esc(pretty(finding.text))}{when}"
+        items.append(tag("li", words, class_=finding.level))
     if len(found) > MOST_ROWS:
         items.append(tag("li", f"and {len(found) - MOST_ROWS} more"))
     breaks = any(finding.level == "exceedance" for finding in found)
@@ -151,7 +161,8 @@ def audit_section(picture: Picture) -> str:
     head = ["joint", *QUANTITIES]
     rows = [[esc(joint.name), *_audit_cells(joint)] for joint in (*audit.joints, *audit.rows)]
     about = "Largest share used of each limit; below it the peak, the limit on that side and when."
-    about += " ▲ marks the largest of a joint. Of a position: how far from the middle of its range, and the margin left."
+    about += " ▲ marks the largest of a joint."
+    about += " Of a position: how far from the middle of its range, and the margin left."
     if audit.measured == "differences":
         about += " Where the table has no column, finite differences of the positions are judged."
     tool = tag("ul", "".join(tag("li", line) for line in _tool_lines(picture)), class_="facts-list")
@@ -278,7 +289,8 @@ def marks_section(picture: Picture) -> str:
         [esc(mark.name), at(mark.time), str(mark.row + 1), esc(picture.step_label(mark.step))]
         for mark in picture.marks[:MOST_ROWS]
     ]
-    return section("marks", "Marks", table("Marks", ["mark", "at", "row", "end of step"], rows, numbers=(1, 2), small=True))
+    head = ["mark", "at", "row", "end of step"]
+    return section("marks", "Marks", table("Marks", head, rows, numbers=(1, 2), small=True))
 
 
 def inputs_section(picture: Picture) -> str:
@@ -298,7 +310,7 @@ def inputs_section(picture: Picture) -> str:
 
 def _settings(plan: Plan) -> list[list[str]]:
     task = plan.task
-    rows: list[tuple[str, Any]] = [("cycle", format_quantity(task.cycle, "time", 6)), ("pace", format_quantity(task.pace, "ratio"))]
+    rows = [("cycle", format_quantity(task.cycle, "time", 6)), ("pace", format_quantity(task.pace, "ratio"))]
     if task.speed is not None:
         rows.append(("tool speed capped at", format_quantity(task.speed, "speed")))
     return [[esc(name), esc(value)] for name, value in rows]

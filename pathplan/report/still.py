@@ -103,7 +103,7 @@ def _floor(scene: Scene, view: View) -> str:
 def _arm(scene: Scene, view: View, q: Array) -> list[str]:
     """Links as thick strokes with an edge, far ones first, and a disc at each joint."""
     arm = scene.arm
-    frames, points = arm_points(arm, q, scene.tools[0])
+    points = arm_points(arm, q, scene.tools[0])[1]
     seen = view(points)
     links = [(arm.parents[i] + 1, i + 1) for i in range(arm.n)]
     links += [(arm.tip + 1, arm.n + 1), (arm.n + 1, arm.n + 2)]

@@ -90,7 +90,16 @@ class Places:
 
     def carrying(self, arm: Arm) -> Places:
         """The places as another tool sees them."""
-        return self if arm is self.arm else self._changed(arm=arm)
+        if arm is self.arm:
+            return self
+        if arm not in self._seen:
+            self._seen[arm] = self._changed(arm=arm)
+        return self._seen[arm]
+
+    @cached_property
+    def _seen(self) -> dict[Arm, Places]:
+        """The places as seen with other tools."""
+        return {}
 
     def _changed(self, **changes: Any) -> Places:
         other = replace(self, **changes)

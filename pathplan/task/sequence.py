@@ -109,12 +109,13 @@ class Reader:
             if table.has(key):
                 raise table.error(key, f"{key} goes with repeat, which is missing")
         arm = carried(table, self.arm, self._arms)
-        step = read_step(table, table.where + around.words, around.places.carrying(arm), around.caps)
-        table.finish()
-        self.arm = arm
         if len(self.steps) >= MAX_STEPS:
             raise InputError.at(table.where, f"expected at most {MAX_STEPS} steps with all repeats, got more")
-        self.steps.append(replace(step, index=len(self.steps)))
+        where = table.where + around.words
+        step = read_step(table, len(self.steps), where, around.places.carrying(arm), around.caps)
+        table.finish()
+        self.arm = arm
+        self.steps.append(step)
         self._written.append(table)
 
     def _repeat(self, table: Table, around: _Around) -> None:

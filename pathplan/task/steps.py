@@ -49,49 +49,43 @@ class Caps:
         return Caps(_lower(self.speed, other.speed), _lower(self.acceleration, other.acceleration))
 
 
-def read_step(table: Table, where: str, places: Places, caps: Caps) -> Step:
-    """One step, resolved: SI, points and directions in the base frame, offsets applied; its index is still 0.
+def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) -> Step:
+    """One step, resolved: SI, points and directions in the base frame, offsets applied.
 
     `places` are those seen with what the step carries; `where` names it in messages about the finished task.
     """
-    step = Step(
-        index=0,
-        motion="wait",
-        where=where,
-        name=table.text("name", ""),
-        mark=table.text("mark", None),
-        tool=places.arm.tool.name,
-        payload=places.arm.payload.name if places.arm.payload is not None else None,
-    )
+    arm = places.arm
+    fields: dict[str, Any] = {
+        "index": index,
+        "where": where,
+        "name": table.text("name", ""),
+        "mark": table.text("mark", None),
+        "tool": arm.tool.name,
+        "payload": arm.payload.name if arm.payload is not None else None,
+    }
     if table.has("wait"):
-        return replace(step, wait=_wait(table))
+        return Step(motion="wait", wait=_wait(table), **fields)
     if not table.has("motion"):
         raise _neither_motion_nor_wait(table)
     motion: Motion = table.choice("motion", MOTIONS)
     _only_for(table, motion)
     own = read_caps(table).within(caps)
-    step = replace(
-        step,
-        motion=motion,
-        blend=read_blend(table),
-        speed=own.speed,
-        acceleration=own.acceleration,
-        configuration=read_configuration(table, places),
-    )
+    fields |= {"motion": motion, "blend": read_blend(table), "speed": own.speed, "acceleration": own.acceleration}
+    fields["configuration"] = configuration = read_configuration(table, places)
     if motion in ("curve", "taught"):
-        return replace(step, **_along(table, motion, places))
+        return Step(**fields, **_along(table, motion, places))
     if motion == "arc" and table.has("centre"):
-        return replace(step, **_centre_arc(table, places))
+        return Step(**fields, **_centre_arc(table, places))
     for key in ARC_KEYS[2:]:
         if table.has(key):
             raise table.error(key, f"{key} goes with centre, which is missing")
     target = places.settled(_shifted(table, "offset", places.target(table, "to")))
-    if target.joints is not None and step.configuration:
+    if target.joints is not None and configuration:
         raise table.error("configuration", "the target is a joint vector, which leaves nothing to choose")
     if motion != "joint":
         target = with_pose(target, places)
     via = places.point(table, "via")[0] if motion == "arc" else None
-    return replace(step, target=target, via=via)
+    return Step(**fields, target=target, via=via)
 
 
 def step_to_start(motion: Motion, index: int, file: str, start: Array, places: Places, caps: Caps) -> Step:
@@ -255,13 +249,13 @@ def _blend_kind(value: Any) -> str | None:
 def _at_least(table: Table, key: str, dimension: str) -> float | None:
     """A quantity above zero and above what a slip of the unit would give; None where the key is missing."""
     value: float | None = table.quantity(key, dimension, None)
-    known, got = DIMENSIONS[dimension], toml_text(table.data.get(key))
-    if value is not None and value <= 0.0:
+    if value is None or value >= _LEAST[dimension]:
+        return value
+    known, got = DIMENSIONS[dimension], toml_text(table.data[key])
+    if value <= 0.0:
         raise table.error(key, f"expected {known.expected}, got {got}")
-    if value is not None and value < _LEAST[dimension]:
-        least = format_quantity(_LEAST[dimension], dimension)
-        raise table.error(key, f"expected {known.phrase} of at least {least}, got {got}")
-    return value
+    least = format_quantity(_LEAST[dimension], dimension)
+    raise table.error(key, f"expected {known.phrase} of at least {least}, got {got}")
 
 
 def _lower(one: float | None, other: float | None) -> float | None:

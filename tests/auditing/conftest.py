@@ -22,6 +22,4 @@ def calm_table():
 
 @pytest.fixture(scope="session")
 def position_only(calm_table):
-    return replace(
-        calm_table, **dict.fromkeys(("velocity", "acceleration", "jerk", "torque", "pose", "tool_speed"))
-    )
+    return replace(calm_table, **dict.fromkeys(("velocity", "acceleration", "jerk", "torque", "pose", "tool_speed")))

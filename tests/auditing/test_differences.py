@@ -130,9 +130,7 @@ def test_irregular_times_use_their_own_intervals(arm):
     q = np.outer(tau**3 * (10 - 15 * tau + 6 * tau**2), [0.4, 0.8, -1.2])
     found = audit(JointTable(time, q), arm)
     assert found.passed and found.cycle is None
-    assert "the times lie on no regular grid: differences use the times of the rows" in [
-        f.text for f in found.findings
-    ]
+    assert "the times lie on no regular grid: differences use the times of the rows" in [f.text for f in found.findings]
     for joint, size in zip(found.joints, (0.4, 0.8, 1.2), strict=True):
         assert abs(joint.velocity.peak) == pytest.approx(1.875 * size / 3, rel=1e-3)
         assert abs(joint.acceleration.peak) == pytest.approx(5.7735 * size / 9, rel=1e-2)

@@ -63,28 +63,28 @@ def test_peaks_of_the_double_s_example():
 
 
 BROKEN = [
-    ("velocity", 0, 1.02, "lift: velocity 1020 mm/s at 1.2 s in step 1 exceeds the limit 1000 mm/s, 102.0 %"),
+    ("velocity", 0, 1.02, "lift: velocity 1020 mm/s at 1.2 s (row 301) in step 1 exceeds the limit 1000 mm/s, 102.0 %"),
     (
         "velocity",
         1,
         -2.5,
-        "swing: velocity -143.2 deg/s at 1.2 s in step 1 exceeds the limit -114.6 deg/s, 125.0 %",
+        "swing: velocity -143.2 deg/s at 1.2 s (row 301) in step 1 exceeds the limit -114.6 deg/s, 125.0 %",
     ),
     (
         "acceleration",
         0,
         -4.4,
-        "lift: acceleration -4400 mm/s^2 at 1.2 s in step 1 exceeds the limit -4000 mm/s^2, 110.0 %",
+        "lift: acceleration -4400 mm/s^2 at 1.2 s (row 301) in step 1 exceeds the limit -4000 mm/s^2, 110.0 %",
     ),
     (
         "acceleration",
         2,
         10.00002,
-        "bend: acceleration 572.959 deg/s^2 at 1.2 s in step 1 exceeds the limit 572.958 deg/s^2, 100.0002 %",
+        "bend: acceleration 572.959 deg/s^2 at 1.2 s (row 301) in step 1 exceeds the limit 572.958 deg/s^2, 100.0002 %",
     ),
-    ("jerk", 1, 160.0, "swing: jerk 9167 deg/s^3 at 1.2 s in step 1 exceeds the limit 4584 deg/s^3, 200.0 %"),
-    ("torque", 1, -66.0, "swing: torque -66 N m at 1.2 s in step 1 exceeds the limit -60 N m, 110.0 %"),
-    ("torque", 0, 501.0, "lift: torque 501 N at 1.2 s in step 1 exceeds the limit 500 N, 100.2 %"),
+    ("jerk", 1, 160.0, "swing: jerk 9167 deg/s^3 at 1.2 s (row 301) in step 1 exceeds the limit 4584 deg/s^3, 200.0 %"),
+    ("torque", 1, -66.0, "swing: torque -66 N m at 1.2 s (row 301) in step 1 exceeds the limit -60 N m, 110.0 %"),
+    ("torque", 0, 501.0, "lift: torque 501 N at 1.2 s (row 301) in step 1 exceeds the limit 500 N, 100.2 %"),
 ]
 
 
@@ -105,8 +105,8 @@ def test_each_limit_broken_in_one_row_is_found(arm, calm_table, quantity, joint,
 @pytest.mark.parametrize(
     ("start", "text"),
     [
-        (0.51, "lift: position 910 mm at 3 s in step 2 lies beyond the limit 900 mm by 10 mm"),
-        (-0.12, "lift: position -120 mm at 0 s in step 1 lies beyond the limit -100 mm by 20 mm"),
+        (0.51, "lift: position 910 mm at 3 s (row 751) in step 2 lies beyond the limit 900 mm by 10 mm"),
+        (-0.12, "lift: position -120 mm at 0 s (row 1) in step 1 lies beyond the limit -100 mm by 20 mm"),
     ],
 )
 def test_a_position_beyond_its_limit_is_found(arm, start, text):
@@ -153,7 +153,10 @@ def test_a_limit_on_a_sum_of_joints(arm, calm_table):
     table = with_cell(with_cell(calm_table, "velocity", 300, 1, 1.0), "velocity", 300, 2, -4.0)
     found = audit(table, arm)
     (finding,) = [finding for finding in found.findings if finding.level == "exceedance"]
-    assert finding.text == "shaft: velocity 515.7 deg/s at 1.2 s in step 1 exceeds the limit 458.4 deg/s, 112.5 %"
+    assert (
+        finding.text
+        == "shaft: velocity 515.7 deg/s at 1.2 s (row 301) in step 1 exceeds the limit 458.4 deg/s, 112.5 %"
+    )
     (shaft,) = found.rows
     assert (shaft.name, shaft.velocity.peak, shaft.velocity.row) == ("shaft", 9.0, 300)
     assert shaft.acceleration is None and shaft.torque is None and shaft.position is not None
@@ -167,9 +170,9 @@ def test_the_rows_of_one_step_are_told_together(arm, calm_table):
     velocity[500, 1] = 2.1
     found = exceedances(replace(calm_table, velocity=velocity), arm)
     assert [finding.text for finding in found] == [
-        "swing: velocity 137.5 deg/s at 1.22 s in step 1 exceeds the limit 114.6 deg/s, 120.0 %; "
+        "swing: velocity 137.5 deg/s at 1.22 s (row 306) in step 1 exceeds the limit 114.6 deg/s, 120.0 %; "
         "10 rows from 1.2 s to 1.236 s",
-        "swing: velocity 120.3 deg/s at 2 s in step 2 exceeds the limit 114.6 deg/s, 105.0 %",
+        "swing: velocity 120.3 deg/s at 2 s (row 501) in step 2 exceeds the limit 114.6 deg/s, 105.0 %",
     ]
 
 
@@ -189,7 +192,7 @@ def test_tool_caps_are_limits(calm_table):
     assert found.tool_speed.peak == pytest.approx(1.125) and found.tool_speed.limit == 1.0
     assert found.tool_acceleration.peak == pytest.approx(0.9 * 1.25**2, rel=1e-8)
     texts = [finding.text for finding in found.findings if (finding.quantity or "").startswith("tool")]
-    assert texts[0].startswith("tool: speed 1125 mm/s at 0 s in step 1 exceeds the limit 1000 mm/s, 112.5 %")
+    assert texts[0].startswith("tool: speed 1125 mm/s at 0 s (row 1) in step 1 exceeds the limit 1000 mm/s, 112.5 %")
     assert any(text.startswith("tool: acceleration 1406 mm/s^2") for text in texts)
     assert audit(replace(table, tool_speed=np.full(751, 0.3)), arm).tool_speed.peak == 0.3
     assert audit(table, made_arm()).tool_speed is None

@@ -72,9 +72,7 @@ def made_plan(arm, evidence=None, findings=(), corners=()):
     """A plan of three steps, of which the second is a wait."""
 
     def step(index, motion, name="", speed=None):
-        return SimpleNamespace(
-            index=index, motion=motion, name=name, speed=speed, acceleration=None, tool="none"
-        )
+        return SimpleNamespace(index=index, motion=motion, name=name, speed=speed, acceleration=None, tool="none")
 
     steps = (step(0, "line", "bring", 0.5), step(1, "wait"), step(2, "joint", "return"))
     return SimpleNamespace(
@@ -116,7 +114,7 @@ def test_a_step_that_is_too_fast_for_its_cap(arm, table):
     speed[600] = 3.0  # nothing caps this step
     found = audit(replace(table, tool_speed=speed), arm, plan=made_plan(arm))
     (finding,) = [f for f in found.findings if f.level == "exceedance"]
-    assert finding.text == "tool: speed 510 mm/s at 0.6 s in step 1 exceeds the limit 500 mm/s, 102.0 %"
+    assert finding.text == "tool: speed 510 mm/s at 0.6 s (row 151) in step 1 exceeds the limit 500 mm/s, 102.0 %"
     assert found.tool_speed.row == 150 and found.tool_speed.limit == 0.5 and finding.joint is None
 
 
@@ -144,9 +142,7 @@ def test_what_the_plan_hands_over(arm, table):
     found = audit(table, arm, plan=plan)
     assert found.deviation_rows == deviation and found.deviation_midway is None
     assert found.continuous == continuous
-    assert [(c.asked, c.asked_value, c.used, c.region) for c in found.corners] == [
-        ("20 mm", 0.02, 0.012, "length")
-    ]
+    assert [(c.asked, c.asked_value, c.used, c.region) for c in found.corners] == [("20 mm", 0.02, 0.012, "length")]
     assert [(f.level, f.text) for f in found.findings] == [
         (
             "exceedance",

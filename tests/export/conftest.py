@@ -1,11 +1,13 @@
 """Tables that the export tests draw from."""
 
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
 from scipy.spatial.transform import Rotation
 
+import pathplan
 from pathplan.table import JointTable, Mark, tick_times
 
 
@@ -52,3 +54,43 @@ def bare_table(full_table):
         marks=(),
         meta={},
     )
+
+
+STOPS = """\
+title = "Two stops"
+arm = "{arm}"
+cycle = "4 ms"
+tool = "vacuum gripper"
+start = "home"
+
+[[step]]
+wait = "0.05 s"
+mark = "ready"
+
+[[step]]
+motion = "line"
+to = {{ xyz = [900, 500, 950], rpy = [180, 0, 40] }}
+blend = "30 mm"
+mark = "turned"
+
+[[step]]
+motion = "line"
+to = {{ xyz = [900, 500, 700], rpy = [180, 0, 40] }}
+
+[[step]]
+wait = "0.1 s"
+mark = "vacuum on"
+
+[[step]]
+motion = "joint"
+to = "home"
+"""
+
+
+@pytest.fixture(scope="session")
+def plan(tmp_path_factory):
+    """A plan of two stretches with waits before and between them: joints x, y, z in mm and a wrist in deg."""
+    root = Path(pathplan.__file__).parents[1]
+    file = tmp_path_factory.mktemp("task") / "stops.toml"
+    file.write_text(STOPS.format(arm=(root / "robots" / "loader4.toml").as_posix()))
+    return pathplan.plan(pathplan.load_task(file))

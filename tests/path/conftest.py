@@ -155,7 +155,7 @@ def check_corners(path: TaskPath) -> None:
         if corner.region == "length":
             away = np.linalg.norm(reached[:, :3, 3] - corner.pose[:3, 3], axis=1).max()
             assert away <= corner.used * (1 + 1e-5) + 1e-6
-        elif corner.region == "angle" and stretch.programmed(s)[1].all():
+        elif corner.region == "angle" and stretch.programmed(s[1:-1])[1].all():  # the ends may be of its neighbours
             middle = np.tile(corner.pose[:3, :3], (len(s), 1, 1))
             assert rotation_angle(reached[:, :3, :3], middle).max() <= corner.used * (1 + 1e-5) + 1e-6
         elif corner.region == "angle":

@@ -75,7 +75,8 @@ class Rows {
       const half = Number.isFinite(high - low) && high > low ? (high - low) / 2 : this.doc.joints[joint].one;
       return 1 - margin / half;
     }
-    const limit = value >= 0 ? high : low;
+    const left = quantity === "torque" && this.columns.has(`torque left ${joint}`) ? this.value(`torque left ${joint}`, index) : 1;
+    const limit = (value >= 0 ? high : low) * left;
     return Number.isFinite(limit) ? value / limit : NaN;
   }
 

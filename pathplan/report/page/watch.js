@@ -2,6 +2,7 @@
 
 let seen = Number(document.documentElement.dataset.version);
 const line = document.getElementById("trouble");
+const doing = document.getElementById("doing");
 
 function tell(text, stale) {
   line.textContent = text;
@@ -32,7 +33,8 @@ async function follow() {
       if (!reply.ok) throw new Error(reply.statusText);
       answer = await reply.json();
     } catch {
-      tell("The watch has ended: this is the last plan.", true);
+      tell("The watch has ended: this is its last plan.", true);
+      doing.hidden = true;
       await new Promise((done) => setTimeout(done, 1000));
       continue;
     }
@@ -43,6 +45,7 @@ async function follow() {
     }
     seen = answer.version;
     tell(answer.trouble, answer.trouble !== "");
+    doing.hidden = !answer.doing;
     document.documentElement.dataset.version = seen;
   }
 }

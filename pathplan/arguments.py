@@ -1,0 +1,147 @@
+"""What options of the command line mean: texts checked and made SI, one line of complaint naming the option."""
+
+from __future__ import annotations
+
+import contextlib
+from argparse import Namespace
+from typing import TYPE_CHECKING
+
+from pathplan.errors import InputError
+
+if TYPE_CHECKING:
+    from pathplan.report.judged import Judging
+    from pathplan.report.line_screen import LineAudit
+    from pathplan.report.outputs import Writing
+
+__all__ = ["LONGEST_PERIOD", "judging", "line_audit", "quantity", "refused", "speed_cap", "writing"]
+
+REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
+LONGEST_PERIOD = 10.0  # s
+LINE_CYCLE = 0.004  # s, where nothing else is said
+READING = ("time", "columns", "unit")
+
+
+def quantity(text: str | None, dimension: str, option: str) -> float | None:
+    """An option in SI. A bare number is in the unit of task files: mm/s, s."""
+    from pathplan.units import parse_quantity
+
+    if text is None:
+        return None
+    with contextlib.suppress(ValueError):
+        if dimension != "ratio":  # 50 could be meant as 50 % or as 50 times
+            return parse_quantity(float(text), dimension, option)
+    return parse_quantity(text, dimension, option)
+
+
+def refused(option: str, expected: str, got: str) -> InputError:
+    """The complaint about an option's value."""
+    from pathplan.units import toml_text
+
+    return InputError.at(option, f"expected {expected}, got {toml_text(got)}")
+
+
+def speed_cap(args: Namespace) -> float | None:
+    """The cap on the tool speed, m/s. Raises InputError."""
+    speed = REDUCED_SPEED if args.reduced_speed else quantity(args.speed, "speed", "--speed")
+    if speed is not None and speed <= 0:
+        raise refused("--speed", 'a speed above zero such as "250 mm/s"', args.speed)
+    return speed
+
+
+def pace(args: Namespace) -> float | None:
+    """The share of full speed, 0..1. Raises InputError."""
+    value = quantity(args.pace, "ratio", "--pace")
+    if value is not None and not 0 < value <= 1:
+        raise refused("--pace", 'more than 0 % and at most 100 %, such as "50 %"', args.pace)
+    return value
+
+
+def cycle(args: Namespace) -> float | None:
+    """The controller's cycle, s. Raises InputError."""
+    from pathplan.task.load import CYCLES
+
+    value = quantity(args.cycle, "time", "--cycle")
+    if value is not None and not CYCLES[0] <= value <= CYCLES[1]:
+        raise refused("--cycle", "a time from 50 us to 1 s", args.cycle)
+    return value
+
+
+def judging(args: Namespace) -> Judging:
+    """How a table is judged. Raises InputError."""
+    from pathplan.export.foreign import Asked
+    from pathplan.report.judged import Judging
+
+    task = getattr(args, "task", None)
+    if task is not None and args.tool is not None:
+        raise InputError("argument --tool: not allowed with argument --task, which names its own tools")
+    near = _near(getattr(args, "near", None))
+    if near is not None and task is None:
+        raise InputError("argument --near: only with --task, whose targets it is about")
+    time, columns, unit = (getattr(args, name, None) for name in READING)
+    asked = None if (time, columns, unit) == (None, None, None) else Asked.parse(time, columns, unit)
+    return Judging(args.arm, args.tool, task, asked, near, speed_cap(args))
+
+
+def _near(text: str | None) -> tuple[float, float] | None:
+    """Distance (m) and angle (rad) from "0.5 mm, 0.1 deg", either of them alone too."""
+    from pathplan.auditing.poses import NEAR
+    from pathplan.units import parse_quantity
+
+    if text is None:
+        return None
+    found: dict[str, float] = {}
+    for part in text.split(","):
+        for dimension in ("length", "angle"):
+            with contextlib.suppress(InputError):
+                found.setdefault(dimension, parse_quantity(part, dimension, "--near"))
+    if not 0 < len(found) == len(text.split(",")) or min(found.values()) <= 0:
+        raise refused("--near", 'a distance and an angle above zero, such as "0.5 mm, 0.1 deg"', text)
+    return found.get("length", NEAR[0]), found.get("angle", NEAR[1])
+
+
+def writing(args: Namespace) -> Writing:
+    """How tables are written. Raises InputError."""
+    from pathplan.export.columns import Units
+    from pathplan.export.write import check_columns
+    from pathplan.report.outputs import Writing
+
+    def text(name: str) -> str | None:
+        value: str | None = getattr(args, name, None)
+        return value
+
+    units, columns, pvt = text("write_units"), text("write_columns"), text("pvt")
+    names = None if columns is None else tuple(columns.replace(",", " ").replace("tool speed", "tool_speed").split())
+    if names is not None:
+        check_columns(names, "--write-columns")
+    period = quantity(pvt, "time", "--pvt")
+    if period is not None and not 0 < period <= LONGEST_PERIOD:
+        raise refused("--pvt", f"a time above zero and up to {LONGEST_PERIOD:g} s", str(pvt))
+    if period is not None and names is not None:
+        raise InputError("argument --write-columns: not allowed with argument --pvt, whose columns are its own")
+    return Writing(
+        overwrite=getattr(args, "overwrite", False),
+        units=None if units is None else Units.parse(units, "--write-units"),
+        columns=names,
+        pvt=period,
+        split=text("split") is not None,
+    )
+
+
+def line_audit(args: Namespace) -> LineAudit:
+    """The plan of a line between the ends that the options give, and its parts. Raises PathplanError."""
+    import pathplan
+    from pathplan.auditing.line import line_parts, place_from, plan_line
+    from pathplan.report.line_screen import LineAudit
+
+    for option in ("start", "goal", "arm"):
+        if getattr(args, option) is None:
+            named = {"start": "--from", "goal": "--to", "arm": "--arm"}[option]
+            raise InputError(f"a single line takes --from, --to and --arm: {named} is missing")
+    for option in (*READING, "task", "near"):
+        if getattr(args, option) is not None:
+            raise InputError(f"argument --{option}: only for a table")
+    arm = pathplan.load_arm(args.arm).equipped(tool=args.tool)
+    start, goal = place_from(args.start, arm, "--from"), place_from(args.goal, arm, "--to")
+    times = cycle(args) or LINE_CYCLE, pace(args) or 1.0
+    plan, starts, able = plan_line(arm, start, goal, speed=speed_cap(args), cycle=times[0], pace=times[1])
+    return LineAudit(args.start, args.goal, plan, line_parts(plan), starts, able)

@@ -1,0 +1,140 @@
+"""The figures of the project as ratios measured in one run: python -m tests.benchmarks.figures
+
+Never a test: times depend on the machine. Run on a quiet one, with one thread for linear algebra.
+"""
+
+from __future__ import annotations
+
+import os
+
+os.environ.setdefault("OMP_NUM_THREADS", "1")
+
+import subprocess
+import sys
+import time
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+
+import pathplan
+
+ROOT = Path(__file__).parent.parent.parent
+PICK = ROOT / "examples" / "glazer6-pick-and-place.toml"
+
+
+def say(what: str, figure: float, asked: str) -> None:
+    print(f"{what:72s} {figure:8.4f}   {asked}", flush=True)
+
+
+def best_of(runs: int, call: Callable[[], object]) -> float:
+    """Median process time of some calls after one that warms up, s."""
+    call()
+    times = []
+    for _ in range(runs):
+        start = time.process_time()
+        call()
+        times.append(time.process_time() - start)
+    return float(np.median(times))
+
+
+def straight_lines() -> None:
+    """Duration against the closed form of the seven phases (Biagiotti & Melchiorri 2008, sec. 3.4)."""
+    from tests.timing.cases import seven_phases, straight
+
+    rng, worst = np.random.default_rng(0), 0.0
+    for _ in range(100):
+        numbers = 10.0 ** rng.uniform((-4, -1, -0.5, 0.5), (1.5, 1, 2, 3.5))
+        case = straight([numbers[0]], *numbers[1:])
+        timing = pathplan.schedule(case.path, velocity=case.velocity, acceleration=case.acceleration, jerk=case.jerk)
+        worst = max(worst, timing.duration / seven_phases(*numbers))
+    say("100 straight joint lines: longest over the closed form", worst, "at most 1.002")
+
+
+def optimum() -> None:
+    """Duration against direct transcription with casadi and IPOPT (table and script in reference/)."""
+    from tests.benchmarks.reference.load_optimum import load_optimum
+
+    for case in load_optimum():
+        path = pathplan.JointPath(case.spline)
+        limits = {"velocity": case.velocity, "acceleration": case.acceleration}
+        timing = pathplan.schedule(path, jerk=case.jerk, **limits)
+        bound = pathplan.lower_bound(path, **limits)
+        say(f"{case.name}: duration over the optimum", timing.duration / case.duration_feasible, "at most 1.005")
+        say(f"{case.name}: bound over the optimum without jerk limits", bound / case.duration_without_jerk, "at most 1")
+
+
+def planning() -> None:
+    """Time to plan against the time the motion takes, imports done, one core."""
+    for file in sorted((ROOT / "examples").glob("*.toml")):
+        try:
+            task = pathplan.load_task(file)
+        except pathplan.InputError:  # a file that tasks include
+            continue
+        plan = pathplan.plan(task)
+        spent = best_of(5, lambda task=task: pathplan.plan(task))
+        say(f"{file.stem}: planning over motion", spent / plan.motion_time, "at most 0.1")
+    from tests.timing.cases import wavy
+
+    case = wavy(10, 10)
+    limits = {"velocity": case.velocity, "acceleration": case.acceleration, "jerk": case.jerk}
+    timing = pathplan.schedule(case.path, **limits)
+    spent = best_of(5, lambda: pathplan.schedule(case.path, **limits))
+    say("ten-waypoint six-axis path: timing over motion", spent / timing.duration, "at most 0.05")
+
+
+def whole_process() -> None:
+    """Whole processes against a bare import of roboticstoolbox, wall time, in turn."""
+
+    def wall(*command: str) -> float:
+        start = time.perf_counter()
+        subprocess.run([sys.executable, *command], check=True, capture_output=True, cwd=ROOT)
+        return time.perf_counter() - start
+
+    plans = {
+        "plan six-axis pick-and-place": ("plan", str(PICK)),
+        "plan gantry pick-and-place (no torque)": ("plan", str(ROOT / "examples" / "loader4-belt-to-car.toml")),
+    }
+    runs: dict[str, list[float]] = {}
+    for _ in range(6):
+        toolbox = wall("-c", "import roboticstoolbox")
+        for name, command in plans.items():
+            spent = wall("-m", "pathplan", *command, "--no-table", "--quiet")
+            runs.setdefault(name, []).append(spent / toolbox)
+        runs.setdefault("--help", []).append(wall("-m", "pathplan", "--help") / toolbox)
+    asked = dict(zip(runs, ("at most 1.5", "well under 1.5", "at most 0.3"), strict=True))
+    for name, ratios in runs.items():
+        say(f"whole process, {name}: over importing roboticstoolbox", float(np.median(ratios[1:])), asked[name])
+
+
+def toolbox_alone() -> None:
+    """Cycle time against the toolbox's multi-segment joint motion through the same poses, slowed to the same limits."""
+    from tests.benchmarks.toolbox_motion import toolbox_duration
+
+    plan = pathplan.plan(pathplan.load_task(PICK))
+    joints = plan.task.arm.joints
+    limits = [np.array([getattr(joint, name) for joint in joints]) for name in ("velocity", "acceleration", "jerk")]
+    total = 0.0
+    first = 0
+    for stretch in plan.path.stretches:
+        count = sum(part.s_to > part.s_from for part in stretch.steps)
+        total += toolbox_duration(plan.path.targets[first : first + count + 1], *limits)
+        first += count
+    free = pathplan.plan(without_caps(plan.task))
+    say("toolbox alone over ours, same stops and poses, joint limits only", total / free.motion_time, "above 1")
+
+
+def without_caps(task: pathplan.Task) -> pathplan.Task:
+    """The task without caps on the tool, which the toolbox knows nothing of."""
+    from dataclasses import replace
+
+    return replace(task, speed=None, steps=tuple(replace(step, speed=None, acceleration=None) for step in task.steps))
+
+
+def main() -> None:
+    for section in (straight_lines, optimum, planning, whole_process, toolbox_alone):
+        section()
+
+
+if __name__ == "__main__":
+    main()
