@@ -14,6 +14,7 @@ __all__ = ["apart", "canonical", "descend", "missing", "pose_errors", "reached",
 CHUNK = 2048
 STRIDE = 0.3  # rad, or lengths of the arm: a larger step left the neighbourhood in which Newton's method is good
 ROUNDS = 10
+IDLE = 3  # rounds in a row without progress that end a row
 ENOUGH = 2e-15  # of a metre over the arm's length, and rad: rounding
 # On an arm with fewer than six axes the position comes first: what a pose is tilted by is not to move the tool.
 POSITION_FIRST = 1e3
@@ -47,9 +48,16 @@ def canonical(g: Geometry, q: Array) -> Array:
 
 
 def apart(g: Geometry, q: Array, other: Array) -> Array:
-    """Largest difference (...) between joint values (..., m), whole turns left aside, metres over the arm's length."""
-    scale = np.array([1.0 if kind == "revolute" else 1.0 / g.length for kind in g.kinds])
-    return np.abs(canonical(g, q - other) * scale).max(axis=-1)
+    """Largest difference (...) between joint values (..., m), revolute ones in (-pi, pi], whole turns left aside,
+    metres over the arm's length.
+    """
+    gap = np.abs(q - other)
+    for k, kind in enumerate(g.kinds):
+        if kind == "revolute":
+            np.minimum(gap[..., k], 2.0 * np.pi - gap[..., k], out=gap[..., k])
+        else:
+            gap[..., k] /= g.length
+    return np.asarray(gap.max(axis=-1))
 
 
 def missing(rotation: Array, point: Array, poses: Array) -> Array:
@@ -117,17 +125,17 @@ def refine(g: Geometry, q: Array, poses: Array, rounds: int = ROUNDS) -> Array:
     scale = np.array([1.0 if kind == "revolute" else g.length for kind in g.kinds])
     weight = np.array([POSITION_FIRST if g.m < 6 else 1.0] * 3 + [1.0] * 3)
     best, least = q.copy(), np.full(len(q), np.inf)
-    active = np.arange(len(q))
+    active, idle = np.arange(len(q)), np.zeros(len(q), dtype=int)
     for _ in range(rounds + 1):
         error, matrix = _linear(g, q[active], poses[active])
         error *= weight
         size = np.sqrt(np.sum(error * error, axis=1))
         better = size < least[active]
         kept = active[better]
-        # Where a step brings nothing any more, rounding or a minimum is reached.
-        stuck = ~better | (size > 0.9 * least[active])
+        # Where steps bring nothing any more, rounding or a minimum is reached.
+        idle[active] = np.where(size < 0.9 * least[active], 0, idle[active] + 1)
         least[kept], best[kept] = size[better], q[kept]
-        going = ~(stuck & (size < 1e-9)) & (size > ENOUGH)
+        going = (idle[active] < np.where(size < 1e-9, 1, IDLE)) & (size > ENOUGH)
         active = active[going]
         if not len(active):
             break

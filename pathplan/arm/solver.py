@@ -22,7 +22,7 @@ __all__ = ["Answers", "Solver", "solver_of"]
 CHUNK = 512  # poses solved at a time, so that the working arrays stay in cache
 POLISHED = 1e-12  # m and rad: answers within this are left as they are
 BASIN = 1e-3  # of the arm's length, and rad: from farther off an exact form's answer is no answer
-NEAR_BASIN = 0.15  # the same of a form that fits nearly
+NEAR_BASIN = 0.02  # the same of a form that fits nearly: some of its tolerance
 VALID = 1e-9
 DOUBTFUL = 0.05  # smallest distance of branches (rad) below which a form that fits nearly may miss some
 FOLLOWED = 0.5  # rad: an answer this near to one of the pose before may be the same branch
@@ -90,6 +90,8 @@ class Solver:
                 q[part], errors[:, part] = self._by_form(self.form, poses[part])
             else:
                 q[part], errors[:, part] = self._in_general(poses[part])
+        if self.form is not None and (self.g.m >= 6 or not self.exact):
+            self._polish(self.form, q, errors, poses)
         if not self.steady and len(poses) > 1:
             order = _followed(self.g, q, _valid(errors))
             rows = np.arange(len(poses))[:, None]
@@ -101,9 +103,10 @@ class Solver:
         if not form.steady or not self.exact:
             q = canonical(self.g, q)
         q = np.ascontiguousarray(q)
-        errors = self._errors(q, poses)
-        if self.g.m < 6 and self.exact:
-            return q, errors
+        return q, self._errors(q, poses)
+
+    def _polish(self, form: Form, q: Array, errors: Array, poses: Array) -> None:
+        """Newton steps where the form's answer is near but not at its pose; of unsteady forms repeated answers go."""
         basin = BASIN if self.exact else NEAR_BASIN
         off = np.maximum(errors[0] / self.g.length, errors[1])
         row, branch = np.nonzero((errors.max(axis=0) > POLISHED) & (off < basin))
@@ -114,10 +117,12 @@ class Solver:
             row, branch = row[kept], branch[kept]
             q[row, branch], errors[:, row, branch] = tried[kept], tried_errors[:, kept]
         if not form.steady:
-            self._drop_repeated(q, errors)
+            for start in range(0, len(poses), CHUNK):
+                self._drop_repeated(q[start : start + CHUNK], errors[:, start : start + CHUNK])
         elif not self.exact and self.elimination:
-            self._complete(q, errors, poses)
-        return q, errors
+            for start in range(0, len(poses), CHUNK):
+                part = slice(start, start + CHUNK)
+                self._complete(q[part], errors[:, part], poses[part])
 
     def _errors(self, q: Array, poses: Array) -> Array:
         return np.array(pose_errors(reached(self.g, q), poses[:, None]))
@@ -198,19 +203,19 @@ def _followed(g: Geometry, q: Array, good: Mask) -> Index:
     straight = (to == np.arange(places)) | (to < 0)
     if straight.all():
         return order
-    for k in range(1, size):
-        before = order[k - 1]
-        after = to[k - 1][before]
-        used = after[after >= 0]
-        left = np.setdiff1d(order[k], used, assume_unique=True)
+    rows, every = [list(range(places))], range(places)
+    for successors in to.tolist():
+        row = [successors[answer] for answer in rows[-1]]
+        used = set(row)
+        left = [answer for answer in every if answer not in used]
         # What has no predecessor stays at its own place where that is free.
-        row = after.copy()
-        open_places = np.flatnonzero(row < 0)
         for answer in left:
-            place = answer if row[answer] < 0 else open_places[row[open_places] < 0][0]
-            row[place] = answer
-        order[k] = row
-    return order
+            if row[answer] < 0:
+                row[answer] = answer
+                used.add(answer)
+        left = [answer for answer in left if answer not in used]
+        rows.append([left.pop(0) if answer < 0 else answer for answer in row])
+    return np.array(rows, dtype=np.intp)
 
 
 def solver_of(g: Geometry, travel: Any = None) -> Solver:

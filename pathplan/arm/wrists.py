@@ -128,7 +128,6 @@ def _three_slides(g: Geometry, turns: list[int], slides: list[int], rotation: Ar
     joints = np.zeros((6, 2, size))
     joints[turns] = wrist_angles(g.axes[turns], rotation)
     # Without the travels, then what each of them adds, turned by the joints before it.
-    origin = np.repeat(-shift[:, None], 2, axis=1)
     directions = np.empty((3, 3, 2, size))
     unmoved = np.zeros((3, 2, size))
     for k in reversed(range(6)):
@@ -140,9 +139,21 @@ def _three_slides(g: Geometry, turns: list[int], slides: list[int], rotation: Ar
         for i in reversed([i for i in turns if i < k]):
             direction = rotate(g.axes[i], joints[i], direction)
         directions[:, column] = direction
-    travel = np.linalg.pinv(directions.transpose(2, 3, 0, 1)) @ (-(origin + unmoved)).transpose(1, 2, 0)[..., None]
-    joints[slides] = travel[..., 0].transpose(2, 0, 1)
+    joints[slides] = _solved(directions, shift[:, None] - unmoved)
     return joints
+
+
+def _solved(columns: Array, right: Array) -> Array:
+    """(3, ...) x with columns (3, 3, ...) @ x = right (3, ...), by Cramer's rule; zero where the columns are level."""
+
+    def crossed(a: Array, b: Array) -> Array:
+        return np.stack([a[1] * b[2] - a[2] * b[1], a[2] * b[0] - a[0] * b[2], a[0] * b[1] - a[1] * b[0]])
+
+    a, b, c = columns[:, 0], columns[:, 1], columns[:, 2]
+    rows = np.stack([crossed(b, c), crossed(c, a), crossed(a, b)])
+    determinant = np.sum(a * rows[0], axis=0)
+    determinant = np.where(np.abs(determinant) < 1e-12, np.inf, determinant)
+    return np.asarray(np.sum(rows * right, axis=1) / determinant)
 
 
 def meeting_elsewhere(g: Geometry) -> Form | None:

@@ -35,7 +35,7 @@ class Outcome:
     alone: int = 0  # poses of ours without the joint vector they came from
     position_error: float = 0.0
     angle_error: float = 0.0
-    time: float = np.inf  # s a pose and branch
+    time: float = np.inf  # s of processor time a pose and branch
     counts: np.ndarray = field(default_factory=lambda: np.zeros(0, dtype=int))
 
     @property
@@ -83,9 +83,9 @@ def examine(label: str, poses: int, starts: int, seed: int = 1, timed: bool = Tr
     ours, valid, position, angle = solve(targets)
     if timed:
         for _ in range(3):
-            start = time.perf_counter()
+            start = time.process_time()
             solve(targets[: min(poses, 2048)])
-            outcome.time = min(outcome.time, (time.perf_counter() - start) / min(poses, 2048) / ours.shape[1])
+            outcome.time = min(outcome.time, (time.process_time() - start) / min(poses, 2048) / ours.shape[1])
     outcome.places = ours.shape[1]
     outcome.branches = int(valid.sum())
     outcome.counts = np.bincount(valid.sum(axis=1), minlength=outcome.places + 1)
