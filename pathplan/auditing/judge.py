@@ -38,7 +38,14 @@ from pathplan.auditing.shares import (
     shares_of,
 )
 from pathplan.auditing.stamps import Stamps, finite_rows, found_cycle
-from pathplan.auditing.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
+from pathplan.auditing.tool import (
+    arms_by_step,
+    by_tool,
+    nearest_singularity,
+    step_caps,
+    tool_acceleration,
+    tool_speed,
+)
 from pathplan.auditing.words import dimension_of, shown
 from pathplan.errors import InputError
 from pathplan.export.columns import DEGREES, MILLIMETRES
@@ -110,6 +117,7 @@ class _Judge:
         self.jumps = Jumps(self.names, self.kinds, arm.limits.acceleration[: arm.n], steps)
         self.stamps = Stamps(self.cycle, stated=first.cycle is not None, rounding=rounding.time)
         self.speed_caps, self.acceleration_caps = step_caps(arm, plan.task if plan else None)
+        self.arms = arms_by_step(arm, plan.task if plan else None)
         joints = [(name, q) for q in (*DERIVED, "torque") for name in self.names]
         self.clock = StepClock([*joints, (None, TOOL[0]), (None, TOOL[1])], self.cycle)
         self.rows, self.last_time = 0, 0.0
@@ -160,8 +168,10 @@ class _Judge:
         if good.any():
             at = Rows(table.time[good], table.step[good], 0)
             numbers = self.rows + np.flatnonzero(good)
-            before = self.singularity
-            self.singularity = nearest_singularity(self.arm, table.position[good], at, numbers, before)
+            for arm, mine in by_tool(self.arms, at.step):
+                place = Rows(at.time[mine], at.step[mine], 0)
+                position = table.position[good][mine]
+                self.singularity = nearest_singularity(arm, position, place, numbers[mine], self.singularity)
 
     def _velocity(self, table: JointTable) -> Array:
         """Joint velocities (N, n): the column, or else the differences from row to row."""
@@ -197,7 +207,9 @@ class _Judge:
         if speed is None and (table.velocity is not None or np.isfinite(self.speed_caps).any()):
             known = np.where(np.isfinite(velocity).all(axis=1) & good)[0]
             speed = np.zeros(len(table))
-            speed[known] = tool_speed(self.arm, table.position[known], velocity[known])
+            for arm, at in by_tool(self.arms, table.step[known]):
+                k = known[at]
+                speed[k] = tool_speed(arm, table.position[k], velocity[k])
             steps = self.rounding.step("position", self.arm.n)
             if table.velocity is None and steps.any() and len(known):  # both rows of a difference are rounded
                 reach = np.linalg.norm(self.arm.jacobian(table.position[known])[:, :3], axis=1).max(axis=0)
@@ -225,7 +237,9 @@ class _Judge:
         if not len(at):
             return None
         found = np.zeros(len(table))
-        found[at] = tool_acceleration(self.arm, table.position[at], table.velocity[at], table.acceleration[at])
+        for arm, mine in by_tool(self.arms, table.step[at]):
+            k = at[mine]
+            found[k] = tool_acceleration(arm, table.position[k], table.velocity[k], table.acceleration[k])
         return found
 
     def _tool_share(self, quantity: str, values: Array | None, caps: Array, rows: Rows, rounded: Array) -> Array:

@@ -50,12 +50,8 @@ def limit_rows(arm: Arm) -> tuple[tuple[str, ...], Array]:
 
 
 def row_kinds(arm: Arm) -> tuple[str, ...]:
-    """ "revolute" or "prismatic" for each limit row, "" for one that sums both kinds."""
-    kinds = []
-    for row in arm.limits.matrix:
-        involved = {joint.kind for joint, c in zip(arm.joints, row, strict=True) if c != 0.0}
-        kinds.append(involved.pop() if len(involved) == 1 else "")
-    return tuple(kinds)
+    """ "revolute" or "prismatic" for each limit row; "" for one that sums both kinds and says not what it counts in."""
+    return arm.limit_kinds
 
 
 def rows_of(values: Array, matrix: Array) -> Array:

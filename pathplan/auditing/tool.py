@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator, Sequence
 from typing import Any
 
 import numpy as np
@@ -12,8 +13,9 @@ from pathplan.arm import Arm
 from pathplan.arm.kinematics import smallest_singular_value
 from pathplan.auditing.model import Singularity
 from pathplan.auditing.shares import Array, Rows
+from pathplan.path.cartesian import tool_of
 
-__all__ = ["nearest_singularity", "step_caps", "tool_acceleration", "tool_speed"]
+__all__ = ["arms_by_step", "by_tool", "nearest_singularity", "step_caps", "tool_acceleration", "tool_speed"]
 
 Numbers = NDArray[np.intp]
 TRAVEL = 0.02  # rad of joint travel, m over the arm's length, between rows at which a singular value is taken
@@ -29,10 +31,35 @@ def step_caps(arm: Arm, task: Any = None) -> tuple[Array, Array]:
         return _lowest(arm.tool.speed), _lowest(arm.tool.acceleration)
     speeds, accelerations = [], []
     for step in task.steps:
-        tool = arm.tools.get(step.tool, arm.tool)
+        tool = tool_of(arm, step.tool)
         speeds.append(_lowest(step.speed, task.speed, tool.speed)[0])
         accelerations.append(_lowest(step.acceleration, tool.acceleration)[0])
     return np.array(speeds), np.array(accelerations)
+
+
+def arms_by_step(arm: Arm, task: Any = None) -> tuple[Arm, ...]:
+    """The arm with the tool of each step, (1,) without a task; steps with the same tool share one. No payload."""
+    if task is None:
+        return (arm,)
+    made = {arm.tool.name: arm}
+    for step in task.steps:
+        tool = tool_of(arm, step.tool)
+        if tool.name not in made:
+            made[tool.name] = arm.equipped(tool=tool)
+    return tuple(made[tool_of(arm, step.tool).name] for step in task.steps)
+
+
+def by_tool(arms: Sequence[Arm], step: NDArray[np.int64]) -> Iterator[tuple[Arm, Numbers]]:
+    """Each arm among those of the steps (S,) that rows of `step` (N,) are carried out with, and its rows."""
+    different = list(dict.fromkeys(arms))
+    if len(different) == 1:
+        yield different[0], np.arange(len(step))
+        return
+    number = {arm: k for k, arm in enumerate(different)}
+    of_step = np.array([number[arm] for arm in arms])
+    mine = of_step[np.minimum(step, len(arms) - 1)]
+    for k in np.unique(mine):
+        yield different[k], np.flatnonzero(mine == k)
 
 
 def _lowest(*caps: float | None) -> Array:

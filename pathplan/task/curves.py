@@ -173,11 +173,11 @@ def _splines(
     steps = np.linalg.norm(np.diff(scaled, axis=0), axis=1)
     u = np.concatenate([[0.0], np.cumsum(np.hypot(steps, angles_between(unit[:-1], unit[1:])))])
 
-    def off(values: Array) -> float:
-        return float(np.linalg.norm(values - scaled, axis=1).max() * arm_length / tolerance)
+    def off(values: Array) -> Array:
+        return np.asarray(np.linalg.norm(values - scaled, axis=1) * arm_length / tolerance)
 
-    def turned(values: Array) -> float:
-        return float(angles_between(values, unit).max() / angle_tolerance)
+    def turned(values: Array) -> Array:
+        return angles_between(values, unit) / angle_tolerance
 
     along = smoothed(u, scaled, off) if tolerance > 0.0 else interpolated(u, scaled)
     if normal is not None:

@@ -18,7 +18,7 @@ from pathplan.errors import InputError
 if TYPE_CHECKING:
     from scipy.interpolate import BSpline
 
-__all__ = ["interpolated", "knots_of", "pieces_of", "smoothed"]
+__all__ = ["interpolated", "knots_of", "pieces_of", "smoothed", "smoothed_sparsely"]
 
 Array = NDArray[np.float64]
 _DEGREE = 5
@@ -26,6 +26,9 @@ _FEWEST = 6  # points from which on end knots are left out ("not a knot"); fewer
 _END_WEIGHT = 1e6  # of the first and last point: a curve begins and ends where its points do
 _WEAKEST, _STRONGEST = -12.0, 12.0  # log10 of lambda, relative to the size of the two terms
 _HALVINGS = 14  # of the interval between them
+_SPLITS = 24  # rounds of halving the cells between sparse knots
+_POINTS_A_CELL = 3  # that a cell keeps when it is halved
+_NARROWEST = 1e-6  # of the whole: a cell is not halved below this
 
 
 def interpolated(u: Array, y: Array) -> BSpline:
@@ -41,26 +44,55 @@ def interpolated(u: Array, y: Array) -> BSpline:
     return make_interp_spline(u, y, k=_DEGREE)
 
 
-def smoothed(u: Array, y: Array, excess: Callable[[Array], float], knots: Array | None = None) -> BSpline:
-    """The smoothest spline whose values at u (m,) are near enough to y (m, d).
+def smoothed(u: Array, y: Array, excess: Callable[[Array], Array]) -> BSpline:
+    """The smoothest spline whose values at increasing u (m,) are near enough to y (m, d).
 
-    `excess(values (m, d))` says how much of the tolerance is used, 1 all of it. `knots`: inner knots, fewer than the
-    points that lie between them; without, one at every point, so that the tolerance can always be met. Raises
-    InputError if the spline of these knots that is nearest to the points is not near enough.
+    `excess(values (m, d))` says how much of the tolerance each point uses (m,), 1 all of it. There is a knot at every
+    point, so that any tolerance can be met.
     """
     if len(u) < _FEWEST:
         return interpolated(u, y)
-    fit = _Fit(u, y, u[3:-3] if knots is None else knots)
-    if excess(fit.values(_WEAKEST)) > 1.0:
-        if knots is None:
-            return interpolated(u, y)  # the weakest smoothing that rounding lets us tell from none
-        raise InputError("the points can't be met within the tolerance with so few knots")
+    fit = _Fit(u, y, u[3:-3])
+    if excess(fit.values(_WEAKEST)).max() > 1.0:
+        return interpolated(u, y)  # the weakest smoothing that rounding lets us tell from none
+    return _strongest(fit, excess)
+
+
+def smoothed_sparsely(u: Array, y: Array, excess: Callable[[Array], Array]) -> BSpline:
+    """As `smoothed` with as few knots as the tolerance allows: for many points close together, u not falling.
+
+    Raises InputError, naming the point, where even knots at every few points don't come near enough.
+    """
+    if len(u) < 4 * _FEWEST:
+        keep = np.append(True, np.diff(u) > 0)
+        return interpolated(u[keep], y[keep])
+    knots = np.linspace(u[0], u[-1], _FEWEST)[1:-1]
+    for _ in range(_SPLITS):
+        fit = _Fit(u, y, knots)
+        used = excess(fit.values(_WEAKEST))
+        if used.max() <= 1.0:
+            return _strongest(fit, excess)
+        borders = np.concatenate([[u[0]], knots, [u[-1]]])
+        cell = np.clip(np.searchsorted(borders, u, side="right") - 1, 0, len(borders) - 2)
+        worst = np.zeros(len(borders) - 1)
+        np.maximum.at(worst, cell, used)
+        enough = np.bincount(cell, minlength=len(worst)) >= 2 * _POINTS_A_CELL
+        split = np.flatnonzero((worst > 1.0) & enough & (np.diff(borders) > _NARROWEST * (u[-1] - u[0])))
+        if not len(split):
+            break
+        knots = np.sort(np.concatenate([knots, (borders[split] + borders[split + 1]) / 2]))
+    row = int(np.argmax(used))
+    raise InputError(f"point {row + 1} can't be met within the tolerance: it lies {used[row]:.3g} times as far off")
+
+
+def _strongest(fit: _Fit, excess: Callable[[Array], Array]) -> BSpline:
+    """The spline of the largest lambda that keeps the tolerance; that of the weakest is known to."""
     low, high = _WEAKEST, _STRONGEST
-    if excess(fit.values(high)) <= 1.0:
+    if excess(fit.values(high)).max() <= 1.0:
         return fit.spline(high)
     for _ in range(_HALVINGS):
         middle = (low + high) / 2
-        if excess(fit.values(middle)) <= 1.0:
+        if excess(fit.values(middle)).max() <= 1.0:
             low = middle
         else:
             high = middle
@@ -92,7 +124,7 @@ class _Fit:
         weight = np.ones(len(u))
         weight[[0, -1]] = _END_WEIGHT
         self.basis = BSpline.design_matrix(u, self.t, _DEGREE)
-        self.centre = y.mean(axis=0)
+        self.centre, self.ends = y.mean(axis=0), y[[0, -1]]
         self.right = self.basis.T @ (weight[:, None] * (y - self.centre))
         ones = np.ones(len(u))
         self.near = _band(self.basis.T @ self.basis.multiply(weight[:, None]))
@@ -110,9 +142,16 @@ class _Fit:
         return np.asarray(self.basis @ self.coefficients(strength))
 
     def spline(self, strength: float) -> BSpline:
+        """The spline, moved by the hair that its ends lie off the first and last point."""
         from scipy.interpolate import BSpline
 
-        return BSpline(self.t, self.coefficients(strength), _DEGREE)
+        c = self.coefficients(strength)
+        t = self.t
+        greville = np.array([t[i + 1 : i + _DEGREE + 1].mean() for i in range(len(c))])
+        share = ((greville - t[0]) / (t[-1] - t[0]))[:, None]
+        c += (1.0 - share) * (self.ends[0] - c[0]) + share * (self.ends[1] - c[-1])
+        c[0], c[-1] = self.ends
+        return BSpline(t, c, _DEGREE)
 
 
 def _band(matrix: Any) -> Array:

@@ -13,7 +13,6 @@ from pathplan.export import read_table, write_table
 from pathplan.export.pvt import pvt_of_plan, pvt_of_table, rounded_up
 from pathplan.table import JointTable, Mark, tick_times
 
-
 KINDS = ("prismatic",)
 
 

@@ -231,7 +231,8 @@ def _arrays(uses: Sequence[_Use], units: Sequence[float], values: Array, n: int)
     """SI arrays by field."""
     arrays: dict[str, Any] = {}
     for column, (use, unit) in enumerate(zip(uses, units, strict=True)):
-        numbers = values[:, column] * unit
+        parts = round(1 / unit) if unit < 1 else 0  # 1000 for mm: one division rounds better than by 0.001
+        numbers = values[:, column] / parts if parts and 1 / parts == unit else values[:, column] * unit
         if use.joint < 0:
             arrays[use.field] = numbers
         else:

@@ -181,8 +181,8 @@ def _form_of(line: str) -> _Form:
 
 
 def _is_numbers(line: str) -> bool:
-    """Whether a line is a row of numbers: its first cell is one, and most of them are."""
+    """Whether a line is a row of numbers: its first cell is one, and at least half of them are."""
     form = _form_of(line)
     numbers = [form.number(cell) for cell in form.cells(line)]
     known = [number is not None for number, cell in zip(numbers, form.cells(line), strict=True) if cell]
-    return bool(known) and known[0] and sum(known) > len(known) / 2
+    return bool(known) and known[0] and sum(known) >= len(known) / 2
