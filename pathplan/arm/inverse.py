@@ -208,26 +208,31 @@ def _out_of_reach(arm: Arm, pose: Array, branches: Branches) -> UnreachableError
         "angle_error": float(branches.angle_error[0, best]),
     }
     # A closed form with four axes serves position and turn exactly: what is left of the angle is tilt.
-    if len(arm.tool_joints) < 6 and arm.structure != "general" and data["angle_error"] > TILT_TOLERANCE:
+    if arm.structure in ("gantry", "scara") and data["angle_error"] > TILT_TOLERANCE:
         tilt = _tilt(arm, q, pose)
         return UnreachableError(
             f"{arm.name}: the pose is tilted {tilt}; {arm.name} serves {_served(arm)}; tolerance 0.001 deg",
             data=data,
         )
+    axes = len(arm.tool_joints)
     off = []
     if data["position_error"] > POSITION_TOLERANCE:
         off.append(format_quantity(data["position_error"], "length"))
-    if data["angle_error"] > (ANGLE_TOLERANCE if len(arm.tool_joints) >= 6 else TILT_TOLERANCE):
+    if data["angle_error"] > (ANGLE_TOLERANCE if axes >= 6 else TILT_TOLERANCE):
         off.append(format_quantity(data["angle_error"], "angle"))
-    why = (
-        f" (an arm with {len(arm.tool_joints)} axes can't serve every pose)"
-        if len(arm.tool_joints) < 6 and arm.structure == "general"
-        else ""
-    )
+    few = axes < 6 and arm.structure not in ("gantry", "scara")
+    why = f" (an arm with {axes} axes can't serve every pose{_instead(arm)})" if few else ""
     return UnreachableError(
         f"{arm.name}: the pose is out of reach{why}: the nearest answer is off by {' and '.join(off)}",
         data=data,
     )
+
+
+def _instead(arm: Arm) -> str:
+    """What an arm with fewer than six axes does serve, if it has a name."""
+    if arm.serves_pointing:
+        return "; it serves places and directions of the tool's z axis, with a roll that follows"
+    return f"; it serves {_served(arm)}" if arm.serves else ""
 
 
 def _tilt(arm: Arm, q: Array, pose: Array) -> str:
@@ -247,9 +252,9 @@ def _tilt(arm: Arm, q: Array, pose: Array) -> str:
 def _served(arm: Arm) -> str:
     """The served components in words."""
     names = [name for name in COMPONENTS if name in arm.serves]
-    turning = arm.structure != "general" and not any(name.startswith("rotation") for name in names)
+    turning = arm.structure in ("gantry", "scara") and not any(name.startswith("rotation") for name in names)
     names += ["rotation about its turning axis"] * turning
-    return ", ".join(names[:-1]) + " and " + names[-1]
+    return ", ".join(names[:-1]) + " and " + names[-1] if len(names) > 1 else names[0]
 
 
 def _excluded(arm: Arm, pose: Array, branches: Branches) -> UnreachableError:

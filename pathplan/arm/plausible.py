@@ -97,7 +97,7 @@ def _too_heavy(arm: Arm) -> Iterator[str]:
         if joint.torque is not None and abs(value) > joint.torque:
             dimension = joint_dimension(joint.kind, "torque")
             need, has = format_quantity(abs(value), dimension), format_quantity(joint.torque, dimension)
-            yield f"holding the arm at home takes {need}, its torque limit is {has}"
+            yield f"{joint.name}: holding the arm at home takes {need}, its torque limit is {has}"
 
 
 def holding_torque(arm: Arm, q: Array) -> Array:

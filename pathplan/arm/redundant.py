@@ -221,12 +221,12 @@ def suggested(arm: Arm) -> tuple[str, ...]:
     if spare <= 0:
         return ()
     # A carriage that takes a whole arm along first, then the third axis of a shoulder, then whatever is left.
-    taste = [2, 1, 3, 0, 4, 5, *range(6, len(path))]
-    if arm.joints[path[0]].kind == "prismatic":
-        taste.remove(0)
-        taste.insert(0, 0)
-    order = [k for k in range(len(path)) if path[k] in arm.free_first]
-    order += [k for k in taste if k not in order]
+    lead = 0
+    while lead < spare and (path[lead] in arm.free_first or arm.joints[path[lead]].kind == "prismatic"):
+        lead += 1
+    order = [k for k in range(len(path)) if path[k] in arm.free_first or k < lead]
+    order += [k for k in (lead + i for i in (2, 1, 3, 0)) if k < len(path) and k not in order]
+    order += [k for k in range(len(path)) if k not in order]
     best: tuple[tuple[int, int], tuple[int, ...]] | None = None
     for choice in combinations(range(len(path)), spare):
         held = tuple(path[k] for k in choice)

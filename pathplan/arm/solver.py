@@ -10,12 +10,14 @@ from typing import Any
 import numpy as np
 
 from pathplan.arm.elimination import BRANCHES, Version, distinct, eliminate, versions
+from pathplan.arm.five import TURNED, with_sixth
 from pathplan.arm.geometry import EXACT, Geometry, near
 from pathplan.arm.inverse_form import Form, Structure
 from pathplan.arm.model import Array, Index, Mask
 from pathplan.arm.refine import apart, canonical, pose_errors, reached, refine
-from pathplan.arm.search import nearest, search
+from pathplan.arm.search import FORGIVEN, nearest, search
 from pathplan.arm.structure import recognise
+from pathplan.arm.subproblems import wrapped
 
 __all__ = ["Answers", "Solver", "solver_of"]
 
@@ -46,6 +48,7 @@ class Solver:
     travel: Array  # (m, 2) of prismatic joints, where a search may start
     form: Form | None
     exact: bool  # the form fits to rounding
+    six: Geometry | None = None  # five axes: the chain with a sixth that the form is of
 
     @property
     def structure(self) -> Structure:
@@ -73,7 +76,8 @@ class Solver:
         """In words."""
         if self.form is not None:
             correction = "" if self.exact else ", nearly: corrected by Newton steps"
-            return f"closed form ({self.form.words}{correction})"
+            sixth = ", with a sixth axis that stays at zero" if self.six is not None else ""
+            return f"closed form ({self.form.words}{sixth}{correction})"
         if self.elimination:
             return "elimination (eigenvalues of size 24), at most 16 branches"
         return "numeric search from many starts"
@@ -90,8 +94,10 @@ class Solver:
                 q[part], errors[:, part] = self._by_form(self.form, poses[part])
             else:
                 q[part], errors[:, part] = self._in_general(poses[part])
-        if self.form is not None and (self.g.m >= 6 or not self.exact):
+        if self.form is not None and (self.g.m >= 6 or self.six is not None or not self.exact):
             self._polish(self.form, q, errors, poses)
+        if self.six is not None:
+            self._nearest_instead(q, errors, poses)
         if not self.steady and len(poses) > 1:
             order = _followed(self.g, q, _valid(errors))
             rows = np.arange(len(poses))[:, None]
@@ -100,6 +106,12 @@ class Solver:
 
     def _by_form(self, form: Form, poses: Array) -> tuple[Array, Array]:
         q = form.solve(*self.g.motion(poses)).transpose(2, 1, 0)
+        if self.six is not None:
+            own = np.abs(wrapped(q[..., 5])) < TURNED
+            q = np.ascontiguousarray(canonical(self.g, q[..., :5]))
+            errors = self._errors(q, poses)
+            errors[:, ~own] = np.inf
+            return q, errors
         if not form.steady or not self.exact:
             q = canonical(self.g, q)
         q = np.ascontiguousarray(q)
@@ -113,7 +125,7 @@ class Solver:
         if len(row):
             tried = canonical(self.g, refine(self.g, q[row, branch], poses[row]))
             tried_errors = np.array(pose_errors(reached(self.g, tried), poses[row]))
-            kept = _valid(tried_errors) | (self.g.m < 6)
+            kept = _valid(tried_errors) if self.g.m >= 6 else tried_errors.max(axis=0) < np.inf
             row, branch = row[kept], branch[kept]
             q[row, branch], errors[:, row, branch] = tried[kept], tried_errors[:, kept]
         if not form.steady:
@@ -172,11 +184,15 @@ class Solver:
             q, filled = search(self.g, self.travel, poses)
         errors = self._errors(q, poses)
         errors[:, ~filled] = np.inf
-        empty = np.flatnonzero(~filled.any(axis=1))
+        self._nearest_instead(q, errors, poses)
+        return q, errors
+
+    def _nearest_instead(self, q: Array, errors: Array, poses: Array) -> None:
+        """Where no place holds anything near its pose the first one takes the nearest that a search finds."""
+        empty = np.flatnonzero((np.maximum(errors[0] / self.g.length, errors[1]) > FORGIVEN).all(axis=1))
         if len(empty):
             q[empty, 0] = nearest(self.g, self.travel, poses[empty])
             errors[:, empty, 0] = np.array(pose_errors(reached(self.g, q[empty, 0]), poses[empty]))
-        return q, errors
 
 
 def _valid(errors: Array) -> Mask:
@@ -227,4 +243,6 @@ def solver_of(g: Geometry, travel: Any = None) -> Solver:
         form = recognise(g, tolerance)
         if form is not None:
             return Solver(g, travel, form, tolerance is EXACT)
+        if (sixth := with_sixth(g, tolerance)) is not None:
+            return Solver(g, travel, sixth[1], tolerance is EXACT, sixth[0])
     return Solver(g, travel, None, True)

@@ -183,7 +183,7 @@ def trigonometric_roots(c0: Array, c1: Array, s1: Array, c2: Array, s2: Array) -
     c, s = np.cos(2 * shift), np.sin(2 * shift)
     c2, s2 = c2 * c + s2 * s, s2 * c - c2 * s
     lead = c0 - c1 + c2
-    lead = np.where(lead == 0.0, 1.0, lead)
+    lead = np.where(np.abs(lead) < 1e-200, 1.0, lead)
     companion = np.zeros((len(lead), 4, 4))
     companion[:, 1, 0] = companion[:, 2, 1] = companion[:, 3, 2] = 1.0
     rest = np.stack([c0 + c1 + c2, 2 * s1 + 4 * s2, 2 * c0 - 6 * c2, 2 * s1 - 4 * s2]) / lead
@@ -195,7 +195,7 @@ def trigonometric_roots(c0: Array, c1: Array, s1: Array, c2: Array, s2: Array) -
         c, s, cc, ss = np.cos(angle), np.sin(angle), np.cos(2 * angle), np.sin(2 * angle)
         value = c0 + c1 * c + s1 * s + c2 * cc + s2 * ss
         slope = s1 * c - c1 * s + 2.0 * (s2 * cc - c2 * ss)
-        step = value / np.where(slope == 0.0, 1.0, slope)
+        step = value / np.where(np.abs(slope) < 1e-100, np.inf, slope)
         angle = angle - np.where(np.abs(step) < 1e-3, step, 0.0)
     return angle + shift
 

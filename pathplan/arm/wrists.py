@@ -44,7 +44,7 @@ def wrist(g: Geometry) -> Form | None:
         return None
     labels = tuple({**label, **turn} for label in position.labels for turn in WRIST)
     if not position.steady:
-        labels = tuple(turn for _ in position.labels for turn in WRIST)
+        labels = ({},) * len(labels)
     words = f"wrist axes meet; {position.words}"
     return Form("spherical wrist", words, labels, position.steady, partial(_wrist, g, centre, position.solve))
 
@@ -180,7 +180,7 @@ def meeting_elsewhere(g: Geometry) -> Form | None:
         points[0] = g.foot(0, 1)
         g = replace(g, points=points)
         first, steady = partial(_middle_skew, g, centre), False
-        labels = signs(middle) * 4
+        labels = ({},) * 8
     return Form("three meeting axes", words, labels, steady, partial(_middle, g, first))
 
 

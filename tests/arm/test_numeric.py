@@ -1,4 +1,4 @@
-"""Numeric inverse of arms without a closed form."""
+"""Arms without a closed form: elimination, numeric search, the nearest answer."""
 
 import re
 
@@ -32,7 +32,8 @@ def test_planar_three_against_the_book(pose, expected, cast):
 
 def test_planar_three_out_of_reach(cast):
     """Craig, ch. 4 exercise: (-3.1245, 9.1674, -30 deg) is out of reach."""
-    message = "planar three: the pose is out of reach (an arm with 3 axes can't serve every pose): the nearest answer"
+    message = "planar three: the pose is out of reach (an arm with 3 axes can't serve every pose; it serves "
+    message += "x, y and rotation about z): the nearest answer"
     with pytest.raises(errors.UnreachableError, match=re.escape(message)):
         cast("planar three").inverse(planar_pose(-3.1245, 9.1674, -30))
 
