@@ -35,16 +35,16 @@ def found_cycle(time: Array, rounding: float = 0.0) -> float | None:
     mean = float(time[-1] - time[0]) / len(intervals)
     if on_grid(mean, FOUND * mean):
         return _rounded(mean, len(time), 1e-9 * mean)
+    usual = float(np.median(intervals))
+    alike = np.abs(intervals - usual) <= FOUND * usual
+    if usual > 0 and len(time) >= FEWEST and alike.mean() >= USUAL:
+        cycle = float(intervals[alike].mean())
+        return _rounded(cycle, len(time), 1e-9 * cycle)
     if rounding > 0:  # the ends alone would carry their rounding to every row between
         slope = float(np.polynomial.Polynomial.fit(rows, time, 1).convert().coef[-1])
         if on_grid(slope, 1.01 * rounding):
             return _rounded(slope, len(time), 0.01 * rounding)
-    usual = float(np.median(intervals))
-    alike = np.abs(intervals - usual) <= FOUND * usual
-    if usual <= 0 or len(time) < FEWEST or alike.mean() < USUAL:
-        return None
-    cycle = float(intervals[alike].mean())
-    return _rounded(cycle, len(time), 1e-9 * cycle)
+    return None
 
 
 def _rounded(cycle: float, rows: int, close: float) -> float:
@@ -80,7 +80,9 @@ class Stamps:
         self.cycle = cycle
         self.stated = stated
         self.within = 0.0 if cycle is None else (STATED if stated else FOUND) * cycle
-        self.within = max(self.within, 1.01 * rounding)  # of the first time and of each that is compared with it
+        cycles = 0.0 if cycle is None or not rounding else cycle / rounding
+        if abs(cycles - round(cycles)) > 1e-6:  # no whole number of steps: the first time and each later one are off
+            self.within = max(self.within, 1.01 * rounding)
         self.rows = 0
         self._first = self._last = 0.0
         # kind of trouble -> (row, what is told of the first one, its time, how many), in the order of the rows

@@ -74,7 +74,7 @@ def test_a_joint_target_names_its_joint(task, table):
     position = table.position.copy()
     position[-1, 2] += 0.01
     target = passes(dataclasses.replace(table, position=position), task)[-1]
-    assert target.row == len(table) - 2 and target.joint == "elbow" or target.off != 0
+    assert target.row == len(table) - 2 and target.distance > 0
     position[-300:, 2] += 0.02
     target = passes(dataclasses.replace(table, position=position), task)[-1]
     assert target.joint == "elbow" and not target.passed
