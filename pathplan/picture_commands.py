@@ -72,7 +72,6 @@ class Shell:
     is_table: Callable[[argparse.Namespace], bool]
     judged: Callable[[argparse.Namespace], Judged]
     check_rows: Callable[[Plan, str], None]
-    quantity: Callable[[str | None, str, str], float | None]
     show: Callable[[str], None]
     show_json: Callable[[Mapping[str, Any]], None]
     status: Callable[[str, str, str], int]
@@ -136,13 +135,14 @@ def _report(shell: Shell, args: argparse.Namespace) -> int:
 
 
 def _figure(shell: Shell, args: argparse.Namespace) -> int:
+    from pathplan.arguments import quantity
     from pathplan.report.files import DRAWINGS, note_of
     from pathplan.report.progress import Progress
 
     if args.at is not None and args.kind != "arm":
         raise InputError("argument --at: only with --kind arm (see pathplan figure --help)")
     files = [Path(name) for name in args.output or [f"{Path(args.file).stem}-{args.kind}.png"]]
-    time = shell.quantity(args.at, "time", "--at")
+    time = quantity(args.at, "time", "--at")
     with Progress(sys.stderr, quiet=_silent(shell, args)) as tell:
         picture, breaks = _picture(shell, args, files, DRAWINGS, tell, buckets=FINE)
         tell("drawing", 0, 1)

@@ -11,9 +11,13 @@ class View {
     this.state = { azimuth: -58, elevation: 24, zoom: 1, x: 0, y: 0 };
     this.pose = null;
     this.listen();
+    this.inks = new Map();
     new ResizeObserver(() => this.draw()).observe(canvas);
     for (const query of ["(prefers-color-scheme: dark)", "print"]) {
-      matchMedia(query).addEventListener("change", () => this.draw());
+      matchMedia(query).addEventListener("change", () => {
+        this.inks.clear();
+        this.draw();
+      });
     }
     labels.addEventListener("change", () => this.draw());
   }
@@ -127,8 +131,7 @@ class View {
     pen.setTransform(dense, 0, 0, dense, 0, 0);
     pen.clearRect(0, 0, width, height);
     pen.lineCap = pen.lineJoin = "round";
-    const style = getComputedStyle(canvas);
-    const ink = (name) => style.getPropertyValue(`--${name}`).trim();
+    const ink = (name) => this.ink(name);
     const place = this.projection(width, height);
     this.floor(pen, place, ink);
     this.lines(pen, place, this.scene.programmed, ink("muted"), 1, [4, 4]);
@@ -140,6 +143,12 @@ class View {
     pen.globalAlpha = 1;
     if (this.labels.checked) this.words(pen, place, ink);
     this.triad(pen, place, this.pose.tool, 0.12, ink("ink"), "");
+  }
+
+  // A colour of the page by its name, looked up once for each theme.
+  ink(name) {
+    if (!this.inks.has(name)) this.inks.set(name, getComputedStyle(this.canvas).getPropertyValue(`--${name}`).trim());
+    return this.inks.get(name);
   }
 
   lines(pen, place, polylines, colour, width, dash = []) {
