@@ -77,14 +77,27 @@ def passes(table: JointTable, task: Task, near: tuple[float, float] = NEAR) -> t
         raise InputError(f"table: {len(table)} rows are too many to be compared with {len(steps)} targets")
     good = np.asarray(np.isfinite(table.position).all(axis=1))
     position = np.where(good[:, None], table.position, 0.0)
-    carried = {step.tool: _carrying(arm, step) for step in steps}
+    with np.errstate(over="ignore", invalid="ignore"):
+        return _all_passes(table, task, steps, good, position, near)
+
+
+def _all_passes(
+    table: JointTable,
+    task: Task,
+    steps: Sequence[Step],
+    good: NDArray[np.bool_],
+    position: Array,
+    near: tuple[float, float],
+) -> tuple[Pass, ...]:
+    """The nearest rows; `good` (N,) tells which are finite, `position` (N, n) is zero at the others."""
+    carried = {step.tool: _carrying(task.arm, step) for step in steps}
     poses = {tool: carrying.forward(position) for tool, carrying in carried.items()}
-    moves = _moves(arm, position)
+    moves = _moves(task.arm, position)
     costs, rows = [], []
     most = max(64, MOST_CANDIDATES // max(1, len(steps)))
     for step in steps:
         away = _away(step, task, carried[step.tool], poses[step.tool], position)
-        away[~good] = np.inf
+        away[~good | np.isnan(away)] = np.inf
         at = _candidates(away, most)
         rows.append(at)
         known = np.minimum(away[at], 1e6)

@@ -16,6 +16,7 @@ FINITE_COLUMNS = ("time", "position", "velocity", "acceleration", "jerk", "torqu
 STATED = 1e-6  # of the cycle: how far a time may lie off the grid of a stated cycle
 FOUND = 1e-2  # the same where the cycle was found from times that were rounded when they were written
 USUAL = 0.9  # of the intervals that must be alike for a cycle to be found where some are not
+SHORTEST, LONGEST = 1e-9, 1e9  # s: what lies outside is no controller's cycle
 FEWEST = 10  # rows from which on such a cycle is found
 
 
@@ -33,6 +34,8 @@ def found_cycle(time: Array, rounding: float = 0.0) -> float | None:
         return bool(intervals.min() > 0 and np.abs(time - time[0] - rows * cycle).max() <= within)
 
     mean = float(time[-1] - time[0]) / len(intervals)
+    if not SHORTEST <= mean <= LONGEST:
+        return None
     if on_grid(mean, FOUND * mean):
         return _rounded(mean, len(time), 1e-9 * mean)
     usual = float(np.median(intervals))
