@@ -148,7 +148,7 @@ def _figure(shell: Shell, args: argparse.Namespace) -> int:
         tell("drawing", 0, 1)
         from pathplan.report import figures  # takes matplotlib along, which nothing before it needs
 
-        options = {"time": time} if args.kind == "arm" else {}
+        options: dict[str, Any] = {"time": time} if args.kind == "arm" else {}
         figure = figures.draw(args.kind, picture, **options)
         for file in files:
             figures.save(figure, file, note=note_of(picture.meta))
@@ -210,16 +210,14 @@ def _picture(
     import pathplan
     from pathplan.report.gather import picture_of
     from pathplan.report.judged import first_exceedance
-    from pathplan.report.outputs import WHOLE
 
     task = shell.task(args)
     check({"task": task.title, "task_file": Path(args.file).name})
     plan = pathplan.plan(task, progress=tell)
     shell.check_rows(plan, args.file)
     tell("audit", 0, 1)
-    if plan.ticks < WHOLE:
-        plan.table  # noqa: B018  # evaluated once, then kept for the audit and the picture
-    return picture_of(plan, buckets=buckets), "" if plan.audit.passed else first_exceedance(plan.audit)
+    picture = picture_of(plan, buckets=buckets)
+    return picture, "" if plan.audit.passed else first_exceedance(plan.audit)
 
 
 def _tell(shell: Shell, args: argparse.Namespace, picture: Picture, breaks: str, files: list[Path]) -> int:

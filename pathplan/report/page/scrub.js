@@ -138,12 +138,14 @@ class Scrub {
         const cell = element("td");
         const value = element("span");
         value.className = "value";
-        const unit = element("small", ` ${(joint.units[quantity] ?? "").replace("^2", "²").replace("^3", "³")}`);
+        const foot = element("span");
+        foot.className = "foot";
         const share = element("span");
         share.className = "share";
-        cell.append(value, unit, share);
+        foot.append(share, element("small", (joint.units[quantity] ?? "").replace("^2", "²").replace("^3", "³")));
+        cell.append(value, foot);
         line.append(cell);
-        this.cells.push({ cell, value, share, quantity, joint: j });
+        this.cells.push({ cell, value, share, foot, quantity, joint: j });
       }
       return line;
     });
@@ -160,11 +162,11 @@ class Scrub {
     const x = ((left + ((time - start) / (end - start)) * (right - left)) / width) * this.width;
     for (const cursor of this.cursors) cursor.style.transform = `translateX(${x.toFixed(2)}px)`;
     const paced = rows.pacing(index);
-    for (const { cell, value, share, quantity, joint } of this.cells) {
+    for (const { cell, value, share, foot, quantity, joint } of this.cells) {
       const part = rows.share(quantity, joint, index);
       put(value, rows.text(`${quantity} ${joint}`, index));
       put(share, Number.isNaN(part) ? "" : `${(100 * part).toFixed(1)} %`);
-      share.style.setProperty("--share", Number.isNaN(part) ? 0 : Math.max(0, Math.min(1, part)).toFixed(3));
+      foot.style.setProperty("--share", Number.isNaN(part) ? 0 : Math.max(0, Math.min(1, part)).toFixed(3));
       cell.classList.toggle("over", part > 1.000001);
       cell.classList.toggle("paces", !!paced && paced.joint === joint && paced.quantity === quantity);
     }
