@@ -48,11 +48,18 @@ def cases(folder: Path) -> list[Case]:
     found = []
     for arm in sorted((ROOT / "robots").glob("*.toml")):
         (folder / arm.name).write_bytes(arm.read_bytes())
+    (folder / "parts").mkdir(exist_ok=True)
+    parts = sorted((ROOT / "examples" / "parts").glob("*"))
+    for part in parts:
+        (folder / "parts" / part.name).write_bytes(part.read_bytes())
     for task in sorted((ROOT / "examples").glob("*.toml")):
-        content = task.read_text("utf-8").replace("../robots/", "").encode()
-        found.append(Case("task", task.name, content, ("audit", "FILE", "--quiet"), True))
-    for other in sorted((ROOT / "examples").glob("*.csv")):  # that tasks read
-        (folder / other.name).write_bytes(other.read_bytes())
+        text = task.read_text("utf-8").replace("../robots/", "")
+        found.append(Case("task", task.name, text.encode(), ("audit", "FILE", "--quiet"), True))
+        for part in parts:  # points and included tasks that it reads
+            if f"parts/{part.name}" in text:
+                reader = folder / f"{task.stem}-{part.stem}.toml"
+                reader.write_text(text.replace(f"parts/{part.name}", f"damaged{part.suffix}"), "utf-8")
+                found.append(Case("part", part.name, part.read_bytes(), ("audit", reader.name, "--quiet"), True))
     for name, tool in (("glazer6", "cup"), ("loader4", "vacuum gripper"), ("sorter4", "cup")):
         found += _of_arm(folder, name, tool)
     return found
@@ -80,7 +87,9 @@ def _motion(arm: pathplan.Arm) -> pathplan.JointTable:
     shape = [tau**3 * (10 - 15 * tau + 6 * tau**2), 30 * tau**2 * (1 - tau) ** 2]
     shape += [60 * tau * (1 - 3 * tau + 2 * tau**2), 60 * (1 - 6 * tau + 6 * tau**2)]
     start, duration = arm.positions["home"], 0.1 * (ROWS - 1)
-    q, v, a, j = (0.01 * np.repeat(s[:, None], arm.n, axis=1) / duration**k for k, s in enumerate(shape))
+    middle = np.array([sum(joint.position) / 2 for joint in arm.joints])
+    way = np.where(start > middle, -0.01, 0.01)
+    q, v, a, j = (s[:, None] * way / duration**k for k, s in enumerate(shape))
     return pathplan.JointTable(
         *(0.1 * ticks, start + q, v, a, j),
         torque=0.1 * q,
@@ -267,7 +276,7 @@ def judge(case: Case, content: bytes, folder: Path, *, planned: bool) -> str:
     def loaded(*args: object, **options: object) -> None:
         raise _Loaded("loaded")
 
-    if case.kind == "task" and not planned:
+    if case.kind in ("task", "part") and not planned:
         pathplan.plan = loaded
     try:
         with contextlib.chdir(folder), contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
