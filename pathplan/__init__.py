@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from pathplan.export import read_table, write_table
     from pathplan.path import JointPath
     from pathplan.planning import Plan, plan
+    from pathplan.retiming import retime
     from pathplan.table import JointTable
     from pathplan.task import Task, load_task
     from pathplan.timing import Timing, lower_bound, schedule
@@ -42,6 +43,7 @@ _HOMES = {
     "lower_bound": "timing",
     "plan": "planning",
     "read_table": "export",
+    "retime": "retiming",
     "schedule": "timing",
     "write_table": "export",
 }
@@ -64,6 +66,7 @@ __all__ = [
     "lower_bound",
     "plan",
     "read_table",
+    "retime",
     "schedule",
     "write_table",
 ]

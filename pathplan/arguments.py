@@ -9,11 +9,13 @@ from typing import TYPE_CHECKING
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:
+    from pathplan.arm import Arm
     from pathplan.report.judged import Judging
     from pathplan.report.line_screen import LineAudit
     from pathplan.report.outputs import Writing
+    from pathplan.task import Task
 
-__all__ = ["LONGEST_PERIOD", "judging", "line_audit", "quantity", "refused", "speed_cap", "writing"]
+__all__ = ["LONGEST_PERIOD", "judging", "line_audit", "quantity", "refused", "retimed", "speed_cap", "writing"]
 
 REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
 LONGEST_PERIOD = 10.0  # s
@@ -125,6 +127,46 @@ def writing(args: Namespace) -> Writing:
         pvt=period,
         split=text("split") is not None,
     )
+
+
+def retimed(args: Namespace) -> Task:
+    """The task that follows the path of a table, with what the options change of it. Raises InputError."""
+    import dataclasses
+    from pathlib import Path
+
+    import pathplan
+    from pathplan.export.foreign import Asked, is_own, read_foreign
+    from pathplan.retiming import REST, TOLERANCE, task_along
+
+    file = Path(args.file)
+    arm = pathplan.load_arm(args.arm).equipped(tool=args.tool, payload=args.payload)
+    said = any(getattr(args, name) is not None for name in READING)
+    if not is_own(file):
+        asked = Asked.parse(args.time, args.columns, args.unit) if said else Asked()
+        table = read_foreign(file, arm, asked).table
+    elif said:
+        complaint = "was written by pathplan, so its columns are known: say --time, --columns and --unit of others"
+        raise InputError.at(args.file, complaint)
+    else:
+        table = pathplan.read_table(file)
+    rest = quantity(args.rest, "time", "--rest")
+    if rest is not None and rest <= 0:
+        raise refused("--rest", 'a time above zero such as "50 ms"', args.rest)
+    near = TOLERANCE if args.tolerance is None else _joint_tolerance(args.tolerance, arm)
+    task = task_along(table, arm, tolerance=near, cycle=cycle(args), rest=REST if rest is None else rest, file=file)
+    return dataclasses.replace(task, speed=speed_cap(args), pace=pace(args) or 1.0)
+
+
+def _joint_tolerance(text: str, arm: Arm) -> float:
+    """A distance in joint space, rad or arm lengths: from an angle, or from a length."""
+    from pathplan.units import parse_quantity
+
+    for dimension, unit in (("angle", 1.0), ("length", arm.length)):
+        with contextlib.suppress(InputError):
+            value = parse_quantity(text, dimension, "--tolerance") / unit
+            if 1e-9 <= value <= 0.5:
+                return value
+    raise refused("--tolerance", 'an angle or a length above zero such as "0.01 deg" or "0.1 mm"', text)
 
 
 def line_audit(args: Namespace) -> LineAudit:

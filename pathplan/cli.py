@@ -62,6 +62,16 @@ examples:
       a dry run for scripts: one JSON document, nothing written
 
 """
+RETIME = """\
+Time a joint table of any source anew: along its own path, as fast as the arm's limits allow. Where the table
+rests the arm waits as long; how far the path passes the rows is told. Writes like plan."""
+RETIME_EXAMPLES = """\
+examples:
+  pathplan retime old.csv --arm robots/glazer6.toml -o new.csv
+      the path of old.csv within every limit of the arm, and its audit beside it
+  pathplan retime old.npz --arm glazer6.toml --tool cup --reduced-speed --tolerance "0.02 deg" -o slow.npz
+
+"""
 AUDIT = """\
 Judge a motion against the limits of its arm: position, velocity, acceleration, jerk and torque of
 every joint. A task (.toml) is planned first; a table (.csv, .jsonl, .npz, .parquet) is read, of any
@@ -202,6 +212,21 @@ def _parser() -> argparse.ArgumentParser:
     group.add_argument("--pvt", metavar="PERIOD", help='position and velocity at a coarser period, "20 ms"')
     group.add_argument("--split", choices=["stretch"], help="one file for each stretch from stop to stop")
     _screen_options(export)
+    retime = command("retime", _run_retime, RETIME, RETIME_EXAMPLES, "time a table anew along its own path")
+    retime.add_argument("file", metavar="TABLE", help="table of any source")
+    retime.add_argument("--arm", metavar="ARM", required=True, help="arm file (.toml)")
+    retime.add_argument("-o", dest="output", metavar="FILE", action="append", required=True,
+                        help="table to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
+    group = retime.add_argument_group("how the path is taken from the table")
+    group.add_argument("--tolerance", metavar="SIZE",
+                       help='how far it may pass the rows, "0.01 deg" or "0.1 mm" (default 0.0001 rad)')  # fmt: skip
+    group.add_argument("--rest", metavar="TIME", help='rests of this length are kept, "50 ms" (default)')
+    group.add_argument("--tool", metavar="NAME", help="tool of the arm that is carried")
+    group.add_argument("--payload", metavar="NAME", help="payload that is carried")
+    _planning_options(retime)
+    _reading_options(retime)
+    _writing_options(retime)
+    _screen_options(retime)
     _picture_commands(command)
     return parser
 
@@ -272,7 +297,8 @@ def _screen_options(parser: argparse.ArgumentParser) -> None:
 
 def _no_command(args: argparse.Namespace) -> int:
     if not args.version:
-        raise InputError("expected a command: plan, audit, export, report, watch or figure (see pathplan --help)")
+        commands = "plan, audit, export, retime, report, watch or figure"
+        raise InputError(f"expected a command: {commands} (see pathplan --help)")
     _print(f"pathplan {_version()}")
     return 0
 
@@ -317,6 +343,13 @@ def _audit_line(args: argparse.Namespace) -> int:
     return 0 if audit.passed else _status("line", first_exceedance(audit), "")
 
 
+def _run_retime(args: argparse.Namespace) -> int:
+    for name in args.output:
+        if Path(name).exists() and Path(args.file).exists() and Path(name).samefile(args.file):
+            raise InputError.at(name, "is the table that is read: choose another name")
+    return _plan_and_write(args, args.output, arguments.retimed(args))
+
+
 def _run_export(args: argparse.Namespace) -> int:
     if not _is_table(args):
         return _plan_and_write(args, args.output)
@@ -327,7 +360,8 @@ def _run_export(args: argparse.Namespace) -> int:
     judged = _judged(args)
     outputs = [Path(name) for name in args.output]
     check_outputs(outputs, None, judged.table.meta, writing)
-    jobs = jobs_of_table(marked(judged.table) if judged.breaks else judged.table, outputs, writing)
+    with _of(args.file):
+        jobs = jobs_of_table(marked(judged.table) if judged.breaks else judged.table, outputs, writing)
     check_jobs(jobs, judged.table.meta, writing)
     for job in jobs:
         if job.file.exists() and job.file.samefile(args.file):
@@ -359,15 +393,15 @@ def _task(args: argparse.Namespace) -> Task:
     return dataclasses.replace(task, **changes)
 
 
-def _plan_and_write(args: argparse.Namespace, names: Sequence[str]) -> int:
-    """Plan, audit, write tables and the audit beside the first; without names, nothing."""
+def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task | None = None) -> int:
+    """Plan, audit, write tables and the audit beside the first; without names, nothing. Default: the task named."""
     import pathplan
     from pathplan.report import outputs as files
     from pathplan.report.plan_data import plan_as_dict
     from pathplan.report.progress import Progress
     from pathplan.report.written import written_as_dict
 
-    writing, task = arguments.writing(args), _task(args)
+    writing, task = arguments.writing(args), _task(args) if task is None else task
     outputs = [Path(name) for name in names]
     audit_file = files.audit_name(outputs[0]) if outputs else None
     meta = {"task": task.title, "task_file": Path(args.file).name}
@@ -380,7 +414,8 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str]) -> int:
         if plan.ticks < files.WHOLE:
             plan.table  # noqa: B018  # evaluated once, then kept for the audit and the files
         may = plan.audit.passed or getattr(args, "write_anyway", False)
-        jobs = files.jobs_of_plan(plan, outputs, writing) if outputs and may else []
+        with _of(args.file):
+            jobs = files.jobs_of_plan(plan, outputs, writing) if outputs and may else []
         files.check_jobs(jobs, meta, writing)
         document = {"pathplan": _version(), **plan_as_dict(plan), **written_as_dict(jobs, audit_file)}
         if audit_file is not None:
@@ -398,6 +433,15 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str]) -> int:
         more = ": written all the same" if jobs else ": no table written"
         more += f", {', '.join(map(str, left))} is of an earlier plan" if left and not jobs else ""
     return _status(args.file, first_exceedance(plan.audit), more)
+
+
+@contextlib.contextmanager
+def _of(file: str) -> Iterator[None]:
+    """Complaints about what a file holds name the file."""
+    try:
+        yield
+    except InputError as error:
+        raise InputError.at(file, str(error)) from None
 
 
 def _check_rows(plan: Plan, file: str) -> None:
@@ -420,7 +464,7 @@ def _plan_text(args: argparse.Namespace, plan: Plan, jobs: Sequence[Job], audit_
     if getattr(args, "split", None) and jobs:
         lines += [note] if (note := pieces_note([Path(name) for name in args.output], len(plan.timings))) else []
     written = "\n".join(lines)
-    if args.run is _run_plan:
+    if args.run in (_run_plan, _run_retime):
         return f"{plan_screen(plan, signs_for(sys.stdout))}\n\n{written}"
     return f"{plan_headline(plan)}\n{written}"
 

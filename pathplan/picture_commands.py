@@ -72,7 +72,6 @@ class Shell:
     is_table: Callable[[argparse.Namespace], bool]
     judged: Callable[[argparse.Namespace], Judged]
     check_rows: Callable[[Plan, str], None]
-    quantity: Callable[[str | None, str, str], float | None]
     show: Callable[[str], None]
     show_json: Callable[[Mapping[str, Any]], None]
     status: Callable[[str, str, str], int]
@@ -136,19 +135,20 @@ def _report(shell: Shell, args: argparse.Namespace) -> int:
 
 
 def _figure(shell: Shell, args: argparse.Namespace) -> int:
+    from pathplan.arguments import quantity
     from pathplan.report.files import DRAWINGS, note_of
     from pathplan.report.progress import Progress
 
     if args.at is not None and args.kind != "arm":
         raise InputError("argument --at: only with --kind arm (see pathplan figure --help)")
     files = [Path(name) for name in args.output or [f"{Path(args.file).stem}-{args.kind}.png"]]
-    time = shell.quantity(args.at, "time", "--at")
+    time = quantity(args.at, "time", "--at")
     with Progress(sys.stderr, quiet=_silent(shell, args)) as tell:
         picture, breaks = _picture(shell, args, files, DRAWINGS, tell, buckets=FINE)
         tell("drawing", 0, 1)
         from pathplan.report import figures  # takes matplotlib along, which nothing before it needs
 
-        options = {"time": time} if args.kind == "arm" else {}
+        options: dict[str, Any] = {"time": time} if args.kind == "arm" else {}
         figure = figures.draw(args.kind, picture, **options)
         for file in files:
             figures.save(figure, file, note=note_of(picture.meta))
@@ -210,16 +210,14 @@ def _picture(
     import pathplan
     from pathplan.report.gather import picture_of
     from pathplan.report.judged import first_exceedance
-    from pathplan.report.outputs import WHOLE
 
     task = shell.task(args)
     check({"task": task.title, "task_file": Path(args.file).name})
     plan = pathplan.plan(task, progress=tell)
     shell.check_rows(plan, args.file)
     tell("audit", 0, 1)
-    if plan.ticks < WHOLE:
-        plan.table  # noqa: B018  # evaluated once, then kept for the audit and the picture
-    return picture_of(plan, buckets=buckets), "" if plan.audit.passed else first_exceedance(plan.audit)
+    picture = picture_of(plan, buckets=buckets)
+    return picture, "" if plan.audit.passed else first_exceedance(plan.audit)
 
 
 def _tell(shell: Shell, args: argparse.Namespace, picture: Picture, breaks: str, files: list[Path]) -> int:

@@ -16,12 +16,21 @@ from pathplan.planning import Plan
 from pathplan.timeline import evaluate
 
 EXAMPLES = sorted((Path(__file__).parent.parent / "examples").glob("*.toml"))
+THINNER = {"loader4-stack-tiles": ("count = [3, 4, 5]", "count = [2, 1, 2]")}  # fewer rounds, to spare time
 UNIT = {"revolute": (180 / np.pi, "deg"), "prismatic": (1000.0, "mm")}
 
 
 @pytest.fixture(scope="module", params=EXAMPLES, ids=lambda file: file.stem)
-def plan(request) -> Plan:
-    return pathplan.plan(pathplan.load_task(request.param))
+def plan(request, tmp_path_factory) -> Plan:
+    file = request.param
+    if file.stem in THINNER:
+        old, new = THINNER[file.stem]
+        text = file.read_text(encoding="utf-8")
+        assert text.count(old) == 1
+        text = text.replace(old, new).replace('"../robots', f'"{(file.parents[1] / "robots").as_posix()}')
+        file = tmp_path_factory.mktemp("thinner") / file.name
+        file.write_text(text, encoding="utf-8")
+    return pathplan.plan(pathplan.load_task(file))
 
 
 def written_positions(plan: Plan, folder: Path) -> np.ndarray:
@@ -104,15 +113,18 @@ def test_lines_are_followed_to_a_micrometre_and_a_microradian(plan):
                 assert share.min() >= -1e-6 and share.max() <= 1 + 1e-6
                 _check_orientation(pose, begin, end, share)
                 checked += 1
-    assert checked
+    assert checked or all(step.motion != "line" for step in task.steps)
 
 
 def _pose_before(task, step):
-    """Tool pose at which a step begins, None after an arc by centre."""
-    if step.index == 0:
+    """Tool pose at which a step begins, None after an arc by centre, a joint vector, and with another tool."""
+    before = next((s for s in reversed(task.steps[: step.index]) if s.motion != "wait"), None)
+    if before is None:
         return task.arm.forward(task.start)
-    target = next((s.target for s in reversed(task.steps[: step.index]) if s.motion != "wait"), None)
-    return None if target is None or target.frame_from_tool is None else task.pose(target)
+    target = before.target
+    if target is None or target.frame_from_tool is None or before.tool != step.tool:
+        return None
+    return task.pose(target)
 
 
 def _check_orientation(pose, begin, end, share):

@@ -119,10 +119,13 @@ def test_rows_refuses_a_chunk_of_nothing(task):
         next(pathplan.plan(task).rows(0))
 
 
-def test_torque_is_that_of_the_arm_with_its_payload():
+def test_torque_follows_what_is_carried():
+    """Bare to the tile, with it to the car, bare again: by pinocchio below, by the arm itself here."""
     plan = pathplan.plan(pathplan.load_task(ROOT / "examples" / "glazer6-pick-and-place.toml"))
     table, arm = plan.table, plan.task.arm
-    rows = slice(100, 140)
-    asked = arm.torque(table.position[rows], table.velocity[rows], table.acceleration[rows])
-    np.testing.assert_allclose(table.torque[rows], asked, atol=1e-12)
-    assert arm.payload is not None
+    assert arm.payload is None and plan.task.payloads == ("tile",)
+    for step, payload in ((1, None), (2, "tile"), (4, "tile"), (7, None), (8, None)):
+        rows = np.flatnonzero(table.step == step)[1:]  # the row on which two steps meet is of the earlier
+        carrying = arm.equipped(tool="cup", payload=payload)
+        asked = carrying.torque(table.position[rows], table.velocity[rows], table.acceleration[rows])
+        np.testing.assert_allclose(table.torque[rows], asked, atol=1e-12)

@@ -11,7 +11,10 @@ import pathplan
 
 ROOT = Path(__file__).parents[1]
 DOCUMENTED = {
-    "functions": ["audit", "load_arm", "load_task", "lower_bound", "plan", "read_table", "schedule", "write_table"],
+    "functions": [
+        *("audit", "load_arm", "load_task", "lower_bound", "plan"),
+        *("read_table", "retime", "schedule", "write_table"),
+    ],
     "classes": ["Arm", "Audit", "JointPath", "JointTable", "Plan", "Task", "Timing"],
     "errors": ["InputError", "LimitError", "PathplanError", "UnreachableError"],
 }
@@ -67,6 +70,7 @@ def test_members(name):
         ("schedule", ["velocity", "acceleration", "jerk"]),
         ("audit", ["plan"]),
         ("plan", ["progress"]),
+        ("retime", ["tolerance", "cycle", "rest"]),
         ("write_table", ["overwrite"]),
     ],
 )

@@ -81,12 +81,13 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
         raise InputError("table: there are no rows to judge")
     kinds = [joint.kind for joint in arm.joints]
     whole = isinstance(table, JointTable) and plan is None and table.n == arm.n
-    judge = _Judge(first, arm, plan, Rounding.of(first, kinds) if whole else NONE)
-    if isinstance(table, JointTable):
-        judge.differences.expect(table.position)
-    for piece in _pieces(first, chunks):
-        judge.add(piece)
-    return judge.verdict()
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):  # absurd numbers become infinite: beyond limits
+        judge = _Judge(first, arm, plan, Rounding.of(first, kinds) if whole else NONE)
+        if isinstance(table, JointTable):
+            judge.differences.expect(table.position)
+        for piece in _pieces(first, chunks):
+            judge.add(piece)
+        return judge.verdict()
 
 
 def _pieces(first: JointTable, rest: Iterator[JointTable]) -> Iterator[JointTable]:

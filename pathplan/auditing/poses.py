@@ -2,7 +2,7 @@
 
 Of all ways to give every target a row, later steps no earlier rows, the one counts whose distances are least in sum; a
 distance far beyond some millimetres counts as no more than missed, so that one target that is missed does not draw its
-neighbours away from theirs.
+neighbours away from theirs. Where a step ends at a stop point, rows at which the arm stands come first.
 """
 
 from __future__ import annotations
@@ -31,6 +31,7 @@ __all__ = ["NEAR", "Pass", "pass_findings", "passes"]
 
 NEAR = (1e-4, math.radians(0.1))  # m, rad: as near as a target counts as passed, if nothing else is asked
 MISSED = 0.005  # m, or rad times the arm's length: from about here on a target counts as missed
+STANDS = 1e-5  # m, or rad times the arm's length, to one of the neighbouring rows
 MOST_ROWS, MOST_WORK = 2_000_000, 2_000_000_000  # rows, and rows times targets
 MOST_CANDIDATES = 4_000_000  # rows looked at for all targets together
 Integers = NDArray[np.intp]
@@ -76,17 +77,31 @@ def passes(table: JointTable, task: Task, near: tuple[float, float] = NEAR) -> t
         raise InputError(f"table: {len(table)} rows are too many to be compared with {len(steps)} targets")
     good = np.asarray(np.isfinite(table.position).all(axis=1))
     position = np.where(good[:, None], table.position, 0.0)
-    carried = {step.tool: _carrying(arm, step) for step in steps}
+    with np.errstate(over="ignore", invalid="ignore"):
+        return _all_passes(table, task, steps, good, position, near)
+
+
+def _all_passes(
+    table: JointTable,
+    task: Task,
+    steps: Sequence[Step],
+    good: NDArray[np.bool_],
+    position: Array,
+    near: tuple[float, float],
+) -> tuple[Pass, ...]:
+    """The nearest rows; `good` (N,) tells which are finite, `position` (N, n) is zero at the others."""
+    carried = {step.tool: _carrying(task.arm, step) for step in steps}
     poses = {tool: carrying.forward(position) for tool, carrying in carried.items()}
+    moves = _moves(task.arm, position)
     costs, rows = [], []
     most = max(64, MOST_CANDIDATES // max(1, len(steps)))
     for step in steps:
         away = _away(step, task, carried[step.tool], poses[step.tool], position)
-        away[~good] = np.inf
+        away[~good | np.isnan(away)] = np.inf
         at = _candidates(away, most)
         rows.append(at)
         known = np.minimum(away[at], 1e6)
-        costs.append(known / (known + MISSED))
+        costs.append(known / (known + MISSED) + (0.5 * moves[at] if step.blend is None else 0.0))
     chosen = _in_order(rows, costs)
     return tuple(
         _pass(step, task, carried[step.tool], table, row, near) for step, row in zip(steps, chosen, strict=True)
@@ -113,6 +128,14 @@ def _away(step: Step, task: Task, arm: Arm, poses: Array, position: Array) -> Ar
         return np.asarray((np.abs(position - step.target.joints) * scale).max(axis=1))
     distance, angle = pose_errors(poses, _target_pose(step, task, arm)[None])
     return np.asarray(distance + arm.length * angle)
+
+
+def _moves(arm: Arm, position: Array) -> NDArray[np.bool_]:
+    """Rows (N,) at which the arm neither came to stand nor stands."""
+    scale = np.array([arm.length if joint.kind == "revolute" else 1.0 for joint in arm.joints])
+    ways = (np.abs(np.diff(position, axis=0)) * scale).max(axis=1, initial=0.0)
+    moving = np.concatenate([[False], ways > STANDS, [False]])  # before the first row and after the last it rests
+    return moving[:-1] & moving[1:]
 
 
 def _candidates(away: Array, most: int) -> Integers:

@@ -16,6 +16,7 @@ FINITE_COLUMNS = ("time", "position", "velocity", "acceleration", "jerk", "torqu
 STATED = 1e-6  # of the cycle: how far a time may lie off the grid of a stated cycle
 FOUND = 1e-2  # the same where the cycle was found from times that were rounded when they were written
 USUAL = 0.9  # of the intervals that must be alike for a cycle to be found where some are not
+SHORTEST, LONGEST = 1e-9, 1e9  # s: what lies outside is no controller's cycle
 FEWEST = 10  # rows from which on such a cycle is found
 
 
@@ -33,18 +34,20 @@ def found_cycle(time: Array, rounding: float = 0.0) -> float | None:
         return bool(intervals.min() > 0 and np.abs(time - time[0] - rows * cycle).max() <= within)
 
     mean = float(time[-1] - time[0]) / len(intervals)
+    if not SHORTEST <= mean <= LONGEST:
+        return None
     if on_grid(mean, FOUND * mean):
         return _rounded(mean, len(time), 1e-9 * mean)
+    usual = float(np.median(intervals))
+    alike = np.abs(intervals - usual) <= FOUND * usual
+    if usual > 0 and len(time) >= FEWEST and alike.mean() >= USUAL:
+        cycle = float(intervals[alike].mean())
+        return _rounded(cycle, len(time), 1e-9 * cycle)
     if rounding > 0:  # the ends alone would carry their rounding to every row between
         slope = float(np.polynomial.Polynomial.fit(rows, time, 1).convert().coef[-1])
         if on_grid(slope, 1.01 * rounding):
             return _rounded(slope, len(time), 0.01 * rounding)
-    usual = float(np.median(intervals))
-    alike = np.abs(intervals - usual) <= FOUND * usual
-    if usual <= 0 or len(time) < FEWEST or alike.mean() < USUAL:
-        return None
-    cycle = float(intervals[alike].mean())
-    return _rounded(cycle, len(time), 1e-9 * cycle)
+    return None
 
 
 def _rounded(cycle: float, rows: int, close: float) -> float:
@@ -80,7 +83,9 @@ class Stamps:
         self.cycle = cycle
         self.stated = stated
         self.within = 0.0 if cycle is None else (STATED if stated else FOUND) * cycle
-        self.within = max(self.within, 1.01 * rounding)  # of the first time and of each that is compared with it
+        cycles = 0.0 if cycle is None or not rounding else cycle / rounding
+        if abs(cycles - round(cycles)) > 1e-6:  # no whole number of steps: the first time and each later one are off
+            self.within = max(self.within, 1.01 * rounding)
         self.rows = 0
         self._first = self._last = 0.0
         # kind of trouble -> (row, what is told of the first one, its time, how many), in the order of the rows

@@ -113,7 +113,7 @@ def cycle_from(value: Any, where: str) -> float | None:
     """A cycle in s, or None for null. Raises InputError at `where`."""
     if value is None:
         return None
-    if isinstance(value, bool) or not isinstance(value, int | float) or not 0 < value < 1e9:
+    if isinstance(value, bool) or not isinstance(value, int | float) or not 1e-9 <= value < 1e9:
         raise InputError.at(where, "cycle_s", f"expected a positive time or null, got {_short(value)}")
     return float(value)
 

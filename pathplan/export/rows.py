@@ -68,7 +68,8 @@ def faults(block: Array, present: Sequence[Group]) -> tuple[int, int, str] | Non
     for group in present:
         values = block[:, column : column + len(group.columns)]
         if group.field == "pose":
-            length = np.linalg.norm(values[:, 3:], axis=1)
+            with np.errstate(over="ignore"):
+                length = np.linalg.norm(values[:, 3:], axis=1)
             off = np.flatnonzero(np.abs(length - 1) > 1e-9)
             if len(off):
                 got = f"got length {length[off[0]]:.6g}"

@@ -66,7 +66,7 @@ def write_table(
     check_place(file)
     chunks = iter([table] if isinstance(table, JointTable) else table)
     if columns is not None:
-        chunks = chosen_columns(chunks, columns)
+        chunks = chosen_columns(chunks, columns, file)
     first = next(chunks, None)
     if first is None:
         raise InputError.at(str(file), "there are no rows to write")
@@ -94,14 +94,14 @@ def check_columns(columns: Collection[str], where: str = "columns") -> None:
             raise InputError.at(where, f"{expected}, got {toml_text(name)}{nearest(name, OPTIONAL)}")
 
 
-def chosen_columns(chunks: Iterable[JointTable], columns: Collection[str]) -> Iterator[JointTable]:
+def chosen_columns(chunks: Iterable[JointTable], columns: Collection[str], file: Path) -> Iterator[JointTable]:
     """The chunks with only these of the optional columns. Raises InputError for one unknown or not there."""
     check_columns(columns)
     left_out: dict[str, Any] = {name: None for name in OPTIONAL if name not in columns}
     for chunk in chunks:
         for name in columns:
             if name in OPTIONAL and getattr(chunk, name) is None:
-                raise InputError.at("columns", f"the table has no {name}")
+                raise InputError.at(str(file), f"the table has no {name} to be written")
         yield dataclasses.replace(chunk, **left_out)
 
 

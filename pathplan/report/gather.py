@@ -122,10 +122,11 @@ def picture_of(plan: Plan, *, buckets: int = BUCKETS, most: int = MOST_ROWS, too
     `buckets`: half the points of a line; `most`: rows kept to be read one by one; `tool`: whether the deviation from
     the programmed path is wanted too.
     """
-    audit, rows = plan.audit, plan.ticks + 1
-    gathering = _Gathering(plan.arm, audit, rows, plan, buckets, most)
+    from pathplan.report.outputs import WHOLE
+
+    whole = plan.table if plan.ticks < WHOLE else None  # evaluated once, for the audit too
+    gathering = _Gathering(plan.arm, plan.audit, plan.ticks + 1, plan, buckets, most)
     chunk = gathering.chunk
-    whole = plan.__dict__.get("table")
     for piece in plan.rows(chunk) if whole is None else whole.chunks(chunk):
         gathering.add(piece, deviations_of(plan, gathering.seen, len(piece)) if tool else None)
     return gathering.picture(plan.meta, plan.marks)

@@ -202,16 +202,22 @@ def _plots(picture: Picture) -> str:
     plots = []
     if picture.audit.measured == "columns":
         title = "What sets the pace"
-        plots.append(tag("h3", title) + pace_plot(picture, "plot-pace", title) + _legend())
+        plots.append(_boxed(title, pace_plot(picture, "plot-pace", title), _legend()))
     for quantity in picture.quantities:
         name = quantity.capitalize()
-        plots.append(tag("h3", name) + lane_plot(picture, f"plot-{quantity}", name, quantity_lanes(picture, quantity)))
+        plots.append(_boxed(name, lane_plot(picture, f"plot-{quantity}", name, quantity_lanes(picture, quantity))))
     lanes = tool_lanes(picture)
     if lanes:
-        plots.append(tag("h3", "Tool") + lane_plot(picture, "plot-tool", "Tool speed and path deviation", lanes))
+        plots.append(_boxed("Tool", lane_plot(picture, "plot-tool", "Tool speed and path deviation", lanes)))
     about = "Each lane is as high as the room between its limits (dashed)."
     about += " A ring marks the peak, a tint where the limit paces."
-    return tag("p", about, class_="small") + "".join(tag("div", plot, class_="plot-box") for plot in plots)
+    return tag("p", about, class_="small") + "".join(plots)
+
+
+def _boxed(title: str, plot: str, below: str = "") -> str:
+    """A plot under its heading, with the cursor that follows the slider."""
+    cursor = tag("div", "", class_="cursor", aria_hidden="true")
+    return tag("div", tag("h3", esc(title)) + tag("div", plot + cursor, class_="plot-inner") + below, class_="plot-box")
 
 
 def _legend() -> str:

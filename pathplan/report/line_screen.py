@@ -68,7 +68,7 @@ def _parts(line: LineAudit) -> Iterator[str]:
         cells += [_share(getattr(part, quantity)) for quantity in SHARES]
         cells += [format_value(1e3 * part.tool_speed), format_value(part.singular_value, 3)]
         table.append(cells)
-    yield "the most used in each part of the line: joint and share of its limit; singular: smallest singular value"
+    yield "the most used in each part of the line, joint and share; singular: smallest singular value"
     yield from aligned(table, [5, 8, 18, 15, 15, 15, 7, 8], left=(2, 3, 4, 5))
 
 

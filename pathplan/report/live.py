@@ -68,6 +68,10 @@ class LivePage:
         return self
 
     def __exit__(self, *error: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Answer those who wait, and listen no more."""
         self.server.ended.set()
         self.watching.wake()
         self.server.shutdown()

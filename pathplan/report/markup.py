@@ -15,7 +15,8 @@ VOID = frozenset({"br", "col", "hr", "img", "input", "link", "meta"})
 
 def esc(text: Any) -> str:
     """Text for content and quoted attributes: markup characters as entities, nothing that isn't printable."""
-    return html.escape(printable(str(text)), quote=True)
+    words = str(text)
+    return html.escape(words if words.isprintable() else printable(words), quote=True)
 
 
 def number(value: float) -> str:

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from pathplan.auditing.words import dimension_of
+from pathplan.report.axis import LEFT, RIGHT, WIDTH, TimeAxis
 from pathplan.report.gather import Picture
 from pathplan.report.packed import Column, decimals_for, pack
 from pathplan.report.scene import Scene
@@ -31,7 +32,7 @@ TOOL = {
 
 def page_data(picture: Picture, scene: Scene) -> dict[str, Any]:
     """All of it. Numbers are finite or None; names are made printable, and must be put into a page as text only."""
-    time_decimals = _time_decimals(picture)
+    time_decimals, axis = _time_decimals(picture), TimeAxis.of(picture)
     keys = ["row", "time", "step", "pace"]
     columns = [
         Column(picture.kept_rows),
@@ -58,6 +59,7 @@ def page_data(picture: Picture, scene: Scene) -> dict[str, Any]:
         "time_decimals": time_decimals,
         "quantities": list(picture.quantities),
         "joints": [_joint(picture, r) for r in range(len(picture.names))],
+        "axis": {"start": axis.start, "end": axis.end, "left": LEFT, "right": RIGHT, "width": WIDTH},
         "labels": [list(label) for label in picture.labels],
         "steps": [printable(picture.step_label(step)) for step in range(int(picture.kept_step.max()) + 1)],
         "scene": _scene(scene),

@@ -25,6 +25,8 @@ def plan_as_dict(plan: Plan) -> dict[str, Any]:
         **plan.meta,
         "tool": task.arm.tool.name,
         "payload": None if task.arm.payload is None else task.arm.payload.name,
+        "tools": list(task.tools),
+        "payloads": list(task.payloads),
         "passed": plan.audit.passed,
         "plan": {
             "duration_s": plan.duration,

@@ -54,8 +54,8 @@ def plan_headline(plan: Plan) -> str:
 def _head(plan: Plan) -> Iterator[str]:
     task, arm = plan.task, plan.task.arm
     yield plan_headline(plan)
-    parts = [f"arm {arm.name}", f"tool {arm.tool.name}"]
-    parts += [f"payload {arm.payload.name}"] if arm.payload is not None else []
+    parts = [f"arm {arm.name}", f"tool{'s' * (len(task.tools) > 1)} {', '.join(task.tools)}"]
+    parts += [f"payload{'s' * (len(task.payloads) > 1)} {', '.join(task.payloads)}"] if task.payloads else []
     parts += [f"pace {format_quantity(task.pace, 'ratio')}"] if task.pace != 1 else []
     parts += [f"tool speed capped at {format_quantity(task.speed, 'speed')}"] if task.speed is not None else []
     yield fit(printable(", ".join(parts)))

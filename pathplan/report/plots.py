@@ -121,7 +121,7 @@ def lane_plot(picture: Picture, name: str, title: str, lanes: Sequence[Lane]) ->
     bottom = TOP + len(lanes) * (LANE + GAP)
     body = [_steps(picture, axis, bottom), _marks(picture, axis, bottom)]
     body += [_lane(picture, axis, lane, TOP + k * (LANE + GAP) + GAP / 2) for k, lane in enumerate(lanes)]
-    body += [_strip(picture, axis, bottom + 4), _time_axis(axis, bottom + 20, TOP, bottom), _cursor(axis, bottom + 18)]
+    body += [_strip(picture, axis, bottom + 4), _time_axis(axis, bottom + 20, TOP, bottom)]
     words = pretty("; ".join(lane.said for lane in lanes))
     return _svg(name, title, f"Over {clock(axis.end - axis.start)}. {words}.", bottom + 52, "".join(body))
 
@@ -143,7 +143,7 @@ def pace_plot(picture: Picture, name: str, title: str) -> str:
         body.append(tag("text", _short(who), x=8, y=top + 13, class_="who"))
         body.append(tag("line", x1=LEFT, x2=RIGHT, y1=top + ROLL, y2=top + ROLL, class_="base"))
         body += blocks[row]
-    body += [_time_axis(axis, bottom + 4, TOP, bottom), _cursor(axis, bottom + 2)]
+    body.append(_time_axis(axis, bottom + 4, TOP, bottom))
     return _svg(name, title, _pace_words(picture), bottom + 36, "".join(body))
 
 
@@ -337,13 +337,6 @@ def _time_axis(axis: TimeAxis, y: float, top: float, bottom: float) -> str:
         parts.append(tag("text", format_value(time, 6), x=x, y=y + 13, class_="tick"))
     parts.append(tag("text", "s", x=RIGHT + 14, y=y + 13, class_="tick"))
     return tag("g", "".join(parts), class_="axis")
-
-
-def _cursor(axis: TimeAxis, bottom: float) -> str:
-    """The line that follows the slider; the page's own code moves it."""
-    shape = f"M0 {number(TOP - 16)}V{number(bottom)}M-4 {number(bottom)}h8l-4 -6z"
-    place = {"data_start": repr(axis.start), "data_end": repr(axis.end), "data_left": LEFT, "data_right": RIGHT}
-    return tag("path", d=shape, class_="cursor", transform=f"translate({LEFT} 0)", **place)
 
 
 def _class(quantity: str) -> str:

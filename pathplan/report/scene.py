@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from pathplan.arm import Arm
     from pathplan.planning import Plan
 
-__all__ = ["Blended", "Frame", "Scene", "arm_points", "scene_of"]
+__all__ = ["Blended", "Frame", "Scene", "arm_links", "arm_points", "scene_of"]
 
 MOST_POINTS = 800  # of the tool's path
 LEG_POINTS = 33  # of a programmed step that is no straight line
@@ -101,6 +101,27 @@ def arm_points(arm: Arm, q: Array, tip_from_tool: Array) -> tuple[Array, Array]:
         frames[i] = before @ arm.parent_from_joint[i] @ joint_motion(arm.joints[i].kind, arm.axes[i], float(q[i]))
     flange, tool = frames[arm.tip] @ arm.tip_from_flange, frames[arm.tip] @ tip_from_tool
     return frames, np.vstack([np.zeros((1, 3)), frames[:, :3, 3], flange[None, :3, 3], tool[None, :3, 3]])
+
+
+def arm_links(arm: Arm, frames: Array, points: Array) -> list[tuple[Array, Array, float]]:
+    """What carries what, as (from (3,), to (3,), width 0..1) for the frames and points of `arm_points`.
+
+    A link leads to where its joint is mounted; a slide leads on from there to where the joint has moved, thinner. The
+    arm grows thinner towards the tool.
+    """
+    links = []
+    count = arm.n + 1
+    for i in range(arm.n):
+        parent = arm.parents[i]
+        before = frames[parent] if parent >= 0 else np.eye(4)
+        mounted = (before @ arm.parent_from_joint[i])[:3, 3]
+        width = 1.0 - 0.65 * i / count
+        links.append((before[:3, 3], mounted, width))
+        if arm.joints[i].kind == "prismatic":
+            links.append((mounted, points[i + 1], 0.6 * width))
+    links.append((points[arm.tip + 1], points[-2], 1.0 - 0.65 * arm.n / count))
+    links.append((points[-2], points[-1], 0.35))
+    return links
 
 
 def _path(picture: Picture) -> Array:

@@ -134,7 +134,8 @@ def _cycle_bar(picture: Picture) -> str:
     beside = {"x": bound - 6, "y": 44, "class_": "edge"}
     parts.append(tag("text", "bound", **beside))
     words = f"Steps along the cycle time; the bound is {100 * bound / 1000:.1f} % of it."
-    return tag("svg", tag("title", esc(words)) + "".join(parts), class_="plot bar", viewbox="0 0 1000 48", role="img")
+    inner = tag("title", esc(words)) + "".join(parts)
+    return tag("div", tag("svg", inner, class_="plot bar", viewbox="0 0 1000 48", role="img"), class_="bar-box")
 
 
 def findings_section(picture: Picture) -> str:

@@ -7,14 +7,16 @@ from dataclasses import dataclass
 import numpy as np
 
 from pathplan.report.markup import esc, number, tag
-from pathplan.report.scene import Scene, arm_points
+from pathplan.report.scene import Scene, arm_links, arm_points
 from pathplan.report.thinning import Array
 
 __all__ = ["AZIMUTH", "ELEVATION", "View", "arm_still"]
 
 AZIMUTH, ELEVATION = -58.0, 24.0  # deg, where the page's own view starts too
 WIDTH, HEIGHT = 720.0, 540.0
+FILLED = 1.1  # of the picture by the sphere about the scene, whose rim is mostly empty
 DISTANCE = 5.0  # of the eye from the centre, in radii
+WIDEST = 0.042  # of the picture: the first link
 MOST_FRAMES = 12
 MOST_NUMBERS = 40
 
@@ -37,7 +39,7 @@ class View:
         up = np.cross(toward, right)
         local = (np.atleast_2d(points) - self.scene.centre) @ np.column_stack([right, up, toward])
         local = local / self.scene.radius
-        scale = 0.5 * min(self.width, self.height) * 0.98 * np.sqrt(DISTANCE**2 - 1) / (DISTANCE - local[:, 2])
+        scale = 0.5 * min(self.width, self.height) * FILLED * np.sqrt(DISTANCE**2 - 1) / (DISTANCE - local[:, 2])
         return np.column_stack(
             [self.width / 2 + scale * local[:, 0], self.height / 2 - scale * local[:, 1], local[:, 2]]
         )
@@ -103,28 +105,20 @@ def _floor(scene: Scene, view: View) -> str:
 def _arm(scene: Scene, view: View, q: Array) -> list[str]:
     """Links as thick strokes with an edge, far ones first, and a disc at each joint."""
     arm = scene.arm
-    points = arm_points(arm, q, scene.tools[0])[1]
-    seen = view(points)
-    links = [(arm.parents[i] + 1, i + 1) for i in range(arm.n)]
-    links += [(arm.tip + 1, arm.n + 1), (arm.n + 1, arm.n + 2)]
+    frames, points = arm_points(arm, q, scene.tools[0])
+    widest = WIDEST * min(view.width, view.height)
     drawn = []
-    for k, (a, b) in enumerate(links):
-        if np.hypot(*(seen[a, :2] - seen[b, :2])) < 0.5:
+    for start, end, width in arm_links(arm, frames, points):
+        seen = view(np.vstack([start, end]))
+        if np.hypot(*(seen[0, :2] - seen[1, :2])) < 0.5:
             continue
-        wide = link_width(k, len(links)) * min(view.width, view.height)
-        ends = _polyline(seen[[a, b]])
-        both = tag("path", d=ends, class_="edge-of-link", stroke_width=wide + 2.5)
-        drawn.append((float(seen[[a, b], 2].mean()), both + tag("path", d=ends, class_="link", stroke_width=wide)))
-    for i in range(arm.n):
-        wide = link_width(i, len(links)) * min(view.width, view.height)
-        spot = {"cx": float(seen[i + 1, 0]), "cy": float(seen[i + 1, 1]), "r": 0.62 * wide + 1.5}
-        drawn.append((float(seen[i + 1, 2]) + 0.02, tag("circle", **spot, class_="joint")))
+        ends = _polyline(seen)
+        both = tag("path", d=ends, class_="edge-of-link", stroke_width=width * widest + 2.5)
+        drawn.append((float(seen[:, 2].mean()), both + tag("path", d=ends, class_="link", stroke_width=width * widest)))
+    for i, (x, y, near) in enumerate(view(points[1 : arm.n + 1]).tolist()):
+        size = 0.62 * widest * (1.0 - 0.65 * i / (arm.n + 1)) + 1.5
+        drawn.append((near + 0.02, tag("circle", cx=x, cy=y, r=size, class_="joint")))
     return [text for _, text in sorted(drawn, key=lambda item: item[0])]
-
-
-def link_width(k: int, count: int) -> float:
-    """Width of a link in parts of the picture: the arm grows thinner towards the tool."""
-    return 0.042 - 0.028 * k / max(1, count - 1)
 
 
 def _frames(scene: Scene, view: View) -> list[str]:

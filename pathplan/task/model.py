@@ -142,6 +142,16 @@ class Task:
     pace: float = 1.0  # 0 < pace <= 1
     sources: Mapping[str, str] = field(default_factory=dict)  # file name -> sha256 of what was read
 
+    @property
+    def tools(self) -> tuple[str, ...]:
+        """Names of the tools carried, in the order in which they are first used."""
+        return tuple(dict.fromkeys(step.tool or self.arm.tool.name for step in self.steps))
+
+    @property
+    def payloads(self) -> tuple[str, ...]:
+        """Names of the payloads carried at any time, in that order."""
+        return tuple(dict.fromkeys(step.payload for step in self.steps if step.payload is not None))
+
     def base_from_frame(self, name: str, q: Array | None = None) -> Array:
         """(4, 4) pose of a frame in the base frame; `q` (n,) is needed where a joint carries the frame."""
         frame_chain = np.eye(4)

@@ -65,7 +65,8 @@ def read_foreign(file: str | Path, arm: Arm, asked: Asked = Asked()) -> Foreign:
         units = [_unit(file, source, use, uses, arm, asked, notes) for use in uses]
         values = source.read([use.at for use in uses])
     names = [source.names[use.at] for use in uses]
-    arrays = _arrays(uses, units, values, arm.n)
+    with np.errstate(over="ignore"):  # what becomes infinite is told by the audit
+        arrays = _arrays(uses, units, values, arm.n)
     if asked.cycle is not None:
         arrays["time"] = tick_times(np.arange(len(values)), asked.cycle)
     steps = arrays.pop("step", None)

@@ -35,5 +35,16 @@ function standing(scene, q, tool) {
     before.push(times(parent < 0 ? HERE : frames[parent], scene.fixed[i]));
     frames.push(times(before[i], motion(scene.revolute[i], scene.axes[i], q[i])));
   });
-  return { frames, before, flange: times(frames[scene.tip], scene.flange), tool: times(frames[scene.tip], scene.tools[tool]) };
+  // What carries what, [from, to, width 0..1]: to where a joint is mounted, and on along a slide.
+  const links = [];
+  const count = frames.length + 1;
+  scene.parents.forEach((parent, i) => {
+    const width = 1 - (0.65 * i) / count;
+    links.push([parent < 0 ? [0, 0, 0] : origin(frames[parent]), origin(before[i]), width]);
+    if (!scene.revolute[i]) links.push([origin(before[i]), origin(frames[i]), 0.6 * width]);
+  });
+  const [flange, tip] = [times(frames[scene.tip], scene.flange), times(frames[scene.tip], scene.tools[tool])];
+  links.push([origin(frames[scene.tip]), origin(flange), 1 - (0.65 * frames.length) / count]);
+  links.push([origin(flange), origin(tip), 0.35]);
+  return { frames, before, links, flange, tool: tip };
 }

@@ -1,5 +1,14 @@
 // The time slider: arm, cursors and readings in step.
 
+// Text that changes only where it is another, so that what stays is not laid out again.
+function put(element, text) {
+  if (element.firstChild) {
+    if (element.firstChild.data !== text) element.firstChild.data = text;
+  } else {
+    element.textContent = text;
+  }
+}
+
 class Scrub {
   constructor(view) {
     const find = (id) => document.getElementById(id);
@@ -14,6 +23,10 @@ class Scrub {
     this.time = 0;
     this.waiting = false;
     this.playing = false;
+    this.resized = new ResizeObserver(([entry]) => {
+      this.width = entry.contentRect.width;
+      if (this.rows) this.go(this.index, this.time);
+    });
     this.slider.addEventListener("input", () => {
       this.stop();
       this.go(Number(this.slider.value));
@@ -47,16 +60,19 @@ class Scrub {
     this.rows = rows;
     this.slider.max = rows.count - 1;
     this.cursors = [...document.querySelectorAll("#plots .cursor")];
+    this.width = this.cursors.length ? this.cursors[0].parentElement.clientWidth : 0;
+    this.resized.disconnect();
+    if (this.cursors.length) this.resized.observe(this.cursors[0].parentElement);
     this.build();
     this.go(rows.nearest(Math.min(this.time, rows.time[rows.count - 1])), this.time);
   }
 
   timeAt(plot, x) {
-    const { start, end, left, right } = this.cursors[0].dataset;
+    const { start, end, left, right } = this.rows.doc.axis;
     const box = plot.getBoundingClientRect();
     const at = ((x - box.left) / box.width) * plot.viewBox.baseVal.width;
     const part = Math.max(0, Math.min(1, (at - left) / (right - left)));
-    return Number(start) + part * (end - start);
+    return start + part * (end - start);
   }
 
   seek(time) {
@@ -122,12 +138,14 @@ class Scrub {
         const cell = element("td");
         const value = element("span");
         value.className = "value";
-        const unit = element("small", ` ${(joint.units[quantity] ?? "").replace("^2", "²").replace("^3", "³")}`);
+        const foot = element("span");
+        foot.className = "foot";
         const share = element("span");
         share.className = "share";
-        cell.append(value, unit, share);
+        foot.append(share, element("small", (joint.units[quantity] ?? "").replace("^2", "²").replace("^3", "³")));
+        cell.append(value, foot);
         line.append(cell);
-        this.cells.push({ cell, value, share, quantity, joint: j });
+        this.cells.push({ cell, value, share, foot, quantity, joint: j });
       }
       return line;
     });
@@ -140,17 +158,15 @@ class Scrub {
     const { rows, index } = this;
     const { doc } = rows;
     const time = rows.time[index];
-    for (const cursor of this.cursors) {
-      const { start, end, left, right } = cursor.dataset;
-      const x = Number(left) + ((time - start) / (end - start)) * (right - left);
-      cursor.setAttribute("transform", `translate(${x.toFixed(2)} 0)`);
-    }
+    const { start, end, left, right, width } = doc.axis;
+    const x = ((left + ((time - start) / (end - start)) * (right - left)) / width) * this.width;
+    for (const cursor of this.cursors) cursor.style.transform = `translateX(${x.toFixed(2)}px)`;
     const paced = rows.pacing(index);
-    for (const { cell, value, share, quantity, joint } of this.cells) {
+    for (const { cell, value, share, foot, quantity, joint } of this.cells) {
       const part = rows.share(quantity, joint, index);
-      value.textContent = rows.text(`${quantity} ${joint}`, index);
-      share.textContent = Number.isNaN(part) ? "" : `${(100 * part).toFixed(1)} %`;
-      cell.style.setProperty("--share", Number.isNaN(part) ? 0 : Math.min(1, part));
+      put(value, rows.text(`${quantity} ${joint}`, index));
+      put(share, Number.isNaN(part) ? "" : `${(100 * part).toFixed(1)} %`);
+      foot.style.setProperty("--share", Number.isNaN(part) ? 0 : Math.max(0, Math.min(1, part)).toFixed(3));
       cell.classList.toggle("over", part > 1.000001);
       cell.classList.toggle("paces", !!paced && paced.joint === joint && paced.quantity === quantity);
     }
@@ -179,8 +195,8 @@ class Scrub {
     parts.forEach(([name, value], k) => {
       const line = this.now.children[k] ?? this.now.appendChild(document.createElement("div"));
       if (!line.firstChild) line.append(document.createElement("dt"), document.createElement("dd"));
-      line.children[0].textContent = name;
-      line.children[1].textContent = value;
+      put(line.children[0], name);
+      put(line.children[1], value);
     });
     while (this.now.children.length > parts.length) this.now.lastChild.remove();
     this.slider.setAttribute("aria-valuetext", `${clock}, row ${rows.row[index] + 1}, step ${parts[2][1]}, paced by ${parts[3][1]}`);

@@ -11,9 +11,13 @@ class View {
     this.state = { azimuth: -58, elevation: 24, zoom: 1, x: 0, y: 0 };
     this.pose = null;
     this.listen();
+    this.inks = new Map();
     new ResizeObserver(() => this.draw()).observe(canvas);
     for (const query of ["(prefers-color-scheme: dark)", "print"]) {
-      matchMedia(query).addEventListener("change", () => this.draw());
+      matchMedia(query).addEventListener("change", () => {
+        this.inks.clear();
+        this.draw();
+      });
     }
     labels.addEventListener("change", () => this.draw());
   }
@@ -104,7 +108,7 @@ class View {
     const [a, e] = [(azimuth * Math.PI) / 180, (elevation * Math.PI) / 180];
     const [ca, sa, ce, se] = [Math.cos(a), Math.sin(a), Math.cos(e), Math.sin(e)];
     const { centre, radius } = this.scene;
-    const scale = 0.49 * Math.min(width, height) * Math.sqrt(24) * zoom;
+    const scale = 0.55 * Math.min(width, height) * Math.sqrt(24) * zoom;
     return (p) => {
       const [x, y, z] = [(p[0] - centre[0]) / radius, (p[1] - centre[1]) / radius, (p[2] - centre[2]) / radius];
       const near = (ca * x + sa * y) * ce + se * z;
@@ -127,8 +131,7 @@ class View {
     pen.setTransform(dense, 0, 0, dense, 0, 0);
     pen.clearRect(0, 0, width, height);
     pen.lineCap = pen.lineJoin = "round";
-    const style = getComputedStyle(canvas);
-    const ink = (name) => style.getPropertyValue(`--${name}`).trim();
+    const ink = (name) => this.ink(name);
     const place = this.projection(width, height);
     this.floor(pen, place, ink);
     this.lines(pen, place, this.scene.programmed, ink("muted"), 1, [4, 4]);
@@ -140,6 +143,12 @@ class View {
     pen.globalAlpha = 1;
     if (this.labels.checked) this.words(pen, place, ink);
     this.triad(pen, place, this.pose.tool, 0.12, ink("ink"), "");
+  }
+
+  // A colour of the page by its name, looked up once for each theme.
+  ink(name) {
+    if (!this.inks.has(name)) this.inks.set(name, getComputedStyle(this.canvas).getPropertyValue(`--${name}`).trim());
+    return this.inks.get(name);
   }
 
   lines(pen, place, polylines, colour, width, dash = []) {
@@ -169,26 +178,22 @@ class View {
       lines.push([[x0, y0 + k * step, 0], [x0 + count * step, y0 + k * step, 0]]);
     }
     this.lines(pen, place, lines, ink("floor"), 1);
-    const points = [[0, 0, 0], ...this.pose.frames.map(origin), origin(this.pose.flange), origin(this.pose.tool)];
-    this.lines(pen, place, [points.map(([x, y]) => [x, y, 0])], ink("shadow"), 7);
+    const fallen = ([x, y]) => [x, y, 0];
+    this.lines(pen, place, this.pose.links.map(([a, b]) => [fallen(a), fallen(b)]), ink("shadow"), 7);
   }
 
   // Links, rails and joints, the far ones first.
   body(pen, place, ink, size) {
     const { scene, pose } = this;
-    const points = [[0, 0, 0], ...pose.frames.map(origin), origin(pose.flange), origin(pose.tool)];
     const n = pose.frames.length;
-    const links = scene.parents.map((parent, i) => [parent + 1, i + 1]);
-    links.push([scene.tip + 1, n + 1], [n + 1, n + 2]);
-    const thin = (k) => 0.042 - (0.028 * k) / Math.max(1, links.length - 1);
-    const zoom = this.state.zoom;
-    const drawn = links.map(([a, b], k) => {
-      const [p, q] = [place(points[a]), place(points[b])];
+    const widest = 0.042 * size * this.state.zoom;
+    const drawn = pose.links.map(([a, b, width]) => {
+      const [p, q] = [place(a), place(b)];
       const stroke = () => {
         if (Math.hypot(p[0] - q[0], p[1] - q[1]) < 0.5) return;
         for (const [colour, more] of [["edge", 2.5], ["link", 0]]) {
           pen.strokeStyle = ink(colour);
-          pen.lineWidth = thin(k) * size * zoom + more;
+          pen.lineWidth = width * widest + more;
           pen.beginPath();
           pen.moveTo(p[0], p[1]);
           pen.lineTo(q[0], q[1]);
@@ -198,7 +203,7 @@ class View {
       return [(p[2] + q[2]) / 2, stroke];
     });
     for (let i = 0; i < n; i++) {
-      const half = 0.75 * thin(i) * scene.radius * 2;
+      const half = 0.055 * (1 - (0.65 * i) / (n + 1)) * scene.radius;
       const fill = pose.paced && pose.paced.joint === i ? ink(pose.paced.quantity.replace(" ", "-")) : ink("joint");
       const [near, stroke] = this.joint(pen, place, i, half, fill, ink("edge"));
       drawn.push([near + 0.02, stroke]);

@@ -1,12 +1,13 @@
 """A joint table from anywhere, timed anew: its own path, our limits.
 
 The positions of the table make a path in joint space. Where the table rests for a while the arm stops and waits as
-long; where its path turns sharply the arm stops. Everything between is followed along a smooth path that passes the rows
+long; where its path turns sharply it stops. Everything between is followed along a smooth path that passes the rows
 within a tolerance, as fast as the arm's limits allow. Times and velocities of the table count for nothing else.
 """
 
 from __future__ import annotations
 
+import hashlib
 from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
@@ -84,7 +85,7 @@ def task_along(
 ) -> Task:
     """The task that follows the path of a joint table: taught paths, and waits. See `retime`.
 
-    `file`: where the table is from, for messages.
+    `file`: which the table was read from, for messages and the record of sources.
     """
     if not tolerance > 0.0:
         raise InputError(f"tolerance: expected an angle above zero, got {tolerance}")
@@ -102,6 +103,10 @@ def task_along(
     if not any(part.moves for part in parts):
         raise InputError(f"{name}: nothing moves in it")
     steps = [_step(part, table, arm, i, name, tolerance) for i, part in enumerate(parts)]
+    sources = dict(arm.sources)
+    if file is not None:
+        with open(file, "rb") as stream:
+            sources[name] = hashlib.file_digest(stream, "sha256").hexdigest()
     start = np.array(table.position[0])
     start.flags.writeable = False
     return Task(
@@ -111,6 +116,7 @@ def task_along(
         start=start,
         steps=tuple(_marked(steps, parts, table)),
         cycle=period,
+        sources=sources,
     )
 
 
