@@ -142,8 +142,8 @@ def main(poses: int = 10_000, starts: int = 200, part: str = "") -> None:
         total[1] += len(outcome.missed)
         print(f"{label}: {outcome.method}")
         print(
-            f"  {poses} poses, {starts} starts: the search found {outcome.referee} branches, {len(outcome.missed)} of them "
-            f"missing among ours ({100 * outcome.share:.4f} % found); "
+            f"  {poses} poses, {starts} starts: the search found {outcome.referee} branches, {len(outcome.missed)} "
+            f"of them missing among ours ({100 * outcome.share:.4f} % found); "
             f"ours {outcome.branches}, of those "
             f"{outcome.branches - outcome.referee + len(outcome.missed)} that the search did not find; "
             f"{outcome.alone} poses without the joints they came from"

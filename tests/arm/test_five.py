@@ -67,8 +67,8 @@ def test_what_five_axes_can_not_serve_is_refused_with_what_they_do():
     pose = arm.forward(np.full(5, 0.1))
     pose[:3, :3] = pose[:3, :3] @ rot_x(0.2)[:3, :3]
     message = (
-        "gantry with two turns: the pose is out of reach (an arm with 5 axes can't serve every pose; it serves places and "
-        "directions of the tool's z axis, with a roll that follows): the nearest answer is off by "
+        "gantry with two turns: the pose is out of reach (an arm with 5 axes can't serve every pose; it serves "
+        "places and directions of the tool's z axis, with a roll that follows): the nearest answer is off by "
     )
     with pytest.raises(errors.UnreachableError, match=re.escape(message)):
         arm.inverse(pose)

@@ -159,8 +159,8 @@ def test_a_track_of_the_arm_file_carries_the_urdf_arm(tmp_path):
     file = arm_file(tmp_path, text, ["turn"], "b")
     alone = load_arm(file)
     track = (
-        '[[joint]]\nname = "track"\nkind = "prismatic"\norigin = [500, 0, 100]\naxis = [0, 1, 0]\nposition = [0, 3000]\n'
-        'velocity = 1000\nacceleration = 2000\njerk = 20000\nmass = "80 kg"\n'
+        '[[joint]]\nname = "track"\nkind = "prismatic"\norigin = [500, 0, 100]\naxis = [0, 1, 0]\n'
+        'position = [0, 3000]\nvelocity = 1000\nacceleration = 2000\njerk = 20000\nmass = "80 kg"\n'
     )
     table = '[[joint]]\nname = "table"\nkind = "revolute"\norigin = [2000, 0, 0]\naxis = [0, 0, 1]\nparent = "base"\n'
     table += 'position = "unlimited"\nvelocity = 90\nacceleration = 200\njerk = 2000\nmass = "40 kg"\n'
@@ -388,7 +388,7 @@ def test_limits_that_are_needed_and_missing(old, new, message, tmp_path):
 def test_a_joint_without_a_table_is_named(tmp_path):
     (tmp_path / "simple.urdf").write_text(SIMPLE)
     (tmp_path / "arm.toml").write_text('urdf = "simple.urdf"\n[positions]\nhome = [0, 0]\n')
-    with pytest.raises(errors.InputError, match='joint "one" of simple.urdf has no table') as caught:
+    with pytest.raises(errors.InputError, match=r'joint "one" of simple\.urdf has no table') as caught:
         load_arm(tmp_path / "arm.toml")
     assert len(caught.value.problems) == 2
 
