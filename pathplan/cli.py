@@ -43,6 +43,7 @@ examples:
   pathplan export pick.csv -o pick.npz         write a table as another kind of file
   pathplan report pick.toml                    write a report to sign, as one HTML file
   pathplan watch pick.toml                     a live page that follows the task as it is edited
+  pathplan arm glazer6.toml                    what an arm can do, and how its inverse is solved
   pathplan plan --help                         more on one command, with examples
 
 """
@@ -232,23 +233,24 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _picture_commands(command: Any) -> None:
+    from pathplan.arm_command import add_arm_command
     from pathplan.picture_commands import Shell, add_picture_commands
 
-    add_picture_commands(
-        Shell(
-            command=command,
-            planning_options=_planning_options,
-            arm_options=_arm_options,
-            screen_options=_screen_options,
-            task=_task,
-            is_table=_is_table,
-            judged=_judged,
-            check_rows=_check_rows,
-            show=_print,
-            show_json=lambda document: _print(_json({"pathplan": _version(), **document})),
-            status=_status,
-        )
+    shell = Shell(
+        command=command,
+        planning_options=_planning_options,
+        arm_options=_arm_options,
+        screen_options=_screen_options,
+        task=_task,
+        is_table=_is_table,
+        judged=_judged,
+        check_rows=_check_rows,
+        show=_print,
+        show_json=lambda document: _print(_json({"pathplan": _version(), **document})),
+        status=_status,
     )
+    add_picture_commands(shell)
+    add_arm_command(shell)
 
 
 def _planning_options(parser: argparse.ArgumentParser) -> None:
@@ -297,7 +299,7 @@ def _screen_options(parser: argparse.ArgumentParser) -> None:
 
 def _no_command(args: argparse.Namespace) -> int:
     if not args.version:
-        commands = "plan, audit, export, retime, report, watch or figure"
+        commands = "plan, audit, export, retime, report, watch, figure or arm"
         raise InputError(f"expected a command: {commands} (see pathplan --help)")
     _print(f"pathplan {_version()}")
     return 0

@@ -490,7 +490,7 @@ def test_export_of_a_task(folder, run):
 @pytest.mark.parametrize(
     ("argv", "line"),
     [
-        ([], "expected a command: plan, audit, export, retime, report, watch or figure (see pathplan --help)"),
+        ([], "expected a command: plan, audit, export, retime, report, watch, figure or arm (see pathplan --help)"),
         (["plan"], "the following arguments are required: TASK (see pathplan plan --help)"),
         (["export", "a.csv"], "the following arguments are required: -o (see pathplan export --help)"),
         (["plan", "cross.toml", "--fast", "-x"], "unknown arguments: --fast -x (see pathplan plan --help)"),
