@@ -94,9 +94,9 @@ examples:
 EXPORT = """\
 Write a table as another kind of file (.csv, .jsonl, .parquet: mm and deg, or as chosen; .npz: SI,
 exact), or plan a task and write its table. With --cycle a task's rows are evaluated anew from its
-timing; a table's rows are never interpolated. A table is judged against its arm first: that of --arm,
-or the arm file that it names if that lies beside it. Without an arm it is converted as it is, and the
-screen says so."""
+timing; a table's rows are never interpolated. A table is judged against its arm first: that of
+--arm, or the arm file that it names if that lies beside it. Without an arm it is converted as it
+is, and the screen says so."""
 EXPORT_EXAMPLES = """\
 examples:
   pathplan export pick.csv -o pick.npz --arm robots/glazer6.toml
