@@ -531,7 +531,10 @@ def test_export_of_a_task(folder, run):
             "argument --reduced-speed: only for a task, a.npz is a table",
         ),
         (["audit", "cross.toml", "--arm", "a.toml"], "argument --arm: only for a table, a task names its own"),
-        (["plan", "cross.toml", "-o", "a.txt"], 'a.txt: unknown kind of table: expected .csv, .jsonl, .npz or .parquet, got ".txt"'),
+        (
+            ["plan", "cross.toml", "-o", "a.txt"],
+            'a.txt: unknown kind of table: expected .csv, .jsonl, .npz or .parquet, got ".txt"',
+        ),
         (["plan", "cross.toml", "-o", "no/a.csv"], "no/a.csv: can't be written: there is no folder no"),
         (["plan", "cross.toml", "-o", "."], ".: is a directory: expected the name of a file"),
         (["plan", "cross.toml", "-o", "a.csv", "-o", "./a.csv"], "a.csv: given twice with -o"),

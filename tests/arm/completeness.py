@@ -74,7 +74,8 @@ def examine(label: str, poses: int, starts: int, seed: int = 1, timed: bool = Tr
         if held:
             found = arm.inverse_free(some, list(held), value[None])
             order = [i for i in arm.tool_joints if arm.joint_names[i] not in held]
-            return found.q[:, 0][:, :, order], np.asarray(found.valid)[:, 0], found.position_error[:, 0], found.angle_error[:, 0]
+            errors = found.position_error[:, 0], found.angle_error[:, 0]
+            return found.q[:, 0][:, :, order], np.asarray(found.valid)[:, 0], *errors
         found = arm.inverse_batch(some)
         return found.q, np.asarray(found.valid), found.position_error, found.angle_error
 
@@ -137,7 +138,8 @@ def main(poses: int = 10_000, starts: int = 200, part: str = "") -> None:
         total[1] += len(outcome.missed)
         print(f"{label}: {outcome.method}")
         print(
-            f"  {poses} poses, {starts} starts: the search found {outcome.referee} branches, {len(outcome.missed)} of them "
+            f"  {poses} poses, {starts} starts: the search found {outcome.referee} branches, "
+            f"{len(outcome.missed)} of them "
             f"missing among ours ({100 * outcome.share:.4f} % found); ours {outcome.branches}, of those "
             f"{outcome.branches - outcome.referee + len(outcome.missed)} that the search did not find; "
             f"{outcome.alone} poses without the joints they came from"
@@ -151,7 +153,8 @@ def main(poses: int = 10_000, starts: int = 200, part: str = "") -> None:
         for q, _, near in outcome.missed[:10]:
             print(f"  missed: {np.array2string(q, precision=6, floatmode='fixed')}, nearest of ours {near:.2g} away")
         sys.stdout.flush()
-    print(f"in all {total[0]} branches found by search, {total[1]} missing: {100 * (1 - total[1] / max(total[0], 1)):.4f} %")
+    found = 100 * (1 - total[1] / max(total[0], 1))
+    print(f"in all {total[0]} branches found by search, {total[1]} missing: {found:.4f} %")
 
 
 if __name__ == "__main__":

@@ -56,7 +56,8 @@ def skew_shoulder() -> Arm:
 
 def skew_hand() -> Arm:
     """Axes 2, 3, 4 parallel, axes 5 and 6 skew."""
-    rows = [DHRow(0, Q, 0.18), DHRow(-0.61), DHRow(-0.57), DHRow(0, Q, 0.17), DHRow(0.06, -1.2, 0.12), DHRow(0, 0, 0.11)]
+    rows = [DHRow(0, Q, 0.18), DHRow(-0.61), DHRow(-0.57)]
+    rows += [DHRow(0, Q, 0.17), DHRow(0.06, -1.2, 0.12), DHRow(0, 0, 0.11)]
     return from_rows("axes 2, 3, 4 parallel, skew hand", rows)
 
 
