@@ -176,6 +176,9 @@ def _parser() -> argparse.ArgumentParser:
     plan.add_argument("-o", dest="output", metavar="FILE", action="append", default=[],
                       help="table to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
     plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
+    plan.add_argument(
+        "--savings", action="store_true", help="what would buy time, each change planned again: takes that much longer"
+    )
     _planning_options(plan)
     _writing_options(plan)
     _screen_options(plan)
@@ -399,6 +402,7 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task |
     from pathplan.report import outputs as files
     from pathplan.report.plan_data import plan_as_dict
     from pathplan.report.progress import Progress
+    from pathplan.report.savings_screen import savings_as_dict, savings_screen
     from pathplan.report.written import written_as_dict
 
     writing, task = arguments.writing(args), _task(args) if task is None else task
@@ -418,12 +422,19 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task |
             jobs = files.jobs_of_plan(plan, outputs, writing) if outputs and may else []
         files.check_jobs(jobs, meta, writing)
         document = {"pathplan": _version(), **plan_as_dict(plan), **written_as_dict(jobs, audit_file)}
+        savings = None
+        if getattr(args, "savings", False):
+            tell("savings", 0, 1)
+            savings = plan.savings()
+            document["savings"] = savings_as_dict(savings)
         if audit_file is not None:
             files.write_jobs(jobs, writing, tell, audit=(audit_file, document))
     if args.json:
         _print(_json(document))
     elif not args.quiet:
         _print(_plan_text(args, plan, jobs, audit_file))
+        if savings is not None:
+            _print("\n" + "\n".join(savings_screen(plan.task, savings)))
     if plan.audit.passed:
         return 0
     from pathplan.report.judged import first_exceedance

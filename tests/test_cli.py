@@ -742,3 +742,14 @@ def test_progress_survives_a_terminal_that_closes(monkeypatch):
             pass
         stream.close()
     assert stream.closed
+
+
+def test_savings_are_told_when_asked_for(folder, run):
+    status, out, _ = run("plan", "cross.toml", "--no-table", "--savings")
+    assert status == 0
+    where = out.splitlines().index("what would buy time, each change by itself and planned again:")
+    assert all(line.endswith(" ms") and "10 % more" in line for line in out.splitlines()[where + 1 :])
+    status, out, _ = run("plan", "cross.toml", "--no-table", "--savings", "--json")
+    savings = json.loads(out)["savings"]
+    assert status == 0 and savings and all(saving["saved_ms"] > 0 for saving in savings)
+    assert "savings" not in json.loads(run("plan", "cross.toml", "--no-table", "--json")[1])
