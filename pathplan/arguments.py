@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = ["LONGEST_PERIOD", "judging", "line_audit", "quantity", "refused", "retimed", "speed_cap", "writing"]
 
+SLOWEST = 1e-5  # m/s, as in task files
 REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
 LONGEST_PERIOD = 10.0  # s
 LINE_CYCLE = 0.004  # s, where nothing else is said
@@ -47,6 +48,8 @@ def speed_cap(args: Namespace) -> float | None:
     speed = REDUCED_SPEED if args.reduced_speed else quantity(args.speed, "speed", "--speed")
     if speed is not None and speed <= 0:
         raise refused("--speed", 'a speed above zero such as "250 mm/s"', args.speed)
+    if speed is not None and speed < SLOWEST:
+        raise refused("--speed", f"at least {1e3 * SLOWEST:g} mm/s", args.speed)
     return speed
 
 

@@ -95,9 +95,9 @@ examples:
 EXPORT = """\
 Write a table as another kind of file (.csv, .jsonl, .parquet: mm and deg, or as chosen; .npz: SI,
 exact), or plan a task and write its table. With --cycle a task's rows are evaluated anew from its
-timing; a table's rows are never interpolated. A table is judged against its arm first: that of --arm,
-or the arm file that it names if that lies beside it. Without an arm it is converted as it is, and the
-screen says so."""
+timing; a table's rows are never interpolated. A table is judged against its arm first: that of
+--arm, or the arm file that it names if that lies beside it. Without an arm it is converted as it
+is, and the screen says so."""
 EXPORT_EXAMPLES = """\
 examples:
   pathplan export pick.csv -o pick.npz --arm robots/glazer6.toml
@@ -177,6 +177,9 @@ def _parser() -> argparse.ArgumentParser:
     plan.add_argument("-o", dest="output", metavar="FILE", action="append", default=[],
                       help="table to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
     plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
+    plan.add_argument(
+        "--savings", action="store_true", help="what would buy time, each change planned again: takes that much longer"
+    )
     _planning_options(plan)
     _writing_options(plan)
     _screen_options(plan)
@@ -401,6 +404,7 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task |
     from pathplan.report import outputs as files
     from pathplan.report.plan_data import plan_as_dict
     from pathplan.report.progress import Progress
+    from pathplan.report.savings_screen import savings_as_dict, savings_screen
     from pathplan.report.written import written_as_dict
 
     writing, task = arguments.writing(args), _task(args) if task is None else task
@@ -420,12 +424,19 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task |
             jobs = files.jobs_of_plan(plan, outputs, writing) if outputs and may else []
         files.check_jobs(jobs, meta, writing)
         document = {"pathplan": _version(), **plan_as_dict(plan), **written_as_dict(jobs, audit_file)}
+        savings = None
+        if getattr(args, "savings", False):
+            tell("savings", 0, 1)
+            savings = plan.savings()
+            document["savings"] = savings_as_dict(savings)
         if audit_file is not None:
             files.write_jobs(jobs, writing, tell, audit=(audit_file, document))
     if args.json:
         _print(_json(document))
     elif not args.quiet:
         _print(_plan_text(args, plan, jobs, audit_file))
+        if savings is not None:
+            _print("\n" + "\n".join(savings_screen(plan.task, savings)))
     if plan.audit.passed:
         return 0
     from pathplan.report.judged import first_exceedance

@@ -22,7 +22,7 @@ import pathplan
 from pathplan.cli import main as command
 
 ROOT = Path(__file__).parent.parent
-PLANNED = 0.02  # of the task files that still can be loaded: planned as well
+PLANNED = 0.004  # of the task files that still can be loaded: planned as well
 ROWS = 40
 PIECES = [
     *("nan", "-inf", "inf", "0", "-0", "-1", "1e300", "-1e-300", "1e-320", "9" * 25, "9" * 400, "1e999", "0x10", "1_0"),

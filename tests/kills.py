@@ -64,10 +64,10 @@ def parts_of(file: Path) -> list[str]:
     return [path.name for path in file.parent.iterdir() if path.match(f".{file.name}.*.part")]
 
 
-def kill_plan(folder: Path, rng: np.random.Generator) -> str:
-    """Kill `pathplan plan` over a finished plan at a random instant; what is there afterwards is one plan or the other.
+def stop_plan(folder: Path, rng: np.random.Generator, how: signal.Signals = signal.SIGKILL) -> str:
+    """Stop `pathplan plan` over a finished plan at a random instant; what is there afterwards is one plan or the other.
 
-    Returns 'untouched' or 'new'.
+    Returns 'untouched' or 'new'. Ctrl-C (SIGINT) ends it within two seconds, without a word and with status 130.
     """
     task = folder / "task.toml"
     line = '[[step]]\nmotion = "joint"\nto = "parked"\n'
@@ -81,9 +81,18 @@ def kill_plan(folder: Path, rng: np.random.Generator) -> str:
     started = time.monotonic()
     subprocess.run([*command, "--pace", "50 %"], cwd=folder, env=environment(), check=True)
     needed = time.monotonic() - started
-    with subprocess.Popen([*command, "--pace", "100 %"], cwd=folder, env=environment()) as planner:
-        time.sleep(rng.uniform(0.5, 1.1) * needed)
-        planner.send_signal(signal.SIGKILL)
+    begin = 0.1 if how == signal.SIGINT else 0.5
+    again = [*command, "--pace", "100 %"]
+    with subprocess.Popen(again, cwd=folder, env=environment(), stderr=subprocess.PIPE, text=True) as planner:
+        time.sleep(rng.uniform(begin, 1.1) * needed)
+        planner.send_signal(how)
+        stopped = time.monotonic()
+        assert planner.stderr is not None
+        told = planner.stderr.read()
+    if how == signal.SIGINT:
+        # a shell shows 130 too for an interpreter that was stopped before it could take Ctrl-C
+        assert planner.returncode in (0, 130, -signal.SIGINT) and told == "", f"status {planner.returncode}: {told}"
+        assert time.monotonic() - stopped < 2.0 and not list(folder.glob(".*.part"))
     found = (folder / "task.csv").read_bytes()
     assert found in wanted.values(), "neither the old table nor the new one"
     pathplan.read_table(folder / "task.csv")
@@ -95,7 +104,7 @@ def environment() -> dict[str, str]:
 
 
 def main(count: int, seed: int = 0) -> None:
-    """Kill `count` writers over the kinds of file, every tenth a whole command, and print what became of them."""
+    """Stop `count` writers over the kinds of file, of ten one whole command by a kill and one by Ctrl-C."""
     from tempfile import TemporaryDirectory
 
     rng = np.random.default_rng(seed)
@@ -103,9 +112,10 @@ def main(count: int, seed: int = 0) -> None:
     with TemporaryDirectory() as folder:
         for k in range(count):
             suffix = SUFFIXES[k % len(SUFFIXES)]
-            if k % 10 == 9:
+            if k % 5 == 4:
                 (Path(folder) / "plan").mkdir(exist_ok=True)
-                seen[f"plan: {kill_plan(Path(folder) / 'plan', rng)}"] += 1
+                how = signal.SIGKILL if k % 10 == 9 else signal.SIGINT
+                seen[f"plan, {how.name}: {stop_plan(Path(folder) / 'plan', rng, how)}"] += 1
             else:
                 seen[f"{suffix}: {kill_writer(Path(folder) / f't{suffix}', rng)}"] += 1
             if (k + 1) % 20 == 0:

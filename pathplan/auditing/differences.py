@@ -111,7 +111,7 @@ class Differences:
         times, rows = self._start if end == "first" else self._end
         if len(times) < 2:
             return np.zeros(len(self.factors))
-        interval = self.cycle or _interval(times)
+        interval = np.float64(self.cycle or _interval(times))
         way = (rows[1] - rows[0]) / self.factors
         n = len(self.factors)
         jerk = np.abs(self.limits["jerk"][:n]).max(axis=1) * (1 + TOLERANCE)

@@ -29,7 +29,8 @@ __all__ = ["LETTERS", "Lane", "lane_plot", "pace_plot", "quantity_lanes", "swatc
 LANE, GAP, ROLL = 46.0, 18.0, 18.0  # heights
 TOP = 34.0  # marks and the steps' band
 FINE = 50  # lines are drawn in this part of a unit
-MOST_MARKS = 60
+MOST_MARKS = 60  # with a line and perhaps a name each
+MOST_BLOCKS = 250  # of what paces, one by one
 LETTERS = dict(zip(PACED, ("v", "a", "j", "t", "s", "c"), strict=True))
 Scale = Callable[[Any], Any]  # screen unit -> height
 PATH_CONTRACT = 1e-6  # m and rad: how near to its line or arc the tool is promised to be
@@ -133,10 +134,16 @@ def pace_plot(picture: Picture, name: str, title: str) -> str:
     bottom = TOP + len(rows) * (ROLL + 4) + 4
     body = [_steps(picture, axis, bottom), _marks(picture, axis, bottom)]
     blocks: dict[int, list[str]] = {row: [] for row in rows}
-    for run in visible(picture.pace, axis):
+    runs = visible(picture.pace, axis)
+    for run in runs:
         row, quantity = picture.labels[run.value]
         top = TOP + rows.index(row) * (ROLL + 4) + 4
-        blocks[row].append(_block(axis, run, top, quantity))
+        if len(runs) <= MOST_BLOCKS:
+            blocks[row].append(_block(axis, run, top, quantity))
+    if len(runs) > MOST_BLOCKS:
+        for row in rows:
+            mine = [run for run in runs if picture.labels[run.value][0] == row]
+            blocks[row].append(_merged(picture, axis, mine, TOP + rows.index(row) * (ROLL + 4) + 4, ROLL - 3))
     for k, row in enumerate(rows):
         top = TOP + k * (ROLL + 4) + 4
         who = picture.names[row] if row >= 0 else "tool"
@@ -192,20 +199,25 @@ def _steps(picture: Picture, axis: TimeAxis, bottom: float) -> str:
 
 
 def _marks(picture: Picture, axis: TimeAxis, bottom: float) -> str:
-    """Marks as lines with their names on top; names that would overlap are left to the table of marks."""
+    """Marks as lines with their names on top; names without room are left to the table of marks, and so are the lines
+    of very many, which stay as ticks.
+    """
+    places = [axis.x(mark.time) for mark in picture.marks]
+    if len(places) > MOST_MARKS:
+        shape = "".join(f"M{number(x)} {number(TOP - 24)}v6" for x in dict.fromkeys(round(x, 1) for x in places))
+        return tag("g", tag("path", d=shape, class_="tick-of-mark"), class_="marks")
     found, free = [], float(LEFT)
-    for mark in picture.marks[:MOST_MARKS]:
-        x = axis.x(mark.time)
+    for k, mark in enumerate(picture.marks):
+        x = places[k]
         words = tag("title", esc(mark.name))
         found.append(tag("path", words, d=f"M{number(x)} {number(TOP - 18)}V{number(bottom)}"))
         found.append(tag("path", d=f"M{number(x)} {number(TOP - 18)}l-4 -5l4 -5l4 5z", class_="gem"))
         width = 6.4 * len(mark.name)
-        left = x + 7
-        if left + width > WIDTH:
-            left = x - 7 - width
-        if left >= free:
+        following = places[k + 1] - 6 if k + 1 < len(places) else float(WIDTH)
+        left = x + 7 if x + 7 + width <= following else x - 7 - width
+        if left >= free and left + width <= following:
             found.append(tag("text", esc(mark.name), x=left, y=TOP - 20, class_="mark"))
-            free = max(x, left + width) + 10
+        free = max(x, left + width) + 7 if left >= free else x + 7
     return tag("g", "".join(found), class_="marks")
 
 
@@ -315,8 +327,11 @@ def swatch(quantity: str, box: Box, words: str = "") -> str:
 
 def _strip(picture: Picture, axis: TimeAxis, top: float) -> str:
     """What paces, as one strip: the joint's name where it fits, else its number."""
-    parts = []
-    for run in visible(picture.pace, axis):
+    runs, parts = visible(picture.pace, axis), []
+    if len(runs) > MOST_BLOCKS:
+        parts.append(_merged(picture, axis, runs, top, 12.0))
+        runs = []
+    for run in runs:
         row, quantity = picture.labels[run.value]
         x, width = axis.x(run.start), axis.x(run.end) - axis.x(run.start)
         words = tag("title", esc(f"paced by {picture.pace_label(run.value)}"))
@@ -327,6 +342,17 @@ def _strip(picture: Picture, axis: TimeAxis, top: float) -> str:
             parts.append(tag("text", esc(text), x=x + width / 2, y=top + 9.5, class_="on"))
     label = tag("text", "paced by", x=LEFT - 6, y=top + 10, class_="edge")
     return tag("g", label + "".join(parts), class_="strip")
+
+
+def _merged(picture: Picture, axis: TimeAxis, runs: Sequence[Run], top: float, height: float) -> str:
+    """Very many blocks as one shape a quantity, too narrow for fillings and names."""
+    shapes: dict[str, list[str]] = {}
+    for run in runs:
+        quantity = picture.labels[run.value][1]
+        x, width = axis.x(run.start), axis.x(run.end) - axis.x(run.start)
+        box = f"M{number(x)} {number(top)}h{number(width)}v{number(height)}h-{number(width)}z"
+        shapes.setdefault(quantity, []).append(box)
+    return "".join(tag("path", d="".join(boxes), class_=_class(quantity)) for quantity, boxes in shapes.items())
 
 
 def _time_axis(axis: TimeAxis, y: float, top: float, bottom: float) -> str:

@@ -24,7 +24,8 @@ def savings_screen(task: Task, savings: Sequence[Saving]) -> Iterator[str]:
     rows = []
     for saving in savings:
         name = saving_name(task, saving)
-        rows.append([f"  {format_quantity(saving.change, 'ratio')} more", name, f"{format_value(saving.saved * 1e3)} ms"])
+        more, saved = format_quantity(saving.change, "ratio"), format_value(saving.saved * 1e3)
+        rows.append([f"  {more} more", name, f"{saved} ms"])
     yield from aligned(rows, (12, 60, 12), left=(0, 1))
 
 

@@ -19,7 +19,7 @@ __all__ = ["Blended", "Frame", "Scene", "arm_links", "arm_points", "scene_of"]
 
 MOST_POINTS = 800  # of the tool's path
 LEG_POINTS = 33  # of a programmed step that is no straight line
-BLEND_POINTS = 17
+BLEND_POINTS = 11
 MOST_BLENDS = 400
 MOST_LEGS = 2000
 

@@ -81,8 +81,12 @@ def headline(picture: Picture) -> str:
     """Title, verdict and cycle time."""
     audit, plan = picture.audit, picture.plan
     arm = picture.arm
-    carries = [f"arm {arm.name}", f"tool {arm.tool.name}"]
-    carries += [f"payload {arm.payload.name}"] if arm.payload is not None else []
+    tools: Sequence[str] = (arm.tool.name,)
+    payloads: Sequence[str] = () if arm.payload is None else (arm.payload.name,)
+    if plan is not None:
+        tools, payloads = plan.task.tools, plan.task.payloads
+    carries = [f"arm {arm.name}", f"tool{'s' * (len(tools) > 1)} {', '.join(tools)}"]
+    carries += [f"payload{'s' * (len(payloads) > 1)} {', '.join(payloads)}"] if payloads else []
     if plan is not None:
         task = plan.task
         carries += [f"pace {format_quantity(task.pace, 'ratio')}"] if task.pace != 1 else []

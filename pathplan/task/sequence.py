@@ -76,6 +76,7 @@ class Reader:
     _written: list[Table] = field(default_factory=list)  # where each step stands
     _files: dict[Path, _File] = field(default_factory=dict)
     _arms: dict[tuple[str, str | None], Arm] = field(default_factory=dict)
+    _full: bool = False
 
     def read(self, root: Table, file: Path, places: Places, caps: Caps, *, returns: bool) -> None:
         """All steps of a task file. `returns`: a way back to the start follows the last."""
@@ -94,6 +95,8 @@ class Reader:
 
     def _sequence(self, tables: Sequence[Table], around: _Around) -> None:
         for table in tables:
+            if self._full:
+                return  # what else is wrong would be said of a task that nobody can mean
             with self.problems.gather():
                 if table.has("include"):
                     self._include(table, around)
@@ -109,7 +112,8 @@ class Reader:
             if table.has(key):
                 raise table.error(key, f"{key} goes with repeat, which is missing")
         arm = carried(table, self.arm, self._arms)
-        if len(self.steps) >= MAX_STEPS:
+        self._full = len(self.steps) >= MAX_STEPS
+        if self._full:
             raise InputError.at(table.where, f"expected at most {MAX_STEPS} steps with all repeats, got more")
         where = table.where + around.words
         step = read_step(table, len(self.steps), where, around.places.carrying(arm), around.caps)
@@ -123,10 +127,10 @@ class Reader:
             raise table.error("repeat", f"repeats stand in one another more than {DEEPEST} deep")
         rounds = _rounds(table, around.places)
         if table.has("step"):
+            _only(table, (*_TOGETHER, "step"), "a step that repeats others takes only repeat, as and with beside them")
             tables = table.tables("step")
             if not tables:
                 raise table.error("step", "expected at least one step to repeat, got none")
-            table.finish()
         else:
             own = {key: value for key, value in table.data.items() if key not in _TOGETHER}
             tables = [Table(own, table.file, table.path, problems=self.problems)]
@@ -149,12 +153,9 @@ class Reader:
             raise table.error("repeat", f"{expected}, got {rounds} rounds that make {least} steps")
 
     def _include(self, table: Table, around: _Around) -> None:
-        for key in ("repeat", "as", "with", "step"):
-            if table.has(key):
-                raise table.error(key, "a step that includes a file takes only frame beside it")
+        _only(table, ("include", "frame"), "a step that includes a file takes only frame beside it")
         name = table.text("include")
         tie = around.places.tie(table.text("frame", "base"), table.at("frame"))
-        table.finish()
         path = around.folder / name
         resolved = _resolved(path)
         if resolved in around.files:
@@ -245,6 +246,13 @@ class Reader:
             if getattr(following, what) != getattr(step, what):
                 return f"the {what} changes at {shown}, so this step ends at a stop point"
         return ""
+
+
+def _only(table: Table, keys: Sequence[str], complaint: str) -> None:
+    for key in table.data:
+        if key not in keys:
+            hint = nearest(key, keys)
+            raise table.error(key, f"unknown key{hint}" if hint else complaint)
 
 
 def carried(table: Table, arm: Arm, made: dict[tuple[str, str | None], Arm]) -> Arm:

@@ -136,7 +136,10 @@ class _Fit:
         from scipy.linalg import solveh_banded
 
         matrix = self.near + 10.0**strength * self.scale * self.bend
-        return np.asarray(solveh_banded(matrix, self.right, check_finite=False)) + self.centre
+        try:
+            return np.asarray(solveh_banded(matrix, self.right, check_finite=False)) + self.centre
+        except np.linalg.LinAlgError:  # one point metres away from all others, say
+            raise InputError("the points lie too unevenly to be smoothed: is one of them far off?") from None
 
     def values(self, strength: float) -> Array:
         return np.asarray(self.basis @ self.coefficients(strength))

@@ -269,7 +269,7 @@ def _add_torque(rows: Array, state: _State, gradient: Array, matrix: Array, m: A
 
 def apply_torque(rows: Array, b: Array) -> Array:
     """Torque (Q, K, cells) in shares of the limit for b, b_u, b_uu (3, K, cells)."""
-    total: Array = rows[0] * b[0] + rows[1] * b[1] + rows[2] * np.sqrt(b[0]) + rows[3]
+    total: Array = rows[0] * b[0] + rows[1] * b[1] + rows[2] * np.sqrt(np.maximum(b[0], 0.0)) + rows[3]
     return total
 
 
@@ -302,7 +302,7 @@ def limit_shares(rows: Rows, b: Array) -> Shares:
     """Shares used for b, b_u, b_uu (3, K, cells)."""
     acceleration, jerk = apply_rows(rows, b)
     acceleration = np.maximum(acceleration / rows.acceleration_range[0], acceleration / rows.acceleration_range[1])
-    jerk = np.maximum(jerk / rows.jerk_range[0], jerk / rows.jerk_range[1]) * np.sqrt(b[0])
+    jerk = np.maximum(jerk / rows.jerk_range[0], jerk / rows.jerk_range[1]) * np.sqrt(np.maximum(b[0], 0.0))
     tool = np.zeros_like(b[0])
     if rows.tool is not None:
         tool = np.sqrt(((rows.tool[0] * b[0] + rows.tool[1] * b[1]) ** 2).sum(axis=0))

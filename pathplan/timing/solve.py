@@ -27,6 +27,7 @@ Array = NDArray[np.float64]
 _LOSS = 2e-3  # a stretch is refined while more than this share of its time leaves every limit unused
 _ROUNDS = 8
 _SPLIT_SHARE = 0.85  # the cells that together hold this share of the loss are halved
+_LEAST_DIP = 0.1  # of its neighbours, that a new node between them is above zero
 _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
 _COARSE_GAP, _FINAL_GAP = 5e-4, 2e-4
 _TIGHTENINGS = 5
@@ -96,7 +97,8 @@ def _where_to_split(problem: FineProblem, x: Array) -> tuple[list[NDArray[np.boo
     """For every stretch which cells to halve, and which stretches are good enough already."""
     u = (np.arange(6) + 0.5) / 6
     rows = joined([rows_at(mesh, u) for mesh in problem.meshes])
-    used = limit_shares(rows, problem.evaluate(x, hermite(u))).largest()
+    b = problem.evaluate(x, hermite(u))
+    used = np.where(b[0] > 0, limit_shares(rows, b).largest(), np.inf)  # the spline may dip below zero between points
     loss = problem.width * (1.0 - np.minimum(used, 1.0)).mean(axis=0) / problem.duration[problem.cell_owner]
     over = used.max(axis=0) > 1.0 + _OVERSTEP
     borders = np.cumsum(problem.cells)[:-1]
@@ -123,8 +125,14 @@ def _halved(mesh: Mesh, x: Array, split: NDArray[np.bool_]) -> tuple[Mesh, Array
     ratio = mesh.width[split] / mesh.unit
     corner[1::2] *= ratio
     value, slope, _ = hermite(np.array([0.5]))[:, 0] @ corner
-    middle = np.stack([value, slope / ratio], axis=1)
-    return refined(mesh, split), np.insert(nodes, np.flatnonzero(split) + 1, middle, axis=0).ravel()
+    middle = np.stack([np.maximum(value, _LEAST_DIP * np.minimum(corner[0], corner[2])), slope / ratio], axis=1)
+    nodes = np.insert(nodes, np.flatnonzero(split) + 1, middle, axis=0)
+    finer = refined(mesh, split)
+    # a slope of at most 3 b over the width of either cell keeps a cubic Hermite spline above zero
+    widest = np.maximum(np.append(finer.width, 0.0), np.insert(finer.width, 0, 0.0)) / mesh.unit
+    if np.any(value <= 0):
+        nodes[:, 1] = np.clip(nodes[:, 1], -2.9 * nodes[:, 0] / widest, 2.9 * nodes[:, 0] / widest)
+    return finer, nodes.ravel()
 
 
 def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
@@ -146,8 +154,8 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
         problem = FineProblem(meshes, problem.rows.tightened(*factors))
         x = problem.slowed(x, 0.999, only_down=True)
         start = 3.0 * _FINAL_GAP
-    if not np.all(np.isfinite(worst)):
-        raise PathplanError("timing: the limits could not be evaluated along the path (not a number)")
+    if not (np.all(np.isfinite(worst)) and problem.evaluate(x, basis)[0].min() > 0):
+        raise PathplanError("timing: the speeds along the path differ too much to be resolved")
     factor = (1.0 - _MARGIN) / worst
     if checked.torque is not None:  # torque may be at its limit where the others are not: no speeding up
         factor = np.minimum(factor, 1.0)

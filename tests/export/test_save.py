@@ -2,6 +2,7 @@
 
 import errno
 import os
+import signal
 import subprocess
 import sys
 from pathlib import Path
@@ -13,7 +14,7 @@ import pathplan.export.save
 from pathplan.errors import InputError, PathplanError
 from pathplan.export import read_table, write_table
 from pathplan.export.save import batched, saving
-from tests.kills import environment, kill_writer
+from tests.kills import environment, kill_writer, stop_plan
 
 SUFFIXES = (".csv", ".jsonl", ".npz", ".parquet")
 
@@ -298,3 +299,8 @@ def test_saving_is_all_or_nothing(tmp_path):
         stream.write(b"second")
         raise ZeroDivisionError
     assert file.read_bytes() == b"first" and list(tmp_path.iterdir()) == [file]
+
+
+@pytest.mark.parametrize("how", [signal.SIGKILL, signal.SIGINT])
+def test_a_command_stopped_at_any_instant_leaves_one_plan_or_the_other(tmp_path, how):
+    stop_plan(tmp_path, np.random.default_rng(), how)

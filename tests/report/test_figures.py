@@ -106,7 +106,7 @@ def test_a_title_is_no_formula(pick, tmp_path):
     [
         (lambda plan: figures.draw("speed", plan), "kind: expected one of joints, position, "),
         (lambda plan: figures.velocity(plan.table), "arm: a table is drawn with the arm that it belongs to, got none"),
-        (lambda plan: figures.arm(plan, time=99.0), "time: expected 0 to 6"),
+        (lambda plan: figures.arm(plan, time=99.0), "time: expected 0 to "),
         (lambda plan: figures.save(figures.tool(plan), "x.gif"), "x.gif: unknown kind of figure: expected .png or"),
     ],
 )

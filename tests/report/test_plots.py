@@ -150,8 +150,22 @@ def test_marks_that_would_overlap_keep_their_line(picture):
     marks = tuple(Mark(f"mark number {k}", 1.0 + 0.01 * k, 250, 1) for k in range(5))
     root = ET.fromstring(lane_plot(replace(picture, marks=marks), "plot", "v", quantity_lanes(picture, "velocity")))
     (group,) = [item for item in root.iter("g") if item.get("class") == "marks"]
-    assert len([item for item in group.iter("text")]) == 1
+    assert {item.text for item in group.iter("text")} == {"mark number 0", "mark number 4"}  # to the left and right
     assert {item.text for item in group.iter("title")} == {mark.name for mark in marks}
+
+
+def test_very_many_marks_and_blocks_become_one_shape_each(picture):
+    marks = tuple(Mark(f"mark {k}", 0.05 * k, k, 1) for k in range(100))
+    pace = tuple(Run(k, k, 0.01 * k, 0.01 * (k + 1), k % 6) for k in range(600))
+    many = replace(picture, marks=marks, pace=pace)
+    for svg in (pace_plot(many, "pace", "p"), lane_plot(many, "plot", "v", quantity_lanes(many, "velocity"))):
+        (group,) = [item for item in ET.fromstring(svg).iter("g") if item.get("class") == "marks"]
+        (ticks_of_marks,) = list(group)
+        assert ticks_of_marks.get("d").count("M") == 100
+    merged = [
+        item for item in ET.fromstring(pace_plot(many, "pace", "p")).iter("path") if item.get("class") == "q-velocity"
+    ]
+    assert sum(item.get("d").count("M") for item in merged) == 600 and len(merged) == 6
 
 
 def test_what_is_too_narrow_is_joined():

@@ -43,7 +43,8 @@ def test_what_breaks_limits_is_marked_and_told(table):
     assert lines[0] == "Stack tiles, test arm: BREAKS LIMITS (1 exceedance)"
     (swing,) = [line for line in lines if line.startswith("swing ")]
     assert "100.1 %!" in swing  # never rounded to a value that looks kept
-    assert any(line.startswith("! swing: velocity 114.5918 deg/s at 1.2 s (row 301) in step 1 exceeds") for line in lines)
+    exceeded = "! swing: velocity 114.5918 deg/s at 1.2 s (row 301) in step 1 exceeds"
+    assert any(line.startswith(exceeded) for line in lines)
     beyond = lines_of(audit(move_table([0.55, 0, 0], [0.4, 0.1, 0.1], 3.0), made_arm()))
     (lift,) = [line for line in beyond if line.startswith("lift ")]
     assert "110.0 %!" in lift and "-50 mm" in lift

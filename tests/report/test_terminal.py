@@ -6,6 +6,7 @@ import pytest
 
 from pathplan.report.plan_screen import plan_screen
 from pathplan.report.terminal import BAR, NAME, STRIP, signs_for, terminal_picture
+from pathplan.report.text import clock
 
 
 class Terminal(io.StringIO):
@@ -53,7 +54,7 @@ def lines(pick):
 def test_a_line_a_joint(pick, lines):
     assert list(lines)[1:] == [*pick.arm.joint_names, "tool"]
     assert max(map(len, lines.values())) <= 100
-    assert lines[""].endswith("sets the pace along 6.06 s")
+    assert lines[""].endswith(f"sets the pace along {clock(pick.duration)}")
 
 
 def test_bars_are_as_long_as_the_shares(pick, lines):

@@ -133,16 +133,45 @@ class View {
     pen.lineCap = pen.lineJoin = "round";
     const ink = (name) => this.ink(name);
     const place = this.projection(width, height);
-    this.floor(pen, place, ink);
-    this.lines(pen, place, this.scene.programmed, ink("muted"), 1, [4, 4]);
-    this.lines(pen, place, [this.scene.path], ink("way"), 2);
-    this.lines(pen, place, this.scene.blends, ink("blend"), 4);
+    const [below, above] = this.layers(width, height, dense, place, ink);
+    pen.drawImage(below, 0, 0, width, height);
+    const fallen = ([x, y]) => [x, y, 0];
+    this.lines(pen, place, this.pose.links.map(([a, b]) => [fallen(a), fallen(b)]), ink("shadow"), 7);
     this.body(pen, place, ink, Math.min(width, height));
-    pen.globalAlpha = 0.35; // what lies behind the arm shows through
-    this.lines(pen, place, [this.scene.path], ink("way"), 2);
-    pen.globalAlpha = 1;
-    if (this.labels.checked) this.words(pen, place, ink);
+    pen.drawImage(above, 0, 0, width, height);
+    if (this.labels.checked) {
+      for (const { name, joint, pose } of this.scene.frames) {
+        if (joint >= 0) this.triad(pen, place, times(this.pose.frames[joint], pose), 0.09, ink("muted"), name);
+      }
+    }
     this.triad(pen, place, this.pose.tool, 0.12, ink("ink"), "");
+  }
+
+  // What does not move with the arm, drawn once for each view: what lies below it, and what shows through from above.
+  layers(width, height, dense, place, ink) {
+    const { azimuth, elevation, zoom, x, y } = this.state;
+    const key = [width, height, dense, azimuth, elevation, zoom, x, y, this.labels.checked].join();
+    if (this.drawn && this.drawn.key === key && this.drawn.scene === this.scene && this.inks.size) return this.drawn.layers;
+    const layers = [0, 1].map(() => {
+      const layer = document.createElement("canvas");
+      layer.width = Math.round(width * dense);
+      layer.height = Math.round(height * dense);
+      const pen = layer.getContext("2d");
+      pen.setTransform(dense, 0, 0, dense, 0, 0);
+      pen.lineCap = pen.lineJoin = "round";
+      return layer;
+    });
+    const [below, above] = layers.map((layer) => layer.getContext("2d"));
+    this.floor(below, place, ink);
+    this.lines(below, place, this.scene.programmed, ink("muted"), 1, [4, 4]);
+    this.lines(below, place, [this.scene.path], ink("way"), 2);
+    this.lines(below, place, this.scene.blends, ink("blend"), 4);
+    above.globalAlpha = 0.35; // what lies behind the arm shows through
+    this.lines(above, place, [this.scene.path], ink("way"), 2);
+    above.globalAlpha = 1;
+    if (this.labels.checked) this.words(above, place, ink);
+    this.drawn = { key, scene: this.scene, layers };
+    return layers;
   }
 
   // A colour of the page by its name, looked up once for each theme.
@@ -178,8 +207,6 @@ class View {
       lines.push([[x0, y0 + k * step, 0], [x0 + count * step, y0 + k * step, 0]]);
     }
     this.lines(pen, place, lines, ink("floor"), 1);
-    const fallen = ([x, y]) => [x, y, 0];
-    this.lines(pen, place, this.pose.links.map(([a, b]) => [fallen(a), fallen(b)]), ink("shadow"), 7);
   }
 
   // Links, rails and joints, the far ones first.
@@ -269,17 +296,21 @@ class View {
     if (name) pen.fillText(name, start[0] + 6, start[1] + 14);
   }
 
+  // Frames that rest, and where the steps end: their numbers as far as they do not cover one another.
   words(pen, place, ink) {
     for (const { name, joint, pose } of this.scene.frames) {
-      this.triad(pen, place, joint < 0 ? pose : times(this.pose.frames[joint], pose), 0.09, ink("muted"), name);
+      if (joint < 0) this.triad(pen, place, pose, 0.09, ink("muted"), name);
     }
     pen.fillStyle = ink("ink");
     pen.font = "bold 12px system-ui, sans-serif";
+    const taken = [];
     for (const [step, point] of this.scene.ends) {
       const [x, y] = place(point);
       pen.beginPath();
       pen.arc(x, y, 2.8, 0, 2 * Math.PI);
       pen.fill();
+      if (taken.some(([a, b]) => Math.abs(a - x) < 20 && Math.abs(b - y) < 11)) continue;
+      taken.push([x, y]);
       pen.fillText(String(step + 1), x + 5, y - 5);
     }
   }
