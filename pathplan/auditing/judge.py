@@ -361,6 +361,8 @@ class _Judge:
             text = f"the table states no cycle: {self.cycle * 1e3:.6g} ms found from its times"
             yield Finding("note", text)
         yield from self.notes
+        for text in self.arm.warnings:
+            yield Finding("warning", f"arm {self.arm.name}: {text}")
         yield from jump_notes(drives)
         if self.plan is not None:
             for note in self.plan.path.findings:
