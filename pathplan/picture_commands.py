@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:
+    from pathplan.auditing import Audit
     from pathplan.planning import Plan
     from pathplan.report.gather import Picture
     from pathplan.report.judged import Judged
@@ -206,7 +207,7 @@ def _picture(
         if judged.arm is None:
             raise InputError(judged.notes[0])
         check(judged.table.meta)
-        return picture_of_table(judged.table, judged.arm, judged.audit, buckets=buckets), judged.breaks
+        return picture_of_table(judged.table, judged.arm, _noted(judged), buckets=buckets), judged.breaks
     import pathplan
     from pathplan.report.gather import picture_of
     from pathplan.report.judged import first_exceedance
@@ -218,6 +219,18 @@ def _picture(
     tell("audit", 0, 1)
     picture = picture_of(plan, buckets=buckets)
     return picture, "" if plan.audit.passed else first_exceedance(plan.audit)
+
+
+def _noted(judged: Judged) -> Audit | None:
+    """The audit of a table with what should be known of how it was judged among its findings."""
+    from dataclasses import replace
+
+    from pathplan.auditing import Finding
+
+    if judged.audit is None:
+        return None
+    notes = tuple(Finding("warning", note) for note in judged.notes)
+    return replace(judged.audit, findings=(*judged.audit.findings, *notes))
 
 
 def _tell(shell: Shell, args: argparse.Namespace, picture: Picture, breaks: str, files: list[Path]) -> int:

@@ -87,6 +87,14 @@ def test_options_name_columns_and_units(plan, folder, run):
 NOTHING_ELSE = dict.fromkeys(("velocity", "acceleration", "jerk", "torque", "pose", "tool_speed"))
 
 
+@pytest.mark.parametrize(("suffix", "separator"), [(".txt", " "), (".tsv", "\t"), (".CSV", ",")])
+def test_other_names_of_text_files(plan, folder, run, suffix, separator):
+    logged(plan).to_csv(f"log{suffix}", index=False, sep=separator)
+    assert run("audit", f"log{suffix}", "--arm", "loader4.toml", "--quiet") == (0, "", [])
+    line = f"gone{suffix}: there is no such file"
+    assert run("audit", f"gone{suffix}", "--arm", "loader4.toml") == (2, "", [f"pathplan: {line}"])
+
+
 def test_every_fault_is_named_with_row_and_joint(plan, folder, run):
     table = logged(plan)
     table.loc[40:, "y_mm"] += 30.0  # a jump

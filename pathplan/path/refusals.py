@@ -137,7 +137,7 @@ def _starts_elsewhere(arm: Arm, step: Step, q: Array) -> UnreachableError:
     j = int(np.argmax(np.abs(best - start) * joint_weights(arm)))
     joint = arm.joints[j]
     there, here = (format_quantity(float(v), joint_dimension(joint.kind, "position")) for v in (start[j], best[j]))
-    text = f'the taught path starts with joint {joint.name} at {there}, the arm is at {here}: expected a step to '
+    text = f"the taught path starts with joint {joint.name} at {there}, the arm is at {here}: expected a step to "
     text += f'"{step.taught.name}.start" before it' if step.taught.name else "its first point before it"
     data = {"step": step.index, "joint": joint.name, "best": best, "start": start}
     return UnreachableError(f"{step.where}: {text}", data=data)

@@ -7,7 +7,7 @@ be seen (`pathplan.report.thinning`); the rows that a reader steps through are k
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -326,8 +326,3 @@ class _Gathering:
             kept_pace=joined["pace"],
             kept={key: np.concatenate(parts) for key, parts in self.kept.items()},
         )
-
-
-def runs_within(runs: tuple[Run, ...], width: float) -> Iterator[Run]:
-    """Runs of at least `width` seconds: narrower ones can't be seen."""
-    return (run for run in runs if run.end - run.start >= width)

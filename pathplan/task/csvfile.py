@@ -111,9 +111,7 @@ def _counts(line: str) -> bool:
     return bool(line.strip()) and not line.lstrip().startswith("#")
 
 
-def _columns(
-    line: str, name: str, dimensions: Mapping[str, str], required: Sequence[str]
-) -> list[tuple[str, float]]:
+def _columns(line: str, name: str, dimensions: Mapping[str, str], required: Sequence[str]) -> list[tuple[str, float]]:
     """Columns as written with the size of their unit in SI; all of `required` among them."""
     written = [cell.strip().strip('"') for cell in line.split(",")]
     if len(written) > _MOST_COLUMNS:

@@ -222,6 +222,9 @@ def _offset(splines: _Splines, offset: tuple[Array, Array]) -> _Splines:
 def _along_tangents(tangent: Array, normal: Array, where: str) -> Array:
     """(m, 3, 3) rotations with x along tangents (m, 3) as far as that is square to the normal, z against the normal."""
     size = np.linalg.norm(tangent, axis=1, keepdims=True)
+    still = np.flatnonzero(size[:, 0] <= 1e-6 * size.max())
+    if len(still):
+        raise InputError(f"{where}: the path turns back on itself at point {still[0] + 1}")
     x = tangent - (tangent @ normal)[:, None] * normal
     across = np.linalg.norm(x, axis=1, keepdims=True)
     steep = np.flatnonzero(across[:, 0] <= _STEEP * size[:, 0])
@@ -246,11 +249,7 @@ def _points(table: Table, folder: Path, dimensions: Mapping[str, str], required:
 
 def _given_orientations(points: PointList) -> Array | None:
     """(m, 3, 3) of the orientation columns; None without any."""
-    found = [
-        names
-        for names in (ANGLE_COLUMNS, QUATERNION_COLUMNS)
-        if any(name in points.columns for name in names)
-    ]
+    found = [names for names in (ANGLE_COLUMNS, QUATERNION_COLUMNS) if any(name in points.columns for name in names)]
     if not found:
         return None
     if len(found) > 1:

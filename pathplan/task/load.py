@@ -132,9 +132,7 @@ def _start(root: Table, arm: Arm, places: Places) -> Array:
         return joint_vector(root, "start", arm)
     target = places.named(value, root.at("start"))
     if target.joints is None:
-        raise root.error(
-            "start", f"{toml_text(value)} is a tool pose, expected joint positions or their name"
-        )
+        raise root.error("start", f"{toml_text(value)} is a tool pose, expected joint positions or their name")
     check_positions(target.joints, arm, root.at("start"))
     return target.joints
 

@@ -26,9 +26,7 @@ class Frame:
     name: str
     parent: str
     parent_from_frame: Array  # (4, 4)
-    joint: str | None = (
-        None  # carried by this joint (a turntable): the parent is then that joint's moving frame
-    )
+    joint: str | None = None  # carried by this joint (a turntable): the parent is then that joint's moving frame
 
 
 @dataclass(frozen=True)
@@ -109,17 +107,13 @@ class Step:
     centre: Array | None = None  # (3,) in the base frame
     axis: Array | None = None  # (3,) unit, in the base frame
     angle: float | None = None  # rad, signed, about axis
-    along: bool = (
-        False  # centre-and-angle arc: the tool turns with the arc (True) or keeps its orientation (False)
-    )
+    along: bool = False  # centre-and-angle arc: the tool turns with the arc (True) or keeps its orientation (False)
     blend: Blend | None = None  # corner at the end of this step; None: stop point
     speed: float | None = None  # tool-speed cap, m/s: the lower of the step's own and the task's
     acceleration: float | None = None  # tool-acceleration cap, m/s^2, likewise
     wait: float = 0.0  # s, motion == "wait"
     mark: str | None = None  # named instant: when this step ends
-    configuration: Mapping[str, str] = field(
-        default_factory=dict
-    )  # {"elbow": "up"}: asked at this step's target
+    configuration: Mapping[str, str] = field(default_factory=dict)  # {"elbow": "up"}: asked at this step's target
     tool: str = ""  # carried during this step and on; "none" is the bare mechanical interface
     payload: str | None = None
     curve: Curve | None = None  # motion == "curve"; the target is where it ends

@@ -1,14 +1,14 @@
 """Patterns: the same pose at many places, in rows, layers and stacks.
 
-    [patterns.NAME]
-        frame           in which the first place is given, and along whose axes the others lie; default "base"
-        xyz, rpy or quat    tool pose at the first place
-        count           places in up to three directions: [3, 4, 5], or 6 in one
-        pitch           what lies between two: [310, 210, 9] along x, y and z of the frame, or a vector for a
-                        direction, [[310, 0, 0], [0, 210, 0], [0, 0, 9]]; 310 or [310, 0, 0] for one direction
-        order           "rows": the first direction runs fastest, always the same way; "serpentine": there and back
-        reverse         true: the last place comes first, as for taking a stack down
-        skip            places left out, counted from 1: [[1, 2, 3], [3, 4, 5]], or [2, 5] in one direction
+[patterns.NAME]
+    frame           in which the first place is given, and along whose axes the others lie; default "base"
+    xyz, rpy or quat    tool pose at the first place
+    count           places in up to three directions: [3, 4, 5], or 6 in one
+    pitch           what lies between two: [310, 210, 9] along x, y and z of the frame, or a vector for a
+                    direction, [[310, 0, 0], [0, 210, 0], [0, 0, 9]]; 310 or [310, 0, 0] for one direction
+    order           "rows": the first direction runs fastest, always the same way; "serpentine": there and back
+    reverse         true: the last place comes first, as for taking a stack down
+    skip            places left out, counted from 1: [[1, 2, 3], [3, 4, 5]], or [2, 5] in one direction
 """
 
 from __future__ import annotations

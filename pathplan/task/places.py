@@ -320,7 +320,7 @@ def resolve_frames(
             chain[name] = None
             name = frames[name].parent
         for name in reversed(chain):
-            root, root_from_parent = (resolved.get(frames[name].parent) or roots[frames[name].parent])
+            root, root_from_parent = resolved.get(frames[name].parent) or roots[frames[name].parent]
             resolved[name] = root, root_from_parent @ frames[name].parent_from_frame
     return resolved
 

@@ -1,21 +1,21 @@
 """The steps of a task in the order in which they are carried out: repeats unrolled, included files read, tools changed.
 
-    [[step]]            a step that repeats others, or itself:
-        repeat          the name of a pattern: once at each of its places, in order, where its name is the pose there
-                        and, as a frame, the axes of the pattern's frame moved to that place; or a list of names of
-                        poses, with `as`; or a number of times
-        as              the name that means each of the poses of such a list in turn, as a pose and as a frame
-        with            further patterns (one name or several) of as many places, which go along place by place
-    [[step.step]]       the steps that are repeated, if not the step itself; they may repeat others in turn
+[[step]]            a step that repeats others, or itself:
+    repeat          the name of a pattern: once at each of its places, in order, where its name is the pose there
+                    and, as a frame, the axes of the pattern's frame moved to that place; or a list of names of
+                    poses, with `as`; or a number of times
+    as              the name that means each of the poses of such a list in turn, as a pose and as a frame
+    with            further patterns (one name or several) of as many places, which go along place by place
+[[step.step]]       the steps that are repeated, if not the step itself; they may repeat others in turn
 
-    [[step]]            a step that stands for the steps of another task file:
-        include         the file, relative to this one. Its frames, poses, patterns and curves are its own; its speed
-                        and acceleration cap its steps too. Its arm, tool and payload, where it names them, must be
-                        those that are carried here; cycle, start and return are for when it is planned by itself
-        frame           where its base frame comes to lie, default "base"; joint positions stay as they are
+[[step]]            a step that stands for the steps of another task file:
+    include         the file, relative to this one. Its frames, poses, patterns and curves are its own; its speed
+                    and acceleration cap its steps too. Its arm, tool and payload, where it names them, must be
+                    those that are carried here; cycle, start and return are for when it is planned by itself
+    frame           where its base frame comes to lie, default "base"; joint positions stay as they are
 
-    In any other step:
-        tool, payload   names of the arm's, or "none": carried from this step on; the arm stops before it
+In any other step:
+    tool, payload   names of the arm's, or "none": carried from this step on; the arm stops before it
 """
 
 from __future__ import annotations
@@ -342,9 +342,7 @@ def _least(table: Table, places: Places) -> int:
     inner = table.data.get("step")
     steps = 1
     if isinstance(inner, list) and value is not None:
-        steps = sum(
-            _least(Table(row, table.file), places) for row in inner[:MAX_STEPS] if isinstance(row, dict)
-        )
+        steps = sum(_least(Table(row, table.file), places) for row in inner[:MAX_STEPS] if isinstance(row, dict))
     if type(value) is int:
         return max(value, 1) * steps
     if isinstance(value, list):

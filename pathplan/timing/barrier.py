@@ -56,12 +56,14 @@ def follow_central_path(
     final: Array,
     factor: float = 0.2,
     centred: float = 0.3,
+    last: float | None = None,
     iterations: int = 300,
 ) -> tuple[Array, int]:
     """Newton steps from the strictly feasible x while mu (S,) falls from `start` to `final` by `factor`.
 
-    A problem's mu falls as soon as its squared Newton decrement is below `centred` x mu. Returns the unknowns and
-    the number of Newton steps taken. Raises PathplanError when the steps run out: no unfinished answer is returned.
+    A problem's mu falls as soon as its squared Newton decrement is below `centred` x mu; at the final mu it must be
+    below `last` x mu (default: `centred`), which multipliers need more than unknowns do. Returns the unknowns and the
+    number of Newton steps taken. Raises PathplanError when the steps run out: no unfinished answer is returned.
     """
     mu = np.maximum(start, final)
     done = np.zeros(problem.count, dtype=bool)
@@ -85,8 +87,8 @@ def follow_central_path(
             moved, trial = x, state
             done |= short
         x, state = moved, trial
-        small = decrement < centred * mu
         finished = mu <= final
+        small = decrement < np.where(finished, centred if last is None else last, centred) * mu
         done |= small & finished
         if done.all():
             return x, iteration + 1

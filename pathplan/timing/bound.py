@@ -115,7 +115,7 @@ def bound_durations(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | 
     problem = _Weak(meshes)
     start = problem.feasible_start()
     weight = problem.durations(start) / problem.gap
-    b, _ = follow_central_path(problem, start, start=0.1 * weight, final=_GAP * weight, factor=0.15, centred=0.01)
+    b, _ = follow_central_path(problem, start, start=0.1 * weight, final=_GAP * weight, factor=0.15, last=1e-6)
     multipliers = problem.multipliers(b, _GAP * weight)
     return np.array([_best_bound(mesh, *m) for mesh, m in zip(meshes, multipliers, strict=True)])
 

@@ -11,8 +11,10 @@ import time
 
 import pytest
 
+import pathplan
 from pathplan.errors import InputError
 from pathplan.report.live import LivePage
+from pathplan.report.watching import Watching
 from tests.report.conftest import ROOT
 
 
@@ -96,6 +98,17 @@ def test_what_there_is(page):
     news = json.loads(body)
     assert status == 200 and headers["Content-Type"] == "application/json"
     assert news["data"]["rows"] > 100 and news["trouble"] == ""
+
+
+def test_a_task_that_is_broken_from_the_start(across):
+    across.write_text("[[[")
+    watching = Watching(across, lambda: pathplan.plan(pathplan.load_task(across)))
+    watching.look()
+    with LivePage(watching, port=0) as page:
+        _, _, body = ask(page)
+        news = json.loads(ask(page, "/state?seen=0")[2])
+    assert '<main id="sections" hidden>' in body and 'role="alert">across.toml: line 1: not TOML' in body
+    assert news["trouble"].startswith("across.toml: line 1: not TOML") and "sections" not in news
 
 
 def test_news_wait_until_there_are_some(page, watching, across):

@@ -42,6 +42,16 @@ def test_report_of_a_table(run, tmp_path):
     assert "Limit audit" in (tmp_path / "table.html").read_text(encoding="utf-8")
 
 
+def test_a_table_whose_arm_has_changed(run, tmp_path):
+    assert run("plan", "across.toml", "--quiet")[0] == 0
+    with open(tmp_path / "loader4.toml", "a") as arm:
+        arm.write("\n# touched\n")
+    assert run("report", "across.csv", "-o", "table.html", "--quiet")[0] == 0
+    assert "loader4.toml has changed since the table was planned" in (tmp_path / "table.html").read_text(
+        encoding="utf-8"
+    )
+
+
 def test_nothing_else_is_overwritten(run, tmp_path):
     other = tmp_path / "other.html"
     other.write_text("mine")

@@ -361,11 +361,7 @@ def test_a_long_cycle_of_frames_is_cut_short(load, text):
 
 def test_several_problems_are_listed(load, text):
     with pytest.raises(InputError) as caught:
-        load(
-            text.replace("speed = 250", "speed = 0")
-            .replace('"20 mm"', "-5")
-            .replace('to = "parked"', 'to = "p"')
-        )
+        load(text.replace("speed = 250", "speed = 0").replace('"20 mm"', "-5").replace('to = "parked"', 'to = "p"'))
     assert caught.value.problems == (
         'pick.toml: step[2].speed: expected a speed such as "250 mm/s", got 0',
         'pick.toml: step[4].blend: expected a length such as "20 mm", got -5',

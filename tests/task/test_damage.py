@@ -51,7 +51,8 @@ PIECES = [
 ]
 KEYS = (
     "title arm cycle tool payload start return speed acceleration frames poses step parent xyz rpy quat "
-    "joints frame motion to offset via centre axis angle tool_along blend configuration mark wait name"
+    "joints frame motion to offset via centre axis angle tool_along blend configuration mark wait name "
+    "repeat as with include along patterns curves taught count pitch order skip points"
 ).split()
 
 
@@ -72,9 +73,7 @@ def outcome(load, text):
     return task
 
 
-any_load = settings(
-    suppress_health_check=[HealthCheck.function_scoped_fixture], deadline=None, max_examples=150
-)
+any_load = settings(suppress_health_check=[HealthCheck.function_scoped_fixture], deadline=None, max_examples=150)
 
 
 @any_load

@@ -55,12 +55,8 @@ def test_nested_frames_in_the_base_frame(task):
 
 
 def test_frames_nest_as_deep_as_one_likes(load, text):
-    nest = "".join(
-        f'[frames.f{k}]\nparent = "{f"f{k - 1}" if k else "car"}"\nxyz = [0.1, 0, 0]\n' for k in range(3000)
-    )
-    task = load(
-        text.replace("[poses.belt]", nest + "[poses.belt]").replace('frame = "car"', 'frame = "f2999"')
-    )
+    nest = "".join(f'[frames.f{k}]\nparent = "{f"f{k - 1}" if k else "car"}"\nxyz = [0.1, 0, 0]\n' for k in range(3000))
+    task = load(text.replace("[poses.belt]", nest + "[poses.belt]").replace('frame = "car"', 'frame = "f2999"'))
     assert task.base_from_frame("f2999") == close(CAR * SE3(0.3, 0, 0), 1e-9)
     assert task.pose(task.steps[4].target) == close(CAR * SE3(0.3, 0, 0) * CAR.inv() * SHELF, 1e-9)
 
@@ -74,9 +70,7 @@ def test_offsets_run_along_the_axes_of_the_frame_or_of_the_tool(task):
 
 
 def test_an_offset_may_turn_the_tool_about_its_own_axes(load, text):
-    task = load(
-        text.replace("{ tool = [0, 0, -80] }", "{ frame = [1, 2, 3], tool = [0, 0, -80], rpy = [0, 20, 0] }")
-    )
+    task = load(text.replace("{ tool = [0, 0, -80] }", "{ frame = [1, 2, 3], tool = [0, 0, -80], rpy = [0, 20, 0] }"))
     expected = CELL * SE3(1e-3, -0.198, 3e-3) * SE3.Rx(180, "deg") * SE3(0, 0, -0.08) * SE3.Ry(20, "deg")
     assert task.pose(task.steps[3].target) == close(expected)
 
@@ -149,9 +143,7 @@ def test_the_way_back_to_the_start(load, text, written, motion):
 
 
 def test_a_line_to_a_joint_vector_knows_joints_and_pose(load, text):
-    task = load(
-        text.replace('[[step]]\nmotion = "joint"\nto = "parked"', '[[step]]\nmotion = "line"\nto = "parked"')
-    )
+    task = load(text.replace('[[step]]\nmotion = "joint"\nto = "parked"', '[[step]]\nmotion = "line"\nto = "parked"'))
     target = task.steps[6].target
     assert target.joints == close(np.deg2rad([10, -30, 60, 0, 60, 0]))
     assert task.pose(target) == close(task.arm.forward(target.joints))

@@ -130,7 +130,7 @@ def test_a_pose_that_cannot_be_held_is_refused(task):
     with pytest.raises(pathplan.LimitError) as caught:
         pathplan.plan(weak(task, 0.2))
     assert str(caught.value) == (
-        "glazer6-pick-and-place.toml: step[1]: joint elbow needs 34.55 N m just to hold the pose on this step, "
+        "glazer6-pick-and-place.toml: step[1]: joint elbow needs 28.43 N m just to hold the pose on this step, "
         "and its peak torque is 28 N m"
     )
     assert caught.value.data["joint"] == "elbow" and caught.value.data["step"] == 0

@@ -9,6 +9,7 @@ from pathlib import Path
 from pathplan.errors import InputError
 from pathplan.export.csv_file import BYTE_ORDER_MARK, TITLE
 from pathplan.export.foreign.source import SUFFIXES
+from pathplan.export.kinds import kinds
 from pathplan.export.parquet_file import opened, own_header
 
 __all__ = ["is_own"]
@@ -17,10 +18,11 @@ __all__ = ["is_own"]
 def is_own(file: Path) -> bool:
     """Whether it is to be read by `read_table`: by its first line, its header array, its metadata or its kind.
 
-    A file that can't be read counts as one, since `read_table` tells what is wrong with it. Raises InputError where
-    pyarrow is needed and not installed.
+    A file that can't be read counts as one, since `read_table` tells what is wrong with it.
     """
     suffix = file.suffix.lower()
+    if suffix not in kinds():
+        return False
     if suffix not in SUFFIXES or not file.is_file():
         return True
     try:
