@@ -17,6 +17,7 @@ on poses of the arm itself, which are not.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from itertools import product
 
 import numpy as np
@@ -49,13 +50,22 @@ class Version:
     shift: int  # the joints in order are shift, shift + 1, ... 5, 0, ...; the last of them is the line
 
 
-def versions(g: Geometry, seed: int = 5) -> tuple[tuple[Version, ...], float]:
+def versions(g: Geometry) -> tuple[tuple[Version, ...], float]:
     """Versions that serve a chain, best first, and the part of the known branches that the first of them finds.
 
     Tried on poses of random joint values: known are these values, and what the versions tried find. Two versions that
-    find all of them, and the same number of them, end the trial.
+    find all of them, and the same number of them, end the trial. Takes some tenths of a second, once for axes: a tool
+    changes nothing.
     """
-    q = np.random.default_rng(seed).uniform(-np.pi, np.pi, (TRIALS, 6))
+    return _tried(g.points.tobytes(), g.axes.tobytes(), g.length)
+
+
+@lru_cache(maxsize=32)
+def _tried(points: bytes, axes: bytes, length: float) -> tuple[tuple[Version, ...], float]:
+    """The same for axes as they stand in memory, which can be remembered."""
+    at, along = (np.frombuffer(part).reshape(6, 3) for part in (points, axes))
+    g = Geometry(("revolute",) * 6, at, along, np.eye(4), along[0], length)
+    q = np.random.default_rng(5).uniform(-np.pi, np.pi, (TRIALS, 6))
     poses = reached(g, q)
     trials: list[tuple[Version, Array, Mask]] = []
     whole: list[int] = []

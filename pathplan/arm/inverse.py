@@ -74,11 +74,14 @@ def inverse_batch(arm: Arm, poses: Any, outside: Any = None) -> Branches:
     - branch 1, 2, ...: told apart, but without a meaning of their own.
 
     `outside` (n,) or (N, n): where joints stand that don't carry the tool (a turntable); only those entries count.
-    They are NaN in the answers if it is not given. Raises InputError for a wrong shape.
+    They are NaN in the answers if it is not given. Raises InputError for a wrong shape and for numbers that aren't
+    finite.
     """
     poses = np.asarray(poses, dtype=float)
     if poses.ndim != 3 or poses.shape[1:] != (4, 4):
         raise InputError(f"expected poses of shape (N, 4, 4), got {poses.shape}")
+    if not np.isfinite(poses).all():
+        raise InputError("poses: expected finite numbers, got NaN or infinity")
     joints = list(arm.tool_joints)
     if len(joints) > 6:
         from pathplan.arm.redundant import some_branches

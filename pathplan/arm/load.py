@@ -21,7 +21,7 @@
     velocity = 200                  # deg/s or mm/s, the same both ways; then per s^2 and per s^3
     acceleration = 900
     jerk = 9000
-    parent = "base"                 # or the name of an earlier joint; default: the joint before
+    parent = "base"                 # always the arm's own base; or an earlier joint; default: the joint before
     # From here on where known. Link data: for every joint or for none.
     torque = 150                    # peak, N m or N
     continuous_torque = 60

@@ -172,7 +172,7 @@ def _tables(top: Table, chain: UrdfChain, problems: Problems) -> tuple[dict[str,
             earlier = [BASE, *(other.joint.name for other, _ in added), *known]
             if row.parent is not None and row.parent not in earlier:
                 raise table.error("parent", f"no earlier joint {toml_text(row.parent)}, expected {listed(earlier)}")
-            if row.parent in known:
+            if row.parent in known and row.parent != BASE:
                 raise table.error("parent", "a joint of the URDF file can't carry one of this file")
             added.append((row, not tables))
     return tables, added

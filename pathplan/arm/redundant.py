@@ -191,6 +191,8 @@ def inverse_free(arm: Arm, poses: Any, joints: Any, values: Any) -> Branches:
     poses = np.asarray(poses, dtype=float)
     if poses.ndim != 3 or poses.shape[1:] != (4, 4):
         raise InputError(f"expected poses of shape (N, 4, 4), got {poses.shape}")
+    if not np.isfinite(poses).all():
+        raise InputError("poses: expected finite numbers, got NaN or infinity")
     held = held_joints(arm, joints)
     values = np.asarray(values, dtype=float)
     if len(held) == 1 and values.ndim == 1:

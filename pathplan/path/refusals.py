@@ -11,8 +11,8 @@ from typing import Any
 import numpy as np
 
 from pathplan.arm import Arm
+from pathplan.arm.geometry import meeting_points
 from pathplan.arm.kinematics import smallest_singular_value, spatial_axes
-from pathplan.arm.structure import meeting_point
 from pathplan.errors import UnreachableError
 from pathplan.path.cartesian import CartesianPath, Leg, tool_frames
 from pathplan.path.geometry import Index, Segments
@@ -67,13 +67,13 @@ def singular_kind(arm: Arm, q: Array) -> str:
     """
     if arm.structure == "scara":
         return "elbow"
-    if arm.structure != "spherical wrist":
+    if arm.structure != "spherical wrist" or "elbow" not in arm.solver.labels[0]:
         return "singular"
     columns, _ = spatial_axes(arm, q[None])
     axes = columns[:, 3:, 0]
     points = np.cross(axes, columns[:, :3, 0])  # the point of each axis nearest to the base origin
-    centre = meeting_point(points[3:], axes[3:])
-    if centre is None:  # the wrist axes are in line
+    centre, apart = meeting_points(points[3:], axes[3:])  # of a measured arm they meet nearly
+    if not np.isfinite(apart):  # the wrist axes are in line
         return "wrist"
 
     def unit_across(vector: Array) -> Array:

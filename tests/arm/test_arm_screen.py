@@ -18,7 +18,7 @@ from tests.arm.structures import loaded, on_track, seven, skew_shoulder, with_tu
 ROBOTS = Path(__file__).parents[2] / "robots"
 
 
-@pytest.mark.parametrize("name", ["glazer6", "loader4", "sorter4", "stacker6"])
+@pytest.mark.parametrize("name", ["glazer6", "loader4", "sorter4", "stacker6", "stacker7", "stacker6-pallet"])
 def test_the_screen_of_every_robot_fits(name):
     arm = loaded(name)
     text = arm_screen(arm)
