@@ -74,7 +74,7 @@ def test_the_branch_before_it_is_the_one_it_starts_in(cast):
     """A joint step to a pose ends in whatever branch the taught path starts in."""
     arm = cast.robot("glazer6")
     for q in arm.inverse(arm.forward(HOP[0]))[:6]:
-        points = np.stack([q, q + 0.05, q + [0.1, 0.0, 0.1, 0, 0, 0.1]])
+        points = np.stack([q, q + 0.05, q + np.array([0.1, 0, 0.1, 0, 0, 0.1])])
         points = np.clip(points, *np.array([joint.position for joint in arm.joints]).T)
         steps = [cast.step("joint", arm.forward(HOP[0])), taught_step(points)]
         path = follow_task(cast.task(arm, arm.positions["home"], steps))
