@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
+from pathplan.auditing.agreement import disagreements
 from pathplan.auditing.differences import ORDERS, Differences
 from pathplan.auditing.drives import Drives, DriveUse, jump_notes, overloads, torque_limits
 from pathplan.auditing.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
@@ -85,6 +86,7 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
         judge = _Judge(first, arm, plan, Rounding.of(first, kinds) if whole else NONE)
         if isinstance(table, JointTable):
             judge.differences.expect(table.position)
+            judge.notes += disagreements(table, arm) if whole else ()
         for piece in _pieces(first, chunks):
             judge.add(piece)
         return judge.verdict()

@@ -1,7 +1,7 @@
 """A file that is there whole or not at all: written beside, flushed to disk, then renamed into place.
 
-What is written beside is called .NAME.HEX.part and locked as long as its writer lives. A writer that was killed
-leaves such a part; the next one of the same name finds it unlocked and removes it.
+What is written beside is called .NAME.HEX.part, and its writer holds a lock as long as it lives. A writer that was
+killed leaves such a part; the next one of the same name finds that nobody holds it and removes it.
 """
 
 from __future__ import annotations
@@ -12,7 +12,7 @@ import os
 import re
 import secrets
 import stat
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import BinaryIO
 
@@ -67,10 +67,16 @@ def batched() -> Iterator[Batch]:
 
 
 class Batch:
-    """Parts that are written one by one and renamed together: see `batched`."""
+    """Parts that are written one by one and renamed together: see `batched`.
+
+    The first part in each folder stays open and locked until the end, and speaks for all the others there.
+    """
 
     def __init__(self) -> None:
+        self._mark = secrets.token_hex(4)
+        self._count = 0
         self._parts: list[tuple[Path, Path, Path]] = []  # part, target, the name as it was given
+        self._held: dict[Path, BinaryIO] = {}  # by folder
 
     @contextlib.contextmanager
     def part(self, file: Path) -> Iterator[BinaryIO]:
@@ -79,7 +85,8 @@ class Batch:
         target = Path(os.path.realpath(file))  # a link stays a link, to the new content
         _remove_leftovers(target)
         try:
-            with _new_part(target) as stream:
+            stream = self._opened(target)
+            try:
                 part = Path(stream.name)
                 self._parts.append((part, target, file))
                 yield stream
@@ -87,21 +94,44 @@ class Batch:
                 if target.exists():  # its permissions are kept
                     os.chmod(part, stat.S_IMODE(target.stat().st_mode))
                 os.fsync(stream.fileno())
+            finally:
+                if self._held.get(target.parent) is not stream:
+                    stream.close()
         except OSError as error:
             raise _told(file, error) from error
 
+    def _opened(self, target: Path) -> BinaryIO:
+        """A new part of a target; the first in its folder is locked and kept. Raises OSError."""
+        while True:
+            self._count += 1
+            name = f".{target.name[:_PREFIX]}.{self._mark}{self._count % 0x10000:04x}.part"
+            stream = open(target.with_name(name), "xb")
+            if target.parent in self._held:
+                return stream
+            try:
+                # Between creating and locking another writer may have taken it for a leftover.
+                if _lock(stream, wait=True) and _is_same(stream, target.with_name(name)):
+                    self._held[target.parent] = stream
+                    return stream
+            except BaseException:
+                stream.close()
+                with contextlib.suppress(OSError):
+                    os.unlink(target.with_name(name))
+                raise
+            stream.close()
+
     def commit(self) -> None:
         """All parts to their names. Raises as `saving` does."""
-        folders: dict[Path, None] = {}
+        changed: list[Path] = []
         while self._parts:
             part, target, file = self._parts[0]
             try:
                 os.replace(part, target)
             except OSError as error:
-                raise _told(file, error) from error
+                raise _told(file, error, changed) from error
             del self._parts[0]
-            folders[target.parent] = None
-        for folder in folders:
+            changed.append(target)
+        for folder in dict.fromkeys(target.parent for target in changed):
             _record(folder)
 
     def discard(self) -> None:
@@ -110,34 +140,36 @@ class Batch:
             with contextlib.suppress(OSError):  # what went wrong first is what must be told
                 os.unlink(part)
         self._parts.clear()
-
-
-def _new_part(target: Path) -> BinaryIO:
-    """A new part of a target, locked. Raises OSError."""
-    while True:
-        part = target.with_name(f".{target.name[:_PREFIX]}.{secrets.token_hex(6)}.part")
-        stream = open(part, "xb")
-        try:
-            # Between creating and locking another writer may have taken it for a leftover.
-            if _lock(stream, wait=True) and _is_same(stream, part):
-                return stream
-        except BaseException:
-            stream.close()
-            with contextlib.suppress(OSError):
-                os.unlink(part)
-            raise
-        stream.close()
+        for stream in self._held.values():
+            with contextlib.suppress(OSError):  # bytes that were still to be written, on a disk that is full
+                stream.close()
+        self._held.clear()
 
 
 def _remove_leftovers(target: Path) -> None:
     """Remove the parts of this target whose writers are gone. What can't be told or removed is left."""
-    pattern = re.compile(re.escape(f".{target.name[:_PREFIX]}.") + r"[0-9a-f]{12}\.part")
+    own = re.compile(re.escape(f".{target.name[:_PREFIX]}.") + r"([0-9a-f]{8})[0-9a-f]{4}\.part")
     with contextlib.suppress(OSError):
-        for name in os.listdir(target.parent):
-            if pattern.fullmatch(name):
-                with contextlib.suppress(OSError), open(target.with_name(name), "r+b") as stream:
-                    if _lock(stream, wait=False):
-                        os.unlink(stream.name)
+        names = os.listdir(target.parent)
+        for name in names:
+            match = own.fullmatch(name)
+            if match is None:
+                continue
+            mates = [other for other in names if re.search(rf"\.{match[1]}[0-9a-f]{{4}}\.part$", other)]
+            if not any(_in_use(target.with_name(mate)) for mate in mates):
+                with contextlib.suppress(OSError):
+                    os.unlink(target.with_name(name))
+
+
+def _in_use(part: Path) -> bool:
+    """Whether a living writer holds a part; True where that can't be told."""
+    try:
+        with open(part, "r+b") as stream:
+            return not _lock(stream, wait=False)
+    except FileNotFoundError:
+        return False
+    except OSError:
+        return True
 
 
 def _lock(stream: BinaryIO, *, wait: bool) -> bool:
@@ -173,8 +205,12 @@ def _record(folder: Path) -> None:
             os.close(descriptor)
 
 
-def _told(file: Path, error: OSError | ValueError) -> PathplanError:
-    """One line about trouble with a place or a disk."""
+def _told(file: Path, error: OSError | ValueError, changed: Sequence[Path] = ()) -> PathplanError:
+    """One line about trouble with a place or a disk; `changed` are the files of a batch that took their places."""
+    if changed:
+        reason = os.strerror(error.errno) if isinstance(error, OSError) and error.errno else str(error)
+        named = ", ".join(target.name for target in changed)
+        return PathplanError(f"{file}: can't take its place: {reason}: {named} did before")
     code = error.errno if isinstance(error, OSError) else errno.EINVAL
     if code in (errno.ENOSPC, errno.EDQUOT):
         return PathplanError(f"{file}: the disk is full: nothing was changed")

@@ -79,9 +79,10 @@ class JointPath:
         """Smooth path through taught joint points (m, n), m >= 2, in order; rad, or m for prismatic joints.
 
         Quintic spline interpolation over the centripetal parameter (Lee 1989), which keeps the path from looping
-        where points lie close together; C4. Repeated neighbouring points are refused: a path can't stand still.
+        where points lie close together; C4. Fewer than six points have free ends (third and fourth derivative zero).
+        Repeated neighbouring points are refused: a path can't stand still.
         """
-        from scipy.interpolate import make_interp_spline
+        from pathplan.task.smoothing import interpolated
 
         points = np.asarray(points, dtype=float)
         if points.ndim != 2 or len(points) < 2:
@@ -95,12 +96,9 @@ class JointPath:
             raise InputError(f"joint path: points {row + 1} and {row + 2} are equal; a path can't stand still")
         parameter = np.concatenate([[0.0], np.cumsum(np.sqrt(steps))])
         parameter *= steps.sum() / parameter[-1]
-        degree = min(5, 2 * ((len(points) - 1) // 2) + 1)
         if len(points) == 2:
             return cls.from_pieces(parameter, np.stack([(points[1] - points[0]) / parameter[1], points[0]])[:, None])
-        if degree < 5:  # three to five points: a natural cubic is C2 and does not overshoot like one high polynomial
-            return cls(make_interp_spline(parameter, points, k=3, bc_type="natural"))
-        return cls(make_interp_spline(parameter, points, k=5))
+        return cls(interpolated(parameter, points))
 
     @property
     def length(self) -> float:

@@ -106,12 +106,18 @@ def planned():
     return pathplan.plan(pathplan.load_task(ROOT / "examples" / "glazer6-pick-and-place.toml"))
 
 
-def test_rms_torque_agrees_with_pinocchio(planned):
+@pytest.fixture(scope="module")
+def steady():
+    """A plan that carries the same all the way."""
+    return pathplan.plan(pathplan.load_task(ROOT / "examples" / "glazer6-bead.toml"))
+
+
+def test_rms_torque_agrees_with_pinocchio(steady):
     """Torque of every row by pinocchio, friction added by hand; sqrt(sum T^2 t / sum t), shared/checks.md."""
     import pinocchio as pin
 
-    table = planned.table
-    (arm,) = {id(s.arm): s.arm for s in planned.path.stretches}.values()
+    table = steady.table
+    (arm,) = {id(s.arm): s.arm for s in steady.path.stretches}.values()
     model, data, _ = pinocchio_model(arm)
     model.armature = np.array([j.gear_ratio**2 * k.rotor_inertia for j, k in zip(arm.joints, arm.links, strict=True)])
     rows = zip(table.position, table.velocity, table.acceleration, strict=True)
@@ -121,15 +127,15 @@ def test_rms_torque_agrees_with_pinocchio(planned):
     torque = np.array([pin.rnea(model, data, *row) for row in rows])
     torque += viscous * v + positive * (v > 0) - negative * (v < 0)
     expected = np.sqrt((torque[1:] ** 2).mean(axis=0))  # each row stands for the cycle before it
-    rms = [drive.rms for drive in planned.audit.drives]
+    rms = [drive.rms for drive in steady.audit.drives]
     np.testing.assert_allclose(rms, expected, rtol=5e-3)
     # ours takes torque as straight lines between the rows: the mean of its square over one is (a^2 + a b + b^2) / 3
     a, b = torque[:-1], torque[1:]
     np.testing.assert_allclose(rms, np.sqrt(((a * a + a * b + b * b) / 3).mean(axis=0)), rtol=1e-9)
     power = torque * v
-    np.testing.assert_allclose([drive.power for drive in planned.audit.drives], power.max(axis=0), rtol=1e-9)
+    np.testing.assert_allclose([drive.power for drive in steady.audit.drives], power.max(axis=0), rtol=1e-9)
     net = np.trapezoid(power, dx=table.cycle, axis=0)
-    np.testing.assert_allclose([drive.net for drive in planned.audit.drives], net, rtol=1e-9)
+    np.testing.assert_allclose([drive.net for drive in steady.audit.drives], net, rtol=1e-9)
 
 
 def test_waits_count_in_the_cycle(planned):

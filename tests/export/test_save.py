@@ -217,11 +217,52 @@ def test_the_part_of_a_living_writer_stays(full_table, tmp_path):
     assert file.read_bytes() == b"mine" and list(tmp_path.iterdir()) == [file]
 
 
+def test_parts_of_a_living_batch_stay(full_table, tmp_path):
+    """All parts of a batch but the first are closed by then; the first speaks for them."""
+    files = [tmp_path / f"{k}.csv" for k in range(3)]
+    with batched() as batch:
+        for file in files:
+            write_table(full_table, file, batch=batch)
+        write_table(full_table.part(0, 9), files[2])  # another writer of the same file
+        assert len(list(tmp_path.glob(".*.part"))) == 3
+    assert [len(read_table(file)) for file in files] == [50, 50, 50] and not list(tmp_path.glob(".*.part"))
+
+
+def test_a_batch_of_more_files_than_may_be_open(full_table, tmp_path):
+    import resource
+
+    before = resource.getrlimit(resource.RLIMIT_NOFILE)
+    resource.setrlimit(resource.RLIMIT_NOFILE, (64, before[1]))
+    try:
+        with batched() as batch:
+            for k in range(100):
+                write_table(full_table.part(0, 2), tmp_path / f"{k}.csv", batch=batch)
+    finally:
+        resource.setrlimit(resource.RLIMIT_NOFILE, before)
+    assert len(list(tmp_path.iterdir())) == 100
+
+
+def test_a_file_of_a_batch_that_can_not_take_its_place(full_table, tmp_path, monkeypatch):
+    real, files = os.replace, [tmp_path / f"{k}.csv" for k in range(3)]
+
+    def replace_but_one(part, target):
+        if target == files[1]:
+            raise OSError(errno.EIO, "Input/output error")
+        real(part, target)
+
+    monkeypatch.setattr(os, "replace", replace_but_one)
+    with pytest.raises(PathplanError) as error, batched() as batch:
+        for file in files:
+            write_table(full_table, file, batch=batch)
+    assert str(error.value) == f"{files[1]}: can't take its place: Input/output error: 0.csv did before"
+    assert list(tmp_path.iterdir()) == [files[0]]
+
+
 def test_a_leftover_that_can_not_be_removed_is_left(full_table, tmp_path, monkeypatch):
     file = tmp_path / "t.csv"
     part = left_part(file)
     real = os.unlink
-    monkeypatch.setattr(os, "unlink", lambda path, **more: real(path) if path != str(part) else fails())
+    monkeypatch.setattr(os, "unlink", lambda path, **more: real(path) if str(path) != str(part) else fails())
 
     def fails():
         raise PermissionError(errno.EPERM, "Operation not permitted")
