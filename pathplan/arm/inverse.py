@@ -40,8 +40,9 @@ SAME = 1e-7  # rad or m: answers closer than this are one (where two branches me
 
 @dataclass(frozen=True)
 class Branches:
-    """Every branch of a batch of N poses. The branch index follows a path continuously away from
-    singularities."""
+    """Every branch of a batch of N poses; from `Arm.inverse_free`, with M values of the held joints, (N, M, B) in place
+    of (N, B). What the branch index means: see `inverse_batch`.
+    """
 
     q: Array  # (N, B, n) rad and m, revolute joints in (-pi, pi]; the nearest answer where not valid
     valid: Any  # (N, B) bool: the tool stands at the pose, position limits left aside
