@@ -15,12 +15,16 @@ from numpy.typing import NDArray
 import pathplan
 
 ROOT = Path(__file__).parent.parent
-ARMS = ("loader4", "sorter4", "glazer6")
+ARMS = ("loader4", "sorter4", "glazer6", "sorter4-spline")
 Array = NDArray[np.float64]
 
 
 def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
-    """TOML text of a task of 1 to 7 motions: joint steps, lines and arcs with blends, waits, caps."""
+    """TOML text of a task of 1 to 7 motions: joint steps, lines, arcs and patterns with blends, waits, caps, a tool,
+    payloads that change, rarely another tool.
+    """
+    tool = str(rng.choice(["none", *arm.tools]))
+    arm = arm.equipped(tool=tool)
     low, high = np.array([joint.position for joint in arm.joints]).T
     middle, half = (low + high) / 2, (high - low) / 2
     unit = np.array([1000.0 if joint.kind == "prismatic" else 180 / np.pi for joint in arm.joints])
@@ -30,11 +34,17 @@ def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
         f'arm = "{(ROOT / "robots" / (arm.name + ".toml")).as_posix()}"',
         f'cycle = "{rng.choice([1, 2, 4, 8])} ms"',
         f"start = {_numbers(q * unit)}",
+        f'tool = "{tool}"',
     ]
     if rng.random() < 0.3:
         lines.append(f'speed = "{rng.uniform(50, 800):.0f} mm/s"')
     count = int(rng.integers(1, 8))
+    patterns = {i: f"places{i}" for i in range(count) if rng.random() < 0.12}
     for i in range(count):
+        if i in patterns:
+            q = np.clip(q + half * rng.uniform(-0.1, 0.1, arm.n), low + 0.1 * half, high - 0.1 * half)
+            lines += _pattern(arm, patterns[i], arm.forward(q), rng)
+            continue
         lines.append("\n[[step]]")
         motion = rng.choice(["joint", "joint", "line", "line", "line", "arc"])
         far = 0.8 if motion == "joint" else 0.12
@@ -51,13 +61,39 @@ def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
             lines.append(f"angle = {rng.uniform(-360, 360):.2f}")
         else:
             lines.append(f"to = {_pose(arm.forward(q))}")
-        if i < count - 1 and rng.random() < 0.6:
+        if i < count - 1 and i + 1 not in patterns and rng.random() < 0.6:
             size = rng.choice([f'"{rng.uniform(1, 60):.1f} mm"', f'"{rng.uniform(1, 50):.1f} %"', '"5 deg"'])
             lines.append(f"blend = {size}")
         elif rng.random() < 0.2:
             lines.append('mark = "here"')
             lines.append('\n[[step]]\nwait = "0.0505 s"')
+            if rng.random() < 0.6:
+                lines.append(f'payload = "{rng.choice(["none", *arm.payloads])}"')
+            if rng.random() < 0.1:
+                lines.append(f'tool = "{rng.choice(["none", *arm.tools])}"')
     return "\n".join(lines) + "\n"
+
+
+def _pattern(arm: pathplan.Arm, name: str, first: Array, rng: np.random.Generator) -> list[str]:
+    """A pattern about a pose, and a step that goes to each of its places, sometimes with a load."""
+    count = [int(n) for n in rng.integers(1, 4, rng.integers(1, 4))]
+    while np.prod(count) > 6:
+        count.pop()
+    pitch = [float(v) for v in rng.uniform(5, 40, len(count)) * rng.choice([-1, 1], len(count))]
+    lines = [
+        f'\n[[step]]\nrepeat = "{name}"',
+        f'\n[[step.step]]\nmotion = "{rng.choice(["joint", "line"])}"\nto = "{name}"',
+        f'offset = {{ frame = [0, 0, {rng.uniform(5, 40):.2f}] }}\nblend = "{rng.uniform(1, 20):.1f} mm"',
+        f'\n[[step.step]]\nmotion = "line"\nto = "{name}"',
+    ]
+    if rng.random() < 0.5:
+        for load in (str(rng.choice(list(arm.payloads))), "none"):
+            lines.append(f'\n[[step.step]]\nwait = "20 ms"\npayload = "{load}"')
+    order = rng.choice(["rows", "serpentine"])
+    table = (
+        f'count = {count}\npitch = {pitch}\norder = "{order}"\n{_pose(first)[2:-2].replace(", quat", chr(10) + "quat")}'
+    )
+    return [*lines, f"\n[patterns.{name}]\n{table}"]
 
 
 def _numbers(values: Array) -> str:
@@ -82,6 +118,21 @@ def broken_limits(arm: pathplan.Arm, position: Array, cycle: float) -> list[str]
         for n, limit in enumerate((joint.velocity, joint.acceleration, joint.jerk), start=1):
             if np.abs(np.diff(padded[:, k], n)).max() > (limit * (1 + 1e-6)) * cycle**n + 8 * rounding:
                 broken.append(f"{joint.name} derivative {n}")
+    return broken + _broken_sums(arm, padded, cycle)
+
+
+def _broken_sums(arm: pathplan.Arm, padded: Array, cycle: float) -> list[str]:
+    """The same of the rows that limit sums of joints."""
+    broken = []
+    for k in range(arm.n, len(arm.limits.names)):
+        row = arm.limits.matrix[k]
+        motor, rounding = padded @ row, float(np.abs(row) @ np.spacing(np.abs(padded).max(axis=0)))
+        bounds = (arm.limits.position, arm.limits.velocity, arm.limits.acceleration, arm.limits.jerk)
+        for n, (low, high) in enumerate(bound[k] for bound in bounds):
+            seen, slack = np.diff(motor, n), 8 * rounding + 1e-9 * (n == 0)
+            top, bottom = (limit * (1 + 1e-6 * (n > 0)) * cycle**n for limit in (high, low))
+            if seen.max() > top + slack or seen.min() < bottom - slack:
+                broken.append(f"{arm.limits.names[k]} derivative {n}")
     return broken
 
 
