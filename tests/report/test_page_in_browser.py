@@ -42,6 +42,7 @@ def open_page(browser, address):
     browser.get_log("performance")
     browser.get(address)
     until(browser, LIVE)
+    frame(browser)
 
 
 def frame(browser):
