@@ -56,7 +56,8 @@ def main(poses: int = 20) -> None:
                 theirs += 1
                 missed += bool(np.where(ours.valid[0], gap, np.inf).min() > 1e-5)
         print(
-            f"{name}: {poses} poses, {theirs} branches of the toolbox's, {missed} not among ours; derived in {derived:.0f} s"
+            f"{name}: {poses} poses, {theirs} branches of the toolbox's, {missed} not among ours; "
+            f"derived in {derived:.0f} s"
         )
 
 
