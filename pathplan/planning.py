@@ -90,6 +90,7 @@ class Plan:
         task = self.task
         return {
             "arm": task.arm.name,
+            "arm_file": task.arm.file.name if task.arm.file is not None else "",
             "task": task.title,
             "task_file": task.file.name if task.file is not None else "",
             "tool": task.arm.tool.name,

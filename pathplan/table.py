@@ -1,6 +1,6 @@
 """The joint table: what a controller plays, row by row at its cycle. SI, read-only, whole or in pieces.
 
-Keys of `meta` that the rooms agree on (all optional, JSON values only): "arm" (name), "task" (title),
+Keys of `meta` that the rooms agree on (all optional, JSON values only): "arm" (name), "arm_file", "task" (title),
 "task_file" (file name without folder), "versions" (name -> version), "sources" (file name -> sha256),
 "breaks_limits" (True when written although the audit failed).
 """

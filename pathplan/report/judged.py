@@ -142,7 +142,10 @@ def _arm_of(table: JointTable, file: Path, given: Arm | None) -> tuple[Arm | Non
     sources = sources if isinstance(sources, Mapping) else {}
     arm = given
     if arm is None:
+        stated = table.meta.get("arm_file")
         others = [PurePath(str(source)).name for source in sources if source != table.meta.get("task_file")]
+        if isinstance(stated, str) and stated:  # the task may have read other files too
+            others = [PurePath(stated).name]
         beside = [file.with_name(other) for other in others if other and file.with_name(other).is_file()]
         if not beside:
             named = f"names {', '.join(others)}, which is not beside it" if others else "names no arm file"
