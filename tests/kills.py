@@ -17,6 +17,7 @@ import numpy as np
 
 import pathplan
 from pathplan.export import read_table, write_table
+from pathplan.table import JointTable, tick_times
 
 ROOT = Path(__file__).parent.parent
 SUFFIXES = (".csv", ".jsonl", ".npz", ".parquet")
@@ -40,9 +41,12 @@ while True:
 def kill_writer(file: Path, rng: np.random.Generator) -> str:
     """Start a writer that replaces a file over and over, kill it at a random instant, judge what is there.
 
-    Returns 'nothing', 'whole' or 'whole, and a part': the part is gone after the next write.
+    Returns 'old', 'new', or either with 'and a part': the part is gone after the next write.
     """
-    before = file.read_bytes() if file.exists() else None
+    if not file.exists():
+        still = np.zeros((ROWS, 6))
+        more = {"joint_kinds": ("revolute",) * 6, "cycle": 0.001, "meta": {"task": "t", "task_file": "t.toml"}}
+        write_table(JointTable(tick_times(np.arange(ROWS), 0.001), still, **more), file)
     with subprocess.Popen(
         [sys.executable, "-c", WRITER.format(rows=ROWS), str(file)], stdout=subprocess.PIPE, env=environment()
     ) as writer:
@@ -50,14 +54,12 @@ def kill_writer(file: Path, rng: np.random.Generator) -> str:
         time.sleep(rng.uniform(0.0, 0.6))
         writer.send_signal(signal.SIGKILL)
     parts = parts_of(file)
-    if not file.exists():
-        assert before is None
-        return "nothing"
     table = read_table(file)
     assert len(table) == ROWS and np.ptp(table.position) == 0, "rows of two writes in one file"
     write_table(table, file)
     assert parts_of(file) == []
-    return "whole, and a part" if parts else "whole"
+    which = "new" if table.position[0, 0] else "old"
+    return f"{which}, and a part" if parts else which
 
 
 def parts_of(file: Path) -> list[str]:
@@ -84,7 +86,9 @@ def stop_plan(folder: Path, rng: np.random.Generator, how: signal.Signals = sign
     needed = time.monotonic() - started
     begin = 0.1 if how == signal.SIGINT else 0.5
     again = [*command, "--pace", "100 %"]
-    with subprocess.Popen(again, cwd=folder, env=environment(), stderr=subprocess.PIPE, text=True) as planner:
+    options = {"cwd": folder, "env": environment(), "stderr": subprocess.PIPE, "text": True}
+    # what runs in the background of a shell is started deaf to Ctrl-C
+    with subprocess.Popen(again, **options, preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL)) as planner:
         time.sleep(rng.uniform(begin, 1.1) * needed)
         done = planner.poll() is not None
         planner.send_signal(how)
