@@ -3,26 +3,32 @@
 A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) says:
 
     title    what the task is                        arm      the arm file, relative to this file
-    cycle    of the controller, "4 ms"               tool, payload    names of the arm's, carried throughout
+    cycle    of the controller, "4 ms"               tool, payload    names of the arm's, carried from the start
     start    joint positions, or the name of an arm position or joint pose
     return   false; true or "joint", "line": the motion back to the start at the end
     speed, acceleration      caps on the tool for the whole task; of a step's own and these the lower holds
 
-    [frames.NAME]   parent (default "base"), xyz, rpy or quat: a workpiece frame in its parent
+    [frames.NAME]   parent (default "base"; a frame, or a pattern), xyz, rpy or quat: a workpiece frame in its parent
     [poses.NAME]    frame (default "base"), xyz, rpy or quat: a tool pose; or joints
+    [patterns.NAME] the same pose at many places: `pathplan.task.patterns`
+    [curves.NAME], [taught.NAME]    paths through the points of a file: `pathplan.task.curves`
     [[step]]        one line of the task, in order:
-        motion      "joint", "line" or "arc"
-        to          the name of a pose or arm position, or a table like one of [poses]
+        motion      "joint", "line", "arc", "curve" or "taught"
+        to          the name of a pose, arm position, end of a curve or taught path ("NAME.start", "NAME.end"), a
+                    pattern that is repeated, or a table like one of [poses]
         offset      { frame = [x, y, z], tool = [x, y, z], rpy or quat }: moves the target along the axes of
                     its frame, then along those of the tool, then turns it about those of the tool
         via         arc: a point on the way to `to`, the name of a pose or { frame, xyz }
         centre, axis, angle   arc in place of via and to: about a point (like via) and a direction in its
                     frame, by a signed angle up to ten turns; tool_along = true: the tool turns with it
+        along       curve, taught: the NAME of its path, which starts where the step before ends
         blend       size of the corner region at the end: "20 mm", "10 deg", "15 %"; without it a stop point
         speed, acceleration   caps on the tool
         configuration         { shoulder, elbow, wrist }: words for the branch at the target
+        tool, payload         carried from this step on, "none" for nothing: the arm stops before it
         name, mark            for people: the step, and the instant at which it ends
-        wait        in a step of its own (mark and name beside it): rest for this time
+        wait        in a step of its own (name, mark, tool, payload beside it): rest for this time
+        repeat, as, with, [[step.step]], include, frame     steps for many steps: `pathplan.task.sequence`
 """
 
 from __future__ import annotations
