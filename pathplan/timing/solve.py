@@ -204,6 +204,6 @@ def _top(values: Array) -> Array:
     bend = 2 * here - before - after
     with np.errstate(divide="ignore", invalid="ignore"):
         rise = (after - before) ** 2 / (8 * bend)
-    inside = (here >= before) & (here >= after) & (bend > 0)
-    peak = np.where(inside, here + np.where(inside, rise, 0.0), -np.inf).max(axis=-2)
+    inside = np.abs(after - before) <= 2 * bend  # the top lies between the three: at an end it has no point beyond it
+    peak = np.where(inside, here + np.where(inside & (bend > 0), rise, 0.0), -np.inf).max(axis=-2)
     return np.maximum(values.max(axis=-2), peak)

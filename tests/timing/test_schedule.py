@@ -33,6 +33,16 @@ def test_limits_hold_and_ends_rest(name):
         assert np.abs(timing(ends, derivative)).max() <= 1e-6 * max(scale, 1.0)
 
 
+def test_a_peak_at_the_very_end_of_a_cell_is_seen():
+    """Of a few hundred random paths this was the one whose jerk peaked between the last two points looked at."""
+    rng = np.random.default_rng(23)
+    joints, points = int(rng.integers(1, 4)), int(rng.integers(3, 7))
+    path = JointPath.through(rng.uniform(-1, 1, (points, joints)))
+    limits = (rng.uniform(low, high, joints) for low, high in ((1, 3), (5, 30), (50, 1500)))
+    case = Case(path, *limits)
+    assert largest_share(case, timed(case), samples=100001) <= 1 + 1e-6
+
+
 @pytest.mark.parametrize("name", CAST)
 def test_derivatives_are_those_of_the_positions(name):
     """Positions integrated back from each derivative by Simpson's rule."""
