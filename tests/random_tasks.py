@@ -136,6 +136,25 @@ def _broken_sums(arm: pathplan.Arm, padded: Array, cycle: float) -> list[str]:
     return broken
 
 
+def broken_between_rows(plan: pathplan.Plan) -> list[str]:
+    """What the trajectory's own derivatives break, 20 times denser than the rows, and at the rows themselves."""
+    limits, cycle = plan.task.arm.limits, plan.task.cycle
+    kinds = {"velocity": limits.velocity, "acceleration": limits.acceleration, "jerk": limits.jerk}
+    table = plan.table
+    seen = [(table.velocity, table.acceleration, table.jerk)]
+    for timing in plan.timings:
+        samples = int(20 * timing.duration / cycle) + 2
+        seen.append(tuple(timing.derivatives(np.linspace(0.0, timing.duration, samples))[1:]))
+    broken = []
+    for derivatives in seen:
+        for values, (kind, limit) in zip(derivatives, kinds.items(), strict=True):
+            rows = values @ limits.matrix.T
+            slack = 1e-6 * np.abs(limit)
+            over = (rows > limit[:, 1] + slack[:, 1]) | (rows < limit[:, 0] - slack[:, 0])
+            broken += [f"{limits.names[k]} {kind} between rows" for k in np.flatnonzero(over.any(axis=0))]
+    return broken
+
+
 def judge(text: str, folder: Path) -> str:
     """'planned' or 'refused'; raises AssertionError with the task when a table breaks a limit."""
     file = folder / "random.toml"
@@ -145,7 +164,7 @@ def judge(text: str, folder: Path) -> str:
     except pathplan.PathplanError as error:
         assert str(error) and "\n" not in str(error), text
         return "refused"
-    broken = broken_limits(plan.task.arm, plan.table.position, plan.task.cycle)
+    broken = broken_limits(plan.task.arm, plan.table.position, plan.task.cycle) + broken_between_rows(plan)
     assert not broken, f"{broken}\n{text}"
     assert plan.bound <= plan.duration + 1e-12, text
     return "planned"
