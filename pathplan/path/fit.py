@@ -4,6 +4,9 @@ Exact values and derivatives at the ends of a piece come from Newton's method on
 Jacobian's own derivatives (`pathplan.arm.kinematics.joint_derivatives`). Between them the septic piece is
 compared with the exact path at three points, among them where each of its errors is largest; pieces that
 miss are halved, all of a level in one batch.
+
+Where a span runs through a singularity the Jacobian says nothing, though the joint positions are smooth. No piece ends
+there: one has it in its middle, is compared in pose there, and in derivatives on both sides.
 """
 
 from __future__ import annotations
@@ -30,10 +33,13 @@ ANGLE = 2e-7  # rad
 DERIVATIVE = (1e-5, 1e-4, 1e-3)
 FIRST_WIDTH = 0.5  # path parameter of a piece to start with
 _BENDS = 3  # pieces of a curve that one of ours spans to start with
-_HALVINGS = 16
+_HALVINGS = 22
+_NARROWEST = 1e-3  # half the width of a piece that runs through a singularity
 _NEAR = 1e-2  # rad, or arm lengths: nearer than this to its pose a piece is a fair guess of the joints
 # Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second), near 0.32 and 0.68 (first, third).
 _CHECKED = np.array([0.32, 0.5, 0.68])
+_SHAKY = 3e-3  # smallest singular value below which an answer near a guess may be that of another branch
+_ASTRAY = 0.5  # rad, or m, from the tracked branch
 # Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over h^k.
 _ROUNDING = np.array([1e-13, 1e-12, 1e-11])
 
@@ -67,31 +73,112 @@ def fit(spans: Spans) -> Pieces:
     span = np.repeat(todo, count + 1)
     number = np.arange(len(span)) - np.repeat(np.cumsum(count + 1) - (count + 1), count + 1)
     at = spans.length[span] * number / np.repeat(count, count + 1)
+    span, at, centre = _round_crossings(spans, span, at)
     jets = _nodes(spans, span, at, spans.guess(span, at)) if len(span) else np.zeros((4, 0, spans.motions.arm.n))
-    opening = np.flatnonzero(number < np.repeat(count, count + 1))
-    span, start, width = span[opening], at[opening], (at[1:] - at[:-1])[opening] if len(at) else at
-    begin, end = jets[:, opening], jets[:, opening + 1]
+    opening = np.flatnonzero(span[1:] == span[:-1])
+    width = (at[1:] - at[:-1])[opening] if len(at) else at
+    pieces = _Open(span[opening], at[opening], width, jets[:, opening], jets[:, opening + 1], centre[opening])
+    return _joined(done + _fitted(spans, pieces))
+
+
+@dataclass(frozen=True, eq=False)
+class _Open:
+    """m pieces that are still to be fitted, or judged."""
+
+    span: Index  # (m,)
+    start: Array  # (m,) position in the span
+    width: Array  # (m,)
+    begin: Array  # (4, m, n) exact q and derivatives where it begins
+    end: Array
+    centre: Array  # (m,) of a piece that runs through a singularity: where in the span, its middle; else NaN
+
+    def __len__(self) -> int:
+        return len(self.span)
+
+    def take(self, rows: Index | Mask) -> _Open:
+        begin, end = self.begin[:, rows], self.end[:, rows]
+        return _Open(self.span[rows], self.start[rows], self.width[rows], begin, end, self.centre[rows])
+
+    def cuts(self) -> tuple[Index, Array]:
+        """Pieces and positions in them where they are to be cut: in the middle, or in the middle of both halves."""
+        whole, ringed = np.flatnonzero(np.isnan(self.centre)), np.flatnonzero(~np.isnan(self.centre))
+        half = self.width / 2
+        part = np.concatenate([whole, ringed, ringed])
+        return part, np.concatenate([half[whole], half[ringed] / 2, half[ringed] * 1.5])
+
+    def cut(self, middle: Array) -> _Open:
+        """The parts, from what is exact at the `cuts`."""
+        whole, ringed = np.flatnonzero(np.isnan(self.centre)), np.flatnonzero(~np.isnan(self.centre))
+        at = np.split(middle, [len(whole), len(whole) + len(ringed)], axis=1)
+        half, start, nan = self.width / 2, self.start, np.full(2 * len(whole) + len(ringed), np.nan)
+        order = np.concatenate([whole, whole, ringed, ringed, ringed])
+        first, rest = start[ringed] + half[ringed] / 2, start[ringed] + half[ringed] * 1.5
+        return _Open(
+            self.span[order],
+            np.concatenate([start[whole], start[whole] + half[whole], start[ringed], first, rest]),
+            np.concatenate([half[whole], half[whole], half[ringed] / 2, half[ringed], half[ringed] / 2]),
+            np.concatenate([self.begin[:, whole], at[0], self.begin[:, ringed], at[1], at[2]], axis=1),
+            np.concatenate([at[0], self.end[:, whole], at[1], at[2], self.end[:, ringed]], axis=1),
+            np.concatenate([nan, self.centre[ringed], np.full(len(ringed), np.nan)]),
+        )
+
+
+def _fitted(spans: Spans, pieces: _Open) -> list[Pieces]:
+    """Pieces that keep to the path, cut as often as that needs."""
+    done: list[Pieces] = []
     for _ in range(_HALVINGS):
-        if not len(span):
-            break
-        coefficients = hermite_coefficients(begin, end, width)
-        good, off = _keeps(spans, span, start, width, coefficients, begin, end)
-        done.append(Pieces(span[good], start[good], width[good], coefficients[:, good]))
+        if not len(pieces):
+            return done
+        coefficients = hermite_coefficients(pieces.begin, pieces.end, pieces.width)
+        good, off = _keeps(spans, pieces, coefficients)
+        done.append(Pieces(pieces.span[good], pieces.start[good], pieces.width[good], coefficients[:, good]))
         bad = ~good
-        span, start, width, begin, end = span[bad], start[bad], width[bad], begin[:, bad], end[:, bad]
-        if not len(span):
-            break
-        half = width / 2
-        guess = derivatives_at(coefficients[:, bad], half)[0] - spans.joint_jets(span, start + half)[0]
-        wild = off[bad] > _NEAR  # a piece far too long for its path: the tracked branch is the better guess
-        guess[wild] = spans.guess(span[wild], (start + half)[wild])
-        middle = _nodes(spans, span, start + half, guess)
-        span, start, width = np.tile(span, 2), np.concatenate([start, start + half]), np.tile(half, 2)
-        begin, end = np.concatenate([begin, middle], axis=1), np.concatenate([middle, end], axis=1)
-    else:
-        worst = int(np.argmin(smallest_singular_value(spans.motions.arm, begin[0])))
-        raise Trouble(int(span[worst]), float(start[worst]), begin[0, worst], "singular")
-    return _joined(done)
+        pieces = pieces.take(bad)
+        narrow = np.flatnonzero(~np.isnan(pieces.centre) & (pieces.width < 2 * _NARROWEST))
+        if len(narrow):
+            _give_up(spans, pieces.take(narrow))
+        part, local = pieces.cuts()
+        if not len(part):
+            return done
+        guess = derivatives_at(coefficients[:, bad][:, part], local)[0]
+        span, at = pieces.span[part], pieces.start[part] + local
+        guess -= spans.joint_jets(span, at)[0]
+        wild = (off[bad] > _NEAR)[part]  # a piece far too long for its path: the tracked branch is the better guess
+        guess[wild] = spans.guess(span[wild], at[wild])
+        pieces = pieces.cut(_nodes(spans, span, at, guess))
+    _give_up(spans, pieces)
+    return done
+
+
+def _give_up(spans: Spans, pieces: _Open) -> None:
+    """Raise Trouble for the most singular of pieces that don't come to keep to the path."""
+    worst = int(np.argmin(smallest_singular_value(spans.motions.arm, pieces.begin[0])))
+    raise Trouble(int(pieces.span[worst]), float(pieces.start[worst]), pieces.begin[0, worst], "singular")
+
+
+def _round_crossings(spans: Spans, span: Index, at: Array) -> tuple[Index, Array, Array]:
+    """Nodes (N,) with none near a singularity that a span runs through but one on each side of it, equally far; and
+    for the one before it where in the span it lies (N,), else NaN.
+    """
+    centre = np.full(len(span), np.nan)
+    crossings = spans.crossings()
+    places: dict[int, list[float]] = {}
+    for i, place in crossings:
+        places.setdefault(i, []).append(place)
+    for i, place in crossings:
+        length = float(spans.length[i])
+        others = [other for other in places[i] if other != place]
+        room = min(abs(place - other) for other in (0.0, length, *others))
+        half = min(0.4 * room, FIRST_WIDTH / 4)
+        if half < _NARROWEST:
+            raise Trouble(i, place, spans.guess(np.array([i]), np.array([place]))[0], "singular")
+        gone = (span == i) & (np.abs(at - place) < 1.5 * half) & (at > 0.0) & (at < length)
+        span, at, centre = span[~gone], at[~gone], centre[~gone]
+        row = int(np.searchsorted(span, i)) + int(np.searchsorted(at[span == i], place))
+        span = np.insert(span, row, [i, i])
+        at = np.insert(at, row, [place - half, place + half])
+        centre = np.insert(centre, row, [place, np.nan])
+    return span, at, centre
 
 
 def _joined(parts: list[Pieces]) -> Pieces:
@@ -164,26 +251,31 @@ def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
     poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(i)
     q, met = solve_near(arm, poses, guess[rows])
     value = smallest_singular_value(arm, q)
+    lost = ~met | (value < _SHAKY)
+    if lost.any():  # near a singularity a poor guess leads astray: the tracked branch tells where to look
+        tracked = spans.guess(i[lost], at[lost])
+        off = np.abs(q[lost] - tracked).max(axis=1) > _ASTRAY
+        lost = np.flatnonzero(lost)[off | ~met[lost]]
+        q[lost], met[lost] = solve_near(arm, poses[lost], spans.guess(i[lost], at[lost]))
+        value[lost] = smallest_singular_value(arm, q[lost])
     poor = ~met | (value < SINGULAR)
     if poor.any():
         row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
-        raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < 10 * SINGULAR else "reach")
+        raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < _SHAKY else "reach")
     derivatives, _ = joint_derivatives(arm, q, spatial_twists(jets))
     out[:, rows] += np.concatenate([q[None], derivatives.transpose(1, 0, 2)])
     return out
 
 
-def _keeps(
-    spans: Spans, span: Index, start: Array, width: Array, coefficients: Array, begin: Array, end: Array
-) -> tuple[Mask, Array]:
+def _keeps(spans: Spans, pieces: _Open, coefficients: Array) -> tuple[Mask, Array]:
     """(m,) which pieces keep to the path and its derivatives, and how far each is off the pose in its middle
     (rad, or arm lengths).
     """
-    arm, m = spans.motions.arm, len(span)
+    arm, m, width = spans.motions.arm, len(pieces), pieces.width
     points = len(_CHECKED)
-    i = np.repeat(span, points)
+    i = np.repeat(pieces.span, points)
     local = (width[:, None] * _CHECKED).ravel()
-    at = np.repeat(start, points) + local
+    at = np.repeat(pieces.start, points) + local
     fitted = derivatives_at(np.repeat(coefficients, points, axis=1), local)
     exact = spans.joint_jets(i, at)
     weights = joint_weights(arm)
@@ -200,13 +292,15 @@ def _keeps(
     near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
     near &= (np.abs(q) * weights).max(axis=1) <= ANGLE
     good = near.reshape(m, points).all(axis=1)
+    middle = points * np.flatnonzero(~np.isnan(pieces.centre)) + points // 2
+    exact[:, middle] = fitted[:, middle]  # at a singularity no derivative is known
     exact = exact[1:]
 
     def largest(values: Array) -> Array:
         return np.abs(values * weights).max(axis=2).reshape(len(values), m, -1).max(axis=2)
 
     error = largest(fitted[1:] - exact)
-    ends = np.maximum(np.abs(begin[1:] * weights).max(axis=2), np.abs(end[1:] * weights).max(axis=2))
+    ends = np.maximum(np.abs(pieces.begin[1:] * weights).max(axis=2), np.abs(pieces.end[1:] * weights).max(axis=2))
     scale = np.maximum(largest(exact), ends)
     # The path parameter counts radians or arm lengths: a bend is measured at least against one that turns
     # once a radian.

@@ -55,6 +55,7 @@ class Motions:
     tool_from_own: Array  # (M, 4, 4)
     bent: Index  # (M,) of a motion through taught points its path in `paths`, else -1
     paths: tuple[JointPath, ...] = ()
+    crossings: tuple[tuple[int, float], ...] = ()  # motion and path parameter where it runs through a singularity
 
     def __len__(self) -> int:
         return len(self.leg)
@@ -119,7 +120,15 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
         tool_from_own=frames[leg],
         bent=bent,
         paths=tuple(path.taught.values()),
+        crossings=_crossings(choice, tracks, leg, segment[leg]),
     )
+
+
+def _crossings(choice: Choice, tracks: Tracks, leg: Index, segment: Index) -> tuple[tuple[int, float], ...]:
+    """Where the motions on legs (M,), along segments (M,), run through a singularity with the branches chosen."""
+    motion = {(int(segment[m]), int(choice.slot[leg[m]])): m for m in np.flatnonzero(segment >= 0).tolist()}
+    met = [(motion[c.segment, c.slot], c.s) for c in tracks.crossings if (c.segment, c.slot) in motion]
+    return tuple(sorted(met))
 
 
 def _reference(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes, segment: Index) -> Reference:

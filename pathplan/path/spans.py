@@ -62,6 +62,16 @@ class Spans:
         after = np.where(self.corner[i], density[self.after[i]], 0.0)
         return np.asarray((density[self.before[i]] + after) * self.length[i])
 
+    def crossings(self) -> list[tuple[int, float]]:
+        """Span and position in it of every singularity that a plain span runs through."""
+        found = []
+        for motion, s in self.motions.crossings:
+            for i in np.flatnonzero((self.before == motion) & ~self.corner).tolist():
+                at = s - float(self.offset[i])
+                if 0.0 < at < self.length[i]:
+                    found.append((i, at))
+        return found
+
     def programmed(self) -> Mask:
         """(S,) bool: the tool path is known from the geometry alone."""
         segment = self.motions.segment

@@ -2,7 +2,8 @@
 
 Each segment is sampled, all samples of all segments go through the inverse in one batch, and each branch
 is unwrapped from sample to sample by nearest turn. Where a joint moves too far between two samples to
-tell, samples are put in between; a joint that still jumps when they lie a ten-thousandth apart is at a singularity.
+tell, samples are put in between; a joint that still jumps when they lie two millionths apart is at a singularity. If
+the path truly meets it, the track goes on in the branch that is nearest there (`pathplan.path.crossing`).
 
 A branch follows a segment if at every sample the pose is reached, the smallest singular value of the Jacobian
 (dimensionless, see `pathplan.arm.kinematics`) is at least `SINGULAR`, and no jump remains. Position limits
@@ -12,13 +13,15 @@ depend on the turns a motion starts with, so they are judged by start state in `
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
+from typing import Any, NamedTuple
 
 import numpy as np
 
 from pathplan.arm import Arm
 from pathplan.arm.kinematics import smallest_singular_value
+from pathplan.path.crossing import CLEAR, Crossing, mirrored, passes
 from pathplan.path.geometry import Index, Mask, Segments
 from pathplan.path.joint import Array
 from pathplan.path.newton import solve_near
@@ -26,13 +29,13 @@ from pathplan.path.states import LIMIT_SLACK
 
 __all__ = ["SINGULAR", "Tracks", "track", "turns_between"]
 
-SINGULAR = 3e-4  # smallest singular value below which a pose counts as singular
+SINGULAR = 1e-5  # smallest singular value below which a pose counts as singular
 SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
 FEWEST = 6  # intervals of a segment
 _MOST_BENDS = 1000  # pieces of a curve up to which each gets an interval of its own
 JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
 _BETWEEN = 3  # samples put between two
-_ROUNDS = 5  # of putting them: 1e-4 apart in the end, where a joint can only move by JUMP below SINGULAR
+_ROUNDS = 8  # of putting them: 2e-6 apart in the end, where a joint can only move by JUMP below SINGULAR
 
 
 def turns_between(change: Array, revolute: Mask) -> Array:
@@ -56,6 +59,7 @@ class Tracks:
     reached: Mask
     first: Index  # (K,) first sample of each segment
     last: Index  # (K,)
+    crossings: tuple[Crossing, ...] = ()  # where tracks run through a singularity
 
     @cached_property
     def follows(self) -> Mask:
@@ -106,12 +110,61 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
         useful = np.insert(useful, at, new.valid & _has_turn_inside(arm, new.q), axis=0)
         looked_at = np.insert(looked_at, at, True)
         first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
+    samples = _Samples(segment, s, q, valid, looked_at)
+    places = passes(arm, poses, segment, s, q, useful, jumps)
+    crossings: list[Crossing] = []
+    for number, place in reversed(places):  # the last first: what a slot is called behind it then holds for all before
+        samples, order = _through(arm, poses, samples, number, place, revolute)
+        named = np.argsort(order)
+        crossings = [replace(c, slot=int(named[c.slot])) if c.segment == number else c for c in crossings]
+        crossings += [Crossing(number, place, b) for b in np.flatnonzero(order != np.arange(len(order))).tolist()]
+    if places:
+        segment, s, q, valid, looked_at = samples
+        first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
+        jumps = _jumps(q, valid, segment, revolute)
     last = np.append(first[1:], len(s)).astype(np.intp) - 1
     looked_at[first] = looked_at[last] = True
     regular = _regular(arm, q, valid, looked_at)
     jumped = np.zeros_like(valid)
     jumped[1:] = jumps
-    return Tracks(segment, s, _unwrapped(q, first, segment, revolute), valid & regular & ~jumped, valid, first, last)
+    q = _unwrapped(q, first, segment, revolute)
+    return Tracks(segment, s, q, valid & regular & ~jumped, valid, first, last, tuple(crossings))
+
+
+class _Samples(NamedTuple):
+    """What is known of the branches at T samples, as in `Tracks`."""
+
+    segment: Index
+    s: Array
+    q: Array
+    valid: Mask
+    looked_at: Mask
+
+
+def _through(
+    arm: Arm, poses: Callable[[Index, Array], Array], samples: _Samples, k: int, at: float, revolute: Mask
+) -> tuple[_Samples, Index]:
+    """The samples with two beside the singularity met at `at` on segment k, none nearer, and the slots behind it
+    changed about so that every track goes on smoothly; and the slot (B,) in which each does.
+    """
+    own = np.flatnonzero(samples.segment == k)
+    if not samples.s[own[0]] + CLEAR < at < samples.s[own[-1]] - CLEAR:
+        return samples, np.arange(samples.q.shape[1])  # at the very start or end nothing goes on
+    between = own[np.abs(samples.s[own] - at) <= CLEAR]
+    place = int(own[np.searchsorted(samples.s[own], at)]) if not len(between) else int(between[0])
+    beside = at + CLEAR * np.array([-1.0, 1.0])
+    new = arm.inverse_batch(poses(np.array([k, k]), beside))
+    valid = np.asarray(new.valid)
+    rows = _Samples(np.array([k, k]), beside, new.q, valid, np.ones(2, dtype=bool))
+    merged: list[Any] = [
+        np.insert(np.delete(old, between, axis=0), place, more, axis=0) for old, more in zip(samples, rows, strict=True)
+    ]
+    samples = _Samples(*merged)
+    order = mirrored(new.q[0], new.q[1], valid[0] & valid[1], revolute, JUMP)
+    behind = np.flatnonzero((samples.segment == k) & (samples.s > at))
+    samples.q[behind] = samples.q[behind][:, order]
+    samples.valid[behind] = samples.valid[behind][:, order]
+    return samples, order
 
 
 def _jumps(q: Array, valid: Mask, segment: Index, revolute: Mask) -> Mask:
