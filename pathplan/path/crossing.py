@@ -22,7 +22,7 @@ from pathplan.path.joint import Array
 __all__ = ["CLEAR", "Crossing", "least_singular", "mirrored", "passes"]
 
 CROSSED = 1e-7  # smallest singular value up to which a singularity is met: what the fit of the joints forgives
-CLEAR = 1e-4  # path parameter beside a crossing from which on the branches are told apart
+CLEAR = 1e-3  # path parameter beside a crossing from which on the branches are told apart
 _STEEPEST = 20.0  # no singular value changes faster by the path parameter, on a branch that runs on smoothly
 _GRID = np.linspace(0.0, 1.0, 9)
 _ROUNDS = 30
