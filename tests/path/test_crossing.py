@@ -69,7 +69,7 @@ def test_wrist_crossed_in_the_plane_of_the_arm(cast) -> None:
 
 
 def test_wrist_crossed_sideways(cast) -> None:
-    """The middle of the line is singular to rounding, and axis 5 alone changes sign: wrist positive becomes negative."""
+    """The middle of the line is singular to rounding; axis 5 changes sign: wrist positive becomes negative."""
     arm = cast.robot("glazer6")
     a, b = line_about(arm.forward(np.deg2rad([20, 10, 40, 90, 0, 0.0])), np.array([-0.05, 0.14, 0.02]))
     for start in arm.inverse(a):
@@ -158,7 +158,7 @@ def test_too_near_a_singularity(cast) -> None:
     arm = cast.robot("glazer6")
     a, b = passing(arm, 1e-6)
     for start in arm.inverse(a):
-        with pytest.raises(UnreachableError, match="a wrist singularity|its limit") as caught:
+        with pytest.raises(UnreachableError, match=r"a wrist singularity|its limit") as caught:
             follow(cast, arm, start, b)
         if "singular" in caught.value.data:
             assert caught.value.data["singular"]["kind"] == "wrist"
