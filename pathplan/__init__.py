@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from pathplan.export import read_table, write_table
     from pathplan.path import JointPath
     from pathplan.planning import Plan, plan
+    from pathplan.remedies import find_remedies
     from pathplan.retiming import retime
     from pathplan.table import JointTable
     from pathplan.task import Task, load_task
@@ -38,6 +39,7 @@ _HOMES = {
     "Timing": "timing",
     "UnreachableError": "errors",
     "audit": "auditing",
+    "find_remedies": "remedies",
     "load_arm": "arm",
     "load_task": "task",
     "lower_bound": "timing",
@@ -61,6 +63,7 @@ __all__ = [
     "Timing",
     "UnreachableError",
     "audit",
+    "find_remedies",
     "load_arm",
     "load_task",
     "lower_bound",

@@ -15,7 +15,17 @@ if TYPE_CHECKING:
     from pathplan.report.outputs import Writing
     from pathplan.task import Task
 
-__all__ = ["LONGEST_PERIOD", "judging", "line_audit", "quantity", "refused", "retimed", "speed_cap", "writing"]
+__all__ = [
+    "LONGEST_PERIOD",
+    "judging",
+    "line_audit",
+    "quantity",
+    "refused",
+    "remedies",
+    "retimed",
+    "speed_cap",
+    "writing",
+]
 
 SLOWEST = 1e-5  # m/s, as in task files
 REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
@@ -69,6 +79,16 @@ def cycle(args: Namespace) -> float | None:
     if value is not None and not CYCLES[0] <= value <= CYCLES[1]:
         raise refused("--cycle", "a time from 50 us to 1 s", args.cycle)
     return value
+
+
+def remedies(args: Namespace) -> float:
+    """How long to search for remedies of a refused task, s. Raises InputError."""
+    from pathplan.remedies.find import SECONDS
+
+    value = quantity(args.remedies, "time", "--remedies")
+    if value is not None and value < 0:
+        raise refused("--remedies", 'a time such as "60 s", or "0 s" for no search', args.remedies)
+    return SECONDS if value is None else value
 
 
 def judging(args: Namespace) -> Judging:

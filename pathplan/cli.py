@@ -16,7 +16,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn, TextIO
 
 from pathplan import arguments
-from pathplan.errors import InputError, PathplanError
+from pathplan.errors import InputError, LimitError, PathplanError, UnreachableError
 
 if TYPE_CHECKING:
     from pathplan.planning import Plan
@@ -50,7 +50,8 @@ examples:
 PLAN = """\
 Plan a task: path, branch, near time-optimal timing within every joint's limits, rows at the cycle.
 Writes TASK's name + .csv into the current folder, and the audit beside it (.audit.json).
-A plan that breaks a limit writes its audit but no table."""
+A plan that breaks a limit writes its audit but no table. Where a step can't be followed, the nearest
+changes that would make it work are searched for, each planned again."""
 PLAN_EXAMPLES = """\
 examples:
   pathplan plan examples/glazer6-pick-and-place.toml
@@ -61,6 +62,8 @@ examples:
       the whole motion at half speed, as two kinds of file
   pathplan plan pick.toml --no-table --json
       a dry run for scripts: one JSON document, nothing written
+  pathplan plan pick.toml --remedies "60 s"
+      if a step is refused, take a minute to find what would make it work
 
 """
 RETIME = """\
@@ -179,6 +182,11 @@ def _parser() -> argparse.ArgumentParser:
     plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
     plan.add_argument(
         "--savings", action="store_true", help="what would buy time, each change planned again: takes that much longer"
+    )
+    plan.add_argument(
+        "--remedies",
+        metavar="TIME",
+        help='how long to search for what would make a refused task work (default "10 s"; "0 s": not at all)',
     )
     _planning_options(plan)
     _writing_options(plan)
@@ -312,7 +320,15 @@ def _run_plan(args: argparse.Namespace) -> int:
     if args.no_table and args.output:
         raise InputError("argument -o: not allowed with argument --no-table (see pathplan plan --help)")
     names = args.output or [f"{Path(args.file).stem}.csv"]
-    return _plan_and_write(args, [] if args.no_table else names)
+    from pathplan.refused import show_remedies
+
+    seconds, task = arguments.remedies(args), _task(args)
+    try:
+        return _plan_and_write(args, [] if args.no_table else names, task)
+    except (UnreachableError, LimitError) as refusal:
+        _complain(str(refusal))
+        show_remedies(args, task, refusal, seconds, _print)
+        return refusal.exit_status
 
 
 def _run_audit(args: argparse.Namespace) -> int:

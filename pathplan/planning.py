@@ -288,7 +288,6 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
     -----
     Limits of velocity, acceleration and jerk, and caps on the tool, are planned for; torque is audited.
     """
-    from pathplan.path import follow_task
     from pathplan.timeline import lay_on_ticks
     from pathplan.timing.batch import time_batch
     from pathplan.timing.solve import BATCH
@@ -297,11 +296,8 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
         raise InputError(f"pace: expected more than 0 and at most 1, got {task.pace}")
     say = progress or (lambda what, done, total: None)
     say("path", 0, 1)
-    path = follow_task(task)
+    path, motions = follow_and_hold(task)
     say("path", 1, 1)
-    motions = [motion_of(stretch) for stretch in path.stretches]
-    for stretch, motion in zip(path.stretches, motions, strict=True):
-        _check_held(task, stretch, motion)
     timings: list[StretchTiming] = []
     bounds: list[Array] = [np.zeros(0)]
     say("timing", 0, len(motions))
@@ -313,6 +309,17 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
     paced = tuple(timing if task.pace == 1 else timing.slowed(task.pace) for timing in timings)
     parts = lay_on_ticks(path.sequence, paced, task.start, task.cycle)
     return Plan(task, path, paced, np.concatenate(bounds), parts)
+
+
+def follow_and_hold(task: Task) -> tuple[TaskPath, list[Motion]]:
+    """The path of a task and what limits its stretches. Raises as `plan` does, all but what timing may."""
+    from pathplan.path import follow_task
+
+    path = follow_task(task)
+    motions = [motion_of(stretch) for stretch in path.stretches]
+    for stretch, motion in zip(path.stretches, motions, strict=True):
+        _check_held(task, stretch, motion)
+    return path, motions
 
 
 def _check_held(task: Task, stretch: Stretch, motion: Motion) -> None:

@@ -1,7 +1,7 @@
 """Task to Cartesian path to joint path q(s)."""
 
 from pathplan.path.cartesian import CartesianPath, Finding, Leg, cartesian_path
-from pathplan.path.follow import follow_task
+from pathplan.path.follow import check_branches, follow_task
 from pathplan.path.joint import JointPath
 from pathplan.path.taskpath import Cap, Corner, StepPart, Stretch, TaskPath, Wait
 from pathplan.path.tool_motion import tool_derivatives
@@ -18,6 +18,7 @@ __all__ = [
     "TaskPath",
     "Wait",
     "cartesian_path",
+    "check_branches",
     "follow_task",
     "tool_derivatives",
 ]

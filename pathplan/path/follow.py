@@ -10,19 +10,21 @@ from pathplan.errors import PathplanError, UnreachableError
 from pathplan.path.assembly import assemble
 from pathplan.path.bounds import Crossing, first_crossing
 from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
-from pathplan.path.choice import Choice, candidate_states, choose, routes
+from pathplan.path.choice import Choice, Routes, candidate_states, choose, routes
 from pathplan.path.fit import Pieces, Trouble, fit
 from pathplan.path.geometry import poses_of
 from pathplan.path.hermite import derivatives_at
+from pathplan.path.joint import Array
 from pathplan.path.layout import Layout, lay_out
 from pathplan.path.motions import motions_of
 from pathplan.path.refusals import limit_text, motion_words, place_text, singularity
+from pathplan.path.states import States
 from pathplan.path.taskpath import TaskPath
-from pathplan.path.tracking import track
+from pathplan.path.tracking import Tracks, track
 from pathplan.task.model import Task
 from pathplan.task.places import check_positions
 
-__all__ = ["follow_task"]
+__all__ = ["check_branches", "follow_task"]
 
 _CHOICES = 40  # of branches, each found unusable only on the finished path
 
@@ -43,13 +45,7 @@ def follow_task(task: Task) -> TaskPath:
         A target is out of reach, or no branch can follow a step; the message names step, share, pose and
         reason, and `data` holds step, share, pose, joint, limit, singular, best.
     """
-    _check_given_joints(task)
-    path = cartesian_path(task)
-    frames = tool_frames(path)
-    states = candidate_states(path, frames)
-    rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
-    tracks = track(task.arm, path.segments, frames[rows])
-    ways = routes(path, states, tracks)
+    path, frames, states, tracks, ways = _tracked(task)
     barred_legs: set[tuple[int, int]] = set()
     barred_states: set[int] = set()
     refusal: PathplanError | None = None
@@ -76,6 +72,25 @@ def follow_task(task: Task) -> TaskPath:
         _bar(layout, choice, span, barred_legs, barred_states)
     assert refusal is not None
     raise refusal
+
+
+def check_branches(task: Task) -> None:
+    """The quick part of `follow_task`: raises what it raises where no branch can follow a step, as far as samples
+    along the steps tell. Corners, and limits between samples, are left aside.
+    """
+    path, _, states, tracks, ways = _tracked(task)
+    choose(path, states, tracks, ways)
+
+
+def _tracked(task: Task) -> tuple[CartesianPath, Array, States, Tracks, Routes]:
+    """The programmed geometry, tool frames of its legs, the states at its targets, and every branch along its steps."""
+    _check_given_joints(task)
+    path = cartesian_path(task)
+    frames = tool_frames(path)
+    states = candidate_states(path, frames)
+    rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
+    tracks = track(task.arm, path.segments, frames[rows])
+    return path, frames, states, tracks, routes(path, states, tracks)
 
 
 def _check_given_joints(task: Task) -> None:
@@ -141,4 +156,5 @@ def _refusal(
             f"{step.where}: no branch can follow this {motion_words(step)}: "
             f"the best gets to {share * 100:.1f} % of it, {place_text(pose)}, where {reason}"
         )
-    return UnreachableError(text, data={"step": step.index, "share": share, "pose": pose, "best": q, **data})
+    data = {"step": step.index, "share": share, "pose": pose, "best": q, "corner": bool(spans.corner[span]), **data}
+    return UnreachableError(text, data=data)

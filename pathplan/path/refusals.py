@@ -29,21 +29,27 @@ __all__ = [
     "no_branch_follows",
     "no_state_asked",
     "place_text",
+    "rpy_of",
     "singular_kind",
     "singularity",
 ]
 
 
-def place_text(pose: Array) -> str:
-    """A pose (4, 4) as people read it: mm, and deg of rpy about fixed x, y, z."""
+def rpy_of(pose: Array) -> Array:
+    """Turns (3,) about the fixed x, y, z that make the rotation of a pose (4, 4), rad."""
     r = pose[:3, :3]
     pitch = np.arctan2(-r[2, 0], np.hypot(r[0, 0], r[1, 0]))
     if np.hypot(r[0, 0], r[1, 0]) > 1e-9:
         roll, yaw = np.arctan2(r[2, 1], r[2, 2]), np.arctan2(r[1, 0], r[0, 0])
     else:  # x points straight up or down: only the difference of roll and yaw is defined
         roll, yaw = 0.0, np.arctan2(-r[0, 1], r[1, 1])
+    return np.array([roll, pitch, yaw])
+
+
+def place_text(pose: Array) -> str:
+    """A pose (4, 4) as people read it: mm, and deg of rpy about fixed x, y, z."""
     xyz = " ".join(f"{round(float(v) * 1e3, 1) + 0.0:.1f}" for v in pose[:3, 3])
-    rpy = " ".join(f"{round(float(np.rad2deg(v)), 1) + 0.0:.1f}" for v in (roll, pitch, yaw))
+    rpy = " ".join(f"{round(float(np.rad2deg(v)), 1) + 0.0:.1f}" for v in rpy_of(pose))
     return f"xyz {xyz} mm, rpy {rpy} deg"
 
 

@@ -105,6 +105,7 @@ class Step:
     target: Target | None = None  # None for a wait, and for an arc given by centre and angle
     via: Array | None = None  # (3,) a point of the arc in the base frame at rest (q-independent frames)
     centre: Array | None = None  # (3,) in the base frame
+    point_frame: str = "base"  # the frame in which via, or centre and axis, were given
     axis: Array | None = None  # (3,) unit, in the base frame
     angle: float | None = None  # rad, signed, about axis
     along: bool = False  # centre-and-angle arc: the tool turns with the arc (True) or keeps its orientation (False)

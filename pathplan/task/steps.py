@@ -84,8 +84,10 @@ def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) 
         raise table.error("configuration", "the target is a joint vector, which leaves nothing to choose")
     if motion != "joint":
         target = with_pose(target, places)
-    via = places.point(table, "via")[0] if motion == "arc" else None
-    return Step(**fields, target=target, via=via)
+    if motion != "arc":
+        return Step(**fields, target=target)
+    via, tie = places.point(table, "via")
+    return Step(**fields, target=target, via=via, point_frame=tie.frame)
 
 
 def step_to_start(motion: Motion, index: int, file: str, start: Array, places: Places, caps: Caps) -> Step:
@@ -221,7 +223,8 @@ def _centre_arc(table: Table, places: Places) -> dict[str, Any]:
         got = toml_text(table.data["angle"])
         raise table.error("angle", f"expected an angle other than zero up to 3600 deg either way, got {got}")
     axis = read_only(axis / np.linalg.norm(axis))
-    return {"centre": centre, "axis": axis, "angle": angle, "along": table.flag("tool_along", False)}
+    along = table.flag("tool_along", False)
+    return {"centre": centre, "axis": axis, "angle": angle, "along": along, "point_frame": tie.frame}
 
 
 def _shifted(table: Table, key: str, target: Target) -> Target:

@@ -1,0 +1,125 @@
+"""Remedies in the refused step itself: a joint step in its place, a smaller blend, a pose the arm serves, less load."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import replace
+
+import numpy as np
+
+from pathplan.path.cartesian import tool_of
+from pathplan.remedies.model import Remedy
+from pathplan.remedies.smallest import smallest
+from pathplan.remedies.trials import Trials
+from pathplan.remedies.words import rpy_text, step_text, xyz_text
+from pathplan.task.changed import with_payload, with_step
+from pathplan.task.model import Array, Blend, Task
+from pathplan.tomlfile import read_only
+from pathplan.units import format_quantity
+
+__all__ = ["joint_step", "less_load", "served_pose", "smaller_blend"]
+
+SHARES = 0.5 ** np.arange(1, 7)  # of a blend, tried in turn
+LEAST_LOAD = 0.05  # share of a payload's mass below which it is another payload
+
+
+def joint_step(trials: Trials) -> Iterator[Remedy]:
+    """A joint step in place of the line or arc."""
+    task, step = trials.task, trials.task.steps[trials.step]
+    if step.motion not in ("line", "arc") or step.target is None or trials.corner:
+        return
+    changed = with_step(
+        task, trials.step, motion="joint", via=None, centre=None, axis=None, angle=None, along=False, point_frame="base"
+    )
+    what = f"a joint step in place of the {step.motion}"
+    if trials.promises(changed, trials.step) and trials.follows(changed, trials.step):
+        found = trials.proven(
+            "motion", f"{step_text(task, trials.step)}: {what}", changed, {"motion": "joint"}, trials.step
+        )
+        if isinstance(found, Remedy):
+            yield found
+            return
+        what += f" (then {found})"
+    trials.tried.append(what)
+
+
+def smaller_blend(trials: Trials) -> Iterator[Remedy]:
+    """The largest half, quarter, ... of a blend whose corner can be followed, else a stop."""
+    task, step = trials.task, trials.task.steps[trials.step]
+    if not trials.corner or step.blend is None:
+        return
+    for share in (*SHARES, 0.0):
+        blend = _blend(step.blend, float(share))
+        changed = with_step(task, trials.step, blend=blend)
+        if not trials.follows(changed, trials.step):
+            continue
+        text = f"{step_text(task, trials.step)}: " + (f'blend = "{blend.text}"' if blend else "no blend: a stop point")
+        value = None if blend is None else blend.value
+        found = trials.proven("blend", text, changed, {"blend": value, "kind": step.blend.kind}, trials.step)
+        if isinstance(found, Remedy):
+            yield found
+            return
+    trials.tried.append(f"{step_text(task, trials.step)}: smaller blends, and none")
+
+
+def _blend(blend: Blend, share: float) -> Blend | None:
+    if share == 0.0:
+        return None
+    dimension = {"length": "length", "angle": "angle", "share": "ratio"}[blend.kind]
+    return replace(blend, value=blend.value * share, text=format_quantity(blend.value * share, dimension))
+
+
+def served_pose(trials: Trials) -> Iterator[Remedy]:
+    """The nearest pose that the arm does serve, in place of a target tilted or turned as it can't be."""
+    task, data, step = trials.task, trials.error.data, trials.task.steps[trials.step]
+    if "angle_error" not in data or len(task.arm.tool_joints) >= 6 or step.target is None:
+        return
+    if step.target.frame_from_tool is None or step.curve is not None:
+        return
+    swap = np.linalg.solve(task.arm.tool.flange_from_tool, tool_of(task.arm, step.tool).flange_from_tool)
+    pose = task.arm.forward(np.nan_to_num(data["best"])) @ swap
+    target = replace(step.target, frame_from_tool=_in_frame(task, step.target.frame, pose))
+    changed = with_step(task, trials.step, target=target)
+    what = f"{step_text(task, trials.step)}: the nearest pose that {task.arm.name} serves"
+    if trials.follows(changed, trials.step):
+        assert target.frame_from_tool is not None
+        where = f"{xyz_text(target.frame_from_tool)}, {rpy_text(target.frame_from_tool)} in frame {target.frame}"
+        found = trials.proven(
+            "target", f"{what}, {where}", changed, {"pose": target.frame_from_tool, "frame": target.frame}, trials.step
+        )
+        if isinstance(found, Remedy):
+            yield found
+            return
+    trials.tried.append(what)
+
+
+def _in_frame(task: Task, frame: str, base_from_tool: Array) -> Array:
+    return read_only(np.asarray(np.linalg.solve(task.base_from_frame(frame), base_from_tool), dtype=float))
+
+
+def less_load(trials: Trials) -> Iterator[Remedy]:
+    """A lighter payload, where a pose can't be held with the one that is carried."""
+    task, name = trials.task, trials.task.steps[trials.step].payload
+    if not trials.held or name is None:
+        return
+    carried = task.arm.payloads.get(name, task.arm.payload)
+    if carried is None or carried.mass <= 0.0:
+        return
+
+    def lighter(less: float) -> Task:
+        return with_payload(task, name, 1.0 - less)
+
+    def works(less: float) -> bool:
+        return less < 1.0 and trials.follows(lighter(less), trials.step)
+
+    most = 1.0 - LEAST_LOAD
+    less = smallest(works, works, [0.05, 0.1, 0.2, 0.4, 0.6, 0.8, most], 0.01)
+    if less is not None and less <= most:
+        mass = carried.mass * (1.0 - less)
+        now, then = format_quantity(carried.mass, "mass"), format_quantity(mass, "mass", 3)
+        text = f"payload {name} of {then} in place of {now}"
+        found = trials.proven("payload", text, lighter(less), {"payload": name, "mass": mass})
+        if isinstance(found, Remedy):
+            yield found
+            return
+    trials.tried.append(f"payload {name} down to {LEAST_LOAD:.0%} of its mass")
