@@ -12,7 +12,7 @@ import pathplan
 ROOT = Path(__file__).parents[1]
 DOCUMENTED = {
     "functions": [
-        *("audit", "load_arm", "load_task", "lower_bound", "plan"),
+        *("audit", "find_remedies", "load_arm", "load_task", "lower_bound", "plan"),
         *("read_table", "retime", "schedule", "write_table"),
     ],
     "classes": ["Arm", "Audit", "JointPath", "JointTable", "Plan", "Task", "Timing"],

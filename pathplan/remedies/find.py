@@ -65,7 +65,7 @@ def find_remedies(
         raise InputError("remedies: expected the UnreachableError or LimitError of a step with which plan refused it")
     say = progress or (lambda what, done, total: None)
     say("remedies", 0, len(KINDS))
-    trials = Trials(task, error, time.monotonic() + seconds, say)
+    trials = Trials(task, error, time.monotonic() + seconds)
     found: list[Remedy] = []
     for done, kind in enumerate(KINDS, start=1):
         try:

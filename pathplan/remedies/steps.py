@@ -20,6 +20,8 @@ from pathplan.units import format_quantity
 __all__ = ["joint_step", "less_load", "served_pose", "smaller_blend"]
 
 SHARES = 0.5 ** np.arange(1, 7)  # of a blend, tried in turn
+FARTHEST = 0.5  # of the arm's characteristic length: a pose further off is another one
+MOST_TILT = np.pi / 4  # rad
 LEAST_LOAD = 0.05  # share of a payload's mass below which it is another payload
 
 
@@ -75,6 +77,8 @@ def served_pose(trials: Trials) -> Iterator[Remedy]:
     if "angle_error" not in data or len(task.arm.tool_joints) >= 6 or step.target is None:
         return
     if step.target.frame_from_tool is None or step.curve is not None:
+        return
+    if data["position_error"] > FARTHEST * task.arm.length or data["angle_error"] > MOST_TILT:
         return
     swap = np.linalg.solve(task.arm.tool.flange_from_tool, tool_of(task.arm, step.tool).flange_from_tool)
     pose = task.arm.forward(np.nan_to_num(data["best"])) @ swap

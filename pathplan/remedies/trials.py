@@ -30,7 +30,6 @@ class Trials:
     task: Task
     error: PathplanError
     deadline: float
-    say: Callable[[str, int, int], None]
     tried: list[str] = field(default_factory=list)
     finished: bool = True
 
