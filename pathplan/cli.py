@@ -50,8 +50,8 @@ examples:
 PLAN = """\
 Plan a task: path, branch, near time-optimal timing within every joint's limits, rows at the cycle.
 Writes TASK's name + .csv into the current folder, and the audit beside it (.audit.json).
-A plan that breaks a limit writes its audit but no table. Where a step can't be followed, the nearest
-changes that would make it work are searched for, each planned again."""
+A plan that breaks a limit writes its audit but no table. Where a step can't be followed, the
+nearest changes that would make it work are searched for, each planned again."""
 PLAN_EXAMPLES = """\
 examples:
   pathplan plan examples/glazer6-pick-and-place.toml

@@ -365,10 +365,30 @@ def test_failing_plan_in_audit_and_export(folder, run):
 
 def test_what_cannot_be_followed_is_one_line_and_status_1(folder, run):
     (folder / "far.toml").write_text(CROSS.replace("[900, 500, 700]", "[900, 500, 100]"))
-    status, out, err = run("plan", "far.toml")
-    assert (status, out) == (1, "")
-    assert err == ["pathplan: far.toml: step[2]: loader4: the pose needs z at -970 mm, limit -600 mm"]
+    why = ["pathplan: far.toml: step[2]: loader4: the pose needs z at -970 mm, limit -600 mm"]
+    for command in (["plan", "far.toml", "--quiet"], ["plan", "far.toml", "--remedies", "0 s"], ["export", "far.toml"]):
+        more = ["-o", "a.csv"] if command[0] == "export" else []
+        assert run(*command, *more) == (1, "", why)
     assert made(folder) == {"far.toml"}
+
+
+def test_a_refused_plan_says_what_would_work(folder, run):
+    """The target is 370 mm too low, which the limit tells."""
+    (folder / "far.toml").write_text(CROSS.replace("[900, 500, 700]", "[900, 500, 100]"))
+    status, out, (line,) = run("plan", "far.toml", "--remedies", "600 s")
+    assert status == 1 and line.startswith("pathplan: far.toml: step[2]: ")
+    remedy = "move the target of step 2 (down) by 370 mm along z: xyz = [900, 500, 470]"
+    heading, *found = out.splitlines()
+    assert heading == "would work, each change by itself and planned again:"
+    assert any(text.startswith(f"- {remedy} (cycle time ") for text in found)
+    document = json.loads(run("plan", "far.toml", "--json", "--remedies", "600 s")[1])
+    assert document["refused"]["step"] == 2 and document["refused"]["message"] == line.removeprefix("pathplan: ")
+    assert document["remedies_finished"] is True
+    (one,) = [found for found in document["remedies"] if found["text"] == remedy]
+    assert one["what"] == "target" and one["step"] == 2 and one["changes"]["shift"] == pytest.approx(0.37)
+    assert run("plan", "far.toml", "--remedies", "soon")[2] == [
+        'pathplan: --remedies: expected a time such as "0.2 s", got "soon"'
+    ]
 
 
 # audit and export of tables
