@@ -78,7 +78,8 @@ examples:
 """
 AUDIT = """\
 Judge a motion against the limits of its arm: position, velocity, acceleration, jerk and torque of
-every joint. A task (.toml) is planned first; a table (.csv, .jsonl, .npz, .parquet) is read, of any
+every joint. A task (.toml) is planned first, and the branches that reach its targets are shown, also
+where it is refused; a table (.csv, .jsonl, .npz, .parquet) is read, of any
 source if its columns can be told; a single line needs no file. Nothing is written."""
 AUDIT_EXAMPLES = """\
 examples:
@@ -335,12 +336,25 @@ def _run_audit(args: argparse.Namespace) -> int:
     if args.file is None or args.start is not None or args.goal is not None:
         return _audit_line(args)
     if not _is_table(args):
-        return _plan_and_write(args, [])
+        return _audit_task(args)
     judged = _judged(args)
     if judged.arm is None:
         raise InputError(judged.notes[0])
     _show_judged(args, judged, None)
     return _status(args.file, judged.breaks, "")
+
+
+def _audit_task(args: argparse.Namespace) -> int:
+    """The plan of a task, judged, and the branches at its targets; these also where it is refused."""
+    from pathplan.refused import show_targets
+
+    task = _task(args)
+    try:
+        return _plan_and_write(args, [], task)
+    except (UnreachableError, LimitError) as refusal:
+        _complain(str(refusal))
+        show_targets(args, task, refusal, _print)
+        return refusal.exit_status
 
 
 def _audit_line(args: argparse.Namespace) -> int:
@@ -417,10 +431,12 @@ def _task(args: argparse.Namespace) -> Task:
 def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task | None = None) -> int:
     """Plan, audit, write tables and the audit beside the first; without names, nothing. Default: the task named."""
     import pathplan
+    from pathplan.path import target_branches
     from pathplan.report import outputs as files
     from pathplan.report.plan_data import plan_as_dict
     from pathplan.report.progress import Progress
     from pathplan.report.savings_screen import savings_as_dict, savings_screen
+    from pathplan.report.targets_screen import targets_as_dict
     from pathplan.report.written import written_as_dict
 
     writing, task = arguments.writing(args), _task(args) if task is None else task
@@ -445,6 +461,8 @@ def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task |
             tell("savings", 0, 1)
             savings = plan.savings()
             document["savings"] = savings_as_dict(savings)
+        if args.run is _run_audit and args.json:
+            document["targets"] = targets_as_dict(task, target_branches(task, plan.path))
         if audit_file is not None:
             files.write_jobs(jobs, writing, tell, audit=(audit_file, document))
     if args.json:
@@ -482,13 +500,15 @@ def _check_rows(plan: Plan, file: str) -> None:
 
 
 def _plan_text(args: argparse.Namespace, plan: Plan, jobs: Sequence[Job], audit_file: Path | None) -> str:
+    from pathplan.path import target_branches
     from pathplan.report.plan_screen import plan_headline, plan_screen
     from pathplan.report.screen import audit_screen
+    from pathplan.report.targets_screen import targets_screen
     from pathplan.report.terminal import signs_for
     from pathplan.report.written import pieces_note, written_lines
 
     if args.run is _run_audit:
-        return audit_screen(plan.audit)
+        return audit_screen(plan.audit, targets_screen(plan.task, target_branches(plan.task, plan.path)))
     lines = written_lines(jobs, audit_file)
     if getattr(args, "split", None) and jobs:
         lines += [note] if (note := pieces_note([Path(name) for name in args.output], len(plan.timings))) else []

@@ -3,6 +3,7 @@
 from pathplan.path.cartesian import CartesianPath, Finding, Leg, cartesian_path
 from pathplan.path.follow import check_branches, follow_task
 from pathplan.path.joint import JointPath
+from pathplan.path.targets import TargetBranches, target_branches
 from pathplan.path.taskpath import Cap, Corner, StepPart, Stretch, TaskPath, Wait
 from pathplan.path.tool_motion import tool_derivatives
 
@@ -15,10 +16,12 @@ __all__ = [
     "Leg",
     "StepPart",
     "Stretch",
+    "TargetBranches",
     "TaskPath",
     "Wait",
     "cartesian_path",
     "check_branches",
     "follow_task",
+    "target_branches",
     "tool_derivatives",
 ]

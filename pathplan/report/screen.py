@@ -24,12 +24,15 @@ CAUTIONS = (
 QUANTITIES = ("velocity", "acceleration", "jerk", "torque")
 
 
-def audit_screen(audit: Audit) -> str:
+def audit_screen(audit: Audit, targets: Iterable[str] = ()) -> str:
     """The audit in lines of at most 100 columns, without a line end after the last.
 
-    Shares in percent, the largest of each joint marked *, what passes its limit marked !.
+    Shares in percent, the largest of each joint marked *, what passes its limit marked !. `targets`: lines about the
+    task's targets, before the cautions.
     """
-    return "\n\n".join("\n".join(block) for block in audit_blocks(audit).values() if block)
+    blocks = audit_blocks(audit)
+    cautions = blocks.pop("cautions")
+    return "\n\n".join("\n".join(block) for block in (*blocks.values(), list(targets), cautions) if block)
 
 
 def audit_blocks(audit: Audit) -> dict[str, list[str]]:
