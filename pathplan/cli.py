@@ -78,9 +78,9 @@ examples:
 """
 AUDIT = """\
 Judge a motion against the limits of its arm: position, velocity, acceleration, jerk and torque of
-every joint. A task (.toml) is planned first, and the branches that reach its targets are shown, also
-where it is refused; a table (.csv, .jsonl, .npz, .parquet) is read, of any
-source if its columns can be told; a single line needs no file. Nothing is written."""
+every joint. A task (.toml) is planned first, and the branches that reach its targets are shown,
+also where it is refused; a table (.csv, .jsonl, .npz, .parquet) is read, of any source if its
+columns can be told; a single line needs no file. Nothing is written."""
 AUDIT_EXAMPLES = """\
 examples:
   pathplan audit pick.toml
