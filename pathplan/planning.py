@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property, partial
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -20,6 +21,7 @@ if TYPE_CHECKING:
     from pathplan.path.taskpath import Stretch, TaskPath
     from pathplan.savings import Saving
     from pathplan.timeline import Part
+    from pathplan.timing.clock import Clock
     from pathplan.timing.motion import Motion
     from pathplan.timing.stretch import StretchTiming
     from pathplan.timing.torque import TorqueLimits
@@ -29,6 +31,7 @@ Progress = Callable[[str, int, int], None]  # what is being done, how many are d
 
 _DENSER = 20  # the trajectory is audited at this many times the rows' rate
 _CHUNK = 16384
+_GROUP = 16  # stretches that the audit looks at in one piece of work
 _NO_LIMIT = 1e6  # a row without a limit of some kind gets this many times the arm's largest
 
 
@@ -115,10 +118,29 @@ class Plan:
     @cached_property
     def audit(self) -> Audit:
         """The audit of the whole table with this plan behind it."""
+        return self._judged(_silent)
+
+    def judge(self, *, progress: Progress | None = None, jobs: int = 1) -> Audit:
+        """The `audit`, telling how far it has come, found by up to `jobs` processes."""
+        if "audit" not in self.__dict__:
+            say = progress or _silent
+            self.__dict__["_evidence"] = self._gathered(say, jobs)
+            self.__dict__["audit"] = self._judged(say)
+        return self.audit
+
+    def _judged(self, say: Progress) -> Audit:
         from pathplan.auditing import audit
 
         table = self.__dict__.get("table")
-        return audit(self.rows() if table is None else table, self.task.arm, plan=self)
+        return audit(self._told(say) if table is None else table, self.task.arm, plan=self)
+
+    def _told(self, say: Progress) -> Iterator[JointTable]:
+        """The rows as the audit takes them, which is the second half of its work."""
+        done, total = 0, self.ticks + 1
+        for piece in self.rows():
+            say("audit", total + done, 2 * total)
+            yield piece
+            done += len(piece)
 
     def savings(self, *, top: int = 5) -> tuple[Saving, ...]:
         """What would buy time: see `pathplan.savings.find_savings`. Plans the task again for every change it tries."""
@@ -173,17 +195,38 @@ class Plan:
 
     def evidence(self) -> Evidence:
         """Path deviation at the rows and midway between them, and the trajectory's peaks 20 times denser."""
+        return self._evidence
+
+    @cached_property
+    def _evidence(self) -> Evidence:
+        return self._gathered(_silent, 1)
+
+    def _gathered(self, say: Progress, jobs: int) -> Evidence:
         from pathplan.auditing import Evidence, worse_deviation, worse_peaks
+        from pathplan.workers import work_through
+
+        moving = [part for part in self.parts if part.timing is not None]
+        groups = [moving[k : k + _GROUP] for k in range(0, len(moving), _GROUP)]
+        say("audit", 0, 1)
+        at_rows = midway = None
+        peaks: tuple[Any, ...] = ()
+        for one, between, dense in work_through(
+            self._evidence_of, groups, jobs, lambda done: say("audit", done, 2 * len(groups))
+        ):
+            at_rows, midway = worse_deviation(at_rows, one), worse_deviation(midway, between)
+            peaks = worse_peaks(peaks, dense)
+        return Evidence(at_rows, midway, peaks, self._load_changes())
+
+    def _evidence_of(self, parts: Sequence[Part]) -> tuple[Any, Any, tuple[Any, ...]]:
+        from pathplan.auditing import worse_deviation, worse_peaks
 
         at_rows = midway = None
         peaks: tuple[Any, ...] = ()
-        for part in self.parts:
-            if part.timing is None:
-                continue
+        for part in parts:
             at_rows = worse_deviation(at_rows, self._deviation(part, 0.0))
             midway = worse_deviation(midway, self._deviation(part, 0.5))
             peaks = worse_peaks(peaks, self._dense_peaks(part))
-        return Evidence(at_rows, midway, peaks, self._load_changes())
+        return at_rows, midway, peaks
 
     @cached_property
     def _arms(self) -> dict[tuple[str, str | None], Arm]:
@@ -267,7 +310,7 @@ class Plan:
         return worst
 
 
-def plan(task: Task, *, progress: Progress | None = None) -> Plan:
+def plan(task: Task, *, progress: Progress | None = None, jobs: int = 1) -> Plan:
     """Plan a task: path, branches, near time-optimal timing, rows on the controller's cycle.
 
     Parameters
@@ -276,6 +319,9 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
         As `load_task` gives it. `task.speed` caps the tool everywhere, `task.pace` slows the whole trajectory.
     progress
         Called with what is being done, how many parts of it are done, and of how many.
+    jobs
+        Processes that may time stretches at once; the plan is the same with any number. They are forked, so leave
+        it at one in a process with threads of its own that compute.
 
     Raises
     ------
@@ -286,36 +332,50 @@ def plan(task: Task, *, progress: Progress | None = None) -> Plan:
 
     Notes
     -----
-    Limits of velocity, acceleration and jerk, and caps on the tool, are planned for; torque is audited.
+    Limits of velocity, acceleration, jerk and torque, and caps on the tool, are planned for; continuous torque is
+    audited.
     """
     from pathplan.timeline import lay_on_ticks
-    from pathplan.timing.batch import time_batch
     from pathplan.timing.solve import BATCH
+    from pathplan.timing.stretch import StretchTiming
+    from pathplan.workers import work_through
 
     if not 0 < task.pace <= 1:
         raise InputError(f"pace: expected more than 0 and at most 1, got {task.pace}")
-    say = progress or (lambda what, done, total: None)
-    say("path", 0, 1)
-    path, motions = follow_and_hold(task)
-    say("path", 1, 1)
-    timings: list[StretchTiming] = []
-    bounds: list[Array] = [np.zeros(0)]
-    say("timing", 0, len(motions))
-    for first in range(0, len(motions), BATCH):
-        timed = time_batch(motions[first : first + BATCH])
-        timings.extend(one.timing for one in timed)
-        bounds.append(np.array([one.bound for one in timed]))
-        say("timing", len(timings), len(motions))
+    say = progress or _silent
+    path, motions = follow_and_hold(task, say)
+    borders = np.linspace(0, len(motions), -(-len(motions) // BATCH) + 1).round().astype(int)
+    batches = [motions[low:high] for low, high in pairwise(borders)]
+    say("timing", 0, len(batches))
+    timed = work_through(_timed, batches, jobs, lambda done: say("timing", done, len(batches)))
+    parts = [found for batch in timed for found in batch]
+    timings = [
+        StretchTiming(motion, clock, tau, b, slope)
+        for motion, (clock, tau, b, slope, _) in zip(motions, parts, strict=True)
+    ]
+    bounds = np.array([found[-1] for found in parts], dtype=np.float64)
     paced = tuple(timing if task.pace == 1 else timing.slowed(task.pace) for timing in timings)
-    parts = lay_on_ticks(path.sequence, paced, task.start, task.cycle)
-    return Plan(task, path, paced, np.concatenate(bounds), parts)
+    return Plan(task, path, paced, bounds, lay_on_ticks(path.sequence, paced, task.start, task.cycle))
 
 
-def follow_and_hold(task: Task) -> tuple[TaskPath, list[Motion]]:
+def _timed(motions: Sequence[Motion]) -> list[tuple[Clock, Array, Array, Array, float]]:
+    """Clock, nodes, values and slopes of each timing, and its bound: all of it but the motion, which needs no copy."""
+    from pathplan.timing.batch import time_batch
+
+    return [
+        (one.timing.clock, one.timing.tau, one.timing.b, one.timing.slope, one.bound) for one in time_batch(motions)
+    ]
+
+
+def _silent(what: str, done: int, total: int) -> None:
+    """No progress is told."""
+
+
+def follow_and_hold(task: Task, progress: Progress | None = None) -> tuple[TaskPath, list[Motion]]:
     """The path of a task and what limits its stretches. Raises as `plan` does, all but what timing may."""
     from pathplan.path import follow_task
 
-    path = follow_task(task)
+    path = follow_task(task, progress)
     motions = [motion_of(stretch) for stretch in path.stretches]
     for stretch, motion in zip(path.stretches, motions, strict=True):
         _check_held(task, stretch, motion)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 
 import numpy as np
 
@@ -26,10 +26,13 @@ from pathplan.task.places import check_positions
 
 __all__ = ["check_branches", "follow_task"]
 
+Progress = Callable[[str, int, int], None]
+
+_PARTS = 6  # of the work, taking about the same time each, that progress is told of
 _CHOICES = 40  # of branches, each found unusable only on the finished path
 
 
-def follow_task(task: Task) -> TaskPath:
+def follow_task(task: Task, progress: Progress | None = None) -> TaskPath:
     """The joint path of a task: lines and arcs followed to 1 um and 1 urad, corners within their regions,
     limits kept.
 
@@ -45,7 +48,8 @@ def follow_task(task: Task) -> TaskPath:
         A target is out of reach, or no branch can follow a step; the message names step, share, pose and
         reason, and `data` holds step, share, pose, joint, limit, singular, best.
     """
-    path, frames, states, tracks, ways = _tracked(task)
+    say = progress or _silent
+    path, frames, states, tracks, ways = _tracked(task, say)
     barred_legs: set[tuple[int, int]] = set()
     barred_states: set[int] = set()
     refusal: PathplanError | None = None
@@ -56,7 +60,9 @@ def follow_task(task: Task) -> TaskPath:
             if refusal is not None:
                 break
             raise
+        say("path", 3, _PARTS)
         layout = lay_out(path, motions_of(path, choice, tracks, ways, frames))
+        say("path", 4, _PARTS)
         try:
             pieces = fit(layout.spans)
             crossing = first_crossing(pieces, task.arm.limits)
@@ -65,6 +71,7 @@ def follow_task(task: Task) -> TaskPath:
             span = trouble.span
         else:
             if crossing is None:
+                say("path", 5, _PARTS)
                 return assemble(path, choice, layout, pieces)
             found = _crossing_words(path, layout, pieces, crossing)
             span = int(pieces.span[crossing.piece])
@@ -78,19 +85,27 @@ def check_branches(task: Task) -> None:
     """The quick part of `follow_task`: raises what it raises where no branch can follow a step, as far as samples
     along the steps tell. Corners, and limits between samples, are left aside.
     """
-    path, _, states, tracks, ways = _tracked(task)
+    path, _, states, tracks, ways = _tracked(task, _silent)
     choose(path, states, tracks, ways)
 
 
-def _tracked(task: Task) -> tuple[CartesianPath, Array, States, Tracks, Routes]:
+def _tracked(task: Task, say: Progress) -> tuple[CartesianPath, Array, States, Tracks, Routes]:
     """The programmed geometry, tool frames of its legs, the states at its targets, and every branch along its steps."""
+    say("path", 0, _PARTS)
     _check_given_joints(task)
     path = cartesian_path(task)
+    say("path", 1, _PARTS)
     frames = tool_frames(path)
     states = candidate_states(path, frames)
     rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
     tracks = track(task.arm, path.segments, frames[rows])
-    return path, frames, states, tracks, routes(path, states, tracks)
+    ways = routes(path, states, tracks)
+    say("path", 2, _PARTS)
+    return path, frames, states, tracks, ways
+
+
+def _silent(what: str, done: int, total: int) -> None:
+    """No progress is told."""
 
 
 def _check_given_joints(task: Task) -> None:

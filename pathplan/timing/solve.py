@@ -38,7 +38,7 @@ _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of 
 _FEWEST_CELLS = 12
 _CELLS_PER_WINDOW = 3.0
 _SHORTEST_WINDOW = 1 / 30  # of the coarse duration: a finer clock only copies the noise of the coarse timing
-BATCH = 64  # stretches solved together
+BATCH = 16  # stretches solved together: more take more memory and no less time
 
 
 def time_motions(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | None = None) -> list[StretchTiming]:
