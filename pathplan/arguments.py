@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "LONGEST_PERIOD",
+    "jobs",
     "judging",
     "line_audit",
     "quantity",
@@ -31,6 +32,7 @@ SLOWEST = 1e-5  # m/s, as in task files
 REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
 LONGEST_PERIOD = 10.0  # s
 LINE_CYCLE = 0.004  # s, where nothing else is said
+MOST_JOBS = 256
 READING = ("time", "columns", "unit")
 
 
@@ -81,6 +83,7 @@ def cycle(args: Namespace) -> float | None:
     return value
 
 
+<<<<<<< HEAD
 def remedies(args: Namespace) -> float:
     """How long to search for remedies of a refused task, s. Raises InputError."""
     from pathplan.remedies.find import SECONDS
@@ -89,6 +92,17 @@ def remedies(args: Namespace) -> float:
     if value is not None and value < 0:
         raise refused("--remedies", 'a time such as "60 s", or "0 s" for no search', args.remedies)
     return SECONDS if value is None else value
+=======
+def jobs(args: Namespace) -> int:
+    """How many processes may work at once. Raises InputError."""
+    from pathplan.workers import cores
+
+    if args.jobs is None:
+        return cores()
+    if not args.jobs.isdecimal() or not 1 <= int(args.jobs[:9]) <= MOST_JOBS:
+        raise refused("--jobs", f"a number of processes from 1 to {MOST_JOBS}", args.jobs)
+    return int(args.jobs)
+>>>>>>> 8c8195f (Several tasks in one call, by several processes, with a summary; one way for one task and many)
 
 
 def judging(args: Namespace) -> Judging:

@@ -7,26 +7,23 @@ input; 70 an error of our own; 130 ended by Ctrl-C. Errors are one line each on 
 from __future__ import annotations
 
 import argparse
-import contextlib
-import dataclasses
-import os
 import sys
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, NoReturn, TextIO
+from typing import TYPE_CHECKING, Any, NoReturn
 
 from pathplan import arguments
-from pathplan.errors import InputError, LimitError, PathplanError, UnreachableError
+from pathplan.errors import InputError, LimitError, UnreachableError
+from pathplan.streams import complain, complaints_of, flush, json_text, show, version
+from pathplan.task_runs import check_rows, of_file, run_task, run_tasks, task_of
 
 if TYPE_CHECKING:
-    from pathplan.planning import Plan
     from pathplan.report.judged import Judged
     from pathplan.report.outputs import Job
-    from pathplan.task import Task
 
 __all__ = ["main"]
 
-OUR_ERROR, INTERRUPTED = 70, 130  # sysexits.h; 128 + SIGINT, as shells count
+INTERRUPTED = 130  # 128 + SIGINT, as shells count
 
 ABOUT = """\
 From tool poses to an audited, synchronized joint table at the controller's cycle."""
@@ -51,7 +48,9 @@ PLAN = """\
 Plan a task: path, branch, near time-optimal timing within every joint's limits, rows at the cycle.
 Writes TASK's name + .csv into the current folder, and the audit beside it (.audit.json).
 A plan that breaks a limit writes its audit but no table. Where a step can't be followed, the
-nearest changes that would make it work are searched for, each planned again."""
+nearest changes that would make it work are searched for, each planned again. Of several tasks each
+is written as it is alone, whatever becomes of the others; a table sums them up, and the worst exit
+status counts."""
 PLAN_EXAMPLES = """\
 examples:
   pathplan plan examples/glazer6-pick-and-place.toml
@@ -64,6 +63,8 @@ examples:
       a dry run for scripts: one JSON document, nothing written
   pathplan plan pick.toml --remedies "60 s"
       if a step is refused, take a minute to find what would make it work
+  pathplan plan tasks/pick.toml tasks/place.toml tasks/return.toml
+      each of them into the current folder, and a summary of all
 
 """
 RETIME = """\
@@ -120,27 +121,23 @@ def main(argv: Sequence[str] | None = None) -> int:
     try:
         try:
             args, unknown = _parser().parse_known_args(argv)
+            if hasattr(args, "files"):  # those behind an option are left over
+                args.files += [one for one in unknown if not one.startswith("-")]
+                unknown = [one for one in unknown if one.startswith("-")]
             if unknown:
                 raise InputError(f"unknown arguments: {' '.join(unknown)} (see {args.prog} --help)")
             return int(args.run(args))
         finally:
-            _flush(sys.stdout)
+            flush(sys.stdout)
     except SystemExit as done:  # --help
         return int(done.code or 0)
     except KeyboardInterrupt:
         return INTERRUPTED
-    except PathplanError as error:
-        for line in getattr(error, "problems", None) or (str(error),):
-            _complain(line)
-        return error.exit_status
     except Exception as error:
-        if os.environ.get("PATHPLAN_DEBUG"):
-            import traceback
-
-            traceback.print_exc()
-        what = f"{type(error).__name__}: {error}" if str(error) else type(error).__name__
-        _complain(f"internal error: {what} (please report; PATHPLAN_DEBUG=1 shows the traceback)")
-        return OUR_ERROR
+        status, lines = complaints_of(error)
+        for line in lines:
+            complain(line)
+        return status
 
 
 class _Parser(argparse.ArgumentParser):
@@ -173,13 +170,14 @@ def _parser() -> argparse.ArgumentParser:
 
     def command(name: str, run: Any, about: str, examples: str, summary: str) -> _Parser:
         added: _Parser = commands.add_parser(name, help=summary, description=about, epilog=examples + STATUS)
-        added.set_defaults(run=run, prog=added.prog)
+        added.set_defaults(run=run, prog=added.prog, command=name)
         return added
 
     plan = command("plan", _run_plan, PLAN, PLAN_EXAMPLES, "plan a task, audit it, write its table")
-    plan.add_argument("file", metavar="TASK", help="task file (.toml)")
+    plan.usage = "pathplan plan [options] TASK [TASK ...]"
+    plan.add_argument("files", metavar="TASK", nargs="+", help="task files (.toml)")
     plan.add_argument("-o", dest="output", metavar="FILE", action="append", default=[],
-                      help="table to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
+                      help="table of a single task (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
     plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
     plan.add_argument(
         "--savings", action="store_true", help="what would buy time, each change planned again: takes that much longer"
@@ -189,16 +187,17 @@ def _parser() -> argparse.ArgumentParser:
         metavar="TIME",
         help='how long to search for what would make a refused task work (default "10 s"; "0 s": not at all)',
     )
-    _planning_options(plan)
+    _jobs_option(_planning_options(plan))
     _writing_options(plan)
     _screen_options(plan)
 
     audit = command("audit", _run_audit, AUDIT, AUDIT_EXAMPLES, "judge a task's plan, a table or a line")
     audit.usage = (
-        "pathplan audit [options] TASK|TABLE\n       pathplan audit [options] --from PLACE --to PLACE --arm ARM"
+        "pathplan audit [options] TASK|TABLE\n       pathplan audit [options] TASK TASK [TASK ...]\n"
+        "       pathplan audit [options] --from PLACE --to PLACE --arm ARM"
     )
-    audit.add_argument("file", metavar="TASK|TABLE", nargs="?", help="task (.toml), or table of any source")
-    _planning_options(audit)
+    audit.add_argument("files", metavar="TASK|TABLE", nargs="*", help="tasks (.toml), or a table of any source")
+    _jobs_option(_planning_options(audit))
     _arm_options(audit)
     _reading_options(audit)
     group = audit.add_argument_group("targets of a task in a table")
@@ -215,7 +214,7 @@ def _parser() -> argparse.ArgumentParser:
     export.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table of any source")
     export.add_argument("-o", dest="output", metavar="FILE", action="append", required=True,
                         help="file to write (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
-    _planning_options(export)
+    _jobs_option(_planning_options(export))
     _arm_options(export)
     _reading_options(export)
     group = _writing_options(export)
@@ -236,7 +235,7 @@ def _parser() -> argparse.ArgumentParser:
     group.add_argument("--rest", metavar="TIME", help='rests of this length are kept, "50 ms" (default)')
     group.add_argument("--tool", metavar="NAME", help="tool of the arm that is carried")
     group.add_argument("--payload", metavar="NAME", help="payload that is carried")
-    _planning_options(retime)
+    _jobs_option(_planning_options(retime))
     _reading_options(retime)
     _writing_options(retime)
     _screen_options(retime)
@@ -253,19 +252,19 @@ def _picture_commands(command: Any) -> None:
         planning_options=_planning_options,
         arm_options=_arm_options,
         screen_options=_screen_options,
-        task=_task,
+        task=lambda args: task_of(args, args.file),
         is_table=_is_table,
         judged=_judged,
-        check_rows=_check_rows,
-        show=_print,
-        show_json=lambda document: _print(_json({"pathplan": _version(), **document})),
+        check_rows=check_rows,
+        show=show,
+        show_json=lambda document: show(json_text(document)),
         status=_status,
     )
     add_picture_commands(shell)
     add_arm_command(shell)
 
 
-def _planning_options(parser: argparse.ArgumentParser) -> None:
+def _planning_options(parser: argparse.ArgumentParser) -> argparse._ArgumentGroup:
     group = parser.add_argument_group("how a task is planned")
     speed = group.add_mutually_exclusive_group()
     speed.add_argument("--speed", metavar="SPEED", help='cap the tool speed of the whole task, "250 mm/s"')
@@ -275,6 +274,12 @@ def _planning_options(parser: argparse.ArgumentParser) -> None:
                        help='slow the whole motion in time, "50 %%": speeds by it, accelerations by its square, '
                        "jerks by its cube")  # fmt: skip
     group.add_argument("--cycle", metavar="TIME", help="the controller's cycle in place of the task's, \"2 ms\"")
+    return group
+
+
+def _jobs_option(group: argparse._ArgumentGroup) -> None:
+    group.add_argument("--jobs", metavar="N",
+                       help="processes that work at once (default: one a core); the results are the same")  # fmt: skip
 
 
 def _arm_options(parser: argparse.ArgumentParser) -> None:
@@ -313,26 +318,40 @@ def _no_command(args: argparse.Namespace) -> int:
     if not args.version:
         commands = "plan, audit, export, retime, report, watch, figure or arm"
         raise InputError(f"expected a command: {commands} (see pathplan --help)")
-    _print(f"pathplan {_version()}")
+    show(f"pathplan {version()}")
     return 0
 
 
 def _run_plan(args: argparse.Namespace) -> int:
     if args.no_table and args.output:
         raise InputError("argument -o: not allowed with argument --no-table (see pathplan plan --help)")
-    names = args.output or [f"{Path(args.file).stem}.csv"]
+    if len(args.files) > 1:
+        if args.output:
+            complaint = f"names the table of one task, and there are {len(args.files)}: each is named after its task"
+            raise InputError(f"argument -o: {complaint}")
+        if args.remedies is not None:
+            raise InputError("argument --remedies: only for a single task")
+        return run_tasks(args, [(file, [] if args.no_table else [_table_name(file)]) for file in args.files])
     from pathplan.refused import show_remedies
 
-    seconds, task = arguments.remedies(args), _task(args)
+    args.file = args.files[0]
+    seconds, task = arguments.remedies(args), task_of(args, args.file)
     try:
-        return _plan_and_write(args, [] if args.no_table else names, task)
+        return run_task(args, [] if args.no_table else args.output or [_table_name(args.file)], task)
     except (UnreachableError, LimitError) as refusal:
-        _complain(str(refusal))
-        show_remedies(args, task, refusal, seconds, _print)
+        complain(str(refusal))
+        show_remedies(args, task, refusal, seconds, show)
         return refusal.exit_status
 
 
+def _table_name(task: str) -> str:
+    return f"{Path(task).stem}.csv"
+
+
 def _run_audit(args: argparse.Namespace) -> int:
+    if len(args.files) > 1:
+        return _audit_many(args)
+    args.file = args.files[0] if args.files else None
     if args.file is None or args.start is not None or args.goal is not None:
         return _audit_line(args)
     if not _is_table(args):
@@ -344,16 +363,27 @@ def _run_audit(args: argparse.Namespace) -> int:
     return _status(args.file, judged.breaks, "")
 
 
+def _audit_many(args: argparse.Namespace) -> int:
+    """Several tasks, planned and judged; a table needs its own arm and tool, and comes alone."""
+    for file in args.files:
+        args.file = file
+        if _is_table(args):
+            raise InputError.at(file, "is a table: tables are judged one at a time, tasks (.toml) together too")
+    if args.start is not None or args.goal is not None:
+        raise InputError(f"arguments --from and --to: a single line takes no file, got {args.files[0]}")
+    return run_tasks(args, [(file, []) for file in args.files])
+
+
 def _audit_task(args: argparse.Namespace) -> int:
     """The plan of a task, judged, and the branches at its targets; these also where it is refused."""
     from pathplan.refused import show_targets
 
-    task = _task(args)
+    task = task_of(args, args.file)
     try:
-        return _plan_and_write(args, [], task)
+        return run_task(args, [], task)
     except (UnreachableError, LimitError) as refusal:
-        _complain(str(refusal))
-        show_targets(args, task, refusal, _print)
+        complain(str(refusal))
+        show_targets(args, task, refusal, show)
         return refusal.exit_status
 
 
@@ -372,9 +402,9 @@ def _audit_line(args: argparse.Namespace) -> int:
         line = arguments.line_audit(args)
         audit = line.plan.audit
     if args.json:
-        _print(_json({"pathplan": _version(), **line_as_dict(line)}))
+        show(json_text(line_as_dict(line)))
     elif not args.quiet:
-        _print(line_screen(line))
+        show(line_screen(line))
     return 0 if audit.passed else _status("line", first_exceedance(audit), "")
 
 
@@ -382,12 +412,12 @@ def _run_retime(args: argparse.Namespace) -> int:
     for name in args.output:
         if Path(name).exists() and Path(args.file).exists() and Path(name).samefile(args.file):
             raise InputError.at(name, "is the table that is read: choose another name")
-    return _plan_and_write(args, args.output, arguments.retimed(args))
+    return run_task(args, args.output, arguments.retimed(args))
 
 
 def _run_export(args: argparse.Namespace) -> int:
     if not _is_table(args):
-        return _plan_and_write(args, args.output)
+        return run_task(args, args.output)
     from pathplan.report.outputs import check_jobs, check_outputs, jobs_of_table, marked, write_jobs
     from pathplan.report.progress import Progress
 
@@ -395,7 +425,7 @@ def _run_export(args: argparse.Namespace) -> int:
     judged = _judged(args)
     outputs = [Path(name) for name in args.output]
     check_outputs(outputs, None, judged.table.meta, writing)
-    with _of(args.file):
+    with of_file(args.file):
         jobs = jobs_of_table(marked(judged.table) if judged.breaks else judged.table, outputs, writing)
     check_jobs(jobs, judged.table.meta, writing)
     for job in jobs:
@@ -408,116 +438,6 @@ def _run_export(args: argparse.Namespace) -> int:
     return _status(args.file, judged.breaks, ": written all the same" if written else ": not written")
 
 
-# Tasks
-
-
-def _task(args: argparse.Namespace) -> Task:
-    """The task of a file with what the command line changes of it."""
-    from pathplan import load_task
-
-    for option in ("arm", "tool", "task", "near", "time", "columns", "unit"):
-        if getattr(args, option, None) is not None:
-            more = ", a task names its own" if option in ("arm", "tool") else ""
-            raise InputError(f"argument --{option}: only for a table{more}")
-    speed, pace, cycle = arguments.speed_cap(args), arguments.pace(args), arguments.cycle(args)
-    changes: dict[str, Any] = {"pace": pace} if pace is not None else {}
-    changes |= {"cycle": cycle} if cycle is not None else {}
-    task = load_task(args.file)
-    if speed is not None:  # the task's own cap stays where it is the lower
-        changes["speed"] = speed if task.speed is None else min(speed, task.speed)
-    return dataclasses.replace(task, **changes)
-
-
-def _plan_and_write(args: argparse.Namespace, names: Sequence[str], task: Task | None = None) -> int:
-    """Plan, audit, write tables and the audit beside the first; without names, nothing. Default: the task named."""
-    import pathplan
-    from pathplan.path import target_branches
-    from pathplan.report import outputs as files
-    from pathplan.report.plan_data import plan_as_dict
-    from pathplan.report.progress import Progress
-    from pathplan.report.savings_screen import savings_as_dict, savings_screen
-    from pathplan.report.targets_screen import targets_as_dict
-    from pathplan.report.written import written_as_dict
-
-    writing, task = arguments.writing(args), _task(args) if task is None else task
-    outputs = [Path(name) for name in names]
-    audit_file = files.audit_name(outputs[0]) if outputs else None
-    meta = {"task": task.title, "task_file": Path(args.file).name}
-    files.check_outputs(outputs, audit_file, meta, writing)
-    left = [output for output in outputs if output.exists()]
-    with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:
-        plan = pathplan.plan(task, progress=tell)
-        _check_rows(plan, args.file)
-        tell("audit", 0, 1)
-        if plan.ticks < files.WHOLE:
-            plan.table  # noqa: B018  # evaluated once, then kept for the audit and the files
-        may = plan.audit.passed or getattr(args, "write_anyway", False)
-        with _of(args.file):
-            jobs = files.jobs_of_plan(plan, outputs, writing) if outputs and may else []
-        files.check_jobs(jobs, meta, writing)
-        document = {"pathplan": _version(), **plan_as_dict(plan), **written_as_dict(jobs, audit_file)}
-        savings = None
-        if getattr(args, "savings", False):
-            tell("savings", 0, 1)
-            savings = plan.savings()
-            document["savings"] = savings_as_dict(savings)
-        if args.run is _run_audit and args.json:
-            document["targets"] = targets_as_dict(task, target_branches(task, plan.path))
-        if audit_file is not None:
-            files.write_jobs(jobs, writing, tell, audit=(audit_file, document))
-    if args.json:
-        _print(_json(document))
-    elif not args.quiet:
-        _print(_plan_text(args, plan, jobs, audit_file))
-        if savings is not None:
-            _print("\n" + "\n".join(savings_screen(plan.task, savings)))
-    if plan.audit.passed:
-        return 0
-    from pathplan.report.judged import first_exceedance
-
-    more = ""
-    if outputs:
-        more = ": written all the same" if jobs else ": no table written"
-        more += f", {', '.join(map(str, left))} is of an earlier plan" if left and not jobs else ""
-    return _status(args.file, first_exceedance(plan.audit), more)
-
-
-@contextlib.contextmanager
-def _of(file: str) -> Iterator[None]:
-    """Complaints about what a file holds name the file."""
-    try:
-        yield
-    except InputError as error:
-        raise InputError.at(file, str(error)) from None
-
-
-def _check_rows(plan: Plan, file: str) -> None:
-    from pathplan.export.kinds import MAX_ROWS
-
-    if plan.ticks >= MAX_ROWS:
-        complaint = f"would take {plan.ticks + 1} rows, more than {MAX_ROWS}: slow it less or lengthen the cycle"
-        raise InputError.at(file, complaint)
-
-
-def _plan_text(args: argparse.Namespace, plan: Plan, jobs: Sequence[Job], audit_file: Path | None) -> str:
-    from pathplan.path import target_branches
-    from pathplan.report.plan_screen import plan_headline, plan_screen
-    from pathplan.report.screen import audit_screen
-    from pathplan.report.targets_screen import targets_screen
-    from pathplan.report.terminal import signs_for
-    from pathplan.report.written import pieces_note, written_lines
-
-    if args.run is _run_audit:
-        return audit_screen(plan.audit, targets_screen(plan.task, target_branches(plan.task, plan.path)))
-    lines = written_lines(jobs, audit_file)
-    if getattr(args, "split", None) and jobs:
-        lines += [note] if (note := pieces_note([Path(name) for name in args.output], len(plan.timings))) else []
-    written = "\n".join(lines)
-    if args.run in (_run_plan, _run_retime):
-        return f"{plan_screen(plan, signs_for(sys.stdout))}\n\n{written}"
-    return f"{plan_headline(plan)}\n{written}"
-
-
 # Tables
 
 
@@ -527,10 +447,10 @@ def _is_table(args: argparse.Namespace) -> bool:
 
     if Path(args.file).suffix.lower() not in (*kinds(), *SUFFIXES):
         return False
-    if args.cycle and args.run is _run_export:
+    if args.cycle and args.command == "export":
         complaint = "rows of a table are never interpolated: export the task it comes from with --cycle"
         raise InputError(f"argument --cycle: {complaint}")
-    capped = args.run is _run_audit  # which judges a table against a cap on the tool speed too
+    capped = args.command == "audit"  # which judges a table against a cap on the tool speed too
     for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "pace", "cycle"):
         if getattr(args, option):
             raise InputError(f"argument --{option.replace('_', '-')}: only for a task, {args.file} is a table")
@@ -551,71 +471,13 @@ def _show_judged(args: argparse.Namespace, judged: Judged, jobs: Sequence[Job] |
     from pathplan.report.judged import judged_as_dict, judged_screen
 
     if args.json:
-        _print(_json({"pathplan": _version(), **judged_as_dict(judged, jobs or ())}))
+        show(json_text(judged_as_dict(judged, jobs or ())))
     elif not args.quiet:
-        _print(judged_screen(judged, jobs))
-
-
-# Streams
+        show(judged_screen(judged, jobs))
 
 
 def _status(file: str, breaks: str, more: str) -> int:
     """1, with one line of why, for what breaks a limit."""
     if breaks:
-        _complain(f"{file}: breaks limits: {breaks}{more}")
+        complain(f"{file}: breaks limits: {breaks}{more}")
     return int(bool(breaks))
-
-
-def _version() -> str:
-    from pathplan.planning import versions
-
-    return versions()["pathplan"]
-
-
-def _json(document: Mapping[str, Any]) -> str:
-    from pathplan.report.outputs import json_text
-
-    return json_text(document)
-
-
-def _print(text: str) -> None:
-    """Text on the standard output, in whatever its encoding takes. Raises PathplanError if it can't be written."""
-    out = sys.stdout
-    if out is None:  # closed by whoever started us
-        return
-    encoding = getattr(out, "encoding", None) or "utf-8"
-    with _leaving(out):
-        out.write(text.encode(encoding, "backslashreplace").decode(encoding) + "\n")
-        out.flush()
-
-
-def _flush(out: TextIO | None) -> None:
-    if out is not None:
-        with _leaving(out):
-            out.flush()
-
-
-@contextlib.contextmanager
-def _leaving(out: TextIO) -> Iterator[None]:
-    try:
-        yield
-    except BrokenPipeError:  # the reader is gone, as `| head` goes: the verdict stands without it
-        _drop(out)
-    except OSError as error:
-        _drop(out)
-        raise PathplanError(f"standard output: can't be written: {error.strerror}") from None
-
-
-def _drop(out: TextIO) -> None:
-    """What is still to be written to the stream leads nowhere."""
-    with contextlib.suppress(OSError, ValueError):
-        nowhere = os.open(os.devnull, os.O_WRONLY)
-        os.dup2(nowhere, out.fileno())
-        os.close(nowhere)
-
-
-def _complain(line: str) -> None:
-    """One line on the standard error stream, whatever the message holds."""
-    shown = "".join(char if char.isprintable() else "?" for char in line)
-    with contextlib.suppress(OSError, ValueError, AttributeError):
-        print(f"pathplan: {shown}", file=sys.stderr, flush=True)

@@ -66,7 +66,7 @@ class Shell:
     """What these commands use of the command line around them."""
 
     command: Callable[..., Any]  # name, run, about, examples, summary -> its parser
-    planning_options: Callable[[Any], None]
+    planning_options: Callable[[Any], object]
     arm_options: Callable[[Any], None]
     screen_options: Callable[[Any], None]
     task: Callable[[argparse.Namespace], Task]

@@ -11,10 +11,6 @@ import os
 
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
-import json
-import subprocess
-import sys
-import tempfile
 from pathlib import Path
 
 ROOT = Path(__file__).parent.parent.parent
