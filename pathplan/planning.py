@@ -346,8 +346,8 @@ def plan(task: Task, *, progress: Progress | None = None, jobs: int = 1) -> Plan
     path, motions = follow_and_hold(task, say)
     borders = np.linspace(0, len(motions), -(-len(motions) // BATCH) + 1).round().astype(int)
     batches = [motions[low:high] for low, high in pairwise(borders)]
-    say("timing", 0, len(batches))
-    timed = work_through(_timed, batches, jobs, lambda done: say("timing", done, len(batches)))
+    say("timing", 0, len(motions))
+    timed = work_through(_timed, batches, jobs, lambda done: say("timing", int(borders[done]), len(motions)))
     parts = [found for batch in timed for found in batch]
     timings = [
         StretchTiming(motion, clock, tau, b, slope)

@@ -203,8 +203,9 @@ def test_progress_goes_through_path_timing_and_audit(folder):
         assert shares == sorted(shares) and len(shares) >= 3 and 0 <= shares[0] and shares[-1] <= 1
 
 
-def test_long_tables_are_written_and_judged_in_bounded_memory(folder):
+def test_long_tables_are_written_and_judged_in_bounded_memory(folder, monkeypatch):
     """Five times the rows take no more memory: beyond that of a piece, nothing grows with the table."""
+    monkeypatch.setattr("pathplan.export.npz_file.IN_MEMORY", 1 << 16)
     peaks = []
     for seconds in (20, 100):
         (folder / "cross.toml").write_text(CROSS.replace("0.1 s", f"{seconds} s"))

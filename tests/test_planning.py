@@ -107,7 +107,7 @@ def test_the_same_task_gives_the_same_table(task):
 def test_progress_is_told(task):
     told = []
     pathplan.plan(task, progress=lambda what, done, total: told.append((what, done, total)))
-    assert told[0] == ("path", 0, 1) and told[-1] == ("timing", 2, 2)
+    assert told[0][:2] == ("path", 0) and told[-1] == ("timing", 2, 2)
 
 
 def test_ticks():

@@ -2,7 +2,8 @@
 
 Pick-and-place over patterns of places, 100 to 10,000 steps, of the six-axis arm (torque in the timing) and of the
 gantry. Every measurement is a process of its own, so that peak memory is that of the work and of nothing before it.
-Never a test: takes some minutes; run on a quiet machine, with one thread for linear algebra.
+Times are process times, wall times where processes share the work. Never a test: it takes half an hour; run on a
+quiet machine, with one thread for linear algebra.
 """
 
 from __future__ import annotations
@@ -11,7 +12,16 @@ import os
 
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
+import json
+import resource
+import subprocess
+import sys
+import tempfile
+import time
+import zlib
 from pathlib import Path
+
+import numpy as np
 
 ROOT = Path(__file__).parent.parent.parent
 ARMS = ("glazer6", "loader4")
@@ -65,3 +75,128 @@ def task_text(arm: str, steps: int, *, cycle: str = "4 ms", wait: str = "0.25 s"
     head, area = (GLAZER6, (160, 120)) if arm == "glazer6" else (LOADER4, (620, 930))
     numbers = {"x": x, "y": y, "dx": area[0] / x, "dy": area[1] / y, "cycle": cycle, "wait": wait}
     return (head + STEPS).format(robots=ROOT / "robots", **numbers)
+
+
+def measure(*words: str) -> dict[str, float]:
+    """One measurement in a process of its own: see MEASURES."""
+    done = subprocess.run(
+        [sys.executable, "-m", "tests.benchmarks.scale", *words], cwd=ROOT, capture_output=True, text=True, check=True
+    )
+    return {name: float(value) for name, value in json.loads(done.stdout).items()}
+
+
+def planned(file: str, jobs: str) -> dict[str, float]:
+    """A task planned and judged: process time by part (s), wall time (s), peak memory (MiB) of the largest process."""
+    import pathplan
+    from pathplan.report.outputs import json_text
+    from pathplan.report.plan_data import plan_as_dict
+
+    pathplan.plan(pathplan.load_task(ROOT / "examples" / "glazer6-pick-and-place.toml")).judge()  # imports
+    laps, start = [(0.0, spent())], time.perf_counter()
+    task = pathplan.load_task(file)
+    laps.append((0.0, spent()))
+    plan = pathplan.plan(task, jobs=int(jobs))
+    planning = time.perf_counter() - start
+    laps.append((planning, spent()))
+    plan.judge(jobs=int(jobs))
+    judging = time.perf_counter() - start - planning
+    laps.append((judging, spent()))
+    text = json_text(plan_as_dict(plan))
+    laps.append((0.0, spent()))
+    reading, timing, audit, telling = np.diff([lap[1] for lap in laps]).tolist()
+    return {
+        "steps": len(task.steps),
+        "reading": reading,
+        "planning": timing,
+        "audit": audit,
+        "telling": telling,
+        "wall": planning + judging,
+        "peak": peak(),
+        "text": len(text),
+        "digest": zlib.crc32(text.encode()),
+    }
+
+
+def written(file: str, suffix: str) -> dict[str, float]:
+    """An hour at 1 kHz planned, judged and written by the command line: rows, process time (s), peak memory (MiB)."""
+    from pathplan.cli import main
+
+    with tempfile.TemporaryDirectory() as folder:
+        output = Path(folder) / f"hour{suffix}"
+        assert main(["plan", file, "-o", str(output), "--quiet", "--jobs", "1"]) == 0
+        audit = json.loads(output.with_suffix(".audit.json").read_text())
+        size = output.stat().st_size
+    return {"rows": audit["plan"]["rows"], "seconds": spent(), "peak": peak(), "size": size}
+
+
+def spent() -> float:
+    """Process time of this process and those that it has waited for, s."""
+    used = [resource.getrusage(whose) for whose in (resource.RUSAGE_SELF, resource.RUSAGE_CHILDREN)]
+    return sum(one.ru_utime + one.ru_stime for one in used)
+
+
+def peak() -> float:
+    """Largest resident memory of this process, or of one of those that it has waited for, MiB."""
+    used = [resource.getrusage(whose) for whose in (resource.RUSAGE_SELF, resource.RUSAGE_CHILDREN)]
+    return max(one.ru_maxrss for one in used) / 1024  # Linux counts KiB
+
+
+MEASURES = {"planned": planned, "written": written}
+
+
+def growth(folder: Path) -> None:
+    """Process time per step and peak memory from 100 to 10,000 steps."""
+    for arm in ARMS:
+        found = {}
+        for steps in COUNTS:
+            file = folder / f"{arm}-{steps}.toml"
+            file.write_text(task_text(arm, steps))
+            found[steps] = one = measure("planned", str(file), "1")
+            parts = ("reading", "planning", "audit", "telling")
+            times = ", ".join(f"{part} {1e3 * one[part] / steps:.2f}" for part in parts)
+            print(f"{arm}, {steps} steps: ms a step: {times}; peak {one['peak']:.0f} MiB", flush=True)
+        for part in ("planning", "audit"):
+            ratio = found[10_000][part] / found[100][part] / 100
+            say(f"{arm}: {part} a step, 10,000 steps over 100", ratio, "at most 1.3")
+        say(f"{arm}: peak memory of planning 10,000 steps, MiB", found[10_000]["peak"], "below 2048")
+
+
+def cores_used(folder: Path) -> None:
+    """Wall time by two processes over that by one, in turn, and whether the documents are the same bytes."""
+    for arm in ARMS:
+        for steps in (100, 1000):
+            file = folder / f"{arm}-{steps}.toml"
+            ratios = []
+            for _ in range(3 if steps == 100 else 1):
+                one, two = (measure("planned", str(file), jobs) for jobs in ("1", "2"))
+                assert one["digest"] == two["digest"], "two processes give another plan than one"
+                ratios.append(two["wall"] / one["wall"])
+            say(f"{arm}, {steps} steps: wall time by two processes over one", float(np.median(ratios)), "below 1")
+
+
+def an_hour(folder: Path) -> None:
+    """Peak memory of planning, judging and writing an hour at 1 kHz for six axes."""
+    file = folder / "hour.toml"
+    file.write_text(task_text("glazer6", 100, cycle="1 ms", wait="178 s"))
+    for suffix in (".csv", ".npz"):
+        found = measure("written", str(file), suffix)
+        rows, rate = found["rows"], 1e6 * found["seconds"] / found["rows"]
+        what = f"an hour at 1 kHz, {rows:.0f} rows as {suffix}, {found['size'] / 1e6:.0f} MB, {rate:.0f} us a row"
+        say(f"{what}: peak, MiB", found["peak"], "below 300")
+
+
+def say(what: str, figure: float, asked: str) -> None:
+    print(f"{what:84s} {figure:9.3f}   {asked}", flush=True)
+
+
+def main() -> None:
+    if sys.argv[1:]:
+        print(json.dumps(MEASURES[sys.argv[1]](*sys.argv[2:])))
+        return
+    with tempfile.TemporaryDirectory() as folder:
+        for section in (an_hour, growth, cores_used):
+            section(Path(folder))
+
+
+if __name__ == "__main__":
+    main()
