@@ -83,7 +83,6 @@ def cycle(args: Namespace) -> float | None:
     return value
 
 
-<<<<<<< HEAD
 def remedies(args: Namespace) -> float:
     """How long to search for remedies of a refused task, s. Raises InputError."""
     from pathplan.remedies.find import SECONDS
@@ -92,7 +91,8 @@ def remedies(args: Namespace) -> float:
     if value is not None and value < 0:
         raise refused("--remedies", 'a time such as "60 s", or "0 s" for no search', args.remedies)
     return SECONDS if value is None else value
-=======
+
+
 def jobs(args: Namespace) -> int:
     """How many processes may work at once. Raises InputError."""
     from pathplan.workers import cores
@@ -102,7 +102,6 @@ def jobs(args: Namespace) -> int:
     if not args.jobs.isdecimal() or not 1 <= int(args.jobs[:9]) <= MOST_JOBS:
         raise refused("--jobs", f"a number of processes from 1 to {MOST_JOBS}", args.jobs)
     return int(args.jobs)
->>>>>>> 8c8195f (Several tasks in one call, by several processes, with a summary; one way for one task and many)
 
 
 def judging(args: Namespace) -> Judging:

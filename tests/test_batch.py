@@ -54,7 +54,7 @@ def test_each_is_written_as_it_is_alone_and_a_failure_stops_nobody(folder, run, 
     together = written(folder)
     assert status == 2
     assert sorted(together) == ["again.audit.json", "again.csv", "cross.audit.json", "cross.csv", "weak.audit.json"]
-    alone = [run("plan", task) for task in TASKS]
+    alone = [run("plan", task, "--remedies", "0 s") for task in TASKS]
     assert written(folder) == together
     assert [one[0] for one in alone] == [0, 2, 1, 1, 0]
     assert err == [line for one in alone for line in one[2]]
@@ -121,6 +121,7 @@ def test_a_limit_that_is_broken_counts_more_than_none(run):
         ("cross.toml again.toml --jobs 0", '--jobs: expected a number of processes from 1 to 256, got "0"'),
         ("cross.toml again.toml --jobs two", '--jobs: expected a number of processes from 1 to 256, got "two"'),
         ("cross.toml again.toml --pace 2", "--pace: "),
+        ("cross.toml again.toml --remedies 9s", "argument --remedies: "),
         ("cross.toml --quiet again.toml --why", "unknown arguments: --why "),
     ],
 )
