@@ -271,6 +271,7 @@ def _planning_options(parser: argparse.ArgumentParser) -> None:
     speed.add_argument("--speed", metavar="SPEED", help='cap the tool speed of the whole task, "250 mm/s"')
     speed.add_argument("--reduced-speed", action="store_true",
                        help="cap the tool speed at 250 mm/s (ISO 10218-1)")  # fmt: skip
+    group.add_argument("--turning-speed", metavar="SPEED", help='cap how fast the tool turns, "90 deg/s"')
     group.add_argument("--pace", metavar="SHARE",
                        help='slow the whole motion in time, "50 %%": speeds by it, accelerations by its square, '
                        "jerks by its cube")  # fmt: skip
@@ -419,12 +420,15 @@ def _task(args: argparse.Namespace) -> Task:
         if getattr(args, option, None) is not None:
             more = ", a task names its own" if option in ("arm", "tool") else ""
             raise InputError(f"argument --{option}: only for a table{more}")
-    speed, pace, cycle = arguments.speed_cap(args), arguments.pace(args), arguments.cycle(args)
+    pace, cycle = arguments.pace(args), arguments.cycle(args)
+    speed, turning = arguments.speed_cap(args), arguments.turning_cap(args)
     changes: dict[str, Any] = {"pace": pace} if pace is not None else {}
     changes |= {"cycle": cycle} if cycle is not None else {}
     task = load_task(args.file)
     if speed is not None:  # the task's own cap stays where it is the lower
         changes["speed"] = speed if task.speed is None else min(speed, task.speed)
+    if turning is not None:
+        changes["turning_speed"] = turning if task.turning_speed is None else min(turning, task.turning_speed)
     return dataclasses.replace(task, **changes)
 
 
@@ -531,7 +535,7 @@ def _is_table(args: argparse.Namespace) -> bool:
         complaint = "rows of a table are never interpolated: export the task it comes from with --cycle"
         raise InputError(f"argument --cycle: {complaint}")
     capped = args.run is _run_audit  # which judges a table against a cap on the tool speed too
-    for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "pace", "cycle"):
+    for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "turning_speed", "pace", "cycle"):
         if getattr(args, option):
             raise InputError(f"argument --{option.replace('_', '-')}: only for a task, {args.file} is a table")
     return True
