@@ -233,22 +233,29 @@ def _above(before: Array, speed: Array, times: Array, level: float) -> Array:
 
 
 def held_findings(found: Sequence[HeldSpeed], task: Any, pace: float) -> Iterator[Finding]:
-    """What became of each speed to be held, in words: the smallest shares one by one, the others together."""
-    order = sorted(found, key=lambda held: held.length_part)
-    told = sorted(order[:MOST_FINDINGS], key=lambda held: held.step)
-    for held in told:
-        whole = held.length_part >= ALL
-        text = f"step {held.step + 1}{f' ({held.name})' if held.name else ''}: {_text(held, task, pace)}"
-        value = None if held.length < SPOT else held.reached
-        limit = None if value is None else held.speed
-        yield Finding(
-            "note" if whole else "warning", text, step=held.step, quantity="tool speed", value=value, limit=limit
-        )
-    left = order[MOST_FINDINGS:]
+    """What became of the speeds to be held, in words: smallest shares one by one; together what was held throughout."""
+    short = sorted((held for held in found if held.length_part < ALL), key=lambda held: held.length_part)
+    whole = [held for held in found if held.length_part >= ALL]
+    for held in sorted(short[:MOST_FINDINGS], key=lambda held: held.step):
+        text = f"{_name(held)}: {_text(held, task, pace)}"
+        value, limit = (None, None) if held.length < SPOT else (held.reached, held.speed)
+        yield Finding("warning", text, step=held.step, quantity="tool speed", value=value, limit=limit)
+    left = short[MOST_FINDINGS:]
     if left:
         least, most = (held_percent(held.length_part) for held in (left[0], left[-1]))
         steps = f"{len(left)} more step{'s' * (len(left) > 1)}"
-        yield Finding("note", f"{steps} hold their tool speed over {least} to {most} of their length")
+        text = f"{steps} with a tool speed to be held: held over {least} to {most} of the length"
+        yield Finding("warning", text, step=left[0].step, quantity="tool speed")
+    if whole:
+        within = format_quantity(HELD_WITHIN, "ratio")
+        names = f"{len(whole)} steps" if len(whole) > 1 else _name(whole[0])
+        verb, whose = ("hold", "their") if len(whole) > 1 else ("holds", "its")
+        text = f"{names} {verb} {whose} tool speed to {within} over {whose} whole length"
+        yield Finding("note", text, step=whole[0].step, quantity="tool speed")
+
+
+def _name(held: HeldSpeed) -> str:
+    return f"step {held.step + 1}{f' ({held.name})' if held.name else ''}"
 
 
 def _text(held: HeldSpeed, task: Any, pace: float) -> str:
@@ -257,11 +264,9 @@ def _text(held: HeldSpeed, task: Any, pace: float) -> str:
         return f"there is no speed to hold, the tool stays on the spot (asked: {speed})"
     if held.cap < (1 - HELD_WITHIN) * held.speed:
         return f"{speed} is not held at all: {_why_slower(held, task, pace)}"
-    within = format_quantity(HELD_WITHIN, "ratio")
-    if held.length_part >= ALL:
-        return f"{speed} is held to {within} over its whole length"
     if not held.length_part:
         return f"{speed} is never reached, at most {format_quantity(held.reached, 'speed')} ({_limits(held.missed)})"
+    within = format_quantity(HELD_WITHIN, "ratio")
     text = f"{speed} is held to {within} over {held_percent(held.length_part)} of its length"
     text += f" ({held_percent(held.time_part)} of its time)"
     text += "; not in " + ", ".join(_places(held))
