@@ -359,7 +359,7 @@ def motion_of(stretch: Stretch) -> Motion:
     velocity, acceleration, jerk = (
         _finite(rows[kept]) for rows in (limits.velocity, limits.acceleration, limits.jerk)
     )
-    caps = tuple(Cap(*cap) for cap in stretch.caps if any(value is not None for value in cap[2:]))
+    caps = tuple(Cap(*cap) for cap in stretch.caps if any(value is not None for value in cap[2:5]))
     tool, turning = partial(tool_derivatives, stretch.arm), partial(tool_turning, stretch.arm)
     torque = torque_limits(stretch.arm)
     return Motion(stretch.path, limits.matrix[kept], velocity, acceleration, jerk, caps, tool, torque, turning)

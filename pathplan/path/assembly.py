@@ -133,17 +133,15 @@ def _step_parts(
 def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple[Cap, ...]:
     caps: list[Cap] = []
     for i in span:
-        own = [
-            caps_of(path.legs[spans.motions.leg[m]].step, path.task, path.task.arm)
-            for m in (spans.before[i], spans.after[i])
-            if m >= 0
-        ]
+        steps = [path.legs[spans.motions.leg[m]].step for m in (spans.before[i], spans.after[i]) if m >= 0]
+        own = [caps_of(step, path.task, path.task.arm) for step in steps]
         lowest = StepCaps(*(lower(*values) for values in zip(*own, strict=True)))
-        end = float(start[i] + spans.length[i])
-        if caps and caps[-1][2:] == lowest:
-            caps[-1] = Cap(caps[-1].s_from, end, *lowest)
+        held = any(step.held_speed is not None for step in steps)
+        cap = Cap(float(start[i]), float(start[i] + spans.length[i]), *lowest, held)
+        if caps and caps[-1][2:] == cap[2:]:
+            caps[-1] = cap._replace(s_from=caps[-1].s_from)
         else:
-            caps.append(Cap(float(start[i]), end, *lowest))
+            caps.append(cap)
     return tuple(caps)
 
 

@@ -43,6 +43,7 @@ class Cap(NamedTuple):
     speed: float | None
     acceleration: float | None
     turning_speed: float | None
+    held: bool = False  # whether a step is to hold its tool speed there
 
 
 @dataclass(frozen=True, eq=False)

@@ -24,7 +24,8 @@ ToolTurning = Callable[[Array, Array], Array]
 class Cap:
     """Caps on the tool on part of the path, None for none: speed in m/s, acceleration in m/s^2, turning speed in rad/s.
 
-    All three are norms: |x'| of the tool centre point, |x''|, and |omega| of the tool.
+    All three are norms: |x'| of the tool centre point, |x''|, and |omega| of the tool. A speed that is `held` is to be
+    constant, so that its ripple counts for more than the time it takes.
     """
 
     begin: float
@@ -32,6 +33,7 @@ class Cap:
     speed: float | None = None
     acceleration: float | None = None
     turning_speed: float | None = None
+    held: bool = False
 
 
 @dataclass(frozen=True)
@@ -76,6 +78,10 @@ class Motion:
     def tool_acceleration_cap(self, s: Array) -> Array:
         """(N,) the lowest acceleration cap at each s, inf where there is none."""
         return _lowest(s, [(c.begin, c.end, c.acceleration) for c in self.caps])
+
+    def held(self, s: Array) -> NDArray[np.bool_]:
+        """(N,) whether a tool speed is to be held at each s."""
+        return np.isfinite(_lowest(s, [(c.begin, c.end, c.speed if c.held else None) for c in self.caps]))
 
     def tool_derivatives(self, piece: NDArray[np.intp], s: Array) -> tuple[Array, Array]:
         """First and second derivative of the tool position by s, each (N, 3), m."""
