@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import math
 from argparse import Namespace
 from typing import TYPE_CHECKING
 
@@ -25,10 +26,13 @@ __all__ = [
     "remedies",
     "retimed",
     "speed_cap",
+    "turning_cap",
     "writing",
 ]
 
 SLOWEST = 1e-5  # m/s, as in task files
+SLOWEST_TURN_DEG = 1e-3  # deg/s, as there
+SLOWEST_TURN = math.radians(SLOWEST_TURN_DEG)
 REDUCED_SPEED = 0.25  # m/s, ISO 10218-1
 LONGEST_PERIOD = 10.0  # s
 LINE_CYCLE = 0.004  # s, where nothing else is said
@@ -62,6 +66,16 @@ def speed_cap(args: Namespace) -> float | None:
         raise refused("--speed", 'a speed above zero such as "250 mm/s"', args.speed)
     if speed is not None and speed < SLOWEST:
         raise refused("--speed", f"at least {1e3 * SLOWEST:g} mm/s", args.speed)
+    return speed
+
+
+def turning_cap(args: Namespace) -> float | None:
+    """The cap on the tool's angular speed, rad/s. Raises InputError."""
+    speed = quantity(args.turning_speed, "angular_speed", "--turning-speed")
+    if speed is not None and speed <= 0:
+        raise refused("--turning-speed", 'an angular speed above zero such as "90 deg/s"', args.turning_speed)
+    if speed is not None and speed < SLOWEST_TURN:
+        raise refused("--turning-speed", f"at least {SLOWEST_TURN_DEG:g} deg/s", args.turning_speed)
     return speed
 
 
@@ -117,7 +131,7 @@ def judging(args: Namespace) -> Judging:
         raise InputError("argument --near: only with --task, whose targets it is about")
     time, columns, unit = (getattr(args, name, None) for name in READING)
     asked = None if (time, columns, unit) == (None, None, None) else Asked.parse(time, columns, unit)
-    return Judging(args.arm, args.tool, task, asked, near, speed_cap(args))
+    return Judging(args.arm, args.tool, task, asked, near, speed_cap(args), turning_cap(args))
 
 
 def _near(text: str | None) -> tuple[float, float] | None:
@@ -190,7 +204,8 @@ def retimed(args: Namespace) -> Task:
         raise refused("--rest", 'a time above zero such as "50 ms"', args.rest)
     near = TOLERANCE if args.tolerance is None else _joint_tolerance(args.tolerance, arm)
     task = task_along(table, arm, tolerance=near, cycle=cycle(args), rest=REST if rest is None else rest, file=file)
-    return dataclasses.replace(task, speed=speed_cap(args), pace=pace(args) or 1.0)
+    speed, turning = speed_cap(args), turning_cap(args)
+    return dataclasses.replace(task, speed=speed, turning_speed=turning, pace=pace(args) or 1.0)
 
 
 def _joint_tolerance(text: str, arm: Arm) -> float:
@@ -220,6 +235,13 @@ def line_audit(args: Namespace) -> LineAudit:
             raise InputError(f"argument --{option}: only for a table")
     arm = pathplan.load_arm(args.arm).equipped(tool=args.tool)
     start, goal = place_from(args.start, arm, "--from"), place_from(args.goal, arm, "--to")
-    times = cycle(args) or LINE_CYCLE, pace(args) or 1.0
-    plan, starts, able = plan_line(arm, start, goal, speed=speed_cap(args), cycle=times[0], pace=times[1])
+    plan, starts, able = plan_line(
+        arm,
+        start,
+        goal,
+        speed=speed_cap(args),
+        turning_speed=turning_cap(args),
+        cycle=cycle(args) or LINE_CYCLE,
+        pace=pace(args) or 1.0,
+    )
     return LineAudit(args.start, args.goal, plan, line_parts(plan), starts, able)

@@ -270,6 +270,7 @@ def _planning_options(parser: argparse.ArgumentParser) -> argparse._ArgumentGrou
     speed.add_argument("--speed", metavar="SPEED", help='cap the tool speed of the whole task, "250 mm/s"')
     speed.add_argument("--reduced-speed", action="store_true",
                        help="cap the tool speed at 250 mm/s (ISO 10218-1)")  # fmt: skip
+    group.add_argument("--turning-speed", metavar="SPEED", help='cap how fast the tool turns, "90 deg/s"')
     group.add_argument("--pace", metavar="SHARE",
                        help='slow the whole motion in time, "50 %%": speeds by it, accelerations by its square, '
                        "jerks by its cube")  # fmt: skip
@@ -451,7 +452,7 @@ def _is_table(args: argparse.Namespace) -> bool:
         complaint = "rows of a table are never interpolated: export the task it comes from with --cycle"
         raise InputError(f"argument --cycle: {complaint}")
     capped = args.command == "audit"  # which judges a table against a cap on the tool speed too
-    for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "pace", "cycle"):
+    for option in ("pace", "cycle") if capped else ("speed", "reduced_speed", "turning_speed", "pace", "cycle"):
         if getattr(args, option):
             raise InputError(f"argument --{option.replace('_', '-')}: only for a task, {args.file} is a table")
     return True

@@ -316,7 +316,8 @@ def plan(task: Task, *, progress: Progress | None = None, jobs: int = 1) -> Plan
     Parameters
     ----------
     task : Task
-        As `load_task` gives it. `task.speed` caps the tool everywhere, `task.pace` slows the whole trajectory.
+        As `load_task` gives it. `task.speed` and `task.turning_speed` cap the tool everywhere, `task.pace` slows the
+        whole trajectory.
     progress
         Called with what is being done, how many parts of it are done, and of how many.
     jobs
@@ -409,7 +410,7 @@ def _check_held(task: Task, stretch: Stretch, motion: Motion) -> None:
 
 def motion_of(stretch: Stretch) -> Motion:
     """What limits a stretch: the arm's limit rows, its torque, and the caps on the tool."""
-    from pathplan.path.tool_motion import tool_derivatives
+    from pathplan.path.tool_motion import tool_derivatives, tool_turning
     from pathplan.timing.motion import Cap, Motion
 
     limits = stretch.arm.limits
@@ -418,10 +419,10 @@ def motion_of(stretch: Stretch) -> Motion:
     velocity, acceleration, jerk = (
         _finite(rows[kept]) for rows in (limits.velocity, limits.acceleration, limits.jerk)
     )
-    caps = tuple(Cap(*cap) for cap in stretch.caps if cap.speed is not None or cap.acceleration is not None)
-    tool = partial(tool_derivatives, stretch.arm)
+    caps = tuple(Cap(*cap) for cap in stretch.caps if any(value is not None for value in cap[2:5]))
+    tool, turning = partial(tool_derivatives, stretch.arm), partial(tool_turning, stretch.arm)
     torque = torque_limits(stretch.arm)
-    return Motion(stretch.path, limits.matrix[kept], velocity, acceleration, jerk, caps, tool, torque)
+    return Motion(stretch.path, limits.matrix[kept], velocity, acceleration, jerk, caps, tool, torque, turning)
 
 
 def torque_limits(arm: Arm) -> TorqueLimits | None:

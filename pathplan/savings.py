@@ -4,12 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import PathplanError
+from pathplan.path.caps import caps_of
 from pathplan.task.model import Step, Task
 
 if TYPE_CHECKING:
@@ -21,6 +22,7 @@ Array = NDArray[np.float64]
 
 _CHANGE = 0.1
 _LEAST = 1e-4  # s: less is no saving
+_CAPS = {"tool speed": "speed", "tool acceleration": "acceleration", "tool turning speed": "turning_speed"}
 _MOST_BLENDS = 12  # blends are tried one by one, so no more than this many
 
 
@@ -46,7 +48,8 @@ def find_savings(plan: Plan, *, top: int = 5, change: float = _CHANGE) -> tuple[
     """The changes that save most, largest first: limits and caps ranked by multipliers, blends by trial.
 
     The best `top` limits and caps and up to 12 blends are each enlarged by `change` and planned again at the plan's
-    pace, which takes about as long as planning the task so many times. Changes that save nothing are left out.
+    pace, which takes about as long as planning the task so many times. Changes that save nothing are left out, and so
+    are speeds that a step is to hold: they are what is wanted, not what is in the way.
     """
     found: list[Saving] = []
     ranked = sorted(_estimates(plan), key=lambda candidate: -candidate.estimate)
@@ -83,6 +86,8 @@ def _estimates(plan: Plan) -> Iterator[_Candidate]:
                 row = k if quantity == "torque" else kept[k]
                 rows[quantity, row] = rows.get((quantity, row), 0.0) + float(seconds)
         for quantity, number, seconds in _by_step(part.stretch, worth):
+            if quantity == "tool speed" and _holds(plan.task, number):
+                continue
             step = _cap_owner(plan.task, number, quantity)
             caps[quantity, step] = caps.get((quantity, step), 0.0) + seconds
     for (quantity, row), seconds in rows.items():
@@ -100,16 +105,22 @@ def _by_step(stretch: Stretch, worth: Sensitivity) -> Iterator[tuple[str, int, f
     from pathplan.timeline import step_at
 
     step = step_at(stretch, worth.s)
-    for quantity, seconds in (("tool speed", worth.tool_speed), ("tool acceleration", worth.tool_acceleration)):
+    for quantity in _CAPS:
+        seconds = getattr(worth, quantity.replace(" ", "_"))
         for number in np.unique(step[seconds > 0]):
             yield quantity, int(number), float(seconds[step == number].sum())
 
 
+def _holds(task: Task, step: int) -> bool:
+    """Whether the speed that the step is to hold is the lowest of its caps on the tool speed."""
+    held = task.steps[step].held_speed
+    return held is not None and held == caps_of(task.steps[step], task, task.arm).speed
+
+
 def _cap_owner(task: Task, step: int, quantity: str) -> int | None:
     """The step whose cap holds there, or None where it is the task's."""
-    own = task.steps[step].speed
-    common = task.speed is not None and (own is None or own >= task.speed)
-    return None if quantity == "tool speed" and common else step
+    own, common = getattr(task.steps[step], _CAPS[quantity]), getattr(task, _CAPS[quantity], None)
+    return None if common is not None and (own is None or own >= common) else step
 
 
 def _blended(plan: Plan) -> list[int]:
@@ -136,9 +147,11 @@ def _tried(plan: Plan, candidate: _Candidate, change: float) -> Iterator[Saving]
         values[candidate.row] *= factor
         joint = limits.names[candidate.row]
         task = replace(task, arm=replace(task.arm, limits=replace(limits, **{candidate.quantity: values})))
-    elif candidate.what == "cap" and candidate.step is None and task.speed is not None:
-        wider = tuple(replace(step, speed=_raised(step.speed, task.speed, factor)) for step in task.steps)
-        task = replace(task, speed=task.speed * factor, steps=wider)
+    elif candidate.what == "cap" and candidate.step is None:
+        key = _CAPS[candidate.quantity]
+        common = getattr(task, key)
+        wider = tuple(_with(step, key, _raised(getattr(step, key), common, factor)) for step in task.steps)
+        task = _with(replace(task, steps=wider), key, common * factor)
     else:
         task = replace(task, steps=_changed(task.steps, candidate, factor))
     try:
@@ -148,6 +161,11 @@ def _tried(plan: Plan, candidate: _Candidate, change: float) -> Iterator[Saving]
     if saved >= _LEAST:
         estimate = None if candidate.what == "blend" else candidate.estimate * change / task.pace
         yield Saving(candidate.what, candidate.quantity, joint, candidate.step, change, estimate, saved)
+
+
+def _with(what: Any, key: str, value: float | None) -> Any:
+    """A step or task with one of its caps changed."""
+    return replace(what, **{key: value})
 
 
 def _raised(own: float | None, common: float, factor: float) -> float | None:
@@ -161,9 +179,9 @@ def _changed(steps: Sequence[Step], candidate: _Candidate, factor: float) -> tup
     step = out[candidate.step]
     if candidate.what == "blend" and step.blend is not None:
         step = replace(step, blend=replace(step.blend, value=step.blend.value * factor))
-    elif candidate.quantity == "tool speed" and step.speed is not None:
-        step = replace(step, speed=step.speed * factor)
-    elif step.acceleration is not None:
-        step = replace(step, acceleration=step.acceleration * factor)
+    elif candidate.what == "cap":
+        key = _CAPS[candidate.quantity]
+        own = getattr(step, key)
+        step = step if own is None else _with(step, key, own * factor)
     out[candidate.step] = step
     return tuple(out)

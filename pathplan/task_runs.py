@@ -60,12 +60,15 @@ def task_of(args: Namespace, file: str) -> Task:
         if getattr(args, option, None) is not None:
             more = ", a task names its own" if option in ("arm", "tool") else ""
             raise InputError(f"argument --{option}: only for a table{more}")
-    speed, pace, cycle = arguments.speed_cap(args), arguments.pace(args), arguments.cycle(args)
+    pace, cycle = arguments.pace(args), arguments.cycle(args)
+    speed, turning = arguments.speed_cap(args), arguments.turning_cap(args)
     changes: dict[str, Any] = {"pace": pace} if pace is not None else {}
     changes |= {"cycle": cycle} if cycle is not None else {}
     task = load_task(file)
     if speed is not None:  # the task's own cap stays where it is the lower
         changes["speed"] = speed if task.speed is None else min(speed, task.speed)
+    if turning is not None:
+        changes["turning_speed"] = turning if task.turning_speed is None else min(turning, task.turning_speed)
     return dataclasses.replace(task, **changes)
 
 
@@ -95,7 +98,8 @@ def run_tasks(args: Namespace, orders: Sequence[tuple[str, Sequence[str]]]) -> i
     from pathplan.workers import work_through
 
     given = [Order(file, tuple(names)) for file, names in orders]
-    arguments.writing(args), arguments.speed_cap(args), arguments.pace(args), arguments.cycle(args)
+    for option in (arguments.writing, arguments.speed_cap, arguments.turning_cap, arguments.pace, arguments.cycle):
+        option(args)  # a wrong one is wrong for all of them
     _check_apart(given)
     jobs = arguments.jobs(args)
     with Progress(sys.stderr, quiet=args.quiet or args.json) as tell:

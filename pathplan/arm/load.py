@@ -52,6 +52,7 @@
     com = [0, 0, -30]
     speed = 800                     # caps on the tool's motion while it is carried
     acceleration = 5000
+    turning_speed = 120             # deg/s
 
     [payloads.tile]                 # com and inertia in the tool frame
     mass = "1.2 kg"

@@ -88,8 +88,9 @@ def tool(name: str, table: Table) -> Tool:
     mass, com, inertia = body(table, mass_required=False)
     speed = limit(table, "speed", "speed", None)
     acceleration = limit(table, "acceleration", "acceleration", None)
+    turning = limit(table, "turning_speed", "angular_speed", None)
     table.finish()
-    return Tool(name, pose, mass, com, inertia, speed, acceleration)
+    return Tool(name, pose, mass, com, inertia, speed, acceleration, turning)
 
 
 def payload(name: str, table: Table) -> Payload:

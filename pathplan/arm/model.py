@@ -73,6 +73,7 @@ class Tool:
     inertia: Array = field(default_factory=lambda: np.zeros((3, 3)))
     speed: float | None = None  # cap on the tool speed while it is carried, m/s
     acceleration: float | None = None  # m/s^2
+    turning_speed: float | None = None  # rad/s
 
 
 @dataclass(frozen=True)

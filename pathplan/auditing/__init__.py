@@ -1,6 +1,7 @@
 """The audit: what a joint table uses of every limit, where, and whether it may be run."""
 
 from pathplan.auditing.drives import DriveUse, LoadChange, TorqueJumps
+from pathplan.auditing.held import HeldSpeed
 from pathplan.auditing.judge import audit
 from pathplan.auditing.model import Audit, Finding, JointAudit, Pacing, Peak, Singularity, StepPacing
 from pathplan.auditing.planned import (
@@ -22,6 +23,7 @@ __all__ = [
     "DriveUse",
     "Evidence",
     "Finding",
+    "HeldSpeed",
     "JointAudit",
     "LoadChange",
     "Pacing",

@@ -14,8 +14,9 @@ from pathplan.auditing.agreement import disagreements
 from pathplan.auditing.differences import ORDERS, Differences
 from pathplan.auditing.drives import Drives, DriveUse, jump_notes, overloads, torque_limits
 from pathplan.auditing.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
+from pathplan.auditing.held import Holding, held_findings
 from pathplan.auditing.jumps import Jumps
-from pathplan.auditing.model import QUANTITIES, TOLERANCE, Audit, Finding, JointAudit, Peak, Singularity
+from pathplan.auditing.model import QUANTITIES, TOLERANCE, TOOL, Audit, Finding, JointAudit, Peak, Singularity
 from pathplan.auditing.pacing import StepClock
 from pathplan.auditing.planned import (
     Evidence,
@@ -46,24 +47,27 @@ from pathplan.auditing.tool import (
     step_caps,
     tool_acceleration,
     tool_speed,
+    tool_turning_speed,
 )
 from pathplan.auditing.words import dimension_of, shown
 from pathplan.errors import InputError
 from pathplan.export.columns import DEGREES, MILLIMETRES
 from pathplan.table import JointTable
+from pathplan.task.model import Task
 
 __all__ = ["audit"]
 
 PIECE = 16384  # rows judged at once: bounds memory on long tables
 DERIVED = ("velocity", "acceleration", "jerk")
-TOOL = ("tool speed", "tool acceleration")
 
 
-def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned | None = None) -> Audit:
+def audit(
+    table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned | None = None, task: Task | None = None
+) -> Audit:
     """Judge a joint table, whole or in chunks, against the limits of an arm.
 
     Judged are: position, velocity, acceleration, jerk and torque of every joint and of every row that
-    limits a sum of joints; tool speed and acceleration against their caps; the finite differences of
+    limits a sum of joints; tool speed, turning speed and acceleration against their caps; the finite differences of
     the written positions, which are what the drive sees (rule: `pathplan.auditing.differences`); rest in
     the first and last row; times that repeat, go back or leave the grid of the cycle; values that are
     not finite. A value may pass its limit by 1e-6 of it, a position by 1e-9 rad or m. Without columns
@@ -73,8 +77,9 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
     each step; and with the plan, speeds asked and reached, times, corners, path deviation and the peaks of the
     trajectory between the rows.
 
-    `arm` carries the tool meant; with a plan each step's own tool counts for its caps. Raises
-    InputError if the table has another number or other kinds of joints than the arm.
+    `arm` carries the tool meant; with a plan, or the `task` whose steps the table counts, each step's own tool and caps
+    hold, and what became of the tool speeds that steps are to hold is told. Raises InputError if the table has another
+    number or other kinds of joints than the arm.
     """
     chunks = iter([table] if isinstance(table, JointTable) else table)
     first = next(chunks, None)
@@ -83,7 +88,7 @@ def audit(table: JointTable | Iterable[JointTable], arm: Arm, *, plan: Planned |
     kinds = [joint.kind for joint in arm.joints]
     whole = isinstance(table, JointTable) and plan is None and table.n == arm.n
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):  # absurd numbers become infinite: beyond limits
-        judge = _Judge(first, arm, plan, Rounding.of(first, kinds) if whole else NONE)
+        judge = _Judge(first, arm, plan, task, Rounding.of(first, kinds) if whole else NONE)
         if isinstance(table, JointTable):
             judge.differences.expect(table.position)
             judge.notes += disagreements(table, arm) if whole else ()
@@ -101,8 +106,11 @@ def _pieces(first: JointTable, rest: Iterator[JointTable]) -> Iterator[JointTabl
 class _Judge:
     """What is known after the rows so far."""
 
-    def __init__(self, first: JointTable, arm: Arm, plan: Planned | None, rounding: Rounding) -> None:
+    def __init__(
+        self, first: JointTable, arm: Arm, plan: Planned | None, task: Task | None, rounding: Rounding
+    ) -> None:
         self.arm, self.plan, self.rounding = arm, plan, rounding
+        self.task = plan.task if plan else task
         self.names, self.matrix = limit_rows(arm)
         self.kinds = row_kinds(arm)
         self.notes = _same_joints(first, arm)
@@ -119,10 +127,13 @@ class _Judge:
         self.differences = Differences(self.matrix, limits, np.array(factors), self.cycle, steps)
         self.jumps = Jumps(self.names, self.kinds, arm.limits.acceleration[: arm.n], steps)
         self.stamps = Stamps(self.cycle, stated=first.cycle is not None, rounding=rounding.time)
-        self.speed_caps, self.acceleration_caps = step_caps(arm, plan.task if plan else None)
-        self.arms = arms_by_step(arm, plan.task if plan else None)
+        self.caps = step_caps(arm, self.task)
+        self.arms = arms_by_step(arm, self.task)
         joints = [(name, q) for q in (*DERIVED, "torque") for name in self.names]
-        self.clock = StepClock([*joints, (None, TOOL[0]), (None, TOOL[1])], self.cycle)
+        labels = [*joints, *((None, quantity) for quantity in TOOL)]
+        self.clock = StepClock(labels, self.cycle)
+        self.pace = self.task.pace if self.task else 1.0
+        self.holding = Holding(self.task, self.caps.speed, labels, self.pace)
         self.rows, self.last_time = 0, 0.0
         self.joints: tuple[JointAudit, ...] = ()
         self.found: dict[Key, Exceedance] = {}
@@ -166,8 +177,11 @@ class _Judge:
         for quantity in (*DERIVED, "torque"):
             shares.append(self._share(quantity, columns.get(quantity), rows, velocity))
         self._share("position", columns["position"], rows, velocity)
-        shares += self._tool(table, good, rows, velocity)
-        self.clock.add(np.hstack(shares), table.step, self._times(table.time))
+        times, speed = self._times(table.time), self._tool_speed(table, good, velocity)
+        shares += self._tool(table, good, rows, velocity, speed)
+        self.clock.add(np.hstack(shares), table.step, times)
+        if speed is not None:
+            self.holding.add(speed, table.step, times * (self.cycle or 1.0), np.hstack(shares))
         if good.any():
             at = Rows(table.time[good], table.step[good], 0)
             numbers = self.rows + np.flatnonzero(good)
@@ -203,28 +217,51 @@ class _Judge:
         gather(self.found, exceedances(quantity, values, limits, shares, rows, rounded=rounded))
         return shares
 
-    def _tool(self, table: JointTable, good: NDArray[np.bool_], rows: Rows, velocity: Array) -> list[Array]:
-        """Shares (N, 1) of the caps on tool speed and tool acceleration; speed by differences if nothing else tells."""
-        speed = table.tool_speed
+    def _tool_speed(self, table: JointTable, good: NDArray[np.bool_], velocity: Array) -> Array | None:
+        """Tool speed (N,): the column, or of the joint velocities; by differences only if something caps it."""
+        if table.tool_speed is not None:
+            return table.tool_speed
+        if table.velocity is None and not np.isfinite(self.caps.speed).any():
+            return None
+        return self._rate(table, good & np.isfinite(velocity).all(axis=1), velocity, tool_speed)
+
+    def _rate(self, table: JointTable, at: NDArray[np.bool_], velocity: Array, of: Any) -> Array:
+        """A speed (N,) of the tool, `of` arm, positions and velocities, in the rows `at` (N,); zero elsewhere."""
+        found, known = np.zeros(len(table)), np.flatnonzero(at)
+        for arm, mine in by_tool(self.arms, table.step[known]):
+            k = known[mine]
+            found[k] = of(arm, table.position[k], velocity[k])
+        return found
+
+    def _rate_rounding(self, table: JointTable, good: NDArray[np.bool_], rows: slice) -> Array:
+        """What rounding of the positions makes of a speed of the tool by differences; `rows` of the Jacobian."""
+        steps = self.rounding.step("position", self.arm.n)
+        if table.velocity is not None or not steps.any() or not good.any():
+            return np.zeros(1)
+        reach = np.linalg.norm(self.arm.jacobian(table.position[good])[:, rows], axis=1).max(axis=0)
+        return np.array([reach @ steps / self._interval(table.time)])  # both rows of a difference are rounded
+
+    def _tool(
+        self, table: JointTable, good: NDArray[np.bool_], rows: Rows, velocity: Array, speed: Array | None
+    ) -> list[Array]:
+        """Shares (N, 1) of the caps on tool speed, tool acceleration and turning speed."""
         rounded = np.zeros(1)
-        if speed is None and (table.velocity is not None or np.isfinite(self.speed_caps).any()):
-            known = np.where(np.isfinite(velocity).all(axis=1) & good)[0]
-            speed = np.zeros(len(table))
-            for arm, at in by_tool(self.arms, table.step[known]):
-                k = known[at]
-                speed[k] = tool_speed(arm, table.position[k], velocity[k])
-            steps = self.rounding.step("position", self.arm.n)
-            if table.velocity is None and steps.any() and len(known):  # both rows of a difference are rounded
-                reach = np.linalg.norm(self.arm.jacobian(table.position[known])[:, :3], axis=1).max(axis=0)
-                rounded = np.array([reach @ steps / self._interval(table.time)])
         if speed is not None:
             times = self._times(table.time)
-            for step, mine in tool_speed_by_step(speed, self.speed_caps, table.step, times).items():
+            for step, mine in tool_speed_by_step(speed, self.caps.speed, table.step, times).items():
                 was = self.speeds.get(step, (0.0, 0.0, 0.0))
                 self.speeds[step] = (max(was[0], mine[0]), was[1] + mine[1], was[2] + mine[2])
-        shares = [self._tool_share(TOOL[0], speed, self.speed_caps, rows, rounded)]
+            if table.tool_speed is None:
+                rounded = self._rate_rounding(table, good, slice(3))
+        shares = [self._tool_share(TOOL[0], speed, self.caps.speed, rows, rounded)]
         acceleration = self._acceleration(table, good)
-        return [*shares, self._tool_share(TOOL[1], acceleration, self.acceleration_caps, rows, np.zeros(1))]
+        shares.append(self._tool_share(TOOL[1], acceleration, self.caps.acceleration, rows, np.zeros(1)))
+        cap = self.caps.turning_speed[np.minimum(table.step, len(self.caps.turning_speed) - 1)]
+        at, turning = good & np.isfinite(cap) & np.isfinite(velocity).all(axis=1), None
+        if at.any():
+            turning = self._rate(table, at, velocity, tool_turning_speed)
+            rounded = self._rate_rounding(table, good, slice(3, 6))
+        return [*shares, self._tool_share(TOOL[2], turning, self.caps.turning_speed, rows, rounded)]
 
     def _interval(self, time: Array) -> float:
         """The cycle, or else the shortest interval between rows."""
@@ -235,7 +272,7 @@ class _Judge:
         """Tool acceleration (N,), only where something caps it."""
         if table.velocity is None or table.acceleration is None:
             return None
-        cap = self.acceleration_caps[np.minimum(table.step, len(self.acceleration_caps) - 1)]
+        cap = self.caps.acceleration[np.minimum(table.step, len(self.caps.acceleration) - 1)]
         at = np.flatnonzero(good & np.isfinite(cap))
         if not len(at):
             return None
@@ -302,9 +339,11 @@ class _Judge:
             findings=tuple(self._findings(evidence, drives)),
             tool_speed=self.tool_peaks[TOOL[0]][0],
             tool_acceleration=self.tool_peaks[TOOL[1]][0],
+            tool_turning_speed=self.tool_peaks[TOOL[2]][0],
             singularity=self.singularity,
             pacing=self.clock.pacing(names) if self.measured == "columns" else (),
-            speeds=step_speeds(self.speeds, self.speed_caps, names) if plan else (),
+            speeds=step_speeds(self.speeds, self.caps.speed, names) if plan else (),
+            held=self.holding.found(),
             motion_time=moving,
             waiting_time=waiting,
             deviation_rows=evidence.deviation_rows,
@@ -362,6 +401,7 @@ class _Judge:
         elif self.stamps.stated is False:
             text = f"the table states no cycle: {self.cycle * 1e3:.6g} ms found from its times"
             yield Finding("note", text)
+        yield from held_findings(self.holding.found(), self.task, self.pace)
         yield from self.notes
         for text in self.arm.warnings:
             yield Finding("warning", f"arm {self.arm.name}: {text}")

@@ -95,11 +95,19 @@ def _number(word: str, dimension: str, option: str) -> float:
 
 
 def plan_line(
-    arm: Arm, start: Target, goal: Target, *, speed: float | None = None, cycle: float = 0.004, pace: float = 1.0
+    arm: Arm,
+    start: Target,
+    goal: Target,
+    *,
+    speed: float | None = None,
+    turning_speed: float | None = None,
+    cycle: float = 0.004,
+    pace: float = 1.0,
 ) -> tuple[Plan, int, int]:
     """The plan of a straight line of the tool, how many starts there are, and how many of them can follow it.
 
-    A start given as a pose leaves the branch open: of all that can follow the line the fastest is taken. Raises
+    `speed` (m/s) and `turning_speed` (rad/s) cap the tool. A start given as a pose leaves the branch open: of all that
+    can follow the line the fastest is taken. Raises
     UnreachableError with the reason of the branch that gets furthest, and what `pathplan.plan` raises.
     """
     import pathplan
@@ -110,7 +118,8 @@ def plan_line(
     able, best_key = 0, (0.0, 0.0)
     for joints in starts:
         try:
-            plan = pathplan.plan(_line_task(arm, joints, goal, speed=speed, cycle=cycle, pace=pace))
+            task = _line_task(arm, joints, goal, cycle)
+            plan = pathplan.plan(replace(task, speed=speed, turning_speed=turning_speed, pace=pace))
         except UnreachableError as error:
             if refusal is None or error.data.get("share", 0.0) > refusal.data.get("share", 0.0):
                 refusal = error
@@ -132,10 +141,10 @@ def _least_margin(plan: Plan) -> float:
     return 1.0 - float(position_shares(rows_of(plan.table.position, arm.limits.matrix), arm.limits.position)[0].max())
 
 
-def _line_task(arm: Arm, start: Array, goal: Target, *, speed: float | None, cycle: float, pace: float) -> Task:
+def _line_task(arm: Arm, start: Array, goal: Target, cycle: float) -> Task:
     payload = arm.payload.name if arm.payload is not None else None
-    step = Step(index=0, motion="line", where="line", target=goal, speed=speed, tool=arm.tool.name, payload=payload)
-    return Task("line", None, arm, np.array(start), (step,), cycle, speed=speed, pace=pace, sources=dict(arm.sources))
+    step = Step(index=0, motion="line", where="line", target=goal, tool=arm.tool.name, payload=payload)
+    return Task("line", None, arm, np.array(start), (step,), cycle, sources=dict(arm.sources))
 
 
 def line_parts(plan: Plan, parts: int = PARTS) -> tuple[LinePart, ...]:

@@ -8,11 +8,13 @@ from typing import TYPE_CHECKING, Any, Literal
 
 if TYPE_CHECKING:
     from pathplan.auditing.drives import DriveUse
+    from pathplan.auditing.held import HeldSpeed
     from pathplan.auditing.planned import CornerUse, Deviation, StepSpeed
 
 __all__ = [
     "QUANTITIES",
     "TOLERANCE",
+    "TOOL",
     "Audit",
     "Finding",
     "JointAudit",
@@ -23,6 +25,7 @@ __all__ = [
     "StepPacing",
 ]
 
+TOOL = ("tool speed", "tool acceleration", "tool turning speed")  # what caps on the tool limit
 QUANTITIES = ("position", "velocity", "acceleration", "jerk", "torque")
 TOLERANCE = 1e-6  # of a limit: shares up to 1 + TOLERANCE pass (design.md, numeric contract)
 Level = Literal["exceedance", "warning", "note"]
@@ -106,7 +109,7 @@ class Pacing:
     """A limit that sets the pace of a step for part (0..1) of its time. `joint` is None for the tool."""
 
     joint: str | None
-    quantity: str  # "velocity", "acceleration", "jerk", "torque", "tool speed", "tool acceleration", "none"
+    quantity: str  # "velocity", "acceleration", "jerk", "torque", "tool ..." of `TOOL`, "none"
     part: float
 
 
@@ -140,9 +143,11 @@ class Audit:
     findings: tuple[Finding, ...]
     tool_speed: Peak | None = None
     tool_acceleration: Peak | None = None
+    tool_turning_speed: Peak | None = None
     singularity: Singularity | None = None
     pacing: tuple[StepPacing, ...] = ()
     speeds: tuple[StepSpeed, ...] = ()
+    held: tuple[HeldSpeed, ...] = ()  # of the steps that are to hold a tool speed
     motion_time: float | None = None  # s
     waiting_time: float | None = None  # s
     deviation_rows: Deviation | None = None
@@ -151,6 +156,10 @@ class Audit:
     continuous: tuple[JointAudit, ...] = ()  # of the trajectory itself, evaluated between the rows
     drives: tuple[DriveUse, ...] = ()  # where the table has torque
     bound: float | None = None  # s, lower bound of the duration, where the plan states one
+
+    def tool_peaks(self) -> dict[str, Peak | None]:
+        """The peaks of the tool by the quantities of `TOOL`, None where nothing caps it."""
+        return {quantity: getattr(self, quantity.replace(" ", "_")) for quantity in TOOL}
 
     @property
     def passed(self) -> bool:

@@ -7,6 +7,7 @@ from dataclasses import asdict
 from typing import Any
 
 from pathplan.auditing.drives import DriveUse, rpm
+from pathplan.auditing.held import HELD_WITHIN, HeldSpeed
 from pathplan.auditing.model import Audit, Finding, JointAudit, Peak
 from pathplan.auditing.planned import CornerUse, Deviation
 from pathplan.auditing.words import dimension_of
@@ -20,7 +21,7 @@ _REGIONS = {"length": "length", "angle": "angle", "share": "ratio"}
 
 def audit_as_dict(audit: Audit) -> dict[str, Any]:
     """All of an audit. Every number is finite or None; a value's unit stands beside it."""
-    singularity = audit.singularity
+    singularity, turning = audit.singularity, _peak(audit.tool_turning_speed, "angular_speed")
     return {
         "passed": audit.passed,
         "units": UNITS,
@@ -38,6 +39,7 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
         "coupled": [_joint(row) for row in audit.rows],
         "tool_speed": _peak(audit.tool_speed, "speed"),
         "tool_acceleration": _peak(audit.tool_acceleration, "acceleration"),
+        **({"tool_turning_speed": turning} if turning is not None else {}),
         "singularity": singularity
         and {"smallest_singular_value": singularity.value, **_place(singularity.time, singularity.step)},
         "pacing": [
@@ -61,6 +63,7 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
             }
             for speed in audit.speeds
         ],
+        **({"held": [_held(held) for held in audit.held]} if audit.held else {}),
         "path_deviation": {
             "rows": _deviation(audit.deviation_rows),
             "midway": _deviation(audit.deviation_midway),
@@ -68,6 +71,34 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
         "corners": [_corner(corner) for corner in audit.corners],
         "continuous": [_joint(joint) for joint in audit.continuous],
         "findings": [_finding(finding, audit) for finding in audit.findings],
+    }
+
+
+def _held(held: HeldSpeed) -> dict[str, Any]:
+    """One step that is to hold a tool speed; parts in percent of the whole step."""
+    return {
+        "step": held.step + 1,
+        "name": held.name,
+        "held_mm_s": 1000 * held.speed,
+        "capped_at_mm_s": 1000 * held.cap,
+        "tolerance_percent": 100 * HELD_WITHIN,
+        "percent_of_length": 100 * held.length_part,
+        "percent_of_time": 100 * held.time_part,
+        "length_mm": 1000 * held.length,
+        "time_s": held.time,
+        "reached_mm_s": 1000 * held.reached,
+        "begins_at_rest": held.begins_at_rest,
+        "ends_at_rest": held.ends_at_rest,
+        "elsewhere": [
+            {
+                "where": missed.where,
+                "joint": missed.joint,
+                "quantity": missed.quantity,
+                "percent_of_length": 100 * missed.length_part,
+                "percent_of_time": 100 * missed.time_part,
+            }
+            for missed in held.missed
+        ],
     }
 
 

@@ -1,10 +1,10 @@
-"""The tool in a table: speed and acceleration, the caps on them, and how near it comes to a singularity."""
+"""The tool in a table: its speeds and acceleration, the caps on them, and how near it comes to a singularity."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,28 +13,40 @@ from pathplan.arm import Arm
 from pathplan.arm.kinematics import smallest_singular_value
 from pathplan.auditing.model import Singularity
 from pathplan.auditing.shares import Array, Rows
+from pathplan.path.caps import StepCaps, caps_of
 from pathplan.path.cartesian import tool_of
 
-__all__ = ["arms_by_step", "by_tool", "nearest_singularity", "step_caps", "tool_acceleration", "tool_speed"]
+__all__ = [
+    "ToolCaps",
+    "arms_by_step",
+    "by_tool",
+    "nearest_singularity",
+    "step_caps",
+    "tool_acceleration",
+    "tool_speed",
+    "tool_turning_speed",
+]
 
 Numbers = NDArray[np.intp]
 TRAVEL = 0.02  # rad of joint travel, m over the arm's length, between rows at which a singular value is taken
 FEW = 512  # rows that are not worth halving
 
 
-def step_caps(arm: Arm, task: Any = None) -> tuple[Array, Array]:
-    """Caps on tool speed and acceleration (S,) by step, inf where there is none; (1,) without a task.
+class ToolCaps(NamedTuple):
+    """Caps on the tool (S,) by step, inf where there is none: m/s, m/s^2, rad/s."""
 
-    The lowest of what step, task and tool say. Raises nothing.
-    """
-    if task is None:
-        return _lowest(arm.tool.speed), _lowest(arm.tool.acceleration)
-    speeds, accelerations = [], []
-    for step in task.steps:
-        tool = tool_of(arm, step.tool)
-        speeds.append(_lowest(step.speed, task.speed, tool.speed)[0])
-        accelerations.append(_lowest(step.acceleration, tool.acceleration)[0])
-    return np.array(speeds), np.array(accelerations)
+    speed: Array
+    acceleration: Array
+    turning_speed: Array
+
+
+def step_caps(arm: Arm, task: Any = None) -> ToolCaps:
+    """The lowest of what step, task and tool say; (1,), of the tool, without a task. Raises nothing."""
+    tool = arm.tool
+    rows = [StepCaps(tool.speed, tool.acceleration, tool.turning_speed)]
+    if task is not None:
+        rows = [caps_of(step, task, arm) for step in task.steps]
+    return ToolCaps(*np.array([[math.inf if cap is None else cap for cap in row] for row in rows]).T.copy())
 
 
 def arms_by_step(arm: Arm, task: Any = None) -> tuple[Arm, ...]:
@@ -62,13 +74,14 @@ def by_tool(arms: Sequence[Arm], step: NDArray[np.int64]) -> Iterator[tuple[Arm,
         yield different[k], np.flatnonzero(mine == k)
 
 
-def _lowest(*caps: float | None) -> Array:
-    return np.array([min((cap for cap in caps if cap is not None), default=math.inf)])
-
-
 def tool_speed(arm: Arm, position: Array, velocity: Array) -> Array:
     """Speed (N,) m/s of the tool centre point for positions and velocities (N, n)."""
     return np.linalg.norm(np.einsum("nij,nj->ni", arm.jacobian(position)[:, :3], velocity), axis=1)
+
+
+def tool_turning_speed(arm: Arm, position: Array, velocity: Array) -> Array:
+    """Angular speed (N,) rad/s of the tool for positions and velocities (N, n)."""
+    return np.linalg.norm(np.einsum("nij,nj->ni", arm.jacobian(position)[:, 3:], velocity), axis=1)
 
 
 def tool_acceleration(arm: Arm, position: Array, velocity: Array, acceleration: Array) -> Array:

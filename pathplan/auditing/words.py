@@ -6,7 +6,7 @@ from pathplan.units import format_quantity, format_value, joint_dimension
 
 __all__ = ["apart", "dimension_of", "shown"]
 
-_TOOL = {"tool speed": "speed", "tool acceleration": "acceleration"}
+_TOOL = {"tool speed": "speed", "tool acceleration": "acceleration", "tool turning speed": "angular_speed"}
 
 
 def dimension_of(kind: str, quantity: str) -> str | None:

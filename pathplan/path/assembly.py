@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
+from pathplan.path.caps import StepCaps, caps_of, lower
 from pathplan.path.cartesian import CartesianPath, tool_of
 from pathplan.path.choice import Choice
 from pathplan.path.fit import Pieces
@@ -16,7 +17,7 @@ from pathplan.path.joint import Array, JointPath
 from pathplan.path.layout import Layout
 from pathplan.path.spans import Spans
 from pathplan.path.taskpath import Cap, Corner, StepPart, Stretch, TaskPath, Wait
-from pathplan.task.model import Step, Task
+from pathplan.task.model import Step
 
 __all__ = ["assemble"]
 
@@ -129,29 +130,18 @@ def _step_parts(
     return parts
 
 
-def _step_caps(task: Task, step: Step) -> tuple[float | None, float | None]:
-    tool = tool_of(task.arm, step.tool)
-    return _lower(step.speed, tool.speed, task.speed), _lower(step.acceleration, tool.acceleration)
-
-
-def _lower(*values: float | None) -> float | None:
-    return min((value for value in values if value is not None), default=None)
-
-
 def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple[Cap, ...]:
     caps: list[Cap] = []
     for i in span:
-        own = [
-            _step_caps(path.task, path.legs[spans.motions.leg[m]].step)
-            for m in (spans.before[i], spans.after[i])
-            if m >= 0
-        ]
-        speed, acceleration = (_lower(*values) for values in zip(*own, strict=True))
-        end = float(start[i] + spans.length[i])
-        if caps and (caps[-1].speed, caps[-1].acceleration) == (speed, acceleration):
-            caps[-1] = Cap(caps[-1].s_from, end, speed, acceleration)
+        steps = [path.legs[spans.motions.leg[m]].step for m in (spans.before[i], spans.after[i]) if m >= 0]
+        own = [caps_of(step, path.task, path.task.arm) for step in steps]
+        lowest = StepCaps(*(lower(*values) for values in zip(*own, strict=True)))
+        held = any(step.held_speed is not None for step in steps)
+        cap = Cap(float(start[i]), float(start[i] + spans.length[i]), *lowest, held)
+        if caps and caps[-1][2:] == cap[2:]:
+            caps[-1] = cap._replace(s_from=caps[-1].s_from)
         else:
-            caps.append(Cap(float(start[i]), end, speed, acceleration))
+            caps.append(cap)
     return tuple(caps)
 
 

@@ -32,7 +32,8 @@ class StepPart(NamedTuple):
 
 
 class Cap(NamedTuple):
-    """Tool speed (m/s) and acceleration (m/s^2) not to be exceeded from s_from to s_to; None: no cap.
+    """Tool speed (m/s), acceleration (m/s^2) and turning speed (rad/s) not to be exceeded from s_from to s_to; None:
+    no cap.
 
     The lower of what step, tool and task ask; in a corner the lower of both its steps.
     """
@@ -41,6 +42,8 @@ class Cap(NamedTuple):
     s_to: float
     speed: float | None
     acceleration: float | None
+    turning_speed: float | None
+    held: bool = False  # whether a step is to hold its tool speed there
 
 
 @dataclass(frozen=True, eq=False)

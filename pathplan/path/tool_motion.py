@@ -1,4 +1,4 @@
-"""How the tool centre point moves when the joints do."""
+"""How the tool moves when the joints do."""
 
 from __future__ import annotations
 
@@ -8,7 +8,7 @@ from pathplan.arm import Arm
 from pathplan.arm.kinematics import spatial_axes
 from pathplan.path.joint import Array
 
-__all__ = ["tool_derivatives"]
+__all__ = ["tool_derivatives", "tool_turning"]
 
 
 def tool_derivatives(arm: Arm, q: Array, q1: Array, q2: Array) -> tuple[Array, Array]:
@@ -30,6 +30,15 @@ def tool_derivatives(arm: Arm, q: Array, q1: Array, q2: Array) -> tuple[Array, A
     first = v + _cross(w, point)
     second = v1 + _cross(w1, point) + _cross(w, first)
     return first.T, second.T
+
+
+def tool_turning(arm: Arm, q: Array, q1: Array) -> Array:
+    """Derivative (N, 3) of the tool's orientation, rad about the base axes per parameter, from q, q' (N, n)."""
+    axes, _ = spatial_axes(arm, q)
+    turning = np.zeros((3, len(q)))
+    for i in arm.chain.path:
+        turning += axes[i, 3:] * q1[:, i]
+    return turning.T
 
 
 def _cross(a: Array, b: Array) -> Array:

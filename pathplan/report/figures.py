@@ -49,8 +49,8 @@ __all__ = [
 # Okabe & Ito 2008, "Color Universal Design"
 BLACK, ORANGE, SKY, GREEN, YELLOW = "#000000", "#E69F00", "#56B4E9", "#009E73", "#F0E442"
 BLUE, VERMILLION, PURPLE = "#0072B2", "#D55E00", "#CC79A7"
-COLOURS = dict(zip(PACED, (BLUE, ORANGE, GREEN, PURPLE, SKY, YELLOW), strict=True))
-HATCHES = dict(zip(PACED, ("", "///", "..", "--", "||", "xx"), strict=True))
+COLOURS = dict(zip(PACED, (BLUE, ORANGE, GREEN, PURPLE, SKY, YELLOW, VERMILLION), strict=True))
+HATCHES = dict(zip(PACED, ("", "///", "..", "--", "||", "xx", "\\\\\\"), strict=True))
 MUTED, RULE, SHADE = "#565c64", "#c9cbc6", "#f0f0ec"
 POINTS = 2000  # half the points of a line
 WIDTH = 10.0  # inches
@@ -105,7 +105,7 @@ def torque(source: Plan | JointTable, arm: Arm | None = None) -> Figure:
 
 
 def tool(source: Plan | JointTable, arm: Arm | None = None) -> Figure:
-    """Tool speed with its caps, and with a plan how far the tool lies from its programmed path."""
+    """Tool speed and turning speed with their caps, and with a plan how far the tool lies from its programmed path."""
     picture = _picture(source, arm)
     lanes = tool_lanes(picture)
     if not lanes:
@@ -294,7 +294,7 @@ def _lane(axes: Axes, picture: Picture, lane: Lane, *, named: bool) -> None:
                       va="center", fontsize=7, color=MUTED)  # fmt: skip
     _time_limits(axes, picture)
     edges = sorted({value for _, _, value in lane.limits})
-    if edges and lane.key not in ("deviation", "turn", "tool speed"):
+    if edges and lane.key not in ("deviation", "turn", "tool speed", "tool turning speed"):
         axes.set_yticks([edge for edge in edges if math.isfinite(edge)])
         axes.yaxis.set_major_formatter(lambda value, _: format_value(value))
     unit = lane.unit.replace("^2", "²").replace("^3", "³")

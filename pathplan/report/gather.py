@@ -16,15 +16,16 @@ from numpy.typing import NDArray
 
 from pathplan.auditing import Audit
 from pathplan.auditing.drives import torque_limits
-from pathplan.auditing.model import QUANTITIES
+from pathplan.auditing.model import QUANTITIES, TOOL
 from pathplan.auditing.pacing import PACING
 from pathplan.auditing.shares import limit_rows, row_kinds, rows_of, shares_of
-from pathplan.auditing.tool import step_caps, tool_acceleration
+from pathplan.auditing.tool import step_caps, tool_acceleration, tool_turning_speed
 from pathplan.report.thinning import Array, bucket_size, extremes, run_ends
 from pathplan.table import JointTable, Mark
 
 if TYPE_CHECKING:
     from pathplan.arm import Arm
+    from pathplan.auditing.tool import ToolCaps
     from pathplan.planning import Plan
 
 __all__ = ["BUCKETS", "MOST_ROWS", "PACED", "Line", "Picture", "Run", "picture_of", "picture_of_table"]
@@ -32,8 +33,8 @@ __all__ = ["BUCKETS", "MOST_ROWS", "PACED", "Line", "Picture", "Run", "picture_o
 BUCKETS = 600  # a line is drawn with at most twice as many points
 MOST_ROWS = 65_536  # rows that a reader can step through: a minute at 1 kHz
 CHUNK = 16_384
-PACED = ("velocity", "acceleration", "jerk", "torque", "tool speed", "tool acceleration")
-TOOL_COLUMNS = ("tool x", "tool y", "tool z", "tool speed", "deviation", "turn")
+PACED = ("velocity", "acceleration", "jerk", "torque", *TOOL)
+TOOL_COLUMNS = ("tool x", "tool y", "tool z", "tool speed", "tool turning speed", "deviation", "turn")
 Integers = NDArray[np.int64]
 
 
@@ -60,12 +61,13 @@ class Run:
 class Picture:
     """What is drawn of a motion. R limit rows of the arm, its joints first; everything SI.
 
-    `lines`: (quantity, limit row) -> Line, and ("tool speed" | "deviation" | "turn", -1) -> Line, of those that there
-    are; deviation (m) and turn (rad) from the programmed path need a plan; ("torque left", joint) is the part (0..1)
-    of a torque limit that the speed leaves, where a drive has less at speed. `kept`: columns (M,) of the rows that can
-    be read one by one, by the same keys, with ("tool x", -1) and so on; `kept_rows` (M,) are their numbers. `labels`:
-    (limit row or -1 for the tool, quantity) of what can pace; `pace` the runs of rows that one of them paces, `steps`
-    the runs of rows of one step. `step_names` by step, "" where unnamed.
+    `lines`: (quantity, limit row) -> Line, and (one of `TOOL_COLUMNS` from "tool speed" on, -1) -> Line, of those that
+    there are: the turning speed where something caps it; deviation (m) and turn (rad) off the programmed path need a
+    plan; ("torque left", joint) is the part (0..1) of a torque limit that the speed leaves, where a drive has less at
+    speed. `kept`: columns (M,) of the rows that can be read one by one, by the same keys, with ("tool x", -1) and so
+    on; `kept_rows` (M,) are their numbers. `labels`: (limit row or -1 for the tool, quantity) of what can pace; `pace`
+    the runs of rows that one of them paces, `steps` the runs of rows of one step. `step_names` by step, "" where
+    unnamed.
     """
 
     title: str
@@ -85,7 +87,7 @@ class Picture:
     marks: tuple[Mark, ...]
     step_names: tuple[str, ...]
     motions: tuple[str, ...]  # by step
-    speed_caps: Array  # (S,) m/s by step, inf where none
+    caps: ToolCaps  # by step, inf where none
     kept_rows: Integers
     kept_time: Array
     kept_step: Integers
@@ -199,7 +201,8 @@ class _Gathering:
         rows: set[int] = set()
         for joint in (*self.audit.joints, *self.audit.rows):
             rows |= {peak.row for peak in joint.peaks().values()}
-        rows |= {peak.row for peak in (self.audit.tool_speed, self.audit.tool_acceleration) if peak is not None}
+        tool = (self.audit.tool_speed, self.audit.tool_acceleration, self.audit.tool_turning_speed)
+        rows |= {peak.row for peak in tool if peak is not None}
         if self.plan is not None:
             rows |= {mark.row for mark in self.plan.marks} | {part.last for part in self.plan.parts}
         few = np.array(sorted(rows)[:most], dtype=np.int64)
@@ -256,13 +259,15 @@ class _Gathering:
             self.kept.setdefault((quantity, r), []).append(values[mine, r])
 
     def _tool(self, table: JointTable, deviations: Array | None, mine: Integers) -> list[Array]:
-        """Keeps what the tool does; shares (N, 1) of the caps on its speed and acceleration."""
+        """Keeps what the tool does; shares (N, 1) of the caps on its speed, acceleration and turning speed."""
         count = len(table)
         columns: dict[str, Array] = {}
         pose = table.pose if table.pose is not None else self.arm.forward(table.position)
         columns |= {name: pose[:, k, 3] for k, name in enumerate(TOOL_COLUMNS[:3])}
         if table.tool_speed is not None:
             columns["tool speed"] = table.tool_speed
+        if table.velocity is not None and np.isfinite(self.caps.turning_speed).any():
+            columns["tool turning speed"] = tool_turning_speed(self.arm, table.position, table.velocity)
         if deviations is not None:
             columns |= {"deviation": deviations[:, 0], "turn": deviations[:, 1]}
         for name, values in columns.items():
@@ -270,14 +275,15 @@ class _Gathering:
                 rows = extremes(values[:, None], self.size)[:, 0]
                 self.drawn.setdefault((name, -1), []).append((table.time[rows], values[rows]))
             self.kept.setdefault((name, -1), []).append(values[mine])
-        cap, speedup = (caps[np.minimum(table.step, len(caps) - 1)] for caps in self.caps)
+        cap, speedup, turning = (caps[np.minimum(table.step, len(caps) - 1)] for caps in self.caps)
         speed = columns.get("tool speed", np.zeros(count)) / cap
+        turned = columns.get("tool turning speed", np.zeros(count)) / turning
         acceleration = np.zeros(count)
         at = np.flatnonzero(np.isfinite(speedup))
         if len(at) and table.velocity is not None and table.acceleration is not None:
             found = tool_acceleration(self.arm, table.position[at], table.velocity[at], table.acceleration[at])
             acceleration[at] = found / speedup[at]
-        return [speed[:, None], acceleration[:, None]]
+        return [speed[:, None], acceleration[:, None], turned[:, None]]
 
     def _pace(self, shares: Array) -> Integers:
         """Index (N,) of the label of which each row uses the largest share, -1 below what the audit calls pacing."""
@@ -319,7 +325,7 @@ class _Gathering:
             marks=marks,
             step_names=tuple(step.name for step in steps),
             motions=tuple(step.motion for step in steps),
-            speed_caps=self.caps[0],
+            caps=self.caps,
             kept_rows=joined["row"],
             kept_time=joined["time"],
             kept_step=joined["step"],

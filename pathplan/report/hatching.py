@@ -25,6 +25,8 @@ def filling(quantity: str, box: Box) -> str:
         return "".join(f"M{number(x + dx)} {number(y)}v{number(height)}" for dx in _spaced(width, 4.0))
     if quantity == "tool acceleration":
         return slanted(box) + slanted(box, rising=True)
+    if quantity == "tool turning speed":
+        return slanted(box, rising=True)
     return ""
 
 

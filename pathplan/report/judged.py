@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 import pathplan
 from pathplan.errors import InputError
+from pathplan.path.caps import lower
 from pathplan.report.screen import audit_screen, verdict
 from pathplan.report.text import aligned, clock, printable
 from pathplan.report.written import written_as_dict, written_lines
@@ -35,7 +36,8 @@ MOST_TARGETS = 40  # lines of targets shown; the rest is in --json
 class Judging:
     """How a table is judged: files of its arm and of a task, the tool by name, how a table from elsewhere is read.
 
-    `near` (m, rad): how near a target of the task must be passed. `speed` (m/s) caps the tool. None: not said.
+    `near` (m, rad): how near a target of the task must be passed. `speed` (m/s) and `turning_speed` (rad/s) cap the
+    tool. None: not said.
     """
 
     arm: str | None = None
@@ -44,6 +46,7 @@ class Judging:
     asked: Asked | None = None
     near: tuple[float, float] | None = None
     speed: float | None = None
+    turning_speed: float | None = None
 
 
 @dataclass(frozen=True)
@@ -87,11 +90,13 @@ def judge_file(file: str, how: Judging) -> Judged:
     if arm is not None:
         if task is None:
             arm = _with_tool(arm, table, how.tool)
-        if how.speed is not None:
-            lowest = how.speed if arm.tool.speed is None else min(how.speed, arm.tool.speed)
-            arm = dataclasses.replace(arm, tool=dataclasses.replace(arm.tool, speed=lowest))
+        steps = None if task is None else _whose_steps(table, task, how)
+        caps = (how.speed, how.turning_speed)
+        if task is not None and steps is None:  # of its caps those hold that it has for every step
+            caps = lower(how.speed, task.speed), lower(how.turning_speed, task.turning_speed)
+        arm = _capped(arm, *caps)
         try:
-            audit = pathplan.audit(table, arm)
+            audit = pathplan.audit(table, arm, task=steps)
             if task is not None:
                 audit, passes = _with_targets(audit, table, task, how)
         except InputError as error:
@@ -102,6 +107,25 @@ def judge_file(file: str, how: Judging) -> Judged:
     elif table.meta.get("breaks_limits"):
         breaks = "its header says so"
     return Judged(file, table, arm, audit, notes, breaks, passes)
+
+
+def _whose_steps(table: JointTable, task: Task, how: Judging) -> Task | None:
+    """The task, with the caps that are asked besides, if the table's steps are its own; None if they are not."""
+    if table.meta.get("task_file") != (task.file.name if task.file else None) or table.step.max() >= len(task.steps):
+        return None
+    speed, turning = lower(how.speed, task.speed), lower(how.turning_speed, task.turning_speed)
+    pace = table.meta.get("pace", 1.0)
+    known = isinstance(pace, int | float) and 0 < pace <= 1
+    return dataclasses.replace(task, speed=speed, turning_speed=turning, pace=pace if known else 1.0)
+
+
+def _capped(arm: Arm, speed: float | None, turning_speed: float | None) -> Arm:
+    """The arm with a tool that may move no faster."""
+    tool = arm.tool
+    lowest = lower(speed, tool.speed), lower(turning_speed, tool.turning_speed)
+    if lowest == (tool.speed, tool.turning_speed):
+        return arm
+    return dataclasses.replace(arm, tool=dataclasses.replace(tool, speed=lowest[0], turning_speed=lowest[1]))
 
 
 def _task(how: Judging) -> Task | None:

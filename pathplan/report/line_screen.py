@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from pathplan.auditing.line import LinePart, Worst
 from pathplan.auditing.words import dimension_of, shown
-from pathplan.report.plan_data import plan_as_dict
+from pathplan.report.plan_data import capped, plan_as_dict
 from pathplan.report.screen import audit_blocks, verdict
 from pathplan.report.text import aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value, joint_dimension, to_screen
@@ -47,8 +47,7 @@ def _head(line: LineAudit) -> Iterator[str]:
     arm = plan.task.arm
     parts = [f"arm {arm.name}", f"tool {arm.tool.name}"]
     parts += [f"payload {arm.payload.name}"] if arm.payload is not None else []
-    cap = plan.task.speed
-    parts += [f"tool speed capped at {format_quantity(cap, 'speed')}"] if cap is not None else []
+    parts += capped(plan.task)
     yield fit(printable(", ".join(parts)))
     yield f"{clock(plan.motion_time)} in motion; {plan.ticks + 1} rows at {format_value(plan.task.cycle * 1e3)} ms"
     if line.starts > 1:

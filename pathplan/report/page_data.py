@@ -25,9 +25,10 @@ TOOL = {
     "tool y": (1e3, 3),
     "tool z": (1e3, 3),
     "tool speed": (1e3, 2),
+    "tool turning speed": (math.degrees(1.0), 3),
     "deviation": (1e6, 3),
     "turn": (1e6, 3),
-}  # factor from SI to mm, mm/s, um and urad; decimals
+}  # factor from SI to mm, mm/s, deg/s, um and urad; decimals
 
 
 def page_data(picture: Picture, scene: Scene) -> dict[str, Any]:

@@ -6,14 +6,15 @@ import math
 from collections.abc import Iterator
 from typing import TYPE_CHECKING, Any
 
-from pathplan.report.plan_data import bound_at_pace
+from pathplan.auditing.held import held_percent
+from pathplan.report.plan_data import bound_at_pace, capped
 from pathplan.report.screen import audit_blocks, verdict
 from pathplan.report.terminal import Signs, terminal_picture
 from pathplan.report.text import aligned, clock, fit, printable
 from pathplan.units import format_quantity, format_value
 
 if TYPE_CHECKING:
-    from pathplan.auditing import CornerUse, StepPacing, StepSpeed
+    from pathplan.auditing import CornerUse, HeldSpeed, StepPacing, StepSpeed
     from pathplan.planning import Plan
     from pathplan.task import Step
 
@@ -23,7 +24,7 @@ MOST_STEPS = 40  # rows shown; the rest is in --json
 MOST_MARKS = 20
 SAME = 1e-3  # a blend within this of what was asked counts as what was asked
 _DIMENSIONS = {"length": "length", "angle": "angle", "share": "ratio"}
-_SHORT = {"acceleration": "accel.", "tool acceleration": "tool accel."}
+_SHORT = {"acceleration": "accel.", "tool acceleration": "tool accel.", "tool turning speed": "tool turning"}
 
 
 def plan_screen(plan: Plan, signs: Signs | None = None) -> str:
@@ -57,7 +58,7 @@ def _head(plan: Plan) -> Iterator[str]:
     parts = [f"arm {arm.name}", f"tool{'s' * (len(task.tools) > 1)} {', '.join(task.tools)}"]
     parts += [f"payload{'s' * (len(task.payloads) > 1)} {', '.join(task.payloads)}"] if task.payloads else []
     parts += [f"pace {format_quantity(task.pace, 'ratio')}"] if task.pace != 1 else []
-    parts += [f"tool speed capped at {format_quantity(task.speed, 'speed')}"] if task.speed is not None else []
+    parts += capped(task)
     yield fit(printable(", ".join(parts)))
     yield (
         f"cycle time {clock(plan.duration)}: motion {clock(plan.duration - plan.waiting_time)}, "
@@ -76,6 +77,7 @@ def _steps(plan: Plan) -> Iterator[str]:
     pacing = {step.step: step for step in audit.pacing}
     speeds = {step.step: step for step in audit.speeds}
     corners = {corner.after_step: corner for corner in audit.corners}
+    holds = {step.step: step for step in audit.held}
     table = [["step", "", "motion", "time", "tool mm/s", "paced by, part of time", "blend"]]
     for step in plan.task.steps[:MOST_STEPS]:
         paced = pacing.get(step.index)
@@ -85,21 +87,23 @@ def _steps(plan: Plan) -> Iterator[str]:
                 printable(step.name),
                 step.motion,
                 clock(paced.duration) if paced else "in corners",
-                _speed(step, speeds.get(step.index)),
+                _speed(step, speeds.get(step.index), holds.get(step.index)),
                 _pacing(paced),
                 _blend(step, corners.get(step.index)),
             ]
         )
-    yield from aligned(table, [5, 18, 6, 10, 13, 26, 20], left=(1, 2, 5, 6))
+    yield from aligned(table, [5, 18, 6, 10, 14, 26, 20], left=(1, 2, 5, 6))
     if len(plan.task.steps) > MOST_STEPS:
         yield f"... and {len(plan.task.steps) - MOST_STEPS} more steps, all of them in --json"
 
 
-def _speed(step: Step, speed: StepSpeed | None) -> str:
-    """Largest tool speed, and what was asked."""
+def _speed(step: Step, speed: StepSpeed | None, held: HeldSpeed | None) -> str:
+    """Largest tool speed, and what was asked; of a speed that is to be held the part of the length that has it."""
     if speed is None or step.motion == "wait":
         return "-"
     reached = format_value(1e3 * speed.reached)
+    if held is not None:
+        return f"{format_value(1e3 * held.speed, 3)} held {held_percent(held.length_part, 0)}"
     return reached if speed.asked is None else f"{reached} of {format_value(1e3 * speed.asked)}"
 
 

@@ -31,7 +31,7 @@ TOP = 34.0  # marks and the steps' band
 FINE = 50  # lines are drawn in this part of a unit
 MOST_MARKS = 60  # with a line and perhaps a name each
 MOST_BLOCKS = 250  # of what paces, one by one
-LETTERS = dict(zip(PACED, ("v", "a", "j", "t", "s", "c"), strict=True))
+LETTERS = dict(zip(PACED, ("v", "a", "j", "t", "s", "c", "r"), strict=True))
 Scale = Callable[[Any], Any]  # screen unit -> height
 PATH_CONTRACT = 1e-6  # m and rad: how near to its line or arc the tool is promised to be
 
@@ -77,21 +77,26 @@ def quantity_lanes(picture: Picture, quantity: str) -> list[Lane]:
 
 
 def tool_lanes(picture: Picture) -> list[Lane]:
-    """Tool speed with its caps, and how far the tool lies from its programmed path."""
+    """Tool speed and turning speed with their caps, and how far the tool lies from its programmed path."""
     axis = TimeAxis.of(picture)
     lanes = []
-    if ("tool speed", -1) in picture.lines:
-        caps = picture.speed_caps
+    speeds = (
+        ("tool speed", "speed", picture.caps.speed, picture.audit.tool_speed),
+        ("tool turning speed", "angular_speed", picture.caps.turning_speed, picture.audit.tool_turning_speed),
+    )
+    for key, dimension, caps, peak in speeds:
+        line = picture.lines.get((key, -1))
+        if line is None:
+            continue
+        factor = to_screen(1.0, dimension)
         pieces = tuple(
-            (run.start, run.end, 1e3 * float(caps[min(run.value, len(caps) - 1)]))
+            (run.start, run.end, factor * float(caps[min(run.value, len(caps) - 1)]))
             for run in visible(picture.steps, axis)
             if math.isfinite(caps[min(run.value, len(caps) - 1)])
         )
-        peak = picture.audit.tool_speed
-        label = picture.labels.index((-1, "tool speed"))
-        words = said("tool speed", peak, "speed")
-        speed = picture.lines["tool speed", -1]
-        lanes.append(Lane("tool speed", "tool speed", "mm/s", speed, pieces, peak, 1e3, words, label=label))
+        label, words = picture.labels.index((-1, key)), said(key, peak, dimension)
+        unit, name = DIMENSIONS[dimension].screen, key.removesuffix(" speed") if "turning" in key else key
+        lanes.append(Lane(key, name, unit, line, pieces, peak, factor, words, label=label))
     deviation = picture.audit.deviation_rows
     for key, name, unit in (("deviation", "off the path", "µm"), ("turn", "turned off it", "µrad")):
         line = picture.lines.get((key, -1))

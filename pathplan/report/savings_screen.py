@@ -34,7 +34,7 @@ def saving_name(task: Task, saving: Saving) -> str:
     if saving.what == "limit":
         return printable(f"{saving.quantity} limit of {saving.joint}")
     if saving.step is None:
-        return "tool speed of the whole task"
+        return f"{saving.quantity} of the whole task"
     step = task.steps[saving.step]
     name = f" ({step.name})" if step.name else ""
     if saving.what == "blend":

@@ -100,10 +100,11 @@ def _share(peak: Peak | None, largest: bool = False, broken: bool = True) -> str
 
 
 def _tool(audit: Audit) -> Iterator[str]:
-    for name, peak in (("speed", audit.tool_speed), ("acceleration", audit.tool_acceleration)):
+    for name, peak in audit.tool_peaks().items():
         if peak is not None:
-            used = f"{shown(peak.peak, name)} of {shown(peak.limit, name)}"
-            yield f"tool {name}: at most {used} ({_share(peak).strip()}) {_place(peak.time, peak.step)}"
+            dimension = dimension_of("", name)
+            used = f"{shown(peak.peak, dimension)} of {shown(peak.limit, dimension)}"
+            yield f"{name}: at most {used} ({_share(peak).strip()}) {_place(peak.time, peak.step)}"
     if audit.singularity is not None:
         where = _place(audit.singularity.time, audit.singularity.step)
         value = format_value(audit.singularity.value, 3)

@@ -7,12 +7,13 @@ from collections.abc import Iterable, Iterator, Sequence
 from typing import TYPE_CHECKING
 
 from pathplan.auditing import JointAudit, Peak
+from pathplan.auditing.held import held_percent
 from pathplan.auditing.model import TOLERANCE
 from pathplan.auditing.words import dimension_of, shown
 from pathplan.report.gather import Picture
 from pathplan.report.hatching import slanted
 from pathplan.report.markup import esc, number, pretty, tag
-from pathplan.report.plan_data import bound_at_pace
+from pathplan.report.plan_data import bound_at_pace, capped
 from pathplan.report.screen import CAUTIONS, verdict
 from pathplan.report.text import clock
 from pathplan.units import format_quantity, format_value
@@ -90,7 +91,7 @@ def headline(picture: Picture) -> str:
     if plan is not None:
         task = plan.task
         carries += [f"pace {format_quantity(task.pace, 'ratio')}"] if task.pace != 1 else []
-        carries += [f"tool speed capped at {format_quantity(task.speed, 'speed')}"] if task.speed is not None else []
+        carries += capped(task)
     sign = tag("span", "✓" if audit.passed else "✕", aria_hidden="true")
     said = tag("p", f"{sign} {esc(verdict(audit))}", class_=f"verdict {'pass' if audit.passed else 'fail'}")
     facts = [("cycle time", clock(picture.duration))]
@@ -208,9 +209,10 @@ def bar(share: float, over: bool = False) -> str:
 
 def _tool_lines(picture: Picture) -> Iterator[str]:
     audit = picture.audit
-    for name, peak in (("speed", audit.tool_speed), ("acceleration", audit.tool_acceleration)):
+    for name, peak in audit.tool_peaks().items():
         if peak is not None:
-            yield esc(f"Tool {name}: at most {_of(peak, name)}, {100 * peak.share:.1f} %, ") + at(peak.time, peak.step)
+            used = f"{_of(peak, dimension_of('', name))}, {100 * peak.share:.1f} %"
+            yield esc(f"{name.capitalize()}: at most {used}, ") + at(peak.time, peak.step)
     if audit.singularity is not None:
         value = format_value(audit.singularity.value, 3)
         words = f"Nearest to a singularity: smallest singular value {value} (0 is singular), "
@@ -236,7 +238,7 @@ def _tool_lines(picture: Picture) -> Iterator[str]:
         yield esc(f"Between the rows, 20 times denser: largest share {100 * share:.4f} %, {name} {quantity}")
 
 
-def _of(peak: Peak, dimension: str) -> str:
+def _of(peak: Peak, dimension: str | None) -> str:
     return pretty(f"{shown(peak.peak, dimension)} of {shown(peak.limit, dimension)}")
 
 
@@ -248,6 +250,7 @@ def steps_section(picture: Picture) -> str:
     pacing = {step.step: step for step in audit.pacing}
     speeds = {step.step: step for step in audit.speeds}
     corners = {corner.after_step: corner for corner in audit.corners}
+    held = {step.step: step for step in audit.held}
     starts = {run.value: run.start for run in reversed(picture.steps)}
     rows = []
     for step in plan.task.steps[:MOST_ROWS]:
@@ -256,6 +259,9 @@ def steps_section(picture: Picture) -> str:
         if speed is not None and step.motion != "wait":
             reached = format_value(1e3 * speed.reached)
             reached += f" of {format_value(1e3 * speed.asked)}" if speed.asked is not None else ""
+            if step.index in held:
+                asked = format_value(1e3 * held[step.index].speed)
+                reached += f", {asked} held over {held_percent(held[step.index].length_part)} of its length"
         begins = at(starts[step.index]) if step.index in starts else "–"
         duration = clock(paced.duration) if paced else "0 s"
         cells = [str(step.index + 1), esc(step.name), step.motion, begins, duration, reached]
@@ -316,8 +322,9 @@ def inputs_section(picture: Picture) -> str:
 def _settings(plan: Plan) -> list[list[str]]:
     task = plan.task
     rows = [("cycle", format_quantity(task.cycle, "time", 6)), ("pace", format_quantity(task.pace, "ratio"))]
-    if task.speed is not None:
-        rows.append(("tool speed capped at", format_quantity(task.speed, "speed")))
+    for name, cap, dimension in (("tool", task.speed, "speed"), ("turning", task.turning_speed, "angular_speed")):
+        if cap is not None:
+            rows.append((f"{name} speed capped at", format_quantity(cap, dimension)))
     return [[esc(name), esc(value)] for name, value in rows]
 
 

@@ -6,7 +6,8 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
     cycle    of the controller, "4 ms"               tool, payload    names of the arm's, carried from the start
     start    joint positions, or the name of an arm position or joint pose
     return   false; true or "joint", "line": the motion back to the start at the end
-    speed, acceleration      caps on the tool for the whole task; of a step's own and these the lower holds
+    speed, acceleration, turning_speed      caps on the tool for the whole task ("250 mm/s", "2 m/s^2", "90 deg/s");
+                             of a step's own and these the lower holds
 
     [frames.NAME]   parent (default "base"; a frame, or a pattern), xyz, rpy or quat: a workpiece frame in its parent
     [poses.NAME]    frame (default "base"), xyz, rpy or quat: a tool pose; or joints
@@ -23,7 +24,9 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
                     frame, by a signed angle up to ten turns; tool_along = true: the tool turns with it
         along       curve, taught: the NAME of its path, which starts where the step before ends
         blend       size of the corner region at the end: "20 mm", "10 deg", "15 %"; without it a stop point
-        speed, acceleration   caps on the tool
+        speed, acceleration, turning_speed      caps on the tool
+        held_speed            line, arc, curve: the tool speed that a process needs, constant; caps the tool, and the
+                              audit says over which part of the step it was held and what stopped it elsewhere
         configuration         { shoulder, elbow, wrist }: words for the branch at the target
         tool, payload         carried from this step on, "none" for nothing: the arm stops before it
         name, mark            for people: the step, and the instant at which it ends
@@ -106,6 +109,7 @@ def load_task(file: str | Path, *, arm: Arm | None = None) -> Task:
         cycle=cycle,
         frames=places.frames,
         speed=caps.speed,
+        turning_speed=caps.turning_speed,
         sources={**arm.sources, file.name: digest, **reader.sources},
     )
 

@@ -112,6 +112,8 @@ class Step:
     blend: Blend | None = None  # corner at the end of this step; None: stop point
     speed: float | None = None  # tool-speed cap, m/s: the lower of the step's own and the task's
     acceleration: float | None = None  # tool-acceleration cap, m/s^2, likewise
+    turning_speed: float | None = None  # cap on the tool's angular speed, rad/s, likewise
+    held_speed: float | None = None  # tool speed to be held constant, m/s; caps the tool too
     wait: float = 0.0  # s, motion == "wait"
     mark: str | None = None  # named instant: when this step ends
     configuration: Mapping[str, str] = field(default_factory=dict)  # {"elbow": "up"}: asked at this step's target
@@ -134,6 +136,7 @@ class Task:
     cycle: float  # s
     frames: Mapping[str, Frame] = field(default_factory=dict)
     speed: float | None = None  # task-wide tool-speed cap, m/s; the file's own is in every step's cap already
+    turning_speed: float | None = None  # task-wide cap on the tool's angular speed, rad/s, likewise
     pace: float = 1.0  # 0 < pace <= 1
     sources: Mapping[str, str] = field(default_factory=dict)  # file name -> sha256 of what was read
 

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.arm import Arm
 from pathplan.errors import InputError
 from pathplan.task.curves import read_offset
 from pathplan.task.model import Blend, Curve, Motion, Step, Target, Taught
@@ -21,7 +22,9 @@ __all__ = ["MAX_WAIT", "MOTIONS", "STEP_KEYS", "Caps", "read_caps", "read_step",
 Array = NDArray[np.float64]
 MAX_WAIT = 3600.0  # s
 MOTIONS: tuple[Motion, ...] = ("joint", "line", "arc", "curve", "taught")
-MOVING_KEYS = ("motion", "to", "offset", "blend", "speed", "acceleration", "configuration")
+HOLDING: tuple[Motion, ...] = ("line", "arc", "curve")  # those that can hold a tool speed
+CAP_KEYS = ("speed", "acceleration", "turning_speed")
+MOVING_KEYS = ("motion", "to", "offset", "blend", *CAP_KEYS, "held_speed", "configuration")
 ARC_KEYS = ("via", "centre", "axis", "angle", "tool_along")
 CARRYING_KEYS = ("tool", "payload")
 STEP_KEYS = ("name", "mark", "wait", *CARRYING_KEYS, *MOVING_KEYS, *ARC_KEYS, "along")
@@ -34,19 +37,22 @@ CONFIGURATION = {
 
 # Below these a plan would need more rows than any file holds; they are a slip of the unit.
 _LEAST = {"length": 1e-6, "angle": 1e-5, "ratio": 1e-4, "speed": 1e-5, "acceleration": 1e-4}
+_LEAST["angular_speed"] = np.deg2rad(1e-3)
 _MOST_ANGLE = np.deg2rad(3600.0)
 
 
 @dataclass(frozen=True)
 class Caps:
-    """Tool speed (m/s) and acceleration (m/s^2) a step keeps to; None: no cap."""
+    """Tool speed (m/s), acceleration (m/s^2) and turning speed (rad/s) a step keeps to; None: no cap."""
 
     speed: float | None = None
     acceleration: float | None = None
+    turning_speed: float | None = None
 
     def within(self, other: Caps) -> Caps:
         """The lower of each."""
-        return Caps(_lower(self.speed, other.speed), _lower(self.acceleration, other.acceleration))
+        pairs = ((getattr(self, key), getattr(other, key)) for key in CAP_KEYS)
+        return Caps(*(_lower(one, two) for one, two in pairs))
 
 
 def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) -> Step:
@@ -69,8 +75,9 @@ def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) 
         raise _neither_motion_nor_wait(table)
     motion: Motion = table.choice("motion", MOTIONS)
     _only_for(table, motion)
-    own = read_caps(table).within(caps)
-    fields |= {"motion": motion, "blend": read_blend(table), "speed": own.speed, "acceleration": own.acceleration}
+    own = read_caps(table)
+    fields |= {"motion": motion, "blend": read_blend(table), **vars(own.within(caps))}
+    fields["held_speed"] = _held_speed(table, own.speed, arm)
     fields["configuration"] = configuration = read_configuration(table, places)
     if motion in ("curve", "taught"):
         return Step(**fields, **_along(table, motion, places))
@@ -99,8 +106,7 @@ def step_to_start(motion: Motion, index: int, file: str, start: Array, places: P
         where=f"{file}: return",
         name="return to start",
         target=target if motion == "joint" else with_pose(target, places),
-        speed=caps.speed,
-        acceleration=caps.acceleration,
+        **vars(caps),
         tool=places.arm.tool.name,
         payload=places.arm.payload.name if places.arm.payload is not None else None,
     )
@@ -114,8 +120,24 @@ def with_pose(target: Target, places: Places) -> Target:
 
 
 def read_caps(table: Table) -> Caps:
-    """Keys `speed` and `acceleration`: caps on the tool, of a step or of the whole task."""
-    return Caps(_at_least(table, "speed", "speed"), _at_least(table, "acceleration", "acceleration"))
+    """Keys `speed`, `acceleration` and `turning_speed`: caps on the tool, of a step or of the whole task."""
+    dimensions = ("speed", "acceleration", "angular_speed")
+    return Caps(*(_at_least(table, key, dimension) for key, dimension in zip(CAP_KEYS, dimensions, strict=True)))
+
+
+def _held_speed(table: Table, cap: float | None, arm: Arm) -> float | None:
+    """Key `held_speed`, refused where the step's own cap or that of its tool never lets the tool go so fast.
+
+    Caps of the whole task are another matter: they come and go (a first run at reduced speed), and the audit says what
+    they leave of it.
+    """
+    held = _at_least(table, "held_speed", "speed")
+    caps = ((cap, "this step"), (arm.tool.speed, f"tool {arm.tool.name}"))
+    for lowest, whose in caps:
+        if held is not None and lowest is not None and lowest < held:
+            fast, slow = (format_quantity(value, "speed") for value in (held, lowest))
+            raise table.error("held_speed", f"{fast} can't be held, the speed of {whose} is capped at {slow}")
+    return held
 
 
 def read_blend(table: Table) -> Blend | None:
@@ -203,6 +225,8 @@ def _only_for(table: Table, motion: Motion) -> None:
             raise table.error(key, f'only an arc takes {key}, this motion is "{motion}"')
     if table.has("along") and motion not in ("curve", "taught"):
         raise table.error("along", f'only a curve or a taught path takes along, this motion is "{motion}"')
+    if table.has("held_speed") and motion not in HOLDING:
+        raise table.error("held_speed", f'only {listed(HOLDING)} holds a tool speed, this motion is "{motion}"')
     if motion == "arc" and table.has("via") == table.has("centre"):
         got = "got both" if table.has("via") else "got neither"
         raise table.error("motion", f"an arc takes via and to, or centre, axis and angle, {got}")

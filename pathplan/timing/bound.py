@@ -1,8 +1,8 @@
 """A lower bound of the duration of any motion along a path, with its proof.
 
 Leave out the jerk limits. What is left limits b(tau) = (dtau/dt)^2 on a clock tau with s(tau) at rest at both ends
-(Verscheure et al., IEEE TAC 2009): 0 < b <= wall (velocity, tool speed), and for every row, with coefficients that
-depend on tau alone,
+(Verscheure et al., IEEE TAC 2009): 0 < b <= wall (velocity, tool speed, turning speed), and for every row, with
+coefficients that depend on tau alone,
 
     low <= slope b' + level b + root sqrt(b) <= high        (acceleration; torque, whose viscous part has a root)
     |slope b' + level b| <= high, a norm over three rows    (tool acceleration)

@@ -53,7 +53,7 @@ class CoarseTiming:
 
 
 def coarse_timing(motions: Sequence[Motion], *, accuracy: float = 3e-3) -> list[CoarseTiming]:
-    """Near time-optimal timings under velocity and acceleration limits and tool-speed caps, one per motion."""
+    """Near time-optimal timings by velocity and acceleration limits and caps on the tool's speeds, one per motion."""
     meshes = [_mesh(motion) for motion in motions]
     problem = _Coarse(motions, meshes)
     reference = problem.per_stretch(problem.feasible_start())
@@ -77,14 +77,21 @@ def speed_wall(rows: Array, velocity: Array) -> Array:
     return wall
 
 
+def tool_walls(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
+    """(2, N) largest (ds/dt)^2 by the caps on the tool's speed and on its turning speed, inf where there is none."""
+    walls = np.full((2, len(s)), np.inf)
+    for wall, cap, turns in ((walls[0], motion.tool_speed_cap(s), False), (walls[1], motion.tool_turning_cap(s), True)):
+        capped = np.isfinite(cap)
+        if capped.any():
+            place = piece[capped], s[capped]
+            rate = motion.tool_turning(*place) if turns else motion.tool_derivatives(*place)[0]
+            wall[capped] = (cap[capped] / np.maximum(np.linalg.norm(rate, axis=1), _NEVER)) ** 2
+    return walls
+
+
 def tool_wall(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
-    """(N,) largest (ds/dt)^2 by the tool-speed caps, inf where there is none."""
-    wall = np.full(len(s), np.inf)
-    cap = motion.tool_speed_cap(s)
-    capped = np.isfinite(cap)
-    if capped.any():
-        first, _ = motion.tool_derivatives(piece[capped], s[capped])
-        wall[capped] = (cap[capped] / np.maximum(np.linalg.norm(first, axis=1), _NEVER)) ** 2
+    """(N,) largest (ds/dt)^2 by either of them."""
+    wall: Array = tool_walls(motion, piece, s).min(axis=0)
     return wall
 
 

@@ -276,7 +276,7 @@ def apply_torque(rows: Array, b: Array) -> Array:
 class Shares(NamedTuple):
     """Shares of the limits that are used, 1 at the limit."""
 
-    speed: Array  # (K, cells), of the square of the velocity limits and the tool-speed cap
+    speed: Array  # (K, cells), of the square of the velocity limits and the caps on the tool's speeds
     acceleration: Array  # (R, K, cells)
     jerk: Array  # (R, K, cells)
     tool: Array  # (K, cells), tool acceleration

@@ -17,16 +17,23 @@ _HELD_POINTS = 33  # a piece of the path is looked at in this many places, its e
 _LEAST_ROOM = 2e-3  # of a torque limit must be left to accelerate with
 _APART = 1e-6  # of the path: a cap that ends this near to a break of the path ends on it
 ToolDerivatives = Callable[[Array, Array, Array], tuple[Array, Array]]
+ToolTurning = Callable[[Array, Array], Array]
 
 
 @dataclass(frozen=True)
 class Cap:
-    """A cap on the tool on part of the path: speed in m/s, acceleration (as a norm) in m/s^2, None for no cap."""
+    """Caps on the tool on part of the path, None for none: speed in m/s, acceleration in m/s^2, turning speed in rad/s.
+
+    All three are norms: |x'| of the tool centre point, |x''|, and |omega| of the tool. A speed that is `held` is to be
+    constant, so that its ripple counts for more than the time it takes.
+    """
 
     begin: float
     end: float
     speed: float | None = None
     acceleration: float | None = None
+    turning_speed: float | None = None
+    held: bool = False
 
 
 @dataclass(frozen=True)
@@ -45,6 +52,7 @@ class Motion:
     caps: tuple[Cap, ...] = ()
     tool: ToolDerivatives | None = None  # (q, q', q'') each (N, n) -> tool position x', x'' each (N, 3)
     torque: TorqueLimits | None = None
+    turning: ToolTurning | None = None  # (q, q') each (N, n) -> derivative of the orientation (N, 3), rad
 
     def borders(self) -> Array:
         """Where the path or a cap changes, from 0 to the path's length: cells of a timing end there."""
@@ -63,9 +71,17 @@ class Motion:
         """(N,) the lowest speed cap at each s, inf where there is none."""
         return _lowest(s, [(c.begin, c.end, c.speed) for c in self.caps])
 
+    def tool_turning_cap(self, s: Array) -> Array:
+        """(N,) the lowest cap on the turning speed at each s, inf where there is none."""
+        return _lowest(s, [(c.begin, c.end, c.turning_speed) for c in self.caps])
+
     def tool_acceleration_cap(self, s: Array) -> Array:
         """(N,) the lowest acceleration cap at each s, inf where there is none."""
         return _lowest(s, [(c.begin, c.end, c.acceleration) for c in self.caps])
+
+    def held(self, s: Array) -> NDArray[np.bool_]:
+        """(N,) whether a tool speed is to be held at each s."""
+        return np.isfinite(_lowest(s, [(c.begin, c.end, c.speed if c.held else None) for c in self.caps]))
 
     def tool_derivatives(self, piece: NDArray[np.intp], s: Array) -> tuple[Array, Array]:
         """First and second derivative of the tool position by s, each (N, 3), m."""
@@ -73,6 +89,13 @@ class Motion:
             raise ValueError("motion has caps on the tool but no way to compute the tool's motion")
         local = s - self.path.breaks[piece]
         return self.tool(*self.path.all_at(piece, local, 2))
+
+    def tool_turning(self, piece: NDArray[np.intp], s: Array) -> Array:
+        """Derivative of the tool's orientation by s (N, 3), rad about the base axes."""
+        if self.turning is None:
+            raise ValueError("motion has caps on the tool but no way to compute how it turns")
+        local = s - self.path.breaks[piece]
+        return self.turning(*self.path.all_at(piece, local, 1))
 
     def torque_rows(self, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array) -> TorqueRows | None:
         """Torque limits at s (N,) on a clock with ds/dtau and d2s/dtau2 (N,); None without torque limits."""
@@ -105,7 +128,7 @@ class Motion:
     @property
     def capped(self) -> bool:
         """Whether any cap on the tool applies."""
-        return any(c.speed is not None or c.acceleration is not None for c in self.caps)
+        return any((c.speed, c.acceleration, c.turning_speed) != (None, None, None) for c in self.caps)
 
 
 def _lowest(s: Array, caps: list[tuple[float, float, float | None]]) -> Array:

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.timing.barrier import follow_central_path
-from pathplan.timing.coarse import speed_walls, tool_wall
+from pathplan.timing.coarse import speed_walls, tool_walls
 from pathplan.timing.fine import FineProblem
 from pathplan.timing.mesh import GAUSS_LOBATTO, Mesh
 from pathplan.timing.motion import Motion
@@ -28,7 +28,8 @@ _SLOWER = 0.97  # of b: strictly inside every limit, where the central path is j
 class Sensitivity:
     """Seconds saved by one stretch per relative change of each limit, by where on the path: at s (P,).
 
-    velocity, acceleration, jerk (R, P) by row; torque (n, P) by joint; tool_speed, tool_acceleration (P,).
+    velocity, acceleration, jerk (R, P) by row; torque (n, P) by joint; tool_speed, tool_turning_speed,
+    tool_acceleration (P,).
     """
 
     s: Array
@@ -37,6 +38,7 @@ class Sensitivity:
     jerk: Array
     torque: Array
     tool_speed: Array
+    tool_turning_speed: Array
     tool_acceleration: Array
 
 
@@ -60,9 +62,9 @@ def sensitivity(motion: Motion, timing: StretchTiming) -> Sensitivity:
     if state.tool is not None:
         used = (state.tool**2).sum(axis=0)
         tool = np.where(used > 0, 2 * m / (1.0 - used), 0.0)
-    s, velocity, tool_speed = _by_wall(mesh, wall)
+    s, velocity, by_tool = _by_wall(mesh, wall)
     torque = _torque(motion, problem, state.torque, m)
-    return Sensitivity(s, velocity, _flat(acceleration), _flat(jerk), torque, tool_speed, tool.ravel())
+    return Sensitivity(s, velocity, _flat(acceleration), _flat(jerk), torque, by_tool[0], by_tool[1], tool.ravel())
 
 
 def _flat(values: Array) -> Array:
@@ -70,18 +72,19 @@ def _flat(values: Array) -> Array:
 
 
 def _by_wall(mesh: Mesh, wall: Array) -> tuple[Array, Array, Array]:
-    """Path parameters (P,), and what the velocity walls are worth by the row (R, P) or the tool (P,) that sets them."""
+    """Path parameters (P,); what walls are worth by what sets them: velocities (R, P), speeds of the tool (2, P)."""
     motion = mesh.motion
     tau = (mesh.tau[:-1] + mesh.width * GAUSS_LOBATTO[:, None]).ravel()
     s = mesh.clock.derivatives(tau, 0)[0]
     piece, _ = motion.path.locate(s)
     walls = speed_walls(motion.rows(piece, s, 1)[0], motion.velocity).T
-    tool = tool_wall(motion, piece, s)
-    by_tool = tool < walls.min(axis=0)
-    worth = wall.ravel()
-    velocity = np.zeros_like(walls)
-    velocity[walls.argmin(axis=0), np.arange(len(s))] = np.where(by_tool, 0.0, worth)
-    return s, velocity, np.where(by_tool, worth, 0.0)
+    tool = tool_walls(motion, piece, s)
+    by_tool = tool.min(axis=0) < walls.min(axis=0)
+    worth, at = wall.ravel(), np.arange(len(s))
+    velocity, of_tool = np.zeros_like(walls), np.zeros_like(tool)
+    velocity[walls.argmin(axis=0), at] = np.where(by_tool, 0.0, worth)
+    of_tool[tool.argmin(axis=0), at] = np.where(by_tool, worth, 0.0)
+    return s, velocity, of_tool
 
 
 def _torque(motion: Motion, problem: FineProblem, torque: Array | None, m: Array) -> Array:

@@ -28,6 +28,7 @@ _LOSS = 2e-3  # a stretch is refined while more than this share of its time leav
 _ROUNDS = 8
 _SPLIT_SHARE = 0.85  # the cells that together hold this share of the loss are halved
 _LEAST_DIP = 0.1  # of its neighbours, that a new node between them is above zero
+_HELD_CARE = 10.0  # where a tool speed is held that much counts this many times: ripple shows in the work
 _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
 _COARSE_GAP, _FINAL_GAP = 5e-4, 2e-4
 _TIGHTENINGS = 5
@@ -100,6 +101,7 @@ def _where_to_split(problem: FineProblem, x: Array) -> tuple[list[NDArray[np.boo
     b = problem.evaluate(x, hermite(u))
     used = np.where(b[0] > 0, limit_shares(rows, b).largest(), np.inf)  # the spline may dip below zero between points
     loss = problem.width * (1.0 - np.minimum(used, 1.0)).mean(axis=0) / problem.duration[problem.cell_owner]
+    loss *= np.concatenate([_care(mesh) for mesh in problem.meshes])
     over = used.max(axis=0) > 1.0 + _OVERSTEP
     borders = np.cumsum(problem.cells)[:-1]
     split, good = [], []
@@ -107,6 +109,14 @@ def _where_to_split(problem: FineProblem, x: Array) -> tuple[list[NDArray[np.boo
         good.append(lost.sum() <= _LOSS and not overstepped.any())
         split.append(overstepped | _largest(lost, _SPLIT_SHARE * lost.sum() if lost.sum() > _LOSS else 0.0))
     return split, np.array(good)
+
+
+def _care(mesh: Mesh) -> Array:
+    """(N,) how much the time lost in every cell counts."""
+    if not any(cap.held for cap in mesh.motion.caps):
+        return np.ones(len(mesh.width))
+    middle = mesh.clock.derivatives(0.5 * (mesh.tau[:-1] + mesh.tau[1:]), 0)[0]
+    return np.where(mesh.motion.held(middle), _HELD_CARE, 1.0)
 
 
 def _largest(values: Array, total: float) -> NDArray[np.bool_]:

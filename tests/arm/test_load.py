@@ -64,6 +64,7 @@ mass = 0.3
 com = [0, 0, -20]
 speed = 400
 acceleration = "3 m/s^2"
+turning_speed = 90
 
 [payloads.tile]
 mass = 1.2
@@ -111,7 +112,7 @@ def test_everything_in_a_file_arrives_in_si(write):
     np.testing.assert_allclose(link.inertia, [[0.02, 0.001, 0], [0.001, 0.05, -0.001], [0, -0.001, 0.05]])
     assert arm.links[1].mass == pytest.approx(0.8)
     cup, tile = arm.tools["cup"], arm.payloads["tile"]
-    assert (cup.mass, cup.speed, cup.acceleration) == (0.3, 0.4, 3.0)
+    assert (cup.mass, cup.speed, cup.acceleration, cup.turning_speed) == (0.3, 0.4, 3.0, pytest.approx(np.pi / 2))
     np.testing.assert_allclose(cup.flange_from_tool[:3], [[1, 0, 0, 0], [0, -1, 0, 0], [0, 0, -1, 0.05]], atol=1e-15)
     assert tile.mass == 1.2
     np.testing.assert_allclose(arm.positions["home"], [np.pi / 2, 0.02])

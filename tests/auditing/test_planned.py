@@ -18,6 +18,7 @@ from pathplan.auditing import (
     worse_peaks,
 )
 from pathplan.auditing.model import QUANTITIES
+from pathplan.task.model import Step, Task
 from tests.auditing.cast import made_arm
 
 
@@ -72,11 +73,11 @@ def made_plan(arm, evidence=None, findings=(), corners=()):
     """A plan of three steps, of which the second is a wait."""
 
     def step(index, motion, name="", speed=None):
-        return SimpleNamespace(index=index, motion=motion, name=name, speed=speed, acceleration=None, tool="none")
+        return Step(index, motion, "", name=name, speed=speed, tool="none")
 
     steps = (step(0, "line", "bring", 0.5), step(1, "wait"), step(2, "joint", "return"))
     return SimpleNamespace(
-        task=SimpleNamespace(steps=steps, speed=None, arm=arm),
+        task=Task("", None, arm, np.zeros(3), steps, 0.004),
         path=SimpleNamespace(corners=corners, findings=findings),
         bound=2.9,
         evidence=lambda: evidence or Evidence(),

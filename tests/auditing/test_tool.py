@@ -1,7 +1,6 @@
 """The tool: nearness to singularity against every row, acceleration against numeric differentiation, caps."""
 
 from pathlib import Path
-from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -12,6 +11,7 @@ from pathplan.arm import Tool, load_arm
 from pathplan.arm.kinematics import smallest_singular_value
 from pathplan.auditing.shares import Rows
 from pathplan.auditing.tool import nearest_singularity, step_caps, tool_acceleration, tool_speed
+from pathplan.task.model import Step, Task
 from tests.auditing.cast import made_arm
 
 
@@ -59,14 +59,21 @@ def test_centripetal_acceleration(arm):
 
 
 def test_the_lowest_cap_counts():
-    cup = Tool("cup", np.eye(4), speed=0.8, acceleration=3.0)
+    cup = Tool("cup", np.eye(4), speed=0.8, acceleration=3.0, turning_speed=1.5)
     arm = made_arm(tool=cup, tools={"cup": cup, "bare": Tool("bare", np.eye(4))})
 
-    def step(speed=None, acceleration=None, tool="cup"):
-        return SimpleNamespace(speed=speed, acceleration=acceleration, tool=tool)
+    def step(tool="cup", **caps):
+        return Step(0, "line", "", tool=tool, **caps)
 
-    steps = [step(), step(0.5, 9.0), step(tool="bare"), step(2.0, 1.0, "bare")]
-    speeds, accelerations = step_caps(arm, SimpleNamespace(steps=steps, speed=1.0))
-    assert speeds.tolist() == [0.8, 0.5, 1.0, 1.0]
-    assert accelerations.tolist() == [3.0, 3.0, np.inf, 1.0]
-    assert [cap.tolist() for cap in step_caps(arm)] == [[0.8], [3.0]]
+    steps = (
+        step(),
+        step(speed=0.5, acceleration=9.0, turning_speed=1.2),
+        step("bare"),
+        step("bare", speed=2.0, acceleration=1.0, turning_speed=4.0),
+        step("bare", held_speed=0.3),
+    )
+    caps = step_caps(arm, Task("", None, arm, np.zeros(3), steps, 0.004, speed=1.0, turning_speed=2.0))
+    assert caps.speed.tolist() == [0.8, 0.5, 1.0, 1.0, 0.3]
+    assert caps.acceleration.tolist() == [3.0, 3.0, np.inf, 1.0, np.inf]
+    assert caps.turning_speed.tolist() == [1.5, 1.2, 2.0, 2.0, 2.0]
+    assert [cap.tolist() for cap in step_caps(arm)] == [[0.8], [3.0], [1.5]]

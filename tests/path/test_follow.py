@@ -74,8 +74,8 @@ def test_stretches_waits_and_caps(cast) -> None:
     ]
     corner, stretch = path.corners[2], path.stretches[1]
     assert stretch.caps == (
-        (0.0, pytest.approx(corner.s_to), 0.3, 3.0),
-        (pytest.approx(corner.s_to), pytest.approx(stretch.path.length), 0.3, None),
+        (0.0, pytest.approx(corner.s_to), 0.3, 3.0, None, False),
+        (pytest.approx(corner.s_to), pytest.approx(stretch.path.length), 0.3, None, None, False),
     )
     assert stretch.steps[0].s_to == pytest.approx((corner.s_from + corner.s_to) / 2)
     assert [cap.speed for cap in path.stretches[0].caps] == [0.3, 0.2]

@@ -235,6 +235,41 @@ BAD = {
         'speed = "250 mm"',
         'step[2].speed: expected a speed such as "250 mm/s", got "250 mm"',
     ),
+    "turning speed zero": (
+        "speed = 250",
+        "turning_speed = 0",
+        'step[2].turning_speed: expected an angular speed such as "180 deg/s", got 0',
+    ),
+    "turning speed unit": (
+        "speed = 250",
+        'turning_speed = "90 mm/s"',
+        'step[2].turning_speed: expected an angular speed such as "180 deg/s", got "90 mm/s"',
+    ),
+    "turning speed tiny": (
+        "speed = 250",
+        "turning_speed = 1e-6",
+        "step[2].turning_speed: expected an angular speed of at least 0.001 deg/s, got 1e-06",
+    ),
+    "turning speed of the task": (
+        'cycle = "4 ms"',
+        'cycle = "4 ms"\nturning_speed = -5',
+        'turning_speed: expected an angular speed such as "180 deg/s", got -5',
+    ),
+    "held speed zero": (
+        "speed = 250",
+        "held_speed = 0",
+        'step[2].held_speed: expected a speed such as "250 mm/s", got 0',
+    ),
+    "held speed of a joint motion": (
+        LAST,
+        LAST + "\nheld_speed = 100",
+        'step[7].held_speed: only "line", "arc" or "curve" holds a tool speed, this motion is "joint"',
+    ),
+    "held speed above the step's own": (
+        "speed = 250",
+        'speed = 250\nheld_speed = "300 mm/s"',
+        "step[2].held_speed: 300 mm/s can't be held, the speed of this step is capped at 250 mm/s",
+    ),
     "speed tiny": (
         "speed = 250",
         "speed = 1e-6",

@@ -116,8 +116,8 @@ def test_the_marks_of_a_task_differ_within_a_round():
 
 def test_the_bead_ends_where_it_begins_and_keeps_its_speed():
     task = load_task(FOLDER / "glazer6-bead.toml")
-    bead = [(step, end) for step, _, end in moves(task) if step.speed == pytest.approx(0.12)]
-    begin = task.pose(task.steps[1].target)
+    bead = [(step, end) for step, _, end in moves(task) if step.held_speed == pytest.approx(0.12)]
+    begin = task.pose(task.steps[2].target)
     assert len(bead) == 9
     assert bead[-1][1] == pytest.approx(begin, abs=1e-12)
     before = begin

@@ -189,6 +189,9 @@ class Scrub {
       ["tool at", `${place.join(", ")} mm`],
     ];
     if (rows.columns.has("tool speed")) parts.push(["tool speed", `${rows.text("tool speed", index)} mm/s`]);
+    if (rows.columns.has("tool turning speed")) {
+      parts.push(["tool turns", `${rows.text("tool turning speed", index)} deg/s`]);
+    }
     if (rows.columns.has("deviation") && !Number.isNaN(rows.value("deviation", index))) {
       parts.push(["off the path", `${rows.text("deviation", index)} µm, ${rows.text("turn", index)} µrad`]);
     }
