@@ -1,7 +1,8 @@
 """The command line: arguments in, a call into the library, its answer on the screen. Computes nothing itself.
 
 Exit status: 0 within limits; 1 a limit is broken, a task can't be followed or the work can't be finished; 2 bad
-input; 70 an error of our own; 130 ended by Ctrl-C. Errors are one line each on the standard error stream.
+input; 70 an error of our own; 130 ended by Ctrl-C; of many tasks the highest. Errors are one line each on the
+standard error stream.
 """
 
 from __future__ import annotations
@@ -29,7 +30,7 @@ ABOUT = """\
 From tool poses to an audited, synchronized joint table at the controller's cycle."""
 STATUS = """\
 exit status: 0 within limits; 1 a limit is broken or a step can't be followed; 2 bad input;
-             70 an error of pathplan's own; 130 ended by Ctrl-C
+             70 an error of pathplan's own; 130 ended by Ctrl-C; of many tasks the highest
 
 A plan is no safety function. Prove it at reduced speed first (--reduced-speed); clearance is not
 checked; the risk assessment, the local codes and licensed practice apply."""
