@@ -18,6 +18,7 @@ from pathplan.task.model import Task
 if TYPE_CHECKING:
     from pathplan.arm import Arm
     from pathplan.auditing import Audit, Evidence, LoadChange
+    from pathplan.auditing.passes import Pass
     from pathplan.path.taskpath import Stretch, TaskPath
     from pathplan.savings import Saving
     from pathplan.timeline import Part
@@ -141,6 +142,13 @@ class Plan:
             say("audit", total + done, 2 * total)
             yield piece
             done += len(piece)
+
+    @cached_property
+    def passes(self) -> tuple[Pass, ...]:
+        """Where the tool path comes near a singularity, and what that costs: see `pathplan.passing`."""
+        from pathplan.passing import passes_of
+
+        return passes_of(self.parts, self.task.cycle)
 
     def savings(self, *, top: int = 5) -> tuple[Saving, ...]:
         """What would buy time: see `pathplan.savings.find_savings`. Plans the task again for every change it tries."""

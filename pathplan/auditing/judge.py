@@ -18,6 +18,7 @@ from pathplan.auditing.held import Holding, held_findings
 from pathplan.auditing.jumps import Jumps
 from pathplan.auditing.model import QUANTITIES, TOLERANCE, TOOL, Audit, Finding, JointAudit, Peak, Singularity
 from pathplan.auditing.pacing import StepClock
+from pathplan.auditing.passes import NEAR, pass_findings
 from pathplan.auditing.planned import (
     Evidence,
     Planned,
@@ -319,6 +320,8 @@ class _Judge:
         plan = self.plan
         names = {step.index: step.name for step in plan.task.steps} if plan else {}
         evidence = plan.evidence() if plan else Evidence()
+        near = self.singularity is not None and self.singularity.value < 2 * NEAR
+        passes = plan.passes if plan and near else ()
         moving, waiting = self._motion_and_waiting()
         joints = self._with_differences()
         start, end = self.ends
@@ -336,11 +339,12 @@ class _Judge:
             measured=self.measured,
             joints=joints[: self.arm.n],
             rows=joints[self.arm.n :],
-            findings=tuple(self._findings(evidence, drives)),
+            findings=(*self._findings(evidence, drives), *pass_findings(passes)),
             tool_speed=self.tool_peaks[TOOL[0]][0],
             tool_acceleration=self.tool_peaks[TOOL[1]][0],
             tool_turning_speed=self.tool_peaks[TOOL[2]][0],
             singularity=self.singularity,
+            passes=passes,
             pacing=self.clock.pacing(names) if self.measured == "columns" else (),
             speeds=step_speeds(self.speeds, self.caps.speed, names) if plan else (),
             held=self.holding.found(),

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any, Literal
 if TYPE_CHECKING:
     from pathplan.auditing.drives import DriveUse
     from pathplan.auditing.held import HeldSpeed
+    from pathplan.auditing.passes import Pass
     from pathplan.auditing.planned import CornerUse, Deviation, StepSpeed
 
 __all__ = [
@@ -145,6 +146,7 @@ class Audit:
     tool_acceleration: Peak | None = None
     tool_turning_speed: Peak | None = None
     singularity: Singularity | None = None
+    passes: tuple[Pass, ...] = ()  # where a programmed tool path comes near a singularity, by the plan
     pacing: tuple[StepPacing, ...] = ()
     speeds: tuple[StepSpeed, ...] = ()
     held: tuple[HeldSpeed, ...] = ()  # of the steps that are to hold a tool speed

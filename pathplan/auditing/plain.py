@@ -9,6 +9,7 @@ from typing import Any
 from pathplan.auditing.drives import DriveUse, rpm
 from pathplan.auditing.held import HELD_WITHIN, HeldSpeed
 from pathplan.auditing.model import Audit, Finding, JointAudit, Peak
+from pathplan.auditing.passes import Pass
 from pathplan.auditing.planned import CornerUse, Deviation
 from pathplan.auditing.words import dimension_of
 from pathplan.units import DIMENSIONS, to_screen
@@ -42,6 +43,7 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
         **({"tool_turning_speed": turning} if turning is not None else {}),
         "singularity": singularity
         and {"smallest_singular_value": singularity.value, **_place(singularity.time, singularity.step)},
+        "passes": [_pass(found) for found in audit.passes],
         "pacing": [
             {
                 "step": step.step + 1,
@@ -99,6 +101,24 @@ def _held(held: HeldSpeed) -> dict[str, Any]:
             }
             for missed in held.missed
         ],
+    }
+
+
+def _pass(found: Pass) -> dict[str, Any]:
+    """Of what does not turn in tool space, the speed in mm/s; of what only turns, in deg/s."""
+    speed = None if found.speed is None else to_screen(found.speed, "angular_speed" if found.turning else "speed")
+    return {
+        **_place(found.time, found.step),
+        "percent_of_step": 100 * found.share,
+        "kind": found.kind,
+        "smallest_singular_value": found.value,
+        "runs_through": found.through,
+        "distance_mm": None if found.distance is None else 1000 * found.distance,
+        "angle_deg": None if found.angle is None else math.degrees(found.angle),
+        "base_from_tool": found.pose.tolist(),
+        "joint": found.joint,
+        "speed_deg_s" if found.turning else "speed_mm_s": speed,
+        "lost_s": found.lost,
     }
 
 

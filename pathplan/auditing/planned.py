@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from pathplan.arm import Arm
 from pathplan.auditing.drives import LoadChange, torque_limits
 from pathplan.auditing.model import QUANTITIES, JointAudit
+from pathplan.auditing.passes import Pass
 from pathplan.auditing.shares import Array, Rows, larger, limit_rows, peaks_of, row_kinds, rows_of
 
 __all__ = [
@@ -102,6 +103,9 @@ class Planned(Protocol):
 
     @property
     def bound(self) -> float | None: ...
+
+    @property
+    def passes(self) -> tuple[Pass, ...]: ...
 
     def evidence(self) -> Evidence: ...
 

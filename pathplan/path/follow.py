@@ -17,7 +17,8 @@ from pathplan.path.hermite import derivatives_at
 from pathplan.path.joint import Array
 from pathplan.path.layout import Layout, lay_out
 from pathplan.path.motions import motions_of
-from pathplan.path.refusals import limit_text, motion_words, place_text, singularity
+from pathplan.path.refusals import limit_text, motion_words, place_text
+from pathplan.path.singular import singularity
 from pathplan.path.states import States
 from pathplan.path.taskpath import TaskPath
 from pathplan.path.tracking import Tracks, track

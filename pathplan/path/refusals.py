@@ -11,13 +11,13 @@ from typing import Any
 import numpy as np
 
 from pathplan.arm import Arm
-from pathplan.arm.geometry import meeting_points
-from pathplan.arm.kinematics import smallest_singular_value, spatial_axes
+from pathplan.arm.kinematics import joint_derivatives, smallest_singular_value
 from pathplan.errors import UnreachableError
 from pathplan.path.cartesian import CartesianPath, Leg, tool_frames
-from pathplan.path.geometry import Index, Segments
+from pathplan.path.geometry import NO_MOTION, Index, Segments, spatial_twists
 from pathplan.path.joint import Array
 from pathplan.path.newton import joint_weights
+from pathplan.path.singular import singularity
 from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, judged_rows
 from pathplan.path.tracking import Tracks, track, turns_between
 from pathplan.task.model import Step
@@ -30,8 +30,6 @@ __all__ = [
     "no_state_asked",
     "place_text",
     "rpy_of",
-    "singular_kind",
-    "singularity",
 ]
 
 
@@ -65,42 +63,6 @@ def limit_text(arm: Arm, row: int, side: int) -> str:
 def motion_words(step: Step) -> str:
     """What a step's motion is called in a sentence."""
     return "taught path" if step.motion == "taught" else step.motion
-
-
-def singular_kind(arm: Arm, q: Array) -> str:
-    """Which singularity is nearest at q (n,): "wrist", "elbow" or "shoulder"; "singular" where the
-    structure has no such names.
-    """
-    if arm.structure == "scara":
-        return "elbow"
-    if arm.structure != "spherical wrist" or "elbow" not in arm.solver.labels[0]:
-        return "singular"
-    columns, _ = spatial_axes(arm, q[None])
-    axes = columns[:, 3:, 0]
-    points = np.cross(axes, columns[:, :3, 0])  # the point of each axis nearest to the base origin
-    centre, apart = meeting_points(points[3:], axes[3:])  # of a measured arm they meet nearly
-    if not np.isfinite(apart):  # the wrist axes are in line
-        return "wrist"
-
-    def unit_across(vector: Array) -> Array:
-        vector = vector - axes[1] * float(axes[1] @ vector)
-        return np.asarray(vector / max(float(np.linalg.norm(vector)), 1e-12))
-
-    upper, lower = unit_across(points[2] - points[1]), unit_across(centre - points[2])
-    distance = {
-        "wrist": float(np.linalg.norm(np.cross(axes[3], axes[5]))),
-        "elbow": float(np.linalg.norm(np.cross(upper, lower))),
-        "shoulder": abs(float(np.cross(axes[0], centre - points[0]) @ axes[1])) / arm.length,
-    }
-    return min(distance, key=lambda kind: distance[kind])
-
-
-def singularity(arm: Arm, q: Array) -> tuple[str, dict[str, Any]]:
-    """A singularity at or near q (n,) in words, and its kind and smallest singular value."""
-    kind, value = singular_kind(arm, q), float(smallest_singular_value(arm, q[None])[0])
-    name = f"a {kind} singularity" if kind != "singular" else "a singularity"
-    name = name.replace("a elbow", "an elbow")
-    return f"{name} (smallest singular value {value:.2g})", {"kind": kind, "value": value}
 
 
 def no_state_asked(leg: Leg, there: Sequence[Mapping[str, str]]) -> UnreachableError:
@@ -147,6 +109,9 @@ def _starts_elsewhere(arm: Arm, step: Step, q: Array) -> UnreachableError:
     text += f'"{step.taught.name}.start" before it' if step.taught.name else "its first point before it"
     data = {"step": step.index, "joint": joint.name, "best": best, "start": start}
     return UnreachableError(f"{step.where}: {text}", data=data)
+
+
+_KNOWN = 1e-9  # smallest singular value below which joint rates are noise
 
 
 @dataclass(frozen=True, eq=False)
@@ -220,10 +185,37 @@ def _outcome(
         return outcome(length, f"it arrives, but not with {words}", q[-1])
     before = max(stop - 1, 0)
     if reached[stop]:
-        text, singular = singularity(arm, q[_nearer(arm, q, before, stop)])
+        nearer = _nearer(arm, q, before, stop)
+        text, singular = singularity(arm, q[nearer])
+        held = _held(arm, segment, float(s[nearer]), q[nearer]) if singular["value"] > _KNOWN else None
+        if held is not None:
+            words, more = held
+            return outcome(float(s[stop]), f"it meets {text}: {words}", q[before], singular={**singular, **more})
         return outcome(float(s[stop]), f"it meets {text}", q[before], singular=singular)
     at = _last_reached(arm, segment, frame, slot, float(s[before]), float(s[stop]))
     return outcome(at, f"the {motion_words(entry.step)} leaves the reach of the arm", q[before])
+
+
+def _held(arm: Arm, segment: Segments, s: float, q: Array) -> tuple[str, dict[str, Any]] | None:
+    """Which joint would have to go how fast at s of a segment, q (n,): what the tool may move when it goes as fast as
+    it can, in words and as data; None where the joints' limits or the segment say nothing.
+    """
+    jets = segment.jets(np.array([0]), np.array([s]))
+    rates, _ = joint_derivatives(arm, q[None], spatial_twists(jets))
+    used = arm.limits.matrix @ rates[0, 0]
+    low, high = arm.limits.velocity.T
+    share = np.maximum(used / high, used / low)
+    row = int(np.argmax(share))
+    turning = float(np.linalg.norm(jets.position[1, 0])) < NO_MOTION
+    moves = float(np.linalg.norm(jets.turning[0, 0] if turning else jets.position[1, 0]))
+    if not 0 < share[row] < np.inf:
+        return None
+    speed, name, kind = moves / float(share[row]), arm.limits.names[row], arm.limit_kinds[row]
+    dimension = joint_dimension(kind, "velocity") if kind else "number"
+    limit = format_quantity(float(min(-low[row], high[row])), dimension)
+    words = f"joint {name} at its {limit} would hold the tool to "
+    words += format_quantity(speed, "angular_speed" if turning else "speed", 2)
+    return words, {"joint": name, "turning" if turning else "speed": speed}
 
 
 def _nearer(arm: Arm, q: Array, one: int, other: int) -> int:

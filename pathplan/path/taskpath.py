@@ -75,6 +75,11 @@ class Stretch:
             poses[known] = poses_of(jets.position[0], jets.rotation)
         return poses, known
 
+    def has_tool_path(self, s: ArrayLike) -> NDArray[np.bool_]:
+        """(N,) whether a tool pose is programmed at s (N,)."""
+        place = np.clip(np.searchsorted(self.span_start, np.asarray(s), side="right") - 1, 0, len(self.span) - 1)
+        return np.asarray(self.spans.programmed()[self.span[place]])
+
     def tool_derivatives(self, s: ArrayLike) -> tuple[Array, Array]:
         """dx/ds and d2x/ds2 (N, 3) of the tool centre point along the joint path, m per path parameter
         (squared).

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
+from pathplan.arm import Arm
+from pathplan.errors import UnreachableError
 from pathplan.path.cartesian import tool_of
 from pathplan.remedies.model import Remedy
 from pathplan.remedies.smallest import smallest
@@ -78,23 +81,37 @@ def served_pose(trials: Trials) -> Iterator[Remedy]:
         return
     if step.target.frame_from_tool is None or step.curve is not None:
         return
-    if data["position_error"] > FARTHEST * task.arm.length or data["angle_error"] > MOST_TILT:
-        return
-    swap = np.linalg.solve(task.arm.tool.flange_from_tool, tool_of(task.arm, step.tool).flange_from_tool)
-    pose = task.arm.forward(np.nan_to_num(data["best"])) @ swap
-    target = replace(step.target, frame_from_tool=_in_frame(task, step.target.frame, pose))
-    changed = with_step(task, trials.step, target=target)
     what = f"{step_text(task, trials.step)}: the nearest pose that {task.arm.name} serves"
-    if trials.follows(changed, trials.step):
-        assert target.frame_from_tool is not None
-        where = f"{xyz_text(target.frame_from_tool)}, {rpy_text(target.frame_from_tool)} in frame {target.frame}"
-        found = trials.proven(
-            "target", f"{what}, {where}", changed, {"pose": target.frame_from_tool, "frame": target.frame}, trials.step
-        )
+    swap = np.linalg.solve(task.arm.tool.flange_from_tool, tool_of(task.arm, step.tool).flange_from_tool)
+    for own in _served_poses(task.arm, data):
+        target = replace(step.target, frame_from_tool=_in_frame(task, step.target.frame, own @ swap))
+        changed = with_step(task, trials.step, target=target)
+        if not trials.follows(changed, trials.step):
+            continue
+        pose = target.frame_from_tool
+        assert pose is not None
+        text = f"{what}, {xyz_text(pose)}, {rpy_text(pose)} in frame {target.frame}"
+        found = trials.proven("target", text, changed, {"pose": pose, "frame": target.frame}, trials.step)
         if isinstance(found, Remedy):
             yield found
             return
     trials.tried.append(what)
+
+
+def _served_poses(arm: Arm, data: Mapping[str, Any]) -> list[Array]:
+    """Poses of the arm's own tool near the one refused: the same but for the roll, the least rolled first; the nearest
+    answer of the inverse, unless it is too far off to be meant.
+    """
+    poses: list[Array] = []
+    if arm.serves_pointing:
+        try:
+            poses = list(arm.forward(arm.with_tool_roll().inverse(data["pose"])[:, : arm.n]))
+        except UnreachableError:
+            poses = []
+        poses.sort(key=lambda pose: -float(np.trace(pose[:3, :3].T @ data["pose"][:3, :3])))
+    if data["position_error"] <= FARTHEST * arm.length and data["angle_error"] <= MOST_TILT:
+        poses.append(arm.forward(np.nan_to_num(data["best"])))
+    return poses
 
 
 def _in_frame(task: Task, frame: str, base_from_tool: Array) -> Array:

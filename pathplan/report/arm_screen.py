@@ -12,7 +12,7 @@ from pathplan.arm import Arm
 from pathplan.arm.reach import Reach, reach
 from pathplan.arm.structure import COMPONENTS
 from pathplan.report.text import WIDTH, aligned, fit, printable
-from pathplan.units import Quantity, format_quantity, format_value, joint_dimension, to_screen
+from pathplan.units import DIMENSIONS, Quantity, format_quantity, format_value, joint_dimension, to_screen
 
 __all__ = ["arm_as_dict", "arm_screen"]
 
@@ -53,6 +53,17 @@ def arm_as_dict(arm: Arm) -> dict[str, Any]:
                 **{quantity: _number(getattr(joint, quantity)) for quantity in QUANTITIES},
             }
             for i, joint in enumerate(arm.joints)
+        ],
+        "coupled": [
+            {
+                "name": arm.limits.names[row],
+                "row": arm.limits.matrix[row].tolist(),
+                **{
+                    quantity: [_number(float(value)) for value in getattr(arm.limits, quantity)[row]]
+                    for quantity in ("position", *QUANTITIES)
+                },
+            }
+            for row in range(arm.n, len(arm.limits.names))
         ],
         "positions": {
             name: {"q": q.tolist(), "base_from_interface": arm.equipped().forward(q).tolist()}
@@ -136,6 +147,8 @@ def _serves(arm: Arm) -> str:
         return "every pose"
     names = [name for name in COMPONENTS if name in arm.serves]
     pointing = ["the direction of the tool's z axis, not its roll"] if arm.serves_pointing else []
+    if pointing and len(arm.tool_joints) == 5:
+        return "every place with the direction of the tool's z axis; its roll follows from them"
     if not names and not pointing:
         return f"{len(arm.tool_joints)} mixtures of place and orientation, none of them whole"
     return ", ".join(names + pointing)
@@ -165,7 +178,41 @@ def _joints(arm: Arm) -> Iterator[str]:
             else:
                 cells.append(format_quantity(value, joint_dimension(joint.kind, quantity)))
         table.append([printable(cell) for cell in cells])
+    rows = [row for row in range(len(arm.limits.names)) if row >= arm.n]
+    table += [_coupled_cells(arm, row) for row in rows]
     yield from aligned(table, [18, 9, 19, 12, 14, 16, 11], left=(0, 1))
+    for row in rows:
+        yield fit(printable(f"{arm.limits.names[row]} = {_sum(arm, row)}: a coupled drive"))
+
+
+def _coupled_cells(arm: Arm, row: int) -> list[str]:
+    """The limits of a sum of joints as a line of the joint table."""
+    kind = arm.limit_kinds[row]
+    cells = [arm.limits.names[row], "coupled"]
+    quantities: tuple[Quantity, ...] = ("position", *QUANTITIES)
+    for quantity in quantities:
+        low, high = (float(value) for value in getattr(arm.limits, quantity)[row])
+        dimension = joint_dimension(kind, quantity) if kind else "number"
+        if not np.isfinite([low, high]).any():
+            cells.append("-")
+        elif quantity != "position" and low == -high:
+            cells.append(format_quantity(high, dimension))
+        else:
+            unit = DIMENSIONS[dimension].screen
+            cells.append(" to ".join(format_value(to_screen(value, dimension)) for value in (low, high)) + f" {unit}")
+    return [printable(cell) for cell in cells]
+
+
+def _sum(arm: Arm, row: int) -> str:
+    """What a row of the limits adds up, per mm or deg of each joint, as in the arm file."""
+    kind = arm.limit_kinds[row]
+    unit = to_screen(1.0, joint_dimension(kind, "position") if kind else "number")
+    parts = []
+    for joint, share in zip(arm.joints, arm.limits.matrix[row], strict=True):
+        if share != 0.0:
+            size = float(share) * unit / to_screen(1.0, joint_dimension(joint.kind, "position"))
+            parts.append(f"{format_value(size)} {joint.name}" if size != 1.0 else joint.name)
+    return " + ".join(parts).replace("+ -", "- ")
 
 
 def _span(arm: Arm, i: int) -> str:

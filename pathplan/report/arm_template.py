@@ -52,7 +52,10 @@ def arm_template(file: str | Path, base: str | None = None, tip: str | None = No
         return "\n".join([whole, *_joint_tables(chain, tables)])
     lines = [f"# What {path.name} does not say of its joints, for the tables [[joint]] that it has; where known."]
     for table in tables.values():
-        lines += ["", f"# {toml_text(table.get('name', '?'), 200)}", *_wishes(table, str(table.get("kind", "")), {})]
+        if wishes := list(_wishes(table, str(table.get("kind", "")), {})):
+            lines += ["", f"# {toml_text(table.get('name', '?'), 200)}", *wishes]
+    if len(lines) == 1:
+        return f"# {path.name} says everything of its joints that an arm file has a place for."
     return "\n".join(lines)
 
 

@@ -3,13 +3,16 @@
     python -m tests.arm.analytic [poses]
 
 It takes a minute an arm, sympy and python-flint (pip install "roboticstoolbox-python[ik]"), and arms in standard DH
-rows: a spherical wrist, and three parallel axes with an offset wrist. Every branch that it finds must be ours.
+rows: a spherical wrist, and three parallel axes with an offset wrist. Every branch that it finds must be ours. What it
+found is kept in `reference/analytic.json`, for `test_analytic.py`, which needs none of that.
 """
 
 from __future__ import annotations
 
+import json
 import sys
 import time
+from pathlib import Path
 
 import numpy as np
 
@@ -37,21 +40,28 @@ ARMS = {
 }
 
 
+PATIENCE = 3600.0  # s for the derivation: it gives up after two minutes if it is not told, which a busy machine exceeds
+TABLE = Path(__file__).parent / "reference" / "analytic.json"
+
+
 def main(poses: int = 20) -> None:
     from roboticstoolbox import DHRobot, RevoluteDH
+    from roboticstoolbox.robot.symbolic_ik_rr import make_solver
 
+    table: dict[str, list[dict[str, list]]] = {}
     for name, rows in ARMS.items():
         arm = from_rows(name, rows)
         began = time.perf_counter()
-        solver = DHRobot(
-            [RevoluteDH(a=r.a, alpha=r.alpha, d=r.d, offset=r.theta) for r in rows], name=name
-        ).analytic_ik()
+        robot = DHRobot([RevoluteDH(a=r.a, alpha=r.alpha, d=r.d, offset=r.theta) for r in rows], name=name)
+        solver = make_solver(robot, max_time=PATIENCE)
         derived = time.perf_counter() - began
         theirs, missed = 0, 0
         for q in np.random.default_rng(0).uniform(-3, 3, (poses, 6)):
             pose = arm.forward(q)
             ours = arm.inverse_batch(pose[None])
-            for answer in np.atleast_2d(np.array(solver.solve(pose, joint_limits=False).q)):
+            answers = np.atleast_2d(np.array(solver.solve(pose, joint_limits=False).q))
+            table.setdefault(name, []).append({"pose": pose[:3].tolist(), "branches": answers.tolist()})
+            for answer in answers:
                 gap = np.abs((ours.q[0] - answer + np.pi) % (2 * np.pi) - np.pi).max(axis=1)
                 theirs += 1
                 missed += bool(np.where(ours.valid[0], gap, np.inf).min() > 1e-5)
@@ -59,6 +69,8 @@ def main(poses: int = 20) -> None:
             f"{name}: {poses} poses, {theirs} branches of the toolbox's, {missed} not among ours; "
             f"derived in {derived:.0f} s"
         )
+    TABLE.parent.mkdir(exist_ok=True)
+    TABLE.write_text(json.dumps(table, indent=None, separators=(",", ":")) + "\n")
 
 
 if __name__ == "__main__":

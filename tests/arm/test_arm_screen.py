@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from pathplan import errors
-from pathplan.arm import load_arm
+from pathplan.arm import Arm, load_arm
 from pathplan.arm.load_urdf import sketch
 from pathplan.arm.reach import reach
 from pathplan.report.arm_screen import arm_as_dict, arm_screen
@@ -18,7 +18,9 @@ from tests.arm.structures import loaded, on_track, seven, skew_shoulder, with_tu
 ROBOTS = Path(__file__).parents[2] / "robots"
 
 
-@pytest.mark.parametrize("name", ["glazer6", "loader4", "sorter4", "stacker6", "stacker7", "stacker6-pallet"])
+@pytest.mark.parametrize(
+    "name", ["glazer6", "loader4", "sorter4", "stacker6", "stacker7", "stacker6-pallet", "sorter4-spline"]
+)
 def test_the_screen_of_every_robot_fits(name):
     arm = loaded(name)
     text = arm_screen(arm)
@@ -51,6 +53,23 @@ def test_more_axes_than_a_pose_asks_for():
     assert "free       j3" in arm_screen(seven())
 
 
+def test_coupled_drives_are_shown():
+    """The nut of a screw spline: 18 deg a mm of lift and the wrist's own turns, as its arm file says."""
+    arm = loaded("sorter4-spline")
+    lines = arm_screen(arm).splitlines()
+    assert "nut = 18 screw + wrist: a coupled drive" in lines
+    (nut,) = [line.split() for line in lines if line.startswith("nut  ")]
+    assert nut == "nut coupled -3800 to 250 deg 18000 deg/s 110000 deg/s^2 1600000 deg/s^3 -".split()
+    (data,) = arm_as_dict(arm)["coupled"]
+    np.testing.assert_allclose(data["row"], [0, 0, np.deg2rad(18) * 1e3, 1])
+    np.testing.assert_allclose(data["position"], np.deg2rad([-3800, 250]))
+
+
+def test_five_axes_serve_places_and_directions():
+    text = arm_screen(five_axes())
+    assert "serves     every place with the direction of the tool's z axis; its roll follows from them" in text
+
+
 def test_joints_beside_the_arm_and_branches_without_names():
     text = arm_screen(with_turntable(loaded("glazer6")))
     assert "6 axes between base and tool, table beside them" in text and "table (beside)" in text
@@ -75,7 +94,20 @@ def test_reach_of_a_scara_and_of_a_gantry():
     np.testing.assert_allclose([far.low, far.high], [[0.12, 0, 0.65], [2.12, 1.2, 1.25]], atol=1e-9)
 
 
+def five_axes() -> Arm:
+    """glazer6 without its last joint, the tool standing along the fourth axis' plane."""
+    arm = loaded("glazer6")
+    tip = arm.parent_from_joint[5] @ arm.tip_from_flange
+    return Arm("five", arm.joints[:5], arm.parent_from_joint[:5], arm.axes[:5], tip)
+
+
 # ---- template
+
+
+def test_nothing_is_wished_of_a_file_that_says_it_all():
+    assert arm_template(ROBOTS / "glazer6.toml") == (
+        "# glazer6.toml says everything of its joints that an arm file has a place for."
+    )
 
 
 def test_the_template_of_a_urdf_file_needs_only_what_it_lacks(tmp_path):

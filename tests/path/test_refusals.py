@@ -112,7 +112,7 @@ def test_line_that_starts_singular(cast) -> None:
 )
 def test_singularities_have_names(cast, joints: list, kind: str) -> None:
     from pathplan.arm.kinematics import smallest_singular_value
-    from pathplan.path.refusals import singular_kind
+    from pathplan.path.singular import singular_kind
 
     arm = cast.robot("glazer6")
     q = np.deg2rad([0.0 if value is None else value for value in joints])
@@ -129,7 +129,7 @@ def test_shoulder_singularity_is_named(cast) -> None:
     from scipy.optimize import brentq
 
     from pathplan.arm.kinematics import smallest_singular_value
-    from pathplan.path.refusals import singular_kind
+    from pathplan.path.singular import singular_kind
 
     arm = cast.robot("glazer6")
 
@@ -207,8 +207,12 @@ def test_the_best_of_several_branches_is_described(cast) -> None:
         "t.toml: step[2]: no branch can follow this line: "
         "the best of 4 branches (shoulder left, elbow up, wrist positive) gets to 50.0 % of it, "
         "xyz 685.9 0.0 495.0 mm, rpy -140.0 0.0 -90.0 deg, "
-        "where it meets a wrist singularity (smallest singular value <n>)",
+        "where it meets a wrist singularity (smallest singular value <n>): "
+        "joint roll at its 320 deg/s would hold the tool to <n> mm/s",
     )
+    singular = error.data["singular"]
+    assert singular["kind"] == "wrist" and singular["joint"] == "roll"
+    assert singular["speed"] < 1e-3  # m/s
     # The place is right: there the tool points along the forearm, so that axes 4 and 6 are in line.
     assert np.sin(error.data["best"][4]) == pytest.approx(0, abs=1e-3)
 

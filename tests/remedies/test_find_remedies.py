@@ -17,8 +17,9 @@ from pathplan.errors import InputError, LimitError, PathplanError, UnreachableEr
 from pathplan.path import follow_task
 from pathplan.path.refusals import rpy_of
 from pathplan.remedies import Remedies, Remedy, find_remedies
-from pathplan.remedies.steps import smaller_blend
+from pathplan.remedies.steps import served_pose, smaller_blend
 from pathplan.remedies.trials import Trials
+from pathplan.task.model import Step, Target
 
 ROOT = Path(__file__).parents[2]
 LONG = 600.0  # s: as long as it takes
@@ -295,3 +296,19 @@ def test_progress_is_told(tmp_path) -> None:
     task, told = task_of(tmp_path, BELT), []
     find_remedies(task, refusal(task), seconds=LONG, progress=lambda *what: told.append(what))
     assert told[0][:2] == ("remedies", 0) and told[-1][1] == told[-1][2]
+
+
+def test_five_axes_take_the_roll_that_follows() -> None:
+    """The same place and the same direction of the tool, turned about it as the arm turns it."""
+    arm = pathplan.load_arm(ROOT / "robots" / "glazer6.toml")
+    tip = arm.parent_from_joint[5] @ arm.tip_from_flange
+    five = pathplan.Arm("five", arm.joints[:5], arm.parent_from_joint[:5], arm.axes[:5], tip)
+    pose = five.forward(np.array([0.3, -0.2, 0.6, 0.1, 1.0]))
+    turned = pose.copy()
+    turned[:3, :2] = pose[:3, :2] @ np.array([[0.8, -0.6], [0.6, 0.8]])
+    step = Step(0, "joint", "t.toml: step[1]", target=Target(frame_from_tool=turned))
+    task = pathplan.Task("t", None, five, np.array([0.0, -0.3, 0.5, 0.0, 1.2]), (step,), 0.008)
+    (remedy,) = served_pose(Trials(task, refusal(task), time.monotonic() + LONG))
+    np.testing.assert_allclose(remedy.changes["pose"][:3, 3], pose[:3, 3], atol=1e-8)
+    np.testing.assert_allclose(remedy.changes["pose"][:3, 2], pose[:3, 2], atol=1e-8)
+    assert plans(remedy.task)
