@@ -32,9 +32,11 @@ _NEAR_SINGULAR = 0.02  # below about this a node costs more
 _MARGIN = 0.01  # share of a held joint's travel that is left at either limit
 _GRID = {1: 25, 2: 11, 3: 6}  # values of each coordinate, by how many there are
 _FINER = {1: 9, 2: 5, 3: 3}
+_BESIDE = {1: np.linspace(-0.6, 0.6, 5), 2: np.zeros(1), 3: np.zeros(1)}  # grid steps from values that are given
 _ROUNDS = {1: 2, 2: 3, 3: 3}
 _STRIDE = 0.7  # rad: a joint that moves further from rung to rung might have gone round another way
 _STEPS = 3.0  # grid steps that a coordinate may move from rung to rung
+_DOUBLINGS = 6  # of the exponent: the 64th norm is nearly the largest, but not blind for the others
 _EASE = 0.05  # part of the cost that counts all joints, not the slowest alone
 _TURN = 2.0 * np.pi
 _NO_LIMIT = 1e6  # of the velocity, per s and s^2: what counts as acceleration and jerk where nothing limits them
@@ -65,6 +67,9 @@ def best_way(path: CartesianPath, rungs: Rungs) -> Array:
         grid[-1] = np.linspace(-np.pi, np.pi, _GRID[count])[:-1]
     width = np.array([values[1] - values[0] for values in grid])
     axes = [np.broadcast_to(values, (len(rungs), len(values))) for values in grid]
+    for c in range(len(rungs.follower.held)):
+        near = _beside_pins(rungs.pinned[:, c], width[c] * _BESIDE[count])
+        axes[c] = np.hstack([axes[c], np.clip(near, *spans[c])])
     way = np.zeros((len(rungs), size))
     furthest = _STEPS * width
     for _ in range(_ROUNDS[count] + 1):
@@ -79,6 +84,15 @@ def best_way(path: CartesianPath, rungs: Rungs) -> Array:
         width = step
         furthest = np.full(size, np.inf)  # the grids lie about a way that has been found
     return way
+
+
+def _beside_pins(pinned: Array, offsets: Array) -> Array:
+    """(T, m) values at and beside those to which a coordinate (T,) is pinned next before and after each rung."""
+    rung = np.arange(len(pinned))
+    known = np.flatnonzero(~np.isnan(pinned))
+    place = np.searchsorted(known, rung, side="right")
+    before, after = known[np.maximum(place - 1, 0)], known[np.minimum(place, len(known) - 1)]
+    return np.hstack([pinned[before, None] + offsets, pinned[after, None] + offsets])
 
 
 def _spans(arm: Arm, rungs: Rungs) -> list[tuple[float, float]]:
@@ -256,12 +270,12 @@ class _Costs:
         bad |= (np.abs(moved) > furthest).any(axis=2)
         share = np.abs(change @ (self.matrix / self.velocity[:, None]).T)
         most = np.maximum(share.max(axis=2), max(floor, 1e-12))
-        # The sixteenth norm: nearly the largest, but not blind for the others.
-        ratio = (share / most[..., None]) ** 2
-        ratio = ratio * ratio
-        ratio = ratio * ratio
-        total = (ratio * ratio).sum(axis=2) + (floor / most) ** 16
-        cost = most * total ** (1.0 / 16.0) + _EASE * np.sqrt((share * share).sum(axis=2))
+        ratio = share / most[..., None]
+        for _ in range(_DOUBLINGS):
+            ratio *= ratio
+        norm = 2**_DOUBLINGS
+        total = ratio.sum(axis=2) + (floor / most) ** norm
+        cost = most * total ** (1.0 / norm) + _EASE * np.sqrt((share * share).sum(axis=2))
         cost *= (nodes.burden[before][:, None] + nodes.burden[after]) / 2.0
         cost[bad] = np.inf
         return np.asarray(cost)
