@@ -136,7 +136,7 @@ def _tracked(path: CartesianPath, say: Progress) -> tuple[Array, States, Tracks,
     tracks = track(path.course, path.segments, frames[rows])
     ways = routes(path, states, tracks)
     say("path", 2, _PARTS)
-    return path, frames, states, tracks, ways
+    return frames, states, tracks, ways
 
 
 def _silent(what: str, done: int, total: int) -> None:

@@ -157,7 +157,7 @@ def test_a_free_pallet_turns_for_a_shorter_time() -> None:
     """An arc about the middle of the pallet, which may turn to meet the arm."""
     around = [
         on_pallet("joint", -250, 0, 200),
-        replace(step("arc", centre=[0, 0, 200], axis=np.array([0, 0, 1.0]), angle=2.0), carrier="pallet"),
+        replace(step("arc", centre=[0, 0, 200], axis=np.array([0, 0, 1.0]), angle=2.0), point_frame="pallet"),
     ]
     still = [replace(around[0], axes={"pallet": 0.0}), replace(around[1], axes={"pallet": 0.0})]
     free, rigid = (follow_task(on_the_pallet(steps)) for steps in (around, still))
