@@ -290,7 +290,7 @@ class Plan:
             local = local[local <= part.timing.duration]
             rows = evaluate(part, np.asarray(local, dtype=np.float64), len(self.task.arm.joints))
             programmed, known = part.stretch.programmed(rows.s)
-            actual = part.stretch.arm.forward(rows.position)
+            actual = part.stretch.reached(rows.s, rows.position)
             times = np.asarray(part.first * cycle + local, dtype=np.float64)
             worst = worse_deviation(worst, path_deviation(actual, programmed, known, times, rows.step))
         return worst

@@ -218,11 +218,14 @@ def _ad(twist: Array, column: Array) -> Array:
     return np.concatenate([_cross(w, column[:3]) + _cross(v, column[3:]), _cross(w, column[3:])])
 
 
-def joint_derivatives(arm: Arm, q: Array, twists: Array) -> tuple[Array, Array]:
+def joint_derivatives(
+    arm: Arm, q: Array, twists: Array, held: tuple[int, ...] = (), rates: Array | None = None
+) -> tuple[Array, Array]:
     """Joint derivatives q', q'', q''' that follow a tool path, and what they can't follow.
 
     Parameters: q (N, n) on the path; twists (N, 3, 6) the spatial twist of the tool in the base frame and
-    its first two derivatives with respect to the path parameter: (v_o, w), v_o = p' - w x p.
+    its first two derivatives with respect to the path parameter: (v_o, w), v_o = p' - w x p. Joints `held`
+    move as they are told, rates (N, 3, len(held)) are their derivatives, and the others follow.
     Returns: derivatives (N, 3, n); residual (N, 3), the norm of what is left of the k-th equation, taken at
     the tool centre point, angular rows scaled by `arm.length` (m per parameter^k). Fewer than six axes:
     least squares in that norm; more than six: least joint norm in which prismatic joints count by
@@ -241,34 +244,43 @@ def joint_derivatives(arm: Arm, q: Array, twists: Array) -> tuple[Array, Array]:
     residual = np.empty((q.shape[0], 3))
     for start in range(0, q.shape[0], CHUNK):
         part = slice(start, start + CHUNK)
-        derivatives[part], residual[part] = _derivatives(arm, q[part], twists[part].transpose(1, 2, 0))
+        told = None if rates is None else rates[part].transpose(1, 0, 2)
+        derivatives[part], residual[part] = _derivatives(arm, q[part], twists[part].transpose(1, 2, 0), held, told)
     return derivatives, residual
 
 
-def _derivatives(arm: Arm, q: Array, twists: Array) -> tuple[Array, Array]:
-    """As `joint_derivatives`, one chunk, with twists (3, 6, N)."""
+def _derivatives(arm: Arm, q: Array, twists: Array, held: tuple[int, ...], rates: Array | None) -> tuple[Array, Array]:
+    """As `joint_derivatives`, one chunk, with twists (3, 6, N) and rates (3, N, len(held))."""
     m = q.shape[0]
     columns, tcp = spatial_axes(arm, q)
     at_tcp = np.empty((m, 6, arm.n))
     at_tcp[:, :3] = (columns[:, :3] + np.stack([_cross(column[3:], tcp) for column in columns])).transpose(2, 1, 0)
     at_tcp[:, 3:] = columns[:, 3:].transpose(2, 1, 0) * arm.length
-    solve = _solver(at_tcp, np.array([1.0 if joint.kind == "revolute" else arm.length for joint in arm.joints]))
+    scale = np.array([1.0 if joint.kind == "revolute" else arm.length for joint in arm.joints])
+    free = [i for i in range(arm.n) if i not in held]
+    solve = _solver(at_tcp[:, :, free], scale[free]) if held else _solver(at_tcp, scale)
 
-    def answer(spatial: Array) -> tuple[Array, Array]:
+    def answer(spatial: Array, order: int) -> tuple[Array, Array]:
         asked = np.empty((m, 6))
         asked[:, :3] = (spatial[:3] + _cross(spatial[3:], tcp)).T
         asked[:, 3:] = spatial[3:].T * arm.length
-        found = solve(asked)
+        if held:
+            assert rates is not None
+            found = np.empty((m, arm.n))
+            found[:, held] = rates[order]
+            found[:, free] = solve(asked - np.einsum("mij,mj->mi", at_tcp[:, :, held], rates[order]))
+        else:
+            found = solve(asked)
         left = asked - np.einsum("mij,mj->mi", at_tcp, found)
         return found, np.sqrt(np.einsum("mi,mi->m", left, left))
 
-    first, residual_1 = answer(twists[0])
+    first, residual_1 = answer(twists[0], 0)
     before = np.zeros((6, m))  # V_{i-1}
     change = np.zeros_like(columns)  # S_i'
     for i in arm.chain.path:
         change[i] = _ad(before, columns[i])
         before = before + columns[i] * first[:, i]
-    second, residual_2 = answer(twists[1] - np.einsum("jkm,mj->km", change, first))
+    second, residual_2 = answer(twists[1] - np.einsum("jkm,mj->km", change, first), 1)
     before = np.zeros((6, m))
     rate_before = np.zeros((6, m))  # V'_{i-1}
     rest = twists[2].copy()
@@ -277,7 +289,7 @@ def _derivatives(arm: Arm, q: Array, twists: Array) -> tuple[Array, Array]:
         rest -= 2.0 * change[i] * second[:, i] + change_2 * first[:, i]
         before = before + columns[i] * first[:, i]
         rate_before = rate_before + columns[i] * second[:, i] + change[i] * first[:, i]
-    third, residual_3 = answer(rest)
+    third, residual_3 = answer(rest, 2)
     return np.stack([first, second, third], axis=1), np.stack([residual_1, residual_2, residual_3], axis=1)
 
 
@@ -308,14 +320,19 @@ class _solver:
         return np.einsum("mij,mj->mi", self.inverse, rhs) * self.scale
 
 
-def smallest_singular_value(arm: Arm, q: Array) -> Array:
+def smallest_singular_value(arm: Arm, q: Array, held: tuple[int, ...] = ()) -> Array:
     """Distance from singularity (N,), dimensionless, for q (N, n).
 
     The smallest singular value (of fewer than six joints between base and tool, the last) of the Jacobian at the tool
-    centre point, its linear rows divided by `arm.length` and its prismatic columns multiplied by it.
+    centre point, its linear rows divided by `arm.length` and its prismatic columns multiplied by it; of the joints that
+    are not `held`.
     """
     matrix = jacobian(arm, checked(q, arm.n)[0])
     matrix[:, :3] /= arm.length
     prismatic = [i for i, joint in enumerate(arm.joints) if joint.kind == "prismatic"]
     matrix[:, :, prismatic] *= arm.length
-    return np.asarray(np.linalg.svd(matrix, compute_uv=False)[:, min(len(arm.chain.path), 6) - 1])
+    count = len(arm.chain.path)
+    if held:
+        matrix = np.delete(matrix, held, axis=2)
+        count = sum(i not in held for i in arm.chain.path)
+    return np.asarray(np.linalg.svd(matrix, compute_uv=False)[:, min(count, 6) - 1])

@@ -142,14 +142,14 @@ class Solver:
     def _drop_repeated(self, q: Array, errors: Array) -> None:
         """Of places that hold the same answer the first keeps it."""
         good = _valid(errors)
-        gap = apart(self.g, q[:, :, None], q[:, None])
+        gap = _gaps(self.g, q, q)
         repeated = good & ((gap < 1e-7) & good[:, None] & np.tri(q.shape[1], k=-1, dtype=bool)).any(axis=2)
         errors[:, repeated] = np.inf
 
     def _complete(self, q: Array, errors: Array, poses: Array) -> None:
         """A form that fits nearly may miss branches where two of them come close: there the elimination looks too."""
         good = _valid(errors)
-        gap = np.where(good[:, None] & good[:, :, None], apart(self.g, q[:, :, None], q[:, None]), np.inf)
+        gap = np.where(good[:, None] & good[:, :, None], _gaps(self.g, q, q), np.inf)
         gap[:, np.arange(q.shape[1]), np.arange(q.shape[1])] = np.inf
         lost = ~good & (np.maximum(errors[0] / self.g.length, errors[1]) < NEAR_BASIN)
         rows = np.flatnonzero(lost.any(axis=1) | (gap.min(axis=(1, 2)) < DOUBTFUL) | (good.sum(axis=1) % 2 == 1))
@@ -212,10 +212,13 @@ def _followed(g: Geometry, q: Array, good: Mask) -> Index:
         part = slice(start, min(start + CHUNK, size - 1))
         after = slice(part.start + 1, part.stop + 1)
         both = good[part][:, :, None] & good[after][:, None]
-        gap[part] = np.where(both, apart(g, q[part][:, :, None], q[after][:, None]), np.inf)
-    to, back = gap.argmin(axis=2), gap.argmin(axis=1)
-    mutual = (np.take_along_axis(back, to, axis=1) == np.arange(places)) & (gap.min(axis=2) < FOLLOWED)
-    to = np.where(mutual, to, -1)
+        gap[part] = np.where(both, _gaps(g, q[part], q[after]), np.inf)
+    to = np.full((size - 1, places), -1, dtype=np.intp)
+    some = np.flatnonzero((gap < FOLLOWED).any(axis=(1, 2)))  # poses apart have none
+    gap = gap[some]
+    nearest, back = gap.argmin(axis=2), gap.argmin(axis=1)
+    mutual = (np.take_along_axis(back, nearest, axis=1) == np.arange(places)) & (gap.min(axis=2) < FOLLOWED)
+    to[some] = np.where(mutual, nearest, -1)
     straight = (to == np.arange(places)) | (to < 0)
     if straight.all():
         return order
@@ -232,6 +235,19 @@ def _followed(g: Geometry, q: Array, good: Mask) -> Index:
         left = [answer for answer in left if answer not in used]
         rows.append([left.pop(0) if answer < 0 else answer for answer in row])
     return np.array(rows, dtype=np.intp)
+
+
+def _gaps(g: Geometry, q: Array, other: Array) -> Array:
+    """(N, B, B) `apart` of every answer q (N, B, m) from every one of `other`; joint by joint, which is faster."""
+    worst = np.zeros((*q.shape[:2], q.shape[1]))
+    for k, kind in enumerate(g.kinds):
+        gap = np.abs(np.ascontiguousarray(q[:, :, k])[:, :, None] - np.ascontiguousarray(other[:, :, k])[:, None])
+        if kind == "revolute":
+            np.minimum(gap, 2.0 * np.pi - gap, out=gap)
+        else:
+            gap /= g.length
+        np.maximum(worst, gap, out=worst)
+    return worst
 
 
 def solver_of(g: Geometry, travel: Any = None) -> Solver:

@@ -21,6 +21,8 @@ from pathplan.auditing.exceedances import clock
 from pathplan.auditing.model import Finding
 from pathplan.auditing.shares import Array
 from pathplan.errors import InputError
+from pathplan.path.follower import Follower, follower_of
+from pathplan.path.taskpath import matched_roll
 from pathplan.table import JointTable
 from pathplan.units import format_quantity, joint_dimension
 
@@ -90,13 +92,14 @@ def _all_passes(
     near: tuple[float, float],
 ) -> tuple[Pass, ...]:
     """The nearest rows; `good` (N,) tells which are finite, `position` (N, n) is zero at the others."""
-    carried = {step.tool: _carrying(task.arm, step) for step in steps}
-    poses = {tool: carrying.forward(position) for tool, carrying in carried.items()}
+    seen = {(step.tool, task.carrier(step)): _follower(task, step) for step in steps}
+    view = np.ones(len(position), dtype=np.intp)
+    poses = {key: follower.forward(view * len(follower.carriers), position) for key, follower in seen.items()}
     moves = _moves(task.arm, position)
     costs, rows = [], []
     most = max(64, MOST_CANDIDATES // max(1, len(steps)))
     for step in steps:
-        away = _away(step, task, carried[step.tool], poses[step.tool], position)
+        away = _away(step, task, poses[step.tool, task.carrier(step)], position)
         away[~good | np.isnan(away)] = np.inf
         at = _candidates(away, most)
         rows.append(at)
@@ -104,7 +107,8 @@ def _all_passes(
         costs.append(known / (known + MISSED) + (0.5 * moves[at] if step.blend is None else 0.0))
     chosen = _in_order(rows, costs)
     return tuple(
-        _pass(step, task, carried[step.tool], table, row, near) for step, row in zip(steps, chosen, strict=True)
+        _pass(step, task, seen[step.tool, task.carrier(step)], table, row, near)
+        for step, row in zip(steps, chosen, strict=True)
     )
 
 
@@ -114,19 +118,38 @@ def _carrying(arm: Arm, step: Step) -> Arm:
     return arm.equipped(tool=step.tool if step.tool in arm.tools else None)
 
 
+def _follower(task: Task, step: Step) -> Follower:
+    """The arm with the step's tool; its last view is the frame that the target is meant in."""
+    carrier = task.carrier(step)
+    return follower_of(_carrying(task.arm, step), () if carrier is None else (carrier,))
+
+
 def _target_pose(step: Step, task: Task, arm: Arm) -> Array:
-    """(4, 4) base_from_tool of a step's target."""
+    """(4, 4) tool pose of a step's target, in the base frame or in that of the joint that carries it."""
     assert step.target is not None
-    return arm.forward(step.target.joints) if step.target.joints is not None else task.pose(step.target)
+    if step.target.joints is not None:
+        return arm.forward(step.target.joints)
+    assert step.target.frame_from_tool is not None
+    return task.carrier_from_frame(step.target.frame)[1] @ step.target.frame_from_tool
 
 
-def _away(step: Step, task: Task, arm: Arm, poses: Array, position: Array) -> Array:
+def _errors(step: Step, poses: Array, target: Array) -> tuple[Array, Array]:
+    """Distances and angles (N,) of poses (N, 4, 4) from a target (4, 4); the roll of the tool left out where it is
+    free.
+    """
+    if step.roll_free:
+        poses = matched_roll(poses, np.broadcast_to(target, poses.shape))
+    return pose_errors(poses, target[None])
+
+
+def _away(step: Step, task: Task, poses: Array, position: Array) -> Array:
     """How far each row (N,) is from a step's target, m; angles times the arm's length."""
     assert step.target is not None
+    arm = task.arm
     if step.target.joints is not None:
         scale = np.array([arm.length if joint.kind == "revolute" else 1.0 for joint in arm.joints])
         return np.asarray((np.abs(position - step.target.joints) * scale).max(axis=1))
-    distance, angle = pose_errors(poses, _target_pose(step, task, arm)[None])
+    distance, angle = _errors(step, poses, _target_pose(step, task, arm))
     return np.asarray(distance + arm.length * angle)
 
 
@@ -168,11 +191,12 @@ def _in_order(rows: Sequence[Integers], costs: Sequence[Array]) -> list[int]:
     return [int(at[i]) for at, i in zip(rows, reversed(chosen), strict=True)]
 
 
-def _pass(step: Step, task: Task, arm: Arm, table: JointTable, row: int, near: tuple[float, float]) -> Pass:
+def _pass(step: Step, task: Task, follower: Follower, table: JointTable, row: int, near: tuple[float, float]) -> Pass:
     assert step.target is not None
-    q, target = table.position[row], _target_pose(step, task, arm)
-    distance, angle = (float(value[0]) for value in pose_errors(arm.forward(q[None]), target[None]))
-    joint, off = _joint_off(arm, q, target, step.target.joints)
+    q, target = table.position[row], _target_pose(step, task, follower.arm)
+    view = np.array([len(follower.carriers)], dtype=np.intp)
+    distance, angle = (float(value[0]) for value in _errors(step, follower.forward(view, q[None]), target))
+    joint, off = _joint_off(follower, q, target, step.target.joints)
     allowed: tuple[float, float] | None = near
     if step.blend is not None:
         allowed = (near[0] + step.blend.value, math.pi) if step.blend.kind == "length" else None
@@ -180,12 +204,16 @@ def _pass(step: Step, task: Task, arm: Arm, table: JointTable, row: int, near: t
     return Pass(step.index, step.name, kind, row, float(table.time[row]), distance, angle, joint, off, allowed)
 
 
-def _joint_off(arm: Arm, q: Array, target: Array, joints: Array | None) -> tuple[str | None, float]:
-    """The joint that would have to move most to stand at the target, and by how much."""
+def _joint_off(follower: Follower, q: Array, target: Array, joints: Array | None) -> tuple[str | None, float]:
+    """The joint that would have to move most to stand at the target, and by how much; those that a pose leaves free
+    stay.
+    """
+    arm = follower.arm
     scale = np.array([arm.length if joint.kind == "revolute" else 1.0 for joint in arm.joints])
     if joints is None:
-        branches = arm.inverse_batch(target[None])
-        answers = branches.q[0][branches.valid[0]]
+        view = np.array([len(follower.carriers)], dtype=np.intp)
+        found, valid = follower.branches(view, target[None], q[None, list(follower.held)])
+        answers = found[0][valid[0]]
         if not len(answers):
             return None, 0.0
         turning = np.array([joint.kind == "revolute" for joint in arm.joints])

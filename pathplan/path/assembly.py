@@ -52,7 +52,7 @@ def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces
                 sequence.append(Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span]))
         elif step.motion == "wait" or step.index not in parts.flown_by:
             sequence.append(Wait(step.index, step.wait))
-    corners = _corners(path, layout, start, stretch_of_motion)
+    corners = _corners(path, layout, start, stretch_of_motion, arms)
     findings = tuple(sorted((*path.findings, *layout.findings), key=lambda finding: finding.step))
     targets = choice.q.copy()
     targets.flags.writeable = False
@@ -145,7 +145,9 @@ def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple
     return tuple(caps)
 
 
-def _corners(path: CartesianPath, layout: Layout, start: Array, stretch_of_motion: Index) -> tuple[Corner, ...]:
+def _corners(
+    path: CartesianPath, layout: Layout, start: Array, stretch_of_motion: Index, arms: _Equipped
+) -> tuple[Corner, ...]:
     spans = layout.spans
     span_of = {int(spans.before[i]): i for i in np.flatnonzero(spans.corner)}
     ends = np.zeros(int(layout.stretch.max(initial=0)) + 1)
@@ -155,6 +157,7 @@ def _corners(path: CartesianPath, layout: Layout, start: Array, stretch_of_motio
         number = int(stretch_of_motion[j])
         blend = junction.blend
         asked = junction.step.blend
+        leg = path.legs[spans.motions.leg[j]]
         if blend is not None:
             s_from = float(start[span_of[j]])
             s_to = s_from + float(spans.length[span_of[j]])
@@ -172,7 +175,7 @@ def _corners(path: CartesianPath, layout: Layout, start: Array, stretch_of_motio
                 stretch=number,
                 s_from=s_from,
                 s_to=s_to,
-                pose=path.legs[spans.motions.leg[j]].end,
+                pose=leg.end if leg.view == 0 else arms.carrying(leg.step).forward(spans.motions.end[j]),
             )
         )
     return tuple(corners)

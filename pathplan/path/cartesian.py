@@ -3,6 +3,9 @@
 A `CartesianPath` follows from the task's poses alone. Only an arm with fewer than six axes has a say: a
 pose that it serves within its tolerance is replaced by the pose it truly takes, so that the path in
 between can be followed exactly.
+
+Tool paths on a workpiece that a joint carries are programmed in that joint's moving frame: legs have a `view`
+(`pathplan.path.follower`). What the poses leave free, and what is given of it, is in `Freedom`.
 """
 
 from __future__ import annotations
@@ -18,12 +21,14 @@ from pathplan.arm.arm import BARE, NOTHING
 from pathplan.errors import InputError
 from pathplan.path import geometry
 from pathplan.path.curve import CurveSize, curve_derivatives, curve_size
+from pathplan.path.follower import Course, Follower, follower_of
+from pathplan.path.freedom import Freedom, Knowledge
 from pathplan.path.geometry import NO_MOTION, Index, Segments
 from pathplan.path.joint import Array, JointPath
 from pathplan.path.rotations import rotation_vector
 from pathplan.path.taught import taught_path
 from pathplan.task.curves import curve_through
-from pathplan.task.model import Curve, Step, Target, Task, Taught
+from pathplan.task.model import Curve, Step, Task, Taught
 from pathplan.units import format_quantity
 
 __all__ = ["CartesianPath", "Finding", "Leg", "cartesian_path", "tool_frames", "tool_of"]
@@ -32,6 +37,18 @@ _APART = 1e-6  # rad, or arm lengths: a curve that starts further from where the
 _ROUNDING = 1e-13  # of poses that are the same
 
 NO_MOTION_TEXT = "the arm already is at this target, the step has no motion"
+
+
+FREE_ROLL_TEXT = (
+    "the turn of the tool about its own axis is free here{more}: chosen for the shortest time, and left out of the "
+    "path deviation"
+)
+
+
+class MixedFrames(ValueError):
+    """A tool path that begins in one frame and ends in another, with nobody to say how they stand; the message says
+    what helps.
+    """
 
 
 class StartsElsewhere(ValueError):
@@ -51,7 +68,11 @@ class Finding:
 
 @dataclass(frozen=True, eq=False)
 class Leg:
-    """One moving step: from where to where, base_from_tool (4, 4) with the step's own tool."""
+    """One moving step: from where to where, base_from_tool (4, 4) with the step's own tool.
+
+    In place of the base the frame of `view` where a joint carries the workpiece. `twist`: rad that the tool is turned
+    about its own axis along the way beside what its segment says, where its roll is free.
+    """
 
     step: Step
     # "none": a line or arc to where the arm already is; "taught": a joint path through taught points
@@ -59,6 +80,8 @@ class Leg:
     start: Array
     end: Array
     segment: int = -1  # row of `CartesianPath.segments`, -1 unless cartesian
+    view: int = 0
+    twist: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -67,14 +90,22 @@ class CartesianPath:
 
     `legs`: the moving steps in order; waits have none. `segments`: one row per cartesian leg. `taught`: the joint
     paths through taught points. Corners are not part of it: where a joint step takes part in one, they depend on the
-    joints.
+    joints. `held` (m + 1, H): the held joints at the start and after each leg, and `course` along the segments; both
+    are known once what is `free` has been chosen (None: nothing is).
     """
 
     task: Task
     legs: tuple[Leg, ...]
     segments: Segments
     findings: tuple[Finding, ...]
+    course: Course
+    held: Array
     taught: Mapping[Taught, JointPath] = field(default_factory=dict)
+    free: Freedom | None = None
+
+    @property
+    def follower(self) -> Follower:
+        return self.course.follower
 
     def poses(self, legs: Index, s: Array) -> Array:
         """(N, 4, 4) programmed base_from_tool at s (N,) along cartesian legs (N,), corners left aside."""
@@ -110,9 +141,12 @@ def cartesian_path(task: Task) -> CartesianPath:
     said: set[Curve] = set()
     taught: dict[Taught, JointPath] = {}
     sizes: dict[Curve, CurveSize] = {}
-    targets = _target_poses(task)
+    carriers = {task.carrier(step): None for step in task.steps if step.motion != "wait"}
+    follower = follower_of(task.arm, tuple(name for name in carriers if name is not None))
+    targets = _target_poses(task, follower)
     flange_from_tool = task.arm.tool.flange_from_tool
-    pose = task.arm.forward(task.start)
+    pose, view = task.arm.forward(task.start), 0
+    knowledge = Knowledge(follower, task.start)
     for step in task.steps:
         if step.motion == "wait":
             continue
@@ -120,55 +154,89 @@ def cartesian_path(task: Task) -> CartesianPath:
         if tool is not flange_from_tool:  # the same flange carries another tool now
             pose = pose @ np.linalg.solve(flange_from_tool, tool)
             flange_from_tool = tool
+        before, view_before = knowledge.now, view
+        view = follower.view_of(task.carrier(step))
+        knowledge.learn(step, view)
         if step.motion in ("joint", "taught"):
             end = _given(targets, step)
-            legs.append(Leg(step, "joint" if step.taught is None else "taught", pose, end))
+            legs.append(Leg(step, "joint" if step.taught is None else "taught", pose, end, view=view))
             if step.taught is not None and step.taught not in taught:
                 taught[step.taught], note = taught_path(step.taught, task.arm)
                 findings += [Finding(step.index, note)] if note else []
             pose = end
             continue
         try:
-            segment, end = _segment(task, step, targets, pose, sizes)
-        except (geometry.DegenerateArc, geometry.HalfTurn, StartsElsewhere) as complaint:
+            pose = _seen(follower, pose, view_before, view, before)
+            segment, end, twist = _segment(task, step, targets, pose, sizes)
+        except (MixedFrames, geometry.DegenerateArc, geometry.HalfTurn, StartsElsewhere) as complaint:
             problems.append(f"{step.where}: {complaint}")
             pose = targets.get(step.index, pose)
             continue
         if step.curve is not None and step.curve.note and step.curve not in said:
             said.add(step.curve)
             findings.append(Finding(step.index, step.curve.note))
+        change = knowledge.change()
+        if change > 0.0 and step.curve is None:
+            segment = segment.over(float(np.hypot(segment.length[0], change)))
         if segment.length[0] < NO_MOTION:
             findings.append(Finding(step.index, NO_MOTION_TEXT))
-            legs.append(Leg(step, "none", pose, pose))
+            legs.append(Leg(step, "none", pose, pose, view=view))
+            knowledge.rest()
             continue
-        legs.append(Leg(step, "cartesian", pose, end, segment=len(parts)))
+        legs.append(Leg(step, "cartesian", pose, end, segment=len(parts), view=view, twist=twist))
         parts.append(segment)
         pose = end
     if problems:
         raise InputError(problems[0], problems=problems)
     if not legs:
         raise InputError("expected at least one step that moves, got none")
-    return CartesianPath(task, tuple(legs), Segments.join(parts), tuple(findings), taught)
+    free = knowledge.freedom([leg.kind for leg in legs], [leg.step for leg in legs])
+    course = Course(follower, np.array([leg.view for leg in legs if leg.segment >= 0], dtype=np.intp))
+    rolling = [leg.step.index for leg in legs if leg.step.roll_free]
+    if rolling:
+        more = f" and in {len(rolling) - 1} more steps" if len(rolling) > 1 else ""
+        findings.append(Finding(rolling[0], FREE_ROLL_TEXT.format(more=more)))
+    segments, held = Segments.join(parts), np.zeros((len(legs) + 1, 0))
+    return CartesianPath(task, tuple(legs), segments, tuple(findings), course, held, taught, free)
+
+
+def _seen(follower: Follower, pose: Array, view: int, other: int, held: Array) -> Array:
+    """A tool pose (4, 4) of one view in another, with the held joints at (H,). Raises MixedFrames where that is not
+    known.
+    """
+    if view == other:
+        return pose
+    q = np.full(follower.arm.n, np.nan)
+    q[list(follower.held)] = held
+    base_from_old, base_from_new = (follower.base_from_view(v, q) for v in (view, other))
+    if not (np.isfinite(base_from_old).all() and np.isfinite(base_from_new).all()):
+        name = follower.carriers[(other or view) - 1]
+        hint = f"expected axes = {{ {name} = ... }} in the step before it, or a joint step in its place"
+        raise MixedFrames(
+            f"starts in another frame than it ends in, and where joint {name} then stands is left free: {hint}"
+        )
+    return np.asarray(np.linalg.solve(base_from_new, base_from_old @ pose))
 
 
 def _segment(
     task: Task, step: Step, targets: Mapping[int, Array], start: Array, sizes: dict[Curve, CurveSize]
-) -> tuple[Segments, Array]:
-    """The segment of a line, arc or curve, and the pose it ends at. `sizes`: of the curves so far."""
+) -> tuple[Segments, Array, float]:
+    """The segment of a line, arc or curve, the pose it ends at, and its twist. `sizes`: of the curves so far."""
     size = task.arm.length
     if step.target is None:
         if step.centre is None or step.axis is None or step.angle is None:
             raise InputError(f"{step.where}: expected a target, or centre, axis and angle of an arc")
         segment = geometry.arc_about(start, step.centre, step.axis, step.angle, size, along=step.along)
-        return segment, segment.poses(np.array([0]), segment.length)[0]
+        return segment, segment.poses(np.array([0]), segment.length)[0], 0.0
     end = _given(targets, step)
     if step.curve is not None:
-        return _along_curve(task, step, step.curve, start, sizes)
+        return *_along_curve(task, step, step.curve, start, sizes), 0.0
+    pointed, twist = geometry.pointing(start, end) if step.roll_free else (end, 0.0)
     if step.motion == "line":
-        return geometry.line(start, end, size), end
+        return geometry.line(start, pointed, size), end, twist
     if step.via is None:
         raise InputError(f"{step.where}: expected a via point of the arc, or centre, axis and angle")
-    return geometry.arc_through(start, step.via, end, size), end
+    return geometry.arc_through(start, step.via, pointed, size), end, twist
 
 
 def _along_curve(
@@ -176,8 +244,8 @@ def _along_curve(
 ) -> tuple[Segments, Array]:
     """The segment of a curve, and the pose it ends at."""
     assert step.target is not None and step.frame_from_curve is not None
-    base_from_curve = task.base_from_frame(step.target.frame) @ step.frame_from_curve
-    if task.arm.n < 6:
+    base_from_curve = task.carrier_from_frame(step.target.frame)[1] @ step.frame_from_curve
+    if len(task.arm.tool_joints) < 6:
         curve = _served_curve(task, step, curve, base_from_curve)
     away = base_from_curve @ curve.pose(end=False)
     distance = float(np.linalg.norm(away[:3, 3] - start[:3, 3]))
@@ -217,8 +285,10 @@ def _given(targets: Mapping[int, Array], step: Step) -> Array:
     return targets[step.index]
 
 
-def _target_poses(task: Task) -> dict[int, Array]:
-    """base_from_tool (4, 4) of every target, with the tool of its step, by step index."""
+def _target_poses(task: Task, follower: Follower) -> dict[int, Array]:
+    """base_from_tool (4, 4) of every target, with the tool of its step, by step index; on a workpiece that a joint
+    carries, in that joint's frame.
+    """
     own = task.arm.tool.flange_from_tool
     poses: dict[int, Array] = {}
     asked: list[int] = []  # those given as poses
@@ -230,31 +300,21 @@ def _target_poses(task: Task) -> dict[int, Array]:
             tool = tool_of(task.arm, step.tool).flange_from_tool
             poses[step.index] = task.arm.forward(target.joints) @ np.linalg.solve(own, tool)
             continue
-        carried = _carried_by(task, target)
-        if carried:
-            raise InputError(f"{step.where}: frame {target.frame} turns with joint {carried}, expected a frame at rest")
-        poses[step.index] = task.pose(target)
+        assert target.frame_from_tool is not None
+        poses[step.index] = task.carrier_from_frame(target.frame)[1] @ target.frame_from_tool
         asked.append(step.index)
-    if task.arm.n < 6 and asked:
+    if len(task.arm.tool_joints) < 6 and asked:
         steps = {step.index: step for step in task.steps}
         swap = np.array([np.linalg.solve(tool_of(task.arm, steps[i].tool).flange_from_tool, own) for i in asked])
-        branches = task.arm.inverse_batch(np.array([poses[i] for i in asked]) @ swap)
-        best = np.argmax(branches.valid, axis=1)
-        served = task.arm.forward(branches.q[np.arange(len(asked)), best]) @ np.linalg.inv(swap)
+        view = np.array([follower.view_of(task.carrier(steps[i])) for i in asked], dtype=np.intp)
+        # Which components are served does not hang on where a track or a turntable stands.
+        held = np.zeros((len(asked), len(follower.held)))
+        q, valid = follower.branches(view, np.array([poses[i] for i in asked]) @ swap, held)
+        best = np.argmax(valid, axis=1)
+        served = follower.forward(view, q[np.arange(len(asked)), best]) @ np.linalg.inv(swap)
         # What is not served is refused later, where the branches are chosen and the reason is known.
-        poses |= {i: served[row] for row, i in enumerate(asked) if branches.valid[row, best[row]]}
+        poses |= {i: served[row] for row, i in enumerate(asked) if valid[row, best[row]]}
     return poses
-
-
-def _carried_by(task: Task, target: Target) -> str | None:
-    """The joint that carries a target's frame, None if the frame rests."""
-    name = target.frame
-    while name != "base":
-        frame = task.frames[name]
-        if frame.joint is not None:
-            return frame.joint
-        name = frame.parent
-    return None
 
 
 def tool_frames(path: CartesianPath) -> Array:

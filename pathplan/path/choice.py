@@ -18,11 +18,11 @@ from pathplan.errors import PathplanError
 from pathplan.path.cartesian import CartesianPath, Leg
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
-from pathplan.path.refusals import no_branch_follows, no_state_asked
-from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, endless_joints, expand, judged_rows, matching
+from pathplan.path.refusals import no_branch_follows, no_state_asked, not_with_held
+from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, expand, judged_rows, matching
 from pathplan.path.tracking import Tracks, turns_between
 
-__all__ = ["Choice", "Routes", "candidate_states", "choose", "routes"]
+__all__ = ["Choice", "Routes", "candidate_states", "choose", "refused_target", "routes"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,27 +58,32 @@ def candidate_states(path: CartesianPath, tool_from_own: Array) -> States:
     Raises UnreachableError, naming the step, for a target out of reach, outside the limits, or not to be
     had in the configuration asked.
     """
-    arm, legs = path.task.arm, path.legs
+    arm, legs, follower = path.task.arm, path.legs, path.follower
     posed = np.array([i for i, leg in enumerate(legs) if _given_joints(path, i) is None], dtype=np.intp)
     poses = np.array([leg.end for leg in legs])[posed] @ tool_from_own[posed]
     target, branch, q = np.zeros(0, dtype=np.intp), np.zeros(0, dtype=np.intp), np.zeros((0, arm.n))
     if len(posed):
-        branches = arm.inverse_batch(poses)
-        wanted = np.array(branches.valid)
+        views, held = np.array([leg.view for leg in legs], dtype=np.intp)[posed], path.held[posed + 1]
+        answers, wanted = follower.branches(views, poses, held)
         row, branch = np.nonzero(wanted)
-        target, branch, q = expand(arm, posed[row] + 1, branch, branches.q[row, branch])
+        target, branch, q = expand(arm, posed[row] + 1, branch, answers[row, branch])
+        if follower.held:  # their turns are given too
+            own = (np.abs(q[:, list(follower.held)] - path.held[target]) < SAME_STATE).all(axis=1)
+            target, branch, q = target[own], branch[own], q[own]
         without = np.flatnonzero(np.bincount(target, minlength=len(legs) + 1)[posed + 1] == 0)
         if len(without):
-            raise _refused(path, int(posed[without[0]]), poses[without[0]])
-        allowed = np.ones((len(legs) + 1, len(branches.labels)), dtype=bool)
+            raise refused_target(path, int(posed[without[0]]), poses[without[0]])
+        allowed = np.ones((len(legs) + 1, wanted.shape[1]), dtype=bool)
         for i in posed:
             if legs[i].step.configuration:
-                allowed[i + 1] = matching(branches.labels, legs[i].step.configuration)
+                labels = follower.labels(legs[i].view)
+                allowed[i + 1, : len(labels)] = matching(labels, legs[i].step.configuration)
         keep = allowed[target, branch]
         without = np.flatnonzero(np.bincount(target[keep], minlength=len(legs) + 1)[posed + 1] == 0)
         if len(without):
             i = int(posed[without[0]])
-            there = [branches.labels[b] for b in dict.fromkeys(branch[target == i + 1].tolist())]
+            labels = follower.labels(legs[i].view)
+            there = [labels[b] for b in dict.fromkeys(branch[target == i + 1].tolist())]
             raise no_state_asked(legs[i], there)
         target, branch, q = target[keep], branch[keep], q[keep]
     given = [i for i in range(len(legs)) if _given_joints(path, i) is not None]
@@ -97,13 +102,15 @@ def _given_joints(path: CartesianPath, leg: int) -> Array | None:
     return None if target is None else target.joints
 
 
-def _refused(path: CartesianPath, leg: int, pose: Array) -> PathplanError:
+def refused_target(path: CartesianPath, leg: int, pose: Array) -> PathplanError:
     """What the arm says of a pose it can't take, with the step in front."""
-    step = path.legs[leg].step
+    step, follower = path.legs[leg].step, path.follower
     try:
-        path.task.arm.inverse(pose)
+        follower.views[path.legs[leg].view].inverse(pose)
     except PathplanError as refusal:
         return type(refusal)(f"{step.where}: {refusal}", data={**refusal.data, "step": step.index})
+    if follower.held:
+        return not_with_held(path, leg, pose)
     raise AssertionError(f"{step.where}: no state at the target, yet the arm's inverse has answers")
 
 
@@ -182,7 +189,7 @@ def choose(
     step.
     """
     arm = path.task.arm
-    endless = endless_joints(arm)
+    endless = path.follower.endless
     cost = np.zeros(states.first[1])
     parents: list[Index] = []
     for i, leg in enumerate(path.legs):
@@ -259,7 +266,7 @@ def _trace(
     path: CartesianPath, states: States, tracks: Tracks, ways: Routes, parents: list[Index], cost: Array
 ) -> Choice:
     """Back from the cheapest last state, then forward again to resolve turns of endless joints."""
-    arm, m = path.task.arm, len(path.legs)
+    m = len(path.legs)
     local = int(np.argmin(cost))
     state = np.empty(m + 1, dtype=np.intp)
     state[m] = states.first[m] + local
@@ -268,7 +275,7 @@ def _trace(
         state[i] = states.first[i] + local
     q = states.q[state].copy()
     slot = np.full(m, -1, dtype=np.intp)
-    endless = endless_joints(arm)
+    endless = path.follower.endless
     for i, leg in enumerate(path.legs):
         given = _given_joints(path, i) is not None
         if leg.kind == "cartesian":

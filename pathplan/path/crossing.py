@@ -14,8 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from pathplan.arm import Arm
-from pathplan.arm.kinematics import smallest_singular_value
+from pathplan.path.follower import Course
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
 
@@ -28,7 +27,8 @@ _GRID = np.linspace(0.0, 1.0, 9)
 _ROUNDS = 30
 _NARROWEST = 1e-14
 
-Poses = Callable[[Index, Array], Array]
+Inverse = Callable[[Index, Array], tuple[Array, Mask]]
+"""Joint vectors (N, B, n) and which are valid (N, B) at s (N,) of segments (N,)."""
 
 
 @dataclass(frozen=True)
@@ -40,10 +40,12 @@ class Crossing:
     slot: int
 
 
-def least_singular(arm: Arm, poses: Poses, k: Index, slot: Index, low: Array, high: Array) -> tuple[Array, Array]:
+def least_singular(
+    course: Course, inverse: Inverse, k: Index, slot: Index, low: Array, high: Array
+) -> tuple[Array, Array]:
     """Where between low and high (C,) a branch has the smallest singular value, and that value (C,).
 
-    `poses(segment, s)` as in `pathplan.path.tracking`; k (C,) segments, slot (C,) branches. Minimum by narrowing a
+    k (C,) segments, slot (C,) branches. Minimum by narrowing a
     grid; a candidate whose value is too large to vanish in what is left of its interval is left as it is.
     """
     low, high = low.copy(), high.copy()
@@ -55,13 +57,13 @@ def least_singular(arm: Arm, poses: Poses, k: Index, slot: Index, low: Array, hi
         s = low[going, None] + (high - low)[going, None] * _GRID
         value = np.full(s.shape, np.inf)
         row = np.repeat(np.arange(len(going)), len(_GRID))
-        branches = arm.inverse_batch(poses(k[going][row], s.ravel()))
+        every_q, every_valid = inverse(k[going][row], s.ravel())
         own = slot[going][row]
-        valid = np.asarray(branches.valid)[np.arange(len(row)), own]
-        q = branches.q[np.arange(len(row)), own]
+        valid = every_valid[np.arange(len(row)), own]
+        q = every_q[np.arange(len(row)), own]
         found = np.full(len(row), np.inf)
         if valid.any():
-            found[valid] = smallest_singular_value(arm, q[valid])
+            found[valid] = course.follower.singular(course.view[k[going][row]][valid], q[valid])
         value = found.reshape(s.shape)
         least = value.argmin(axis=1)
         every = np.arange(len(going))
@@ -76,7 +78,7 @@ def least_singular(arm: Arm, poses: Poses, k: Index, slot: Index, low: Array, hi
 
 
 def passes(
-    arm: Arm, poses: Poses, segment: Index, s: Array, q: Array, useful: Mask, jumps: Mask
+    course: Course, inverse: Inverse, segment: Index, s: Array, q: Array, useful: Mask, jumps: Mask
 ) -> list[tuple[int, float]]:
     """Segments and places at which a useful branch meets a singularity between samples where it jumps.
 
@@ -86,14 +88,15 @@ def passes(
     if not len(i):
         return []
     width = s[i + 1] - s[i]
-    near = np.minimum(*(smallest_singular_value(arm, q[row, b]) for row in (i, i + 1))) <= _STEEPEST * width
+    view = course.view[segment[i]]
+    near = np.minimum(*(course.follower.singular(view, q[row, b]) for row in (i, i + 1))) <= _STEEPEST * width
     i, b = i[near], b[near]
     if not len(i):
         return []
     low = np.where(segment[np.maximum(i - 1, 0)] == segment[i], s[np.maximum(i - 1, 0)], s[i])
     after = np.minimum(i + 2, len(s) - 1)
     high = np.where(segment[after] == segment[i], s[after], s[i + 1])
-    at, value = least_singular(arm, poses, segment[i], b, low, high)
+    at, value = least_singular(course, inverse, segment[i], b, low, high)
     found: list[tuple[int, float]] = []
     met = np.flatnonzero(value <= CROSSED)
     for row in met[np.lexsort((at[met], segment[i[met]]))]:

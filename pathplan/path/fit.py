@@ -17,11 +17,10 @@ from typing import Literal
 
 import numpy as np
 
-from pathplan.arm.kinematics import joint_derivatives, smallest_singular_value
-from pathplan.path.geometry import Index, Mask, poses_of, spatial_twists
+from pathplan.path.geometry import Index, Mask, poses_of
 from pathplan.path.hermite import derivatives_at, hermite_coefficients
 from pathplan.path.joint import Array
-from pathplan.path.newton import joint_weights, pose_error, solve_near
+from pathplan.path.newton import joint_weights, pose_error
 from pathplan.path.spans import Spans
 from pathplan.path.tracking import SINGULAR
 
@@ -152,7 +151,7 @@ def _fitted(spans: Spans, pieces: _Open) -> list[Pieces]:
 
 def _give_up(spans: Spans, pieces: _Open) -> None:
     """Raise Trouble for the most singular of pieces that don't come to keep to the path."""
-    worst = int(np.argmin(smallest_singular_value(spans.motions.arm, pieces.begin[0])))
+    worst = int(np.argmin(spans.motions.course.follower.singular(spans.view(pieces.span), pieces.begin[0])))
     raise Trouble(int(pieces.span[worst]), float(pieces.start[worst]), pieces.begin[0, worst], "singular")
 
 
@@ -241,29 +240,27 @@ def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
     """(4, N, n) exact q and derivatives at positions in spans. Raises Trouble at singularities and out
     of reach.
     """
-    arm = spans.motions.arm
     out = spans.joint_jets(i, at)
     rows = np.flatnonzero(spans.inverted()[i])
     if not len(rows):
         return out
     i, at = i[rows], at[rows]
     jets = spans.tool_jets(i, at)
-    poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(i)
-    q, met = solve_near(arm, poses, guess[rows])
-    value = smallest_singular_value(arm, q)
+    q, met = spans.near(i, at, jets, guess[rows])
+    view, follower = spans.view(i), spans.motions.course.follower
+    value = follower.singular(view, q)
     lost = ~met | (value < _SHAKY)
     if lost.any():  # near a singularity a poor guess leads astray: the tracked branch tells where to look
         tracked = spans.guess(i[lost], at[lost])
         off = np.abs(q[lost] - tracked).max(axis=1) > _ASTRAY
         lost = np.flatnonzero(lost)[off | ~met[lost]]
-        q[lost], met[lost] = solve_near(arm, poses[lost], spans.guess(i[lost], at[lost]))
-        value[lost] = smallest_singular_value(arm, q[lost])
+        q[lost], met[lost] = spans.near(i[lost], at[lost], jets.take(lost), spans.guess(i[lost], at[lost]))
+        value[lost] = follower.singular(view[lost], q[lost])
     poor = ~met | (value < SINGULAR)
     if poor.any():
         row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
         raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < _SHAKY else "reach")
-    derivatives, _ = joint_derivatives(arm, q, spatial_twists(jets))
-    out[:, rows] += np.concatenate([q[None], derivatives.transpose(1, 0, 2)])
+    out[:, rows] += np.concatenate([q[None], spans.derivatives(i, at, jets, q)])
     return out
 
 
@@ -285,10 +282,13 @@ def _keeps(spans: Spans, pieces: _Open, coefficients: Array) -> tuple[Mask, Arra
     if len(rows):
         jets = spans.tool_jets(i[rows], at[rows])
         own_from_tool = np.linalg.inv(spans.tool_from_own(i[rows]))
-        reached = arm.forward(q[rows]) @ own_from_tool
+        reached = spans.motions.course.follower.forward(spans.view(i[rows]), q[rows]) @ own_from_tool
         missing[rows] = pose_error(reached, poses_of(jets.position[0], jets.rotation))
-        exact[1:, rows] += joint_derivatives(arm, q[rows], spatial_twists(jets))[0].transpose(1, 0, 2)
+        exact[1:, rows] += spans.derivatives(i[rows], at[rows], jets, q[rows])
+        held = list(spans.motions.course.follower.held)
+        off_course = q[rows][:, held] - spans.held_jets(i[rows], at[rows])[0]
         q[rows] = 0.0
+        q[rows[:, None], held] = off_course
     near = (np.linalg.norm(missing[:, :3], axis=1) <= POSITION) & (np.linalg.norm(missing[:, 3:], axis=1) <= ANGLE)
     near &= (np.abs(q) * weights).max(axis=1) <= ANGLE
     good = near.reshape(m, points).all(axis=1)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 
 import numpy as np
 
@@ -15,9 +15,12 @@ from pathplan.path.fit import Pieces, Trouble, fit
 from pathplan.path.geometry import poses_of
 from pathplan.path.hermite import derivatives_at
 from pathplan.path.joint import Array
+from pathplan.path.ladder import best_way
 from pathplan.path.layout import Layout, lay_out
 from pathplan.path.motions import motions_of
 from pathplan.path.refusals import limit_text, motion_words, place_text
+from pathplan.path.rungs import rungs_of
+from pathplan.path.settling import TIGHTNESS, settled
 from pathplan.path.singular import singularity
 from pathplan.path.states import States
 from pathplan.path.taskpath import TaskPath
@@ -50,7 +53,33 @@ def follow_task(task: Task, progress: Progress | None = None) -> TaskPath:
         reason, and `data` holds step, share, pose, joint, limit, singular, best.
     """
     say = progress or _silent
-    path, frames, states, tracks, ways = _tracked(task, say)
+    refusal: UnreachableError | None = None
+    for path in _decided(task, say):
+        try:
+            return _followed(path, say)
+        except UnreachableError as found:
+            refusal = refusal or found
+    assert refusal is not None
+    raise refusal
+
+
+def _decided(task: Task, say: Progress) -> Iterator[CartesianPath]:
+    """The programmed geometry of a task, everything that it leaves free decided: ways to do so, the best first."""
+    say("path", 0, _PARTS)
+    _check_given_joints(task)
+    path = cartesian_path(task)
+    if path.free is None or not path.free.chosen:
+        yield settled(path, None)
+        return
+    way = best_way(path, rungs_of(path))
+    for tightness in TIGHTNESS:
+        yield settled(path, way, tightness)
+
+
+def _followed(path: CartesianPath, say: Progress) -> TaskPath:
+    """The joint path of a task in which nothing is free any more."""
+    task = path.task
+    frames, states, tracks, ways = _tracked(path, say)
     barred_legs: set[tuple[int, int]] = set()
     barred_states: set[int] = set()
     refusal: PathplanError | None = None
@@ -86,23 +115,28 @@ def check_branches(task: Task) -> None:
     """The quick part of `follow_task`: raises what it raises where no branch can follow a step, as far as samples
     along the steps tell. Corners, and limits between samples, are left aside.
     """
-    path, _, states, tracks, ways = _tracked(task, _silent)
-    choose(path, states, tracks, ways)
+    refusal: UnreachableError | None = None
+    for path in _decided(task, _silent):
+        _, states, tracks, ways = _tracked(path, _silent)
+        try:
+            choose(path, states, tracks, ways)
+            return
+        except UnreachableError as found:
+            refusal = refusal or found
+    assert refusal is not None
+    raise refusal
 
 
-def _tracked(task: Task, say: Progress) -> tuple[CartesianPath, Array, States, Tracks, Routes]:
-    """The programmed geometry, tool frames of its legs, the states at its targets, and every branch along its steps."""
-    say("path", 0, _PARTS)
-    _check_given_joints(task)
-    path = cartesian_path(task)
+def _tracked(path: CartesianPath, say: Progress) -> tuple[Array, States, Tracks, Routes]:
+    """Tool frames of the legs, the states at the targets, and every branch along the steps."""
     say("path", 1, _PARTS)
     frames = tool_frames(path)
     states = candidate_states(path, frames)
     rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
-    tracks = track(task.arm, path.segments, frames[rows])
+    tracks = track(path.course, path.segments, frames[rows])
     ways = routes(path, states, tracks)
     say("path", 2, _PARTS)
-    return path, frames, states, tracks, ways
+    return frames, states, tracks, ways
 
 
 def _silent(what: str, done: int, total: int) -> None:

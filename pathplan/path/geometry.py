@@ -14,15 +14,15 @@ is a row too: where its own frame stands, and which curve it is (`pathplan.path.
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.path.curve import CurveSize, curve_derivatives
-from pathplan.path.joint import Array
-from pathplan.path.rotations import cross, exponential, rotate, rotation_vector
+from pathplan.path.joint import Array, JointPath
+from pathplan.path.rotations import cross, exponential, rotate, rotation_vector, turn_about
 from pathplan.task.model import Curve
 
 __all__ = [
@@ -36,6 +36,7 @@ __all__ = [
     "arc_about",
     "arc_through",
     "line",
+    "pointing",
     "poses_of",
     "spatial_twists",
     "superpose",
@@ -75,13 +76,17 @@ class Jets:
     rotation: Array
     turning: Array
 
+    def take(self, rows: Index) -> Jets:
+        """Some of them."""
+        return Jets(self.position[:, rows], self.rotation[rows], self.turning[:, rows])
+
 
 @dataclass(frozen=True, eq=False)
 class Segments:
     """K motions as arrays; see the module's formula. All in the base frame, SI, over s in [0, length].
 
     Of a curve, `base` and `rotation` are where its own frame stands, and `curve` is its place in `curves`; of a uniform
-    motion `curve` is -1.
+    motion `curve` is -1. Where `rolls` has one, the tool is turned about its own z axis by that much on the way.
     """
 
     base: Array  # (K, 3)
@@ -98,6 +103,7 @@ class Segments:
     turning: Array  # (K,) rad, the most that it turns
     curve: Index  # (K,)
     curves: tuple[Curve, ...] = ()
+    rolls: tuple[JointPath | None, ...] = ()  # (K,) rad over [0, length], or () for none at all
 
     def __len__(self) -> int:
         return len(self.length)
@@ -105,7 +111,8 @@ class Segments:
     def take(self, k: Index) -> Segments:
         """The rows k as a batch of their own."""
         arrays: dict[str, Any] = {name: getattr(self, name)[k] for name in _ARRAYS}
-        return Segments(**arrays, curves=self.curves)
+        rolls = tuple(self.rolls[i] for i in k) if self.rolls else ()
+        return Segments(**arrays, curves=self.curves, rolls=rolls)
 
     @classmethod
     def join(cls, parts: Sequence[Segments]) -> Segments:
@@ -123,6 +130,20 @@ class Segments:
         arrays: dict[str, Any] = {name: np.concatenate([getattr(part, name) for part in parts]) for name in _ARRAYS}
         return cls(**{**arrays, "curve": np.concatenate(renamed)}, curves=tuple(place.values()))
 
+    def over(self, length: float) -> Segments:
+        """The same single motion, or none at all, over another length of the path parameter; no curve."""
+        own = float(self.length[0])
+        share = own / length if own > NO_MOTION else 0.0
+        return replace(
+            self,
+            velocity=self.velocity * share,
+            rate=self.rate * share,
+            turn=self.turn * share,
+            length=np.array([length]),
+            speed=self.speed * share,
+            turning=self.turning * share,
+        )
+
     def poses(self, k: Index, s: Array) -> Array:
         """(N, 4, 4) base_from_tool at s (N,) of segments k (N,)."""
         angle = self.rate[k] * s
@@ -134,6 +155,8 @@ class Segments:
             base = self.rotation[k[rows]]
             position[rows] = self.base[k[rows]] + rotate(base, points[0])
             rotation[rows] = base @ turned
+        for law, rows in self._on_rolls(k):
+            rotation[rows] = rotation[rows] @ turn_about(_Z[None], law(s[rows])[:, 0])
         return poses_of(position, rotation)
 
     def jets(self, k: Index, s: Array, rates: Array | None = None) -> Jets:
@@ -160,6 +183,10 @@ class Segments:
             position[0, rows] += self.base[k[rows]]
             turning[:, rows] = [rotate(base, w) for w in turns]
             rotation[rows] = base @ turned
+        for law, rows in self._on_rolls(k):
+            axis = rotation[rows, :, 2]
+            turning[:, rows] = _rolling(turning[:, rows], axis, law.derivatives(s[rows]))
+            rotation[rows] = rotation[rows] @ turn_about(_Z[None], law(s[rows])[:, 0])
         if rates is not None:
             position[1:], turning = _chained(position[1:], rates), _chained(turning, rates)
         return Jets(position, rotation, turning)
@@ -172,8 +199,29 @@ class Segments:
         for i in np.unique(number[number >= 0]):
             yield self.curves[i], np.flatnonzero(number == i)
 
+    def _on_rolls(self, k: Index) -> Iterator[tuple[JointPath, Index]]:
+        """Each turn about the tool's axis among segments k (N,), -1 for none, and the rows it is for."""
+        if not self.rolls:
+            return
+        for i in np.unique(k[k >= 0]):
+            law = self.rolls[i]
+            if law is not None:
+                yield law, np.flatnonzero(k == i)
 
-_ARRAYS = tuple(f.name for f in fields(Segments))[:-1]
+
+_ARRAYS = tuple(f.name for f in fields(Segments))[:-2]
+_Z = np.array([0.0, 0.0, 1.0])
+
+
+def _rolling(turning: Array, axis: Array, roll: Sequence[Array]) -> Array:
+    """Turning rate and its derivatives (3, N, 3) of a tool that also turns about its axis (N, 3) by roll (4 of (N, 1)):
+    w + r' z, differentiated with z' = w x z.
+    """
+    w, w1, w2 = turning
+    _, r1, r2, r3 = roll
+    z1 = cross(w, axis)
+    z2 = cross(w1, axis) + cross(w, z1)
+    return np.stack([w + r1 * axis, w1 + r2 * axis + r1 * z1, w2 + r3 * axis + 2.0 * r2 * z1 + r1 * z2])
 
 
 def _chained(values: Array, rates: Array) -> Array:
@@ -236,6 +284,24 @@ def line(start: Array, end: Array, arm_length: float) -> Segments:
     chord = end[:3, 3] - start[:3, 3]
     distance = float(np.linalg.norm(chord))
     return _segment(start, start[:3, 3], chord, np.zeros(3), np.zeros(3), 0.0, turn, distance, arm_length)
+
+
+def pointing(start: Array, end: Array) -> tuple[Array, float]:
+    """Pose `end` turned about its own z axis so that the tool axis goes the shortest way from `start` (4, 4), and the
+    angle (rad) by which it has to be turned on about it to be `end`.
+
+    Raises HalfTurn where the axes are opposite.
+    """
+    one, two = start[:3, 2], end[:3, 2]
+    axis = np.cross(one, two)
+    sine, cosine = float(np.linalg.norm(axis)), float(one @ two)
+    if np.arctan2(sine, cosine) > np.pi - AMBIGUOUS:
+        raise HalfTurn("the tool axis would turn by 180 deg, which has no shortest way: give a pose between")
+    vector = axis * (np.arctan2(sine, cosine) / sine if sine > 1e-12 else 1.0)
+    turned = end.copy()
+    turned[:3, :3] = exponential(vector[None])[0] @ start[:3, :3]
+    between = turned[:3, :3].T @ end[:3, :3]
+    return turned, float(np.arctan2(between[1, 0] - between[0, 1], between[0, 0] + between[1, 1]))
 
 
 def arc_through(start: Array, via: Array, end: Array, arm_length: float) -> Segments:

@@ -8,15 +8,14 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from pathplan.arm.kinematics import joint_derivatives
 from pathplan.errors import InputError
 from pathplan.path.blends import asked_sizes, distances, used_sizes
 from pathplan.path.cartesian import NO_MOTION_TEXT, CartesianPath, Finding
 from pathplan.path.corners import REVERSAL, fit_into_steps
-from pathplan.path.geometry import Index, Mask, poses_of, spatial_twists
+from pathplan.path.geometry import Index, Mask, spatial_twists
 from pathplan.path.joint import Array
 from pathplan.path.motions import Motions
-from pathplan.path.newton import joint_weights, solve_near
+from pathplan.path.newton import joint_weights
 from pathplan.path.spans import Spans
 from pathplan.task.model import Blend, Step
 from pathplan.units import format_quantity
@@ -99,7 +98,14 @@ def _dimension(blend: Blend) -> str:
 
 
 def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
-    """What stands between motion j and the next: stop or fly by, as far as the task alone says."""
+    """What stands between motion j and the next: stop or fly by, as far as the task alone says.
+
+    Raises InputError for a blend between tool paths in different frames.
+    """
+
+    def view(m: int) -> int:
+        return path.legs[motions.leg[m]].view
+
     steps = path.task.steps
     step, following = path.legs[motions.leg[j]].step, path.legs[motions.leg[j + 1]].step
     between = steps[step.index + 1 : following.index]
@@ -116,6 +122,9 @@ def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
     elif any(other.blend is None for other in between):
         reason = "the step without motion that follows has no blend"
     else:
+        if motions.segment[j] >= 0 and motions.segment[j + 1] >= 0 and view(j) != view(j + 1):
+            text = f"blend {step.blend.text}: this step and the next are programmed in different frames, of which one"
+            raise InputError(f"{step.where}: {text} moves: expected a stop point, or a joint step between them")
         return junction
     note = "" if step.blend is None else f"the arm stops here ({reason}), so the blend {step.blend.text} has no effect"
     junction.stop(reason, note)
@@ -123,11 +132,11 @@ def _junction(path: CartesianPath, motions: Motions, j: int) -> Junction:
 
 
 def _tangents(motions: Motions, m: Index, at_end: Mask, joint_space: Mask) -> Array:
-    """(N, max(6, n)) tangents of motions m at their end or start, in the space they are blended in,
-    scaled without unit.
+    """(N, max(6 + H, n)) tangents of motions m at their end or start, in the space they are blended in,
+    scaled without unit: of the tool, with the H held joints, or of the joints.
     """
-    n = motions.arm.n
-    tangents = np.zeros((len(m), max(6, n)))
+    n, held = motions.arm.n, list(motions.course.follower.held)
+    tangents = np.zeros((len(m), max(6 + len(held), n)))
     weights = joint_weights(motions.arm)
     straight = motions.segment[m] < 0
     tangents[straight, :n] = motions.direction[m[straight]] * weights
@@ -137,17 +146,20 @@ def _tangents(motions: Motions, m: Index, at_end: Mask, joint_space: Mask) -> Ar
     rows = np.flatnonzero(~straight)
     if len(rows):
         s = np.where(at_end[rows], motions.length[m[rows]], 0.0)
-        jets = motions.segments.jets(motions.segment[m[rows]], s)
-        tool = np.hstack([jets.position[1] / motions.arm.length, jets.turning[0]])
+        segment = motions.segment[m[rows]]
+        jets = motions.segments.jets(segment, s)
+        rates = motions.course.derivatives(segment, s)[1:].transpose(1, 0, 2)
+        tool = np.hstack([jets.position[1] / motions.arm.length, jets.turning[0], rates[:, 0] * weights[held]])
         in_joints = joint_space[rows]
-        tangents[rows[~in_joints], :6] = tool[~in_joints]
+        tangents[rows[~in_joints], : tool.shape[1]] = tool[~in_joints]
         if in_joints.any():
             q = np.where(
                 at_end[rows[in_joints], None],
                 motions.end[m[rows[in_joints]]],
                 motions.start[m[rows[in_joints]]],
             )
-            derivatives, _ = joint_derivatives(motions.arm, q, spatial_twists(jets)[in_joints])
+            twists, view = spatial_twists(jets)[in_joints], motions.course.view[segment[in_joints]]
+            derivatives = motions.course.follower.derivatives(view, q, twists, rates[in_joints])
             tangents[rows[in_joints], :n] = derivatives[:, 0] * weights
     return tangents
 
@@ -183,7 +195,12 @@ def _note_stops_that_a_blend_would_save(motions: Motions, junctions: list[Juncti
     stops the arm.
     """
     idle = [j for j, junction in enumerate(junctions) if junction.reason == "no blend asked"]
-    cartesian = [j for j in idle if motions.segment[j] >= 0 and motions.segment[j + 1] >= 0]
+    view = motions.course.view
+    cartesian = [
+        j
+        for j in idle
+        if min(motions.segment[j : j + 2]) >= 0 and view[motions.segment[j]] == view[motions.segment[j + 1]]
+    ]
     if not cartesian:
         return
     one, two = motions.segment[cartesian], motions.segment[np.array(cartesian) + 1]
@@ -264,16 +281,20 @@ def _tangents_and_joints(spans: Spans, i: Index, at: Array) -> tuple[Array, Arra
         jets = spans.tool_jets(i[known], at[known])
         speed = np.linalg.norm(jets.position[1], axis=1) / arm.length
         size[known] = np.hypot(speed, np.linalg.norm(jets.turning[0], axis=1))
+        held = list(spans.motions.course.follower.held)
+        if held:
+            rates = spans.held_jets(i[known], at[known])[1] * joint_weights(arm)[held]
+            size[known] = np.hypot(size[known], np.linalg.norm(rates, axis=1))
     if not known.all():
         rows, where = i[~known], at[~known]
         straight = spans.joint_jets(rows, where)
         mixed = spans.inverted()[rows]
         if mixed.any():
-            jets = spans.tool_jets(rows[mixed], where[mixed])
-            poses = poses_of(jets.position[0], jets.rotation) @ spans.tool_from_own(rows[mixed])
-            inverse, _ = solve_near(arm, poses, spans.guess(rows[mixed], where[mixed]))
+            i, at = rows[mixed], where[mixed]
+            jets = spans.tool_jets(i, at)
+            inverse, _ = spans.near(i, at, jets, spans.guess(i, at))
             straight[0, mixed] += inverse
-            straight[1, mixed] += joint_derivatives(arm, inverse, spatial_twists(jets))[0][:, 0]
+            straight[1, mixed] += spans.derivatives(i, at, jets, inverse)[0]
         q[~known] = straight[0]
         size[~known] = np.linalg.norm(straight[1] * joint_weights(arm), axis=1)
     return size, q

@@ -12,6 +12,7 @@ import numpy as np
 from pathplan.arm import Arm
 from pathplan.path.cartesian import CartesianPath
 from pathplan.path.choice import Choice, Routes
+from pathplan.path.follower import Course
 from pathplan.path.geometry import NO_MOTION, Index, Segments
 from pathplan.path.joint import Array, JointPath
 from pathplan.path.newton import joint_weights
@@ -54,6 +55,7 @@ class Motions:
     end: Array
     tool_from_own: Array  # (M, 4, 4)
     bent: Index  # (M,) of a motion through taught points its path in `paths`, else -1
+    course: Course  # along the segments
     paths: tuple[JointPath, ...] = ()
     crossings: tuple[tuple[int, float], ...] = ()  # motion and path parameter where it runs through a singularity
 
@@ -119,6 +121,7 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
         end=choice.q[leg + 1],
         tool_from_own=frames[leg],
         bent=bent,
+        course=path.course,
         paths=tuple(path.taught.values()),
         crossings=_crossings(choice, tracks, leg, segment[leg]),
     )

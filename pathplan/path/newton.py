@@ -37,9 +37,9 @@ def pose_error(reached: Array, asked: Array) -> Array:
     return missing
 
 
-def solve_near(arm: Arm, poses: Array, guess: Array) -> tuple[Array, NDArray[np.bool_]]:
+def solve_near(arm: Arm, poses: Array, guess: Array, held: tuple[int, ...] = ()) -> tuple[Array, NDArray[np.bool_]]:
     """Joint positions (N, n) near guesses (N, n) that put the arm's tool at poses (N, 4, 4), and which of
-    them converged.
+    them converged. Joints `held` stay where the guess has them.
 
     Least squares where the arm has fewer than six axes, the nearest answer where it has more. A row counts as
     converged when the pose is met to `CONVERGED`, or as near to it as rounding lets a step come.
@@ -47,6 +47,7 @@ def solve_near(arm: Arm, poses: Array, guess: Array) -> tuple[Array, NDArray[np.
     q = np.array(guess, dtype=float)
     weights = joint_weights(arm)
     metric = np.array([1.0 / arm.length] * 3 + [1.0] * 3)
+    free = [i for i in range(arm.n) if i not in held]
     error = np.full(len(q), np.inf)
     active = np.arange(len(q))
     for _ in range(_ROUNDS):
@@ -57,7 +58,11 @@ def solve_near(arm: Arm, poses: Array, guess: Array) -> tuple[Array, NDArray[np.
         if not len(active):
             break
         matrix = arm.jacobian(q[active]) * metric[:, None] / weights
-        step = _least_squares(matrix, missing)
+        if held:
+            step = np.zeros((len(active), arm.n))
+            step[:, free] = _least_squares(matrix[:, :, free], missing)
+        else:
+            step = _least_squares(matrix, missing)
         size = np.abs(step).max(axis=1)
         step *= np.minimum(1.0, _STRIDE / np.maximum(size, 1e-300))[:, None]
         q[active] += step / weights

@@ -14,6 +14,7 @@ from pathplan.arm import Arm
 from pathplan.arm.kinematics import joint_derivatives, smallest_singular_value
 from pathplan.errors import UnreachableError
 from pathplan.path.cartesian import CartesianPath, Leg, tool_frames
+from pathplan.path.follower import Course
 from pathplan.path.geometry import NO_MOTION, Index, Segments, spatial_twists
 from pathplan.path.joint import Array
 from pathplan.path.newton import joint_weights
@@ -28,6 +29,7 @@ __all__ = [
     "motion_words",
     "no_branch_follows",
     "no_state_asked",
+    "not_with_held",
     "place_text",
     "rpy_of",
 ]
@@ -63,6 +65,18 @@ def limit_text(arm: Arm, row: int, side: int) -> str:
 def motion_words(step: Step) -> str:
     """What a step's motion is called in a sentence."""
     return "taught path" if step.motion == "taught" else step.motion
+
+
+def not_with_held(path: CartesianPath, leg: int, pose: Array) -> UnreachableError:
+    """The refusal of a target that is reached, but not with the held joints where they are to stand."""
+    arm, step = path.task.arm, path.legs[leg].step
+    where = []
+    for i, value in zip(path.follower.held, path.held[leg + 1], strict=True):
+        dimension = joint_dimension(arm.joints[i].kind, "position")
+        at = f"at {format_quantity(float(value), dimension)}" if np.isfinite(value) else "wherever it may stand"
+        where.append(f"{arm.joint_names[i]} {at}")
+    text = f"{step.where}: no branch reaches the pose within the limits with {' and '.join(where)}"
+    return UnreachableError(text, data={"step": step.index, "pose": pose})
 
 
 def no_state_asked(leg: Leg, there: Sequence[Mapping[str, str]]) -> UnreachableError:
@@ -134,16 +148,17 @@ def _outcomes(path: CartesianPath, leg: int, states: States, alive: Index) -> li
         return [_Outcome(0.0, reason, entry.end, states.q[state]) for state in alive]
     frame = tool_frames(path)[[leg]]
     segment = path.segments.take(np.array([entry.segment]))
-    tracks = track(arm, segment, frame, thorough=True)
+    course = path.course.take(np.array([entry.segment]))
+    tracks = track(course, segment, frame, thorough=True)
     revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
-    labels = arm.inverse_batch(entry.start[None] @ frame).labels
+    labels = path.follower.labels(entry.view)
     outcomes = []
     for state in alive:
         q = states.q[state]
         turns = turns_between(q - tracks.q[0], revolute)
         starts = (np.abs(q - tracks.q[0] - turns) < SAME_STATE).all(axis=1) & tracks.reached[0]
         if not starts.any():
-            text, singular = singularity(arm, q)
+            text, singular = singularity(arm, q, path.follower.held)
             more = {"singular": singular}
             outcomes.append(_Outcome(0.0, f"it starts in {text}", entry.start, q, more=more))
             continue
@@ -185,14 +200,17 @@ def _outcome(
         return outcome(length, f"it arrives, but not with {words}", q[-1])
     before = max(stop - 1, 0)
     if reached[stop]:
-        nearer = _nearer(arm, q, before, stop)
-        text, singular = singularity(arm, q[nearer])
-        held = _held(arm, segment, float(s[nearer]), q[nearer]) if singular["value"] > _KNOWN else None
+        nearer, still = _nearer(arm, q, before, stop), path.follower.held
+        text, singular = singularity(arm, q[nearer], still)
+        known = singular["value"] > _KNOWN and not still and entry.view == 0
+        held = _held(arm, segment, float(s[nearer]), q[nearer]) if known else None
         if held is not None:
             words, more = held
             return outcome(float(s[stop]), f"it meets {text}: {words}", q[before], singular={**singular, **more})
         return outcome(float(s[stop]), f"it meets {text}", q[before], singular=singular)
-    at = _last_reached(arm, segment, frame, slot, float(s[before]), float(s[stop]))
+    at = _last_reached(
+        path.course.take(np.array([entry.segment])), segment, frame, slot, float(s[before]), float(s[stop])
+    )
     return outcome(at, f"the {motion_words(entry.step)} leaves the reach of the arm", q[before])
 
 
@@ -244,16 +262,17 @@ def _first_crossing(arm: Arm, s: Array, q: Array) -> tuple[float, int, int, Arra
     return float(s[t - 1] + part * (s[t] - s[t - 1])), where, int(side), q[t - 1] + part * (q[t] - q[t - 1])
 
 
-def _last_reached(arm: Arm, segment: Segments, frame: Array, slot: int, inside: float, outside: float) -> float:
+def _last_reached(course: Course, segment: Segments, frame: Array, slot: int, inside: float, outside: float) -> float:
     """s at which a branch loses a segment, by bisection between two samples; a branch index must have a
     meaning.
     """
-    if not arm.steady_branches:
+    if not course.follower.steady:
         return inside
+    only = np.array([0])
     for _ in range(30):
         middle = (inside + outside) / 2
-        pose = segment.poses(np.array([0]), np.array([middle])) @ frame
-        if arm.inverse_batch(pose).valid[0, slot]:
+        pose = segment.poses(only, np.array([middle])) @ frame
+        if course.follower.branches(course.view, pose, course.held(only, np.array([middle])))[1][0, slot]:
             inside = middle
         else:
             outside = middle

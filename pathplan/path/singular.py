@@ -126,8 +126,9 @@ def distance_words(near: Nearness) -> str:
     return f"{parts[0]} ({parts[1]})" if len(parts) == 2 else "".join(parts)
 
 
-def singularity(arm: Arm, q: Array) -> tuple[str, dict[str, Any]]:
-    """A singularity at or near q (n,) in words, and its kind and smallest singular value."""
+def singularity(arm: Arm, q: Array, held: tuple[int, ...] = ()) -> tuple[str, dict[str, Any]]:
+    """A singularity at or near q (n,) in words, and its kind and smallest singular value; of the joints not `held`."""
     near = nearness(arm, q)
-    text = f"{singular_words(near.kind)} (smallest singular value {near.value:.2g})"
-    return text, {"kind": near.kind, "value": near.value}
+    value = float(smallest_singular_value(arm, q[None], held)[0]) if held else near.value
+    text = f"{singular_words(near.kind)} (smallest singular value {value:.2g})"
+    return text, {"kind": near.kind, "value": value}

@@ -7,12 +7,13 @@ or out, and over which length, is as in `pathplan.path.corners`.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from pathplan.path.corners import incoming, outgoing
-from pathplan.path.geometry import Index, Jets, Mask, superpose
+from pathplan.path.geometry import Index, Jets, Mask, poses_of, spatial_twists, superpose
 from pathplan.path.joint import Array, JointPath
 from pathplan.path.motions import Motions
 
@@ -77,6 +78,14 @@ class Spans:
         segment = self.motions.segment
         return (segment[self.before] >= 0) & (~self.corner | (segment[self.after] >= 0))
 
+    def rolling(self) -> Mask:
+        """(S,) bool: the tool path is known, but not the roll of the tool."""
+        rolls = self.motions.segments.rolls
+        free = np.array([law is not None for law in rolls] or [False] * len(self.motions.segments), dtype=bool)
+        free = np.append(free, False)  # of what has no segment
+        segment = self.motions.segment
+        return free[segment[self.before]] | (self.corner & free[segment[self.after]])
+
     def sides(self, i: Index, at: Array) -> tuple[Array, Array, Array, Array]:
         """Where span i stands at `at` (N,): s on the motion before, its rates (3, N), s on the one
         after, its rates.
@@ -119,6 +128,47 @@ class Spans:
                 part.turning,
             )
         return jets
+
+    def view(self, i: Index) -> Index:
+        """(N,) the view that the Cartesian parts of spans i are programmed in."""
+        segment = self.motions.segment
+        one = segment[self.before[i]]
+        return self.motions.course.view[np.where(one >= 0, one, segment[self.after[i]])]
+
+    def held_jets(self, i: Index, at: Array) -> Array:
+        """(4, N, H) the held joints and their derivatives at `at` (N,) of the Cartesian parts of spans i: where two
+        motions run into one another, both at once, as their tool motions do.
+        """
+        course, segment = self.motions.course, self.motions.segment
+        jets = np.zeros((4, len(at), len(course.follower.held)))
+        if not course.follower.held:
+            return jets
+        first, first_rates, second, second_rates = self.sides(i, at)
+        one = segment[self.before[i]]
+        two = np.where(self.corner[i], segment[self.after[i]], -1)
+        for k, s, rates in ((one, first, first_rates), (two, second, second_rates)):
+            rows = np.flatnonzero(k >= 0)
+            jets[:, rows] += _by_rates(course.derivatives(k[rows], s[rows]), rates[:, rows])
+        both = np.flatnonzero((one >= 0) & (two >= 0))
+        jets[0, both] -= course.held(two[both], np.zeros(len(both)))
+        return jets
+
+    def near(self, i: Index, at: Array, jets: Jets, guess: Array) -> tuple[Array, Mask]:
+        """Joint vectors (N, n) near guesses that put the tool at the Cartesian part `jets` at `at` (N,) of spans i, and
+        which of them do.
+        """
+        follower = self.motions.course.follower
+        poses = poses_of(jets.position[0], jets.rotation) @ self.tool_from_own(i)
+        if follower.held:
+            guess = guess.copy()
+            guess[:, list(follower.held)] = self.held_jets(i, at)[0]
+        return follower.near(self.view(i), poses, guess)
+
+    def derivatives(self, i: Index, at: Array, jets: Jets, q: Array) -> Array:
+        """(3, N, n) derivatives of joint vectors q (N, n) on the Cartesian part `jets` at `at` (N,) of spans i."""
+        follower = self.motions.course.follower
+        rates = self.held_jets(i, at)[1:].transpose(1, 0, 2)
+        return follower.derivatives(self.view(i), q, spatial_twists(jets), rates).transpose(1, 0, 2)
 
     def joint_jets(self, i: Index, at: Array) -> Array:
         """(4, N, n) the joint motions' part of q and its derivatives, counted from the corner or the motion's
@@ -165,7 +215,13 @@ class Spans:
 
 def _path_jets(path: JointPath, s: Array, rates: Array, from_end: Mask) -> Array:
     """(4, N, n) a joint path at s (N,) and its derivatives by the chain rule, counted from its end or its start."""
-    q, q1, q2, q3 = path.derivatives(s)
+    jets = _by_rates(path.derivatives(s), rates)
+    jets[0] -= np.where(from_end[:, None], path([path.length], side="left"), path([0.0]))
+    return jets
+
+
+def _by_rates(jets: Sequence[Array] | Array, rates: Array) -> Array:
+    """A value and its derivatives (4, N, d) by s as those by another parameter with rates (3, N)."""
+    q, q1, q2, q3 = jets
     s1, s2, s3 = rates[:, :, None]
-    origin = np.where(from_end[:, None], path([path.length], side="left"), path([0.0]))
-    return np.stack([q - origin, q1 * s1, q2 * s1**2 + q1 * s2, q3 * s1**3 + 3.0 * q2 * s1 * s2 + q1 * s3])
+    return np.stack([q, q1 * s1, q2 * s1**2 + q1 * s2, q3 * s1**3 + 3.0 * q2 * s1 * s2 + q1 * s3])

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from pathplan.arm import Arm
-from pathplan.arm.kinematics import smallest_singular_value
+from pathplan.arm.redundant import value_range
 from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
@@ -42,17 +42,21 @@ class TargetBranches:
 def target_branches(task: Task, path: TaskPath | None = None) -> TargetBranches:
     """All branches at all targets of a task given as poses, in one batch; with its path, which of them it uses.
 
-    Of several limits the nearest is told, a metre counting as one over the arm's length. Raises what `cartesian_path`
-    raises.
+    Of several limits the nearest is told, a metre counting as one over the arm's length. What a pose leaves free (a
+    track, a turntable) stands where the path has it; without a path where the task says, else in the middle of its
+    travel. Raises what `cartesian_path` raises.
     """
     arm = task.arm
     cartesian = cartesian_path(task) if path is None else path.cartesian
     posed = np.array([i for i, leg in enumerate(cartesian.legs) if _is_pose(cartesian, i)], dtype=np.intp)
     step = np.array([cartesian.legs[i].step.index for i in posed], dtype=np.intp)
     poses = np.array([cartesian.legs[i].end for i in posed]).reshape(-1, 4, 4) @ tool_frames(cartesian)[posed]
-    branches = arm.inverse_batch(poses)
-    reached, q = np.array(branches.valid), np.nan_to_num(branches.q)
+    view, follower = np.array([cartesian.legs[i].view for i in posed], dtype=np.intp), cartesian.follower
+    held, columns = _held(cartesian)[posed + 1], list(follower.held)
+    q, reached = follower.branches(view, poses, held)
+    q, reached = np.nan_to_num(q), reached.copy()
     q -= _turns_to_the_middle(arm, q)
+    q[:, :, columns] = held[:, None]
     within = _roomiest(arm, reached, q)
     used = np.full(len(posed), -1, dtype=np.intp)
     if path is not None:
@@ -71,8 +75,17 @@ def target_branches(task: Task, path: TaskPath | None = None) -> TargetBranches:
     margin, limit = _margins(arm, q)
     singular = np.full(reached.shape, np.nan)
     if reached.any():
-        singular[reached] = smallest_singular_value(arm, q[reached])
-    return TargetBranches(step, branches.labels, reached, within, used, q, margin, limit, singular)
+        singular[reached] = follower.singular(np.broadcast_to(view[:, None], reached.shape)[reached], q[reached])
+    labels = max((follower.labels(number) for number in {*view.tolist(), 0}), key=len)
+    return TargetBranches(step, labels, reached, within, used, q, margin, limit, singular)
+
+
+def _held(path: CartesianPath) -> Array:
+    """(m + 1, H) where the held joints stand at the start and after each leg."""
+    if path.free is None or path.held.shape == path.free.known.shape:
+        return path.held
+    middle = value_range(path.task.arm, path.follower.held).mean(axis=1)
+    return np.where(np.isnan(path.free.known), middle, path.free.known)
 
 
 def _is_pose(path: CartesianPath, leg: int) -> bool:

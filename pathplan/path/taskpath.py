@@ -14,6 +14,7 @@ from pathplan.arm import Arm
 from pathplan.path.cartesian import CartesianPath, Finding
 from pathplan.path.geometry import poses_of
 from pathplan.path.joint import Array, JointPath
+from pathplan.path.rungs import rolled
 from pathplan.path.spans import Spans
 from pathplan.path.tool_motion import tool_derivatives
 from pathplan.task.model import Task
@@ -80,12 +81,39 @@ class Stretch:
         place = np.clip(np.searchsorted(self.span_start, np.asarray(s), side="right") - 1, 0, len(self.span) - 1)
         return np.asarray(self.spans.programmed()[self.span[place]])
 
+    def reached(self, s: ArrayLike, q: Array) -> Array:
+        """Tool poses (N, 4, 4) at joint vectors q (N, n) that belong to s (N,), to be compared with what is programmed:
+        in the frame it is programmed in, and turned about the tool's axis to match where the roll of the tool is free.
+        """
+        at = np.clip(np.atleast_1d(np.asarray(s, dtype=float)), 0.0, self.path.length)
+        place = np.clip(np.searchsorted(self.span_start, at, side="right") - 1, 0, len(self.span) - 1)
+        i = self.span[place]
+        known = self.spans.programmed()[i]
+        course = self.spans.motions.course
+        poses = self.arm.forward(q)
+        turning = np.flatnonzero(known)[course.view[self.spans.motions.segment[self.spans.before[i[known]]]] > 0]
+        if len(turning):
+            follower = course.follower.carrying(self.arm)
+            poses[turning] = follower.forward(self.spans.view(i[turning]), q[turning])
+        free = np.flatnonzero(known & self.spans.rolling()[i])
+        if len(free):
+            programmed = self.programmed(at[free])[0]
+            poses[free] = matched_roll(poses[free], programmed)
+        return poses
+
     def tool_derivatives(self, s: ArrayLike) -> tuple[Array, Array]:
         """dx/ds and d2x/ds2 (N, 3) of the tool centre point along the joint path, m per path parameter
         (squared).
         """
         q, q1, q2 = self.path.derivatives(np.atleast_1d(np.asarray(s, dtype=float)), 2)
         return tool_derivatives(self.arm, q, q1, q2)
+
+
+def matched_roll(poses: Array, programmed: Array) -> Array:
+    """Poses (N, 4, 4) turned about their own z axes as near as that brings them to others (N, 4, 4)."""
+    between = np.swapaxes(programmed[:, :3, :3], 1, 2) @ poses[:, :3, :3]
+    angle = np.arctan2(between[:, 1, 0] - between[:, 0, 1], between[:, 0, 0] + between[:, 1, 1])
+    return rolled(poses, -angle)
 
 
 @dataclass(frozen=True)

@@ -20,11 +20,10 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from pathplan.arm import Arm
-from pathplan.arm.kinematics import smallest_singular_value
-from pathplan.path.crossing import CLEAR, Crossing, mirrored, passes
+from pathplan.path.crossing import CLEAR, Crossing, Inverse, mirrored, passes
+from pathplan.path.follower import Course, Follower
 from pathplan.path.geometry import Index, Mask, Segments
 from pathplan.path.joint import Array
-from pathplan.path.newton import solve_near
 from pathplan.path.states import LIMIT_SLACK
 
 __all__ = ["SINGULAR", "Tracks", "track", "turns_between"]
@@ -67,10 +66,11 @@ class Tracks:
         return np.logical_and.reduceat(self.ok, self.first, axis=0) if len(self.first) else self.ok[:0]
 
 
-def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool = False) -> Tracks:
-    """Every branch along every segment. `tool_from_own` (K, 4, 4): base_from_tool @ this is the pose of
-    the arm's own tool.
+def track(course: Course, segments: Segments, tool_from_own: Array, *, thorough: bool = False) -> Tracks:
+    """Every branch along every segment, the held joints on their course. `tool_from_own` (K, 4, 4): base_from_tool @
+    this is the pose of the arm's own tool.
     """
+    arm = course.follower.arm
     if not len(segments):
         none = np.zeros(0, dtype=np.intp)
         no = np.zeros((0, 1), dtype=bool)
@@ -86,10 +86,12 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
     def poses(k: Index, at: Array) -> Array:
         return segments.poses(k, at) @ tool_from_own[k]
 
-    if not arm.steady_branches:
-        return _continued(arm, poses, segment, s, first)
-    branches = arm.inverse_batch(poses(segment, s))
-    q, valid = branches.q, np.asarray(branches.valid)
+    def inverse(k: Index, at: Array) -> tuple[Array, Mask]:
+        return course.follower.branches(course.view[k], poses(k, at), course.held(k, at))
+
+    if not course.follower.steady:
+        return _continued(course, poses, segment, s, first)
+    q, valid = inverse(segment, s)
     revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
     looked_at = np.zeros(len(s), dtype=bool)
     useful = valid & _has_turn_inside(arm, q)
@@ -103,18 +105,18 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
         at = np.repeat(split + 1, _BETWEEN)
         part = np.tile(np.arange(1, _BETWEEN + 1) / (_BETWEEN + 1), len(split))
         new_segment, new_s = segment[at], s[at - 1] + part * (s[at] - s[at - 1])
-        new = arm.inverse_batch(poses(new_segment, new_s))
+        new_q, new_valid = inverse(new_segment, new_s)
         looked_at[split] = looked_at[split + 1] = True
         segment, s = np.insert(segment, at, new_segment), np.insert(s, at, new_s)
-        q, valid = np.insert(q, at, new.q, axis=0), np.insert(valid, at, new.valid, axis=0)
-        useful = np.insert(useful, at, new.valid & _has_turn_inside(arm, new.q), axis=0)
+        q, valid = np.insert(q, at, new_q, axis=0), np.insert(valid, at, new_valid, axis=0)
+        useful = np.insert(useful, at, new_valid & _has_turn_inside(arm, new_q), axis=0)
         looked_at = np.insert(looked_at, at, True)
         first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
     samples = _Samples(segment, s, q, valid, looked_at)
-    places = passes(arm, poses, segment, s, q, useful, jumps)
+    places = passes(course, inverse, segment, s, q, useful, jumps)
     crossings: list[Crossing] = []
     for number, place in reversed(places):  # the last first: what a slot is called behind it then holds for all before
-        samples, order = _through(arm, poses, samples, number, place, revolute)
+        samples, order = _through(inverse, samples, number, place, revolute)
         named = np.argsort(order)
         crossings = [replace(c, slot=int(named[c.slot])) if c.segment == number else c for c in crossings]
         crossings += [Crossing(number, place, b) for b in np.flatnonzero(order != np.arange(len(order))).tolist()]
@@ -124,7 +126,7 @@ def track(arm: Arm, segments: Segments, tool_from_own: Array, *, thorough: bool 
         jumps = _jumps(q, valid, segment, revolute)
     last = np.append(first[1:], len(s)).astype(np.intp) - 1
     looked_at[first] = looked_at[last] = True
-    regular = _regular(arm, q, valid, looked_at)
+    regular = _regular(course.follower, course.view[segment], q, valid, looked_at)
     jumped = np.zeros_like(valid)
     jumped[1:] = jumps
     q = _unwrapped(q, first, segment, revolute)
@@ -142,7 +144,7 @@ class _Samples(NamedTuple):
 
 
 def _through(
-    arm: Arm, poses: Callable[[Index, Array], Array], samples: _Samples, k: int, at: float, revolute: Mask
+    inverse: Inverse, samples: _Samples, k: int, at: float, revolute: Mask
 ) -> tuple[_Samples, Index]:
     """The samples with two beside the singularity met at `at` on segment k, none nearer, and the slots behind it
     changed about so that every track goes on smoothly; and the slot (B,) in which each does.
@@ -153,14 +155,13 @@ def _through(
     between = own[np.abs(samples.s[own] - at) <= CLEAR]
     place = int(own[np.searchsorted(samples.s[own], at)]) if not len(between) else int(between[0])
     beside = at + CLEAR * np.array([-1.0, 1.0])
-    new = arm.inverse_batch(poses(np.array([k, k]), beside))
-    valid = np.asarray(new.valid)
-    rows = _Samples(np.array([k, k]), beside, new.q, valid, np.ones(2, dtype=bool))
+    q, valid = inverse(np.array([k, k]), beside)
+    rows = _Samples(np.array([k, k]), beside, q, valid, np.ones(2, dtype=bool))
     merged: list[Any] = [
         np.insert(np.delete(old, between, axis=0), place, more, axis=0) for old, more in zip(samples, rows, strict=True)
     ]
     samples = _Samples(*merged)
-    order = mirrored(new.q[0], new.q[1], valid[0] & valid[1], revolute, JUMP)
+    order = mirrored(q[0], q[1], valid[0] & valid[1], revolute, JUMP)
     behind = np.flatnonzero((samples.segment == k) & (samples.s > at))
     samples.q[behind] = samples.q[behind][:, order]
     samples.valid[behind] = samples.valid[behind][:, order]
@@ -188,7 +189,7 @@ def _has_turn_inside(arm: Arm, q: Array) -> Mask:
     return inside
 
 
-def _regular(arm: Arm, q: Array, valid: Mask, looked_at: Mask) -> Mask:
+def _regular(follower: Follower, view: Index, q: Array, valid: Mask, looked_at: Mask) -> Mask:
     """(T, B): not singular, judged at the samples `looked_at`: the ends and wherever a joint moves fast.
 
     Between them no singularity is passed unseen: passing one makes a joint jump.
@@ -196,7 +197,7 @@ def _regular(arm: Arm, q: Array, valid: Mask, looked_at: Mask) -> Mask:
     regular = np.ones_like(valid)
     ask = valid & looked_at[:, None]
     if ask.any():
-        regular[ask] = smallest_singular_value(arm, q[ask]) >= SINGULAR
+        regular[ask] = follower.singular(np.broadcast_to(view[:, None], ask.shape)[ask], q[ask]) >= SINGULAR
     return regular
 
 
@@ -209,18 +210,22 @@ def _unwrapped(q: Array, first: Index, segment: Index, revolute: Mask) -> Array:
     return np.asarray(q - (total - total[first][segment]))
 
 
-def _continued(arm: Arm, poses: Callable[[Index, Array], Array], segment: Index, s: Array, first: Index) -> Tracks:
+def _continued(
+    course: Course, poses: Callable[[Index, Array], Array], segment: Index, s: Array, first: Index
+) -> Tracks:
     """As `track` for an arm without closed form: all answers at the start of a segment, continued by
     Newton steps.
     """
     count = np.diff(np.append(first, len(s)))
     last = first + count - 1
-    start = arm.inverse_batch(poses(segment[first], s[first]))
-    slots = start.q.shape[1]
+    arm, follower = course.follower.arm, course.follower
+    k0 = segment[first]
+    start_q, start_valid = follower.branches(course.view[k0], poses(k0, s[first]), course.held(k0, s[first]))
+    slots = start_q.shape[1]
     q = np.zeros((len(s), slots, arm.n))
     valid = np.zeros((len(s), slots), dtype=bool)
     jumped = np.zeros_like(valid)
-    q[first], valid[first] = start.q, start.valid
+    q[first], valid[first] = start_q, start_valid
     revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
     for step in range(1, int(count.max(initial=0))):
         rows = first[count > step] + step
@@ -232,9 +237,11 @@ def _continued(arm: Arm, poses: Callable[[Index, Array], Array], segment: Index,
         guess = q[rows - 1][k, b]
         two_back = rows[k] - 2 >= first[segment[rows[k]]]
         guess[two_back] += guess[two_back] - q[rows[k] - 2, b][two_back]
-        answer, met = solve_near(arm, target, guess)
+        there = segment[rows[k]]
+        guess[:, list(follower.held)] = course.held(there, s[rows[k]])
+        answer, met = follower.near(course.view[there], target, guess)
         jump = (np.abs(answer - q[rows[k] - 1, b])[:, revolute] > 2 * JUMP).any(axis=1)
         q[rows[k], b], valid[rows[k], b], jumped[rows[k], b] = answer, met, jump
     looked_at = np.ones(len(s), dtype=bool)
-    regular = _regular(arm, q, valid, looked_at)
+    regular = _regular(follower, course.view[segment], q, valid, looked_at)
     return Tracks(segment, s, q, valid & regular & ~jumped, valid, first, last)

@@ -102,7 +102,7 @@ def _subjects(trials: Trials) -> list[_Subject]:
 
 def _frame(task: Task, name: str) -> _Subject:
     frame = task.frames[name]
-    within = task.base_from_frame(frame.parent)
+    within = task.carrier_from_frame(frame.parent)[1]
     return _Subject(
         f"frame {name}", name, -1, within, frame.parent_from_frame, lambda pose: with_frame(task, name, pose)
     )

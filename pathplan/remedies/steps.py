@@ -79,7 +79,7 @@ def served_pose(trials: Trials) -> Iterator[Remedy]:
     task, data, step = trials.task, trials.error.data, trials.task.steps[trials.step]
     if "angle_error" not in data or len(task.arm.tool_joints) >= 6 or step.target is None:
         return
-    if step.target.frame_from_tool is None or step.curve is not None:
+    if step.target.frame_from_tool is None or step.curve is not None or task.carrier(step) is not None:
         return
     what = f"{step_text(task, trials.step)}: the nearest pose that {task.arm.name} serves"
     swap = np.linalg.solve(task.arm.tool.flange_from_tool, tool_of(task.arm, step.tool).flange_from_tool)

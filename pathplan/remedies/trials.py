@@ -16,6 +16,10 @@ from pathplan.task.model import Task
 __all__ = ["OutOfTime", "Trials", "window"]
 
 
+LONG_TASK = 300  # steps: planning a longer task whole may take all the time there is, so it gets
+SHARE = 1.0 / 3.0  # of what is left, to find other remedies in the rest
+
+
 class OutOfTime(Exception):
     """The time for the search has run out."""
 
@@ -32,6 +36,7 @@ class Trials:
     deadline: float
     tried: list[str] = field(default_factory=list)
     finished: bool = True
+    too_long: bool = False  # planning the whole task has been given up once
 
     def __post_init__(self) -> None:
         self.step = int(self.error.data["step"])
@@ -79,11 +84,21 @@ class Trials:
         from pathplan.planning import plan
 
         remedy = Remedy(what, text, step, changes, task, None)
+        if self.too_long:
+            return remedy
+        end = self.deadline
+        if len(task.steps) > LONG_TASK:
+            end = min(end, time.monotonic() + (end - time.monotonic()) * SHARE)
+
+        def within(*_: object) -> None:
+            if time.monotonic() > end:
+                raise OutOfTime
+
         try:
-            self.check_time()
-            return replace(remedy, duration=plan(task, progress=lambda *_: self.check_time()).duration)
+            within()
+            return replace(remedy, duration=plan(task, progress=within).duration)
         except OutOfTime:  # what was found holds for the steps that were tried
-            self.finished = False
+            self.finished, self.too_long = False, True
             return remedy
         except PathplanError as error:
             return error

@@ -168,7 +168,8 @@ def deviations_of(plan: Plan, first: int, count: int) -> Array:
         programmed, known = part.stretch.programmed(values.s)
         at = np.flatnonzero(known)
         if len(at):
-            found[rows[at]] = np.column_stack(deviations(part.stretch.arm.forward(values.position[at]), programmed[at]))
+            actual = part.stretch.reached(values.s[at], values.position[at])
+            found[rows[at]] = np.column_stack(deviations(actual, programmed[at]))
 
     in_parts(plan.parts, np.arange(first, first + count), visit)
     return found

@@ -26,7 +26,7 @@ def remedies_screen(remedies: Remedies) -> Iterator[str]:
     if remedies.tried and not remedies.found:
         yield from _wrapped(f"tried: {'; '.join(remedies.tried)}", "  ")
     if not remedies.finished:
-        yield '  time ran out before all was tried: --remedies "60 s" gives it longer'
+        yield 'time ran out before all was tried and planned whole: --remedies "60 s" gives it longer'
 
 
 def _wrapped(text: str, bullet: str) -> list[str]:
@@ -35,7 +35,7 @@ def _wrapped(text: str, bullet: str) -> list[str]:
 
 def _time(remedy: Remedy) -> str:
     if remedy.duration is None:
-        return "planned only as far as the step refused: time ran out"
+        return "planned only as far as the step refused"
     return f"cycle time {clock(remedy.duration)}"
 
 

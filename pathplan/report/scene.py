@@ -153,7 +153,9 @@ def _legs(plan: Plan) -> list[tuple[int, Array]]:
     cartesian, targets, found = plan.path.cartesian, plan.path.targets, []
     share = np.linspace(0.0, 1.0, LEG_POINTS)
     for number, leg in enumerate(cartesian.legs[:MOST_LEGS]):
-        if leg.segment >= 0:
+        if leg.view > 0:  # programmed on a workpiece that turns: where the tool then goes
+            points = _followed(plan, leg.step.index)
+        elif leg.segment >= 0:
             straight = leg.step.motion == "line"
             s = (share[[0, -1]] if straight else share) * cartesian.segments.length[leg.segment]
             points = cartesian.poses(np.full(len(s), number), s)[:, :3, 3]
@@ -167,6 +169,17 @@ def _legs(plan: Plan) -> list[tuple[int, Array]]:
             continue
         found.append((leg.step.index, np.asarray(points)))
     return found
+
+
+def _followed(plan: Plan, step: int) -> Array:
+    """(K, 3) where the tool goes on a step, corners left out."""
+    share = np.linspace(0.0, 1.0, LEG_POINTS)
+    for stretch in plan.path.stretches:
+        for part in stretch.steps:
+            if part.step == step:
+                q = stretch.path(part.s_from + share * (part.s_to - part.s_from))
+                return np.asarray(stretch.arm.forward(q)[:, :3, 3])
+    return np.zeros((0, 3))
 
 
 def _blends(plan: Plan) -> tuple[Blended, ...]:

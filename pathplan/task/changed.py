@@ -49,8 +49,8 @@ def with_frame(task: Task, name: str, parent_from_frame: Array) -> Task:
     for step in task.steps:
         if step.point_frame != "base" and name in ancestors(task, step.point_frame):
             if step.point_frame not in shifts:
-                before = task.base_from_frame(step.point_frame)
-                shifts[step.point_frame] = changed.base_from_frame(step.point_frame) @ np.linalg.inv(before)
+                before, after = (one.carrier_from_frame(step.point_frame)[1] for one in (task, changed))
+                shifts[step.point_frame] = after @ np.linalg.inv(before)
             step = _shifted(step, shifts[step.point_frame])
         steps.append(step)
     return replace(changed, steps=tuple(steps))

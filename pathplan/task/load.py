@@ -9,7 +9,9 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
     speed, acceleration, turning_speed      caps on the tool for the whole task ("250 mm/s", "2 m/s^2", "90 deg/s");
                              of a step's own and these the lower holds
 
-    [frames.NAME]   parent (default "base"; a frame, or a pattern), xyz, rpy or quat: a workpiece frame in its parent
+    [frames.NAME]   parent (default "base"; a frame, or a pattern), xyz, rpy or quat: a workpiece frame in its parent;
+                    or joint in place of parent: a joint of the arm file that carries it (a turntable), which then
+                    moves in step with the arm, and lines to poses in the frame are lines on the workpiece
     [poses.NAME]    frame (default "base"), xyz, rpy or quat: a tool pose; or joints
     [patterns.NAME] the same pose at many places: `pathplan.task.patterns`
     [curves.NAME], [taught.NAME]    paths through the points of a file: `pathplan.task.curves`
@@ -28,6 +30,11 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
         held_speed            line, arc, curve: the tool speed that a process needs, constant; caps the tool, and the
                               audit says over which part of the step it was held and what stopped it elsewhere
         configuration         { shoulder, elbow, wrist }: words for the branch at the target
+        axes        { NAME = value }: where an axis that the pose leaves free stands at the end (a turntable, a track,
+                    a seventh axis); it moves there evenly along the step. Not given: an axis that carries a workpiece
+                    rests while the tool is not on it, any other is chosen for the shortest time
+        roll        "free": the turn of the tool about its own z axis is not asked, neither on the way nor at the end
+                    (a suction cup, a drill, a nozzle), and chosen for the shortest time; default "fixed"
         tool, payload         carried from this step on, "none" for nothing: the arm stops before it
         name, mark            for people: the step, and the instant at which it ends
         wait        in a step of its own (name, mark, tool, payload beside it): rest for this time

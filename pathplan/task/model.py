@@ -103,10 +103,10 @@ class Step:
     where: str  # 'pick.toml: step[4]', for messages
     name: str = ""
     target: Target | None = None  # None for a wait, and for an arc given by centre and angle
-    via: Array | None = None  # (3,) a point of the arc in the base frame at rest (q-independent frames)
-    centre: Array | None = None  # (3,) in the base frame
+    via: Array | None = None  # (3,) a point of the arc, in the base frame or in that of the joint that carries it
+    centre: Array | None = None  # (3,) likewise
     point_frame: str = "base"  # the frame in which via, or centre and axis, were given
-    axis: Array | None = None  # (3,) unit, in the base frame
+    axis: Array | None = None  # (3,) unit, in the base frame or in that of the joint that carries it
     angle: float | None = None  # rad, signed, about axis
     along: bool = False  # centre-and-angle arc: the tool turns with the arc (True) or keeps its orientation (False)
     blend: Blend | None = None  # corner at the end of this step; None: stop point
@@ -122,6 +122,8 @@ class Step:
     curve: Curve | None = None  # motion == "curve"; the target is where it ends
     frame_from_curve: Array | None = None  # (4, 4) in the target's frame
     taught: Taught | None = None  # motion == "taught"; the target is its last point
+    axes: Mapping[str, float] = field(default_factory=dict)  # where joints that are free otherwise stand at its end
+    roll_free: bool = False  # the turn of the tool about its own z axis is not asked
 
 
 @dataclass(frozen=True)
@@ -150,18 +152,31 @@ class Task:
         """Names of the payloads carried at any time, in that order."""
         return tuple(dict.fromkeys(step.payload for step in self.steps if step.payload is not None))
 
-    def base_from_frame(self, name: str, q: Array | None = None) -> Array:
-        """(4, 4) pose of a frame in the base frame; `q` (n,) is needed where a joint carries the frame."""
-        frame_chain = np.eye(4)
+    def carrier(self, step: Step) -> str | None:
+        """The joint in whose moving frame a step's tool path is meant; None: the base frame."""
+        return self.carrier_from_frame(step.point_frame if step.target is None else step.target.frame)[0]
+
+    def carrier_from_frame(self, name: str) -> tuple[str | None, Array]:
+        """The joint that carries a frame and (4, 4) the frame in that joint's moving frame; None and the base frame
+        where no joint does.
+        """
+        chain = np.eye(4)
         while name != "base":
             frame = self.frames[name]
-            frame_chain = frame.parent_from_frame @ frame_chain
+            chain = frame.parent_from_frame @ chain
             if frame.joint is not None:
-                if q is None:
-                    raise ValueError(f"frame {name} is carried by joint {frame.joint}: its pose needs q")
-                return self.arm.base_from_joint(frame.joint, q) @ frame_chain
+                return frame.joint, chain
             name = frame.parent
-        return frame_chain
+        return None, chain
+
+    def base_from_frame(self, name: str, q: Array | None = None) -> Array:
+        """(4, 4) pose of a frame in the base frame; `q` (n,) is needed where a joint carries the frame."""
+        joint, carrier_from_frame = self.carrier_from_frame(name)
+        if joint is None:
+            return carrier_from_frame
+        if q is None:
+            raise ValueError(f"frame {name} is carried by joint {joint}: its pose needs q")
+        return np.asarray(self.arm.base_from_joint(joint, q) @ carrier_from_frame)
 
     def pose(self, target: Target, q: Array | None = None) -> Array:
         """(4, 4) base_from_tool of a target that is given as a pose."""

@@ -22,7 +22,7 @@ from pathplan.task.curves import read_curve, read_taught
 from pathplan.task.joints import check_positions, joint_vector
 from pathplan.task.model import Curve, Frame, Target, Taught
 from pathplan.task.patterns import Pattern, read_pattern
-from pathplan.tomlfile import Problems, Table, nearest, read_only
+from pathplan.tomlfile import Problems, Table, listed, nearest, read_only
 from pathplan.units import toml_text
 
 __all__ = ["Places", "check_positions", "joint_vector", "read_places"]
@@ -40,11 +40,12 @@ IDENTITY = read_only(np.eye(4))
 
 @dataclass(frozen=True)
 class Tie:
-    """Where a frame stands: in a frame that the task knows, and in the base frame with everything at rest."""
+    """Where a frame stands: in a frame that the task knows, and in the base frame or that of a joint carrying it."""
 
     frame: str
     frame_from_here: Array  # (4, 4)
     base_from_here: Array  # (4, 4)
+    joint: str | None = None  # that carries it: "base" is then that joint's moving frame
 
 
 @dataclass(frozen=True)
@@ -65,7 +66,7 @@ class Places:
     def branch_words(self) -> dict[str, tuple[str, ...]]:
         """The words of each part of a configuration that the arm's branches tell apart."""
         words: dict[str, dict[str, None]] = {}
-        for label in self.arm.inverse_batch(self.arm.forward(self.arm.positions["home"])[None]).labels:
+        for label in _branch_labels(self.arm):
             for part, word in label.items():
                 words.setdefault(part, {})[word] = None
         return {part: tuple(options) for part, options in words.items()}
@@ -171,7 +172,9 @@ class Places:
         return replace(target, frame=tie.frame, frame_from_tool=read_only(tie.frame_from_here @ target.frame_from_tool))
 
     def base_from_tool(self, target: Target) -> Array:
-        """(4, 4) of a target at rest; of a joint vector through forward kinematics."""
+        """(4, 4) of a target, in the frame of the joint that carries it, if one does; of a joint vector through
+        forward kinematics.
+        """
         if target.joints is not None:
             return read_only(self.arm.forward(target.joints))
         assert target.frame_from_tool is not None
@@ -206,10 +209,16 @@ class Places:
         return None
 
 
+def _branch_labels(arm: Arm) -> tuple[Mapping[str, str], ...]:
+    if arm.free_joints:
+        return arm.free_solver(arm.free_joints).typical.labels
+    return arm.inverse_batch(arm.forward(arm.positions["home"])[None]).labels
+
+
 def _tied(tie: Tie, here_from_there: Array) -> Tie:
     """Where something stands that stands in a frame of this tie."""
     frame_from_there, base_from_there = (m @ here_from_there for m in (tie.frame_from_here, tie.base_from_here))
-    return Tie(tie.frame, read_only(frame_from_there), read_only(base_from_there))
+    return Tie(tie.frame, read_only(frame_from_there), read_only(base_from_there), tie.joint)
 
 
 def read_places(root: Table, arm: Arm, problems: Problems, folder: Path) -> tuple[Places, dict[str, str]]:
@@ -218,14 +227,14 @@ def read_places(root: Table, arm: Arm, problems: Problems, folder: Path) -> tupl
     Problems inside are gathered, and the places they spoil are left out. The second part: SHA-256 by file name.
     """
     tables = root.named_tables("patterns")
-    frames = _read_frames(root, tables, problems)
+    frames = _read_frames(root, arm, tables, problems)
     problems.check()  # what is said of nested frames below holds only for frames that were read
     resolved = resolve_frames(frames, root.file, tuple(tables))
     moving = {name: place for name, place in resolved.items() if place[0] != "base"}
     still = {name: frame for name, frame in frames.items() if name not in moving}
     known = {**resolved, **{name: (name, np.eye(4)) for name in tables}}
     ties = {
-        name: Tie(name, IDENTITY, base_from_frame)
+        name: Tie(name, IDENTITY, base_from_frame, _carrier(frames, name))
         for name, (root_name, base_from_frame) in resolved.items()
         if root_name == "base"
     }
@@ -257,7 +266,16 @@ def read_places(root: Table, arm: Arm, problems: Problems, folder: Path) -> tupl
     return Places(arm, still, poses, patterns, curves, taught, moving, ties), sources
 
 
-def _read_frames(root: Table, patterns: Mapping[str, Any], problems: Problems) -> dict[str, Frame]:
+def _carrier(frames: Mapping[str, Frame], name: str) -> str | None:
+    """The joint that carries a frame, None if it rests."""
+    while name != "base":
+        if frames[name].joint is not None:
+            return frames[name].joint
+        name = frames[name].parent
+    return None
+
+
+def _read_frames(root: Table, arm: Arm, patterns: Mapping[str, Any], problems: Problems) -> dict[str, Frame]:
     frames: dict[str, Frame] = {}
     for name, table in root.named_tables("frames").items():
         with problems.gather():
@@ -266,10 +284,27 @@ def _read_frames(root: Table, patterns: Mapping[str, Any], problems: Problems) -
                 raise InputError.at(table.where, complaint)
             if name in patterns:
                 raise InputError.at(table.where, "a pattern has that name, expected another name")
+            joint = _read_carrier(table, arm)
             parent = table.text("parent", "base")
-            frames[name] = Frame(name, parent, table.pose(position=False))
+            frames[name] = Frame(name, parent, table.pose(position=False), joint)
             table.finish()
     return frames
+
+
+def _read_carrier(table: Table, arm: Arm) -> str | None:
+    """Key `joint` of a frame: the joint of the arm file that carries it."""
+    name: str | None = table.text("joint", None)
+    if name is None:
+        return None
+    if table.has("parent"):
+        raise table.error("joint", "given together with parent, expected one of them")
+    carriers = [joint.name for i, joint in enumerate(arm.joints) if i not in arm.tool_joints]
+    if name in carriers:
+        return name
+    there = f"expected {listed(carriers)}" if carriers else f"arm {arm.name} has no joint that carries a workpiece"
+    if name in arm.joint_names:
+        raise table.error("joint", f"joint {toml_text(name)} moves the tool; {there}")
+    raise table.error("joint", f"no joint {toml_text(name)}; {there}")
 
 
 def _read_poses(root: Table, arm: Arm, known: Mapping[str, Any], problems: Problems) -> dict[str, Target]:

@@ -15,7 +15,7 @@ from pathplan.task.curves import read_offset
 from pathplan.task.model import Blend, Curve, Motion, Step, Target, Taught
 from pathplan.task.places import Places
 from pathplan.tomlfile import Table, listed, nearest, read_only
-from pathplan.units import DIMENSIONS, format_quantity, toml_text
+from pathplan.units import DIMENSIONS, format_quantity, joint_dimension, toml_text
 
 __all__ = ["MAX_WAIT", "MOTIONS", "STEP_KEYS", "Caps", "read_caps", "read_step", "step_to_start"]
 
@@ -24,10 +24,11 @@ MAX_WAIT = 3600.0  # s
 MOTIONS: tuple[Motion, ...] = ("joint", "line", "arc", "curve", "taught")
 HOLDING: tuple[Motion, ...] = ("line", "arc", "curve")  # those that can hold a tool speed
 CAP_KEYS = ("speed", "acceleration", "turning_speed")
-MOVING_KEYS = ("motion", "to", "offset", "blend", *CAP_KEYS, "held_speed", "configuration")
+MOVING_KEYS = ("motion", "to", "offset", "blend", *CAP_KEYS, "held_speed", "configuration", "axes", "roll")
 ARC_KEYS = ("via", "centre", "axis", "angle", "tool_along")
 CARRYING_KEYS = ("tool", "payload")
 STEP_KEYS = ("name", "mark", "wait", *CARRYING_KEYS, *MOVING_KEYS, *ARC_KEYS, "along")
+ROLLS = ("fixed", "free")
 CONFIGURATION = {
     "shoulder": ("left", "right"),
     "elbow": ("up", "down", "left", "right"),
@@ -78,7 +79,9 @@ def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) 
     own = read_caps(table)
     fields |= {"motion": motion, "blend": read_blend(table), **vars(own.within(caps))}
     fields["held_speed"] = _held_speed(table, own.speed, arm)
-    fields["configuration"] = configuration = read_configuration(table, places)
+    fields["configuration"] = read_configuration(table, places)
+    fields["axes"] = read_axes(table, places.arm)
+    fields["roll_free"] = table.choice("roll", ROLLS, ROLLS[0]) == ROLLS[1]
     if motion in ("curve", "taught"):
         return Step(**fields, **_along(table, motion, places))
     if motion == "arc" and table.has("centre"):
@@ -86,15 +89,16 @@ def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) 
     for key in ARC_KEYS[2:]:
         if table.has(key):
             raise table.error(key, f"{key} goes with centre, which is missing")
-    target = places.settled(_shifted(table, "offset", places.target(table, "to")))
-    if target.joints is not None and configuration:
-        raise table.error("configuration", "the target is a joint vector, which leaves nothing to choose")
+    aimed = _shifted(table, "offset", places.target(table, "to"))
+    target = places.settled(aimed)
+    if target.joints is not None:
+        _refuse_choices(table)
     if motion != "joint":
         target = with_pose(target, places)
     if motion != "arc":
         return Step(**fields, target=target)
-    via, tie = places.point(table, "via")
-    return Step(**fields, target=target, via=via, point_frame=tie.frame)
+    via, point_frame = _via(table, aimed, places)
+    return Step(**fields, target=target, via=via, point_frame=point_frame)
 
 
 def step_to_start(motion: Motion, index: int, file: str, start: Array, places: Places, caps: Caps) -> Step:
@@ -177,6 +181,48 @@ def read_configuration(table: Table, places: Places) -> dict[str, str]:
     return words
 
 
+def read_axes(table: Table, arm: Arm) -> dict[str, float]:
+    """Key `axes`: where joints that the tool pose leaves free stand at the end of the step, rad or m."""
+    asked = table.table("axes", None)
+    if asked is None:
+        return {}
+    free = [joint.name for i, joint in enumerate(arm.joints) if i not in arm.tool_joints] + list(arm.free_joints)
+    if not free:
+        raise table.error("axes", f"arm {arm.name} has no axis that a tool pose leaves free")
+    found: dict[str, float] = {}
+    for name in asked.data:
+        if name not in free:
+            raise asked.error(
+                name, f"no axis that a tool pose leaves free, expected {listed(free)}{nearest(name, free)}"
+            )
+        joint = arm.joints[arm.joint_names.index(name)]
+        dimension = joint_dimension(joint.kind, "position")
+        value: float = asked.quantity(name, dimension)
+        low, high = joint.position
+        if not low - 1e-12 <= value <= high + 1e-12:
+            limits = " to ".join(format_quantity(limit, dimension, 6) for limit in (low, high))
+            raise asked.error(name, f"at {format_quantity(value, dimension, 6)}, expected from {limits}")
+        found[name] = min(max(value, low), high)
+    return found
+
+
+def _refuse_choices(table: Table) -> None:
+    """What a joint vector settles already."""
+    for key in ("configuration", "axes", "roll"):
+        if table.has(key):
+            raise table.error(key, "the target is a joint vector, which leaves nothing to choose")
+
+
+def _via(table: Table, target: Target, places: Places) -> tuple[Array, str]:
+    """The point that an arc goes through, in the frame that carries its target, and the frame it was given in."""
+    via, tie = places.point(table, "via")
+    carrier = None if target.joints is not None else places.ties[target.frame].joint
+    if tie.joint != carrier:
+        there, here = (f'turns with joint "{name}"' if name else "rests" for name in (tie.joint, carrier))
+        raise table.error("via", f"its frame {there} and that of the target {here}, expected one frame for both")
+    return via, tie.frame
+
+
 def _along(table: Table, motion: Motion, places: Places) -> dict[str, Any]:
     """The curve or taught path that a step follows, and where it ends."""
     for key in ("to", "offset"):
@@ -190,8 +236,7 @@ def _along(table: Table, motion: Motion, places: Places) -> dict[str, Any]:
         raise table.error("along", f"no path {toml_text(name)} in {tables}{nearest(name, there)}")
     path = there[name]
     if isinstance(path, Taught):
-        if table.has("configuration"):
-            raise table.error("configuration", "the target is a joint vector, which leaves nothing to choose")
+        _refuse_choices(table)
         return {"taught": path, "target": Target(joints=read_only(path.points[-1].copy()))}
     tie = places.tie(path.frame, table.at("along"))
     end = Target(frame=path.frame, frame_from_tool=path.pose(end=True))

@@ -124,7 +124,7 @@ def test_choice_is_the_best_of_all(cast, name: str) -> None:
     frames = tool_frames(path)
     states = candidate_states(path, frames)
     rows = [i for i, leg in enumerate(path.legs) if leg.segment >= 0]
-    tracks = track(task.arm, path.segments, frames[rows])
+    tracks = track(path.course, path.segments, frames[rows])
     choice = choose(path, states, tracks, routes(path, states, tracks))
     assert choice.time == pytest.approx(time, rel=1e-3)
     np.testing.assert_allclose(follow_task(task).targets, places, atol=1e-6)

@@ -398,13 +398,13 @@ def test_every_bad_arc_is_named(cast) -> None:
     assert [problem.split(": ")[1] for problem in caught.value.problems] == ["step[1]", "step[2]"]
 
 
-def test_turning_frame_is_refused(cast) -> None:
+def test_a_frame_on_the_arm_itself_is_refused(cast) -> None:
     arm = cast.robot("glazer6")
     frame = Frame("table", "base", np.eye(4), joint=arm.joints[0].name)
     step = Step(0, "line", "t.toml: step[1]", target=Target(frame="table", frame_from_tool=above(cast)))
     task = cast.task(arm, arm.positions["home"], [step], frames={"table": frame})
     with pytest.raises(
-        InputError, match=r"^t\.toml: step\[1\]: frame table turns with joint base, expected a frame at rest$"
+        InputError, match=r'^glazer6: joint "base" carries the tool, expected one that carries a workpiece$'
     ):
         follow_task(task)
 

@@ -18,7 +18,8 @@ from pathplan.path import follow_task
 from pathplan.path.refusals import rpy_of
 from pathplan.remedies import Remedies, Remedy, find_remedies
 from pathplan.remedies.steps import served_pose, smaller_blend
-from pathplan.remedies.trials import Trials
+from pathplan.remedies.trials import Trials, window
+from pathplan.report.remedies_screen import remedies_screen
 from pathplan.task.model import Step, Target
 
 ROOT = Path(__file__).parents[2]
@@ -312,3 +313,27 @@ def test_five_axes_take_the_roll_that_follows() -> None:
     np.testing.assert_allclose(remedy.changes["pose"][:3, 3], pose[:3, 3], atol=1e-8)
     np.testing.assert_allclose(remedy.changes["pose"][:3, 2], pose[:3, 2], atol=1e-8)
     assert plans(remedy.task)
+
+
+def test_a_task_too_long_to_plan_again_still_gets_its_remedies(tmp_path, monkeypatch) -> None:
+    """As if every task were long and no time left to plan it whole: found all the same, and said to be unproven."""
+    task = task_of(tmp_path, BELT)
+    proven = [remedy.text for remedy in remedies(task)]
+    monkeypatch.setattr("pathplan.remedies.trials.LONG_TASK", 0)
+    monkeypatch.setattr("pathplan.remedies.trials.SHARE", -1.0)
+    found = remedies(task)
+    assert [remedy.text for remedy in found] == proven and not found.finished
+    assert all(remedy.duration is None for remedy in found)
+    screen = "\n".join(remedies_screen(found))
+    assert "(planned only as far as the step refused)" in screen
+    assert screen.endswith('time ran out before all was tried and planned whole: --remedies "60 s" gives it longer')
+
+
+def test_a_window_holds_what_decides() -> None:
+    """Whatever can be planned whole can be followed window by window: every step of every example."""
+    for name in ("sorter4-spline-tray", "loader4-stack-tiles", "glazer6-kiln-mouth"):
+        task = pathplan.load_task(ROOT / "examples" / f"{name}.toml")
+        for step in task.steps[:12]:
+            if step.motion != "wait":
+                assert plans(window(task, step.index))
+                assert window(task, step.index).steps[-1].target is step.target
