@@ -25,6 +25,7 @@ _STEEPEST = (
     3.0  # no singular value changes by more than this times that travel (see `auditing.tool`, for common reaches)
 )
 _FEWEST = 500  # instants at which a stretch is looked at
+_MOST = 50_000  # instants of a stretch that are looked at: bounds memory where one takes hours
 _STILL = 1e-6  # m/s: a tool that never moves faster only turns
 _PACING = 0.9  # share of a limit from which on it holds back
 _GRID = np.linspace(-1.0, 1.0, 9)
@@ -64,7 +65,7 @@ def _motion(part: Part, cycle: float) -> _Motion | None:
     """The stretch at many instants, None if it comes nowhere near."""
     assert part.stretch is not None and part.timing is not None
     arm, duration = part.stretch.arm, part.timing.duration
-    local = np.linspace(0.0, duration, max(int(np.ceil(duration / cycle)), _FEWEST) + 1)
+    local = np.linspace(0.0, duration, int(np.clip(np.ceil(duration / cycle), _FEWEST, _MOST)) + 1)
     rows = evaluate(part, local, arm.n)
     known = part.stretch.has_tool_path(rows.s)
     if not known.any():
