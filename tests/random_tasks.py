@@ -38,6 +38,8 @@ def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
     ]
     if rng.random() < 0.3:
         lines.append(f'speed = "{rng.uniform(50, 800):.0f} mm/s"')
+    if rng.random() < 0.2:
+        lines.append(f'turning_speed = "{rng.uniform(5, 200):.0f} deg/s"')
     count = int(rng.integers(1, 8))
     patterns = {i: f"places{i}" for i in range(count) if rng.random() < 0.12}
     for i in range(count):

@@ -120,6 +120,7 @@ class Holding:
         """Of the next rows: tool speed (N,) m/s, step (N,), time since the row before (N,) s, shares (N, L)."""
         if not self.asked:
             return
+        speed = np.where(np.isfinite(speed), speed, 0.0)
         before = np.concatenate([[speed[0] if self.before is None else self.before], speed[:-1]])
         self.before = float(speed[-1])
         for number in np.unique(step).tolist():
