@@ -157,6 +157,23 @@ def broken_between_rows(plan: pathplan.Plan) -> list[str]:
     return broken
 
 
+def broken_caps(plan: pathplan.Plan) -> list[str]:
+    """What the written poses break of the caps on the tool of the whole task: a chord is never longer than its arc."""
+    from scipy.spatial.transform import Rotation
+
+    task, pose = plan.task, plan.table.pose
+    assert pose is not None
+    same = np.array([task.steps[k].tool for k in plan.table.step])
+    same = same[1:] == same[:-1]  # another tool has another point
+    turning = Rotation.from_matrix(pose[:, :3, :3])
+    seen = {
+        "tool speed": (np.linalg.norm(np.diff(pose[:, :3, 3], axis=0), axis=1)[same], task.speed),
+        "tool turning speed": ((turning[:-1].inv() * turning[1:]).magnitude()[same], task.turning_speed),
+    }
+    # 1e-12 m and rad: the rounding of poses
+    return [name for name, (way, cap) in seen.items() if cap and way.max() > cap * (1 + 1e-6) * task.cycle + 1e-12]
+
+
 def judge(text: str, folder: Path) -> str:
     """'planned' or 'refused'; raises AssertionError with the task when a table breaks a limit."""
     file = folder / "random.toml"
@@ -167,6 +184,7 @@ def judge(text: str, folder: Path) -> str:
         assert str(error) and "\n" not in str(error), text
         return "refused"
     broken = broken_limits(plan.task.arm, plan.table.position, plan.task.cycle) + broken_between_rows(plan)
+    broken += broken_caps(plan)
     assert not broken, f"{broken}\n{text}"
     assert plan.bound <= plan.duration + 1e-12, text
     return "planned"
