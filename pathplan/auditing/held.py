@@ -253,6 +253,12 @@ def held_findings(found: Sequence[HeldSpeed], task: Any, pace: float) -> Iterato
         verb, whose = ("hold", "their") if len(whole) > 1 else ("holds", "its")
         text = f"{names} {verb} {whose} tool speed to {within} over {whose} whole length"
         yield Finding("note", text, step=whole[0].step, quantity="tool speed")
+    for held in found:
+        carrier = task.carrier(task.steps[held.step])
+        if carrier is not None:
+            text = f"{_name(held)}: its tool speed counts in the base frame; over the workpiece that {carrier} carries"
+            yield Finding("warning", f"{text} it is another while that moves", step=held.step, quantity="tool speed")
+            return  # said once
 
 
 def _name(held: HeldSpeed) -> str:
