@@ -17,6 +17,7 @@ import pathplan
 ROOT = Path(__file__).parent.parent
 ARMS = ("loader4", "sorter4", "glazer6", "sorter4-spline")
 Array = NDArray[np.float64]
+_POINTS = 64  # of a cell: none but its ends is among those that the timing itself looks at
 
 
 def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
@@ -139,14 +140,15 @@ def _broken_sums(arm: pathplan.Arm, padded: Array, cycle: float) -> list[str]:
 
 
 def broken_between_rows(plan: pathplan.Plan) -> list[str]:
-    """What the trajectory's own derivatives break, 20 times denser than the rows, and at the rows themselves."""
-    limits, cycle = plan.task.arm.limits, plan.task.cycle
+    """What the trajectory's own derivatives break, at the rows and at many points of every cell of its timing."""
+    limits = plan.task.arm.limits
     kinds = {"velocity": limits.velocity, "acceleration": limits.acceleration, "jerk": limits.jerk}
     table = plan.table
     seen = [(table.velocity, table.acceleration, table.jerk)]
     for timing in plan.timings:
-        samples = int(20 * timing.duration / cycle) + 2
-        seen.append(tuple(timing.derivatives(np.linspace(0.0, timing.duration, samples))[1:]))
+        cells = len(timing.tau) - 1
+        u = np.tile(np.linspace(0.0, 1.0, _POINTS), cells)
+        seen.append(tuple(timing.at(np.repeat(np.arange(cells), _POINTS), u)[1:]))
     broken = []
     for derivatives in seen:
         for values, (kind, limit) in zip(derivatives, kinds.items(), strict=True):
