@@ -151,7 +151,7 @@ class Plan:
         return passes_of(self.parts, self.task.cycle)
 
     def savings(self, *, top: int = 5) -> tuple[Saving, ...]:
-        """What would buy time: see `pathplan.savings.find_savings`. Plans the task again for every change it tries."""
+        """What would buy time: see `pathplan.savings.find_savings`. Times again what every change concerns."""
         from pathplan.savings import find_savings
 
         return find_savings(self, top=top)

@@ -17,6 +17,7 @@ import pathplan
 ROOT = Path(__file__).parent.parent
 ARMS = ("loader4", "sorter4", "glazer6", "sorter4-spline")
 Array = NDArray[np.float64]
+_POINTS = 64  # of a cell: none but its ends is among those that the timing itself looks at
 
 
 def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
@@ -38,6 +39,8 @@ def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
     ]
     if rng.random() < 0.3:
         lines.append(f'speed = "{rng.uniform(50, 800):.0f} mm/s"')
+    if rng.random() < 0.2:
+        lines.append(f'turning_speed = "{rng.uniform(5, 200):.0f} deg/s"')
     count = int(rng.integers(1, 8))
     patterns = {i: f"places{i}" for i in range(count) if rng.random() < 0.12}
     for i in range(count):
@@ -137,14 +140,15 @@ def _broken_sums(arm: pathplan.Arm, padded: Array, cycle: float) -> list[str]:
 
 
 def broken_between_rows(plan: pathplan.Plan) -> list[str]:
-    """What the trajectory's own derivatives break, 20 times denser than the rows, and at the rows themselves."""
-    limits, cycle = plan.task.arm.limits, plan.task.cycle
+    """What the trajectory's own derivatives break, at the rows and at many points of every cell of its timing."""
+    limits = plan.task.arm.limits
     kinds = {"velocity": limits.velocity, "acceleration": limits.acceleration, "jerk": limits.jerk}
     table = plan.table
     seen = [(table.velocity, table.acceleration, table.jerk)]
     for timing in plan.timings:
-        samples = int(20 * timing.duration / cycle) + 2
-        seen.append(tuple(timing.derivatives(np.linspace(0.0, timing.duration, samples))[1:]))
+        cells = len(timing.tau) - 1
+        u = np.tile(np.linspace(0.0, 1.0, _POINTS), cells)
+        seen.append(tuple(timing.at(np.repeat(np.arange(cells), _POINTS), u)[1:]))
     broken = []
     for derivatives in seen:
         for values, (kind, limit) in zip(derivatives, kinds.items(), strict=True):
@@ -153,6 +157,23 @@ def broken_between_rows(plan: pathplan.Plan) -> list[str]:
             over = (rows > limit[:, 1] + slack[:, 1]) | (rows < limit[:, 0] - slack[:, 0])
             broken += [f"{limits.names[k]} {kind} between rows" for k in np.flatnonzero(over.any(axis=0))]
     return broken
+
+
+def broken_caps(plan: pathplan.Plan) -> list[str]:
+    """What the written poses break of the caps on the tool of the whole task: a chord is never longer than its arc."""
+    from scipy.spatial.transform import Rotation
+
+    task, pose = plan.task, plan.table.pose
+    assert pose is not None
+    same = np.array([task.steps[k].tool for k in plan.table.step])
+    same = same[1:] == same[:-1]  # another tool has another point
+    turning = Rotation.from_matrix(pose[:, :3, :3])
+    seen = {
+        "tool speed": (np.linalg.norm(np.diff(pose[:, :3, 3], axis=0), axis=1)[same], task.speed),
+        "tool turning speed": ((turning[:-1].inv() * turning[1:]).magnitude()[same], task.turning_speed),
+    }
+    # 1e-12 m and rad: the rounding of poses
+    return [name for name, (way, cap) in seen.items() if cap and way.max() > cap * (1 + 1e-6) * task.cycle + 1e-12]
 
 
 def judge(text: str, folder: Path) -> str:
@@ -165,6 +186,7 @@ def judge(text: str, folder: Path) -> str:
         assert str(error) and "\n" not in str(error), text
         return "refused"
     broken = broken_limits(plan.task.arm, plan.table.position, plan.task.cycle) + broken_between_rows(plan)
+    broken += broken_caps(plan)
     assert not broken, f"{broken}\n{text}"
     assert plan.bound <= plan.duration + 1e-12, text
     return "planned"

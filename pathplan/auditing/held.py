@@ -120,6 +120,7 @@ class Holding:
         """Of the next rows: tool speed (N,) m/s, step (N,), time since the row before (N,) s, shares (N, L)."""
         if not self.asked:
             return
+        speed = np.where(np.isfinite(speed), speed, 0.0)
         before = np.concatenate([[speed[0] if self.before is None else self.before], speed[:-1]])
         self.before = float(speed[-1])
         for number in np.unique(step).tolist():
@@ -252,6 +253,12 @@ def held_findings(found: Sequence[HeldSpeed], task: Any, pace: float) -> Iterato
         verb, whose = ("hold", "their") if len(whole) > 1 else ("holds", "its")
         text = f"{names} {verb} {whose} tool speed to {within} over {whose} whole length"
         yield Finding("note", text, step=whole[0].step, quantity="tool speed")
+    for held in found:
+        carrier = task.carrier(task.steps[held.step])
+        if carrier is not None:
+            text = f"{_name(held)}: its tool speed counts in the base frame; over the workpiece that {carrier} carries"
+            yield Finding("warning", f"{text} it is another while that moves", step=held.step, quantity="tool speed")
+            return  # said once
 
 
 def _name(held: HeldSpeed) -> str:

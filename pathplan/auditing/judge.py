@@ -14,9 +14,9 @@ from pathplan.auditing.agreement import disagreements
 from pathplan.auditing.differences import ORDERS, Differences
 from pathplan.auditing.drives import Drives, DriveUse, jump_notes, overloads, torque_limits
 from pathplan.auditing.exceedances import Exceedance, Key, clock, exceedances, finding_of, gather
-from pathplan.auditing.held import Holding, held_findings
+from pathplan.auditing.held import held_findings
 from pathplan.auditing.jumps import Jumps
-from pathplan.auditing.model import QUANTITIES, TOLERANCE, TOOL, Audit, Finding, JointAudit, Peak, Singularity
+from pathplan.auditing.model import QUANTITIES, TOLERANCE, TOOL, Audit, Finding, JointAudit, Singularity
 from pathplan.auditing.pacing import StepClock
 from pathplan.auditing.passes import NEAR, pass_findings
 from pathplan.auditing.planned import (
@@ -25,16 +25,13 @@ from pathplan.auditing.planned import (
     corners_of,
     joint_peaks,
     step_speeds,
-    tool_speed_by_step,
     worse_peaks,
 )
 from pathplan.auditing.rounding import NONE, Rounding
 from pathplan.auditing.shares import (
     Array,
     Rows,
-    larger,
     limit_rows,
-    peaks_of,
     position_shares,
     row_kinds,
     rows_of,
@@ -42,14 +39,10 @@ from pathplan.auditing.shares import (
 )
 from pathplan.auditing.stamps import Stamps, finite_rows, found_cycle
 from pathplan.auditing.tool import (
-    arms_by_step,
     by_tool,
     nearest_singularity,
-    step_caps,
-    tool_acceleration,
-    tool_speed,
-    tool_turning_speed,
 )
+from pathplan.auditing.tool_judge import ToolJudge
 from pathplan.auditing.words import dimension_of, shown
 from pathplan.errors import InputError
 from pathplan.export.columns import DEGREES, MILLIMETRES
@@ -128,20 +121,15 @@ class _Judge:
         self.differences = Differences(self.matrix, limits, np.array(factors), self.cycle, steps)
         self.jumps = Jumps(self.names, self.kinds, arm.limits.acceleration[: arm.n], steps)
         self.stamps = Stamps(self.cycle, stated=first.cycle is not None, rounding=rounding.time)
-        self.caps = step_caps(arm, self.task)
-        self.arms = arms_by_step(arm, self.task)
         joints = [(name, q) for q in (*DERIVED, "torque") for name in self.names]
         labels = [*joints, *((None, quantity) for quantity in TOOL)]
         self.clock = StepClock(labels, self.cycle)
-        self.pace = self.task.pace if self.task else 1.0
-        self.holding = Holding(self.task, self.caps.speed, labels, self.pace)
+        self.tool = ToolJudge(arm, self.task, labels, self.cycle, rounding)
         self.rows, self.last_time = 0, 0.0
         self.joints: tuple[JointAudit, ...] = ()
         self.found: dict[Key, Exceedance] = {}
         self.not_finite: dict[tuple[str, str], tuple[int, int]] = {}
-        self.tool_peaks: dict[str, list[Peak | None]] = {name: [None] for name in TOOL}
         self.singularity: Singularity | None = None
-        self.speeds: dict[int, tuple[float, float, float]] = {}
         self.ends: list[JointTable] = []
         self.before: JointTable | None = None  # the last row so far
 
@@ -178,15 +166,13 @@ class _Judge:
         for quantity in (*DERIVED, "torque"):
             shares.append(self._share(quantity, columns.get(quantity), rows, velocity))
         self._share("position", columns["position"], rows, velocity)
-        times, speed = self._times(table.time), self._tool_speed(table, good, velocity)
-        shares += self._tool(table, good, rows, velocity, speed)
-        self.clock.add(np.hstack(shares), table.step, times)
-        if speed is not None:
-            self.holding.add(speed, table.step, times * (self.cycle or 1.0), np.hstack(shares))
+        times = self._times(table.time)
+        every = self.tool.add(table, good, velocity, times, self.rows, np.hstack(shares))
+        self.clock.add(every, table.step, times)
         if good.any():
             at = Rows(table.time[good], table.step[good], 0)
             numbers = self.rows + np.flatnonzero(good)
-            for arm, mine in by_tool(self.arms, at.step):
+            for arm, mine in by_tool(self.tool.arms, at.step):
                 place = Rows(at.time[mine], at.step[mine], 0)
                 position = table.position[good][mine]
                 self.singularity = nearest_singularity(arm, position, place, numbers[mine], self.singularity)
@@ -216,88 +202,6 @@ class _Judge:
         shares = position_shares(values, limits)[0] if quantity == "position" else shares_of(values, limits)
         rounded = np.abs(self.matrix) @ self.rounding.step(quantity, self.arm.n) / 2
         gather(self.found, exceedances(quantity, values, limits, shares, rows, rounded=rounded))
-        return shares
-
-    def _tool_speed(self, table: JointTable, good: NDArray[np.bool_], velocity: Array) -> Array | None:
-        """Tool speed (N,): the column, or of the joint velocities; by differences only if something caps it."""
-        if table.tool_speed is not None:
-            return table.tool_speed
-        if table.velocity is None and not np.isfinite(self.caps.speed).any():
-            return None
-        return self._rate(table, good & np.isfinite(velocity).all(axis=1), velocity, tool_speed)
-
-    def _rate(self, table: JointTable, at: NDArray[np.bool_], velocity: Array, of: Any) -> Array:
-        """A speed (N,) of the tool, `of` arm, positions and velocities, in the rows `at` (N,); zero elsewhere."""
-        found, known = np.zeros(len(table)), np.flatnonzero(at)
-        for arm, mine in by_tool(self.arms, table.step[known]):
-            k = known[mine]
-            found[k] = of(arm, table.position[k], velocity[k])
-        return found
-
-    def _rate_rounding(self, table: JointTable, good: NDArray[np.bool_], rows: slice) -> Array:
-        """What rounding of the positions makes of a speed of the tool by differences; `rows` of the Jacobian."""
-        steps = self.rounding.step("position", self.arm.n)
-        if table.velocity is not None or not steps.any() or not good.any():
-            return np.zeros(1)
-        reach = np.linalg.norm(self.arm.jacobian(table.position[good])[:, rows], axis=1).max(axis=0)
-        return np.array([reach @ steps / self._interval(table.time)])  # both rows of a difference are rounded
-
-    def _tool(
-        self, table: JointTable, good: NDArray[np.bool_], rows: Rows, velocity: Array, speed: Array | None
-    ) -> list[Array]:
-        """Shares (N, 1) of the caps on tool speed, tool acceleration and turning speed."""
-        rounded = np.zeros(1)
-        if speed is not None:
-            times = self._times(table.time)
-            for step, mine in tool_speed_by_step(speed, self.caps.speed, table.step, times).items():
-                was = self.speeds.get(step, (0.0, 0.0, 0.0))
-                self.speeds[step] = (max(was[0], mine[0]), was[1] + mine[1], was[2] + mine[2])
-            if table.tool_speed is None:
-                rounded = self._rate_rounding(table, good, slice(3))
-        shares = [self._tool_share(TOOL[0], speed, self.caps.speed, rows, rounded)]
-        acceleration = self._acceleration(table, good)
-        shares.append(self._tool_share(TOOL[1], acceleration, self.caps.acceleration, rows, np.zeros(1)))
-        cap = self.caps.turning_speed[np.minimum(table.step, len(self.caps.turning_speed) - 1)]
-        at, turning = good & np.isfinite(cap) & np.isfinite(velocity).all(axis=1), None
-        if at.any():
-            turning = self._rate(table, at, velocity, tool_turning_speed)
-            rounded = self._rate_rounding(table, good, slice(3, 6))
-        return [*shares, self._tool_share(TOOL[2], turning, self.caps.turning_speed, rows, rounded)]
-
-    def _interval(self, time: Array) -> float:
-        """The cycle, or else the shortest interval between rows."""
-        intervals = np.diff(time)
-        return self.cycle or float(intervals[intervals > 0].min(initial=1.0))
-
-    def _acceleration(self, table: JointTable, good: NDArray[np.bool_]) -> Array | None:
-        """Tool acceleration (N,), only where something caps it."""
-        if table.velocity is None or table.acceleration is None:
-            return None
-        cap = self.caps.acceleration[np.minimum(table.step, len(self.caps.acceleration) - 1)]
-        at = np.flatnonzero(good & np.isfinite(cap))
-        if not len(at):
-            return None
-        found = np.zeros(len(table))
-        for arm, mine in by_tool(self.arms, table.step[at]):
-            k = at[mine]
-            found[k] = tool_acceleration(arm, table.position[k], table.velocity[k], table.acceleration[k])
-        return found
-
-    def _tool_share(self, quantity: str, values: Array | None, caps: Array, rows: Rows, rounded: Array) -> Array:
-        if values is None:
-            return np.zeros((len(rows.time), 1))
-        cap = caps[np.minimum(rows.step, len(caps) - 1)]
-        shares = (values / cap)[:, None]
-        for limit in np.unique(cap[np.isfinite(cap)]):  # one pass for each cap, since a peak has one limit
-            mine = np.flatnonzero(cap == limit)
-            at = Rows(rows.time[mine], rows.step[mine], 0)
-            limits = np.array([[-np.inf, limit]])
-            peaks, own = peaks_of(values[mine, None], limits, at)
-            peaks = [peak and replace(peak, row=rows.first + int(mine[peak.row])) for peak in peaks]
-            self.tool_peaks[quantity] = larger(self.tool_peaks[quantity], peaks)
-            numbers = rows.first + mine
-            over = exceedances(quantity, values[mine, None], limits, own, at, numbers=numbers, rounded=rounded)
-            gather(self.found, over)
         return shares
 
     def _times(self, time: Array) -> Array:
@@ -340,14 +244,14 @@ class _Judge:
             joints=joints[: self.arm.n],
             rows=joints[self.arm.n :],
             findings=(*self._findings(evidence, drives), *pass_findings(passes)),
-            tool_speed=self.tool_peaks[TOOL[0]][0],
-            tool_acceleration=self.tool_peaks[TOOL[1]][0],
-            tool_turning_speed=self.tool_peaks[TOOL[2]][0],
+            tool_speed=self.tool.peaks[TOOL[0]],
+            tool_acceleration=self.tool.peaks[TOOL[1]],
+            tool_turning_speed=self.tool.peaks[TOOL[2]],
             singularity=self.singularity,
             passes=passes,
             pacing=self.clock.pacing(names) if self.measured == "columns" else (),
-            speeds=step_speeds(self.speeds, self.caps.speed, names) if plan else (),
-            held=self.holding.found(),
+            speeds=step_speeds(self.tool.speeds, self.tool.caps.speed, names) if plan else (),
+            held=self.tool.holding.found(),
             motion_time=moving,
             waiting_time=waiting,
             deviation_rows=evidence.deviation_rows,
@@ -387,7 +291,7 @@ class _Judge:
             yield Finding("exceedance", text, joint=joint or None, quantity=name, row=row)
         yield from self.stamps.findings()
         yield from self.jumps.findings()
-        for key, found in sorted(self.found.items(), key=lambda item: item[1].first):
+        for key, found in sorted({**self.found, **self.tool.found}.items(), key=lambda item: item[1].first):
             yield finding_of(key, found, self.names, self.kinds, how=self._at_speed(key, found))
         yield from overloads(drives)
         yield from self._seen_by_the_drive()
@@ -405,7 +309,7 @@ class _Judge:
         elif self.stamps.stated is False:
             text = f"the table states no cycle: {self.cycle * 1e3:.6g} ms found from its times"
             yield Finding("note", text)
-        yield from held_findings(self.holding.found(), self.task, self.pace)
+        yield from held_findings(self.tool.holding.found(), self.task, self.tool.pace)
         yield from self.notes
         for text in self.arm.warnings:
             yield Finding("warning", f"arm {self.arm.name}: {text}")

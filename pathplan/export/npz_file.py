@@ -6,8 +6,6 @@ headers are matched, not evaluated, and sizes are checked before anything is all
 
 from __future__ import annotations
 
-import contextlib
-import errno
 import json
 import re
 import shutil
@@ -22,6 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import InputError
+from pathplan.export.archive import open_archive
 from pathplan.export.columns import Units
 from pathplan.export.header import MAX_HEADER, MAX_JOINTS, Header, from_json, header_as_dict, header_from_dict
 from pathplan.export.kinds import MAX_ROWS, Kind
@@ -31,7 +30,6 @@ from pathplan.table import JointTable
 FIELDS = ("time", "position", "velocity", "acceleration", "jerk", "torque", "step", "pose", "tool_speed")
 UNITS_TEXT = "SI: s, rad, m, N m, N; steps and rows count from 0; pose is base_from_tool"
 IN_MEMORY = 1 << 22  # bytes of each field kept in memory while chunks come in, before a file takes over
-_DAMAGE = (zipfile.BadZipFile, struct.error, EOFError, ValueError, NotImplementedError, RuntimeError)
 _ARRAY_HEADER = re.compile(
     r"\{'descr': '(<f8|<i8|<U\d{1,9})', 'fortran_order': False, 'shape': \(((?:\d{1,12},? ?){0,3})\), \} *\n",
     re.ASCII,
@@ -90,13 +88,13 @@ def _header_text(header: Header) -> str:
 
 def read_header(file: Path) -> Header:
     """See `Kind.read_header`."""
-    with _archive(file) as archive:
+    with open_archive(file) as archive:
         return _header(file, archive)
 
 
 def read(file: Path) -> JointTable:
     """See `Kind.read`."""
-    with _archive(file) as archive:
+    with open_archive(file) as archive:
         header = _header(file, archive)
         arrays = {field: _array(file, archive, field) for field in _fields(file, archive)}
     for field, array in arrays.items():
@@ -106,20 +104,6 @@ def read(file: Path) -> JointTable:
             place = f"row {bad[0][0] + 1}, array {field}" + (f" [{where}]" if where else "")
             raise InputError.at(str(file), place, f"expected a finite number, got {array[tuple(bad[0])]}")
     return tabled(arrays, header, str(file))
-
-
-@contextlib.contextmanager
-def _archive(file: Path) -> Iterator[zipfile.ZipFile]:
-    """The zip file opened; whatever zipfile stumbles over within becomes one line."""
-    with open(file, "rb") as stream:
-        try:
-            with zipfile.ZipFile(stream) as archive:
-                yield archive
-        except (*_DAMAGE, OSError) as error:
-            # zipfile seeks where a damaged directory tells it to, even to before the start: that is EINVAL
-            if isinstance(error, OSError) and error.errno != errno.EINVAL:
-                raise
-            raise InputError.at(str(file), "is cut short or damaged: not a whole NPZ file") from None
 
 
 def _fields(file: Path, archive: zipfile.ZipFile) -> list[str]:
@@ -141,7 +125,7 @@ def _header(file: Path, archive: zipfile.ZipFile) -> Header:
 
 
 def _array(file: Path, archive: zipfile.ZipFile, field: str) -> NDArray[Any]:
-    """One array, read-only. Raises InputError, or one of _DAMAGE."""
+    """One array, read-only. Raises InputError, or what `open_archive` turns into one line."""
     entry = archive.getinfo(f"{field}.npy")
     where = f"{file}: array {field}"
     if entry.compress_type != zipfile.ZIP_STORED:  # stored members can't be larger than the file itself

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from pathplan.errors import InputError
 from pathplan.export.columns import JOINT_FIELDS, Array, Group, Units, groups
 from pathplan.export.header import Header
-from pathplan.export.quaternions import quaternions_of, rotations_of
+from pathplan.quaternions import rotations, steady_quaternions
 from pathplan.table import JointTable, tick_times
 
 __all__ = ["Numbers", "clean_times", "faults", "numbers", "table_of", "tabled"]
@@ -34,7 +34,7 @@ def numbers(chunks: Iterator[JointTable], header: Header, units: Units) -> Itera
                 values = clean_times(table)[:, None]
             elif group.field == "pose":
                 assert table.pose is not None
-                quaternions = quaternions_of(table.pose[:, :3, :3], before)
+                quaternions = steady_quaternions(table.pose[:, :3, :3], before)
                 before = quaternions[-1]
                 values = np.hstack([table.pose[:, :3, 3], quaternions])
             else:
@@ -122,6 +122,6 @@ def tabled(arrays: dict[str, Any], header: Header, where: str) -> JointTable:
 def _poses(values: Array) -> Array:
     poses = np.zeros((len(values), 4, 4))
     poses[:, :3, 3] = values[:, :3]
-    poses[:, :3, :3] = rotations_of(values[:, 3:])
+    poses[:, :3, :3] = rotations(values[:, 3:])
     poses[:, 3, 3] = 1.0
     return poses

@@ -17,9 +17,9 @@ from pathplan.path.joint import Array, JointPath
 from pathplan.path.layout import Layout
 from pathplan.path.spans import Spans
 from pathplan.path.taskpath import Cap, Corner, StepPart, Stretch, TaskPath, Wait
-from pathplan.task.model import Step
+from pathplan.task.model import Step, Task
 
-__all__ = ["assemble"]
+__all__ = ["assemble", "caps_along"]
 
 
 def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces) -> TaskPath:
@@ -47,7 +47,7 @@ def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces
                 span = np.arange(span_bounds[number], span_bounds[number + 1])
                 part = slice(int(piece_bounds[number]), int(piece_bounds[number + 1]))
                 joint_path = _joint_path(pieces, part, start)
-                caps = _caps(path, spans, span, start)
+                caps = caps_along(path.task, path, spans, span, start[span])
                 arm = arms.carrying(step)
                 sequence.append(Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span]))
         elif step.motion == "wait" or step.index not in parts.flown_by:
@@ -130,14 +130,16 @@ def _step_parts(
     return parts
 
 
-def _caps(path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple[Cap, ...]:
+def caps_along(task: Task, path: CartesianPath, spans: Spans, span: Index, start: Array) -> tuple[Cap, ...]:
+    """Caps on a stretch of `span` (M,) spans that begin at `start` (M,) on it, as the steps of `task` say them."""
     caps: list[Cap] = []
-    for i in span:
-        steps = [path.legs[spans.motions.leg[m]].step for m in (spans.before[i], spans.after[i]) if m >= 0]
-        own = [caps_of(step, path.task, path.task.arm) for step in steps]
+    for i, begin in zip(span, start.tolist(), strict=True):
+        legs = [path.legs[spans.motions.leg[m]] for m in (spans.before[i], spans.after[i]) if m >= 0]
+        steps = [task.steps[leg.step.index] for leg in legs]
+        own = [caps_of(step, task, task.arm) for step in steps]
         lowest = StepCaps(*(lower(*values) for values in zip(*own, strict=True)))
         held = any(step.held_speed is not None for step in steps)
-        cap = Cap(float(start[i]), float(start[i] + spans.length[i]), *lowest, held)
+        cap = Cap(begin, begin + float(spans.length[i]), *lowest, held)
         if caps and caps[-1][2:] == cap[2:]:
             caps[-1] = cap._replace(s_from=caps[-1].s_from)
         else:

@@ -7,8 +7,8 @@ from typing import NamedTuple
 import numpy as np
 
 from pathplan.path.joint import Array
+from pathplan.quaternions import quaternion_product, rotations
 from pathplan.task.model import Curve
-from pathplan.task.orientations import quaternion_product, rotations
 
 __all__ = ["CurveSize", "curve_derivatives", "curve_size"]
 

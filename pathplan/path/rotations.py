@@ -9,27 +9,14 @@ from __future__ import annotations
 import numpy as np
 
 from pathplan.path.joint import Array
+from pathplan.quaternions import quaternions
 
 __all__ = ["cross", "exponential", "rotate", "rotation_vector", "turn_about"]
 
 
 def rotation_vector(rotation: Array) -> Array:
     """Rotation vector (N, 3), angle in [0, pi], of rotation matrices (N, 3, 3)."""
-    r = rotation
-    diagonal = np.einsum("nii->ni", r)
-    trace = diagonal.sum(axis=1)
-    # Four times the products of quaternion components: row and column i hold q_i q_0 ... q_i q_3 (w, x, y,
-    # z).
-    products = np.empty((len(r), 4, 4))
-    products[:, 0, 0] = 1.0 + trace
-    for i in range(3):
-        j, k = (i + 1) % 3, (i + 2) % 3
-        products[:, i + 1, i + 1] = 1.0 + 2.0 * diagonal[:, i] - trace
-        products[:, 0, i + 1] = products[:, i + 1, 0] = r[:, k, j] - r[:, j, k]
-        products[:, j + 1, k + 1] = products[:, k + 1, j + 1] = r[:, j, k] + r[:, k, j]
-    largest = np.argmax(np.einsum("nii->ni", products), axis=1)
-    quaternion = products[np.arange(len(r)), largest]
-    quaternion = quaternion / np.linalg.norm(quaternion, axis=1, keepdims=True)
+    quaternion = quaternions(rotation)
     quaternion[quaternion[:, 0] < 0] *= -1.0
     sine = np.linalg.norm(quaternion[:, 1:], axis=1)
     angle = 2.0 * np.arctan2(sine, quaternion[:, 0])

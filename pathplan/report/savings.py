@@ -32,5 +32,5 @@ def savings_section(plan: Plan | None, savings: Sequence[Saving] | None) -> str:
         ]
         for saving in savings
     ]
-    about = tag("p", "Each change by itself, with the whole task planned again; what it takes off the motion time.")
+    about = tag("p", "Each change by itself, what it concerns timed again; what that takes off the motion time.")
     return section("savings", title, about, table(title, ["change", "by", "saves"], rows, numbers=(1, 2), small=True))

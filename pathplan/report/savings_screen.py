@@ -16,11 +16,11 @@ __all__ = ["saving_name", "savings_as_dict", "savings_screen"]
 
 
 def savings_screen(task: Task, savings: Sequence[Saving]) -> Iterator[str]:
-    """Lines of at most 100 columns: what each change saves, planned again."""
+    """Lines of at most 100 columns: what each change saves, timed again."""
     if not savings:
         yield "what would buy time: no single change saves any"
         return
-    yield "what would buy time, each change by itself and planned again:"
+    yield "what would buy time, each change by itself and timed again:"
     rows = []
     for saving in savings:
         name = saving_name(task, saving)

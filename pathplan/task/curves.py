@@ -32,10 +32,10 @@ from numpy.typing import NDArray
 
 from pathplan.arm import Arm
 from pathplan.errors import InputError
+from pathplan.quaternions import angles_between, quaternion_product, quaternions, rotations, steady_quaternions
 from pathplan.task.csvfile import PointList, read_points
 from pathplan.task.joints import check_positions, outside
 from pathplan.task.model import Curve, Taught
-from pathplan.task.orientations import angles_between, quaternion_product, quaternions, rotations
 from pathplan.task.smoothing import interpolated, knots_of, pieces_of, smoothed
 from pathplan.tomlfile import Table, read_only, rotation_from_rpy
 from pathplan.units import DIMENSIONS, format_quantity, joint_dimension, toml_text
@@ -169,7 +169,7 @@ def _splines(
     normal: Array | None,
     where: str,
 ) -> _Splines:
-    unit, scaled = quaternions(rotation), position / arm_length
+    unit, scaled = steady_quaternions(rotation), position / arm_length
     steps = np.linalg.norm(np.diff(scaled, axis=0), axis=1)
     u = np.concatenate([[0.0], np.cumsum(np.hypot(steps, angles_between(unit[:-1], unit[1:])))])
 
@@ -181,7 +181,7 @@ def _splines(
 
     along = smoothed(u, scaled, off) if tolerance > 0.0 else interpolated(u, scaled)
     if normal is not None:
-        unit = quaternions(_along_tangents(along(u, 1), normal, where))
+        unit = steady_quaternions(_along_tangents(along(u, 1), normal, where))
     turning = smoothed(u, unit, turned) if angle_tolerance > 0.0 else interpolated(u, unit)
     deviation = float(np.linalg.norm(along(u) - scaled, axis=1).max() * arm_length)
     return _Splines(u, along, turning, arm_length, deviation, float(angles_between(turning(u), unit).max()))
@@ -314,7 +314,7 @@ def _moved(position: Array, rotation: Array, arm_length: float) -> NDArray[np.bo
 
 def _check_neighbours(points: PointList, rotation: Array, keep: NDArray[np.bool_]) -> None:
     rows = np.flatnonzero(keep)
-    unit = quaternions(rotation[keep])
+    unit = steady_quaternions(rotation[keep])
     angle = angles_between(unit[:-1], unit[1:])
     wide = np.flatnonzero(angle > _WIDEST)
     if len(wide):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -10,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from pathplan.auditing.held import HELD_WITHIN, Holding, held_findings
-from pathplan.task.model import Step, Task
+from pathplan.task.model import Frame, Step, Target, Task
 from tests.auditing.cast import made_arm
 
 LABELS = [("swing", "jerk"), ("bend", "velocity"), (None, "tool speed")]
@@ -169,6 +170,18 @@ def test_what_makes_it_impossible_is_named(cap, pace, more, why):
     found = held(0.5 * ramps(), cap=cap, pace=pace, task=task)
     assert found[0].cap == pytest.approx(0.1) and found[0].length_part == 0
     assert texts(found, task, pace) == [f"step 1 (bead 1): 200 mm/s is not held at all: {why}"]
+
+
+def test_a_workpiece_that_is_carried_is_told_once():
+    """The speed over it is not the one that is held."""
+    step = Step(0, "line", "", target=Target(frame="disc", frame_from_tool=np.eye(4)), held_speed=ASKED)
+    frames = {"disc": Frame("disc", "base", np.eye(4), joint="swing")}
+    task = Task("", None, made_arm(), np.zeros(3), (step, replace(step, index=1)), CYCLE, frames=frames)
+    found = held(np.full(20, ASKED), step=np.repeat([0, 1], 10), task=task)
+    assert texts(found, task)[1:] == [
+        "step 1: its tool speed counts in the base frame; over the workpiece that swing carries it is another while"
+        " that moves"
+    ]
 
 
 def test_a_cap_within_the_tolerance_is_no_obstacle():

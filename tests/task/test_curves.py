@@ -10,9 +10,9 @@ from scipy.spatial.transform import Rotation
 from spatialmath import SE3
 
 from pathplan.errors import InputError
+from pathplan.quaternions import angles_between, quaternion_product, rotations, steady_quaternions
 from pathplan.task.csvfile import MOST_POINTS
 from pathplan.task.curves import curve_through
-from pathplan.task.orientations import angles_between, quaternion_product, quaternions, rotations
 
 HEAD = """\
 arm = "bench6.toml"
@@ -207,7 +207,7 @@ def test_orientations_from_angles_and_from_quaternions(read):
     other = read(with_orientations("qw,qx,qy,qz", either), "rpy = [180, 0, 0]\n", "").steps[1].curve
     s = np.linspace(0, one.breaks[-1], 300)
     np.testing.assert_allclose(evaluate(one, s)[1], evaluate(other, s)[1], atol=1e-9)
-    unit = quaternions(turned.as_matrix())
+    unit = steady_quaternions(turned.as_matrix())
     u = np.cumsum(np.append(0.0, np.hypot(0.06 / 11 / 0.49, angles_between(unit[:-1], unit[1:]))))
     assert u[-1] == pytest.approx(one.breaks[-1], rel=0.02)  # about evenly by arm lengths and rad
     assert "orientations" not in one.note
@@ -497,7 +497,7 @@ def test_the_exact_line_about_a_taught_path(read, old, new, line):
 
 def test_quaternions_against_scipy():
     turned = Rotation.from_rotvec(np.linspace([3.0, 0, 0], [-3.0, 1.0, 2.0], 50))
-    unit = quaternions(turned.as_matrix())
+    unit = steady_quaternions(turned.as_matrix())
     assert (np.einsum("ij,ij->i", unit[1:], unit[:-1]) > 0).all()
     np.testing.assert_allclose(rotations(7 * unit), turned.as_matrix(), atol=1e-14)
     angle = (turned[:-1].inv() * turned[1:]).magnitude()

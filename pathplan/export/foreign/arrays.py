@@ -5,13 +5,9 @@ Headers of arrays are matched, not evaluated; arrays of Python objects are never
 
 from __future__ import annotations
 
-import contextlib
-import errno
 import re
-import struct
 import zipfile
-import zlib
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -19,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import InputError
+from pathplan.export.archive import open_archive
 from pathplan.export.foreign.source import MAX_COLUMNS, Array
 from pathplan.export.header import MAX_JOINTS
 from pathplan.export.kinds import MAX_ROWS
@@ -27,16 +24,6 @@ __all__ = ["ArraySource"]
 
 MAX_ARRAY_HEADER = 4096  # bytes
 MAX_MEMBERS = 1000
-_DAMAGE = (
-    zipfile.BadZipFile,
-    struct.error,
-    zlib.error,
-    EOFError,
-    ValueError,
-    NotImplementedError,
-    RuntimeError,
-    OverflowError,
-)
 _HEADER = re.compile(
     r"\{'descr': '(?P<kind>[<>|=][fiub][1248])', 'fortran_order': (?P<columns>True|False), "
     r"'shape': \((?P<shape>(?:\d{1,12},? ?){0,3})\),? ?\} *\n",
@@ -60,7 +47,7 @@ class ArraySource:
     def __init__(self, file: Path) -> None:
         self.file = file
         self._columns: list[tuple[_Member, int]] = []
-        with _archive(file) as archive:
+        with open_archive(file) as archive:
             if len(archive.namelist()) > MAX_MEMBERS:
                 raise InputError.at(str(file), f"more than {MAX_MEMBERS} arrays")
             for entry in archive.infolist():
@@ -91,7 +78,7 @@ class ArraySource:
                 raise InputError.at(str(self.file), f"array {member.name}: has {rows}")
         if not 0 < first.shape[0] <= MAX_ROWS:
             raise InputError.at(str(self.file), f"array {first.name}: expected 1 to {MAX_ROWS} rows")
-        with _archive(self.file) as archive:
+        with open_archive(self.file) as archive:
             arrays = {name: _array(archive, member) for name, member in members.items()}
         columns = []
         for at in wanted:
@@ -99,20 +86,6 @@ class ArraySource:
             array = arrays[member.name]
             columns.append(array if array.ndim == 1 else array[:, k])
         return np.column_stack(columns).astype(np.float64)
-
-
-@contextlib.contextmanager
-def _archive(file: Path) -> Iterator[zipfile.ZipFile]:
-    """The zip file opened; whatever zipfile stumbles over within becomes one line."""
-    with open(file, "rb") as stream:
-        try:
-            with zipfile.ZipFile(stream) as archive:
-                yield archive
-        except (*_DAMAGE, OSError) as error:
-            # zipfile seeks where a damaged directory tells it to, even to before the start: that is EINVAL
-            if isinstance(error, OSError) and error.errno != errno.EINVAL:
-                raise
-            raise InputError.at(str(file), "is cut short or damaged: not a whole NPZ file") from None
 
 
 def _member(archive: zipfile.ZipFile, entry: zipfile.ZipInfo) -> _Member | None:
@@ -137,7 +110,7 @@ def _array_header(start: bytes) -> tuple[re.Match[str], int] | None:
 
 
 def _array(archive: zipfile.ZipFile, member: _Member) -> NDArray[np.generic]:
-    """The numbers of a member. Raises what `_archive` turns into one line."""
+    """The numbers of a member. Raises what `open_archive` turns into one line."""
     kind = np.dtype(member.kind)
     size = kind.itemsize
     for length in member.shape:
