@@ -181,7 +181,9 @@ def _parser() -> argparse.ArgumentParser:
                       help="table of a single task (.csv, .jsonl, .npz or .parquet); may be repeated")  # fmt: skip
     plan.add_argument("--no-table", action="store_true", help="a dry run: write nothing at all")
     plan.add_argument(
-        "--savings", action="store_true", help="what would buy time, each change timed again: takes two to three times as long"
+        "--savings",
+        action="store_true",
+        help="what would buy time, each change timed again: takes two to three times as long",
     )
     plan.add_argument(
         "--remedies",
