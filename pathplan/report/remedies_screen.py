@@ -47,7 +47,7 @@ def remedies_as_dict(remedies: Remedies) -> dict[str, Any]:
                 "what": remedy.what,
                 "text": remedy.text,
                 "step": None if remedy.step is None else remedy.step + 1,
-                "changes": _plain({key: value for key, value in remedy.changes.items() if key != "before"}),
+                "changes": _changes(remedy),
                 "cycle_time_s": remedy.duration,
             }
             for remedy in remedies
@@ -55,6 +55,16 @@ def remedies_as_dict(remedies: Remedies) -> dict[str, Any]:
         "tried_in_vain": list(remedies.tried),
         "remedies_finished": remedies.finished,
     }
+
+
+def _changes(remedy: Remedy) -> Any:
+    """What is changed, steps counted from 1."""
+    changes = dict(remedy.changes)
+    if "before" in changes:
+        changes["before"] += 1
+    if "steps" in changes:
+        changes["steps"] = [step + 1 for step in changes["steps"]]
+    return _plain(changes)
 
 
 def refusal_as_dict(error: PathplanError) -> dict[str, Any]:

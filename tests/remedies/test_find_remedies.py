@@ -17,6 +17,7 @@ from pathplan.errors import InputError, LimitError, PathplanError, UnreachableEr
 from pathplan.path import follow_task
 from pathplan.path.refusals import rpy_of
 from pathplan.remedies import Remedies, Remedy, find_remedies
+from pathplan.remedies.freedoms import free_axes, free_roll
 from pathplan.remedies.steps import served_pose, smaller_blend
 from pathplan.remedies.trials import Trials, window
 from pathplan.report.remedies_screen import remedies_screen
@@ -337,3 +338,35 @@ def test_a_window_holds_what_decides() -> None:
             if step.motion != "wait":
                 assert plans(window(task, step.index))
                 assert window(task, step.index).steps[-1].target is step.target
+
+
+def test_a_tool_that_may_roll(tmp_path) -> None:
+    """The flange stands 10 deg before its limit and is to turn 30 deg on: only the tool's roll asks for it."""
+    arm = pathplan.load_arm(ROOT / "robots" / "glazer6.toml")
+    start = np.deg2rad([10, -15, 25, 5, 70, 350])
+    pose = arm.forward(start)
+    c, s = np.cos(np.deg2rad(30)), np.sin(np.deg2rad(30))
+    pose[:3, :2] = pose[:3, :2] @ np.array([[c, -s], [s, c]])
+    pose[:3, 3] += [0.0, 0.05, 0.0]
+    line = (
+        f'[[step]]\nmotion = "line"\nto = {{ xyz = {(1e3 * pose[:3, 3]).tolist()}, '
+        f"rpy = {np.rad2deg(rpy_of(pose)).tolist()} }}\n"
+    )
+    text = text_of("glazer6", "[10, -15, 25, 5, 70, 350]", line)
+    task = task_of(tmp_path, text)
+    (remedy,) = free_roll(Trials(task, refusal(task), time.monotonic() + LONG))
+    assert remedy.what == "roll" and 'roll = "free"' in remedy.text and remedy.step == 0
+    assert plans(task_of(tmp_path, text + 'roll = "free"\n'))
+
+
+def test_an_axis_that_may_stand_elsewhere(tmp_path) -> None:
+    """A place beside the track's middle is out of reach from its end, where the step wants the track."""
+    text = text_of(
+        "stacker7",
+        '"home"',
+        '[[step]]\nmotion = "joint"\nto = { xyz = [-700, -500, 500], rpy = [180, 0, 0] }\naxes = { track = 1400 }\n',
+    )
+    task = task_of(tmp_path, text)
+    (remedy,) = free_axes(Trials(task, refusal(task), time.monotonic() + LONG))
+    assert remedy.changes["axes"] == ["track"]
+    assert plans(task_of(tmp_path, text.replace("axes = { track = 1400 }", "")))
