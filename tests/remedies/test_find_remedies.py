@@ -17,8 +17,9 @@ from pathplan.errors import InputError, LimitError, PathplanError, UnreachableEr
 from pathplan.path import follow_task
 from pathplan.path.refusals import rpy_of
 from pathplan.remedies import Remedies, Remedy, find_remedies
+from pathplan.remedies.branches import other_branches
 from pathplan.remedies.freedoms import free_axes, free_roll
-from pathplan.remedies.steps import served_pose, smaller_blend
+from pathplan.remedies.steps import joint_step, served_pose, smaller_blend
 from pathplan.remedies.trials import Trials, window
 from pathplan.report.remedies_screen import remedies_screen
 from pathplan.task.model import Step, Target
@@ -97,9 +98,17 @@ def plans(task: pathplan.Task) -> bool:
     return True
 
 
+@pytest.fixture(scope="module")
+def belt(tmp_path_factory) -> tuple[Remedies, list[tuple[str, int, int]]]:
+    """The remedies of BELT, and the progress that was told of the search."""
+    task, told = task_of(tmp_path_factory.mktemp("belt"), BELT), []
+    found = find_remedies(task, refusal(task), seconds=LONG, progress=lambda *what: told.append(what))
+    return found, told
+
+
 @pytest.mark.parametrize(("how", "key"), [("move", "xyz"), ("turn", "rpy")])
-def test_a_frame_is_moved_as_far_as_it_must(tmp_path, how, key) -> None:
-    remedy = only(remedies(task_of(tmp_path, BELT)), "frame", f"{how} frame belt by ")
+def test_a_frame_is_moved_as_far_as_it_must(tmp_path, belt, how, key) -> None:
+    remedy = only(belt[0], "frame", f"{how} frame belt by ")
     written = remedy.text.split(": ")[1]
     assert written.startswith(f"{key} = [")
     planned = pathplan.plan(task_of(tmp_path, with_key(BELT, "frames.belt", written)))
@@ -158,8 +167,9 @@ def test_a_line_that_no_branch_follows_becomes_a_joint_step(tmp_path) -> None:
         '[[step]]\nmotion = "joint"\nto = { xyz = [300, -30, 250], rpy = [180, 0, 0] }\n'
         '[[step]]\nmotion = "line"\nto = { xyz = [-300, -30, 250], rpy = [180, 0, 0] }\n',
     )
-    found = remedies(task_of(tmp_path, text))
-    remedy = only(found, "motion")
+    task = task_of(tmp_path, text)
+    (remedy,) = joint_step(Trials(task, refusal(task), time.monotonic() + LONG))
+    assert remedy.what == "motion"
     assert remedy.step == 1 and "a joint step in place of the line" in remedy.text
     assert plans(task_of(tmp_path, text.replace('motion = "line"', 'motion = "joint"')))
 
@@ -171,7 +181,8 @@ def test_another_configuration(tmp_path) -> None:
         '[[step]]\nmotion = "joint"\nto = { xyz = [550, -100, 350], rpy = [180, 0, 0] }\n'
         'configuration = { elbow = "down" }\n',
     )
-    remedy = only(remedies(task_of(tmp_path, text)), "branch")
+    task = task_of(tmp_path, text)
+    (remedy,) = other_branches(Trials(task, refusal(task), time.monotonic() + LONG))
     assert remedy.changes["configuration"] == {"elbow": "up"}
     assert plans(task_of(tmp_path, text.replace('"down"', '"up"')))
 
@@ -294,9 +305,8 @@ def test_other_errors_have_no_remedies(tmp_path) -> None:
         find_remedies(replace(task, steps=task.steps[:1]), refusal(task))
 
 
-def test_progress_is_told(tmp_path) -> None:
-    task, told = task_of(tmp_path, BELT), []
-    find_remedies(task, refusal(task), seconds=LONG, progress=lambda *what: told.append(what))
+def test_progress_is_told(belt) -> None:
+    told = belt[1]
     assert told[0][:2] == ("remedies", 0) and told[-1][1] == told[-1][2]
 
 
@@ -316,10 +326,10 @@ def test_five_axes_take_the_roll_that_follows() -> None:
     assert plans(remedy.task)
 
 
-def test_a_task_too_long_to_plan_again_still_gets_its_remedies(tmp_path, monkeypatch) -> None:
+def test_a_task_too_long_to_plan_again_still_gets_its_remedies(tmp_path, belt, monkeypatch) -> None:
     """As if every task were long and no time left to plan it whole: found all the same, and said to be unproven."""
     task = task_of(tmp_path, BELT)
-    proven = [remedy.text for remedy in remedies(task)]
+    proven = [remedy.text for remedy in belt[0]]
     monkeypatch.setattr("pathplan.remedies.trials.LONG_TASK", 0)
     monkeypatch.setattr("pathplan.remedies.trials.SHARE", -1.0)
     found = remedies(task)
