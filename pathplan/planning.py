@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from pathplan.arm import Arm
     from pathplan.auditing import Audit, Evidence, LoadChange
     from pathplan.auditing.passes import Pass
+    from pathplan.auditing.tolerances import TurnedAside
     from pathplan.path.taskpath import Stretch, TaskPath
     from pathplan.savings import Saving
     from pathplan.timeline import Part
@@ -223,7 +224,28 @@ class Plan:
         ):
             at_rows, midway = worse_deviation(at_rows, one), worse_deviation(midway, between)
             peaks = worse_peaks(peaks, dense)
-        return Evidence(at_rows, midway, peaks, self._load_changes())
+        return Evidence(at_rows, midway, peaks, self._load_changes(), self._turned_aside())
+
+    def _turned_aside(self) -> tuple[TurnedAside, ...]:
+        """How far the tool leaves its orientation in the steps that tolerate it, at the rows and midway between."""
+        from pathplan.auditing.tolerances import worst_turns
+        from pathplan.timeline import evaluate
+
+        allowed = {step.index: step.orientation_tolerance or step.tilt for step in self.task.steps}
+        allowed = {index: angle for index, angle in allowed.items() if angle > 0}
+        found: dict[int, TurnedAside] = {}
+        for part in self.parts:
+            if part.stretch is None or not any(one.step in allowed for one in part.stretch.steps):
+                continue
+            for first in range(0, 2 * (part.last - part.first) + 1, _CHUNK):
+                ticks = np.arange(first, min(first + _CHUNK, 2 * (part.last - part.first) + 1))
+                local = np.asarray(ticks * (self.task.cycle / 2), dtype=np.float64)
+                rows = evaluate(part, local, len(self.task.arm.joints))
+                programmed, known = part.stretch.programmed(rows.s)
+                actual = part.stretch.arm.forward(rows.position)
+                times = part.first * self.task.cycle + local
+                worst_turns(found, allowed, actual[known], programmed[known], rows.step[known], times[known])
+        return tuple(found[index] for index in sorted(found))
 
     def _evidence_of(self, parts: Sequence[Part]) -> tuple[Any, Any, tuple[Any, ...]]:
         from pathplan.auditing import worse_deviation, worse_peaks
@@ -289,7 +311,7 @@ class Plan:
             local = (np.arange(first, min(first + _CHUNK, part.last - part.first + 1)) + shift) * cycle
             local = local[local <= part.timing.duration]
             rows = evaluate(part, np.asarray(local, dtype=np.float64), len(self.task.arm.joints))
-            programmed, known = part.stretch.programmed(rows.s)
+            programmed, known = part.stretch.followed(rows.s)
             actual = part.stretch.reached(rows.s, rows.position)
             times = np.asarray(part.first * cycle + local, dtype=np.float64)
             worst = worse_deviation(worst, path_deviation(actual, programmed, known, times, rows.step))

@@ -38,6 +38,7 @@ from pathplan.auditing.shares import (
     shares_of,
 )
 from pathplan.auditing.stamps import Stamps, finite_rows, found_cycle
+from pathplan.auditing.tolerances import turn_findings
 from pathplan.auditing.tool import (
     by_tool,
     nearest_singularity,
@@ -243,11 +244,12 @@ class _Judge:
             measured=self.measured,
             joints=joints[: self.arm.n],
             rows=joints[self.arm.n :],
-            findings=(*self._findings(evidence, drives), *pass_findings(passes)),
+            findings=(*self._findings(evidence, drives), *turn_findings(evidence.turns), *pass_findings(passes)),
             tool_speed=self.tool.peaks[TOOL[0]],
             tool_acceleration=self.tool.peaks[TOOL[1]],
             tool_turning_speed=self.tool.peaks[TOOL[2]],
             singularity=self.singularity,
+            turns=evidence.turns,
             passes=passes,
             pacing=self.clock.pacing(names) if self.measured == "columns" else (),
             speeds=step_speeds(self.tool.speeds, self.tool.caps.speed, names) if plan else (),

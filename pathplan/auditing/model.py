@@ -11,6 +11,7 @@ if TYPE_CHECKING:
     from pathplan.auditing.held import HeldSpeed
     from pathplan.auditing.passes import Pass
     from pathplan.auditing.planned import CornerUse, Deviation, StepSpeed
+    from pathplan.auditing.tolerances import TurnedAside
 
 __all__ = [
     "QUANTITIES",
@@ -146,6 +147,7 @@ class Audit:
     tool_acceleration: Peak | None = None
     tool_turning_speed: Peak | None = None
     singularity: Singularity | None = None
+    turns: tuple[TurnedAside, ...] = ()  # of the steps that tolerate that the tool leaves its orientation
     passes: tuple[Pass, ...] = ()  # where a programmed tool path comes near a singularity, by the plan
     pacing: tuple[StepPacing, ...] = ()
     speeds: tuple[StepSpeed, ...] = ()

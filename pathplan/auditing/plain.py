@@ -43,6 +43,14 @@ def audit_as_dict(audit: Audit) -> dict[str, Any]:
         **({"tool_turning_speed": turning} if turning is not None else {}),
         "singularity": singularity
         and {"smallest_singular_value": singularity.value, **_place(singularity.time, singularity.step)},
+        "turned_aside": [
+            {
+                **_place(turn.time, turn.step),
+                "angle_deg": math.degrees(turn.angle),
+                "allowed_deg": math.degrees(turn.allowed),
+            }
+            for turn in audit.turns
+        ],
         "passes": [_pass(found) for found in audit.passes],
         "pacing": [
             {

@@ -14,6 +14,7 @@ from pathplan.auditing.drives import LoadChange, torque_limits
 from pathplan.auditing.model import QUANTITIES, JointAudit
 from pathplan.auditing.passes import Pass
 from pathplan.auditing.shares import Array, Rows, larger, limit_rows, peaks_of, row_kinds, rows_of
+from pathplan.auditing.tolerances import TurnedAside
 
 __all__ = [
     "CornerUse",
@@ -83,6 +84,7 @@ class Evidence:
 
     `deviation_rows` and `deviation_midway` from `path_deviation` at the rows and halfway between them;
     `continuous` from `joint_peaks` over an evaluation of the trajectory 20 times denser than the rows, or ();
+    `turns` are of the steps that tolerate that the tool leaves its orientation;
     `loads` are the stops at which the arm takes up or leaves a load.
     """
 
@@ -90,6 +92,7 @@ class Evidence:
     deviation_midway: Deviation | None = None
     continuous: tuple[JointAudit, ...] = ()
     loads: tuple[LoadChange, ...] = ()
+    turns: tuple[TurnedAside, ...] = ()
 
 
 class Planned(Protocol):

@@ -91,7 +91,8 @@ class CartesianPath:
     `legs`: the moving steps in order; waits have none. `segments`: one row per cartesian leg. `taught`: the joint
     paths through taught points. Corners are not part of it: where a joint step takes part in one, they depend on the
     joints. `held` (m + 1, H): the held joints at the start and after each leg, and `course` along the segments; both
-    are known once what is `free` has been chosen (None: nothing is).
+    are known once what is `free` has been chosen (None: nothing is). Segments behind those of the legs are the same
+    bent within the tolerance of their steps (`pathplan.path.bending`); which is followed is chosen with the branches.
     """
 
     task: Task
@@ -102,6 +103,7 @@ class CartesianPath:
     held: Array
     taught: Mapping[Taught, JointPath] = field(default_factory=dict)
     free: Freedom | None = None
+    origin: Index | None = None  # (K,) of each segment the one that it bends; None: none is bent
 
     @property
     def follower(self) -> Follower:

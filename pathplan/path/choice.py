@@ -8,7 +8,7 @@ accelerating and stopping.
 
 from __future__ import annotations
 
-from collections.abc import Set
+from collections.abc import Mapping, Set
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,19 +27,27 @@ __all__ = ["Choice", "Routes", "candidate_states", "choose", "refused_target", "
 
 @dataclass(frozen=True, eq=False)
 class Routes:
-    """Where each state gets to along the line or arc that leaves it; rows only for states with such a leg.
+    """Where each state gets to along the line or arc that leaves it, and along the same bent; R rows.
 
-    `row` (S,): the row of a state, -1 if a joint step leaves it. Rows: `slot`, the track followed (-1:
-    none starts there); `turns` (n,) to add to the track; `end` (n,) where it arrives; `free`: it follows
-    to the end within the limits; `time`.
+    `row` (S,): the row of a state along what is programmed, -1 if a joint step leaves it; `bent`: its other rows. Rows:
+    `state` and `segment`; `slot`, the track followed (-1: none starts there); `turns` (n,) to add to the track; `end`
+    (n,) where it arrives; `free`: it follows to the end within the limits; `time`.
     """
 
     row: Index
+    bent: Mapping[int, list[int]]
+    state: Index
+    segment: Index
     slot: Index
     turns: Array
     end: Array
     free: Mask
     time: Array
+
+    def of(self, states: Index) -> Index:
+        """All rows of some states."""
+        more = [row for state in states.tolist() for row in self.bent.get(state, ())] if self.bent else []
+        return np.concatenate([self.row[states], np.array(more, dtype=np.intp)])
 
 
 @dataclass(frozen=True, eq=False)
@@ -48,6 +56,7 @@ class Choice:
 
     q: Array  # (m + 1, n), turns of endless joints resolved
     state: Index  # (m + 1,) rows of the candidate states
+    segment: Index  # (m,) that a cartesian leg follows, its own or one bent, else -1
     slot: Index  # (m,) track of a cartesian leg, else -1
     time: float  # s, by the velocity limits
 
@@ -131,6 +140,14 @@ def routes(path: CartesianPath, states: States, tracks: Tracks) -> Routes:
     row = np.full(len(segment), -1, dtype=np.intp)
     row[leaving] = np.arange(len(leaving))
     k = segment[leaving]
+    bent: dict[int, list[int]] = {}
+    if path.origin is not None:
+        for variant in range(len(segment_of_leg[segment_of_leg >= 0]), len(path.origin)):
+            more = np.flatnonzero(segment == path.origin[variant])
+            for number, state in enumerate(more.tolist()):
+                bent.setdefault(state, []).append(len(leaving) + number)
+            leaving = np.concatenate([leaving, more])
+            k = np.concatenate([k, np.full(len(more), variant, dtype=np.intp)])
     begin = tracks.q[tracks.first[k]] if len(k) else np.zeros((0, 1, arm.n))
     change = states.q[leaving][:, None] - begin
     turns = turns_between(change, revolute)
@@ -149,6 +166,9 @@ def routes(path: CartesianPath, states: States, tracks: Tracks) -> Routes:
     )
     return Routes(
         row=row,
+        bent=bent,
+        state=leaving,
+        segment=k,
         slot=slot,
         turns=turns,
         end=tracks.q[tracks.last[k], slot] + turns,
@@ -179,12 +199,12 @@ def choose(
     tracks: Tracks,
     ways: Routes,
     *,
-    barred_legs: Set[tuple[int, int]] = frozenset(),
+    barred_legs: Set[tuple[int, int, int]] = frozenset(),
     barred_states: Set[int] = frozenset(),
 ) -> Choice:
     """The states that make the task shortest in time by the velocity limits.
 
-    `barred_legs`: (leg, state it starts from) and `barred_states`: found unusable on the finished path.
+    `barred_legs`: (leg, state it starts from, segment or -1) and `barred_states`: found unusable on the finished path.
     Raises UnreachableError, naming step, share, pose and reason, where no state is left that can follow a
     step.
     """
@@ -192,12 +212,15 @@ def choose(
     endless = path.follower.endless
     cost = np.zeros(states.first[1])
     parents: list[Index] = []
+    taken: list[Index] = []
     for i, leg in enumerate(path.legs):
         here, there = states.of(i), states.of(i + 1)
         alive = np.flatnonzero(np.isfinite(cost)) + here.start
+        rows = np.full(len(alive), -1, dtype=np.intp)
         if leg.kind == "cartesian":
-            leaving = alive[ways.free[ways.row[alive]]]
-            rows = ways.row[leaving]
+            rows = ways.of(alive)
+            rows = rows[ways.free[rows]]
+            leaving = ways.state[rows]
             same = _same(ways.end[rows], states.q[there], endless)
             step = np.where(same, ways.time[rows][:, None], np.inf)
         else:
@@ -209,9 +232,10 @@ def choose(
                 step = _joint_step_times(arm, states.q[leaving], states.q[there], endless)
             else:
                 step = np.where(_same(states.q[leaving], states.q[there], endless), 0.0, np.inf)
-        for barred_leg, state in barred_legs:
+        for barred_leg, state, segment in barred_legs:
             if barred_leg == i:
-                step[leaving == state] = np.inf
+                barred = leaving == state
+                step[barred & (ways.segment[rows] == segment) if segment >= 0 else barred] = np.inf
         for state in barred_states:
             if there.start <= state < there.stop:
                 step[:, state - there.start] = np.inf
@@ -221,7 +245,8 @@ def choose(
         parent = step.argmin(axis=0)
         cost = step[parent, np.arange(len(parent))]
         parents.append((leaving[parent] - here.start).astype(np.intp))
-    return _trace(path, states, tracks, ways, parents, cost)
+        taken.append(rows[parent])
+    return _trace(path, states, ways, parents, taken, cost)
 
 
 def _same(reached: Array, q: Array, endless: Mask) -> Mask:
@@ -263,24 +288,26 @@ def _joint_step_times(arm: Arm, start: Array, end: Array, endless: Mask) -> Arra
 
 
 def _trace(
-    path: CartesianPath, states: States, tracks: Tracks, ways: Routes, parents: list[Index], cost: Array
+    path: CartesianPath, states: States, ways: Routes, parents: list[Index], taken: list[Index], cost: Array
 ) -> Choice:
     """Back from the cheapest last state, then forward again to resolve turns of endless joints."""
     m = len(path.legs)
     local = int(np.argmin(cost))
     state = np.empty(m + 1, dtype=np.intp)
     state[m] = states.first[m] + local
+    route = np.full(m, -1, dtype=np.intp)
     for i in range(m - 1, -1, -1):
+        route[i] = taken[i][local]
         local = int(parents[i][local])
         state[i] = states.first[i] + local
     q = states.q[state].copy()
-    slot = np.full(m, -1, dtype=np.intp)
+    slot, segment = np.full(m, -1, dtype=np.intp), np.full(m, -1, dtype=np.intp)
     endless = path.follower.endless
     for i, leg in enumerate(path.legs):
         given = _given_joints(path, i) is not None
         if leg.kind == "cartesian":
-            row = ways.row[state[i]]
-            slot[i] = ways.slot[row]
+            row = route[i]
+            slot[i], segment[i] = ways.slot[row], ways.segment[row]
             near = q[i] + ways.end[row] - states.q[state[i]]
         elif leg.kind == "taught":
             begin, end = _taught_ends(leg)
@@ -290,4 +317,4 @@ def _trace(
         else:
             near = q[i]
         q[i + 1] -= turns_between(q[i + 1] - near, endless)
-    return Choice(q, state, slot, float(cost.min()))
+    return Choice(q, state, segment, slot, float(cost.min()))

@@ -8,6 +8,7 @@ import numpy as np
 
 from pathplan.errors import PathplanError, UnreachableError
 from pathplan.path.assembly import assemble
+from pathplan.path.bending import with_bends
 from pathplan.path.bounds import Crossing, first_crossing
 from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
 from pathplan.path.choice import Choice, Routes, candidate_states, choose, routes
@@ -79,8 +80,8 @@ def _decided(task: Task, say: Progress) -> Iterator[CartesianPath]:
 def _followed(path: CartesianPath, say: Progress) -> TaskPath:
     """The joint path of a task in which nothing is free any more."""
     task = path.task
-    frames, states, tracks, ways = _tracked(path, say)
-    barred_legs: set[tuple[int, int]] = set()
+    path, frames, states, tracks, ways = _tracked(path, say)
+    barred_legs: set[tuple[int, int, int]] = set()
     barred_states: set[int] = set()
     refusal: PathplanError | None = None
     for _ in range(_CHOICES):
@@ -116,8 +117,8 @@ def check_branches(task: Task) -> None:
     along the steps tell. Corners, and limits between samples, are left aside.
     """
     refusal: UnreachableError | None = None
-    for path in _decided(task, _silent):
-        _, states, tracks, ways = _tracked(path, _silent)
+    for decided in _decided(task, _silent):
+        path, _, states, tracks, ways = _tracked(decided, _silent)
         try:
             choose(path, states, tracks, ways)
             return
@@ -127,13 +128,16 @@ def check_branches(task: Task) -> None:
     raise refusal
 
 
-def _tracked(path: CartesianPath, say: Progress) -> tuple[Array, States, Tracks, Routes]:
-    """Tool frames of the legs, the states at the targets, and every branch along the steps."""
+def _tracked(path: CartesianPath, say: Progress) -> tuple[CartesianPath, Array, States, Tracks, Routes]:
+    """The path with its steps bent where they tolerate it, tool frames of the legs, the states at the targets, and
+    every branch along the steps.
+    """
     say("path", 1, _PARTS)
     frames = tool_frames(path)
     states = candidate_states(path, frames)
     rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
     tracks = track(path.course, path.segments, frames[rows])
+    path, tracks = with_bends(path, tracks, frames[rows])
     ways = routes(path, states, tracks)
     say("path", 2, _PARTS)
     return frames, states, tracks, ways
@@ -151,13 +155,15 @@ def _check_given_joints(task: Task) -> None:
             check_positions(step.target.joints, task.arm, step.where)
 
 
-def _bar(layout: Layout, choice: Choice, span: int, barred_legs: set[tuple[int, int]], barred_states: set[int]) -> None:
+def _bar(
+    layout: Layout, choice: Choice, span: int, barred_legs: set[tuple[int, int, int]], barred_states: set[int]
+) -> None:
     """Bar what led to a span: the state its step starts from, or the state in the middle of its corner."""
     leg = int(layout.spans.motions.leg[layout.spans.before[span]])
     if layout.spans.corner[span]:
         barred_states.add(int(choice.state[leg + 1]))
     else:
-        barred_legs.add((leg, int(choice.state[leg])))
+        barred_legs.add((leg, int(choice.state[leg]), int(choice.segment[leg])))
 
 
 def _trouble_words(path: CartesianPath, layout: Layout, trouble: Trouble) -> UnreachableError:

@@ -15,11 +15,12 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, fields, replace
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.path.bends import Bend
 from pathplan.path.curve import CurveSize, curve_derivatives
 from pathplan.path.joint import Array, JointPath
 from pathplan.path.rotations import cross, exponential, rotate, rotation_vector, turn_about
@@ -86,7 +87,8 @@ class Segments:
     """K motions as arrays; see the module's formula. All in the base frame, SI, over s in [0, length].
 
     Of a curve, `base` and `rotation` are where its own frame stands, and `curve` is its place in `curves`; of a uniform
-    motion `curve` is -1. Where `rolls` has one, the tool is turned about its own z axis by that much on the way.
+    motion `curve` is -1. Where `rolls` has one, the tool is turned about its own z axis by that much on the way; where
+    `bends` has one, it leaves the orientation that is programmed.
     """
 
     base: Array  # (K, 3)
@@ -104,6 +106,7 @@ class Segments:
     curve: Index  # (K,)
     curves: tuple[Curve, ...] = ()
     rolls: tuple[JointPath | None, ...] = ()  # (K,) rad over [0, length], or () for none at all
+    bends: tuple[Bend | None, ...] = ()  # (K,), or () for none at all
 
     def __len__(self) -> int:
         return len(self.length)
@@ -112,7 +115,17 @@ class Segments:
         """The rows k as a batch of their own."""
         arrays: dict[str, Any] = {name: getattr(self, name)[k] for name in _ARRAYS}
         rolls = tuple(self.rolls[i] for i in k) if self.rolls else ()
-        return Segments(**arrays, curves=self.curves, rolls=rolls)
+        bends = tuple(self.bends[i] for i in k) if self.bends else ()
+        return Segments(**arrays, curves=self.curves, rolls=rolls, bends=bends)
+
+    def bent(self, k: Index, bends: Sequence[Bend]) -> Segments:
+        """The same with segments k (V,) once more behind the last, bent."""
+        every = self.take(np.concatenate([np.arange(len(self)), k]))
+        return replace(every, bends=(None,) * len(self) + tuple(bends))
+
+    def unbent(self) -> Segments:
+        """The same as programmed."""
+        return replace(self, bends=()) if self.bends else self
 
     @classmethod
     def join(cls, parts: Sequence[Segments]) -> Segments:
@@ -155,8 +168,10 @@ class Segments:
             base = self.rotation[k[rows]]
             position[rows] = self.base[k[rows]] + rotate(base, points[0])
             rotation[rows] = base @ turned
-        for law, rows in self._on_rolls(k):
+        for law, rows in _laws(self.rolls, k):
             rotation[rows] = rotation[rows] @ turn_about(_Z[None], law(s[rows])[:, 0])
+        for bend, rows in _laws(self.bends, k):
+            rotation[rows] = rotation[rows] @ bend.rotation(s[rows])
         return poses_of(position, rotation)
 
     def jets(self, k: Index, s: Array, rates: Array | None = None) -> Jets:
@@ -183,10 +198,14 @@ class Segments:
             position[0, rows] += self.base[k[rows]]
             turning[:, rows] = [rotate(base, w) for w in turns]
             rotation[rows] = base @ turned
-        for law, rows in self._on_rolls(k):
+        for law, rows in _laws(self.rolls, k):
             axis = rotation[rows, :, 2]
             turning[:, rows] = _rolling(turning[:, rows], axis, law.derivatives(s[rows]))
             rotation[rows] = rotation[rows] @ turn_about(_Z[None], law(s[rows])[:, 0])
+        for bend, rows in _laws(self.bends, k):
+            aside = bend.derivatives(s[rows])
+            turning[:, rows] = _turned_along(turning[:, rows], rotation[rows], aside[1:])
+            rotation[rows] = rotation[rows] @ exponential(aside[0])
         if rates is not None:
             position[1:], turning = _chained(position[1:], rates), _chained(turning, rates)
         return Jets(position, rotation, turning)
@@ -199,17 +218,21 @@ class Segments:
         for i in np.unique(number[number >= 0]):
             yield self.curves[i], np.flatnonzero(number == i)
 
-    def _on_rolls(self, k: Index) -> Iterator[tuple[JointPath, Index]]:
-        """Each turn about the tool's axis among segments k (N,), -1 for none, and the rows it is for."""
-        if not self.rolls:
-            return
-        for i in np.unique(k[k >= 0]):
-            law = self.rolls[i]
-            if law is not None:
-                yield law, np.flatnonzero(k == i)
+
+_Law = TypeVar("_Law", Bend, JointPath)
 
 
-_ARRAYS = tuple(f.name for f in fields(Segments))[:-2]
+def _laws(laws: Sequence[_Law | None], k: Index) -> Iterator[tuple[_Law, Index]]:
+    """Each of the laws (K,) among segments k (N,), -1 for none, and the rows it is for."""
+    if not laws:
+        return
+    for i in np.unique(k[k >= 0]):
+        law = laws[i]
+        if law is not None:
+            yield law, np.flatnonzero(k == i)
+
+
+_ARRAYS = tuple(f.name for f in fields(Segments))[:-3]
 _Z = np.array([0.0, 0.0, 1.0])
 
 
@@ -262,17 +285,23 @@ def superpose(first: Jets, second: Jets, corner: Array) -> Jets:
     position = first.position + second.position
     position[0] -= corner[:, :3, 3]
     lead = first.rotation @ corner[:, :3, :3].transpose(0, 2, 1)
-    a, a1, a2 = first.turning
-    b, b1, b2 = (rotate(lead, w) for w in second.turning)  # as seen from the base, turned along with the first
+    return Jets(position, lead @ second.rotation, _turned_along(first.turning, lead, second.turning))
+
+
+def _turned_along(first: Array, lead: Array, second: Array) -> Array:
+    """Turning rate and its derivatives (3, N, 3) of what turns by `second` within what turns by `first`, whose rotation
+    is `lead` (N, 3, 3).
+    """
+    a, a1, a2 = first
+    b, b1, b2 = (rotate(lead, w) for w in second)  # as seen from the base, turned along with the first
     carried = cross(a, b)
-    turning = np.stack(
+    return np.stack(
         [
             a + b,
             a1 + b1 + carried,
             a2 + b2 + cross(a1, b) + cross(a, carried) + 2.0 * cross(a, b1),
         ]
     )
-    return Jets(position, lead @ second.rotation, turning)
 
 
 def line(start: Array, end: Array, arm_length: float) -> Segments:

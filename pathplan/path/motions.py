@@ -95,7 +95,7 @@ def motions_of(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
     weights = joint_weights(arm)
     change = np.diff(choice.q, axis=0)
     joint_length = np.linalg.norm(change * weights, axis=1)
-    segment = np.array([leg.segment for leg in path.legs], dtype=np.intp)
+    segment = choice.segment
     kind = np.array([leg.kind for leg in path.legs])
     leg = np.flatnonzero((segment >= 0) | (kind == "taught") | ((kind == "joint") & (joint_length > NO_MOTION)))
     length = joint_length[leg]
@@ -138,9 +138,10 @@ def _reference(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
     legs = np.flatnonzero(segment >= 0)
     if not len(legs):
         return Reference(np.array([0.0, 1.0]), np.zeros((2, path.task.arm.n)), np.ones(1))
-    slot = choice.slot[legs]
-    # Legs with segments stand in the order of their segments.
-    shift = choice.q[legs] - tracks.q[tracks.first, slot]
+    slot = np.zeros(len(tracks.first), dtype=np.intp)  # of what is not followed it doesn't matter
+    slot[segment[legs]] = choice.slot[legs]
+    shift = np.zeros((len(slot), path.task.arm.n))
+    shift[segment[legs]] = choice.q[legs] - tracks.q[tracks.first[segment[legs]], choice.slot[legs]]
     revolute = np.array([joint.kind == "revolute" for joint in path.task.arm.joints])
     shift = np.where(revolute, 2.0 * np.pi * np.round(shift / (2.0 * np.pi)), 0.0)
     q = tracks.q[np.arange(len(tracks.s)), slot[tracks.segment]] + shift[tracks.segment]

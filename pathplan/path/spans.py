@@ -8,7 +8,8 @@ or out, and over which length, is as in `pathplan.path.corners`.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -85,6 +86,12 @@ class Spans:
         free = np.append(free, False)  # of what has no segment
         segment = self.motions.segment
         return free[segment[self.before]] | (self.corner & free[segment[self.after]])
+
+    @cached_property
+    def unbent(self) -> Spans:
+        """The same spans as programmed, the tool in its own orientation."""
+        segments = self.motions.segments
+        return self if not segments.bends else replace(self, motions=replace(self.motions, segments=segments.unbent()))
 
     def sides(self, i: Index, at: Array) -> tuple[Array, Array, Array, Array]:
         """Where span i stands at `at` (N,): s on the motion before, its rates (3, N), s on the one

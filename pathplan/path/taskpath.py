@@ -65,14 +65,21 @@ class Stretch:
         None is programmed (NaN, False) where the motion is straight in joint space, and in a corner with
         such a step.
         """
+        return self._poses(self.spans.unbent, s)
+
+    def followed(self, s: ArrayLike) -> tuple[Array, NDArray[np.bool_]]:
+        """The same, the tool turned aside within the tolerance of its step where it is."""
+        return self._poses(self.spans, s)
+
+    def _poses(self, spans: Spans, s: ArrayLike) -> tuple[Array, NDArray[np.bool_]]:
         at = np.clip(np.atleast_1d(np.asarray(s, dtype=float)), 0.0, self.path.length)
         place = np.clip(np.searchsorted(self.span_start, at, side="right") - 1, 0, len(self.span) - 1)
         i = self.span[place]
-        known = self.spans.programmed()[i]
+        known = spans.programmed()[i]
         poses = np.full((len(at), 4, 4), np.nan)
         if known.any():
             rows = i[known]
-            jets = self.spans.tool_jets(rows, np.minimum(at - self.span_start[place], self.spans.length[i])[known])
+            jets = spans.tool_jets(rows, np.minimum(at - self.span_start[place], spans.length[i])[known])
             poses[known] = poses_of(jets.position[0], jets.rotation)
         return poses, known
 

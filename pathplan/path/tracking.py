@@ -65,6 +65,21 @@ class Tracks:
         """(K, B): the branch follows the whole segment."""
         return np.logical_and.reduceat(self.ok, self.first, axis=0) if len(self.first) else self.ok[:0]
 
+    def followed_by(self, more: Tracks) -> Tracks:
+        """With the tracks of further segments behind."""
+        count, samples = len(self.first), len(self.s)
+        shifted = tuple(replace(crossing, segment=crossing.segment + count) for crossing in more.crossings)
+        return Tracks(
+            np.concatenate([self.segment, more.segment + count]),
+            np.concatenate([self.s, more.s]),
+            np.concatenate([self.q, more.q]),
+            np.concatenate([self.ok, more.ok]),
+            np.concatenate([self.reached, more.reached]),
+            np.concatenate([self.first, more.first + samples]),
+            np.concatenate([self.last, more.last + samples]),
+            self.crossings + shifted,
+        )
+
 
 def track(course: Course, segments: Segments, tool_from_own: Array, *, thorough: bool = False) -> Tracks:
     """Every branch along every segment, the held joints on their course. `tool_from_own` (K, 4, 4): base_from_tool @

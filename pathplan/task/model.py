@@ -124,6 +124,8 @@ class Step:
     taught: Taught | None = None  # motion == "taught"; the target is its last point
     axes: Mapping[str, float] = field(default_factory=dict)  # where joints that are free otherwise stand at its end
     roll_free: bool = False  # the turn of the tool about its own z axis is not asked
+    orientation_tolerance: float = 0.0  # rad that the tool may leave its orientation near singularities
+    tilt: float = 0.0  # the same, of its z axis alone: the tool doesn't turn about it
 
 
 @dataclass(frozen=True)

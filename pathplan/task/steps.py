@@ -25,9 +25,10 @@ MOTIONS: tuple[Motion, ...] = ("joint", "line", "arc", "curve", "taught")
 HOLDING: tuple[Motion, ...] = ("line", "arc", "curve")  # those that can hold a tool speed
 CAP_KEYS = ("speed", "acceleration", "turning_speed")
 MOVING_KEYS = ("motion", "to", "offset", "blend", *CAP_KEYS, "held_speed", "configuration", "axes", "roll")
+TOLERANCES = ("orientation_tolerance", "tilt")
 ARC_KEYS = ("via", "centre", "axis", "angle", "tool_along")
 CARRYING_KEYS = ("tool", "payload")
-STEP_KEYS = ("name", "mark", "wait", *CARRYING_KEYS, *MOVING_KEYS, *ARC_KEYS, "along")
+STEP_KEYS = ("name", "mark", "wait", *CARRYING_KEYS, *MOVING_KEYS, *TOLERANCES, *ARC_KEYS, "along")
 ROLLS = ("fixed", "free")
 CONFIGURATION = {
     "shoulder": ("left", "right"),
@@ -39,6 +40,7 @@ CONFIGURATION = {
 # Below these a plan would need more rows than any file holds; they are a slip of the unit.
 _LEAST = {"length": 1e-6, "angle": 1e-5, "ratio": 1e-4, "speed": 1e-5, "acceleration": 1e-4}
 _LEAST["angular_speed"] = np.deg2rad(1e-3)
+_MOST_TOLERANCE = float(np.deg2rad(30.0))
 _MOST_ANGLE = np.deg2rad(3600.0)
 
 
@@ -81,6 +83,7 @@ def read_step(table: Table, index: int, where: str, places: Places, caps: Caps) 
     fields["held_speed"] = _held_speed(table, own.speed, arm)
     fields["configuration"] = read_configuration(table, places)
     fields["axes"] = read_axes(table, places.arm)
+    fields |= read_tolerance(table, motion, places.arm)
     fields["roll_free"] = table.choice("roll", ROLLS, ROLLS[0]) == ROLLS[1]
     if motion in ("curve", "taught"):
         return Step(**fields, **_along(table, motion, places))
@@ -179,6 +182,28 @@ def read_configuration(table: Table, places: Places) -> dict[str, str]:
             raise asked.error(part, complaint)
         words[part] = asked.choice(part, known[part])
     return words
+
+
+def read_tolerance(table: Table, motion: Motion, arm: Arm) -> dict[str, float]:
+    """Keys `orientation_tolerance` and `tilt`: how far the tool may leave its orientation, one of them at most."""
+    asked = [key for key in TOLERANCES if table.has(key)]
+    if not asked:
+        return {}
+    key = asked[-1]
+    if len(asked) > 1:
+        raise table.error(key, "expected either orientation_tolerance or tilt, got both")
+    if motion not in HOLDING:
+        raise table.error(key, f'only a line, an arc or a curve takes {key}, this motion is "{motion}"')
+    if table.has("roll") and table.choice("roll", ROLLS) == "free":
+        raise table.error(key, f'{key} goes with roll = "fixed", got "free"')
+    if arm.n != 6 or arm.structure != "spherical wrist":
+        raise table.error(key, f"helps where six axes end in a spherical wrist, which arm {arm.name} has not")
+    value = _at_least(table, key, "angle")
+    assert value is not None
+    if value > _MOST_TOLERANCE:
+        most = format_quantity(_MOST_TOLERANCE, "angle")
+        raise table.error(key, f"expected at most {most}, got {toml_text(table.data[key])}")
+    return {key: value}
 
 
 def read_axes(table: Table, arm: Arm) -> dict[str, float]:
