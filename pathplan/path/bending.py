@@ -34,16 +34,17 @@ __all__ = ["least_turn", "with_bends"]
 
 _WIDTH = 0.5  # path parameter on each side of a bump: the wider, the gentler, and it needs no more angle
 _GENTLE = 4.0  # and at least that over the root of its angle: joints then turn about once a rad of the path
-_STEEPEST = 8.0  # a bump narrower than this many times its angle turns the tool faster than it saves
+_STEEPEST = 4.0  # a bump narrower than this many times its angle turns the tool faster than it saves
 _MET = 1e-7  # rad: nearer, the path runs through as it is
 _NEAREST = 1.5  # angles to a singularity are at most about this times the smallest singular value times two
 _GRID = np.linspace(-1.0, 1.0, 9)
 _ROUNDS = 20
 _STEPS = 60
-_EXACT = 1e-12
+_EXACT = 1e-11
+_SAME = 1e-8  # rad
 _DIFFERENCE = 1e-6
 _RANK = 1e-7
-_DAMPING = 1e-6
+_DAMPING = 1e-4
 
 
 def with_bends(path: CartesianPath, tracks: Tracks, frames: Array) -> tuple[CartesianPath, Tracks]:
@@ -105,9 +106,7 @@ def _kept(segments: Segments, blend: Blend | None) -> float:
     return min(blend.value / rate if rate > 0 else np.inf, length)
 
 
-def _bump(
-    arm: Arm, segments: Segments, between: Array, near: Array, tolerance: float, *, upright: bool
-) -> Bump | None:
+def _bump(arm: Arm, segments: Segments, between: Array, near: Array, tolerance: float, *, upright: bool) -> Bump | None:
     """The bump over the nearest approach between s[0] and s[2], near joints (n,); None where none is within tolerance.
 
     Its width is still that which is wanted.
@@ -175,6 +174,7 @@ def least_turn(arm: Arm, pose: Array, q: Array, *, upright: bool) -> Array | Non
         return None
     missed = _measure(arm, kind, q)
     q = q.copy()
+    before = np.inf
     shifts = _DIFFERENCE * np.concatenate([np.eye(arm.n), -np.eye(arm.n)])
     for _ in range(_STEPS):
         reached, jacobian = arm.forward(q), arm.jacobian(q)
@@ -194,8 +194,10 @@ def least_turn(arm: Arm, pose: Array, q: Array, *, upright: bool) -> Array | Non
         damped = way.T @ way + _DAMPING * np.eye(way.shape[1])  # what hardly turns the tool is left alone
         step -= free @ np.linalg.solve(damped, way.T @ (turn + turning @ step))
         largest = float(np.abs(step).max())
-        if np.abs(left).max() < _EXACT and largest < 1e-8:
+        angle = float(np.linalg.norm(turn))
+        if np.abs(left).max() < _EXACT and abs(angle - before) < _SAME:
             return np.asarray(turn) if nearness(arm, q).value < _MET else None
+        before = angle
         q = q + step * min(1.0, 0.2 / max(largest, 1e-300))
     return None
 

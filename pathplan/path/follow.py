@@ -140,7 +140,7 @@ def _tracked(path: CartesianPath, say: Progress) -> tuple[CartesianPath, Array, 
     path, tracks = with_bends(path, tracks, frames[rows])
     ways = routes(path, states, tracks)
     say("path", 2, _PARTS)
-    return frames, states, tracks, ways
+    return path, frames, states, tracks, ways
 
 
 def _silent(what: str, done: int, total: int) -> None:

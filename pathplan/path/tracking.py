@@ -158,9 +158,7 @@ class _Samples(NamedTuple):
     looked_at: Mask
 
 
-def _through(
-    inverse: Inverse, samples: _Samples, k: int, at: float, revolute: Mask
-) -> tuple[_Samples, Index]:
+def _through(inverse: Inverse, samples: _Samples, k: int, at: float, revolute: Mask) -> tuple[_Samples, Index]:
     """The samples with two beside the singularity met at `at` on segment k, none nearer, and the slots behind it
     changed about so that every track goes on smoothly; and the slot (B,) in which each does.
     """
