@@ -22,11 +22,11 @@ from pathplan.task.model import Step, Task
 __all__ = ["assemble", "caps_along"]
 
 
-def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces) -> TaskPath:
-    """The finished path of a task."""
+def assemble(task: Task, path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces) -> TaskPath:
+    """The finished path of a task, of the joints that its arm has."""
     spans = layout.spans
     start = _starts(spans, layout.stretch)
-    arms = _Equipped(path.task.arm)
+    arms = _Equipped(task.arm)
     sequence: list[Stretch | Wait] = []
     stretch_of_motion = np.empty(len(spans.motions), dtype=np.intp)
     first_motion: dict[int, int] = {}
@@ -46,17 +46,17 @@ def assemble(path: CartesianPath, choice: Choice, layout: Layout, pieces: Pieces
             if first_motion[number] == motion:
                 span = np.arange(span_bounds[number], span_bounds[number + 1])
                 part = slice(int(piece_bounds[number]), int(piece_bounds[number + 1]))
-                joint_path = _joint_path(pieces, part, start)
-                caps = caps_along(path.task, path, spans, span, start[span])
+                joint_path = _joint_path(pieces, part, start, task.arm.n)
+                caps = caps_along(task, path, spans, span, start[span])
                 arm = arms.carrying(step)
                 sequence.append(Stretch(joint_path, arm, tuple(parts[number]), caps, spans, span, start[span]))
         elif step.motion == "wait" or step.index not in parts.flown_by:
             sequence.append(Wait(step.index, step.wait))
     corners = _corners(path, layout, start, stretch_of_motion, arms)
     findings = tuple(sorted((*path.findings, *layout.findings), key=lambda finding: finding.step))
-    targets = choice.q.copy()
+    targets = choice.q[:, : task.arm.n].copy()
     targets.flags.writeable = False
-    return TaskPath(path.task, path, tuple(sequence), corners, findings, targets)
+    return TaskPath(task, path, tuple(sequence), corners, findings, targets)
 
 
 class _Equipped:
@@ -92,10 +92,10 @@ def _starts(spans: Spans, stretch: NDArray[np.intp]) -> Array:
     return begins
 
 
-def _joint_path(pieces: Pieces, part: slice, start: Array) -> JointPath:
+def _joint_path(pieces: Pieces, part: slice, start: Array, joints: int) -> JointPath:
     begins = start[pieces.span[part]] + pieces.start[part]
     breaks = np.append(begins, begins[-1] + pieces.width[part][-1])
-    coefficients = pieces.coefficients[:, part]
+    coefficients = pieces.coefficients[:, part, :joints]
     used = np.flatnonzero(coefficients.any(axis=(1, 2)))
     first = min(int(used[0]) if len(used) else 7, 6)
     return JointPath.from_pieces(breaks, coefficients[first:])
@@ -160,6 +160,7 @@ def _corners(
         blend = junction.blend
         asked = junction.step.blend
         leg = path.legs[spans.motions.leg[j]]
+        carrying = arms.carrying(leg.step)
         if blend is not None:
             s_from = float(start[span_of[j]])
             s_to = s_from + float(spans.length[span_of[j]])
@@ -177,7 +178,7 @@ def _corners(
                 stretch=number,
                 s_from=s_from,
                 s_to=s_to,
-                pose=leg.end if leg.view == 0 else arms.carrying(leg.step).forward(spans.motions.end[j]),
+                pose=leg.end if leg.view == 0 else carrying.forward(spans.motions.end[j, : carrying.n]),
             )
         )
     return tuple(corners)

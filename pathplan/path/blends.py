@@ -14,6 +14,7 @@ from pathplan.errors import InputError
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
 from pathplan.path.motions import Motions
+from pathplan.path.newton import joint_weights
 from pathplan.task.model import Blend, Step
 from pathplan.units import format_quantity
 
@@ -23,7 +24,8 @@ _SAMPLES = 33  # of a step, where something is measured along it
 
 
 def _revolute(motions: Motions) -> list[int]:
-    return [i for i, joint in enumerate(motions.arm.joints) if joint.kind == "revolute"]
+    weights = joint_weights(motions.arm)  # a virtual roll counts nothing
+    return [i for i, joint in enumerate(motions.arm.joints) if joint.kind == "revolute" and weights[i] > 0.0]
 
 
 def asked_sizes(motions: Motions, blends: Sequence[Blend | None], steps: Sequence[Step]) -> Array:

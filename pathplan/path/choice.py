@@ -18,7 +18,7 @@ from pathplan.errors import PathplanError
 from pathplan.path.cartesian import CartesianPath, Leg
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
-from pathplan.path.refusals import no_branch_follows, no_state_asked, not_with_held
+from pathplan.path.refusals import no_branch_follows, no_state_asked, not_with_held, roll_hint
 from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, expand, judged_rows, matching
 from pathplan.path.tracking import Tracks, turns_between
 
@@ -117,7 +117,8 @@ def refused_target(path: CartesianPath, leg: int, pose: Array) -> PathplanError:
     try:
         follower.views[path.legs[leg].view].inverse(pose)
     except PathplanError as refusal:
-        return type(refusal)(f"{step.where}: {refusal}", data={**refusal.data, "step": step.index})
+        hint = roll_hint(path.task.arm, step, pose)
+        return type(refusal)(f"{step.where}: {refusal}{hint}", data={**refusal.data, "step": step.index})
     if follower.held:
         return not_with_held(path, leg, pose)
     raise AssertionError(f"{step.where}: no state at the target, yet the arm's inverse has answers")

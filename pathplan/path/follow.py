@@ -13,6 +13,7 @@ from pathplan.path.bounds import Crossing, first_crossing
 from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
 from pathplan.path.choice import Choice, Routes, candidate_states, choose, routes
 from pathplan.path.fit import Pieces, Trouble, fit
+from pathplan.path.five import decides_roll, with_virtual_roll
 from pathplan.path.geometry import poses_of
 from pathplan.path.hermite import derivatives_at
 from pathplan.path.joint import Array
@@ -57,7 +58,7 @@ def follow_task(task: Task, progress: Progress | None = None) -> TaskPath:
     refusal: UnreachableError | None = None
     for path in _decided(task, say):
         try:
-            return _followed(path, say)
+            return _followed(path, task, say)
         except UnreachableError as found:
             refusal = refusal or found
     assert refusal is not None
@@ -68,6 +69,8 @@ def _decided(task: Task, say: Progress) -> Iterator[CartesianPath]:
     """The programmed geometry of a task, everything that it leaves free decided: ways to do so, the best first."""
     say("path", 0, _PARTS)
     _check_given_joints(task)
+    if any(step.roll_free for step in task.steps) and decides_roll(task.arm):
+        task = with_virtual_roll(task)
     path = cartesian_path(task)
     if path.free is None or not path.free.chosen:
         yield settled(path, None)
@@ -77,9 +80,8 @@ def _decided(task: Task, say: Progress) -> Iterator[CartesianPath]:
         yield settled(path, way, tightness)
 
 
-def _followed(path: CartesianPath, say: Progress) -> TaskPath:
+def _followed(path: CartesianPath, task: Task, say: Progress) -> TaskPath:
     """The joint path of a task in which nothing is free any more."""
-    task = path.task
     path, frames, states, tracks, ways = _tracked(path, say)
     barred_legs: set[tuple[int, int, int]] = set()
     barred_states: set[int] = set()
@@ -96,14 +98,14 @@ def _followed(path: CartesianPath, say: Progress) -> TaskPath:
         say("path", 4, _PARTS)
         try:
             pieces = fit(layout.spans)
-            crossing = first_crossing(pieces, task.arm.limits)
+            crossing = first_crossing(pieces, path.task.arm.limits)
         except Trouble as trouble:
             found = _trouble_words(path, layout, trouble)
             span = trouble.span
         else:
             if crossing is None:
                 say("path", 5, _PARTS)
-                return assemble(path, choice, layout, pieces)
+                return assemble(task, path, choice, layout, pieces)
             found = _crossing_words(path, layout, pieces, crossing)
             span = int(pieces.span[crossing.piece])
         refusal = refusal or found

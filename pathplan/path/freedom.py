@@ -13,6 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from pathplan.arm.relative import ROLL
 from pathplan.path.follower import Follower
 from pathplan.path.geometry import Mask
 from pathplan.path.joint import Array
@@ -86,6 +87,8 @@ class Knowledge:
         if not self.follower.held and not self.follower.carriers and not rolling.any():
             return None
         roll = np.zeros(len(steps) + 1, dtype=bool)
+        if ROLL in self.follower.arm.joint_names:  # five axes decide it by themselves
+            return Freedom(np.array(self.known), np.array(self.kept).reshape(len(steps), -1), roll, roll[1:])
         for i, step in enumerate(steps):
             if not step.roll_free:
                 continue

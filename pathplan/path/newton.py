@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.arm import Arm
+from pathplan.arm.relative import ROLL
 from pathplan.path.joint import Array
 from pathplan.path.rotations import rotation_vector
 
@@ -23,7 +24,15 @@ _RANK = 1e-9
 
 
 def joint_weights(arm: Arm) -> Array:
-    """(n,) what one unit of each joint counts in the path parameter: 1 a rad, 1 / arm length a metre."""
+    """(n,) what one unit of each joint counts in the path parameter: 1 a rad, 1 / arm length a metre; a virtual roll of
+    the tool counts nothing.
+    """
+    weights = _scales(arm)
+    weights[[joint.name == ROLL for joint in arm.joints]] = 0.0
+    return weights
+
+
+def _scales(arm: Arm) -> Array:
     return np.array([1.0 if joint.kind == "revolute" else 1.0 / arm.length for joint in arm.joints])
 
 
@@ -45,7 +54,7 @@ def solve_near(arm: Arm, poses: Array, guess: Array, held: tuple[int, ...] = ())
     converged when the pose is met to `CONVERGED`, or as near to it as rounding lets a step come.
     """
     q = np.array(guess, dtype=float)
-    weights = joint_weights(arm)
+    weights = _scales(arm)
     metric = np.array([1.0 / arm.length] * 3 + [1.0] * 3)
     free = [i for i in range(arm.n) if i not in held]
     error = np.full(len(q), np.inf)

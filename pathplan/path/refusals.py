@@ -31,6 +31,7 @@ __all__ = [
     "no_state_asked",
     "not_with_held",
     "place_text",
+    "roll_hint",
     "rpy_of",
 ]
 
@@ -77,6 +78,15 @@ def not_with_held(path: CartesianPath, leg: int, pose: Array) -> UnreachableErro
         where.append(f"{arm.joint_names[i]} {at}")
     text = f"{step.where}: no branch reaches the pose within the limits with {' and '.join(where)}"
     return UnreachableError(text, data={"step": step.index, "pose": pose})
+
+
+def roll_hint(arm: Arm, step: Step, pose: Array) -> str:
+    """What to say of a pose (4, 4) of the arm's own tool that five axes reach, if not with that roll; "" of others."""
+    if step.roll_free or len(arm.tool_joints) != 5 or not arm.serves_pointing:
+        return ""
+    if not arm.with_tool_roll().inverse_batch(pose[None]).valid.any():
+        return ""
+    return '; roll = "free" in every step would do, if the tool may be turned anyhow about its axis'
 
 
 def no_state_asked(leg: Leg, there: Sequence[Mapping[str, str]]) -> UnreachableError:
@@ -211,7 +221,8 @@ def _outcome(
     at = _last_reached(
         path.course.take(np.array([entry.segment])), segment, frame, slot, float(s[before]), float(s[stop])
     )
-    return outcome(at, f"the {motion_words(entry.step)} leaves the reach of the arm", q[before])
+    hint = roll_hint(arm, entry.step, segment.poses(np.array([0]), s[[stop]])[0] @ frame[0])
+    return outcome(at, f"the {motion_words(entry.step)} leaves the reach of the arm{hint}", q[before])
 
 
 def _held(arm: Arm, segment: Segments, s: float, q: Array) -> tuple[str, dict[str, Any]] | None:

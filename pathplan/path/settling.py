@@ -74,12 +74,13 @@ def settled(path: CartesianPath, way: Array | None, tightness: float = 1.0) -> C
                 values[:, -1] = np.unwrap(values[:, -1])
         even = np.append(~np.isnan(free.known[[i, i + 1]]).any(axis=0), not free.rolling[i])
         law = _course(s, values, even, weights, tightness)
-        if free.rolling[i]:
+        if leg.step.roll_free:
             rolls.append(_column(law, held, leg.twist / length))
         else:
             rolls.append(None)
         laws.append(_columns(law, held))
-    segments = replace(path.segments, rolls=tuple(rolls)) if free.rolling.any() else path.segments
+    rolling = any(law is not None for law in rolls)
+    segments = replace(path.segments, rolls=tuple(rolls)) if rolling else path.segments
     course = Course(path.follower, path.course.view, tuple(laws) if held else ())
     at_targets.flags.writeable = False
     return replace(path, legs=tuple(legs), segments=segments, course=course, held=at_targets)

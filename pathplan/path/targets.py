@@ -54,7 +54,11 @@ def target_branches(task: Task, path: TaskPath | None = None) -> TargetBranches:
     view, follower = np.array([cartesian.legs[i].view for i in posed], dtype=np.intp), cartesian.follower
     held, columns = _held(cartesian)[posed + 1], list(follower.held)
     q, reached = follower.branches(view, poses, held)
-    q, reached = np.nan_to_num(q), reached.copy()
+    singular = np.full(reached.shape, np.nan)
+    if reached.any():
+        every = np.broadcast_to(view[:, None], reached.shape)
+        singular[reached] = follower.singular(every[reached], q[reached])
+    q, reached = np.nan_to_num(q[:, :, : arm.n]), reached.copy()  # without a virtual roll
     q -= _turns_to_the_middle(arm, q)
     q[:, :, columns] = held[:, None]
     within = _roomiest(arm, reached, q)
@@ -73,9 +77,6 @@ def target_branches(task: Task, path: TaskPath | None = None) -> TargetBranches:
         q[found, nearest[found]] = taken[found]
         within[found, nearest[found]] = True
     margin, limit = _margins(arm, q)
-    singular = np.full(reached.shape, np.nan)
-    if reached.any():
-        singular[reached] = follower.singular(np.broadcast_to(view[:, None], reached.shape)[reached], q[reached])
     labels = max((follower.labels(number) for number in {*view.tolist(), 0}), key=len)
     return TargetBranches(step, labels, reached, within, used, q, margin, limit, singular)
 

@@ -24,7 +24,7 @@ def taught_path(taught: Taught, arm: Arm) -> tuple[JointPath, str]:
     weights = joint_weights(arm)
     if taught.tolerance == 0.0:
         path = JointPath.through(taught.points * weights)
-        return JointPath.from_pieces(path.breaks, path.coefficients / weights), taught.note
+        return JointPath.from_pieces(path.breaks, path.coefficients / _divisors(weights)), taught.note
     path, off = smooth_joint_path(taught.points, arm, taught.tolerance)
     note = f'taught path "{taught.name}" is at most {_off_text(off, arm)} off its {len(taught.points)} points'
     return path, f"{taught.note}; {note}" if taught.note else note
@@ -51,11 +51,16 @@ def smooth_joint_path(points: Array, arm: Arm, tolerance: float) -> tuple[JointP
                 raise
             break  # what there was keeps to the points, if not to the limits
         breaks = knots_of(spline)
-        path = JointPath.from_pieces(breaks, pieces_of(spline, breaks) / weights)
-        off = np.abs(spline(u) - scaled) / weights
+        path = JointPath.from_pieces(breaks, pieces_of(spline, breaks) / _divisors(weights))
+        off = np.abs(spline(u) - scaled) / _divisors(weights)
         if _within_limits(path, arm):
             break
     return path, off
+
+
+def _divisors(weights: Array) -> Array:
+    """The weights; of a virtual joint, which counts nothing and does not move, one."""
+    return np.where(weights > 0.0, weights, 1.0)
 
 
 def _within_limits(path: JointPath, arm: Arm) -> bool:

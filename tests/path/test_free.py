@@ -342,3 +342,71 @@ def test_a_line_that_nothing_free_can_follow_is_refused() -> None:
     steps = [step("joint", pose(0, -550, 400)), step("line", pose(0, -3000, 400))]
     with pytest.raises(UnreachableError, match=r"^t\.toml: step\[2\]: "):
         follow_task(task(arm, arm.positions["home"], steps))
+
+
+def five_axes() -> Arm:
+    """A turning base, three parallel axes, a turn at the wrist, and a nozzle that points down aslant."""
+    limits = (-2.9, 2.9)
+    joints = [Joint(f"j{i + 1}", "revolute", limits, 3.0, 12.0, 120.0) for i in range(5)]
+    points = [[0, 0, 0], [0.1, 0, 0.45], [0.1, 0, 0.95], [0.6, 0, 0.95], [0.7, 0, 0.95]]
+    axes = [[0, 0, 1], [0, 1, 0], [0, 1, 0], [0, 1, 0], [1, 0, 0]]
+    nozzle = np.eye(4)
+    nozzle[:3, :3] = Rotation.from_euler("y", 60, degrees=True).as_matrix() @ DOWN
+    nozzle[:3, 3] = [0.8, 0, 0.9]
+    return Arm.from_axes("five", joints, points, axes, nozzle)
+
+
+FIVE = np.array([0.2, 0.5, 0.4, 0.3, 0.2])
+
+
+def test_five_axes_follow_lines_with_a_free_roll() -> None:
+    arm = five_axes()
+    start = arm.forward(FIVE)
+    middle, end = start.copy(), start.copy()
+    middle[:3, 3] += [0.05, 0.12, 0.0]
+    middle[:3, :3] = Rotation.from_rotvec([0.1, 0.2, 0.4]).as_matrix() @ start[:3, :3]
+    end[:3, 3] += [-0.05, 0.2, 0.06]
+    asked = rolled_free([step("line", middle, blend=length(15)), step("line", end)])
+    path = follow_task(task(arm, FIVE, [*asked, step("joint", FIVE)]))
+    assert path.stretches[0].path.joints == 5
+    corner = path.corners[0]
+    assert corner.kind == "fly-by"
+    q = path.stretches[0].path(np.linspace(0.0, corner.s_from, 300))
+    poses = tool_by_pinocchio(arm, q)
+    way = middle[:3, 3] - start[:3, 3]
+    share = (poses[:, :3, 3] - start[:3, 3]) @ way / (way @ way)
+    assert np.linalg.norm(poses[:, :3, 3] - start[:3, 3] - share[:, None] * way, axis=1).max() < 1e-6
+    angle = np.arccos(start[:3, 2] @ middle[:3, 2])
+    weights = np.sin([(1 - share) * angle, share * angle]) / np.sin(angle)
+    assert np.linalg.norm(poses[:, :3, 2] - weights.T @ [start[:3, 2], middle[:3, 2]], axis=1).max() < 1e-6
+    np.testing.assert_allclose(path.targets[-1], FIVE)
+
+
+def test_five_axes_that_are_asked_for_a_roll_are_refused_with_what_would_do() -> None:
+    arm = five_axes()
+    turned = arm.forward(FIVE)
+    turned[:3, :3] = turned[:3, :3] @ Rotation.from_euler("z", 0.5).as_matrix()
+    with pytest.raises(UnreachableError, match=r'^t\.toml: step\[1\]: .*; roll = "free" in every step would do'):
+        follow_task(task(arm, FIVE, [step("joint", turned)]))
+    steps = [replace(step("line", turned), roll_free=True), step("line", arm.forward(FIVE))]
+    with pytest.raises(
+        InputError, match=r'^t\.toml: step\[2\]: roll: five has five axes, .*expected roll = "free" here'
+    ):
+        follow_task(task(arm, FIVE, steps))
+
+
+def test_a_scara_may_roll_its_tool(cast) -> None:
+    """Four axes with the tool upright: the last axis need not turn."""
+    arm = cast.robot("sorter4", "cup")
+    home = arm.forward(arm.positions["home"])
+    ends = [home.copy(), home.copy()]
+    ends[0][:2, 3] += [-0.05, 0.1]
+    ends[1][:2, 3] += [-0.05, -0.1]
+    ends[1][:3, :3] = Rotation.from_euler("z", 2.5).as_matrix() @ home[:3, :3]
+    steps = rolled_free([step("joint", ends[0]), step("line", ends[1])])
+    path = follow_task(task(arm, arm.positions["home"], steps))
+    poses = tool_by_pinocchio(arm, sampled(path, 1))
+    assert off_line(poses, *ends)[0] < 1e-6
+    assert np.abs(poses[:, :3, 2] - ends[0][:3, 2]).max() < 1e-9
+    turned = Rotation.from_matrix(poses[-1, :3, :3].T @ poses[0, :3, :3]).magnitude()
+    assert turned < 1.5
