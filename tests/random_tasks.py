@@ -16,17 +16,20 @@ import pathplan
 
 ROOT = Path(__file__).parent.parent
 ARMS = ("loader4", "sorter4", "glazer6", "sorter4-spline")
+FREE_ARMS = ("glazer6", "loader4", "stacker7", "stacker6-pallet")  # in tasks that leave a roll or an axis free
 Array = NDArray[np.float64]
 _POINTS = 64  # of a cell: none but its ends is among those that the timing itself looks at
 
 
-def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
+def random_task(arm: pathplan.Arm, rng: np.random.Generator, *, free: bool = False) -> str:
     """TOML text of a task of 1 to 7 motions: joint steps, lines, arcs and patterns with blends, waits, caps, a tool,
-    payloads that change, rarely another tool.
+    payloads that change, rarely another tool. `free`: rolls are free, and some poses lie on a pallet that turns.
     """
+    loose = rng.spawn(1)[0]
     tool = str(rng.choice(["none", *arm.tools]))
     arm = arm.equipped(tool=tool)
     low, high = np.array([joint.position for joint in arm.joints]).T
+    low, high = np.where(np.isfinite(low), low, -np.pi), np.where(np.isfinite(high), high, np.pi)
     middle, half = (low + high) / 2, (high - low) / 2
     unit = np.array([1000.0 if joint.kind == "prismatic" else 180 / np.pi for joint in arm.joints])
     q = middle + half * rng.uniform(-0.7, 0.7, arm.n)
@@ -63,7 +66,7 @@ def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
             lines.append("axis = [0, 0, 1]")
             lines.append(f"angle = {rng.uniform(-360, 360):.2f}")
         else:
-            lines.append(f"to = {_pose(arm.forward(q))}")
+            lines += _loose_target(arm, q, loose) if free else [f"to = {_pose(arm.forward(q))}"]
         if i < count - 1 and i + 1 not in patterns and rng.random() < 0.6:
             size = rng.choice([f'"{rng.uniform(1, 60):.1f} mm"', f'"{rng.uniform(1, 50):.1f} %"', '"5 deg"'])
             lines.append(f"blend = {size}")
@@ -74,7 +77,24 @@ def random_task(arm: pathplan.Arm, rng: np.random.Generator) -> str:
                 lines.append(f'payload = "{rng.choice(["none", *arm.payloads])}"')
             if rng.random() < 0.1:
                 lines.append(f'tool = "{rng.choice(["none", *arm.tools])}"')
+    if free and "pallet" in arm.joint_names:
+        lines.append('\n[frames.pallet]\njoint = "pallet"')
     return "\n".join(lines) + "\n"
+
+
+def _loose_target(arm: pathplan.Arm, q: Array, rng: np.random.Generator) -> list[str]:
+    """The pose of the tool at q as a target that leaves something free: the roll, a track, or where a pallet stands."""
+    lines, pose = [], arm.forward(q)
+    if rng.random() < 0.6:
+        lines.append('roll = "free"')
+    if "pallet" not in arm.joint_names:
+        return [*lines, f"to = {_pose(pose)}"]
+    if rng.random() < 0.3:
+        lines.append(f"axes = {{ pallet = {np.rad2deg(q[-1]):.3f} }}")
+    if rng.random() < 0.3:
+        return [*lines, f"to = {_pose(pose)}"]
+    on_pallet = np.linalg.inv(arm.base_from_joint("pallet", q)) @ pose
+    return [*lines, 'to = { frame = "pallet", ' + _pose(on_pallet)[2:]]
 
 
 def _pattern(arm: pathplan.Arm, name: str, first: Array, rng: np.random.Generator) -> list[str]:
@@ -198,11 +218,13 @@ def main(count: int, seed: int = 0) -> None:
 
     seen: Counter[str] = Counter()
     with TemporaryDirectory() as folder:
-        arms = [pathplan.load_arm(ROOT / "robots" / f"{name}.toml") for name in ARMS]
+        cases = [(name, False) for name in ARMS] + [(name, True) for name in FREE_ARMS]
+        arms = [(pathplan.load_arm(ROOT / "robots" / f"{name}.toml"), free) for name, free in cases]
         for i in range(count):
-            arm = arms[i % len(arms)]
+            arm, free = arms[i % len(arms)]
             rng = np.random.default_rng([seed, i])
-            seen[f"{arm.name} {judge(random_task(arm, rng), Path(folder))}"] += 1
+            case = f"{arm.name}{' free' if free else ''}"
+            seen[f"{case} {judge(random_task(arm, rng, free=free), Path(folder))}"] += 1
             if (i + 1) % 500 == 0:
                 print(i + 1, dict(seen), flush=True)
     print(dict(seen))

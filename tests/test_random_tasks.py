@@ -11,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import pathplan
-from tests.random_tasks import ARMS, ROOT, broken_limits, judge, random_task
+from tests.random_tasks import ARMS, FREE_ARMS, ROOT, broken_limits, judge, random_task
 
 
 @pytest.mark.parametrize("name", ARMS)
@@ -29,6 +29,13 @@ def test_most_random_tasks_can_be_planned(name, tmp_path):
     arm = pathplan.load_arm(ROOT / "robots" / f"{name}.toml")
     seen = [judge(random_task(arm, np.random.default_rng(seed)), tmp_path) for seed in range(12)]
     assert seen.count("planned") >= 6
+
+
+@pytest.mark.parametrize("name", FREE_ARMS)
+def test_tasks_that_leave_something_free_keep_the_limits(name, tmp_path):
+    arm = pathplan.load_arm(ROOT / "robots" / f"{name}.toml")
+    seen = [judge(random_task(arm, np.random.default_rng(seed), free=True), tmp_path) for seed in range(4)]
+    assert "planned" in seen
 
 
 def test_the_judge_sees_a_broken_limit():
