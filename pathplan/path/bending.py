@@ -20,9 +20,9 @@ import numpy as np
 from pathplan.arm import Arm
 from pathplan.arm.geometry import meeting_points
 from pathplan.arm.kinematics import joint_frame, smallest_singular_value, spatial_axes
+from pathplan.arm.relative import ROLL
 from pathplan.path.bends import Bend, Bump
 from pathplan.path.cartesian import CartesianPath, tool_of
-from pathplan.path.follower import Course
 from pathplan.path.geometry import Segments
 from pathplan.path.joint import Array
 from pathplan.path.rotations import rotation_vector
@@ -51,6 +51,9 @@ def with_bends(path: CartesianPath, tracks: Tracks, frames: Array) -> tuple[Cart
     """The path with bent segments behind its own, and the tracks along all of them. `frames` (K, 4, 4) as `track` takes
     them.
     """
+    follower = path.follower
+    if follower.held or len(follower.views) > 1 or follower.arm.joint_names[-1] == ROLL:
+        return path, tracks  # what is free there is chosen away from singularities, in any frame
     origin: list[int] = []
     bends: list[Bend] = []
     for i, leg in enumerate(path.legs):
@@ -65,7 +68,7 @@ def with_bends(path: CartesianPath, tracks: Tracks, frames: Array) -> tuple[Cart
     every = np.concatenate([np.arange(count), k]).astype(np.intp)
     course = path.course.take(every)
     own = np.arange(count, len(every))
-    more = track(Course(course.follower, course.view[own]), segments.take(own), frames[k])
+    more = track(course.take(own), segments.take(own), frames[k])
     return replace(path, segments=segments, course=course, origin=every), tracks.followed_by(more)
 
 
