@@ -10,7 +10,7 @@ from pathplan.remedies.branches import other_branches, turned_over
 from pathplan.remedies.frames import moved_workpiece
 from pathplan.remedies.freedoms import free_axes, free_roll
 from pathplan.remedies.model import Remedies, Remedy
-from pathplan.remedies.steps import joint_step, less_load, served_pose, smaller_blend
+from pathplan.remedies.steps import joint_step, less_load, orientation_tolerance, served_pose, smaller_blend
 from pathplan.remedies.trials import OutOfTime, Trials
 from pathplan.task.model import Task
 
@@ -23,6 +23,7 @@ KINDS: tuple[Callable[[Trials], Iterator[Remedy]], ...] = (
     smaller_blend,
     served_pose,
     free_axes,
+    orientation_tolerance,
     joint_step,
     other_branches,
     free_roll,
@@ -42,10 +43,11 @@ def find_remedies(
     """The nearest changes that let a refused task be planned.
 
     Tried are another branch (of the start, at a target on the way, by a joint step on the spot), a joint step in place
-    of a line or arc, a free roll of the tool, axes left free, a smaller blend where a corner is refused, the nearest
-    pose that an arm with fewer than six axes serves, a lighter payload where a pose can't be held, and the workpiece
-    moved: the smallest shift along x, y or z, up to half the arm's length, and turn about z, up to 90 deg, of each
-    frame that the step is in, or of its target if that is in none. They are found on the few steps that decide, by
+    of a line or arc, a tolerance of its orientation, a free roll of the tool, axes left free, a smaller blend where a
+    corner is refused, the nearest pose that an arm with fewer than six axes serves, a lighter payload where a pose
+    can't be held, and the workpiece moved: the smallest shift along x, y or z, up to half the arm's length, and turn
+    about z, up to 90 deg, of each frame that the step is in, or of its target if that is in none. They are found on the
+    few steps that decide, by
     bisection to 0.1 mm and 0.1 deg; then the whole task is planned with each of them.
 
     Parameters

@@ -10,7 +10,7 @@ from pathplan.task.model import Task
 
 __all__ = ["Kind", "Remedies", "Remedy"]
 
-Kind = Literal["branch", "motion", "blend", "target", "payload", "frame", "roll", "axes"]
+Kind = Literal["branch", "motion", "orientation_tolerance", "blend", "target", "payload", "frame", "roll", "axes"]
 
 
 @dataclass(frozen=True, eq=False)

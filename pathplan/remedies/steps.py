@@ -1,4 +1,6 @@
-"""Remedies in the refused step itself: a joint step in its place, a smaller blend, a pose the arm serves, less load."""
+"""Remedies in the refused step itself: a joint step in its place, a tolerance of its orientation, a smaller blend, a
+pose the arm serves, less load.
+"""
 
 from __future__ import annotations
 
@@ -17,11 +19,13 @@ from pathplan.remedies.trials import Trials
 from pathplan.remedies.words import rpy_text, step_text, xyz_text
 from pathplan.task.changed import with_payload, with_step
 from pathplan.task.model import Array, Blend, Task
+from pathplan.task.steps import takes_tolerance
 from pathplan.tomlfile import read_only
 from pathplan.units import format_quantity
 
-__all__ = ["joint_step", "less_load", "served_pose", "smaller_blend"]
+__all__ = ["joint_step", "less_load", "orientation_tolerance", "served_pose", "smaller_blend"]
 
+TOLERANCES = (0.05, 0.1, 0.2, 0.5, 1.0, 2.0, 5.0)  # deg
 SHARES = 0.5 ** np.arange(1, 7)  # of a blend, tried in turn
 FARTHEST = 0.5  # of the arm's characteristic length: a pose further off is another one
 MOST_TILT = np.pi / 4  # rad
@@ -46,6 +50,35 @@ def joint_step(trials: Trials) -> Iterator[Remedy]:
             return
         what += f" (then {found})"
     trials.tried.append(what)
+
+
+def orientation_tolerance(trials: Trials) -> Iterator[Remedy]:
+    """The least orientation tolerance with which a line, arc or curve runs through a singularity, not past it."""
+    task, step = trials.task, trials.task.steps[trials.step]
+    if step.motion not in ("line", "arc", "curve") or trials.corner or trials.held:
+        return
+    if step.roll_free or step.tilt or task.carrier(step) is not None or not takes_tolerance(task.arm):
+        return
+
+    def tolerant(angle: float) -> Task:
+        return with_step(task, trials.step, orientation_tolerance=float(np.deg2rad(angle)))
+
+    def promises(angle: float) -> bool:
+        return trials.promises(tolerant(angle), trials.step)
+
+    def works(angle: float) -> bool:
+        return trials.follows(tolerant(angle), trials.step)
+
+    sizes = [angle for angle in TOLERANCES if np.deg2rad(angle) > step.orientation_tolerance]
+    angle = smallest(promises, works, sizes, TOLERANCES[0])
+    if angle is not None:
+        text = f'{step_text(task, trials.step)}: orientation_tolerance = "{angle:g} deg"'
+        value = {"orientation_tolerance": float(np.deg2rad(angle))}
+        found = trials.proven("orientation_tolerance", text, tolerant(angle), value, trials.step)
+        if isinstance(found, Remedy):
+            yield found
+            return
+    trials.tried.append(f"{step_text(task, trials.step)}: an orientation_tolerance up to {TOLERANCES[-1]:g} deg")
 
 
 def smaller_blend(trials: Trials) -> Iterator[Remedy]:

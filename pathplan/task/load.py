@@ -30,6 +30,9 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
         held_speed            line, arc, curve: the tool speed that a process needs, constant; caps the tool, and the
                               audit says over which part of the step it was held and what stopped it elsewhere
         configuration         { shoulder, elbow, wrist }: words for the branch at the target
+        orientation_tolerance    line, arc, curve of an arm with a spherical wrist: "2 deg" that the tool may leave its
+                    orientation where a singularity would hold it up; at its targets and in corners it never does
+        tilt        the same of the tool's z axis alone: the tool does not turn about it
         axes        { NAME = value }: where an axis that the pose leaves free stands at the end (a turntable, a track,
                     a seventh axis); it moves there evenly along the step. Not given: an axis that carries a workpiece
                     rests while the tool is not on it, any other is chosen for the shortest time

@@ -17,7 +17,7 @@ from pathplan.task.places import Places
 from pathplan.tomlfile import Table, listed, nearest, read_only
 from pathplan.units import DIMENSIONS, format_quantity, joint_dimension, toml_text
 
-__all__ = ["MAX_WAIT", "MOTIONS", "STEP_KEYS", "Caps", "read_caps", "read_step", "step_to_start"]
+__all__ = ["MAX_WAIT", "MOTIONS", "STEP_KEYS", "Caps", "read_caps", "read_step", "step_to_start", "takes_tolerance"]
 
 Array = NDArray[np.float64]
 MAX_WAIT = 3600.0  # s
@@ -184,6 +184,11 @@ def read_configuration(table: Table, places: Places) -> dict[str, str]:
     return words
 
 
+def takes_tolerance(arm: Arm) -> bool:
+    """Whether a tolerance of the orientation can be made use of: six axes that end in a spherical wrist."""
+    return arm.n == 6 and arm.structure == "spherical wrist"
+
+
 def read_tolerance(table: Table, motion: Motion, arm: Arm) -> dict[str, float]:
     """Keys `orientation_tolerance` and `tilt`: how far the tool may leave its orientation, one of them at most."""
     asked = [key for key in TOLERANCES if table.has(key)]
@@ -196,7 +201,7 @@ def read_tolerance(table: Table, motion: Motion, arm: Arm) -> dict[str, float]:
         raise table.error(key, f'only a line, an arc or a curve takes {key}, this motion is "{motion}"')
     if table.has("roll") and table.choice("roll", ROLLS) == "free":
         raise table.error(key, f'{key} goes with roll = "fixed", got "free"')
-    if arm.n != 6 or arm.structure != "spherical wrist":
+    if not takes_tolerance(arm):
         raise table.error(key, f"helps where six axes end in a spherical wrist, which arm {arm.name} has not")
     value = _at_least(table, key, "angle")
     assert value is not None

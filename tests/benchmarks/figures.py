@@ -98,6 +98,37 @@ def planning() -> None:
     say("ten-waypoint six-axis path: timing over motion", spent / timing.duration, "at most 0.05")
 
 
+def singularities() -> None:
+    """A line of 400 mm past a wrist singularity of glazer6, with and without an orientation tolerance, against the
+    same line right through it; and how far off the line it is.
+    """
+    from tests.path.conftest import robot, step, task
+    from tests.path.test_crossing import passing
+
+    arm = robot("glazer6")
+
+    def fastest(distance: float, tolerance: float) -> pathplan.Plan:
+        a, b = passing(arm, distance)
+        plans = []
+        for start in arm.inverse(a):
+            try:
+                line = step("line", b, orientation_tolerance=tolerance)
+                plans.append(pathplan.plan(task(arm, start, [line])))
+            except pathplan.UnreachableError:  # some joint meets its limit
+                continue
+        return min(plans, key=lambda plan: plan.motion_time)
+
+    through = fastest(0.0, 0.0)
+    for distance in (0.0, 1e-4, 1e-3):
+        for degrees in (0.0, 2.0):
+            plan = fastest(distance, float(np.deg2rad(degrees)))
+            name = f"line {distance * 1e3:g} mm past a wrist singularity, {degrees:g} deg tolerated"
+            asked = "at most 1.02" if degrees or not distance else "2 or 3: the joints turn over"
+            say(f"{name}: duration over straight through", plan.motion_time / through.motion_time, asked)
+            deviation = max(plan.audit.deviation_rows.position, plan.audit.deviation_midway.position)
+            say(f"{name}: off the line, um", deviation * 1e6, "at most 1")
+
+
 def whole_process() -> None:
     """Whole processes against a bare import of roboticstoolbox, wall time, in turn."""
 
@@ -185,7 +216,7 @@ def free_track() -> None:
 
 
 def main() -> None:
-    for section in (straight_lines, optimum, planning, whole_process, toolbox_alone, free_roll, free_track):
+    for section in (straight_lines, optimum, planning, singularities, whole_process, toolbox_alone, free_roll, free_track):
         section()
 
 

@@ -380,3 +380,18 @@ def test_an_axis_that_may_stand_elsewhere(tmp_path) -> None:
     (remedy,) = free_axes(Trials(task, refusal(task), time.monotonic() + LONG))
     assert remedy.changes["axes"] == ["track"]
     assert plans(task_of(tmp_path, text.replace("axes = { track = 1400 }", "")))
+
+
+def test_a_line_too_near_a_singularity_is_let_through_it():
+    """A micrometre past it: axes 4 and 6 would have to turn over within a micrometre."""
+    from tests.path.conftest import robot, step, task
+    from tests.path.test_crossing import passing
+
+    arm = robot("glazer6")
+    a, b = passing(arm, 1e-6)
+    refused = task(arm, arm.inverse(a)[2], [step("line", b)])
+    with pytest.raises(UnreachableError) as caught:
+        pathplan.plan(refused)
+    found = find_remedies(refused, caught.value, seconds=60).found
+    (remedy,) = (remedy for remedy in found if "tolerance" in remedy.text)
+    assert remedy.text == 'step 1: orientation_tolerance = "0.05 deg"'

@@ -1,6 +1,7 @@
 """Bad task files: the exact line that is said of each."""
 
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -460,3 +461,49 @@ def test_arm_files_that_are_none(tmp_path, text, arm, line):
     with pytest.raises(InputError) as caught:
         load_task(path)
     assert str(caught.value) == line
+
+
+@pytest.mark.parametrize(
+    ("keys", "line"),
+    [
+        (
+            'motion = "line"\norientation_tolerance = "2 deg"\ntilt = "2 deg"',
+            "step[1].tilt: expected either orientation_tolerance or tilt, got both",
+        ),
+        ('motion = "line"\ntilt = "-2 deg"', 'step[1].tilt: expected an angle such as "10 deg", got "-2 deg"'),
+        ('motion = "line"\ntilt = "2 mm"', 'step[1].tilt: expected an angle such as "10 deg", got "2 mm"'),
+        (
+            'motion = "line"\norientation_tolerance = "40 deg"',
+            'step[1].orientation_tolerance: expected at most 30 deg, got "40 deg"',
+        ),
+        (
+            'motion = "joint"\ntilt = "2 deg"',
+            'step[1].tilt: only a line, an arc or a curve takes tilt, this motion is "joint"',
+        ),
+        (
+            'motion = "line"\ntilt = "2 deg"\nroll = "free"',
+            'step[1].tilt: tilt goes with roll = "fixed", got "free"',
+        ),
+    ],
+)
+def test_tolerances_of_the_orientation(tmp_path, keys, line):
+    robot = Path(__file__).parents[2] / "robots" / "glazer6.toml"
+    file = tmp_path / "pick.toml"
+    head = f'title = "t"\narm = "{robot.as_posix()}"\ncycle = "4 ms"\nstart = "home"\n'
+    file.write_text(f"{head}[[step]]\n{keys}\nto = {{ xyz = [550, -100, 350], rpy = [180, 0, 0] }}\n")
+    with pytest.raises(InputError) as caught:
+        load_task(file)
+    assert str(caught.value) == f"pick.toml: {line}"
+
+
+def test_tolerance_of_an_arm_that_makes_no_use_of_it(tmp_path):
+    robot = Path(__file__).parents[2] / "robots" / "sorter4.toml"
+    file = tmp_path / "sort.toml"
+    head = f'title = "t"\narm = "{robot.as_posix()}"\ncycle = "4 ms"\nstart = "home"\n'
+    file.write_text(
+        f'{head}[[step]]\nmotion = "line"\ntilt = "2 deg"\nto = {{ xyz = [300, 0, 100], rpy = [180, 0, 0] }}\n'
+    )
+    with pytest.raises(
+        InputError, match=r"tilt: helps where six axes end in a spherical wrist, which arm sorter4 has not$"
+    ):
+        load_task(file)
