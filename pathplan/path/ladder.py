@@ -254,31 +254,31 @@ class _Costs:
     def _along(self, t: int, before: Index, after: Index, floor: float) -> Array:
         """(A, B) on a line, arc or curve."""
         nodes, rungs = self.nodes, self.rungs
-        change = nodes.q[after] - nodes.q[before][:, None]
-        endless = rungs.follower.endless
-        change -= np.where(endless, _TURN * np.round(change / _TURN), 0.0)
-        stride = np.where(self.revolute, _STRIDE, np.inf)
-        held = list(rungs.follower.held)
-        stride[held] = np.inf  # judged by the grid
-        bad = (np.abs(change) > stride).any(axis=2)
+        cost = np.full((len(before), len(after)), np.inf)
         moved = nodes.coordinates[after] - nodes.coordinates[before][:, None]
         if rungs.rolls:
             moved[..., -1] -= _TURN * np.round(moved[..., -1] / _TURN)
         free = np.isnan(rungs.pinned[t]) & np.isnan(rungs.pinned[t - 1])
         furthest = np.where(free, self.furthest, np.inf)
         furthest[rungs.kept[t]] = 1e-9
-        bad |= (np.abs(moved) > furthest).any(axis=2)
-        share = np.abs(change @ (self.matrix / self.velocity[:, None]).T)
-        most = np.maximum(share.max(axis=2), max(floor, 1e-12))
-        ratio = share / most[..., None]
+        i, j = np.nonzero((np.abs(moved) <= furthest).all(axis=2))
+        change = nodes.q[after[j]] - nodes.q[before[i]]
+        endless = rungs.follower.endless
+        change[:, endless] -= _TURN * np.round(change[:, endless] / _TURN)
+        stride = np.where(self.revolute, _STRIDE, np.inf)
+        stride[list(rungs.follower.held)] = np.inf  # judged by the grid
+        good = (np.abs(change) <= stride).all(axis=1)
+        i, j = i[good], j[good]
+        share = np.abs(change[good] @ (self.matrix / self.velocity[:, None]).T)
+        most = np.maximum(share.max(axis=1, initial=0.0), max(floor, 1e-12))
+        ratio = share / most[:, None]
         for _ in range(_DOUBLINGS):
             ratio *= ratio
         norm = 2**_DOUBLINGS
-        total = ratio.sum(axis=2) + (floor / most) ** norm
-        cost = most * total ** (1.0 / norm) + _EASE * np.sqrt((share * share).sum(axis=2))
-        cost *= (nodes.burden[before][:, None] + nodes.burden[after]) / 2.0
-        cost[bad] = np.inf
-        return np.asarray(cost)
+        total = ratio.sum(axis=1) + (floor / most) ** norm
+        time = most * total ** (1.0 / norm) + _EASE * np.sqrt((share * share).sum(axis=1))
+        cost[i, j] = time * (nodes.burden[before[i]] + nodes.burden[after[j]]) / 2.0
+        return cost
 
     def _joint_step(self, t: int, before: Index, after: Index) -> Array:
         """(A, B) from rest to rest, straight in joint space."""
