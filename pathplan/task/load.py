@@ -37,7 +37,8 @@ A task file (TOML; numbers in mm, deg, s, mm/s, mm/s^2, or strings with a unit) 
                     a seventh axis); it moves there evenly along the step. Not given: an axis that carries a workpiece
                     rests while the tool is not on it, any other is chosen for the shortest time
         roll        "free": the turn of the tool about its own z axis is not asked, neither on the way nor at the end
-                    (a suction cup, a drill, a nozzle), and chosen for the shortest time; default "fixed"
+                    (a suction cup, a drill, a nozzle), and chosen for the shortest time; five axes, which have no
+                    choice, follow lines with it if no step to a pose asks for a roll. Default "fixed"
         tool, payload         carried from this step on, "none" for nothing: the arm stops before it
         name, mark            for people: the step, and the instant at which it ends
         wait        in a step of its own (name, mark, tool, payload beside it): rest for this time

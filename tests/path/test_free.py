@@ -410,3 +410,20 @@ def test_a_scara_may_roll_its_tool(cast) -> None:
     assert np.abs(poses[:, :3, 2] - ends[0][:3, 2]).max() < 1e-9
     turned = Rotation.from_matrix(poses[-1, :3, :3].T @ poses[0, :3, :3]).magnitude()
     assert turned < 1.5
+
+
+def test_an_arc_by_its_centre_on_the_pallet_runs_about_it_there() -> None:
+    """A full circle about the middle of the pallet, which turns against it: the radius stays in the turning frame."""
+    steps = [
+        on_pallet("joint", -150, 0, 200, axes={"pallet": 0.0}),
+        replace(
+            step("arc", centre=[0, 0, 200], axis=np.array([0, 0, 1.0]), angle=2 * np.pi, axes={"pallet": -1.0}),
+            point_frame="pallet",
+        ),
+    ]
+    path = follow_task(on_the_pallet(steps))
+    q = sampled(path, 1)
+    poses = seen_from_the_pallet(path.task.arm, q)
+    assert np.abs(np.linalg.norm(poses[:, :2, 3], axis=1) - 0.15).max() < 1e-6
+    assert np.unwrap(np.arctan2(poses[:, 1, 3], poses[:, 0, 3]))[-1] - np.pi == pytest.approx(2 * np.pi, abs=1e-5)
+    assert q[-1, 6] == pytest.approx(-1.0, abs=1e-12)
