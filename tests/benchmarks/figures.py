@@ -216,7 +216,16 @@ def free_track() -> None:
 
 
 def main() -> None:
-    for section in (straight_lines, optimum, planning, singularities, whole_process, toolbox_alone, free_roll, free_track):
+    for section in (
+        straight_lines,
+        optimum,
+        planning,
+        singularities,
+        whole_process,
+        toolbox_alone,
+        free_roll,
+        free_track,
+    ):
         section()
 
 
