@@ -39,6 +39,8 @@ _STEPS = 3.0  # grid steps that a coordinate may move from rung to rung
 _DOUBLINGS = 6  # of the exponent: the 64th norm is nearly the largest, but not blind for the others
 _EASE = 0.05  # part of the cost that counts all joints, not the slowest alone
 _TURN = 2.0 * np.pi
+_GAIN = 0.99  # a round that leaves more of the cost than this makes the grid finer
+_MOST_ROUNDS = 12
 _NO_LIMIT = 1e6  # of the velocity, per s and s^2: what counts as acceleration and jerk where nothing limits them
 
 
@@ -59,31 +61,43 @@ class _Nodes:
 def best_way(path: CartesianPath, rungs: Rungs) -> Array:
     """(T, C) the coordinates at every rung. Raises UnreachableError where nothing that is free lets the arm follow."""
     spans = _spans(path.task.arm, rungs)
-    size = rungs.pinned.shape[1]
     loose = np.isnan(rungs.pinned).any(axis=0)
     count = int(np.clip(loose.sum(), 1, 3))
-    grid = [np.linspace(low, high, _GRID[count]) for low, high in spans]
-    if rungs.rolls:
-        grid[-1] = np.linspace(-np.pi, np.pi, _GRID[count])[:-1]
-    width = np.array([values[1] - values[0] for values in grid])
-    axes = [np.broadcast_to(values, (len(rungs), len(values))) for values in grid]
-    for c in range(len(rungs.follower.held)):
-        near = _beside_pins(rungs.pinned[:, c], width[c] * _BESIDE[count])
-        axes[c] = np.hstack([axes[c], np.clip(near, *spans[c])])
-    way = np.zeros((len(rungs), size))
-    furthest = _STEPS * width
-    for _ in range(_ROUNDS[count] + 1):
-        way = _way(path, rungs, _nodes(path, rungs, axes), furthest)
-        finer = _FINER[count]
-        step = 2.0 * width / (finer - 1)
-        offsets = np.linspace(-1.0, 1.0, finer)
+    lines = [_line(rungs, c, span, _GRID[count], _BESIDE[count]) for c, span in enumerate(spans)]
+    width = np.array([values[0, 1] - values[0, 0] for values in lines])
+    way, cost = _way(path, rungs, _nodes(path, rungs, lines), _STEPS * width)
+    # From here on the grids lie about a way that has been found.
+    if count > 1:  # the first grid was coarse: each coordinate once more from end to end, the others kept
+        for c in np.flatnonzero(loose).tolist():
+            line = _line(rungs, c, spans[c], _GRID[1], _BESIDE[1])
+            width[c] = line[0, 1] - line[0, 0]
+            axes = [np.hstack([way[:, k, None], line]) if k == c else way[:, k, None] for k in range(len(spans))]
+            way, cost = _way(path, rungs, _nodes(path, rungs, axes), None)
+    finer = 0
+    for _ in range(_MOST_ROUNDS):
         axes = []
         for c, (low, high) in enumerate(spans):
-            values = way[:, c, None] + width[c] * offsets
-            axes.append(values if rungs.rolls and c == size - 1 else np.clip(values, low, high))
-        width = step
-        furthest = np.full(size, np.inf)  # the grids lie about a way that has been found
+            values = way[:, c, None] + width[c] * np.linspace(-1.0, 1.0, _FINER[count])
+            axes.append(values if rungs.rolls and c == len(spans) - 1 else np.clip(values, low, high))
+        before = cost
+        way, cost = _way(path, rungs, _nodes(path, rungs, axes), None)
+        if cost > _GAIN * before:  # nothing much to be had any more with this grid
+            finer += 1
+            width = 2.0 * width / (_FINER[count] - 1)
+        if finer == _ROUNDS[count]:
+            break
     return way
+
+
+def _line(rungs: Rungs, c: int, span: tuple[float, float], count: int, beside: Array) -> Array:
+    """(T, m) values of a coordinate from end to end of its span: `count` of them, evenly, and for a held joint some
+    beside those that are given.
+    """
+    if rungs.rolls and c == rungs.pinned.shape[1] - 1:
+        return np.broadcast_to(np.linspace(*span, count)[:-1], (len(rungs), count - 1))
+    values = np.linspace(*span, count)
+    near = _beside_pins(rungs.pinned[:, c], (values[1] - values[0]) * beside)
+    return np.hstack([np.broadcast_to(values, (len(rungs), count)), np.clip(near, *span)])
 
 
 def _beside_pins(pinned: Array, offsets: Array) -> Array:
@@ -185,8 +199,10 @@ def _as_asked(path: CartesianPath, rungs: Rungs, rung: Index, branch: Index, pla
     return keep
 
 
-def _way(path: CartesianPath, rungs: Rungs, nodes: _Nodes, furthest: Array) -> Array:
-    """(T, C) coordinates of the cheapest way through the nodes. `furthest` (C,) they may move from rung to rung."""
+def _way(path: CartesianPath, rungs: Rungs, nodes: _Nodes, furthest: Array | None) -> tuple[Array, float]:
+    """(T, C) coordinates of the cheapest way through the nodes, and its cost. `furthest` (C,): the most they may move
+    between rungs.
+    """
     costs = _Costs(path, rungs, nodes, furthest)
     cost = np.zeros(nodes.first[1])
     parents: list[Index] = []
@@ -204,15 +220,16 @@ def _way(path: CartesianPath, rungs: Rungs, nodes: _Nodes, furthest: Array) -> A
     for parent in reversed(parents):
         at = int(parent[at])
         chosen.append(at)
-    return nodes.coordinates[nodes.first[:-1] + np.array(chosen[::-1])]
+    return nodes.coordinates[nodes.first[:-1] + np.array(chosen[::-1])], float(cost.min())
 
 
 class _Costs:
     """What it costs to get from node to node."""
 
-    def __init__(self, path: CartesianPath, rungs: Rungs, nodes: _Nodes, furthest: Array) -> None:
+    def __init__(self, path: CartesianPath, rungs: Rungs, nodes: _Nodes, furthest: Array | None) -> None:
         arm = path.task.arm
-        self.path, self.rungs, self.nodes, self.furthest = path, rungs, nodes, furthest
+        self.path, self.rungs, self.nodes = path, rungs, nodes
+        self.furthest = np.full(rungs.pinned.shape[1], np.inf) if furthest is None else furthest
         moving = np.isfinite(arm.limits.velocity).any(axis=1)
         self.matrix = arm.limits.matrix[moving]
         limits = (rows[moving] for rows in (arm.limits.velocity, arm.limits.acceleration, arm.limits.jerk))

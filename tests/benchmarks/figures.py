@@ -212,7 +212,7 @@ def free_track() -> None:
             times.append(pathplan.plan(task).motion_time)
         ratios.append(times[0] / min(times[1:]))
     say("free track over the better given course: median, time in motion", float(np.median(ratios)), "below 1")
-    say("free track over the better given course: worst, time in motion", max(ratios), "about 1 or less")
+    say("free track over the better given course: worst, time in motion", max(ratios), "below 1")
 
 
 def main() -> None:
