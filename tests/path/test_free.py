@@ -427,3 +427,18 @@ def test_an_arc_by_its_centre_on_the_pallet_runs_about_it_there() -> None:
     assert np.abs(np.linalg.norm(poses[:, :2, 3], axis=1) - 0.15).max() < 1e-6
     assert np.unwrap(np.arctan2(poses[:, 1, 3], poses[:, 0, 3]))[-1] - np.pi == pytest.approx(2 * np.pi, abs=1e-5)
     assert q[-1, 6] == pytest.approx(-1.0, abs=1e-12)
+
+
+def test_what_is_left_free_besides_makes_nothing_slower() -> None:
+    """A track, then a track and the roll of the tool: two coordinates are chosen as well as one."""
+    arm = stacker("stacker7")
+    poses = pose(-600, -500, 300, yaw=40), pose(500, -620, 420, yaw=-30), pose(500, -620, 250, yaw=60)
+    asked = [step(motion, target) for motion, target in zip(("joint", "line", "line"), poses, strict=True)]
+    low, high = arm.limits.velocity.T
+
+    def time(steps) -> float:
+        path = follow_task(task(arm, arm.positions["home"], steps))
+        moved = [np.diff(sampled(path, k), axis=0) @ arm.limits.matrix.T for k in range(3)]
+        return sum(float(np.maximum(rows / high, rows / low).max(axis=1).sum()) for rows in moved)
+
+    assert time(rolled_free(asked)) < 1.02 * time(asked)
