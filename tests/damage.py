@@ -46,7 +46,7 @@ class Case:
 def cases(folder: Path) -> list[Case]:
     """Whole files of every kind, written into a folder, with the arms beside them."""
     found = []
-    for arm in sorted((ROOT / "robots").glob("*.toml")):
+    for arm in sorted((ROOT / "robots").iterdir()):  # arm files, and URDF files that they name
         (folder / arm.name).write_bytes(arm.read_bytes())
     (folder / "parts").mkdir(exist_ok=True)
     parts = sorted((ROOT / "examples" / "parts").glob("*"))
