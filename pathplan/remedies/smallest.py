@@ -22,7 +22,7 @@ def smallest(promises: Test, works: Test, sizes: Sequence[float], grain: float) 
     if first is None:
         return None
     below, size = sizes[first - 1] if first else 0.0, sizes[first]
-    step = grain if size < 100.0 * grain else 10.0 * grain
+    step = grain if below < 100.0 * grain else 10.0 * grain
     low, high = int(np.floor(below / step + 1e-9)), round(size / step)
     while high - low > 1:
         middle = (low + high) // 2

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from hypothesis import given
+from hypothesis import example, given
 from hypothesis import strategies as st
 
 from pathplan.remedies.smallest import smallest
@@ -11,6 +11,7 @@ SIZES = (1.0, 2.0, 5.0, 10.0, 20.0, 50.0, 100.0, 200.0)
 
 
 @given(st.floats(0.0, 200.0), st.floats(0.0, 3.0))
+@example(5.5, 0.0)
 def test_a_threshold_is_found_to_a_grain(promising: float, more: float) -> None:
     """Where looking quickly promises a little too much, the next grains or sizes are tried."""
     needed = promising + more
