@@ -22,16 +22,20 @@ from pathplan.arm.geometry import meeting_points
 from pathplan.arm.kinematics import joint_frame, smallest_singular_value, spatial_axes
 from pathplan.arm.relative import ROLL
 from pathplan.path.bends import Bend, Bump
-from pathplan.path.cartesian import CartesianPath, tool_of
+from pathplan.path.cartesian import CartesianPath, Finding, tool_of
 from pathplan.path.geometry import Segments
 from pathplan.path.joint import Array
 from pathplan.path.rotations import rotation_vector
 from pathplan.path.singular import nearness
 from pathplan.path.tracking import Tracks, track
-from pathplan.task.model import Blend
+from pathplan.task.model import Blend, Step
 
 __all__ = ["least_turn", "with_bends"]
 
+UNUSED = (
+    "the tolerance is not made use of: where axes are left free, a frame turns or the roll is free for five axes, "
+    "the path keeps the orientation it is programmed with"
+)
 _WIDTH = 0.5  # path parameter on each side of a bump: the wider, the gentler, and it needs no more angle
 _GENTLE = 4.0  # and at least that over the root of its angle: joints then turn about once a rad of the path
 _STEEPEST = 4.0  # a bump narrower than this many times its angle turns the tool faster than it saves
@@ -53,11 +57,12 @@ def with_bends(path: CartesianPath, tracks: Tracks, frames: Array) -> tuple[Cart
     """
     follower = path.follower
     if follower.held or len(follower.views) > 1 or follower.arm.joint_names[-1] == ROLL:
-        return path, tracks  # what is free there is chosen away from singularities, in any frame
+        unused = [Finding(leg.step.index, UNUSED) for leg in path.legs if leg.segment >= 0 and _tolerance(leg.step)]
+        return replace(path, findings=(*path.findings, *unused)), tracks
     origin: list[int] = []
     bends: list[Bend] = []
     for i, leg in enumerate(path.legs):
-        if leg.segment >= 0 and (leg.step.orientation_tolerance or leg.step.tilt):
+        if leg.segment >= 0 and _tolerance(leg.step):
             found = _bends(path, i, tracks)
             bends += found
             origin += [leg.segment] * len(found)
@@ -72,12 +77,17 @@ def with_bends(path: CartesianPath, tracks: Tracks, frames: Array) -> tuple[Cart
     return replace(path, segments=segments, course=course, origin=every), tracks.followed_by(more)
 
 
+def _tolerance(step: Step) -> float:
+    """rad that a step leaves to the orientation of its tool; 0 for none."""
+    return step.orientation_tolerance or step.tilt
+
+
 def _bends(path: CartesianPath, leg: int, tracks: Tracks) -> list[Bend]:
     """Different ways to bend the segment of a leg, one for each pair of branches that meet in its singularities."""
     entry = path.legs[leg]
     step, k = entry.step, entry.segment
     arm = path.task.arm.equipped(tool=tool_of(path.task.arm, step.tool))
-    tolerance = step.orientation_tolerance or step.tilt
+    tolerance = _tolerance(step)
     segments = path.segments.take(np.array([k]))
     before = path.legs[leg - 1].step.blend if leg else None
     low, high = _kept(segments, before), float(segments.length[0]) - _kept(segments, step.blend)

@@ -140,6 +140,15 @@ def test_a_line_on_a_turning_pallet_is_a_line_there() -> None:
     assert np.linalg.norm(inside[:, :3, 3] - steps[1].target.frame_from_tool[:3, 3], axis=1).max() < 0.02 + 1e-6
 
 
+def test_a_tolerance_that_is_of_no_use_there_is_told() -> None:
+    steps = [
+        on_pallet("joint", -250, 0, 200, axes={"pallet": 0.0}),
+        on_pallet("line", -250, 200, 200, axes={"pallet": 0.7}, orientation_tolerance=0.02),
+    ]
+    told = [str(finding) for finding in follow_task(on_the_pallet(steps)).findings]
+    assert any(text.startswith("step 2: the tolerance is not made use of") for text in told)
+
+
 def test_the_tool_can_stand_on_the_pallet_while_it_turns() -> None:
     steps = [
         on_pallet("joint", -200, 0, 200, axes={"pallet": 0.0}),
