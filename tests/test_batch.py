@@ -174,7 +174,9 @@ def test_an_error_of_our_own_stops_only_its_task(folder, run, monkeypatch):
 def test_ctrl_c_stops_all_and_leaves_nothing(folder):
     command = [sys.executable, "-m", "pathplan", "plan", "many.toml", "again.toml", "--pace", "3 %", "--jobs", "2"]
     path = os.pathsep.join([str(ROOT), *sys.path])
-    with subprocess.Popen(command, start_new_session=True, env={**os.environ, "PYTHONPATH": path}) as process:
+    options: dict = {"start_new_session": True, "env": {**os.environ, "PYTHONPATH": path}}
+    heard = lambda: signal.signal(signal.SIGINT, signal.SIG_DFL)  # noqa: E731  # by tests in the background too
+    with subprocess.Popen(command, **options, preexec_fn=heard) as process:
         while process.poll() is None and not list(folder.glob(".*.part")):
             time.sleep(0.01)  # until the first of them is being written
         os.killpg(process.pid, signal.SIGINT)  # as a terminal does it

@@ -379,7 +379,7 @@ def test_a_refused_plan_says_what_would_work(folder, run):
     assert status == 1 and line.startswith("pathplan: far.toml: step[2]: ")
     remedy = "move the target of step 2 (down) by 370 mm along z: xyz = [900, 500, 470]"
     heading, *found = out.splitlines()
-    assert heading == "would work, each change by itself and timed again:"
+    assert heading == "would work, each change by itself and planned again:"
     assert any(text.startswith(f"- {remedy} (cycle time ") for text in found)
     document = json.loads(run("plan", "far.toml", "--json", "--remedies", "600 s")[1])
     assert document["refused"]["step"] == 2 and document["refused"]["message"] == line.removeprefix("pathplan: ")
