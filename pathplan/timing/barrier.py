@@ -9,6 +9,7 @@ are.
 
 from __future__ import annotations
 
+import contextlib
 from typing import Protocol, TypeVar
 
 import numpy as np
@@ -21,6 +22,7 @@ State = TypeVar("State")
 
 _SUFFICIENT = 1e-4  # Armijo: share of the predicted decrease that a step must deliver
 _BOUNDARY = 0.98  # share of the way to the nearest wall that a step may go
+_RAISED = (0.0, 1e-13, 1e-11, 1e-9, 1e-7)
 _ROUND_OFF = 1e-12  # relative: a decrease smaller than this can't be told from rounding
 
 
@@ -94,6 +96,23 @@ def follow_central_path(
             return x, iteration + 1
         mu = np.where(small & ~finished, np.maximum(mu * factor, final), mu)
     raise PathplanError(_stuck(f"not converged in {iterations} Newton steps", ~done, mu))
+
+
+def newton_step(band: Array, gradient: Array) -> Array:
+    """-H^-1 gradient, H positive definite in upper banded form; `scipy.linalg.solveh_banded`.
+
+    Where rounding has cost H that, its diagonal is raised by the least of a few tiny shares that mends it: the step
+    still lowers the barrier. Raises PathplanError where none does.
+    """
+    from scipy.linalg import LinAlgError, solveh_banded
+
+    for share in _RAISED:
+        if share:
+            band = band.copy()
+            band[-1] *= 1.0 + share
+        with contextlib.suppress(LinAlgError):
+            return np.asarray(-solveh_banded(band, gradient, check_finite=False))
+    raise PathplanError("timing: the Newton matrix of the barrier is not positive definite")
 
 
 def _stuck(what: str, which: NDArray[np.bool_], mu: Array) -> str:

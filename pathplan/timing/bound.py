@@ -30,7 +30,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.timing.barrier import follow_central_path, sum_by
+from pathplan.timing.barrier import follow_central_path, newton_step, sum_by
 from pathplan.timing.coarse import CoarseTiming, coarse_timing, speed_wall, tool_wall
 from pathplan.timing.motion import Motion
 
@@ -254,8 +254,6 @@ class _Weak:
         return total
 
     def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
-        from scipy.linalg import solveh_banded
-
         m, m_node = mu[self.owner] * self.share, mu[self.node_owner] * self.node_share
         above, below = 1 / (self.high - state.rows), 1 / (state.rows - self.low)
         slope, bend = m_node * (above - below), m_node * (above * above + below * below)
@@ -281,7 +279,7 @@ class _Weak:
         shared += room[node] * (self.tool_on_b[1][:, :-1] * self.tool_on_b[0][:, 1:]).sum(axis=0)
         shared += room[node] ** 2 / m_node[node] * pull[1][:-1] * pull[0][1:]
         band[0, 1:] = np.where(neighbours, shared, 0.0)
-        step = -solveh_banded(band, gradient, check_finite=False)
+        step = newton_step(band, gradient)
         return step, -sum_by(self.owner, gradient * step, self.count)
 
     def reach(self, state: _State, step: Array) -> Array:

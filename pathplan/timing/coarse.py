@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from pathplan.timing.barrier import follow_central_path, sum_by
+from pathplan.timing.barrier import follow_central_path, newton_step, sum_by
 from pathplan.timing.motion import Motion
 
 Array = NDArray[np.float64]
@@ -224,8 +224,6 @@ class _Coarse:
         return total
 
     def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
-        from scipy.linalg import solveh_banded
-
         b, root = state.b, state.root
         gradient, diagonal, coupling = cell_cost(self.h, b, root, self.left, self.right, len(b))
         above, below = 1 / (self.high - state.acceleration), 1 / (state.acceleration - self.low)
@@ -245,7 +243,7 @@ class _Coarse:
         band = np.zeros((2, len(b)))
         band[1] = diagonal
         band[0, self.right] = coupling
-        step = -solveh_banded(band, gradient, check_finite=False)
+        step = newton_step(band, gradient)
         return step, -sum_by(self.owner, gradient * step, self.count)
 
     def reach(self, state: _State, step: Array) -> Array:

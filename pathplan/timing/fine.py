@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import PathplanError
-from pathplan.timing.barrier import sum_by
+from pathplan.timing.barrier import newton_step, sum_by
 from pathplan.timing.mesh import GAUSS_LOBATTO, LOBATTO_WEIGHTS, Mesh, Rows, hermite, joined, rows_at
 
 Array = NDArray[np.float64]
@@ -145,8 +145,6 @@ class FineProblem:
         return total
 
     def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
-        from scipy.linalg import solveh_banded
-
         gradient, matrix = self._local(state, mu[self.cell_owner] * self.share)
         cells = len(self.cell_owner)
         local = self._to_gradient @ gradient.reshape(-1, cells)
@@ -159,7 +157,7 @@ class FineProblem:
         for entry, (i, j) in zip(cell, _CELL_PAIRS, strict=True):
             power = i % 2 + j % 2
             band[3 - (j - i), self.first + j] += entry if power == 0 else entry * self.stretch**power
-        step = -solveh_banded(band, total, check_finite=False)
+        step = newton_step(band, total)
         return step, -sum_by(self.owner, total * step, self.count)
 
     def _local(self, state: _State, m: Array) -> tuple[Array, Array]:
