@@ -7,7 +7,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from pathplan.auditing.held import HELD_WITHIN, Holding, held_findings
@@ -120,7 +120,8 @@ def test_pieces_of_a_table_tell_the_same(seed, chunk):
 
 @given(st.floats(0.5, 1.5), st.floats(0.5, 1.5))
 def test_between_two_rows_the_speed_is_straight(one, two):
-    """Against a fine quadrature of the interval."""
+    """Against a fine quadrature of the interval, which can't tell a speed that stays at the border of what is held."""
+    assume(min(abs(abs(x - 1.0) - HELD_WITHIN) for x in (one, two)) > 1e-4)
     (found,) = held(np.array([one, two]) * ASKED, cycle=1.0)
     speed = ASKED * np.linspace(one, two, 200001)
     inside = np.abs(speed / ASKED - 1) <= HELD_WITHIN
