@@ -21,9 +21,7 @@ __all__ = ["passes_of"]
 
 Array = NDArray[np.float64]
 _TRAVEL = 0.02  # rad, or arm lengths, that all joints together move between rows looked at first
-_STEEPEST = (
-    3.0  # no singular value changes by more than this times that travel (see `auditing.tool`, for common reaches)
-)
+_STEEPEST = 3.0  # times that travel: no singular value changes by more (see `auditing.tool`, for common reaches)
 _FEWEST = 500  # instants at which a stretch is looked at
 _MOST = 50_000  # instants of a stretch that are looked at: bounds memory where one takes hours
 _STILL = 1e-6  # m/s: a tool that never moves faster only turns

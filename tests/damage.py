@@ -297,7 +297,7 @@ def judge(case: Case, content: bytes, folder: Path, *, planned: bool) -> str:
 
 def main(count: int, seed: int = 0) -> None:
     """Judge `count` damaged files and print what became of them; a file that fails is kept."""
-    from tempfile import TemporaryDirectory
+    from tempfile import TemporaryDirectory, gettempdir
 
     warnings.simplefilter("error")
     seen: Counter[str] = Counter()
@@ -314,7 +314,7 @@ def main(count: int, seed: int = 0) -> None:
                 seen[f"{case.kind}: {judge(case, content, folder, planned=rng.random() < PLANNED)}"] += 1
             except AssertionError as error:
                 seen["FAILED"] += 1
-                kept = Path(f"/tmp/damage-{seed}-{k}{Path(case.name).suffix}")
+                kept = Path(gettempdir()) / f"damage-{seed}-{k}{Path(case.name).suffix}"
                 kept.write_bytes(content)
                 print(f"case {k}: {error}: kept as {kept}", flush=True)
             slowest = max(slowest, (time.monotonic() - started, f"case {k}, {case.kind} {case.name}"))

@@ -6,7 +6,7 @@ most motions of a well-sized arm are of that kind, and dynamics cost more than a
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -35,13 +35,18 @@ def time_batch(motions: Sequence[Motion]) -> list[Timed]:
 
     Raises PathplanError when a problem does not converge.
     """
-    found = _solved([replace(motion, torque=None) for motion in motions])
-    heavy = [k for k, motion in enumerate(motions) if overloaded(motion, found[k].timing)]
-    if heavy:
-        for k, timed in zip(heavy, _solved([motions[k] for k in heavy]), strict=True):
-            found[k] = timed
+    bounds = np.zeros(len(motions))
+
+    def solve(rows: Sequence[int], limited: Sequence[Motion]) -> list[StretchTiming]:
+        coarse = coarse_timing(limited)
+        timings = time_motions(limited, coarse)
+        bounds[rows] = bound_durations(limited, coarse)
+        return timings
+
+    found = _torque_where_needed(motions, solve) if motions else []
     return [
-        Timed(replace(timed.timing, motion=motion), timed.bound) for motion, timed in zip(motions, found, strict=True)
+        Timed(replace(timing, motion=motion), float(bound))
+        for timing, motion, bound in zip(found, motions, bounds, strict=True)
     ]
 
 
@@ -54,38 +59,33 @@ def changed_durations(changes: Sequence[tuple[Motion, StretchTiming | None]]) ->
     found = np.zeros(len(changes))
     again = [k for k, (_, timing) in enumerate(changes) if timing is not None]
     fresh = [k for k, (_, timing) in enumerate(changes) if timing is None]
-    for rows, solve in ((again, _timed_again), (fresh, _timed_anew)):
-        for first in range(0, len(rows), BATCH):
-            part = rows[first : first + BATCH]
-            found[part] = solve([changes[k] for k in part])
+    for numbers in (again, fresh):
+        for first in range(0, len(numbers), BATCH):
+            part = numbers[first : first + BATCH]
+            before = [timing for timing in (changes[k][1] for k in part) if timing is not None]
+
+            def solve(
+                rows: Sequence[int], limited: Sequence[Motion], before: list[StretchTiming] = before
+            ) -> list[StretchTiming]:
+                if not before:
+                    return time_motions(limited)
+                return time_again(list(zip(limited, (before[k] for k in rows), strict=True)))
+
+            found[part] = [timing.duration for timing in _torque_where_needed([changes[k][0] for k in part], solve)]
     return found.tolist()
 
 
-def _timed_again(changes: Sequence[tuple[Motion, StretchTiming | None]]) -> list[float]:
-    pairs = [(motion, timing) for motion, timing in changes if timing is not None]
-    found = time_again([(replace(motion, torque=None), timing) for motion, timing in pairs])
-    heavy = [k for k, (motion, _) in enumerate(pairs) if overloaded(motion, found[k])]
-    for k, timing in zip(heavy, time_again([pairs[k] for k in heavy]), strict=True):
-        found[k] = timing
-    return [timing.duration for timing in found]
-
-
-def _timed_anew(changes: Sequence[tuple[Motion, StretchTiming | None]]) -> list[float]:
-    motions = [motion for motion, _ in changes]
-    found = time_motions([replace(motion, torque=None) for motion in motions])
-    heavy = [k for k, motion in enumerate(motions) if overloaded(motion, found[k])]
-    for k, timing in zip(heavy, time_motions([motions[k] for k in heavy]), strict=True):
-        found[k] = timing
-    return [timing.duration for timing in found]
-
-
-def _solved(motions: Sequence[Motion]) -> list[Timed]:
-    if not motions:
-        return []
-    coarse = coarse_timing(motions)
-    timings = time_motions(motions, coarse)
-    bounds = bound_durations(motions, coarse)
-    return [Timed(timing, float(bound)) for timing, bound in zip(timings, bounds, strict=True)]
+def _torque_where_needed(
+    motions: Sequence[Motion], solve: Callable[[Sequence[int], Sequence[Motion]], list[StretchTiming]]
+) -> list[StretchTiming]:
+    """Timings by `solve`, which is given numbers and motions: without torque limits, then with where it takes them."""
+    every = range(len(motions))
+    found = solve(every, [replace(motion, torque=None) for motion in motions])
+    heavy = [k for k in every if overloaded(motions[k], found[k])]
+    if heavy:
+        for k, timing in zip(heavy, solve(heavy, [motions[k] for k in heavy]), strict=True):
+            found[k] = timing
+    return found
 
 
 def overloaded(motion: Motion, timing: StretchTiming) -> bool:
