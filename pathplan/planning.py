@@ -17,9 +17,8 @@ from pathplan.task.model import Task
 
 if TYPE_CHECKING:
     from pathplan.arm import Arm
-    from pathplan.auditing import Audit, Evidence, LoadChange
+    from pathplan.auditing import Audit, Evidence
     from pathplan.auditing.passes import Pass
-    from pathplan.auditing.tolerances import TurnedAside
     from pathplan.path.taskpath import Stretch, TaskPath
     from pathplan.savings import Saving
     from pathplan.timeline import Part
@@ -31,9 +30,7 @@ if TYPE_CHECKING:
 Array = NDArray[np.float64]
 Progress = Callable[[str, int, int], None]  # what is being done, how many are done, of how many
 
-_DENSER = 20  # the trajectory is audited at this many times the rows' rate
 _CHUNK = 16384
-_GROUP = 16  # stretches that the audit looks at in one piece of work
 _NO_LIMIT = 1e6  # a row without a limit of some kind gets this many times the arm's largest
 
 
@@ -124,9 +121,11 @@ class Plan:
 
     def judge(self, *, progress: Progress | None = None, jobs: int = 1) -> Audit:
         """The `audit`, telling how far it has come, found by up to `jobs` processes."""
+        from pathplan.evidence import gather_evidence
+
         if "audit" not in self.__dict__:
             say = progress or _silent
-            self.__dict__["_evidence"] = self._gathered(say, jobs)
+            self.__dict__["evidence"] = gather_evidence(self, say, jobs)
             self.__dict__["audit"] = self._judged(say)
         return self.audit
 
@@ -175,7 +174,7 @@ class Plan:
 
         def visit(part: Part, rows: NDArray[np.intp], local: NDArray[np.int64]) -> None:
             values = evaluate(part, np.asarray(tick_times(local, self.task.cycle)), n)
-            carrying = self._carrying(part)
+            carrying = self.carrying(part)
             q, qd, qdd = values.position, values.velocity, values.acceleration
             columns[:, rows] = q, qd, qdd, values.jerk
             step[rows] = values.step
@@ -202,68 +201,19 @@ class Plan:
             meta=self.meta,
         )
 
+    @cached_property
     def evidence(self) -> Evidence:
         """Path deviation at the rows and midway between them, and the trajectory's peaks 20 times denser."""
-        return self._evidence
+        from pathplan.evidence import gather_evidence
 
-    @cached_property
-    def _evidence(self) -> Evidence:
-        return self._gathered(_silent, 1)
-
-    def _gathered(self, say: Progress, jobs: int) -> Evidence:
-        from pathplan.auditing import Evidence, worse_deviation, worse_peaks
-        from pathplan.workers import work_through
-
-        moving = [part for part in self.parts if part.timing is not None]
-        groups = [moving[k : k + _GROUP] for k in range(0, len(moving), _GROUP)]
-        say("audit", 0, 1)
-        at_rows = midway = None
-        peaks: tuple[Any, ...] = ()
-        for one, between, dense in work_through(
-            self._evidence_of, groups, jobs, lambda done: say("audit", done, 2 * len(groups))
-        ):
-            at_rows, midway = worse_deviation(at_rows, one), worse_deviation(midway, between)
-            peaks = worse_peaks(peaks, dense)
-        return Evidence(at_rows, midway, peaks, self._load_changes(), self._turned_aside())
-
-    def _turned_aside(self) -> tuple[TurnedAside, ...]:
-        """How far the tool leaves its orientation in the steps that tolerate it, at the rows and midway between."""
-        from pathplan.auditing.tolerances import worst_turns
-        from pathplan.timeline import evaluate
-
-        allowed = {step.index: step.orientation_tolerance or step.tilt for step in self.task.steps}
-        allowed = {index: angle for index, angle in allowed.items() if angle > 0}
-        found: dict[int, TurnedAside] = {}
-        for part in self.parts:
-            if part.stretch is None or not any(one.step in allowed for one in part.stretch.steps):
-                continue
-            for first in range(0, 2 * (part.last - part.first) + 1, _CHUNK):
-                ticks = np.arange(first, min(first + _CHUNK, 2 * (part.last - part.first) + 1))
-                local = np.asarray(ticks * (self.task.cycle / 2), dtype=np.float64)
-                rows = evaluate(part, local, len(self.task.arm.joints))
-                programmed, known = part.stretch.programmed(rows.s)
-                actual = part.stretch.arm.forward(rows.position)
-                times = part.first * self.task.cycle + local
-                worst_turns(found, allowed, actual[known], programmed[known], rows.step[known], times[known])
-        return tuple(found[index] for index in sorted(found))
-
-    def _evidence_of(self, parts: Sequence[Part]) -> tuple[Any, Any, tuple[Any, ...]]:
-        from pathplan.auditing import worse_deviation, worse_peaks
-
-        at_rows = midway = None
-        peaks: tuple[Any, ...] = ()
-        for part in parts:
-            at_rows = worse_deviation(at_rows, self._deviation(part, 0.0))
-            midway = worse_deviation(midway, self._deviation(part, 0.5))
-            peaks = worse_peaks(peaks, self._dense_peaks(part))
-        return at_rows, midway, peaks
+        return gather_evidence(self, _silent, 1)
 
     @cached_property
     def _arms(self) -> dict[tuple[str, str | None], Arm]:
         """The arm by tool and payload, as the stretches carry them."""
-        return {_load(stretch.arm): stretch.arm for stretch in self.path.stretches}
+        return {load_of(stretch.arm): stretch.arm for stretch in self.path.stretches}
 
-    def _carrying(self, part: Part) -> Arm:
+    def carrying(self, part: Part) -> Arm:
         """The arm with what it carries in a part; in a wait, what the waiting step says."""
         from pathplan.path.cartesian import tool_of
 
@@ -273,71 +223,12 @@ class Plan:
         step = self.task.steps[part.wait.step]
         tool = tool_of(self.task.arm, step.tool)
         load = (tool.name, step.payload)
-        if load == _load(self.task.arm):
+        if load == load_of(self.task.arm):
             return self.task.arm
         if load not in self._arms:
             self._arms[load] = self.task.arm.equipped(tool=tool, payload=step.payload)
         return self._arms[load]
 
-    def _load_changes(self) -> tuple[LoadChange, ...]:
-        """Where the arm takes up or leaves a load, and what that makes of the torque that holds it."""
-        from pathplan.auditing import LoadChange
-
-        if self.task.arm.links is None:
-            return ()
-        found: list[LoadChange] = []
-        carried = [self._carrying(part) for part in self.parts]
-        places: dict[tuple[Any, Any], list[int]] = {}
-        for k in range(1, len(carried)):
-            if _load(carried[k]) != _load(carried[k - 1]):
-                places.setdefault((_load(carried[k - 1]), _load(carried[k])), []).append(k)
-        for at in places.values():
-            q = np.array([self.parts[k - 1].rest for k in at])
-            still = np.zeros_like(q)
-            change = carried[at[0]].torque(q, still, still) - carried[at[0] - 1].torque(q, still, still)
-            for k, torque in zip(at, change, strict=True):
-                time = float(tick_times(self.parts[k].first, self.task.cycle))
-                found.append(LoadChange(time, _step_of(self.parts[k]), torque))
-        return tuple(sorted(found, key=lambda load: load.time))
-
-    def _deviation(self, part: Part, shift: float) -> Any:
-        from pathplan.auditing import path_deviation, worse_deviation
-        from pathplan.timeline import evaluate
-
-        assert part.stretch is not None and part.timing is not None
-        worst = None
-        cycle = self.task.cycle
-        for first in range(0, part.last - part.first + 1, _CHUNK):
-            local = (np.arange(first, min(first + _CHUNK, part.last - part.first + 1)) + shift) * cycle
-            local = local[local <= part.timing.duration]
-            rows = evaluate(part, np.asarray(local, dtype=np.float64), len(self.task.arm.joints))
-            programmed, known = part.stretch.followed(rows.s)
-            actual = part.stretch.reached(rows.s, rows.position)
-            times = np.asarray(part.first * cycle + local, dtype=np.float64)
-            worst = worse_deviation(worst, path_deviation(actual, programmed, known, times, rows.step))
-        return worst
-
-    def _dense_peaks(self, part: Part) -> Any:
-        from pathplan.auditing import joint_peaks, worse_peaks
-        from pathplan.timeline import step_at
-
-        assert part.stretch is not None and part.timing is not None
-        timing, cycle = part.timing, self.task.cycle
-        count = np.maximum(2, np.ceil(np.diff(timing.node_times) / cycle * _DENSER)).astype(int) + 1
-        worst: tuple[Any, ...] = ()
-        ends = np.cumsum(count)
-        for first in range(0, int(ends[-1]), 8 * _CHUNK):
-            point = np.arange(first, min(first + 8 * _CHUNK, int(ends[-1])))
-            cell = np.searchsorted(ends, point, side="right")
-            u = (point - (ends[cell] - count[cell])) / (count[cell] - 1)
-            q, qd, qdd, qddd = timing.at(cell, u)
-            times = part.first * cycle + timing.cell_times(cell, u)
-            step = step_at(part.stretch, timing.place(cell, u))
-            found = joint_peaks(
-                part.stretch.arm, times, step, position=q, velocity=qd, acceleration=qdd, jerk=qddd
-            )
-            worst = worse_peaks(worst, found)
-        return worst
 
 
 def plan(task: Task, *, progress: Progress | None = None, jobs: int = 1) -> Plan:
@@ -472,17 +363,9 @@ def torque_limits(arm: Arm) -> TorqueLimits | None:
     return TorqueLimits(partial(path_torque, arm), peak, corner, fall)
 
 
-def _load(arm: Arm) -> tuple[str, str | None]:
+def load_of(arm: Arm) -> tuple[str, str | None]:
     """The tool and the payload that an arm carries, by name."""
     return arm.tool.name, arm.payload.name if arm.payload is not None else None
-
-
-def _step_of(part: Part) -> int:
-    """The step that a part begins with."""
-    if part.wait is not None:
-        return part.wait.step
-    assert part.stretch is not None
-    return part.stretch.steps[0].step
 
 
 def _finite(rows: Array) -> Array:

@@ -224,7 +224,7 @@ class _Judge:
         self.jumps.finish(self.cycle)
         plan = self.plan
         names = {step.index: step.name for step in plan.task.steps} if plan else {}
-        evidence = plan.evidence() if plan else Evidence()
+        evidence = plan.evidence if plan else Evidence()
         near = self.singularity is not None and self.singularity.value < 2 * NEAR
         passes = plan.passes if plan and near else ()
         moving, waiting = self._motion_and_waiting()

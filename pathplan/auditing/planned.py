@@ -110,6 +110,7 @@ class Planned(Protocol):
     @property
     def passes(self) -> tuple[Pass, ...]: ...
 
+    @property
     def evidence(self) -> Evidence: ...
 
 

@@ -254,7 +254,7 @@ def test_loads_of_a_plan(planned):
     change = (loaded.torque(stop, 0 * stop, 0 * stop) - task.arm.torque(stop, 0 * stop, 0 * stop))[0]
     jumps = {jump.cause: jump for jump in plan.audit.drives[1].jumps}
     assert jumps["load changes"].count == 2
-    first = plan.evidence().loads[0]
+    first = plan.evidence.loads[0]
     assert (first.step, first.time) == (2, part.first * task.cycle)
     np.testing.assert_allclose(first.torque, change, rtol=1e-9, atol=1e-9)
     assert jumps["load changes"].largest >= abs(change[1]) * (1 - 1e-9)

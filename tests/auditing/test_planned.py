@@ -80,7 +80,7 @@ def made_plan(arm, evidence=None, findings=(), corners=()):
         task=Task("", None, arm, np.zeros(3), steps, 0.004),
         path=SimpleNamespace(corners=corners, findings=findings),
         bound=2.9,
-        evidence=lambda: evidence or Evidence(),
+        evidence=evidence or Evidence(),
     )
 
 
