@@ -103,9 +103,15 @@ def _ending() -> Iterator[threading.Event]:
     """An event that Ctrl-C and SIGTERM set, where signals can be had."""
     ended = threading.Event()
     before: dict[int, Any] = {}
+
+    def end(*_: object) -> None:
+        # A handler runs within whatever the main thread does: in the middle of a wait, setting the event would wait
+        # for a lock that the same thread holds.
+        threading.Thread(target=ended.set).start()
+
     if threading.current_thread() is threading.main_thread():
         for number in (int(signal.SIGINT), int(signal.SIGTERM)):
-            before[number] = signal.signal(number, lambda *_: ended.set())
+            before[number] = signal.signal(number, end)
     try:
         yield ended
     finally:

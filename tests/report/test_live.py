@@ -172,3 +172,15 @@ def test_the_command_ends_cleanly(across, number):
             process.kill()
     assert "http://127.0.0.1:" in first and "Ctrl-C" in first and "cycle time" in second
     assert (process.returncode, errors) == (0, "") and out.rstrip().endswith("ended")
+
+
+@pytest.mark.skipif(os.name == "nt", reason="signals of POSIX")
+def test_a_signal_in_the_middle_of_a_wait_is_heard():
+    """The lock of the event is held then, by the thread that the handler runs in."""
+    code = (
+        "import signal; from pathplan.report.live import _ending\n"
+        "with _ending() as ended:\n"
+        "    with ended._cond: signal.raise_signal(signal.SIGINT)\n"
+        "    assert ended.wait(10)\n"
+    )
+    subprocess.run([sys.executable, "-c", code], cwd=ROOT, check=True, timeout=60)
