@@ -230,7 +230,6 @@ class Plan:
         return self._arms[load]
 
 
-
 def plan(task: Task, *, progress: Progress | None = None, jobs: int = 1) -> Plan:
     """Plan a task: path, branches, near time-optimal timing, rows on the controller's cycle.
 
@@ -337,9 +336,7 @@ def motion_of(stretch: Stretch) -> Motion:
     limits = stretch.arm.limits
     used = [np.isfinite(rows).any(axis=1) for rows in (limits.velocity, limits.acceleration, limits.jerk)]
     kept = np.any(used, axis=0)
-    velocity, acceleration, jerk = (
-        _finite(rows[kept]) for rows in (limits.velocity, limits.acceleration, limits.jerk)
-    )
+    velocity, acceleration, jerk = (_finite(rows[kept]) for rows in (limits.velocity, limits.acceleration, limits.jerk))
     caps = tuple(Cap(*cap) for cap in stretch.caps if any(value is not None for value in cap[2:5]))
     tool, turning = partial(tool_derivatives, stretch.arm), partial(tool_turning, stretch.arm)
     torque = torque_limits(stretch.arm)

@@ -135,9 +135,7 @@ def step_at(stretch: Stretch, s: Array) -> Integers:
     return np.array([p.step for p in moving], dtype=np.int64)[np.searchsorted(borders, s, side="right")]
 
 
-def in_parts(
-    parts: Sequence[Part], ticks: Integers, visit: Callable[[Part, NDArray[np.intp], Integers], None]
-) -> None:
+def in_parts(parts: Sequence[Part], ticks: Integers, visit: Callable[[Part, NDArray[np.intp], Integers], None]) -> None:
     """Call `visit(part, rows, local ticks)` for each part with the rows (indices into `ticks`) that fall into it.
 
     The row on the tick where two parts meet belongs to the earlier; tick 0 belongs to the first with any rows.

@@ -138,9 +138,7 @@ class Table:
         problems: where `finish` puts unknown keys; without it `finish` raises.
     """
 
-    def __init__(
-        self, data: Mapping[str, Any], file: str, path: str = "", *, problems: Problems | None = None
-    ) -> None:
+    def __init__(self, data: Mapping[str, Any], file: str, path: str = "", *, problems: Problems | None = None) -> None:
         self.data = data
         self.file = file
         self.path = path
@@ -193,9 +191,7 @@ class Table:
         if (positive and result <= 0.0) or (not_negative and result < 0.0):
             known = DIMENSIONS[dimension]
             bound = "above zero" if positive else "of zero or more"
-            raise self.error(
-                key, f'expected {known.phrase} {bound} such as "{known.example}", got {toml_text(value)}'
-            )
+            raise self.error(key, f'expected {known.phrase} {bound} such as "{known.example}", got {toml_text(value)}')
         return result
 
     def text(self, key: str, default: Any = _REQUIRED) -> Any:
@@ -223,9 +219,7 @@ class Table:
         """One of the words of `options`; the nearest one is suggested."""
         value = self.take(key, default)
         if key in self.data and value not in options:
-            raise self.error(
-                key, f"expected {listed(options)}, got {toml_text(value)}{nearest(value, options)}"
-            )
+            raise self.error(key, f"expected {listed(options)}, got {toml_text(value)}{nearest(value, options)}")
         return value
 
     def vector(self, key: str, size: int, dimension: str, default: Any = _REQUIRED) -> Any:
@@ -248,9 +242,7 @@ class Table:
         """A list of three lengths within `FARTHEST`: (3,) array, m, read-only; or `default`."""
         value = self.vector(key, 3, "length", default)
         if key in self.data and np.max(np.abs(value)) > FARTHEST:
-            raise self.error(
-                key, f"expected coordinates within {FARTHEST:g} m, got {toml_text(self.data[key])}"
-            )
+            raise self.error(key, f"expected coordinates within {FARTHEST:g} m, got {toml_text(self.data[key])}")
         return value
 
     def table(self, key: str, default: Any = _REQUIRED) -> Any:
@@ -271,9 +263,7 @@ class Table:
         """An array of tables ([[step]]), counted from 1 in messages; empty where the key is missing."""
         value = self.take(key, [])
         if not isinstance(value, list):
-            raise self.error(
-                key, f"expected a list of tables [[{self._key_path(key)}]], got {toml_text(value)}"
-            )
+            raise self.error(key, f"expected a list of tables [[{self._key_path(key)}]], got {toml_text(value)}")
         rows = []
         for number, row in enumerate(value, start=1):
             path = f"{self._key_path(key)}[{number}]"
@@ -290,9 +280,7 @@ class Table:
             quaternion = self.vector("quat", 4, "number")
             length = math.hypot(*quaternion)
             if not abs(length - 1.0) <= QUATERNION_TOLERANCE:
-                raise self.error(
-                    "quat", f"expected a quaternion [w, x, y, z] of length 1, got length {length:.9g}"
-                )
+                raise self.error("quat", f"expected a quaternion [w, x, y, z] of length 1, got length {length:.9g}")
             return read_only(rotation_from_quaternion(quaternion / length))
         if self.has("rpy"):
             return read_only(rotation_from_rpy(self.vector("rpy", 3, "angle")))

@@ -1,8 +1,8 @@
 """What people look at: screens, the report and its live page, figures.
 
-    from pathplan.report import figures, write_report
-    write_report(plan, "pick.html", savings=plan.savings())
-    figures.velocity(plan).savefig("velocity.png")
+from pathplan.report import figures, write_report
+write_report(plan, "pick.html", savings=plan.savings())
+figures.velocity(plan).savefig("velocity.png")
 """
 
 from __future__ import annotations

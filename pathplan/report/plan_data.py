@@ -50,8 +50,7 @@ def plan_as_dict(plan: Plan) -> dict[str, Any]:
         },
         "steps": _steps(plan, audit),
         "marks": [
-            {"name": mark.name, "time_s": mark.time, "row": mark.row + 1, "step": mark.step + 1}
-            for mark in plan.marks
+            {"name": mark.name, "time_s": mark.time, "row": mark.row + 1, "step": mark.step + 1} for mark in plan.marks
         ],
         "audit": audit,
     }

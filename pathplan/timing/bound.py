@@ -31,8 +31,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.timing.barrier import follow_central_path, newton_step, sum_by
-from pathplan.timing.coarse import CoarseTiming, coarse_timing, speed_wall, tool_wall
-from pathplan.timing.motion import Motion
+from pathplan.timing.coarse import CoarseTiming, coarse_timing
+from pathplan.timing.motion import Along, Motion
 
 Array = NDArray[np.float64]
 
@@ -76,36 +76,33 @@ class _Mesh:
         cell = np.tile(self.cell, points)
         s, s1, s2 = self.coarse.at(cell, tau.ravel())
         piece = self.coarse.piece[cell]
-        q1, q2 = motion.rows(piece, s, 2)
-        wall = np.minimum(speed_wall(q1, motion.velocity), tool_wall(motion, piece, s)) / s1**2
+        along = motion.along(piece, s, 2)
+        q1, q2 = along.rows
+        wall = along.wall() / s1**2
         shape = (-1, points, len(h))
         half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])[:, None, None]
         first, second = (q1.T * s1).reshape(shape) / half, (q2.T * s1**2 + q1.T * s2).reshape(shape) / half
         limits = [np.broadcast_to(motion.acceleration[:, k, None, None] / half, first.shape) for k in range(2)]
         rows = [(0.5 * first, 0.5 * second, second, np.zeros_like(first), limits[0], limits[1])]
-        torque = motion.torque_rows(piece, s, s1, s2)
+        torque = along.torque_rows(s1, s2)
         if torque is not None:
             slope = torque.on_slope.reshape(shape)
             change = np.einsum("pk,rkn->rpn", _differentiation(x), slope) * (2.0 / h)
             high = 1.0 - torque.constant.reshape(shape)
             never = np.full_like(slope, -np.inf)
             rows.append((slope, change, torque.on_b.reshape(shape), torque.on_root.reshape(shape), never, high))
-        tool = self._tool(piece, s, s1, s2, shape)
+        tool = _tool(along, s1, s2, shape)
         on_slope, change, level, root, low, high = (np.concatenate(parts) for parts in zip(*rows, strict=True))
         weight = 0.5 * w[:, None] * h
         return _Field(on_slope, change, level, root, low, high, *tool, wall.reshape(shape[1:]), weight)
 
-    def _tool(
-        self, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array, shape: tuple[int, ...]
-    ) -> tuple[Array, Array, Array]:
-        cap = self.motion.tool_acceleration_cap(s)
-        slope, level = np.zeros((2, 3, len(s)))
-        capped = np.isfinite(cap)
-        if capped.any():
-            x1, x2 = self.motion.tool_derivatives(piece[capped], s[capped])
-            slope[:, capped] = 0.5 * x1.T * s1[capped]
-            level[:, capped] = x2.T * s1[capped] ** 2 + x1.T * s2[capped]
-        return slope.reshape(shape), level.reshape(shape), cap.reshape(shape[1:])
+
+def _tool(along: Along, s1: Array, s2: Array, shape: tuple[int, ...]) -> tuple[Array, Array, Array]:
+    """Coefficients on slope and level (3, P, N) of the tool's acceleration, and its cap (P, N)."""
+    cap = along.tool_acceleration_cap
+    x1, x2 = (np.where(np.isfinite(cap), value.T, 0.0) for value in along.tool)
+    slope, level = 0.5 * x1 * s1, x2 * s1**2 + x1 * s2
+    return slope.reshape(shape), level.reshape(shape), cap.reshape(shape[1:])
 
 
 def bound_durations(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | None = None) -> Array:

@@ -14,14 +14,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.timing.barrier import follow_central_path, newton_step, sum_by
-from pathplan.timing.motion import Motion
+from pathplan.timing.motion import Along, Motion
 
 Array = NDArray[np.float64]
 
 _CELLS = 60  # a stretch has about this many cells, and every piece of its path at least _CELLS_PER_PIECE
 _CELLS_PER_PIECE = 8
 _NO_LOW = -1e9  # low side of a one-sided row
-_NEVER = 1e-12  # q' below this (relative to its limit) does not limit the speed
 
 
 @dataclass(frozen=True)
@@ -65,36 +64,6 @@ def coarse_timing(motions: Sequence[Motion], *, accuracy: float = 3e-3) -> list[
     return problem.timings(b, meshes)
 
 
-def speed_walls(rows: Array, velocity: Array) -> Array:
-    """(N, R) largest (ds/dt)^2 by each velocity limit (R, 2), from q' (N, R)."""
-    limit = np.where(rows > 0, velocity[:, 1], -velocity[:, 0])
-    return 1.0 / np.maximum(np.abs(rows) / limit, _NEVER) ** 2
-
-
-def speed_wall(rows: Array, velocity: Array) -> Array:
-    """(N,) largest (ds/dt)^2 by the velocity limits (R, 2), from q' (N, R)."""
-    wall: Array = speed_walls(rows, velocity).min(axis=1)
-    return wall
-
-
-def tool_walls(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
-    """(2, N) largest (ds/dt)^2 by the caps on the tool's speed and on its turning speed, inf where there is none."""
-    walls = np.full((2, len(s)), np.inf)
-    for wall, cap, turns in ((walls[0], motion.tool_speed_cap(s), False), (walls[1], motion.tool_turning_cap(s), True)):
-        capped = np.isfinite(cap)
-        if capped.any():
-            place = piece[capped], s[capped]
-            rate = motion.tool_turning(*place) if turns else motion.tool_derivatives(*place)[0]
-            wall[capped] = (cap[capped] / np.maximum(np.linalg.norm(rate, axis=1), _NEVER)) ** 2
-    return walls
-
-
-def tool_wall(motion: Motion, piece: NDArray[np.intp], s: Array) -> Array:
-    """(N,) largest (ds/dt)^2 by either of them."""
-    wall: Array = tool_walls(motion, piece, s).min(axis=0)
-    return wall
-
-
 def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
     borders = motion.borders()
     width = np.diff(borders)
@@ -115,16 +84,16 @@ def _mesh(motion: Motion) -> tuple[Array, NDArray[np.intp]]:
     return np.concatenate([*nodes, borders[-1:]]), np.concatenate(pieces)
 
 
-def _end_rows(
-    motion: Motion, piece: NDArray[np.intp], s: Array, slope: Array, level: Array
-) -> tuple[Array, Array, Array, Array]:
-    """Coefficients on db/ds and b, and low and high, each (N, R): acceleration rows as given, then torque rows.
+def _end_rows(along: Along) -> tuple[Array, Array, Array, Array]:
+    """Coefficients on db/ds and b, and low and high, each (N, R): acceleration rows, then torque rows.
 
     Viscous torque is left out: this timing is only a clock, and a starting point for the bound.
     """
-    half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
-    low, high = (np.broadcast_to(motion.acceleration[:, k] / half, slope.shape) for k in range(2))
-    torque = motion.torque_rows(piece, s, np.ones(len(s)), np.zeros(len(s)))
+    acceleration, points = along.motion.acceleration, len(along.s)
+    half = 0.5 * (acceleration[:, 1] - acceleration[:, 0])
+    slope, level = along.rows[0] / (2 * half), along.rows[1] / half
+    low, high = (np.broadcast_to(acceleration[:, k] / half, slope.shape) for k in range(2))
+    torque = along.torque_rows(np.ones(points), np.zeros(points))
     if torque is None:
         return slope, level, low, high
     return (
@@ -161,15 +130,13 @@ class _Coarse:
         self.wall = np.full(len(self.owner), np.inf)
         coefficients, low, high = [], [], []
         for k, (motion, (s, piece)) in enumerate(zip(motions, meshes, strict=True)):
-            half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
             h = np.diff(s)[:, None]
             ends = []
             for side, at in enumerate((s[:-1], s[1:])):
-                first_rows, second_rows = motion.rows(piece, at, 2)
-                wall = np.minimum(speed_wall(first_rows, motion.velocity), tool_wall(motion, piece, at))
+                along = motion.along(piece, at, 2)
                 target = self.wall[first[k] + side : first[k] + side + len(at)]
-                np.minimum(target, wall, out=target)
-                ends.append(_end_rows(motion, piece, at, first_rows / (2 * half), second_rows / half))
+                np.minimum(target, along.wall(), out=target)
+                ends.append(_end_rows(along))
             slope = np.stack([end[0] for end in ends], axis=1) / h[:, None, :]
             both = np.stack([-slope, slope])
             both[0, :, 0] += ends[0][1]

@@ -9,8 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.timing.clock import Clock
-from pathplan.timing.coarse import speed_wall, tool_wall
-from pathplan.timing.motion import Motion
+from pathplan.timing.motion import Along, Motion
 
 Array = NDArray[np.float64]
 
@@ -108,43 +107,45 @@ def refined(mesh: Mesh, split: NDArray[np.bool_]) -> Mesh:
 
 @dataclass(frozen=True)
 class _Points:
-    """The points u of every cell of a mesh, flat, point by point."""
+    """The points u of cells of a mesh, flat, point by point."""
 
-    u: Array
+    width: Array  # (cells,)
     shape: tuple[int, int]  # (K, cells)
-    piece: NDArray[np.intp]
-    s: Array
+    along: Along
     s1: Array
     s2: Array
     s3: Array
 
 
-def _points(mesh: Mesh, u: Array) -> _Points:
-    tau = (mesh.tau[:-1] + mesh.width * u[:, None]).ravel()
-    centre = mesh.clock.derivatives(0.5 * (mesh.tau[:-1] + mesh.tau[1:]), 0)[0]
+def _points(mesh: Mesh, u: Array, cells: NDArray[np.intp] | None, highest: int) -> _Points:
+    start, width = mesh.tau[:-1], mesh.width
+    if cells is not None:
+        start, width = start[cells], width[cells]
+    centre = mesh.clock.derivatives(start + 0.5 * width, 0)[0]
     piece = np.tile(mesh.motion.path.locate(centre)[0], len(u))
-    return _Points(u, (len(u), len(mesh.tau) - 1), piece, *mesh.clock.derivatives(tau))
+    s, s1, s2, s3 = mesh.clock.derivatives((start + width * u[:, None]).ravel())
+    return _Points(width, (len(u), len(start)), mesh.motion.along(piece, s, highest), s1, s2, s3)
 
 
 def torque_rows_at(mesh: Mesh, u: Array) -> Array | None:
     """The torque rows (4, Q, K, cells) of a mesh at the points u (K,) of every cell; None without torque limits."""
-    return _torque_rows(mesh, _points(mesh, u))
+    return _torque_rows(_points(mesh, u, None, 2))
 
 
-def rows_at(mesh: Mesh, u: Array) -> Rows:
-    """The limited rows of a mesh at the points u (K,) in [0, 1] of every cell, one-sided at cell ends."""
-    motion, h = mesh.motion, mesh.width
-    points = _points(mesh, u)
-    shape, piece, s = points.shape, points.piece, points.s
+def rows_at(mesh: Mesh, u: Array, cells: NDArray[np.intp] | None = None) -> Rows:
+    """The limited rows of a mesh at the points u (K,) in [0, 1] of every cell, one-sided at cell ends.
+
+    Of some cells only if `cells` (C,) names them.
+    """
+    points = _points(mesh, u, cells, 3)
+    motion, h, shape = mesh.motion, points.width, points.shape
     s1, s2, s3 = points.s1, points.s2, points.s3
-    q1, q2, q3 = motion.rows(piece, s)
-    wall = np.minimum(speed_wall(q1, motion.velocity), tool_wall(motion, piece, s))
-    q1, q2, q3 = q1.T, q2.T, q3.T
+    q1, q2, q3 = (rows.T for rows in points.along.rows)
     p1 = q1 * s1
     p2 = q2 * s1**2 + q1 * s2
     p3 = q3 * s1**3 + 3 * q2 * s1 * s2 + q1 * s3
     with np.errstate(divide="ignore"):
-        wall = wall / s1**2
+        wall = points.along.wall() / s1**2
     half = 0.5 * (motion.acceleration[:, 1] - motion.acceleration[:, 0])
     half_jerk = 0.5 * (motion.jerk[:, 1] - motion.jerk[:, 0])
     p1, p2, p3 = (p.reshape(len(half), *shape) for p in (p1, p2, p3))
@@ -155,32 +156,28 @@ def rows_at(mesh: Mesh, u: Array) -> Rows:
         acceleration_range=(motion.acceleration / half[:, None]).T[:, :, None, None],
         jerk=np.stack([p3 * j, p2 * (1.5 * j / h), p1 * (0.5 * j / h**2)]),
         jerk_range=(motion.jerk / half_jerk[:, None]).T[:, :, None, None],
-        tool=_tool_rows(mesh, points),
-        torque=_torque_rows(mesh, points),
+        tool=_tool_rows(points),
+        torque=_torque_rows(points),
     )
 
 
-def _torque_rows(mesh: Mesh, points: _Points) -> Array | None:
-    rows = mesh.motion.torque_rows(points.piece, points.s, points.s1, points.s2)
+def _torque_rows(points: _Points) -> Array | None:
+    rows = points.along.torque_rows(points.s1, points.s2)
     if rows is None or not len(rows.joint):
         return None
     shape = (-1, *points.shape)
     on = [value.reshape(shape) for value in (rows.on_b, rows.on_slope, rows.on_root, rows.constant)]
-    return np.stack([on[0], on[1] / mesh.width, on[2], on[3]])
+    return np.stack([on[0], on[1] / points.width, on[2], on[3]])
 
 
-def _tool_rows(mesh: Mesh, points: _Points) -> Array | None:
-    cap = mesh.motion.tool_acceleration_cap(points.s)
-    capped = np.isfinite(cap)
-    if not capped.any():
+def _tool_rows(points: _Points) -> Array | None:
+    cap = points.along.tool_acceleration_cap
+    if not np.isfinite(cap).any():
         return None
-    rows = np.zeros((2, 3, len(cap)))
-    x1, x2 = mesh.motion.tool_derivatives(points.piece[capped], points.s[capped])
-    c1, c2, top = points.s1[capped], points.s2[capped], cap[capped]
-    rows[0][:, capped] = (x2.T * c1**2 + x1.T * c2) / top
-    rows[1][:, capped] = x1.T * c1 / (2 * top)
+    x1, x2 = (value.T / cap for value in points.along.tool)
+    rows = np.stack([x2 * points.s1**2 + x1 * points.s2, 0.5 * x1 * points.s1])
     by_cell = rows.reshape(2, 3, *points.shape)
-    by_cell[1] /= mesh.width
+    by_cell[1] /= points.width
     return by_cell
 
 

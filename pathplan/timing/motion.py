@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -16,6 +17,7 @@ Array = NDArray[np.float64]
 _HELD_POINTS = 33  # a piece of the path is looked at in this many places, its ends included
 _LEAST_ROOM = 2e-3  # of a torque limit must be left to accelerate with
 _APART = 1e-6  # of the path: a cap that ends this near to a break of the path ends on it
+_NEVER = 1e-12  # a row or a tool that moves less than this (relative to its limit) does not limit the speed
 ToolDerivatives = Callable[[Array, Array, Array], tuple[Array, Array]]
 ToolTurning = Callable[[Array, Array], Array]
 
@@ -62,10 +64,9 @@ class Motion:
         apart = np.abs(between[:, None] - breaks).min(axis=1, initial=np.inf) > _APART * breaks[-1]
         return np.union1d(breaks, between[apart])
 
-    def rows(self, piece: NDArray[np.intp], s: Array, highest: int = 3) -> list[Array]:
-        """Derivatives 1..highest of the limited rows by s, each (N, R); `piece` says which side of a break."""
-        local = s - self.path.breaks[piece]
-        return [value @ self.matrix.T for value in self.path.all_at(piece, local, highest)[1:]]
+    def along(self, piece: NDArray[np.intp], s: Array, highest: int = 3) -> Along:
+        """The motion at path parameters s (N,); `piece` (N,) says which side of a break."""
+        return Along(self, piece, s, highest)
 
     def tool_speed_cap(self, s: Array) -> Array:
         """(N,) the lowest speed cap at each s, inf where there is none."""
@@ -83,28 +84,6 @@ class Motion:
         """(N,) whether a tool speed is to be held at each s."""
         return np.isfinite(_lowest(s, [(c.begin, c.end, c.speed if c.held else None) for c in self.caps]))
 
-    def tool_derivatives(self, piece: NDArray[np.intp], s: Array) -> tuple[Array, Array]:
-        """First and second derivative of the tool position by s, each (N, 3), m."""
-        if self.tool is None:
-            raise ValueError("motion has caps on the tool but no way to compute the tool's motion")
-        local = s - self.path.breaks[piece]
-        return self.tool(*self.path.all_at(piece, local, 2))
-
-    def tool_turning(self, piece: NDArray[np.intp], s: Array) -> Array:
-        """Derivative of the tool's orientation by s (N, 3), rad about the base axes."""
-        if self.turning is None:
-            raise ValueError("motion has caps on the tool but no way to compute how it turns")
-        local = s - self.path.breaks[piece]
-        return self.turning(*self.path.all_at(piece, local, 1))
-
-    def torque_rows(self, piece: NDArray[np.intp], s: Array, s1: Array, s2: Array) -> TorqueRows | None:
-        """Torque limits at s (N,) on a clock with ds/dtau and d2s/dtau2 (N,); None without torque limits."""
-        if self.torque is None:
-            return None
-        q, q1, q2 = self.path.all_at(piece, s - self.path.breaks[piece], 2)
-        c1, c2 = s1[:, None], s2[:, None]
-        return torque_rows(self.torque, q, q1 * c1, q2 * c1**2 + q1 * c2)
-
     def unheld(self) -> Unheld | None:
         """The worst place where gravity, or gravity and the friction of slow motion, take all the torque there is."""
         if self.torque is None:
@@ -113,7 +92,7 @@ class Motion:
         share = np.linspace(0.0, 1.0, _HELD_POINTS)
         s = (breaks[:-1, None] + np.diff(breaks)[:, None] * share).ravel()
         piece = np.repeat(np.arange(len(breaks) - 1), _HELD_POINTS)
-        rows = self.torque_rows(piece, s, np.ones(len(s)), np.zeros(len(s)))
+        rows = self.along(piece, s, 2).torque_rows(np.ones(len(s)), np.zeros(len(s)))
         if rows is None or not rows.constant.size:
             return None
         moving = rows.gravity.max() < 1.0
@@ -129,6 +108,90 @@ class Motion:
     def capped(self) -> bool:
         """Whether any cap on the tool applies."""
         return any((c.speed, c.acceleration, c.turning_speed) != (None, None, None) for c in self.caps)
+
+
+@dataclass(frozen=True)
+class Along:
+    """A motion at N points of its path: what limits it there. Worked out as it is asked for, and once."""
+
+    motion: Motion
+    piece: NDArray[np.intp]  # (N,)
+    s: Array  # (N,)
+    highest: int  # order of the derivatives by s that are worked out
+
+    @cached_property
+    def joints(self) -> list[Array]:
+        """Joint positions and their derivatives by s, each (N, n)."""
+        path = self.motion.path
+        return path.all_at(self.piece, self.s - path.breaks[self.piece], self.highest)
+
+    @cached_property
+    def rows(self) -> list[Array]:
+        """Derivatives 1, 2, .. of the limited rows by s, each (N, R)."""
+        return [value @ self.motion.matrix.T for value in self.joints[1:]]
+
+    @cached_property
+    def tool(self) -> tuple[Array, Array]:
+        """First and second derivative of the tool position by s, each (N, 3), m; zero where it has no such cap."""
+        capped = np.isfinite(self.tool_speed_cap) | np.isfinite(self.tool_acceleration_cap)
+        first, second = np.zeros((2, len(self.s), 3))
+        if capped.any():
+            if self.motion.tool is None:
+                raise ValueError("motion has caps on the tool but no way to compute the tool's motion")
+            first[capped], second[capped] = self.motion.tool(*(value[capped] for value in self.joints[:3]))
+        return first, second
+
+    @cached_property
+    def tool_speed_cap(self) -> Array:
+        """(N,) the lowest cap on the tool's speed, inf where there is none; so the other two."""
+        return self.motion.tool_speed_cap(self.s)
+
+    @cached_property
+    def tool_turning_cap(self) -> Array:
+        return self.motion.tool_turning_cap(self.s)
+
+    @cached_property
+    def tool_acceleration_cap(self) -> Array:
+        return self.motion.tool_acceleration_cap(self.s)
+
+    def speed_walls(self) -> Array:
+        """(N, R) largest (ds/dt)^2 by each velocity limit."""
+        rows, velocity = self.rows[0], self.motion.velocity
+        limit = np.where(rows > 0, velocity[:, 1], -velocity[:, 0])
+        walls: Array = 1.0 / np.maximum(np.abs(rows) / limit, _NEVER) ** 2
+        return walls
+
+    def tool_walls(self) -> Array:
+        """(2, N) largest (ds/dt)^2 by the caps on the tool's speed and turning speed, inf where there is none."""
+        walls = np.full((2, len(self.s)), np.inf)
+        capped = np.isfinite(self.tool_speed_cap)
+        if capped.any():
+            walls[0, capped] = _wall(self.tool_speed_cap[capped], self.tool[0][capped])
+        capped = np.isfinite(self.tool_turning_cap)
+        if capped.any():
+            if self.motion.turning is None:
+                raise ValueError("motion has caps on the tool but no way to compute how it turns")
+            turning = self.motion.turning(*(value[capped] for value in self.joints[:2]))
+            walls[1, capped] = _wall(self.tool_turning_cap[capped], turning)
+        return walls
+
+    def wall(self) -> Array:
+        """(N,) largest (ds/dt)^2 by any of them."""
+        wall: Array = np.minimum(self.speed_walls().min(axis=1), self.tool_walls().min(axis=0))
+        return wall
+
+    def torque_rows(self, s1: Array, s2: Array) -> TorqueRows | None:
+        """Torque limits on a clock with ds/dtau and d2s/dtau2 (N,); None without torque limits."""
+        if self.motion.torque is None:
+            return None
+        q, q1, q2 = self.joints[:3]
+        c1, c2 = s1[:, None], s2[:, None]
+        return torque_rows(self.motion.torque, q, q1 * c1, q2 * c1**2 + q1 * c2)
+
+
+def _wall(cap: Array, rate: Array) -> Array:
+    wall: Array = (cap / np.maximum(np.linalg.norm(rate, axis=1), _NEVER)) ** 2
+    return wall
 
 
 def _lowest(s: Array, caps: list[tuple[float, float, float | None]]) -> Array:

@@ -12,7 +12,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.timing.barrier import follow_central_path
-from pathplan.timing.coarse import speed_walls, tool_walls
 from pathplan.timing.fine import FineProblem
 from pathplan.timing.mesh import GAUSS_LOBATTO, Mesh
 from pathplan.timing.motion import Motion
@@ -77,8 +76,8 @@ def _by_wall(mesh: Mesh, wall: Array) -> tuple[Array, Array, Array]:
     tau = (mesh.tau[:-1] + mesh.width * GAUSS_LOBATTO[:, None]).ravel()
     s = mesh.clock.derivatives(tau, 0)[0]
     piece, _ = motion.path.locate(s)
-    walls = speed_walls(motion.rows(piece, s, 1)[0], motion.velocity).T
-    tool = tool_walls(motion, piece, s)
+    along = motion.along(piece, s, 2)
+    walls, tool = along.speed_walls().T, along.tool_walls()
     by_tool = tool.min(axis=0) < walls.min(axis=0)
     worth, at = wall.ravel(), np.arange(len(s))
     velocity, of_tool = np.zeros_like(walls), np.zeros_like(tool)
@@ -92,7 +91,7 @@ def _torque(motion: Motion, problem: FineProblem, torque: Array | None, m: Array
     total = np.zeros((joints, m.size))
     if torque is None or motion.torque is None:
         return total
-    rows = motion.torque_rows(np.zeros(1, dtype=np.intp), np.zeros(1), np.ones(1), np.zeros(1))
+    rows = motion.along(np.zeros(1, dtype=np.intp), np.zeros(1), 2).torque_rows(np.ones(1), np.zeros(1))
     assert rows is not None
     np.add.at(total, rows.joint, _flat(m / (1.0 - torque)))
     return total

@@ -101,7 +101,7 @@ def _jerk_window(motion: Motion, coarse: CoarseTiming) -> float:
     jerk = 0.5 * (motion.jerk[:, 1] - motion.jerk[:, 0])
     middle = 0.5 * (coarse.s[1:] + coarse.s[:-1])
     speed = 0.5 * (coarse.speed[1:] + coarse.speed[:-1])
-    q1, q2 = motion.rows(coarse.piece, middle, 2)
+    q1, q2 = motion.along(coarse.piece, middle, 2).rows
     used = np.abs(q1 * coarse.acceleration[:, None] + q2 * speed[:, None] ** 2) / acceleration
     active = used.max(axis=0) >= 0.5 * used.max()
     window = np.max(acceleration[active] / jerk[active])
