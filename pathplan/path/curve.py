@@ -7,6 +7,7 @@ from typing import NamedTuple
 import numpy as np
 
 from pathplan.path.joint import Array
+from pathplan.quadrature import gauss_legendre
 from pathplan.quaternions import quaternion_product, rotations
 from pathplan.task.model import Curve
 
@@ -55,7 +56,7 @@ def curve_derivatives(curve: Curve, s: Array, highest: int) -> tuple[list[Array]
 
 def curve_size(curve: Curve) -> CurveSize:
     """How long a curve is and how far it turns (Gauss-Legendre quadrature on every piece)."""
-    point, weight = np.polynomial.legendre.leggauss(_POINTS)
+    point, weight = gauss_legendre(_POINTS)
     width = np.diff(curve.breaks)
     s = (curve.breaks[:-1, None] + width[:, None] * (point + 1) / 2).ravel()
     share = (width[:, None] * weight / 2).ravel()

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pathplan.errors import InputError
+from pathplan.quadrature import gauss_legendre
 
 if TYPE_CHECKING:
     from scipy.interpolate import BSpline
@@ -181,7 +182,7 @@ def _bending(t: Array) -> Any:
         knots = knots[1:-1]
     # The third derivative is piecewise quadratic: three Gauss points integrate its square exactly.
     breaks = np.unique(t)
-    point, weight = np.polynomial.legendre.leggauss(3)
+    point, weight = gauss_legendre(3)
     width = np.diff(breaks)
     at = (breaks[:-1, None] + width[:, None] * (point + 1) / 2).ravel()
     share = (width[:, None] * weight / 2).ravel()

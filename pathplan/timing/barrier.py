@@ -9,7 +9,6 @@ are.
 
 from __future__ import annotations
 
-import contextlib
 from typing import Protocol, TypeVar
 
 import numpy as np
@@ -40,8 +39,8 @@ class BarrierProblem(Protocol[State]):
     def state(self, x: Array) -> State:
         """Everything that is computed once from the unknowns."""
 
-    def value(self, state: State, mu: Array) -> Array:
-        """(S,) cost plus barrier; inf where a wall is touched."""
+    def value(self, state: State) -> tuple[Array, Array]:
+        """(S,) cost, and (S,) minus the logarithms of the slacks; inf where a wall is touched."""
 
     def direction(self, state: State, mu: Array) -> tuple[Array, Array]:
         """Newton step (unknowns,) and squared Newton decrement (S,)."""
@@ -70,15 +69,17 @@ def follow_central_path(
     mu = np.maximum(start, final)
     done = np.zeros(problem.count, dtype=bool)
     state = problem.state(x)
+    cost, barrier = problem.value(state)
     for iteration in range(iterations):
         step, decrement = problem.direction(state, mu)
-        before = problem.value(state, mu)
+        before = cost + mu * barrier
         length = np.where(done, 0.0, np.minimum(1.0, _BOUNDARY * problem.reach(state, step)))
         wanted = before + _ROUND_OFF * np.abs(before)
         for _ in range(60):
             moved = x + length[problem.owner] * step
             trial = problem.state(moved)
-            after = problem.value(trial, mu)
+            moved_cost, moved_barrier = problem.value(trial)
+            after = moved_cost + mu * moved_barrier
             short = ~(after <= wanted - _SUFFICIENT * length * decrement) & ~done
             if not short.any():
                 break
@@ -86,9 +87,9 @@ def follow_central_path(
         else:
             if np.any(decrement[short] > 1e-3 * mu[short]):
                 raise PathplanError(_stuck("a step that lowers the barrier was not found", short, mu))
-            moved, trial = x, state
+            moved, trial, moved_cost, moved_barrier = x, state, cost, barrier
             done |= short
-        x, state = moved, trial
+        x, state, cost, barrier = moved, trial, moved_cost, moved_barrier
         finished = mu <= final
         small = decrement < np.where(finished, centred if last is None else last, centred) * mu
         done |= small & finished
@@ -99,19 +100,20 @@ def follow_central_path(
 
 
 def newton_step(band: Array, gradient: Array) -> Array:
-    """-H^-1 gradient, H positive definite in upper banded form; `scipy.linalg.solveh_banded`.
+    """-H^-1 gradient, H positive definite in upper banded form; LAPACK's banded Cholesky solver.
 
     Where rounding has cost H that, its diagonal is raised by the least of a few tiny shares that mends it: the step
     still lowers the barrier. Raises PathplanError where none does.
     """
-    from scipy.linalg import LinAlgError, solveh_banded
+    from scipy.linalg.lapack import dpbsv
 
     for share in _RAISED:
         if share:
             band = band.copy()
             band[-1] *= 1.0 + share
-        with contextlib.suppress(LinAlgError):
-            return np.asarray(-solveh_banded(band, gradient, check_finite=False))
+        _, solution, failed = dpbsv(band, gradient)
+        if not failed:
+            return np.asarray(-solution)
     raise PathplanError("timing: the Newton matrix of the barrier is not positive definite")
 
 

@@ -30,6 +30,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.quadrature import gauss_legendre
 from pathplan.timing.barrier import follow_central_path, newton_step, sum_by
 from pathplan.timing.coarse import CoarseTiming, coarse_timing
 from pathplan.timing.motion import Along, Motion
@@ -71,7 +72,7 @@ class _Mesh:
     def field(self, points: int) -> _Field:
         """Coefficients at the Gauss-Legendre points of every cell."""
         motion, h = self.motion, np.diff(self.tau)
-        x, w = np.polynomial.legendre.leggauss(points)
+        x, w = gauss_legendre(points)
         tau = self.tau[:-1] + h * (0.5 * (x + 1.0))[:, None]
         cell = np.tile(self.cell, points)
         s, s1, s2 = self.coarse.at(cell, tau.ravel())
@@ -176,7 +177,7 @@ class _Weak:
         self.wall = np.concatenate([field.wall.min(axis=0) for field in fields])
         capped = np.ones(nodes, dtype=bool)
         cap = np.zeros(nodes)
-        x = 0.5 * (np.polynomial.legendre.leggauss(_TEST_POINTS)[0] + 1.0)[:, None]
+        x = 0.5 * (gauss_legendre(_TEST_POINTS)[0] + 1.0)[:, None]
         at = 0
         for k, field in enumerate(fields):
             here = slice(at, at + field.wall.shape[1])
@@ -236,19 +237,20 @@ class _Weak:
         rows = self._at_nodes(*(self.on_b[end] * b + self.on_root[end] * root for end in range(2)))
         return _State(b, root, rows, self._at_nodes(*(self.tool_on_b[end] * b for end in range(2))))
 
-    def value(self, state: _State, mu: Array) -> Array:
+    def value(self, state: _State) -> tuple[Array, Array]:
         under = 1.0 - state.b / self.wall
         slack = (self.high - state.rows) * (state.rows - self.low)
         room = 1.0 - (state.tool**2).sum(axis=0)
         bad_node = ~((slack > 0).all(axis=0) & (room > 0))
         bad = ~((under > 0) & (state.b > 0))
         with np.errstate(invalid="ignore", divide="ignore"):
-            cost = np.where(bad, 0.0, self.h / state.root - mu[self.owner] * self.share * np.log(under))
-            logs = np.where(bad_node, 0.0, self.node_share * (np.log(slack).sum(axis=0) + np.log(room)))
-        total = sum_by(self.owner, cost, self.count) - mu * sum_by(self.node_owner, logs, self.count)
-        total[self.owner[bad]] = np.inf
-        total[self.node_owner[bad_node]] = np.inf
-        return total
+            cost, barrier = self.h / state.root, -self.share * np.log(under)
+            node_barrier = -self.node_share * (np.log(slack).sum(axis=0) + np.log(room))
+        barrier[bad] = node_barrier[bad_node] = np.inf
+        return (
+            sum_by(self.owner, cost, self.count),
+            sum_by(self.owner, barrier, self.count) + sum_by(self.node_owner, node_barrier, self.count),
+        )
 
     def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
         m, m_node = mu[self.owner] * self.share, mu[self.node_owner] * self.node_share
@@ -321,7 +323,7 @@ def _smoothed(values: Array) -> Array:
 def _bound_density(mesh: _Mesh, field: _Field, rows: Array, tool: Array) -> Array:
     """(N,) what every cell adds to the bound."""
     h = np.diff(mesh.tau)
-    x = 0.5 * (np.polynomial.legendre.leggauss(len(field.weight))[0] + 1.0)[:, None]
+    x = 0.5 * (gauss_legendre(len(field.weight))[0] + 1.0)[:, None]
 
     def between(nodes: Array) -> tuple[Array, Array]:
         change = np.diff(nodes, axis=1)[:, None, :]

@@ -9,6 +9,7 @@ variation-diminishing approximation, which keeps it increasing.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -22,6 +23,7 @@ _DEGREE = 5
 _KNOTS_PER_WINDOW = 3
 _FEWEST_KNOTS, _MOST_KNOTS = 10, 4000
 _SAMPLES_PER_KNOT = 8
+_FALLING = [[math.perm(_DEGREE - k, order) for k in range(_DEGREE + 1)] for order in range(4)]  # of derivatives
 _LEAST_SLOPE = 1e-6  # of the mean speed: keeps s(tau) strictly increasing
 
 
@@ -41,16 +43,13 @@ class Clock:
         """s and its derivatives by tau, each shaped like tau."""
         cell = np.clip(np.searchsorted(self.knots, tau, side="right") - 1, 0, len(self.knots) - 2)
         x = tau - self.knots[cell]
-        c = self.coefficients
+        c = self.coefficients[:, cell]
         out = []
         for order in range(highest + 1):
-            value = np.zeros(np.shape(tau))
-            for k in range(_DEGREE - order + 1):
-                power = _DEGREE - k
-                factor = 1.0
-                for i in range(order):
-                    factor *= power - i
-                value = value * x + factor * c[k][cell]
+            value = _FALLING[order][0] * c[0]
+            for k in range(1, _DEGREE - order + 1):
+                value *= x
+                value += _FALLING[order][k] * c[k]
             out.append(value)
         return out
 

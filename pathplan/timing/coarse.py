@@ -175,20 +175,20 @@ class _Coarse:
     def state(self, b: Array) -> _State:
         return _State(b, np.sqrt(np.maximum(b, 0.0)), self.rows(b))
 
-    def value(self, state: _State, mu: Array) -> Array:
+    def value(self, state: _State) -> tuple[Array, Array]:
         above, below = self.high - state.acceleration, state.acceleration - self.low
         under = 1.0 - state.b / self.wall
         bad = ((above <= 0) | (below <= 0)).any(axis=(1, 2))
         bad_node = (under <= 0) | ((state.b <= 0) & ~self.fixed)
         with np.errstate(divide="ignore", invalid="ignore"):
-            logs = np.log(above * below).sum(axis=(1, 2)) * self.weight
-            node_logs = np.log(under) * self.node_weight
+            barrier = -np.log(above * below).sum(axis=(1, 2)) * self.weight
+            node_barrier = -np.log(under) * self.node_weight
             time = 2 * self.h / (state.root[self.left] + state.root[self.right])
-        total = self.per_stretch_cells(np.where(bad, 0.0, time - mu[self.cell_owner] * logs))
-        total -= sum_by(self.owner, np.where(bad_node, 0.0, mu[self.owner] * node_logs), self.count)
-        total[self.cell_owner[bad]] = np.inf
-        total[self.owner[bad_node]] = np.inf
-        return total
+        barrier[bad] = node_barrier[bad_node] = np.inf
+        return (
+            self.per_stretch_cells(time),
+            self.per_stretch_cells(barrier) + sum_by(self.owner, node_barrier, self.count),
+        )
 
     def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
         b, root = state.b, state.root

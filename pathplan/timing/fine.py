@@ -119,7 +119,7 @@ class FineProblem:
             factor = np.where(short, 0.8 * factor, factor)
         raise PathplanError("timing: no speed is slow enough for the torque limits")
 
-    def value(self, state: _State, mu: Array) -> Array:
+    def value(self, state: _State) -> tuple[Array, Array]:
         a_low, a_high = self.rows.acceleration_range
         j_low, j_high = self.rows.jerk_range
         root = state.root
@@ -139,10 +139,9 @@ class FineProblem:
             lowest, product = np.minimum(lowest, free.min(axis=0)), product * free.prod(axis=0)
         bad = ~((lowest > 0) & (state.b[0] > 0)).all(axis=0)
         with np.errstate(invalid="ignore", divide="ignore"):
-            cost = (self.weights * root - mu[self.cell_owner] * self.share * np.log(product)).sum(axis=0)
-        total = self.per_stretch(np.where(bad, 0.0, cost))
-        total[self.cell_owner[bad]] = np.inf
-        return total
+            cost, barrier = (self.weights * root).sum(axis=0), -(self.share * np.log(product)).sum(axis=0)
+        cost[bad] = barrier[bad] = np.inf
+        return self.per_stretch(cost), self.per_stretch(barrier)
 
     def direction(self, state: _State, mu: Array) -> tuple[Array, Array]:
         gradient, matrix = self._local(state, mu[self.cell_owner] * self.share)

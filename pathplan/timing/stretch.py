@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cache, cached_property
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pathplan.quadrature import gauss_legendre
 from pathplan.timing.clock import Clock
 from pathplan.timing.mesh import hermite
 from pathplan.timing.motion import Motion
@@ -56,7 +57,7 @@ class StretchTiming:
 
     def _time_in_cell(self, cell: NDArray[np.intp], u: Array) -> Array:
         """Time from the start of a cell to the place u (0..1) in it."""
-        x, w = _gauss_legendre()
+        x, w = gauss_legendre(_POINTS)
         places = u[:, None] * (0.5 * (x + 1.0))
         corner = self.corners[:, cell]
         b = sum(corner[i][:, None] * value for i, value in enumerate(_values(places)))
@@ -129,12 +130,6 @@ class StretchTiming:
     def slowed(self, factor: float) -> StretchTiming:
         """The same motion with all speeds scaled by `factor` (accelerations by its square, jerks by its cube)."""
         return StretchTiming(self.motion, self.clock, self.tau, self.b * factor**2, self.slope * factor**2)
-
-
-@cache
-def _gauss_legendre() -> tuple[Array, Array]:
-    x, w = np.polynomial.legendre.leggauss(_POINTS)
-    return x, w
 
 
 def _values(u: Array) -> tuple[Array, Array, Array, Array]:
