@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from pathplan.errors import PathplanError
 from pathplan.timing.barrier import newton_step, sum_by
-from pathplan.timing.mesh import GAUSS_LOBATTO, LOBATTO_WEIGHTS, Mesh, Rows, hermite, joined, rows_at
+from pathplan.timing.mesh import GAUSS_LOBATTO, LOBATTO_WEIGHTS, Mesh, Rows, hermite
 
 Array = NDArray[np.float64]
 
@@ -41,8 +41,8 @@ class _State:
 class FineProblem:
     """Unknowns: value and slope of b at every node, stretches end to end; see `barrier.BarrierProblem`."""
 
-    def __init__(self, meshes: Sequence[Mesh], rows: Rows | None = None) -> None:
-        """Rows at the collocation points of the meshes are computed unless given (tightened ones)."""
+    def __init__(self, meshes: Sequence[Mesh], rows: Rows) -> None:
+        """`rows` are those of the meshes, end to end, at `GAUSS_LOBATTO`."""
         self.meshes = tuple(meshes)
         self.count = len(meshes)
         self.cells = np.array([len(mesh.tau) - 1 for mesh in meshes])
@@ -54,7 +54,7 @@ class FineProblem:
         self.duration = np.array([mesh.clock.duration for mesh in meshes])
         self.weights = LOBATTO_WEIGHTS[:, None] * self.width
         self.share = self.weights / self.duration[self.cell_owner]
-        self.rows = joined([rows_at(mesh, GAUSS_LOBATTO) for mesh in meshes]) if rows is None else rows
+        self.rows = rows
         torques = 0 if self.rows.torque is None else self.rows.torque.shape[1]
         self.gap = 4.0 * self.rows.acceleration.shape[1] + 2.0 + torques  # barrier terms per unit of time
         basis = hermite(GAUSS_LOBATTO)
@@ -65,6 +65,10 @@ class FineProblem:
     def per_stretch(self, values: Array) -> Array:
         """Sum of (cells,) by stretch."""
         return sum_by(self.cell_owner, values, self.count)
+
+    def by_stretch(self, x: Array) -> list[Array]:
+        """The unknowns of every stretch."""
+        return np.split(x, np.cumsum(2 * (self.cells + 1))[:-1])
 
     def durations(self, x: Array) -> Array:
         """(S,) duration of every stretch by the collocation quadrature."""

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,6 +15,7 @@ Array = NDArray[np.float64]
 
 GAUSS_LOBATTO = np.array([0.0, 0.5 - np.sqrt(0.05), 0.5 + np.sqrt(0.05), 1.0])  # on [0, 1]
 LOBATTO_WEIGHTS = np.array([1.0, 5.0, 5.0, 1.0]) / 12.0
+LOOKED = np.sort(np.concatenate([GAUSS_LOBATTO, 0.5 * (GAUSS_LOBATTO[:-1] + GAUSS_LOBATTO[1:])]))
 _FAR = 1e12  # a wall that is no wall
 
 
@@ -63,6 +64,32 @@ class Rows:
     tool: Array | None  # (2, 3, K, cells)
     torque: Array | None = None  # (4, Q, K, cells)
 
+    def collocated(self) -> Rows:
+        """Rows at `LOOKED` as rows at `GAUSS_LOBATTO`, every second of them."""
+        return self._each(lambda values: values[..., ::2, :] if values.shape[-2] > 1 else values)
+
+    def divided(self, parts: NDArray[np.intp], fresh: Rows) -> Rows:
+        """Rows of a mesh whose cells have been divided into `parts` (cells,); `fresh` are those of the new cells."""
+        old = np.repeat(np.arange(len(parts)), parts)
+        new = np.flatnonzero(np.repeat(parts > 1, parts))
+
+        def mixed(values: Array, renewed: Array) -> Array:
+            if values.shape[-1] == 1:
+                return values
+            out = values[..., old]
+            out[..., new] = renewed
+            return out
+
+        return self._each(mixed, fresh)
+
+    def _each(self, change: Callable[..., Array], *others: Rows) -> Rows:
+        """Rows with every array changed, together with those of other rows."""
+        changed: dict[str, Array | None] = {}
+        for field in fields(self):
+            values = [getattr(rows, field.name) for rows in (self, *others)]
+            changed[field.name] = None if values[0] is None else change(*values)
+        return Rows(**changed)  # type: ignore[arg-type]
+
     def tightened(self, wall: Array, acceleration: Array, jerk: Array, tool: Array, torque: Array) -> Rows:
         """Rows multiplied by factors >= 1 for each cell: wall and tool (cells,), acceleration and jerk (R, cells).
 
@@ -97,12 +124,6 @@ def make_mesh(motion: Motion, clock: Clock, cells: int, cells_per_piece: int) ->
     share = np.arange(count.sum()) - np.repeat(np.cumsum(count) - count, count)
     tau = np.append(start + np.repeat(width / count, count) * share, clock.duration)
     return Mesh(motion, clock, tau, clock.duration / cells)
-
-
-def refined(mesh: Mesh, split: NDArray[np.bool_]) -> Mesh:
-    """Every cell marked in `split` (N,) halved."""
-    middle = 0.5 * (mesh.tau[:-1] + mesh.tau[1:])[split]
-    return Mesh(mesh.motion, mesh.clock, np.sort(np.concatenate([mesh.tau, middle])), mesh.unit)
 
 
 @dataclass(frozen=True)

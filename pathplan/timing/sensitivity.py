@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from pathplan.timing.barrier import follow_central_path
 from pathplan.timing.fine import FineProblem
-from pathplan.timing.mesh import GAUSS_LOBATTO, Mesh
+from pathplan.timing.mesh import GAUSS_LOBATTO, Mesh, rows_at
 from pathplan.timing.motion import Motion
 from pathplan.timing.stretch import StretchTiming
 
@@ -44,7 +44,7 @@ class Sensitivity:
 def sensitivity(motion: Motion, timing: StretchTiming) -> Sensitivity:
     """Sensitivities of a timing that is optimal for a motion under all its limits (full pace)."""
     mesh = Mesh(motion, timing.clock, timing.tau, float(timing.tau[-1] / (len(timing.tau) - 1)))
-    problem = FineProblem([mesh])
+    problem = FineProblem([mesh], rows_at(mesh, GAUSS_LOBATTO))
     x = np.stack([timing.b, timing.slope * mesh.unit], axis=1).ravel()
     x = problem.slowed(x, _SLOWER, only_down=True)
     mu = _GAP * problem.durations(x) / problem.gap

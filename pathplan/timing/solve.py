@@ -18,19 +18,17 @@ from pathplan.timing.barrier import follow_central_path
 from pathplan.timing.clock import make_clock
 from pathplan.timing.coarse import CoarseTiming, coarse_timing
 from pathplan.timing.fine import FineProblem, Shares, limit_shares
-from pathplan.timing.mesh import Mesh, Rows, hermite, joined, make_mesh, refined, rows_at
+from pathplan.timing.mesh import GAUSS_LOBATTO, LOOKED, Mesh, Rows, hermite, joined, make_mesh, rows_at
 from pathplan.timing.motion import Motion
+from pathplan.timing.refinement import LOSS, divided, parts, unused
 from pathplan.timing.stretch import StretchTiming
 
 Array = NDArray[np.float64]
 
-_LOSS = 2e-3  # a stretch is refined while more than this share of its time leaves every limit unused
 _ROUNDS = 8
-_SPLIT_SHARE = 0.85  # the cells that together hold this share of the loss are halved
-_LEAST_DIP = 0.1  # of its neighbours, that a new node between them is above zero
-_HELD_CARE = 10.0  # where a tool speed is held that much counts this many times: ripple shows in the work
-_OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
-_COARSE_GAP, _FINAL_GAP = 5e-4, 2e-4
+_FIRST_GAP, _COARSE_GAP, _FINAL_GAP = 2e-2, 5e-4, 2e-4
+_GAP_OF_LOSS = 0.3  # a round is solved to this share of what the cells of the last one left unused
+_OFF_PATH = 10.0  # its first barrier weight over the last one before: divided cells bring limits not seen there
 _TIGHTENINGS = 5
 _TIGHT = 2e-4  # overstepping left to slowing the whole stretch
 _CHECK_POINTS = 33  # per cell, ends included; peaks between them by parabolas
@@ -56,29 +54,40 @@ def time_motions(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | Non
         clock = make_clock(first, window)
         cells = max(_FEWEST_CELLS, int(np.ceil(_CELLS_PER_WINDOW * clock.duration / window)))
         meshes.append(make_mesh(motion, clock, cells, 1))
-    problem = FineProblem(meshes)
+    looked = [rows_at(mesh, LOOKED) for mesh in meshes]
+    rows = joined(looked)
+    problem = FineProblem(meshes, rows.collocated())
     x = problem.feasible_start(0.7)
-    finished: dict[int, tuple[Mesh, Array]] = {}
+    finished: dict[int, tuple[Mesh, Rows, Array]] = {}
     active = list(range(len(motions)))
     start = 0.05 * problem.durations(x)
+    gap = np.full(len(motions), _FIRST_GAP)
     for round_ in range(_ROUNDS):
-        scale = problem.durations(x) / problem.gap
-        x, _ = follow_central_path(problem, x, start=start, final=_COARSE_GAP * scale)
-        split, good = _where_to_split(problem, x)
-        parts = np.split(x, np.cumsum(2 * (problem.cells + 1))[:-1])
+        weight = gap * problem.durations(x) / problem.gap
+        x, _ = follow_central_path(problem, x, start=start, final=weight)
+        lost, over = unused(problem, rows, x)
+        left = problem.per_stretch(lost)
+        good = (left <= LOSS) & (problem.per_stretch(over.astype(float)) == 0)
+        values = problem.by_stretch(x)
         last = round_ == _ROUNDS - 1
         for k in np.flatnonzero(good | last):
-            finished[active[k]] = (problem.meshes[k], parts[k])
+            finished[active[k]] = (problem.meshes[k], looked[k], values[k])
         go_on = np.flatnonzero(~good & ~last)
         if not len(go_on):
             break
         active = [active[k] for k in go_on]
-        pairs = [_halved(problem.meshes[k], parts[k], split[k]) for k in go_on]
-        problem = FineProblem([mesh for mesh, _ in pairs])
-        x = problem.slowed(np.concatenate([values for _, values in pairs]), 0.97, only_down=True)
-        start = 2.5 * _COARSE_GAP * problem.durations(x) / problem.gap
+        borders = np.cumsum(problem.cells)[:-1]
+        into = [parts(*of) for of in zip(np.split(lost, borders), np.split(over, borders), strict=True)]
+        finer = [divided(problem.meshes[k], looked[k], values[k], into[k]) for k in go_on]
+        looked = [at for _, at, _ in finer]
+        rows = joined(looked)
+        problem = FineProblem([mesh for mesh, _, _ in finer], rows.collocated())
+        x = problem.slowed(np.concatenate([nodes for _, _, nodes in finer]), 0.99, only_down=True)
+        start = _OFF_PATH * weight[go_on]
+        gap = np.clip(_GAP_OF_LOSS * left[go_on], _COARSE_GAP, gap[go_on])
     ordered = [finished[k] for k in range(len(motions))]
-    return _within_limits([mesh for mesh, _ in ordered], np.concatenate([values for _, values in ordered]))
+    problem = FineProblem([mesh for mesh, _, _ in ordered], joined([at for _, at, _ in ordered]).collocated())
+    return _within_limits(problem, np.concatenate([nodes for _, _, nodes in ordered]))
 
 
 def time_again(timed: Sequence[tuple[Motion, StretchTiming]]) -> list[StretchTiming]:
@@ -92,7 +101,8 @@ def time_again(timed: Sequence[tuple[Motion, StretchTiming]]) -> list[StretchTim
     meshes = [Mesh(motion, old.clock, old.tau, old.clock.duration / (len(old.tau) - 1)) for motion, old in timed]
     nodes = [np.stack([old.b, old.slope * mesh.unit], axis=1) for mesh, (_, old) in zip(meshes, timed, strict=True)]
     x = np.concatenate(nodes).ravel()
-    return _within_limits(meshes, FineProblem(meshes).slowed(x, 0.97, only_down=True))
+    problem = FineProblem(meshes, joined([rows_at(mesh, GAUSS_LOBATTO) for mesh in meshes]))
+    return _within_limits(problem, problem.slowed(x, 0.97, only_down=True))
 
 
 def _jerk_window(motion: Motion, coarse: CoarseTiming) -> float:
@@ -108,61 +118,9 @@ def _jerk_window(motion: Motion, coarse: CoarseTiming) -> float:
     return float(np.clip(window, _SHORTEST_WINDOW * coarse.time[-1], coarse.time[-1]))
 
 
-def _where_to_split(problem: FineProblem, x: Array) -> tuple[list[NDArray[np.bool_]], NDArray[np.bool_]]:
-    """For every stretch which cells to halve, and which stretches are good enough already."""
-    u = (np.arange(6) + 0.5) / 6
-    rows = joined([rows_at(mesh, u) for mesh in problem.meshes])
-    b = problem.evaluate(x, hermite(u))
-    used = np.where(b[0] > 0, limit_shares(rows, b).largest(), np.inf)  # the spline may dip below zero between points
-    loss = problem.width * (1.0 - np.minimum(used, 1.0)).mean(axis=0) / problem.duration[problem.cell_owner]
-    loss *= np.concatenate([_care(mesh) for mesh in problem.meshes])
-    over = used.max(axis=0) > 1.0 + _OVERSTEP
-    borders = np.cumsum(problem.cells)[:-1]
-    split, good = [], []
-    for lost, overstepped in zip(np.split(loss, borders), np.split(over, borders), strict=True):
-        good.append(lost.sum() <= _LOSS and not overstepped.any())
-        split.append(overstepped | _largest(lost, _SPLIT_SHARE * lost.sum() if lost.sum() > _LOSS else 0.0))
-    return split, np.array(good)
-
-
-def _care(mesh: Mesh) -> Array:
-    """(N,) how much the time lost in every cell counts."""
-    if not any(cap.held for cap in mesh.motion.caps):
-        return np.ones(len(mesh.width))
-    middle = mesh.clock.derivatives(0.5 * (mesh.tau[:-1] + mesh.tau[1:]), 0)[0]
-    return np.where(mesh.motion.held(middle), _HELD_CARE, 1.0)
-
-
-def _largest(values: Array, total: float) -> NDArray[np.bool_]:
-    """The fewest largest values that together make up `total`."""
-    order = np.argsort(-values)
-    count = int(np.searchsorted(np.cumsum(values[order]), total)) + 1 if total > 0 else 0
-    chosen = np.zeros(len(values), dtype=bool)
-    chosen[order[:count]] = True
-    return chosen
-
-
-def _halved(mesh: Mesh, x: Array, split: NDArray[np.bool_]) -> tuple[Mesh, Array]:
-    """The mesh with the marked cells halved, and the same spline on it."""
-    nodes = x.reshape(-1, 2)
-    corner = np.stack([nodes[:-1, 0], nodes[:-1, 1], nodes[1:, 0], nodes[1:, 1]])[:, split]
-    ratio = mesh.width[split] / mesh.unit
-    corner[1::2] *= ratio
-    value, slope, _ = hermite(np.array([0.5]))[:, 0] @ corner
-    middle = np.stack([np.maximum(value, _LEAST_DIP * np.minimum(corner[0], corner[2])), slope / ratio], axis=1)
-    nodes = np.insert(nodes, np.flatnonzero(split) + 1, middle, axis=0)
-    finer = refined(mesh, split)
-    # a slope of at most 3 b over the width of either cell keeps a cubic Hermite spline above zero
-    widest = np.maximum(np.append(finer.width, 0.0), np.insert(finer.width, 0, 0.0)) / mesh.unit
-    if np.any(value <= 0):
-        nodes[:, 1] = np.clip(nodes[:, 1], -2.9 * nodes[:, 0] / widest, 2.9 * nodes[:, 0] / widest)
-    return finer, nodes.ravel()
-
-
-def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
+def _within_limits(problem: FineProblem, x: Array) -> list[StretchTiming]:
     """Solve to the final accuracy with limits kept everywhere, not only at the collocation points."""
-    problem = FineProblem(meshes)
-    u = np.linspace(0.0, 1.0, _CHECK_POINTS)
+    meshes, u = problem.meshes, np.linspace(0.0, 1.0, _CHECK_POINTS)
     checked, basis = joined([rows_at(mesh, u) for mesh in meshes]), hermite(u)
     start = 3.0 * _COARSE_GAP
     for round_ in range(_TIGHTENINGS):
@@ -185,7 +143,7 @@ def _within_limits(meshes: list[Mesh], x: Array) -> list[StretchTiming]:
         factor = np.minimum(factor, 1.0)
     x = _slowed_for_torque(problem, x * factor[problem.owner], checked, basis)
     out = []
-    for mesh, values in zip(meshes, np.split(x, np.cumsum(2 * (problem.cells + 1))[:-1]), strict=True):
+    for mesh, values in zip(meshes, problem.by_stretch(x), strict=True):
         b, slope = values[::2].copy(), values[1::2] / mesh.unit
         out.append(StretchTiming(mesh.motion, mesh.clock, mesh.tau, b, slope))
     return out
