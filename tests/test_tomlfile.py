@@ -116,8 +116,7 @@ DATA = {
         ),
         (
             lambda t: t.choice("kind", ("revolute", "prismatic")),
-            'pick.toml: step[4].kind: expected "revolute" or "prismatic", got "revolut", '
-            'did you mean "revolute"?',
+            'pick.toml: step[4].kind: expected "revolute" or "prismatic", got "revolut", did you mean "revolute"?',
         ),
         (
             lambda t: t.vector("xyz", 3, "length"),
@@ -171,8 +170,7 @@ def test_getters_give_si_or_the_default():
         ),
         (
             {"xyz": [0, 0, 0], "quat": [1e300, 1e300, 0, 0]},
-            "pick.toml: poses.pick.quat: expected a quaternion [w, x, y, z] of length 1, "
-            "got length 1.41421356e+300",
+            "pick.toml: poses.pick.quat: expected a quaternion [w, x, y, z] of length 1, got length 1.41421356e+300",
         ),
         (
             {"xyz": [0, float("nan"), 0]},
@@ -200,12 +198,8 @@ def test_a_quaternion_within_1e_6_of_unit_length_is_taken_and_made_unit():
 @given(st.tuples(*[st.floats(-7.0, 7.0)] * 3))
 def test_rpy_turns_about_the_fixed_axes_x_then_y_then_z(rpy):
     rotation = rotation_from_rpy(np.array(rpy))
-    assert rotation == pytest.approx(
-        Rotation.from_euler("xyz", rpy).as_matrix(), abs=1e-14
-    )  # lower case: fixed axes
-    assert rotation == pytest.approx(
-        SE3.RPY(*rpy, order="zyx").R, abs=1e-14
-    )  # spatialmath names the order backwards
+    assert rotation == pytest.approx(Rotation.from_euler("xyz", rpy).as_matrix(), abs=1e-14)  # lower case: fixed axes
+    assert rotation == pytest.approx(SE3.RPY(*rpy, order="zyx").R, abs=1e-14)  # spatialmath names the order backwards
 
 
 @given(st.tuples(*[st.floats(-1.0, 1.0)] * 4).filter(lambda q: np.linalg.norm(q) > 0.1))

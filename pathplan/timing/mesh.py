@@ -192,9 +192,9 @@ def _torque_rows(points: _Points) -> Array | None:
 
 
 def _tool_rows(points: _Points) -> Array | None:
-    cap = points.along.tool_acceleration_cap
-    if not np.isfinite(cap).any():
+    if all(cap.acceleration is None for cap in points.along.motion.caps):
         return None
+    cap = points.along.tool_acceleration_cap
     x1, x2 = (value.T / cap for value in points.along.tool)
     rows = np.stack([x2 * points.s1**2 + x1 * points.s2, 0.5 * x1 * points.s1])
     by_cell = rows.reshape(2, 3, *points.shape)

@@ -20,9 +20,7 @@ _LEAST_DIP = 0.1  # of its neighbours, that a new node between them is above zer
 _BASIS = hermite(LOOKED)
 _BETWEEN = np.diff(GAUSS_LOBATTO)
 # Simpson's rule
-_WEIGHTS = (np.kron(np.append(_BETWEEN, 0), [1, 4]) + np.kron(np.append(0, _BETWEEN), [1, 0]))[
-    :-1
-] / 6
+_WEIGHTS = (np.kron(np.append(_BETWEEN, 0), [1, 4]) + np.kron(np.append(0, _BETWEEN), [1, 0]))[:-1] / 6
 
 
 def unused(problem: FineProblem, rows: Rows, x: Array) -> tuple[Array, NDArray[np.bool_]]:

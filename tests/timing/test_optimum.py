@@ -53,5 +53,3 @@ def _check_torque_by_pinocchio(arm, timing, limit):
     rigid = np.array([pin.rnea(model, data, *row) for row in zip(q, qd, qdd, strict=True)])
     torque = rigid + rotor * qdd + viscous * qd
     assert 0.999 <= (np.abs(torque) / limit).max() <= 1 + 1e-6
-
-

@@ -97,7 +97,9 @@ def optimise(case: Loaded, count: int, start: np.ndarray | None) -> tuple[float,
     q1, q2, q3, inertia, speed, rest = functions(s)
     torque = inertia * a + speed * v**2 + rest + viscous * q1 * v
     rows = ca.vertcat(
-        q1 * v / limits[0], (q2 * v**2 + q1 * a) / limits[1], (q3 * v**3 + 3 * q2 * v * a + q1 * jerk) / limits[2],
+        q1 * v / limits[0],
+        (q2 * v**2 + q1 * a) / limits[1],
+        (q3 * v**3 + 3 * q2 * v * a + q1 * jerk) / limits[2],
         torque / case.torque,
     )
     at = ca.Function("at", [state, jerk, h, share], [rows])
