@@ -206,9 +206,11 @@ def _best_blends(plan: Plan, change: float, best: int) -> list[_Trial]:
         trials += _with_blends(plan, group, change)
     if not trials:
         return []
-    motions = [plan.timings[trial.stretches[0]].motion for trial in trials] + [trial.timed[0][0] for trial in trials]
-    ends = np.array([timing.time[-1] for timing in coarse_timing(motions)])
-    gain = ends[: len(trials)] - ends[len(trials) :]
+    before, of = np.unique([trial.stretches[0] for trial in trials], return_inverse=True)
+    motions = [plan.timings[k].motion for k in before] + [trial.timed[0][0] for trial in trials]
+    coarse = coarse_timing([replace(motion, torque=None) for motion in motions])
+    ends = np.array([timing.time[-1] for timing in coarse])
+    gain = ends[of] - ends[len(before) :]
     return [trials[k] for k in np.argsort(-gain, kind="stable")[:best]]
 
 

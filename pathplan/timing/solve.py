@@ -27,6 +27,7 @@ Array = NDArray[np.float64]
 
 _ROUNDS = 8
 _FIRST_GAP, _COARSE_GAP, _FINAL_GAP = 2e-2, 5e-4, 2e-4
+_AGAIN_GAP = 5e-2  # of a timing made for other limits
 _GAP_OF_LOSS = 0.3  # a round is solved to this share of what the cells of the last one left unused
 _OFF_PATH = 10.0  # its first barrier weight over the last one before: divided cells bring limits not seen there
 _TIGHTENINGS = 5
@@ -102,7 +103,7 @@ def time_again(timed: Sequence[tuple[Motion, StretchTiming]]) -> list[StretchTim
     nodes = [np.stack([old.b, old.slope * mesh.unit], axis=1) for mesh, (_, old) in zip(meshes, timed, strict=True)]
     x = np.concatenate(nodes).ravel()
     problem = FineProblem(meshes, joined([rows_at(mesh, GAUSS_LOBATTO) for mesh in meshes]))
-    return _within_limits(problem, problem.slowed(x, 0.97, only_down=True))
+    return _within_limits(problem, problem.slowed(x, 0.97, only_down=True), _AGAIN_GAP)
 
 
 def _jerk_window(motion: Motion, coarse: CoarseTiming) -> float:
@@ -118,14 +119,16 @@ def _jerk_window(motion: Motion, coarse: CoarseTiming) -> float:
     return float(np.clip(window, _SHORTEST_WINDOW * coarse.time[-1], coarse.time[-1]))
 
 
-def _within_limits(problem: FineProblem, x: Array) -> list[StretchTiming]:
-    """Solve to the final accuracy with limits kept everywhere, not only at the collocation points."""
+def _within_limits(problem: FineProblem, x: Array, gap: float = 3.0 * _COARSE_GAP) -> list[StretchTiming]:
+    """Solve to the final accuracy with limits kept everywhere, not only at the collocation points.
+
+    `gap` says how far from it x is about.
+    """
     meshes, u = problem.meshes, np.linspace(0.0, 1.0, _CHECK_POINTS)
     checked, basis = joined([rows_at(mesh, u) for mesh in meshes]), hermite(u)
-    start = 3.0 * _COARSE_GAP
     for round_ in range(_TIGHTENINGS):
         scale = problem.durations(x) / problem.gap
-        x, _ = follow_central_path(problem, x, start=start * scale, final=_FINAL_GAP * scale)
+        x, _ = follow_central_path(problem, x, start=gap * scale, final=_FINAL_GAP * scale)
         peaks = _peaks(checked, problem.evaluate(x, basis))
         worst = np.zeros(problem.count)
         np.maximum.at(worst, problem.cell_owner, peaks.needed_slowing())
@@ -135,7 +138,7 @@ def _within_limits(problem: FineProblem, x: Array) -> list[StretchTiming]:
         factors = [1.0 + 1.7 * np.maximum(peak - 1.0, 0.0) for peak in peaks]
         problem = FineProblem(meshes, problem.rows.tightened(*factors))
         x = problem.slowed(x, 0.999, only_down=True)
-        start = 3.0 * _FINAL_GAP
+        gap = 3.0 * _FINAL_GAP
     if not (np.all(np.isfinite(worst)) and problem.evaluate(x, basis)[0].min() > 0):
         raise PathplanError("timing: the speeds along the path differ too much to be resolved")
     factor = (1.0 - _MARGIN) / worst
