@@ -24,10 +24,11 @@ from pathplan.path.joint import Array
 from pathplan.path.refusals import motion_words, no_state_asked, place_text
 from pathplan.path.rungs import Rungs
 from pathplan.path.states import SAME_STATE, expand, matching
+from pathplan.path.tracking import SINGULAR
 
 __all__ = ["best_way"]
 
-LEAST_SINGULAR = 3e-3  # smallest singular value of a node: ten times what counts as singular
+LEAST_SINGULAR = 3e-3  # smallest singular value of a node where its rung has one so good
 _NEAR_SINGULAR = 0.02  # below about this a node costs more
 _MARGIN = 0.01  # share of a held joint's travel that is left at either limit
 _GRID = {1: 25, 2: 11, 3: 6}  # values of each coordinate, by how many there are
@@ -136,7 +137,8 @@ def _nodes(path: CartesianPath, rungs: Rungs, axes: list[Array]) -> _Nodes:
     row, branch = np.nonzero(reached)
     value = follower.singular(rungs.view[rung[row]], q[row, branch])
     good = value >= LEAST_SINGULAR
-    row, branch, value = row[good], branch[good], value[good]
+    good |= np.bincount(rung[row[good]], minlength=len(rungs))[rung[row]] == 0  # a rung has no other
+    row, branch, value = row[good], branch[good], np.maximum(value[good], SINGULAR)
     places = reached.shape[1]
     _, flat, found = expand(arm, rung[row], np.arange(len(row)), q[row, branch])
     held = list(follower.held)

@@ -19,7 +19,7 @@ from pathplan.path.geometry import Jets, line, pointing, spatial_twists
 from pathplan.path.joint import JointPath
 from pathplan.task.model import Frame, Target
 from tests.arm.conftest import pinocchio_model, seven
-from tests.path.conftest import ROBOTS, length, pose, step, task
+from tests.path.conftest import ROBOTS, length, pose, robot, step, task
 
 DOWN = np.diag([1.0, -1.0, -1.0])
 
@@ -268,6 +268,19 @@ def test_with_a_free_roll_only_position_and_axis_are_asked(cast) -> None:
     axis = (np.sin((1 - share) * angle)[:, None] * one + np.sin(share * angle)[:, None] * two) / np.sin(angle)
     assert np.linalg.norm(poses[:, :3, 2] - axis, axis=1).max() < 1e-6
     assert any("turn of the tool about its own axis is free" in finding.text for finding in path.findings)
+
+
+def test_a_target_near_a_singularity_is_met_where_a_roll_is_free_elsewhere() -> None:
+    """The wrist's centre comes to within millimetres of the first axis: every branch is nearly singular there."""
+    arm = robot("glazer6", "nozzle")
+    near = np.eye(4)
+    near[:3, :3] = Rotation.from_quat([0.65825, -0.64933, 0.37865, 0.04130]).as_matrix()
+    near[:3, 3] = [0.100528, -0.131758, 0.251525]
+    assert 1e-5 < smallest_singular_value(arm, arm.inverse(near)).max() < 1e-3
+    first = replace(step("joint", pose(450.0, -300.0, 500.0)), roll_free=True)
+    path = follow_task(task(arm, arm.positions["home"], [first, step("joint", near)]))
+    last = path.stretches[-1].path
+    assert np.allclose(arm.forward(last(last.length))[0], near, atol=1e-9)
 
 
 def test_free_roll_saves_the_turn_of_the_flange(cast) -> None:
