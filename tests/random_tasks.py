@@ -224,10 +224,16 @@ def main(count: int, seed: int = 0) -> None:
             arm, free = arms[i % len(arms)]
             rng = np.random.default_rng([seed, i])
             case = f"{arm.name}{' free' if free else ''}"
-            seen[f"{case} {judge(random_task(arm, rng, free=free), Path(folder))}"] += 1
+            try:
+                seen[f"{case} {judge(random_task(arm, rng, free=free), Path(folder))}"] += 1
+            except Exception as broken:  # whatever it is: the rest is judged all the same
+                seen["broken"] += 1
+                print(f"task {i}, {case}: {broken!r}", flush=True)
             if (i + 1) % 500 == 0:
                 print(i + 1, dict(seen), flush=True)
     print(dict(seen))
+    if seen["broken"]:
+        raise SystemExit(1)
 
 
 if __name__ == "__main__":

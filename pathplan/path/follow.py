@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
+from itertools import chain
 
 import numpy as np
 
@@ -12,12 +13,13 @@ from pathplan.path.bending import with_bends
 from pathplan.path.bounds import Crossing, first_crossing
 from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
 from pathplan.path.choice import Choice, Routes, candidate_states, choose, routes
+from pathplan.path.fastest import least_time, limited_rows
 from pathplan.path.fit import Pieces, Trouble, fit
 from pathplan.path.five import decides_roll, with_virtual_roll
 from pathplan.path.geometry import poses_of
 from pathplan.path.hermite import derivatives_at
 from pathplan.path.joint import Array
-from pathplan.path.ladder import best_way
+from pathplan.path.ladder import best_ways
 from pathplan.path.layout import Layout, lay_out
 from pathplan.path.motions import motions_of
 from pathplan.path.refusals import limit_text, motion_words, place_text
@@ -35,6 +37,7 @@ __all__ = ["check_branches", "follow_task"]
 Progress = Callable[[str, int, int], None]
 
 _PARTS = 6  # of the work, taking about the same time each, that progress is told of
+_SAMPLES = 200  # of a stretch, to compare paths by
 _CHOICES = 40  # of branches, each found unusable only on the finished path
 
 
@@ -56,28 +59,44 @@ def follow_task(task: Task, progress: Progress | None = None) -> TaskPath:
     """
     say = progress or _silent
     refusal: UnreachableError | None = None
-    for path in _decided(task, say):
-        try:
-            return _followed(path, task, say)
-        except UnreachableError as found:
-            refusal = refusal or found
+    for paths in _decided(task, say):
+        followed = []
+        for path in paths:
+            try:
+                followed.append(_followed(path, task, say))
+            except UnreachableError as found:
+                refusal = refusal or found
+        if followed:
+            return followed[0] if len(followed) == 1 else min(followed, key=_time_about)
     assert refusal is not None
     raise refusal
 
 
-def _decided(task: Task, say: Progress) -> Iterator[CartesianPath]:
-    """The programmed geometry of a task, everything that it leaves free decided: ways to do so, the best first."""
+def _time_about(path: TaskPath) -> float:
+    """s that the joints take for a path, about, as if there were no jerk limits."""
+    total = 0.0
+    for stretch in path.stretches:
+        matrix, velocity, acceleration, _ = limited_rows(stretch.arm)
+        s = np.linspace(0.0, stretch.path.length, _SAMPLES)
+        total += least_time(s, stretch.path(s) @ matrix.T, velocity, acceleration)
+    return total
+
+
+def _decided(task: Task, say: Progress) -> Iterator[list[CartesianPath]]:
+    """The programmed geometry of a task, everything that it leaves free decided: ways to do so, where the first ones
+    can't be followed others.
+    """
     say("path", 0, _PARTS)
     _check_given_joints(task)
     if any(step.roll_free for step in task.steps) and decides_roll(task.arm):
         task = with_virtual_roll(task)
     path = cartesian_path(task)
     if path.free is None or not path.free.chosen:
-        yield settled(path, None)
+        yield [settled(path, None)]
         return
-    way = best_way(path, rungs_of(path))
+    ways = best_ways(path, rungs_of(path))
     for tightness in TIGHTNESS:
-        yield settled(path, way, tightness)
+        yield [settled(path, way, tightness) for way in ways]
 
 
 def _followed(path: CartesianPath, task: Task, say: Progress) -> TaskPath:
@@ -119,7 +138,7 @@ def check_branches(task: Task) -> None:
     along the steps tell. Corners, and limits between samples, are left aside.
     """
     refusal: UnreachableError | None = None
-    for decided in _decided(task, _silent):
+    for decided in chain.from_iterable(_decided(task, _silent)):
         path, _, states, tracks, ways = _tracked(decided, _silent)
         try:
             choose(path, states, tracks, ways)

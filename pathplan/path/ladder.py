@@ -5,7 +5,8 @@ and its turn equivalents within the limits: the nodes. What is out of reach, out
 is no node. From rung to rung on a line, arc or curve the arm stays on its branch; the cost is the time by the velocity
 limits (a high norm over joints and the speed asked, so that ties are broken softly), more near singularities; a joint
 step leads from any node to any and costs the time from rest to rest by velocity, acceleration and jerk. The best way
-through (Bellman 1957) is then refined on finer grids about itself (iterative dynamic programming, Luus 1990).
+through (Bellman 1957) is then refined on finer grids about itself (iterative dynamic programming, Luus 1990). Where
+axes are free the way before that is handed on too: which of the two is shorter with accelerations, `follow.py` sees.
 """
 
 from __future__ import annotations
@@ -19,6 +20,7 @@ from pathplan.arm import Arm
 from pathplan.errors import PathplanError, UnreachableError
 from pathplan.path.cartesian import CartesianPath
 from pathplan.path.choice import refused_target
+from pathplan.path.fastest import limited_rows
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
 from pathplan.path.refusals import motion_words, no_state_asked, place_text
@@ -26,7 +28,7 @@ from pathplan.path.rungs import Rungs
 from pathplan.path.states import SAME_STATE, expand, matching
 from pathplan.path.tracking import SINGULAR
 
-__all__ = ["best_way"]
+__all__ = ["best_ways"]
 
 LEAST_SINGULAR = 3e-3  # smallest singular value of a node where its rung has one so good
 _NEAR_SINGULAR = 0.02  # below about this a node costs more
@@ -35,6 +37,8 @@ _GRID = {1: 25, 2: 11, 3: 6}  # values of each coordinate, by how many there are
 _FINER = {1: 9, 2: 5, 3: 3}
 _BESIDE = {1: np.linspace(-0.6, 0.6, 5), 2: np.zeros(1), 3: np.zeros(1)}  # grid steps from values that are given
 _ROUNDS = {1: 2, 2: 3, 3: 3}
+_SOUGHT = 4  # rungs at most for which the first grid is widened
+_MOST_SOUGHT = 5  # values that are added for one
 _STRIDE = 0.7  # rad: a joint that moves further from rung to rung might have gone round another way
 _STEPS = 3.0  # grid steps that a coordinate may move from rung to rung
 _DOUBLINGS = 6  # of the exponent: the 64th norm is nearly the largest, but not blind for the others
@@ -55,18 +59,28 @@ class _Nodes:
     branch: Index  # (K,)
     burden: Array  # (K,) factor by which a singularity nearby makes a node cost more
 
+    @property
+    def empty(self) -> Index:
+        """Rungs without a node."""
+        return np.flatnonzero(np.diff(self.first) == 0)
+
     def of(self, rung: int) -> slice:
         return slice(int(self.first[rung]), int(self.first[rung + 1]))
 
 
-def best_way(path: CartesianPath, rungs: Rungs) -> Array:
-    """(T, C) the coordinates at every rung. Raises UnreachableError where nothing that is free lets the arm follow."""
+def best_ways(path: CartesianPath, rungs: Rungs) -> list[Array]:
+    """(T, C) the coordinates at every rung: on the finest grid and, where axes are free, also on the first.
+
+    The finer way is shorter by the cost, but may ask for more acceleration. Raises UnreachableError where nothing
+    that is free lets the arm follow.
+    """
     spans = _spans(path.task.arm, rungs)
     loose = np.isnan(rungs.pinned).any(axis=0)
     count = int(np.clip(loose.sum(), 1, 3))
     lines = [_line(rungs, c, span, _GRID[count], _BESIDE[count]) for c, span in enumerate(spans)]
     width = np.array([values[0, 1] - values[0, 0] for values in lines])
-    way, cost = _way(path, rungs, _nodes(path, rungs, lines), _STEPS * width)
+    way, cost = _way(path, rungs, _first_nodes(path, rungs, lines), _STEPS * width)
+    first = way
     # From here on the grids lie about a way that has been found.
     if count > 1:  # the first grid was coarse: each coordinate once more from end to end, the others kept
         for c in np.flatnonzero(loose).tolist():
@@ -87,7 +101,7 @@ def best_way(path: CartesianPath, rungs: Rungs) -> Array:
             width = 2.0 * width / (_FINER[count] - 1)
         if finer == _ROUNDS[count]:
             break
-    return way
+    return [way, first] if rungs.follower.held else [way]
 
 
 def _line(rungs: Rungs, c: int, span: tuple[float, float], count: int, beside: Array) -> Array:
@@ -127,6 +141,35 @@ def _spans(arm: Arm, rungs: Rungs) -> list[tuple[float, float]]:
     return spans + ([(-np.pi, np.pi)] if rungs.rolls else [])
 
 
+def _first_nodes(path: CartesianPath, rungs: Rungs, lines: list[Array]) -> _Nodes:
+    """Nodes with coordinates on the first grid; where it is too wide for a rung, also at values that the arm's inverse
+    finds there.
+    """
+    nodes = _nodes(path, rungs, lines)
+    for _ in range(_SOUGHT):
+        empty = nodes.empty
+        sought = _held_at(path, rungs, int(empty[0])) if len(empty) else []
+        if not len(sought):
+            break
+        beside = (np.tile(values, (len(rungs), 1)) for values in sought)
+        lines = [np.hstack([line, more]) for line, more in zip(lines, beside, strict=False)] + lines[len(sought) :]
+        nodes = _nodes(path, rungs, lines)
+    if len(nodes.empty):
+        raise _no_nodes(path, rungs, int(nodes.empty[0]))
+    return nodes
+
+
+def _held_at(path: CartesianPath, rungs: Rungs, t: int) -> list[Array]:
+    """For each held joint some values at which the arm's inverse reaches rung t; none where it has no answer."""
+    held = list(rungs.follower.held)
+    try:
+        answers = rungs.follower.views[rungs.view[t]].inverse(rungs.poses[t] @ rungs.tool_from_own[t])
+    except PathplanError:
+        return []
+    values = (np.unique(np.round(answers[:, i], 9)) for i in held)
+    return [some[np.linspace(0, len(some) - 1, min(len(some), _MOST_SOUGHT)).astype(int)] for some in values]
+
+
 def _nodes(path: CartesianPath, rungs: Rungs, axes: list[Array]) -> _Nodes:
     """All nodes with coordinates on a grid: axes, (T, m) values of each coordinate."""
     arm, follower = path.task.arm, rungs.follower
@@ -136,19 +179,18 @@ def _nodes(path: CartesianPath, rungs: Rungs, axes: list[Array]) -> _Nodes:
         reached[rung == t] = False
     row, branch = np.nonzero(reached)
     value = follower.singular(rungs.view[rung[row]], q[row, branch])
-    good = value >= LEAST_SINGULAR
-    good |= np.bincount(rung[row[good]], minlength=len(rungs))[rung[row]] == 0  # a rung has no other
-    row, branch, value = row[good], branch[good], np.maximum(value[good], SINGULAR)
     places = reached.shape[1]
     _, flat, found = expand(arm, rung[row], np.arange(len(row)), q[row, branch])
     held = list(follower.held)
     same = (np.abs(found[:, held] - coordinates[row[flat]][:, : len(held)]) < SAME_STATE).all(axis=1)
-    flat, found = flat[same], found[same]
+    good = same & (value[flat] >= LEAST_SINGULAR)
+    keep = same & (good | (np.bincount(rung[row[flat[good]]], minlength=len(rungs))[rung[row[flat]]] == 0))
+    flat, found = flat[keep], found[keep]
     number = [rung[row[flat]]]
     parts = [found]
     own = [coordinates[row[flat]]]
     branches = [branch[flat] if follower.steady else np.zeros(len(flat), dtype=np.intp)]
-    burden = [1.0 + (_NEAR_SINGULAR / value[flat]) ** 2]
+    burden = [1.0 + (_NEAR_SINGULAR / np.maximum(value[flat], SINGULAR)) ** 2]
     for t, joints in rungs.given.items():
         number.append(np.array([t]))
         parts.append(joints[None])
@@ -159,17 +201,13 @@ def _nodes(path: CartesianPath, rungs: Rungs, axes: list[Array]) -> _Nodes:
     order = np.argsort(every, kind="stable")
     keep = order[_as_asked(path, rungs, every[order], np.concatenate(branches)[order], places)]
     first = np.searchsorted(every[keep], np.arange(len(rungs) + 1)).astype(np.intp)
-    nodes = _Nodes(
+    return _Nodes(
         first,
         np.concatenate(parts)[keep],
         np.concatenate(own)[keep],
         np.concatenate(branches)[keep],
         np.concatenate(burden)[keep],
     )
-    empty = np.flatnonzero(np.diff(first) == 0)
-    if len(empty):
-        raise _no_nodes(path, rungs, int(empty[0]))
-    return nodes
 
 
 def _samples(rungs: Rungs, axes: list[Array]) -> tuple[Index, Array]:
@@ -232,10 +270,7 @@ class _Costs:
         arm = path.task.arm
         self.path, self.rungs, self.nodes = path, rungs, nodes
         self.furthest = np.full(rungs.pinned.shape[1], np.inf) if furthest is None else furthest
-        moving = np.isfinite(arm.limits.velocity).any(axis=1)
-        self.matrix = arm.limits.matrix[moving]
-        limits = (rows[moving] for rows in (arm.limits.velocity, arm.limits.acceleration, arm.limits.jerk))
-        self.velocity, self.acceleration, self.jerk = (np.abs(rows).min(axis=1) for rows in limits)
+        self.matrix, self.velocity, self.acceleration, self.jerk = limited_rows(arm)
         self.revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
 
     def between(self, t: int, before: Index) -> Array:

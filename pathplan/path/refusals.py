@@ -72,7 +72,8 @@ def not_with_held(path: CartesianPath, leg: int, pose: Array) -> UnreachableErro
     """The refusal of a target that is reached, but not with the held joints where they are to stand."""
     arm, step = path.task.arm, path.legs[leg].step
     where = []
-    for i, value in zip(path.follower.held, path.held[leg + 1], strict=True):
+    held = path.held if path.free is None else path.free.known
+    for i, value in zip(path.follower.held, held[leg + 1], strict=True):
         dimension = joint_dimension(arm.joints[i].kind, "position")
         at = f"at {format_quantity(float(value), dimension)}" if np.isfinite(value) else "wherever it may stand"
         where.append(f"{arm.joint_names[i]} {at}")

@@ -78,7 +78,8 @@ def settled(path: CartesianPath, way: Array | None, tightness: float = 1.0) -> C
             rolls.append(_column(law, held, leg.twist / length))
         else:
             rolls.append(None)
-        laws.append(_columns(law, held))
+        if held:
+            laws.append(_columns(law, held))
     rolling = any(law is not None for law in rolls)
     segments = replace(path.segments, rolls=tuple(rolls)) if rolling else path.segments
     course = Course(path.follower, path.course.view, tuple(laws) if held else ())

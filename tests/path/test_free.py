@@ -17,10 +17,14 @@ from pathplan.path import follow_task
 from pathplan.path.follower import follower_of
 from pathplan.path.geometry import Jets, line, pointing, spatial_twists
 from pathplan.path.joint import JointPath
+from pathplan.planning import motion_of
+from pathplan.task import load_task
 from pathplan.task.model import Frame, Target
+from pathplan.timing.solve import time_motions
 from tests.arm.conftest import pinocchio_model, seven
 from tests.path.conftest import ROBOTS, length, pose, robot, step, task
 
+EXAMPLES = ROBOTS.parent / "examples"
 DOWN = np.diag([1.0, -1.0, -1.0])
 
 
@@ -252,6 +256,20 @@ def test_seven_axes_follow_a_line() -> None:
 
 def rolled_free(asked):
     return [replace(one, roll_free=True) for one in asked]
+
+
+def test_of_two_ways_of_an_axis_the_one_that_takes_less_time_is_taken(monkeypatch) -> None:
+    """The way that is shorter by velocities asks a track for more acceleration here: it is not the shorter one."""
+    from pathplan.path import follow
+
+    asked = load_task(EXAMPLES / "stacker7-along-the-belt.toml")
+    best_ways, seen = follow.best_ways, []
+    for order in (slice(None), slice(None, None, -1), slice(0, 1), slice(1, 2)):
+        monkeypatch.setattr(follow, "best_ways", lambda path, rungs, order=order: best_ways(path, rungs)[order])
+        motions = [replace(motion_of(stretch), torque=None) for stretch in follow_task(asked).stretches]
+        seen.append(sum(timing.duration for timing in time_motions(motions)))
+    assert seen[0] == pytest.approx(min(seen[2:]), rel=1e-6) and seen[1] == pytest.approx(seen[0], rel=1e-6)
+    assert max(seen[2:]) > 1.02 * min(seen[2:])
 
 
 def test_with_a_free_roll_only_position_and_axis_are_asked(cast) -> None:
