@@ -14,9 +14,12 @@ from pathplan.arm import Arm, Joint, load_arm
 from pathplan.arm.kinematics import joint_derivatives, smallest_singular_value
 from pathplan.errors import InputError, UnreachableError
 from pathplan.path import follow_task
+from pathplan.path.cartesian import cartesian_path
 from pathplan.path.follower import follower_of
 from pathplan.path.geometry import Jets, line, pointing, spatial_twists
 from pathplan.path.joint import JointPath
+from pathplan.path.rungs import rungs_of
+from pathplan.path.settling import settled
 from pathplan.planning import motion_of
 from pathplan.task import load_task
 from pathplan.task.model import Frame, Target
@@ -256,6 +259,39 @@ def test_seven_axes_follow_a_line() -> None:
 
 def rolled_free(asked):
     return [replace(one, roll_free=True) for one in asked]
+
+
+def test_a_pose_that_few_angles_of_a_turntable_reach_is_found() -> None:
+    """About -130 deg of the turntable; the grid of two free coordinates has a value every 36 deg."""
+    arm = load_arm(ROBOTS / "stacker6-pallet.toml")
+    far = np.eye(4)
+    far[:3, :3] = Rotation.from_quat([0.700504, -0.042119, 0.590464, -0.398589]).as_matrix()
+    far[:3, 3] = [1.145003, -0.499411, 1.353485]
+    asked = replace(step("joint"), target=Target(frame="pallet", frame_from_tool=far))
+    free = replace(step("joint", pose(700.0, 300.0, 700.0)), roll_free=True)
+    frame = Frame("pallet", "base", np.eye(4), joint="pallet")
+    path = follow_task(task(arm, arm.positions["home"], [asked, free], frames={"pallet": frame}))
+    first = path.stretches[0].path
+    there = first(first.length)
+    assert np.allclose(seen_from_the_pallet(arm, there)[0], far, atol=1e-6)
+    assert abs(np.degrees(there[0, 6]) + 130.0) < 18.0
+
+
+@pytest.mark.parametrize("bends", [1, 4])
+def test_a_free_roll_may_turn_back_and_forth_along_a_line(bends: int) -> None:
+    """A course of one piece and of several, on an arm that has nothing else free."""
+    arm = robot("glazer6", "nozzle")
+    ends = [pose(450.0, -300.0, 500.0), pose(450.0, 300.0, 500.0, roll=150.0)]
+    free = rolled_free([step("joint", ends[0]), step("line", ends[1])])
+    asked = cartesian_path(task(arm, arm.positions["home"], free))
+    rungs = rungs_of(asked)
+    way = np.zeros((len(rungs), 1))
+    mine = rungs.leg == 1
+    way[mine, 0] = 0.8 * np.sin(np.pi * bends * rungs.s[mine] / rungs.s[mine][-1])
+    rolling = settled(asked, way).segments.rolls[0]
+    assert rolling is not None
+    assert np.allclose(rolling(rungs.s[mine])[:, 0] - rolling(rungs.s[mine][-1:])[0, 0], way[mine, 0], atol=0.1)
+    assert (len(rolling.breaks) > 2) == (bends > 1)
 
 
 def test_of_two_ways_of_an_axis_the_one_that_takes_less_time_is_taken(monkeypatch) -> None:
