@@ -16,6 +16,7 @@ from pathplan.units import format_quantity
 __all__ = ["NEAR", "Dip", "Pass", "pass_findings", "speed_dip"]
 
 NEAR = 0.02  # smallest singular value below which a path counts as near a singularity
+_AT_END = 1e-9  # share of a step
 THROUGH = 1e-6  # and up to which it runs through it
 _FALL = 0.1  # by which the speed falls again behind a peak: further on, something else holds the tool
 _HELD = 0.9  # of the speed on both sides: a tool that is slower is held
@@ -97,7 +98,8 @@ def _text(found: Pass, near: Nearness) -> str:
     name, place = singular_words(near.kind), place_text(found.pose).split(", rpy")[0]
     away = f"{distance_words(near)} from {name}" if distance_words(near) else f"{name} (smallest singular value"
     away += "" if distance_words(near) else f" {near.value:.2g})"
-    text = f"step {found.step + 1}: " + (f"runs through {name}" if found.through else f"passes {away}") + f" at {place}"
+    met = "starts in" if found.share <= _AT_END else "ends in" if found.share >= 1.0 - _AT_END else "runs through"
+    text = f"step {found.step + 1}: {f'{met} {name}' if found.through else f'passes {away}'} at {place}"
     if found.lost < _WORTH_SAYING or found.speed is None:
         return f"{text}, no time lost"
     speed = format_quantity(found.speed, "angular_speed" if found.turning else "speed", 3)

@@ -22,7 +22,7 @@ from pathplan.path.refusals import no_branch_follows, no_state_asked, not_with_h
 from pathplan.path.states import LIMIT_SLACK, SAME_STATE, States, expand, judged_rows, matching
 from pathplan.path.tracking import Tracks, turns_between
 
-__all__ = ["Choice", "Routes", "candidate_states", "choose", "refused_target", "routes"]
+__all__ = ["Choice", "Routes", "candidate_states", "choose", "refused_target", "routes", "with_limits"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -104,6 +104,39 @@ def candidate_states(path: CartesianPath, tool_from_own: Array) -> States:
     target = target[order].astype(np.intp)
     first = np.searchsorted(target, np.arange(len(legs) + 2)).astype(np.intp)
     return States(target, branch[order].astype(np.intp), q[order], first)
+
+
+def with_limits(path: CartesianPath, states: States, tracks: Tracks) -> States:
+    """The states, and those at singular targets that lines which start or end there run into."""
+    if not tracks.ends:
+        return states
+    leg_of = {leg.segment: i for i, leg in enumerate(path.legs) if leg.segment >= 0}
+    target, branch, q = [], [], []
+    for end in tracks.ends:
+        number = leg_of[end.segment] + int(end.last)
+        if number == 0 or _given_joints(path, number - 1) is not None:
+            continue
+        leg = path.legs[number - 1]
+        if leg.step.configuration:
+            label = path.follower.labels(leg.view)[end.slot]
+            if not matching((label,), leg.step.configuration)[0]:
+                continue
+        row = tracks.last[end.segment] if end.last else tracks.first[end.segment]
+        target.append(number)
+        branch.append(end.slot)
+        q.append(tracks.q[row, end.slot])
+    if not target:
+        return states
+    limits = np.array(q)
+    revolute = np.array([joint.kind == "revolute" for joint in path.task.arm.joints])
+    limits -= turns_between(limits, revolute)
+    more = expand(path.task.arm, np.array(target, dtype=np.intp), np.array(branch, dtype=np.intp), limits)
+    targets, branches, vectors = (
+        np.concatenate(parts) for parts in zip((states.target, states.branch, states.q), more, strict=True)
+    )
+    order = np.argsort(targets, kind="stable")
+    first = np.searchsorted(targets[order], np.arange(len(path.legs) + 2)).astype(np.intp)
+    return States(targets[order], branches[order], vectors[order], first)
 
 
 def _given_joints(path: CartesianPath, leg: int) -> Array | None:

@@ -37,6 +37,7 @@ _NARROWEST = 1e-3  # half the width of a piece that runs through a singularity
 _NEAR = 1e-2  # rad, or arm lengths: nearer than this to its pose a piece is a fair guess of the joints
 # Errors of t^4 (1 - t)^4 and its derivatives are largest at 1/2 (value, second), near 0.32 and 0.68 (first, third).
 _CHECKED = np.array([0.32, 0.5, 0.68])
+_LIMIT_STEP = 0.02  # path parameter between what a limit at a singular end is drawn from
 _SHAKY = 3e-3  # smallest singular value below which an answer near a guess may be that of another branch
 _ASTRAY = 0.5  # rad, or m, from the tracked branch
 # Rounding of a node's q (relative to 1 rad) reaches the k-th derivative of a piece of width h as this over h^k.
@@ -257,11 +258,44 @@ def _nodes(spans: Spans, i: Index, at: Array, guess: Array) -> Array:
         q[lost], met[lost] = spans.near(i[lost], at[lost], jets.take(lost), spans.guess(i[lost], at[lost]))
         value[lost] = follower.singular(view[lost], q[lost])
     poor = ~met | (value < SINGULAR)
+    jets_there = spans.derivatives(i, at, jets, q)
+    ending = np.flatnonzero(poor & ((at <= 0.0) | (at >= spans.length[i])) & ~spans.corner[i])
+    for row in ending.tolist():
+        limit = _limit(spans, int(i[row]), float(at[row]))
+        if limit is not None:
+            q[row], jets_there[:, row], poor[row] = limit[0], limit[1:], False
     if poor.any():
         row = int(np.flatnonzero(poor)[np.argmin(value[poor])])
         raise Trouble(int(i[row]), float(at[row]), q[row], "singular" if value[row] < _SHAKY else "reach")
-    out[:, rows] += np.concatenate([q[None], spans.derivatives(i, at, jets, q)])
+    out[:, rows] += np.concatenate([q[None], jets_there])
     return out
+
+
+def _limit(spans: Spans, i: int, at: float) -> Array | None:
+    """(4, n) q and derivatives at an end of a span that lies in a singularity: of the polynomial through the tracked
+    limit there and exact values and derivatives at two places on the way. None where these are singular too.
+    """
+    inward = 1.0 if at <= 0.0 else -1.0
+    step = inward * min(_LIMIT_STEP, float(spans.length[i]) / 8.0)
+    places, number = at + step * np.array([1.0, 2.0]), np.array([i, i])
+    jets = spans.tool_jets(number, places)
+    q, met = spans.near(number, places, jets, spans.guess(number, places))
+    if not met.all() or spans.motions.course.follower.singular(spans.view(number), q).min() < SINGULAR:
+        return None
+    known = np.concatenate([q[None], spans.derivatives(number, places, jets, q)])  # (4, 2, n)
+    known *= step ** np.arange(4.0)[:, None, None]
+    end = spans.guess(number[:1], np.array([at]))
+    powers = np.arange(9)
+    falling = [np.ones(9)]
+    for order in range(3):
+        falling.append(falling[-1] * np.maximum(powers - order, 0))
+    rows = [powers == 0]
+    for x in (1.0, 2.0):
+        rows += [falling[order] * x ** np.maximum(powers - order, 0.0) for order in range(4)]
+    values = np.concatenate([end, known[:, 0], known[:, 1]])
+    coefficients = np.linalg.solve(np.array(rows, dtype=float), values)
+    factors = np.array([1.0, 1.0, 2.0, 6.0])[:, None] / step ** np.arange(4.0)[:, None]
+    return np.asarray(coefficients[:4] * factors)
 
 
 def _keeps(spans: Spans, pieces: _Open, coefficients: Array) -> tuple[Mask, Array]:

@@ -12,7 +12,7 @@ from pathplan.path.assembly import assemble
 from pathplan.path.bending import with_bends
 from pathplan.path.bounds import Crossing, first_crossing
 from pathplan.path.cartesian import CartesianPath, cartesian_path, tool_frames
-from pathplan.path.choice import Choice, Routes, candidate_states, choose, routes
+from pathplan.path.choice import Choice, Routes, candidate_states, choose, routes, with_limits
 from pathplan.path.fastest import least_time, limited_rows
 from pathplan.path.fit import Pieces, Trouble, fit
 from pathplan.path.five import decides_roll, with_virtual_roll
@@ -158,6 +158,7 @@ def _tracked(path: CartesianPath, say: Progress) -> tuple[CartesianPath, Array, 
     states = candidate_states(path, frames)
     rows = np.array([i for i, leg in enumerate(path.legs) if leg.segment >= 0], dtype=np.intp)
     tracks = track(path.course, path.segments, frames[rows])
+    states = with_limits(path, states, tracks)
     path, tracks = with_bends(path, tracks, frames[rows])
     ways = routes(path, states, tracks)
     say("path", 2, _PARTS)

@@ -171,12 +171,29 @@ def _outcomes(path: CartesianPath, leg: int, states: States, alive: Index) -> li
         if not starts.any():
             text, singular = singularity(arm, q, path.follower.held)
             more = {"singular": singular}
-            outcomes.append(_Outcome(0.0, f"it starts in {text}", entry.start, q, more=more))
+            reason = f"it starts in {text}{_limit_words(arm, tracks, q)}"
+            outcomes.append(_Outcome(0.0, reason, entry.start, q, more=more))
             continue
         slot = int(np.argmax(starts))
         words = _words(labels[slot]) if slot < len(labels) and labels[slot] else ""
         outcomes.append(_outcome(path, entry, segment, frame, tracks, slot, turns[slot], words))
     return outcomes
+
+
+def _limit_words(arm: Arm, tracks: Tracks, q: Array) -> str:
+    """How the arm would have to stand, in place of q (n,), to start a line from a singularity; "" if not known."""
+    limits = [tracks.q[0, end.slot] for end in tracks.ends if not end.last and tracks.ok[:, end.slot].all()]
+    if not limits:
+        return ""
+    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    change = np.array(limits) - q
+    change -= turns_between(change, revolute)
+    nearest = q + change[np.abs(change).max(axis=1).argmin()]
+    joints = []
+    for j in np.flatnonzero(np.abs(nearest - q) > SAME_STATE).tolist():
+        dimension = joint_dimension(arm.joints[j].kind, "position")
+        joints.append(f"{arm.joint_names[j]} at {format_quantity(round(float(nearest[j]), 8) + 0.0, dimension)}")
+    return f" and goes on only with {' and '.join(joints)}"
 
 
 def _outcome(

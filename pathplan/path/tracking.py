@@ -3,7 +3,8 @@
 Each segment is sampled, all samples of all segments go through the inverse in one batch, and each branch
 is unwrapped from sample to sample by nearest turn. Where a joint moves too far between two samples to
 tell, samples are put in between; a joint that still jumps when they lie two millionths apart is at a singularity. If
-the path truly meets it, the track goes on in the branch that is nearest there (`pathplan.path.crossing`).
+the path truly meets it, the track goes on in the branch that is nearest there (`pathplan.path.crossing`); at the very
+start or end of a segment it takes the limit along it (`pathplan.path.ends`).
 
 A branch follows a segment if at every sample the pose is reached, the smallest singular value of the Jacobian
 (dimensionless, see `pathplan.arm.kinematics`) is at least `SINGULAR`, and no jump remains. Position limits
@@ -21,6 +22,7 @@ import numpy as np
 
 from pathplan.arm import Arm
 from pathplan.path.crossing import CLEAR, Crossing, Inverse, mirrored, passes
+from pathplan.path.ends import SingularEnd, limits_at_ends
 from pathplan.path.follower import Course, Follower
 from pathplan.path.geometry import Index, Mask, Segments
 from pathplan.path.joint import Array
@@ -59,6 +61,7 @@ class Tracks:
     first: Index  # (K,) first sample of each segment
     last: Index  # (K,)
     crossings: tuple[Crossing, ...] = ()  # where tracks run through a singularity
+    ends: tuple[SingularEnd, ...] = ()  # where they start or end in one
 
     @cached_property
     def follows(self) -> Mask:
@@ -78,6 +81,7 @@ class Tracks:
             np.concatenate([self.first, more.first + samples]),
             np.concatenate([self.last, more.last + samples]),
             self.crossings + shifted,
+            self.ends + tuple(replace(end, segment=end.segment + count) for end in more.ends),
         )
 
 
@@ -142,10 +146,24 @@ def track(course: Course, segments: Segments, tool_from_own: Array, *, thorough:
     last = np.append(first[1:], len(s)).astype(np.intp) - 1
     looked_at[first] = looked_at[last] = True
     regular = _regular(course.follower, course.view[segment], q, valid, looked_at)
+    q, ends = np.array(q), list[SingularEnd]()
+    crossed = {crossing.segment for crossing in crossings}  # behind them the slots are no more those of the inverse
+    plain = np.array([number not in crossed for number in range(len(segments))])
+    for rows, at_last in ((first, False), (last, True)):
+        singular = valid[rows] & ~regular[rows] & plain[:, None]
+        k, b, limit = limits_at_ends(course, inverse, poses, segments.length, singular, at_last, revolute)
+        q[rows[k], b], regular[rows[k], b] = limit, True
+        ends += [SingularEnd(*end, at_last) for end in zip(k.tolist(), b.tolist(), strict=True)]
+    if ends:
+        kept = _clear_of(ends, segments, segment, s)
+        segment, s, q, valid, regular = segment[kept], s[kept], q[kept], valid[kept], regular[kept]
+        first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
+        last = np.append(first[1:], len(s)).astype(np.intp) - 1
+        jumps = _jumps(q, valid, segment, revolute)
     jumped = np.zeros_like(valid)
     jumped[1:] = jumps
     q = _unwrapped(q, first, segment, revolute)
-    return Tracks(segment, s, q, valid & regular & ~jumped, valid, first, last, tuple(crossings))
+    return Tracks(segment, s, q, valid & regular & ~jumped, valid, first, last, tuple(crossings), tuple(ends))
 
 
 class _Samples(NamedTuple):
@@ -179,6 +197,16 @@ def _through(inverse: Inverse, samples: _Samples, k: int, at: float, revolute: M
     samples.q[behind] = samples.q[behind][:, order]
     samples.valid[behind] = samples.valid[behind][:, order]
     return samples, order
+
+
+def _clear_of(ends: list[SingularEnd], segments: Segments, segment: Index, s: Array) -> Mask:
+    """(T,) samples that are ends themselves, or not near one in a singularity."""
+    kept = np.ones(len(s), dtype=bool)
+    for k, at_last in {(end.segment, end.last) for end in ends}:
+        length = float(segments.length[k])
+        away = length - s if at_last else s
+        kept &= (segment != k) | (away <= 0.0) | (away > min(CLEAR, length / 100.0))
+    return kept
 
 
 def _jumps(q: Array, valid: Mask, segment: Index, revolute: Mask) -> Mask:

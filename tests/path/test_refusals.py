@@ -99,9 +99,9 @@ def test_line_that_starts_singular(cast) -> None:
     error = refusal(
         cast.task(arm, start, [cast.step("line", b)]),
         "t.toml: step[1]: no branch can follow this line: "
-        "the only branch (shoulder left, elbow up, wrist positive) gets to 0.0 % of it, "
-        "xyz 565.4 205.8 517.5 mm, rpy <n> -40.0 20.0 deg, "
-        "where it meets a wrist singularity (smallest singular value <n>)",
+        "the only branch gets to 0.0 % of it, xyz 565.4 205.8 517.5 mm, rpy <n> -40.0 20.0 deg, "
+        "where it starts in a wrist singularity (smallest singular value <n>) "
+        "and goes on only with roll at <n> deg and flange at <n> deg",
     )
     assert error.data["share"] == 0.0
 
