@@ -174,6 +174,15 @@ def _parser() -> argparse.ArgumentParser:
         added.set_defaults(run=run, prog=added.prog, command=name)
         return added
 
+    _plan_command(command)
+    _audit_command(command)
+    _export_command(command)
+    _retime_command(command)
+    _picture_commands(command)
+    return parser
+
+
+def _plan_command(command: Any) -> None:
     plan = command("plan", _run_plan, PLAN, PLAN_EXAMPLES, "plan a task, audit it, write its table")
     plan.usage = "pathplan plan [options] TASK [TASK ...]"
     plan.add_argument("files", metavar="TASK", nargs="+", help="task files (.toml)")
@@ -194,6 +203,8 @@ def _parser() -> argparse.ArgumentParser:
     _writing_options(plan)
     _screen_options(plan)
 
+
+def _audit_command(command: Any) -> None:
     audit = command("audit", _run_audit, AUDIT, AUDIT_EXAMPLES, "judge a task's plan, a table or a line")
     audit.usage = (
         "pathplan audit [options] TASK|TABLE\n       pathplan audit [options] TASK TASK [TASK ...]\n"
@@ -212,6 +223,8 @@ def _parser() -> argparse.ArgumentParser:
     group.add_argument("--to", dest="goal", metavar="PLACE", help="where it ends")
     _screen_options(audit)
 
+
+def _export_command(command: Any) -> None:
     export = command("export", _run_export, EXPORT, EXPORT_EXAMPLES, "write another kind of file")
     export.usage = "pathplan export [options] TASK|TABLE -o FILE [-o FILE ...]"
     export.add_argument("file", metavar="TASK|TABLE", help="task (.toml), or table of any source")
@@ -227,6 +240,9 @@ def _parser() -> argparse.ArgumentParser:
     group.add_argument("--pvt", metavar="PERIOD", help='position and velocity at a coarser period, "20 ms"')
     group.add_argument("--split", choices=["stretch"], help="one file for each stretch from stop to stop")
     _screen_options(export)
+
+
+def _retime_command(command: Any) -> None:
     retime = command("retime", _run_retime, RETIME, RETIME_EXAMPLES, "time a table anew along its own path")
     retime.add_argument("file", metavar="TABLE", help="table of any source")
     retime.add_argument("--arm", metavar="ARM", required=True, help="arm file (.toml)")
@@ -242,8 +258,6 @@ def _parser() -> argparse.ArgumentParser:
     _reading_options(retime)
     _writing_options(retime)
     _screen_options(retime)
-    _picture_commands(command)
-    return parser
 
 
 def _picture_commands(command: Any) -> None:

@@ -110,40 +110,11 @@ def track(course: Course, segments: Segments, tool_from_own: Array, *, thorough:
 
     if not course.follower.steady:
         return _continued(course, poses, segment, s, first)
-    q, valid = inverse(segment, s)
     revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
-    looked_at = np.zeros(len(s), dtype=bool)
-    useful = valid & _has_turn_inside(arm, q)
-    for round_ in range(_ROUNDS + 1):
-        jumps = _jumps(q, valid, segment, revolute)
-        # A branch that fails elsewhere on the segment anyway is not worth more samples.
-        lives = np.logical_and.reduceat(useful, first, axis=0)[segment[:-1]] | thorough
-        split = np.flatnonzero((jumps & lives).any(axis=1))
-        if not len(split) or round_ == _ROUNDS:
-            break
-        at = np.repeat(split + 1, _BETWEEN)
-        part = np.tile(np.arange(1, _BETWEEN + 1) / (_BETWEEN + 1), len(split))
-        new_segment, new_s = segment[at], s[at - 1] + part * (s[at] - s[at - 1])
-        new_q, new_valid = inverse(new_segment, new_s)
-        looked_at[split] = looked_at[split + 1] = True
-        segment, s = np.insert(segment, at, new_segment), np.insert(s, at, new_s)
-        q, valid = np.insert(q, at, new_q, axis=0), np.insert(valid, at, new_valid, axis=0)
-        useful = np.insert(useful, at, new_valid & _has_turn_inside(arm, new_q), axis=0)
-        looked_at = np.insert(looked_at, at, True)
-        first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
-    samples = _Samples(segment, s, q, valid, looked_at)
-    places = passes(course, inverse, segment, s, q, useful, jumps)
-    crossings: list[Crossing] = []
-    for number, place in reversed(places):  # the last first: what a slot is called behind it then holds for all before
-        samples, order = _through(inverse, samples, number, place, revolute)
-        named = np.argsort(order)
-        crossings = [replace(c, slot=int(named[c.slot])) if c.segment == number else c for c in crossings]
-        crossings += [Crossing(number, place, b) for b in np.flatnonzero(order != np.arange(len(order))).tolist()]
-    if places:
-        segment, s, q, valid, looked_at = samples
-        first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
-        jumps = _jumps(q, valid, segment, revolute)
-    last = np.append(first[1:], len(s)).astype(np.intp) - 1
+    samples, useful = _sampled(inverse, arm, len(segments), segment, s, revolute, thorough)
+    samples, crossings = _crossed(course, inverse, samples, useful, revolute)
+    segment, s, q, valid, looked_at = samples
+    first, last = _borders(segment, len(segments))
     looked_at[first] = looked_at[last] = True
     regular = _regular(course.follower, course.view[segment], q, valid, looked_at)
     q, ends = np.array(q), list[SingularEnd]()
@@ -157,11 +128,9 @@ def track(course: Course, segments: Segments, tool_from_own: Array, *, thorough:
     if ends:
         kept = _clear_of(ends, segments, segment, s)
         segment, s, q, valid, regular = segment[kept], s[kept], q[kept], valid[kept], regular[kept]
-        first = np.searchsorted(segment, np.arange(len(segments))).astype(np.intp)
-        last = np.append(first[1:], len(s)).astype(np.intp) - 1
-        jumps = _jumps(q, valid, segment, revolute)
+        first, last = _borders(segment, len(segments))
     jumped = np.zeros_like(valid)
-    jumped[1:] = jumps
+    jumped[1:] = _jumps(q, valid, segment, revolute)
     q = _unwrapped(q, first, segment, revolute)
     return Tracks(segment, s, q, valid & regular & ~jumped, valid, first, last, tuple(crossings), tuple(ends))
 
@@ -174,6 +143,55 @@ class _Samples(NamedTuple):
     q: Array
     valid: Mask
     looked_at: Mask
+
+
+def _borders(segment: Index, count: int) -> tuple[Index, Index]:
+    """First and last sample (K,) of every segment."""
+    first = np.searchsorted(segment, np.arange(count)).astype(np.intp)
+    return first, np.append(first[1:], len(segment)).astype(np.intp) - 1
+
+
+def _sampled(
+    inverse: Inverse, arm: Arm, count: int, segment: Index, s: Array, revolute: Mask, thorough: bool
+) -> tuple[_Samples, Mask]:
+    """The branches at s (T,) of segments (T,) and between, where a joint of one that might be taken moves too far; and
+    (T, B) which might be taken there.
+    """
+    q, valid = inverse(segment, s)
+    looked_at = np.zeros(len(s), dtype=bool)
+    useful = valid & _has_turn_inside(arm, q)
+    for _ in range(_ROUNDS):
+        jumps = _jumps(q, valid, segment, revolute)
+        # A branch that fails elsewhere on the segment anyway is not worth more samples.
+        lives = np.logical_and.reduceat(useful, _borders(segment, count)[0], axis=0)[segment[:-1]] | thorough
+        split = np.flatnonzero((jumps & lives).any(axis=1))
+        if not len(split):
+            break
+        at = np.repeat(split + 1, _BETWEEN)
+        part = np.tile(np.arange(1, _BETWEEN + 1) / (_BETWEEN + 1), len(split))
+        new_segment, new_s = segment[at], s[at - 1] + part * (s[at] - s[at - 1])
+        new_q, new_valid = inverse(new_segment, new_s)
+        looked_at[split] = looked_at[split + 1] = True
+        segment, s = np.insert(segment, at, new_segment), np.insert(s, at, new_s)
+        q, valid = np.insert(q, at, new_q, axis=0), np.insert(valid, at, new_valid, axis=0)
+        useful = np.insert(useful, at, new_valid & _has_turn_inside(arm, new_q), axis=0)
+        looked_at = np.insert(looked_at, at, True)
+    return _Samples(segment, s, q, valid, looked_at), useful
+
+
+def _crossed(
+    course: Course, inverse: Inverse, samples: _Samples, useful: Mask, revolute: Mask
+) -> tuple[_Samples, list[Crossing]]:
+    """The samples with every track that runs through a singularity going on in the branch behind it."""
+    jumps = _jumps(samples.q, samples.valid, samples.segment, revolute)
+    places = passes(course, inverse, samples.segment, samples.s, samples.q, useful, jumps)
+    crossings: list[Crossing] = []
+    for number, place in reversed(places):  # the last first: what a slot is called behind it then holds for all before
+        samples, order = _through(inverse, samples, number, place, revolute)
+        named = np.argsort(order)
+        crossings = [replace(c, slot=int(named[c.slot])) if c.segment == number else c for c in crossings]
+        crossings += [Crossing(number, place, b) for b in np.flatnonzero(order != np.arange(len(order))).tolist()]
+    return samples, crossings
 
 
 def _through(inverse: Inverse, samples: _Samples, k: int, at: float, revolute: Mask) -> tuple[_Samples, Index]:
