@@ -1,4 +1,4 @@
-"""Random lines near singularities, judged by differences of the table and by pinocchio.
+"""Random lines near, through, into and out of singularities, judged by differences of the table and by pinocchio.
 
 Run as a script to judge many: python -m tests.test_random_passes 1000
 """
@@ -22,7 +22,9 @@ ALLOWED = np.deg2rad(2.0)
 
 
 def random_pass(seed: int) -> tuple[str, np.ndarray, np.ndarray, str]:
-    """Text of a task of one line near a wrist or shoulder singularity, its ends, and what it tolerates."""
+    """Text of a task of one line near a wrist or shoulder singularity, or one that ends there and one back; the ends of
+    the line, and what it tolerates.
+    """
     rng = np.random.default_rng([7, seed])
     arm = pathplan.load_arm(ROOT / "robots" / "glazer6.toml")
     if rng.random() < 0.7:
@@ -36,12 +38,16 @@ def random_pass(seed: int) -> tuple[str, np.ndarray, np.ndarray, str]:
     while not arm.inverse_batch(np.array(line_about(middle, half))).valid.any(axis=1).all():
         half /= 2.0  # near the reach of the arm
     a, b = line_about(middle, half)
+    back = rng.random() < 0.35
+    if back:
+        b = middle
     key = str(rng.choice(["", "orientation_tolerance", "tilt"]))
     starts = arm.inverse(a)
     start = starts[np.argmin(np.abs(starts - q).max(axis=1))]
     text = f'title = "pass"\narm = "{(ROOT / "robots" / "glazer6.toml").as_posix()}"\ncycle = "2 ms"\n'
     text += f'start = {_numbers(np.rad2deg(start))}\n[[step]]\nmotion = "line"\nto = {_pose(b)}\n'
-    return text + (f'{key} = "2 deg"\n' if key else ""), a, b, key
+    text += f'{key} = "2 deg"\n' if key else ""
+    return text + (f'[[step]]\nmotion = "line"\nto = {_pose(a)}\n' if back else ""), a, b, key
 
 
 def judge(seed: int, folder: Path) -> str:
@@ -70,7 +76,7 @@ def judge(seed: int, folder: Path) -> str:
     return "bent" if max(turned) > 1e-5 else "planned"
 
 
-@pytest.mark.parametrize("seed", range(8))
+@pytest.mark.parametrize("seed", range(12))
 def test_random_lines_near_singularities(seed: int, tmp_path: Path) -> None:
     judge(seed, tmp_path)
 
