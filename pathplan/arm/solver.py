@@ -132,9 +132,7 @@ class Solver:
             for start in range(0, len(poses), CHUNK):
                 self._drop_repeated(q[start : start + CHUNK], errors[:, start : start + CHUNK])
         elif not self.exact and self.elimination:
-            for start in range(0, len(poses), CHUNK):
-                part = slice(start, start + CHUNK)
-                self._complete(q[part], errors[:, part], poses[part])
+            self._complete(q, errors, poses)
 
     def _errors(self, q: Array, poses: Array) -> Array:
         return np.array(pose_errors(reached(self.g, q), poses[:, None]))
@@ -148,14 +146,27 @@ class Solver:
 
     def _complete(self, q: Array, errors: Array, poses: Array) -> None:
         """A form that fits nearly may miss branches where two of them come close: there the elimination looks too."""
+        doubtful = [np.zeros(0, dtype=np.intp)]
+        for start in range(0, len(poses), CHUNK):
+            part = slice(start, start + CHUNK)
+            doubtful.append(start + self._doubtful(q[part], errors[:, part]))
+        rows = np.concatenate(doubtful)
+        for start in range(0, len(rows), CHUNK):
+            self._look_again(rows[start : start + CHUNK], q, errors, poses)
+
+    def _doubtful(self, q: Array, errors: Array) -> Index:
+        """Poses at which a branch seems to be missing, or to have come close to another."""
         good = _valid(errors)
         gap = np.where(good[:, None] & good[:, :, None], _gaps(self.g, q, q), np.inf)
         gap[:, np.arange(q.shape[1]), np.arange(q.shape[1])] = np.inf
         lost = ~good & (np.maximum(errors[0] / self.g.length, errors[1]) < NEAR_BASIN)
-        rows = np.flatnonzero(lost.any(axis=1) | (gap.min(axis=(1, 2)) < DOUBTFUL) | (good.sum(axis=1) % 2 == 1))
-        if not len(rows):
-            return
-        self._drop_repeated(q, errors)
+        return np.flatnonzero(lost.any(axis=1) | (gap.min(axis=(1, 2)) < DOUBTFUL) | (good.sum(axis=1) % 2 == 1))
+
+    def _look_again(self, rows: Index, q: Array, errors: Array, poses: Array) -> None:
+        """What the elimination finds besides at poses `rows`, in places that hold nothing else."""
+        own_q, own_errors = q[rows], errors[:, rows]
+        self._drop_repeated(own_q, own_errors)
+        errors[:, rows] = own_errors
         found, filled = distinct(self.g, *eliminate(self.g, self.elimination[0], poses[rows]), BRANCHES)
         for k, row in enumerate(rows):
             for answer in found[k][filled[k]]:
