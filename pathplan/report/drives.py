@@ -11,9 +11,10 @@ from pathplan.auditing.model import TOLERANCE
 from pathplan.report.text import aligned, printable
 from pathplan.units import format_value
 
-__all__ = ["drive_lines"]
+__all__ = ["drive_lines", "number", "of"]
 
 DIGITS = 3
+_NOTHING = 1e-6  # of a newton metre, watt, joule or turn a minute
 
 
 def drive_lines(audit: Audit) -> Iterator[str]:
@@ -28,8 +29,8 @@ def drive_lines(audit: Audit) -> Iterator[str]:
     yield from aligned(table, [20, 16, 14, 9, 14, 10, 9, 9])
     work, returned = (sum(getattr(drive, name) for drive in audit.drives) for name in ("work", "returned"))
     yield (
-        f"energy over the table: {_number(work)} J put in, {_number(returned)} J come back, "
-        f"net {_number(work - returned)} J"
+        f"energy over the table: {number(work)} J put in, {number(returned)} J come back, "
+        f"net {number(work - returned)} J"
     )
 
 
@@ -38,20 +39,22 @@ def _cells(drive: DriveUse) -> list[str]:
     share = drive.rms_share
     return [
         f"{printable(drive.name)}, {unit}",
-        _of(abs(drive.torque.peak), drive.torque.limit),
-        _of(drive.rms, drive.continuous),
+        of(abs(drive.torque.peak), drive.torque.limit),
+        of(drive.rms, drive.continuous),
         "-  " if share is None else f"{100 * share:.1f} %" + ("!" if share > 1 + TOLERANCE else " "),
-        "-" if drive.motor_speed is None else _of(rpm(drive.motor_speed), rpm(drive.motor_speed_limit)),
-        f"{_number(drive.power)} W",
-        f"{_number(drive.work)} J",
-        f"{_number(drive.returned)} J",
+        "-" if drive.motor_speed is None else of(rpm(drive.motor_speed), rpm(drive.motor_speed_limit)),
+        f"{number(drive.power)} W",
+        f"{number(drive.work)} J",
+        f"{number(drive.returned)} J",
     ]
 
 
-def _of(value: float | None, limit: float | None) -> str:
-    text = _number(value or 0.0)
-    return text if limit is None or math.isinf(limit) else f"{text} of {_number(abs(limit))}"
+def of(value: float | None, limit: float | None) -> str:
+    """A value of its limit, where there is one."""
+    text = number(value or 0.0)
+    return text if limit is None or math.isinf(limit) else f"{text} of {number(abs(limit))}"
 
 
-def _number(value: float) -> str:
-    return format_value(value, DIGITS)
+def number(value: float) -> str:
+    """N m, W, J or rpm in three digits; rounding of a drive that rests is nothing."""
+    return format_value(value if abs(value) > _NOTHING else 0.0, DIGITS)

@@ -2,16 +2,15 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Iterator
 
 from pathplan.auditing import DriveUse
 from pathplan.auditing.drives import rpm
 from pathplan.auditing.model import TOLERANCE
+from pathplan.report.drives import number, of
 from pathplan.report.gather import Picture
 from pathplan.report.markup import esc, tag
 from pathplan.report.sections import at, bar, section, table
-from pathplan.units import format_value
 
 __all__ = ["drives_section"]
 
@@ -26,8 +25,8 @@ def drives_section(picture: Picture) -> str:
     rows = [list(_cells(drive)) for drive in drives]
     work, returned = (sum(getattr(drive, name) for drive in drives) for name in ("work", "returned"))
     about = (
-        f"Over the whole table, waits and holding included. {_number(work)} J are put in, {_number(returned)} J come "
-        f"back, net {_number(work - returned)} J."
+        f"Over the whole table, waits and holding included. {number(work)} J are put in, {number(returned)} J come "
+        f"back, net {number(work - returned)} J."
     )
     return section("drives", "Drives", tag("p", about), table("Drives", HEAD, rows, numbers=(1, 2, 4, 5, 6, 7)))
 
@@ -35,8 +34,8 @@ def drives_section(picture: Picture) -> str:
 def _cells(drive: DriveUse) -> Iterator[str]:
     unit = "N" if drive.kind == "prismatic" else "N m"
     yield esc(drive.name)
-    yield f"{_of(abs(drive.torque.peak), drive.torque.limit)} {unit}"
-    yield f"{_of(drive.rms, drive.continuous)} {unit}"
+    yield f"{of(abs(drive.torque.peak), drive.torque.limit)} {unit}"
+    yield f"{of(drive.rms, drive.continuous)} {unit}"
     share = drive.rms_share
     if share is None:
         yield "–"
@@ -45,15 +44,7 @@ def _cells(drive: DriveUse) -> Iterator[str]:
         sign = tag("span", " ✕", title="exceeds the limit") if over else ""
         yield tag("b", f"{max(100 * share, 100.1 if over else 0):.1f} %") + sign + bar(share, over)
     speed = rpm(drive.motor_speed)
-    yield "–" if speed is None else f"{_of(speed, rpm(drive.motor_speed_limit))} rpm"
-    yield f"{_number(drive.power)} W {at(drive.power_time)}"
-    yield f"{_number(drive.work)} J"
-    yield f"{_number(drive.returned)} J"
-
-
-def _of(value: float, limit: float | None) -> str:
-    return _number(value) if limit is None or math.isinf(limit) else f"{_number(value)} of {_number(abs(limit))}"
-
-
-def _number(value: float) -> str:
-    return format_value(value, 3)
+    yield "–" if speed is None else f"{of(speed, rpm(drive.motor_speed_limit))} rpm"
+    yield f"{number(drive.power)} W {at(drive.power_time)}"
+    yield f"{number(drive.work)} J"
+    yield f"{number(drive.returned)} J"
