@@ -10,10 +10,10 @@ from pathplan.timing.mesh import GAUSS_LOBATTO, LOOKED, Mesh, Rows, hermite, row
 
 Array = NDArray[np.float64]
 
-LOSS = 2e-3  # a stretch is refined while more than this share of its time leaves every limit unused
+LOSS = 3e-3  # a stretch is refined while more than this share of its time leaves every limit unused
 _HALVED_SHARE = 0.85  # the cells that together hold this share of the loss are halved
 _QUARTERED_SHARE = 0.5  # and of a stretch that loses _MUCH or more, those that hold this share halved again
-_MUCH = 6.0 * LOSS
+_MUCH = 4.0 * LOSS
 _HELD_CARE = 10.0  # where a tool speed is held time counts this many times: ripple shows in the work
 _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is halved too
 _LEAST_DIP = 0.1  # of its neighbours, that a new node between them is above zero
