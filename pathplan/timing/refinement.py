@@ -19,7 +19,7 @@ _OVERSTEP = 0.02  # a cell that oversteps a limit by more between its points is 
 _LEAST_DIP = 0.1  # of its neighbours, that a new node between them is above zero
 _BASIS = hermite(LOOKED)
 _BETWEEN = np.diff(GAUSS_LOBATTO)
-# Simpson's rule
+# Simpson's rule between collocation points, which every second of `LOOKED` is.
 _WEIGHTS = (np.kron(np.append(_BETWEEN, 0), [1, 4]) + np.kron(np.append(0, _BETWEEN), [1, 0]))[:-1] / 6
 
 

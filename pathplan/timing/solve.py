@@ -26,6 +26,7 @@ from pathplan.timing.stretch import StretchTiming
 Array = NDArray[np.float64]
 
 _ROUNDS = 8
+# How far from the optimum of its cells a round may end, of the duration: the first, any later one at least, the last.
 _FIRST_GAP, _COARSE_GAP, _FINAL_GAP = 2e-2, 5e-4, 2e-4
 _AGAIN_GAP = 5e-2  # of a timing made for other limits
 _GAP_OF_LOSS = 0.3  # a round is solved to this share of what the cells of the last one left unused
