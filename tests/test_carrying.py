@@ -102,7 +102,10 @@ def test_the_tools_own_cap_holds_while_it_is_carried(change):
     speed = {tool: table.tool_speed[carried == tool].max() for tool in change.task.tools}
     assert speed["nozzle"] <= 0.6 * (1 + 1e-6) and speed["nozzle"] > 0.599
     assert speed["cup"] > 0.7
-    assert change.audit.passed and change.audit.tool_speed.limit == pytest.approx(0.6)
+    assert change.audit.passed
+    asked = [step.speed for step in change.task.steps if step.speed is not None]  # two caps are reached, one is named
+    assert change.audit.tool_speed.share == pytest.approx(1, abs=1e-4)
+    assert change.audit.tool_speed.limit == pytest.approx(0.6) or change.audit.tool_speed.limit in asked
 
 
 CAPPED = """

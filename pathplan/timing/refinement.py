@@ -10,7 +10,7 @@ from pathplan.timing.mesh import GAUSS_LOBATTO, LOOKED, Mesh, Rows, hermite, row
 
 Array = NDArray[np.float64]
 
-LOSS = 3e-3  # a stretch is refined while more than this share of its time leaves every limit unused
+LOSS = 2e-3  # a stretch is refined while more than this share of its time leaves every limit unused
 _HALVED_SHARE = 0.85  # the cells that together hold this share of the loss are halved
 _QUARTERED_SHARE = 0.5  # and of a stretch that loses _MUCH or more, those that hold this share halved again
 _MUCH = 4.0 * LOSS
