@@ -26,7 +26,7 @@ if TYPE_CHECKING:
 
 __all__ = ["State", "Watching", "files_of"]
 
-EVERY = 0.1  # s between looks at the files
+EVERY = 0.05  # s between looks at the files
 SETTLE = 0.03  # s that a save may still be going on
 MOST_FILES = 500
 LONGEST = 1024  # of a text that may be a file's name

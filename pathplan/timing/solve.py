@@ -39,7 +39,7 @@ _MARGIN = 5e-6  # limits are kept with this share to spare, for the rounding of 
 _FEWEST_CELLS = 12
 _CELLS_PER_WINDOW = 3.0
 _SHORTEST_WINDOW = 1 / 30  # of the coarse duration: a finer clock only copies the noise of the coarse timing
-BATCH = 8  # stretches solved together: more no longer fit the caches of a processor
+BATCH = 4  # stretches solved together: more save little time, and leave less to other processes
 
 
 def time_motions(motions: Sequence[Motion], coarse: Sequence[CoarseTiming] | None = None) -> list[StretchTiming]:
