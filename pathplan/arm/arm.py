@@ -13,7 +13,7 @@ import numpy as np
 
 from pathplan.arm import kinematics
 from pathplan.arm.inverse_form import Structure
-from pathplan.arm.model import Array, Joint, Limits, Link, Payload, Tool, read_only
+from pathplan.arm.model import Array, Joint, Limits, Link, Mask, Payload, Tool, read_only
 from pathplan.errors import InputError
 
 if TYPE_CHECKING:
@@ -255,6 +255,13 @@ class Arm:
         if held not in self._free_solvers:
             self._free_solvers[held] = FreeSolver(self, held)
         return self._free_solvers[held]
+
+    @cached_property
+    def revolute(self) -> Mask:
+        """(n,) which joints turn; the others slide."""
+        mask = np.array([joint.kind == "revolute" for joint in self.joints])
+        mask.flags.writeable = False
+        return mask
 
     @cached_property
     def _free_solvers(self) -> dict[tuple[int, ...], FreeSolver]:

@@ -216,7 +216,7 @@ def _joint_off(follower: Follower, q: Array, target: Array, joints: Array | None
         answers = found[0][valid[0]]
         if not len(answers):
             return None, 0.0
-        turning = np.array([joint.kind == "revolute" for joint in arm.joints])
+        turning = arm.revolute
         moves = answers - q
         moves = np.where(turning, np.remainder(moves + np.pi, 2 * np.pi) - np.pi, moves)
         move = moves[np.argmin(np.abs(moves * scale).max(axis=1))]

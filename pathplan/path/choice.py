@@ -113,14 +113,13 @@ def with_limits(path: CartesianPath, states: States, tracks: Tracks) -> States:
     leg_of = {leg.segment: i for i, leg in enumerate(path.legs) if leg.segment >= 0}
     target, branch, q = [], [], []
     for end in tracks.ends:
-        number = leg_of[end.segment] + int(end.last)
+        own = leg_of[end.segment]
+        number = own + int(end.last)
         if number == 0 or _given_joints(path, number - 1) is not None:
             continue
-        leg = path.legs[number - 1]
-        if leg.step.configuration:
-            label = path.follower.labels(leg.view)[end.slot]
-            if not matching((label,), leg.step.configuration)[0]:
-                continue
+        asked = path.legs[number - 1].step.configuration
+        if asked and not matching((path.follower.labels(path.legs[own].view)[end.slot],), asked)[0]:
+            continue
         row = tracks.last[end.segment] if end.last else tracks.first[end.segment]
         target.append(number)
         branch.append(end.slot)
@@ -128,8 +127,7 @@ def with_limits(path: CartesianPath, states: States, tracks: Tracks) -> States:
     if not target:
         return states
     limits = np.array(q)
-    revolute = np.array([joint.kind == "revolute" for joint in path.task.arm.joints])
-    limits -= turns_between(limits, revolute)
+    limits -= turns_between(limits, path.task.arm.revolute)
     more = expand(path.task.arm, np.array(target, dtype=np.intp), np.array(branch, dtype=np.intp), limits)
     targets, branches, vectors = (
         np.concatenate(parts) for parts in zip((states.target, states.branch, states.q), more, strict=True)
@@ -167,7 +165,7 @@ def travel_time(arm: Arm, change: Array) -> Array:
 def routes(path: CartesianPath, states: States, tracks: Tracks) -> Routes:
     """Where every state gets to along the line or arc that leaves its target."""
     arm = path.task.arm
-    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    revolute = arm.revolute
     segment_of_leg = np.array([leg.segment for leg in path.legs] + [-1], dtype=np.intp)
     segment = segment_of_leg[states.target]
     leaving = np.flatnonzero(segment >= 0)

@@ -18,10 +18,11 @@ from pathplan.path.follower import Course
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
 
-__all__ = ["CLEAR", "Crossing", "least_singular", "mirrored", "passes"]
+__all__ = ["CLEAR", "JUMP", "Crossing", "least_singular", "mirrored", "passes"]
 
 CROSSED = 1e-7  # smallest singular value up to which a singularity is met: what the fit of the joints forgives
 CLEAR = 1e-3  # path parameter beside a crossing from which on the branches are told apart
+JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
 _STEEPEST = 20.0  # no singular value changes faster by the path parameter, on a branch that runs on smoothly
 _GRID = np.linspace(0.0, 1.0, 9)
 _ROUNDS = 30

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from pathplan.arm.refine import pose_errors
-from pathplan.path.crossing import Inverse
+from pathplan.path.crossing import JUMP, Inverse
 from pathplan.path.follower import Course
 from pathplan.path.geometry import Index, Mask
 from pathplan.path.joint import Array
@@ -22,7 +22,6 @@ __all__ = ["SingularEnd", "limits_at_ends"]
 _STEP = 0.004  # path parameter between the samples that a limit is drawn from
 _WEIGHTS = np.array([6.0, -15.0, 20.0, -15.0, 6.0, -1.0])  # of values at 1, 2, .. 6: the quintic through them at 0
 _MET = 1e-8  # m and rad: a limit that stands further off its pose is none
-_FARTHEST = 0.35  # rad from one of these samples to the next
 
 
 @dataclass(frozen=True)
@@ -58,7 +57,7 @@ def limits_at_ends(
     q, valid = found.reshape(len(k), count, *found.shape[1:]), reached.reshape(len(k), count, -1)
     change = np.diff(q, axis=1)
     change -= np.where(revolute, 2.0 * np.pi * np.round(change / (2.0 * np.pi)), 0.0)
-    smooth = singular[k] & valid.all(axis=1) & (np.abs(change[..., revolute]) < _FARTHEST).all(axis=(1, 3))
+    smooth = singular[k] & valid.all(axis=1) & (np.abs(change[..., revolute]) < JUMP).all(axis=(1, 3))
     q = np.concatenate([q[:, :1], q[:, :1] + np.cumsum(change, axis=1)], axis=1)
     limit = np.einsum("j,kjbn->kbn", _WEIGHTS, q)
     row, slot = np.nonzero(smooth)

@@ -271,7 +271,7 @@ class _Costs:
         self.path, self.rungs, self.nodes = path, rungs, nodes
         self.furthest = np.full(rungs.pinned.shape[1], np.inf) if furthest is None else furthest
         self.matrix, self.velocity, self.acceleration, self.jerk = limited_rows(arm)
-        self.revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+        self.revolute = arm.revolute
 
     def between(self, t: int, before: Index) -> Array:
         """(A, B) from nodes `before` (A,) of rung t - 1 to all of rung t; inf where there is no way."""

@@ -142,7 +142,7 @@ def _reference(path: CartesianPath, choice: Choice, tracks: Tracks, ways: Routes
     slot[segment[legs]] = choice.slot[legs]
     shift = np.zeros((len(slot), path.task.arm.n))
     shift[segment[legs]] = choice.q[legs] - tracks.q[tracks.first[segment[legs]], choice.slot[legs]]
-    revolute = np.array([joint.kind == "revolute" for joint in path.task.arm.joints])
+    revolute = path.task.arm.revolute
     shift = np.where(revolute, 2.0 * np.pi * np.round(shift / (2.0 * np.pi)), 0.0)
     q = tracks.q[np.arange(len(tracks.s)), slot[tracks.segment]] + shift[tracks.segment]
     at = 2.0 * tracks.segment + tracks.s / path.segments.length[tracks.segment]

@@ -161,7 +161,7 @@ def _outcomes(path: CartesianPath, leg: int, states: States, alive: Index) -> li
     segment = path.segments.take(np.array([entry.segment]))
     course = path.course.take(np.array([entry.segment]))
     tracks = track(course, segment, frame, thorough=True)
-    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    revolute = arm.revolute
     labels = path.follower.labels(entry.view)
     outcomes = []
     for state in alive:
@@ -185,9 +185,8 @@ def _limit_words(arm: Arm, tracks: Tracks, q: Array) -> str:
     limits = [tracks.q[0, end.slot] for end in tracks.ends if not end.last and tracks.ok[:, end.slot].all()]
     if not limits:
         return ""
-    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
     change = np.array(limits) - q
-    change -= turns_between(change, revolute)
+    change -= turns_between(change, arm.revolute)
     nearest = q + change[np.abs(change).max(axis=1).argmin()]
     joints = []
     for j in np.flatnonzero(np.abs(nearest - q) > SAME_STATE).tolist():

@@ -65,7 +65,7 @@ def target_branches(task: Task, path: TaskPath | None = None) -> TargetBranches:
     used = np.full(len(posed), -1, dtype=np.intp)
     if path is not None:
         taken = path.targets[posed + 1]
-        revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+        revolute = arm.revolute
         moving = np.zeros(arm.n, dtype=bool)
         moving[list(arm.tool_joints)] = True
         change = q - taken[:, None]

@@ -21,7 +21,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from pathplan.arm import Arm
-from pathplan.path.crossing import CLEAR, Crossing, Inverse, mirrored, passes
+from pathplan.path.crossing import CLEAR, JUMP, Crossing, Inverse, mirrored, passes
 from pathplan.path.ends import SingularEnd, limits_at_ends
 from pathplan.path.follower import Course, Follower
 from pathplan.path.geometry import Index, Mask, Segments
@@ -34,7 +34,6 @@ SINGULAR = 1e-5  # smallest singular value below which a pose counts as singular
 SPACING = 0.1  # path parameter between samples to start with: about 0.1 rad, or a tenth of the arm's length
 FEWEST = 6  # intervals of a segment
 _MOST_BENDS = 1000  # pieces of a curve up to which each gets an interval of its own
-JUMP = 0.35  # rad: a joint that moves further between two samples might have gone round another way
 _BETWEEN = 3  # samples put between two
 _ROUNDS = 8  # of putting them: 2e-6 apart in the end, where a joint can only move by JUMP below SINGULAR
 
@@ -110,7 +109,7 @@ def track(course: Course, segments: Segments, tool_from_own: Array, *, thorough:
 
     if not course.follower.steady:
         return _continued(course, poses, segment, s, first)
-    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    revolute = arm.revolute
     samples, useful = _sampled(inverse, arm, len(segments), segment, s, revolute, thorough)
     samples, crossings = _crossed(course, inverse, samples, useful, revolute)
     segment, s, q, valid, looked_at = samples
@@ -285,7 +284,7 @@ def _continued(
     valid = np.zeros((len(s), slots), dtype=bool)
     jumped = np.zeros_like(valid)
     q[first], valid[first] = start_q, start_valid
-    revolute = np.array([joint.kind == "revolute" for joint in arm.joints])
+    revolute = arm.revolute
     for step in range(1, int(count.max(initial=0))):
         rows = first[count > step] + step
         q[rows] = q[rows - 1]

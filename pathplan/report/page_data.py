@@ -114,7 +114,7 @@ def _scene(scene: Scene) -> dict[str, Any]:
         "parents": list(arm.parents),
         "fixed": [_matrix(fixed) for fixed in arm.parent_from_joint],
         "axes": arm.axes.tolist(),
-        "revolute": [joint.kind == "revolute" for joint in arm.joints],
+        "revolute": arm.revolute.tolist(),
         "travel": travel,
         "tip": arm.tip,
         "flange": _matrix(arm.tip_from_flange),
